@@ -1,0 +1,20 @@
+//! How long to wait before giving up, learnt from completion times that are partly cut off.
+//!
+//! Read first: [`wait::Wait`] (one observation), [`tally::Cells`] (waits, counted), [`outlook::Outlook`] (what
+//! the future of a wait looks like), [`stopping::Worth`] (what time is worth).
+
+pub mod numeric;
+pub mod outlook;
+pub mod say;
+pub mod stopping;
+pub mod tail;
+pub mod tally;
+pub mod wait;
+pub mod cli {
+    //! Placeholder until the commands stand.
+    use std::process::ExitCode;
+    /// Runs a command.
+    pub fn run(_: impl IntoIterator<Item = std::ffi::OsString>) -> ExitCode {
+        ExitCode::SUCCESS
+    }
+}

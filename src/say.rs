@@ -1,0 +1,154 @@
+//! One way to say a thing: durations in and out, numbers, shares. Pure text.
+
+use jiff::{Span, SpanRelativeTo, Unit};
+
+/// Why a text is not a duration.
+#[derive(Clone, Debug, PartialEq, Eq, thiserror::Error)]
+#[error("{text:?} is not a duration; write seconds (0.25) or units of a fixed length (\"250ms\", \"2d 4h\")")]
+pub struct DurationError {
+    /// The refused text, cut to 60 characters.
+    pub text: String,
+}
+
+/// Reads a duration in seconds: a plain number, or units from nanoseconds to weeks (`"18.3ms"`, `"2d 4h"`).
+///
+/// A day is 24 hours, a week 7 days; months and years have no fixed length and are refused. The sign and the
+/// range are the caller's to judge.
+///
+/// # Errors
+/// [`DurationError`] with the text.
+///
+/// ```
+/// assert_eq!(outwait::say::parse_duration("18.3ms").unwrap(), 0.0183);
+/// assert_eq!(outwait::say::parse_duration("2d 4h").unwrap(), 187_200.0);
+/// assert_eq!(outwait::say::parse_duration("0.25").unwrap(), 0.25);
+/// assert!(outwait::say::parse_duration("1 month").is_err());
+/// ```
+pub fn parse_duration(text: &str) -> Result<f64, DurationError> {
+    let text = text.trim();
+    let refuse = || DurationError { text: text.chars().take(60).collect() };
+    if let Ok(seconds) = text.parse::<f64>() {
+        return if seconds.is_finite() { Ok(seconds) } else { Err(refuse()) };
+    }
+    let span: Span = text.parse().map_err(|_| refuse())?;
+    if span.get_years() != 0 || span.get_months() != 0 {
+        return Err(refuse());
+    }
+    let relative = SpanRelativeTo::days_are_24_hours();
+    let nanoseconds = span.total((Unit::Nanosecond, relative)).map_err(|_| refuse())?;
+    Ok(nanoseconds / 1e9)
+}
+
+/// Units for people, largest first: name, seconds, and from how many of them the unit is used.
+const UNITS: [(&str, f64, f64); 6] = [
+    ("d", 86_400.0, 2.0),
+    ("h", 3_600.0, 2.0),
+    ("min", 60.0, 2.0),
+    ("s", 1.0, 1.0),
+    ("ms", 1e-3, 1.0),
+    ("µs", 1e-6, 0.0),
+];
+
+/// A duration for people, three significant digits: `"18.3 ms"`, `"2.50 s"`, `"3.2 h"`; `"never"` if infinite.
+pub fn duration(seconds: f64) -> String {
+    if seconds.is_infinite() {
+        return "never".into();
+    }
+    if seconds == 0.0 {
+        return "0 s".into();
+    }
+    // Rounded first, so that 0.9999 s reads 1.00 s and not 1000 ms.
+    let size = rounded(seconds.abs(), 3);
+    let (unit, length, _) =
+        UNITS.into_iter().find(|&(_, length, from)| size >= length * from).unwrap_or(UNITS[5]);
+    format!("{} {unit}", number(seconds / length))
+}
+
+/// A number with three significant digits, without an exponent between 0.001 and a million.
+pub fn number(value: f64) -> String {
+    if value == 0.0 {
+        return "0".into();
+    }
+    if !value.is_finite() {
+        return if value.is_nan() {
+            "unknown".into()
+        } else {
+            format!("{}∞", if value < 0.0 { "-" } else { "" })
+        };
+    }
+    let value = rounded(value, 3);
+    let magnitude = value.abs().log10().floor() as i32;
+    if !(-3..6).contains(&magnitude) {
+        return format!("{value:.2e}");
+    }
+    format!("{value:.*}", (2 - magnitude).max(0) as usize)
+}
+
+/// A share as a percentage: `"3.1%"`, `"<0.1%"`, `"99.95%"`.
+pub fn percent(share: f64) -> String {
+    let p = 100.0 * share;
+    match p {
+        _ if p.is_nan() => "unknown".into(),
+        _ if p != 0.0 && p.abs() < 0.05 => format!("{}0.1%", if p < 0.0 { ">-" } else { "<" }),
+        _ if p > 99.0 && p < 100.0 => format!("{p:.2}%"),
+        _ if p.abs() >= 1000.0 => format!("{}%", number(p)),
+        _ => format!("{p:.1}%"),
+    }
+}
+
+/// A count with thousands apart: `"1,204,311"`.
+pub fn count(value: f64) -> String {
+    let digits = format!("{:.0}", value.max(0.0));
+    let mut out = String::with_capacity(digits.len() * 4 / 3);
+    for (i, digit) in digits.chars().enumerate() {
+        if i > 0 && (digits.len() - i).is_multiple_of(3) {
+            out.push(',');
+        }
+        out.push(digit);
+    }
+    out
+}
+
+fn rounded(value: f64, digits: i32) -> f64 {
+    if value == 0.0 {
+        return 0.0;
+    }
+    let unit = 10f64.powi(value.abs().log10().floor() as i32 + 1 - digits);
+    (value / unit).round() * unit
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    #[test]
+    fn durations_both_ways() {
+        for (seconds, text) in [
+            (0.0183, "18.3 ms"),
+            (0.9999, "1.00 s"),
+            (1.5e-6, "1.50 µs"),
+            (90.0, "90.0 s"),
+            (187_200.0, "2.17 d"),
+            (7_200.0, "2.00 h"),
+            (f64::INFINITY, "never"),
+        ] {
+            assert_eq!(duration(seconds), text);
+        }
+        for bad in ["", "fast", "NaN", "1e999", "1 year", "5 parsecs"] {
+            assert!(parse_duration(bad).is_err(), "{bad}");
+        }
+        assert_eq!(parse_duration(" 1h 30m ").unwrap(), 5_400.0);
+        assert_eq!(parse_duration("-2s").unwrap(), -2.0);
+    }
+
+    #[test]
+    fn numbers() {
+        assert_eq!(number(1234.5), "1230");
+        assert_eq!(number(0.012345), "0.0123");
+        assert_eq!(number(9.999), "10.0");
+        assert_eq!(number(1.0e9), "1.00e9");
+        assert_eq!(count(1_204_311.0), "1,204,311");
+        assert_eq!(percent(0.0312), "3.1%");
+        assert_eq!(percent(0.0001), "<0.1%");
+    }
+}
