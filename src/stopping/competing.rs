@@ -233,7 +233,10 @@ mod tests {
                 assert!(close(both.restricted_mean(t), ended / 2.5), "{t}");
                 assert!((both.failed(t) - ended * 0.2).abs() < 1e-12, "{t}");
                 assert!((both.done(t) - ended * 0.8).abs() < 1e-12, "{t}");
-                assert_eq!(both.hazards(t).map(|h| (h.0 - 2.0).abs() + (h.1 - 0.5).abs() < 1e-12), Some(true));
+                assert_eq!(
+                    both.hazards(t).map(|h| (h.0 - 2.0).abs() + (h.1 - 0.5).abs() < 1e-12),
+                    Some(true)
+                );
             }
             // ∫_0^t u 2 e^{-2.5u} du
             let t = 1.7_f64;
