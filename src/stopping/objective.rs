@@ -216,6 +216,15 @@ impl<'a> Objective<'a> {
         self.quoted(self.score(t))
     }
 
+    /// [`Objective::score`] if retries were sticky with `phi`; not under a deadline.
+    pub(crate) fn score_if_sticky(&self, t: f64, phi: f64) -> f64 {
+        let worth = Worth { sticky: phi, ..self.worth };
+        let odds = Odds::at(self.outlook, t);
+        let terms = Terms::averaged(&worth, &self.retry, odds);
+        let gain = terms.gain(&worth, odds, self.completions(t, odds));
+        score(worth.aim, gain, terms.time(&worth, odds, self.outlook.restricted_mean(t), t))
+    }
+
     pub(crate) fn quoted(&self, score: f64) -> f64 {
         match self.worth.aim {
             Aim::Finish if score > 0.0 => 1.0 / score,

@@ -271,7 +271,7 @@ mod tests {
     #[test]
     fn closed_forms_are_the_chain() {
         let capped = Retry { attempts: Some(3), ..Retry::default() };
-        let growing = Retry { growth: 1.5, ..Retry::default() };
+        let growing = Retry { growth: 1.3, ..Retry::default() };
         let bounded = Retry { growth: 2.0, longest_pause: 30.0, ..Retry::default() };
         let both = Retry { attempts: Some(5), growth: 2.0, longest_pause: 7.0, jitter: true };
         for retry in [Retry::default(), capped, growing, bounded, both] {
