@@ -1,9 +1,13 @@
 //! Outlook + worth -> rate, optimum, value of holding on, doubt, edge of sight. METHODS.md sections 5 to 8.
 
 mod band;
+mod chain;
 mod competing;
 mod deadline;
+mod doubt;
+mod edge;
 mod far_tail;
+mod grid_objective;
 mod hedge;
 mod holding;
 mod objective;
@@ -17,9 +21,13 @@ mod universal;
 mod worth;
 
 pub use band::band;
+pub use chain::{ChainFinding, Station, attempts_caused, check_chain};
 pub use competing::{Competing, Failure};
 pub use deadline::{Deadline, NextAttempt};
+pub use doubt::{BestOfCurve, Choice, Doubt, Regret};
+pub use edge::{Look, Sides};
 pub use far_tail::{FarTail, TailEffect, decay, expected_time};
+pub use grid_objective::GridObjective;
 pub use hedge::{CopyOrRetry, Points, SecondCopy, copy_or_retry};
 pub use holding::{Hold, Holding};
 pub use objective::{Limits, Objective};

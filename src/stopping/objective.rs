@@ -78,8 +78,13 @@ impl Terms {
         }
     }
 
+    /// Worth of a give-up, `w_g'`.
+    pub(crate) fn gave_up(&self) -> f64 {
+        self.gave_up
+    }
+
     /// Time that follows a give-up at `t`, s.
-    fn after_give_up(&self, t: f64) -> f64 {
+    pub(crate) fn after_give_up(&self, t: f64) -> f64 {
         self.gave_up_pause + self.doomed * t
     }
 
