@@ -10,8 +10,8 @@ use super::special::HALF_LN_TWO_PI;
 /// `P(a, ·)` and `Q(a, ·)` at one shape `a > 0`, everything that depends on `a` alone computed once.
 ///
 /// Arguments are `ln x`, of which laws have the more accurate value. Relative accuracy about 1e-13 of `P`
-/// where `P < Q`, of `Q` elsewhere (1e-15/a of `Q` for a shape below 0.01 and `x < 0.5`); the derivative in `a`
-/// about 1e-12.
+/// where `x < 4` or `x < a`, of `Q` elsewhere; the derivative in `a` about 1e-12 of the tail. (Where `x < 4` and
+/// `Q` is small all the same, which needs a shape below 1, `Q` is relative to 1e-16/Q.)
 #[derive(Clone, Copy, Debug)]
 pub struct UpperGamma {
     a: f64,
@@ -91,7 +91,7 @@ impl UpperGamma {
             let upper = x > self.a;
             return Tail { upper, ln: f64::NEG_INFINITY, slope: 0.0, ln_power };
         }
-        if x < 0.5 || (x < self.a && self.a < STIRLING_FROM) {
+        if x < SERIES_BELOW || (x < self.a && self.a < SERIES_SHAPE) {
             let (sum, weighted) = series::<SLOPE>(self.a, x);
             let slope = if SLOPE { ln_x - self.digamma - 1.0 / self.a - weighted / sum } else { 0.0 };
             return Tail { upper: false, ln: ln_power - self.ln_a + sum.ln(), slope, ln_power };
@@ -162,6 +162,11 @@ impl UpperGamma {
     }
 }
 
+/// Below this the series for `P` is short; above it quadrature along the tail is exact to rounding.
+const SERIES_BELOW: f64 = 4.0;
+/// Likewise in the shape, for `x < a`.
+const SERIES_SHAPE: f64 = 40.0;
+
 struct Tail {
     /// Whether `ln` is that of `Q` (else of `P`).
     upper: bool,
@@ -183,9 +188,11 @@ impl Node {
     fn reaches(&self, next: &Node, a: f64, q: f64) -> bool {
         let h = next.u - self.u;
         let steepness = (a - self.x).abs().max((a - next.x).abs()) + 2.0 * next.x.sqrt();
-        let power = (steepness * h).powi(4);
-        // Error of the rule: h⁹ g⁗⁗/25401600.
-        q > 1e-300 && h >= 0.0 && power * power * h * self.g[0].max(next.g[0]) <= 2.5e-4 * q
+        let (squared, step) = (steepness * steepness, h * h);
+        // Error of the rule: h⁹ times the eighth derivative of g, over 25401600; that is about g·(steepness⁸ + x).
+        let eighth = squared * squared * squared * squared + next.x;
+        let error = step * step * step * step * h * eighth * self.g[0].max(next.g[0]);
+        q > 1e-300 && h >= 0.0 && error <= 2.5e-4 * q
     }
 
     /// `∫ g` from here to `next`.

@@ -1,11 +1,11 @@
 //! Special functions in the form survival work needs them: logarithms of tails, never 0 by underflow.
 //!
-//! [`statrs`] supplies `erfc`, `ln Γ` and digamma. Written here is what it lacks: logarithms past the underflow
-//! of `erfc`, and the incomplete gamma function with its derivative in the shape.
+//! `erfc` is libm's, true to the last bit: that of statrs 0.19 is off by 1e-10 and jumps by as much at the seams of
+//! its pieces, which the difference of two nearby tails (the mass of a narrow cell) does not forgive.
 
 use std::f64::consts::{FRAC_1_SQRT_2, PI};
 
-use statrs::function::erf::erfc;
+use libm::erfc;
 
 /// `½ ln 2π`.
 pub const HALF_LN_TWO_PI: f64 = 0.918_938_533_204_672_8;
