@@ -249,7 +249,8 @@ mod tests {
     fn one_curve_is_chosen_at_its_best() {
         let grid = grid();
         let curve = exponential_mixture(&grid, 0.9, 10.0, 0.1);
-        let objective = GridObjective::new(&grid, &worth(), &Retry::default(), &[0.1, f64::INFINITY]).unwrap();
+        let objective =
+            GridObjective::new(&grid, &worth(), &Retry::default(), &[0.1, f64::INFINITY]).unwrap();
         let mut doubt = Doubt::new(objective);
         assert_eq!(doubt.choose(0.01), None);
         assert!(doubt.add(0, &curve, 2.0) && !doubt.add(0, &curve, 0.0) && !doubt.add(0, &curve, f64::NAN));
@@ -268,8 +269,7 @@ mod tests {
     fn what_earns_nothing_weighs_nothing() {
         let grid = grid();
         let never = Sampled::join(&grid, vec![1.0; grid.ages().len()], &[]);
-        let mut doubt =
-            Doubt::new(GridObjective::new(&grid, &worth(), &Retry::default(), &[]).unwrap());
+        let mut doubt = Doubt::new(GridObjective::new(&grid, &worth(), &Retry::default(), &[]).unwrap());
         assert!(!doubt.add(0, &never, 1.0));
         let mut short = exponential_mixture(&grid, 0.9, 10.0, 0.1);
         short.survival.truncate(100);

@@ -30,10 +30,7 @@ impl Sides {
             sum += b.1;
             sum >= 0.5 * beyond
         });
-        Sides {
-            beyond: if total > 0.0 { beyond / total } else { 0.0 },
-            median_beyond: median.map(|b| b.0),
-        }
+        Sides { beyond: if total > 0.0 { beyond / total } else { 0.0 }, median_beyond: median.map(|b| b.0) }
     }
 
     /// Whether curves of notable weight (5%) put the optimum on either side: the data do not tell, and a look would.
@@ -171,7 +168,8 @@ mod tests {
         let objective = Objective::new(&outlook, &worth, &Retry::default(), limits).unwrap();
         let price = best(&objective).unwrap().score;
         let look = Look::plan(&worth, price, &outlook, 1.0, 4.0).unwrap();
-        let extra = (objective.gain(4.0) - objective.gain(1.0)) - price * (objective.time(4.0) - objective.time(1.0));
+        let extra =
+            (objective.gain(4.0) - objective.gain(1.0)) - price * (objective.time(4.0) - objective.time(1.0));
         let per_done = 1.0 - 0.1 - price * (0.3 - 0.4);
         assert!((extra / look.open - (look.expected - look.break_even) * per_done).abs() < 1e-12);
     }

@@ -136,11 +136,8 @@ impl GridObjective {
             None => out.extend(decide.map(|i| self.score_at(ages[i], read(i)))),
         }
         out.extend(self.settings.iter().map(|place| {
-            let origin = Reading {
-                odds: Odds { done: 0.0, failed: 0.0, gave_up: 1.0 },
-                area: 0.0,
-                completions: 0.0,
-            };
+            let origin =
+                Reading { odds: Odds { done: 0.0, failed: 0.0, gave_up: 1.0 }, area: 0.0, completions: 0.0 };
             let from = if place.end == 0 { origin } else { read(place.end - 1) };
             self.score_at(place.age, from.towards(read(place.end), place.part))
         }));
@@ -225,9 +222,11 @@ impl GridObjective {
         };
         let decide = self.grid.decide();
         out.extend(decide.map(|i| first(self.grid.ages()[i], curve.done[i], curve.survival[i])));
-        out.extend(self.settings.iter().map(|p| {
-            first(p.age, column(&curve.done, 0.0, p), column(&curve.survival, 1.0, p))
-        }));
+        out.extend(
+            self.settings
+                .iter()
+                .map(|p| first(p.age, column(&curve.done, 0.0, p), column(&curve.survival, 1.0, p))),
+        );
     }
 }
 

@@ -27,8 +27,20 @@ pub struct RequestTime<'a> {
     /// Requests that run out of attempts at known times.
     over: Vec<(f64, f64)>,
     lattice: Option<Starts>,
+    /// Equal cycles without end, in place of all starts after the first.
+    cycle: Option<Cycle>,
     end: f64,
     done: f64,
+}
+
+/// Attempts at equal distances: `S_tot` shrinks by one factor from each to the next.
+struct Cycle {
+    length: f64,
+    /// Share of first attempts given up.
+    gave_up: f64,
+    /// Share of later attempts given up, `φ + (1-φ)S(τ)`.
+    gave_up_again: f64,
+    sticky: f64,
 }
 
 /// Starts of retries by cell, and what an attempt does by cell.
@@ -60,6 +72,7 @@ impl<'a> RequestTime<'a> {
             starts: vec![(0.0, 1.0)],
             over: vec![],
             lattice: None,
+            cycle: None,
             end: give_up_after,
             done: retry.request(odds, worth).done,
         };
@@ -71,6 +84,13 @@ impl<'a> RequestTime<'a> {
             }
         } else if odds.failed > 0.0 || (retry.jitter && worth.pause.gave_up > 0.0) {
             time.fill_lattice(worth, retry, odds);
+        } else if retry.attempts.is_none() && retry.pause(worth.pause.gave_up, 2) == worth.pause.gave_up {
+            time.cycle = Some(Cycle {
+                length: give_up_after + worth.pause.gave_up,
+                gave_up: odds.gave_up,
+                gave_up_again: worth.sticky + (1.0 - worth.sticky) * odds.gave_up,
+                sticky: worth.sticky,
+            });
         } else {
             time.fill_fixed(worth, retry, odds);
         }
@@ -84,6 +104,10 @@ impl<'a> RequestTime<'a> {
 
     /// Share of requests not over at `t` s after their start.
     pub fn survival(&self, t: f64) -> f64 {
+        if let Some(cycle) = &self.cycle {
+            let number = (t / cycle.length).floor().max(0.0);
+            return cycle.left(number) * self.in_cycle(cycle, number, t - number * cycle.length);
+        }
         let mut over = 0.0;
         let whole = self.outlook.done(self.give_up_after);
         // Attempts that have run out by t count by their sum; the few that have not, one by one.
@@ -98,11 +122,34 @@ impl<'a> RequestTime<'a> {
         (1.0 - over).max(0.0)
     }
 
-    /// Least time by which a share `q` (in (0, 1)) of the requests is over, s; infinite where that is never so, or
-    /// only after more than 20,000 attempts.
+    /// Least time by which a share `q` (in (0, 1)) of the requests is over, s; infinite where that is never so or,
+    /// where pauses grow, only after more than 20,000 attempts.
     pub fn quantile(&self, q: f64) -> f64 {
         // Rounding in the sum of many starts must not hide a share that is reached exactly.
-        first_at_most(&|t| self.survival(t), (1.0 - q) * (1.0 + 1e-14), self.end).unwrap_or(f64::INFINITY)
+        let most = (1.0 - q) * (1.0 + 1e-14);
+        let Some(cycle) = &self.cycle else {
+            return first_at_most(&|t| self.survival(t), most, self.end).unwrap_or(f64::INFINITY);
+        };
+        // The cycle at whose end few enough are left: gave_up · gave_up_again^number <= most.
+        let number = ((most / cycle.gave_up).ln() / cycle.gave_up_again.ln()).ceil().max(0.0);
+        let number = if cycle.gave_up <= most { 0.0 } else { number };
+        let within = |number: f64| {
+            let level = most / cycle.left(number);
+            first_at_most(&|r| self.in_cycle(cycle, number, r), level, self.give_up_after)
+                .map(|r| number * cycle.length + r)
+        };
+        // One sooner or later where the logarithms round.
+        [number - 1.0, number, number + 1.0]
+            .into_iter()
+            .filter(|n| *n >= 0.0 && n.is_finite())
+            .find_map(within)
+            .unwrap_or(f64::INFINITY)
+    }
+
+    /// Share of the requests that came to cycle `number` (from 0) not over `r` s into it.
+    fn in_cycle(&self, cycle: &Cycle, number: f64, r: f64) -> f64 {
+        let open = self.outlook.survival(r.min(self.give_up_after));
+        if number == 0.0 { open } else { cycle.sticky + (1.0 - cycle.sticky) * open }
     }
 
     fn fill_fixed(&mut self, worth: &Worth, retry: &Retry, odds: Odds) {
@@ -192,6 +239,13 @@ impl<'a> RequestTime<'a> {
             done,
             started: cumulated(total),
         });
+    }
+}
+
+impl Cycle {
+    /// Share of requests that come to cycle `number`, from 0.
+    fn left(&self, number: f64) -> f64 {
+        if number == 0.0 { 1.0 } else { self.gave_up * self.gave_up_again.powf(number - 1.0) }
     }
 }
 
