@@ -5,6 +5,7 @@
 
 pub mod advice;
 pub mod curve;
+pub mod demo;
 pub mod numeric;
 pub mod outlook;
 pub mod say;
