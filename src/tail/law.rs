@@ -25,8 +25,15 @@ pub trait Law: Send + Sync {
     /// The parameters in their natural form, in the order of [`Family::parameters`].
     fn parameters(&self) -> Vec<f64>;
 
-    /// `E[min(T, t)]`, s; closed form where there is one, else by quadrature to a relative 1e-10.
+    /// `E[T]`, s; infinite when the integral diverges or something never ends.
+    fn mean(&self) -> f64;
+
+    /// `E[min(T, t)]`, s, and the mean for an infinite `t`; closed form where there is one, else by quadrature
+    /// to a relative 1e-10.
     fn restricted_mean(&self, t: f64) -> f64 {
+        if t == f64::INFINITY {
+            return self.mean();
+        }
         area_by_quadrature(&|u| self.survival(u), self.scale(), t)
     }
 
@@ -53,9 +60,13 @@ pub trait Law: Send + Sync {
         self.log_density(t).exp()
     }
 
-    /// Hazard `h(t) = f(t)/S(t)`, 1/s.
+    /// Hazard `h(t) = f(t)/S(t)`, 1/s; infinite where no mass is left.
     fn hazard(&self, t: f64) -> f64 {
-        (self.log_density(t) - self.log_survival(t)).exp()
+        let log_survival = self.log_survival(t);
+        if log_survival == f64::NEG_INFINITY {
+            return f64::INFINITY;
+        }
+        (self.log_density(t) - log_survival).exp()
     }
 
     /// Inverse of the distribution function: least `t` with `1 - S(t) >= p`, s. `p` in [0, 1);
@@ -64,37 +75,195 @@ pub trait Law: Send + Sync {
         quantile_by_search(self, p)
     }
 
-    /// Mean residual life `E[T - t given T > t]`, s; infinite when the mean is. `limit` bounds the integral.
+    /// Mean residual life `E[min(T, limit) - t given T > t]`, s. `limit` may be infinite; the answer then is
+    /// infinite when the mean is. 0 where no mass is left.
     fn mean_residual_life(&self, t: f64, limit: f64) -> f64 {
-        (self.restricted_mean(limit) - self.restricted_mean(t)) / self.survival(t)
+        residual_by_quadrature(self, t, limit)
+    }
+
+    /// `S` at many ages at once, to a relative 1e-9 where `S > 1e-300`.
+    ///
+    /// `ages` are positive and ascending, `log_ages` their logarithms; all three slices have one length.
+    fn survival_on(&self, ages: &[f64], log_ages: &[f64], out: &mut [f64]) {
+        let _ = log_ages;
+        for (s, &t) in out.iter_mut().zip(ages) {
+            *s = self.survival(t);
+        }
+    }
+
+    /// [`Law::log_survival_gradient`] at many ages at once: `values[i]`, and row `i` of `gradients` (as wide as
+    /// the family has free coordinates), belong to `ages[i]`. Same conditions as [`Law::survival_on`].
+    fn log_survival_gradient_on(
+        &self,
+        ages: &[f64],
+        log_ages: &[f64],
+        values: &mut [f64],
+        gradients: &mut [f64],
+    ) {
+        let _ = log_ages;
+        let width = gradients.len() / ages.len().max(1);
+        for ((value, row), &t) in values.iter_mut().zip(gradients.chunks_exact_mut(width.max(1))).zip(ages) {
+            *value = self.log_survival_gradient(t, row);
+        }
     }
 }
 
 /// A family of laws: one file each under `families/`.
+///
+/// Most say only [`Family::name`], [`Family::coordinates`], [`Family::law`], [`Family::starts`] and
+/// [`Family::weight_of_tail`]; the rest follows from the coordinates.
 pub trait Family: Send + Sync {
-    /// Name in JSON and text, e.g. `log_logistic`.
+    /// Name in JSON and text, e.g. `log_logistic`; a shift or never share shows among the parameters only.
     fn name(&self) -> &'static str;
 
-    /// Names of the natural parameters, in their one order; a shift or never share comes last.
-    fn parameters(&self) -> Vec<&'static str>;
+    /// What the maximiser moves, in order.
+    fn coordinates(&self) -> Vec<Coordinate>;
 
-    /// Number of free coordinates: those the maximiser moves.
-    fn dimension(&self) -> usize;
-
-    /// The law at free coordinates `x` (length [`Family::dimension`]); `None` where they are not finite or overflow.
+    /// The law at free coordinates `x` (length [`Family::dimension`]); `None` where they are not finite or a
+    /// parameter leaves the range of [`Coordinate::natural`].
     fn law(&self, x: &[f64]) -> Option<Box<dyn Law>>;
-
-    /// Free coordinates of natural parameters; `None` when they are out of range.
-    fn free(&self, natural: &[f64]) -> Option<Vec<f64>>;
-
-    /// Free coordinates of the law of `factor · T`.
-    fn rescale(&self, x: &[f64], factor: f64) -> Vec<f64>;
 
     /// Where to start the search, best guess first. Never empty.
     fn starts(&self, about: &About) -> Vec<Vec<f64>>;
 
     /// Which side of "heavy or light" this law falls on at free coordinates `x`.
     fn weight_of_tail(&self, x: &[f64]) -> TailWeight;
+
+    /// Names of the natural parameters, in their one order; a shift or never share comes last. Their number is
+    /// what AIC and BIC count.
+    fn parameters(&self) -> Vec<&'static str> {
+        self.coordinates().iter().map(|c| c.name).collect()
+    }
+
+    /// Number of free coordinates.
+    fn dimension(&self) -> usize {
+        self.coordinates().len()
+    }
+
+    /// Free coordinates of natural parameters; `None` when they are out of range.
+    fn free(&self, natural: &[f64]) -> Option<Vec<f64>> {
+        let coordinates = self.coordinates();
+        if coordinates.len() != natural.len() {
+            return None;
+        }
+        coordinates.iter().zip(natural).map(|(c, &value)| c.free(value)).collect()
+    }
+
+    /// Free coordinates of the law of `factor · T`, `factor > 0`. A family with a fixed shift moves it too: the
+    /// coordinates are then those in the family whose shift is `factor` times as long.
+    fn rescale(&self, x: &[f64], factor: f64) -> Vec<f64> {
+        self.coordinates().iter().zip(x).map(|(c, &at)| c.rescale(at, factor)).collect()
+    }
+}
+
+impl<F: Family + ?Sized> Family for &F {
+    fn name(&self) -> &'static str {
+        (**self).name()
+    }
+    fn coordinates(&self) -> Vec<Coordinate> {
+        (**self).coordinates()
+    }
+    fn law(&self, x: &[f64]) -> Option<Box<dyn Law>> {
+        (**self).law(x)
+    }
+    fn starts(&self, about: &About) -> Vec<Vec<f64>> {
+        (**self).starts(about)
+    }
+    fn weight_of_tail(&self, x: &[f64]) -> TailWeight {
+        (**self).weight_of_tail(x)
+    }
+    fn parameters(&self) -> Vec<&'static str> {
+        (**self).parameters()
+    }
+    fn free(&self, natural: &[f64]) -> Option<Vec<f64>> {
+        (**self).free(natural)
+    }
+    fn rescale(&self, x: &[f64], factor: f64) -> Vec<f64> {
+        (**self).rescale(x, factor)
+    }
+}
+
+/// One free coordinate: the name of its natural parameter, and how the two are tied.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+pub struct Coordinate {
+    /// Name of the natural parameter.
+    pub name: &'static str,
+    /// Its range and unit.
+    pub kind: Kind,
+}
+
+/// Range and unit of a natural parameter; they fix the free coordinate, its bounds and its change with the unit.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+pub enum Kind {
+    /// Above 0, a number without unit: its logarithm. 1e-8 to 1e8.
+    Shape,
+    /// Above 0, in s: its logarithm. 1e-150 to 1e150.
+    Scale,
+    /// Above 0, in 1/s: its logarithm. 1e-150 to 1e150.
+    Rate,
+    /// Real, in s: as it is. Up to 1e150.
+    Location,
+    /// Real, the logarithm of an age in s: as it is. Up to 350.
+    LogLocation,
+    /// Real, a number without unit: as it is. Up to 1e8.
+    Index,
+    /// Between 0 and 1: its logit. Up to 700.
+    Share,
+}
+
+impl Coordinate {
+    /// A coordinate of this name and kind.
+    pub const fn new(name: &'static str, kind: Kind) -> Coordinate {
+        Coordinate { name, kind }
+    }
+
+    /// The natural value at a free one; `None` when it is not finite or out of the kind's range.
+    pub fn natural(self, free: f64) -> Option<f64> {
+        let (bound, natural) = match self.kind {
+            Kind::Shape => (LOG_SHAPE_BOUND, free.exp()),
+            Kind::Scale | Kind::Rate => (LOG_SCALE_BOUND, free.exp()),
+            Kind::Location => (1e150, free),
+            Kind::LogLocation => (350.0, free),
+            Kind::Index => (1e8, free),
+            Kind::Share => (700.0, logistic(free)),
+        };
+        (free.abs() <= bound).then_some(natural)
+    }
+
+    /// The free value of a natural one; `None` when it is out of range.
+    pub fn free(self, natural: f64) -> Option<f64> {
+        let free = match self.kind {
+            Kind::Shape | Kind::Scale | Kind::Rate => natural.ln(),
+            Kind::Location | Kind::LogLocation | Kind::Index => natural,
+            Kind::Share => natural.ln() - (-natural).ln_1p(),
+        };
+        self.natural(free).map(|_| free)
+    }
+
+    /// The free value when every age is multiplied by `factor`.
+    pub fn rescale(self, free: f64, factor: f64) -> f64 {
+        match self.kind {
+            Kind::Scale | Kind::LogLocation => free + factor.ln(),
+            Kind::Rate => free - factor.ln(),
+            Kind::Location => free * factor,
+            Kind::Shape | Kind::Index | Kind::Share => free,
+        }
+    }
+}
+
+/// `ln 1e8`, with a hair of room for the round trip.
+const LOG_SHAPE_BOUND: f64 = 18.420_681;
+/// `ln 1e150`, likewise.
+const LOG_SCALE_BOUND: f64 = 345.387_764;
+
+/// `1/(1 + e^-x)`.
+pub(crate) fn logistic(x: f64) -> f64 {
+    if x >= 0.0 {
+        1.0 / (1.0 + (-x).exp())
+    } else {
+        let e = x.exp();
+        e / (1.0 + e)
+    }
 }
 
 /// Heavy: no exponential moment (METHODS.md section 4).
@@ -147,6 +316,39 @@ pub fn area_by_quadrature(survival: &dyn Fn(f64) -> f64, scale: f64, t: f64) -> 
         if survival(from) * (t - from) <= AREA_TOLERANCE * 1e-2 * area {
             break;
         }
+    }
+    area
+}
+
+/// `∫_t^limit S / S(t)`: in the bulk as a difference of areas, further out as an integral of ratios, which loses
+/// nothing however small `S(t)` is.
+pub(crate) fn residual_by_quadrature<L: Law + ?Sized>(law: &L, t: f64, limit: f64) -> f64 {
+    let start = law.log_survival(t);
+    if t >= limit || start == f64::NEG_INFINITY {
+        return 0.0;
+    }
+    let whole = law.restricted_mean(limit);
+    let rest = whole - law.restricted_mean(t);
+    if whole == f64::INFINITY || rest > 0.01 * whole {
+        return rest / start.exp();
+    }
+    let ratio = |u: f64| (law.log_survival(u) - start).exp();
+    let hazard = law.hazard(t);
+    let mut width = if hazard > 0.0 && hazard.is_finite() { 1.0 / hazard } else { law.scale() };
+    let (mut from, mut area) = (t, 0.0);
+    while from < limit {
+        let end = (from + width).min(limit);
+        let end = if end > from { end } else { limit };
+        if end == f64::INFINITY {
+            break;
+        }
+        let piece = integrate(&ratio, from, end, AREA_TOLERANCE);
+        area += piece;
+        if piece <= AREA_TOLERANCE * 1e-2 * area && ratio(end) * (limit - end).min(width) <= piece {
+            break;
+        }
+        from = end;
+        width *= 2.0;
     }
     area
 }

@@ -1,0 +1,287 @@
+//! The incomplete gamma function at one shape: logarithms of both tails and the derivative in the shape.
+//!
+//! Written here because statrs 0.19 has no logarithm of the tail (0 past `x` of about 700), no derivative in the
+//! shape, and recomputes `ln Γ(a)` at every call.
+
+use statrs::function::gamma::{digamma, ln_gamma};
+
+use super::special::HALF_LN_TWO_PI;
+
+/// `P(a, ·)` and `Q(a, ·)` at one shape `a > 0`, everything that depends on `a` alone computed once.
+///
+/// Arguments are `ln x`, of which laws have the more accurate value. Relative accuracy about 1e-13 of `P`
+/// where `P < Q`, of `Q` elsewhere (1e-15/a of `Q` for a shape below 0.01 and `x < 0.5`); the derivative in `a`
+/// about 1e-12.
+#[derive(Clone, Copy, Debug)]
+pub struct UpperGamma {
+    a: f64,
+    ln_a: f64,
+    digamma: f64,
+    /// `-ln Γ(a)` for a small shape, else `½ ln(a/2π) - (Stirling's remainder)`.
+    constant: f64,
+}
+
+/// From this shape on `ln Γ` is taken by Stirling's series, whose large terms cancel analytically.
+const STIRLING_FROM: f64 = 12.0;
+
+impl UpperGamma {
+    /// At the shape `a > 0`.
+    pub fn new(a: f64) -> UpperGamma {
+        let constant = if a < STIRLING_FROM {
+            -ln_gamma(a)
+        } else {
+            let (r, y) = (1.0 / a, 1.0 / (a * a));
+            // Abramowitz & Stegun 6.1.41.
+            let rest =
+                r * (1.0 / 12.0 - y * (1.0 / 360.0 - y * (1.0 / 1260.0 - y * (1.0 / 1680.0 - y / 1188.0))));
+            0.5 * a.ln() - HALF_LN_TWO_PI - rest
+        };
+        UpperGamma { a, ln_a: a.ln(), digamma: digamma(a), constant }
+    }
+
+    /// The shape.
+    pub fn shape(&self) -> f64 {
+        self.a
+    }
+
+    /// `ψ(a)`.
+    pub fn digamma(&self) -> f64 {
+        self.digamma
+    }
+
+    /// `ln(x^a e^{-x}/Γ(a))`: the density of `ln X`.
+    pub fn ln_power(&self, ln_x: f64, x: f64) -> f64 {
+        if self.a < STIRLING_FROM {
+            return self.a * ln_x - x + self.constant;
+        }
+        let off = (x - self.a) / self.a;
+        let ln_ratio = if off.abs() < 0.5 { off.ln_1p() } else { ln_x - self.ln_a };
+        if off == f64::INFINITY { f64::NEG_INFINITY } else { self.constant - self.a * (off - ln_ratio) }
+    }
+
+    /// `ln Q(a, x)`.
+    pub fn ln_upper(&self, ln_x: f64) -> f64 {
+        let tail = self.tail::<false>(ln_x);
+        if tail.upper { tail.ln } else { ln_complement(tail.ln) }
+    }
+
+    /// `ln P(a, x)`.
+    pub fn ln_lower(&self, ln_x: f64) -> f64 {
+        let tail = self.tail::<false>(ln_x);
+        if tail.upper { ln_complement(tail.ln) } else { tail.ln }
+    }
+
+    /// `ln Q(a, x)`, its derivative in `a`, and its derivative in `-ln x` (the hazard of `ln X`).
+    pub fn ln_upper_gradient(&self, ln_x: f64) -> (f64, f64, f64) {
+        let tail = self.tail::<true>(ln_x);
+        let (ln_q, slope) = if tail.upper {
+            (tail.ln, tail.slope)
+        } else {
+            let ln_q = ln_complement(tail.ln);
+            (ln_q, -tail.slope * (tail.ln - ln_q).exp())
+        };
+        let hazard = if tail.ln_power == f64::NEG_INFINITY { 0.0 } else { (tail.ln_power - ln_q).exp() };
+        (ln_q, if ln_q == 0.0 { 0.0 } else { slope }, hazard)
+    }
+
+    fn tail<const SLOPE: bool>(&self, ln_x: f64) -> Tail {
+        let x = ln_x.exp();
+        let ln_power = self.ln_power(ln_x, x);
+        if ln_power == f64::NEG_INFINITY {
+            let upper = x > self.a;
+            return Tail { upper, ln: f64::NEG_INFINITY, slope: 0.0, ln_power };
+        }
+        if x < 0.5 || (x < self.a && self.a < STIRLING_FROM) {
+            let (sum, weighted) = series::<SLOPE>(self.a, x);
+            let slope = if SLOPE { ln_x - self.digamma - 1.0 / self.a - weighted / sum } else { 0.0 };
+            return Tail { upper: false, ln: ln_power - self.ln_a + sum.ln(), slope, ln_power };
+        }
+        let upper = x >= self.a;
+        let (sum, mean) = ray::<SLOPE>(self.a, x, upper);
+        let slope = if SLOPE { ln_x - self.digamma + mean } else { 0.0 };
+        Tail { upper, ln: ln_power + sum.ln(), slope, ln_power }
+    }
+
+    /// `Q(a, x)` at ascending `ln x`, to a relative 1e-10.
+    ///
+    /// From right to left `Q` grows by `∫ t^{a-1}e^{-t}dt/Γ(a)` over the step, which two-point Hermite quadrature
+    /// gives from values and derivatives already at hand: one exponential per age instead of a series.
+    pub fn upper_on(&self, count: usize, ln_x: impl Fn(usize) -> f64, mut put: impl FnMut(usize, f64)) {
+        let mut right: Option<(Node, f64)> = None;
+        for i in (0..count).rev() {
+            let node = self.node(ln_x(i));
+            let q = match &right {
+                Some((next, q)) if node.reaches(next, self.a, *q) => (q + node.step(next)).min(1.0),
+                _ => self.ln_upper(node.u).exp(),
+            };
+            put(i, q);
+            right = Some((node, q));
+        }
+    }
+
+    /// [`UpperGamma::ln_upper_gradient`] at ascending `ln x`; the derivative in `a` to 1e-10 of the largest `Q`.
+    pub fn ln_upper_gradient_on(
+        &self,
+        count: usize,
+        ln_x: impl Fn(usize) -> f64,
+        mut put: impl FnMut(usize, (f64, f64, f64)),
+    ) {
+        // The right neighbour, its Q, and dQ/da there.
+        let mut right: Option<(Node, f64, f64)> = None;
+        for i in (0..count).rev() {
+            let node = self.node(ln_x(i));
+            let stepped = match &right {
+                Some((next, q, slope)) if node.reaches(next, self.a, *q) => {
+                    let q = (q + node.step(next)).min(1.0);
+                    Some((q, slope + node.tilted(self.digamma).step(&next.tilted(self.digamma))))
+                }
+                _ => None,
+            };
+            let (q, slope) = match stepped {
+                Some((q, slope)) => {
+                    put(i, (q.ln(), slope / q, node.g[0] / q));
+                    (q, slope)
+                }
+                None => {
+                    let (ln_q, relative, hazard) = self.ln_upper_gradient(node.u);
+                    put(i, (ln_q, relative, hazard));
+                    let q = ln_q.exp();
+                    (q, q * relative)
+                }
+            };
+            right = Some((node, q, slope));
+        }
+    }
+
+    fn node(&self, u: f64) -> Node {
+        let x = u.exp();
+        let g = self.ln_power(u, x).exp();
+        let c = self.a - x;
+        let g = if g > 0.0 { [g, g * c, g * (c * c - x), g * (c * (c * c - 3.0 * x) - x)] } else { [0.0; 4] };
+        Node { u, x, g }
+    }
+}
+
+struct Tail {
+    /// Whether `ln` is that of `Q` (else of `P`).
+    upper: bool,
+    ln: f64,
+    /// Derivative of `ln` in the shape.
+    slope: f64,
+    ln_power: f64,
+}
+
+/// The density of `ln X` and its first three derivatives at `u = ln x`.
+struct Node {
+    u: f64,
+    x: f64,
+    g: [f64; 4],
+}
+
+impl Node {
+    /// Whether the step to `next` is short enough for a relative 1e-11 of what is right of it.
+    fn reaches(&self, next: &Node, a: f64, q: f64) -> bool {
+        let h = next.u - self.u;
+        let steepness = (a - self.x).abs().max((a - next.x).abs()) + 2.0 * next.x.sqrt();
+        let power = (steepness * h).powi(4);
+        // Error of the rule: h⁹ g⁗⁗/25401600.
+        q > 1e-300 && h >= 0.0 && power * power * h * self.g[0].max(next.g[0]) <= 2.5e-4 * q
+    }
+
+    /// `∫ g` from here to `next`.
+    fn step(&self, next: &Node) -> f64 {
+        let h = next.u - self.u;
+        h * (0.5 * (self.g[0] + next.g[0])
+            + h * (3.0 / 28.0 * (self.g[1] - next.g[1])
+                + h * ((self.g[2] + next.g[2]) / 84.0 + h * (self.g[3] - next.g[3]) / 1680.0)))
+    }
+
+    /// `(u - ψ(a))·g(u)`, whose integral is the derivative of `Q` in the shape.
+    fn tilted(&self, digamma: f64) -> Node {
+        let v = self.u - digamma;
+        let [g0, g1, g2, g3] = self.g;
+        Node { u: self.u, x: self.x, g: [v * g0, v * g1 + g0, v * g2 + 2.0 * g1, v * g3 + 3.0 * g2] }
+    }
+}
+
+/// `ln(1 - e^ln_p)`.
+fn ln_complement(ln_p: f64) -> f64 {
+    if ln_p > -std::f64::consts::LN_2 { (-ln_p.exp_m1()).ln() } else { (-ln_p.exp()).ln_1p() }
+}
+
+/// `Σ x^n/((a+1)…(a+n))` from `n = 0` (Abramowitz & Stegun 6.5.29), which is `P(a, x)·a·Γ(a)·e^x/x^a`.
+pub fn rising_series(a: f64, x: f64) -> f64 {
+    series::<false>(a, x).0
+}
+
+/// The series, and (if asked) the sum of its terms each times `Σ 1/(a+k)`.
+fn series<const SLOPE: bool>(a: f64, x: f64) -> (f64, f64) {
+    let (mut sum, mut weighted, mut term, mut harmonic, mut below) = (1.0, 0.0, 1.0, 0.0, a);
+    loop {
+        below += 1.0;
+        let inverse = 1.0 / below;
+        term *= x * inverse;
+        sum += term;
+        if SLOPE {
+            harmonic += inverse;
+            weighted += term * harmonic;
+        }
+        // x < below always holds from some term on, after which the terms shrink faster than a geometric series.
+        if term <= sum * (f64::EPSILON * 0.1) || term.is_nan() {
+            return (sum, weighted);
+        }
+    }
+}
+
+/// `∫_0^∞ exp(∓…) ds` along `ln t = ln x ± s`: the tail divided by `x^a e^{-x}/Γ(a)`, and (if asked) the mean of
+/// `±s` under the integrand, which is what differentiating in the shape brings down.
+fn ray<const SLOPE: bool>(a: f64, x: f64, upper: bool) -> (f64, f64) {
+    let sign = if upper { 1.0 } else { -1.0 };
+    let slope = (x - a).abs();
+    // Exponent at distance s, convex and increasing: the integrand is its negative exponential.
+    let fall = |s: f64| slope * s + x * ((sign * s).exp_m1() - sign * s);
+    // Where the integrand is e^-37: Newton from the quadratic that bounds (or nearly bounds) the exponent.
+    let mut width = 2.0 * DEPTH / (slope + (slope * slope + 2.0 * DEPTH * x).sqrt());
+    for _ in 0..2 {
+        let steep = slope + x * sign * (sign * width).exp_m1();
+        width += (DEPTH - fall(width)) / steep;
+    }
+    let (mut sum, mut moment) = (0.0, 0.0);
+    for (node, weight) in GAUSS_20 {
+        let s = width * node;
+        let y = weight * (-fall(s)).exp();
+        sum += y;
+        if SLOPE {
+            moment += y * s;
+        }
+    }
+    (sum * width, sign * moment / sum)
+}
+
+/// `-ln` of what the integrand is cut at.
+const DEPTH: f64 = 37.0;
+
+/// Gauss-Legendre nodes and weights of order 20 on [0, 1], from mpmath 1.3 at 30 digits.
+#[rustfmt::skip]
+const GAUSS_20: [(f64, f64); 20] = [
+    (0.003_435_700_407_452_537_7, 0.008_807_003_569_576_059),
+    (0.018_014_036_361_043_102, 0.020_300_714_900_193_47),
+    (0.043_882_785_874_337_05, 0.031_336_024_167_054_534),
+    (0.080_441_514_088_890_58, 0.041_638_370_788_352_38),
+    (0.126_834_046_769_924_6, 0.050_965_059_908_620_22),
+    (0.181_973_159_636_742_5, 0.059_097_265_980_759_206),
+    (0.244_566_499_024_586_44, 0.065_844_319_224_588_32),
+    (0.313_146_955_642_290_2, 0.071_048_054_659_191_02),
+    (0.386_107_074_429_177_47, 0.074_586_493_236_301_87),
+    (0.461_736_739_433_251_33, 0.076_376_693_565_362_92),
+    (0.538_263_260_566_748_7, 0.076_376_693_565_362_92),
+    (0.613_892_925_570_822_5, 0.074_586_493_236_301_87),
+    (0.686_853_044_357_709_8, 0.071_048_054_659_191_02),
+    (0.755_433_500_975_413_5, 0.065_844_319_224_588_32),
+    (0.818_026_840_363_257_5, 0.059_097_265_980_759_206),
+    (0.873_165_953_230_075_4, 0.050_965_059_908_620_22),
+    (0.919_558_485_911_109_4, 0.041_638_370_788_352_38),
+    (0.956_117_214_125_663, 0.031_336_024_167_054_534),
+    (0.981_985_963_638_956_8, 0.020_300_714_900_193_47),
+    (0.996_564_299_592_547_4, 0.008_807_003_569_576_059),
+];
