@@ -186,6 +186,30 @@ impl ProductLimit {
         curve
     }
 
+    /// The same curve at about `n` of its endings, or all if there are no more; the last is kept.
+    pub(crate) fn thinned(&self, n: usize) -> ProductLimit {
+        if self.ages.len() <= n {
+            return self.clone();
+        }
+        let step = (1.0 - self.end()) / n as f64;
+        let mut thin = ProductLimit::default();
+        let mut goal = 1.0;
+        for i in 0..self.ages.len() {
+            if self.survival[i] <= goal || i + 1 == self.ages.len() {
+                thin.ages.push(self.ages[i]);
+                thin.survival.push(self.survival[i]);
+                thin.at_risk.push(self.at_risk[i]);
+                goal = self.survival[i] - step;
+            }
+        }
+        thin
+    }
+
+    /// Last age with at least `n` at risk just before it; `None` where there never are.
+    pub(crate) fn last_with(&self, n: f64) -> Option<f64> {
+        self.at_risk.iter().rposition(|&r| r >= n).map(|i| self.ages[i])
+    }
+
     /// `Ŝ(t)`, right-continuous.
     pub(crate) fn at(&self, t: f64) -> f64 {
         match self.ages.partition_point(|&age| age <= t) {

@@ -182,12 +182,13 @@ impl Evidence {
             return Err(FitError::TooFewAges { family: name, distinct, needed: dimension });
         }
         let frame = Frame::new(family, self.unit);
+        let events = self.events;
         let bounds: Vec<(f64, f64)> = family.coordinates().iter().map(|c| bounds(c.name)).collect();
         let mut best: Option<Maximum> = None;
         for start in family.starts(&self.about) {
             let near = family.rescale(&start, 1.0 / self.unit);
-            let mut climb = Climb { family, frame: &frame, likelihood: &mut self.likelihood };
-            let found = maximise(&mut climb, &near, &bounds, self.events);
+            let mut climb = self.climb(family, &frame);
+            let found = maximise(&mut climb, &near, &bounds, events);
             if best.as_ref().is_none_or(|b| found.value > b.value) {
                 best = Some(found);
             }
@@ -222,12 +223,18 @@ impl Evidence {
                 at: best.at[..dimension].to_vec(),
                 value: best.value,
                 information: best.information,
+                unit: self.events,
                 frame,
             },
         })
     }
 
-    /// Log-likelihood at a point in the coordinates of a [`Peak`].
+    /// The likelihood as a function of scaled coordinates.
+    pub(crate) fn climb<'a>(&'a mut self, family: &'a dyn Family, frame: &'a Frame) -> Climb<'a> {
+        Climb { family, frame, likelihood: &mut self.likelihood }
+    }
+
+    /// Log-likelihood of any law.
     pub(crate) fn log_likelihood(&mut self, law: &dyn Law) -> f64 {
         self.likelihood.value(law)
     }
@@ -239,6 +246,8 @@ pub(crate) struct Peak {
     pub(crate) at: Vec<f64>,
     pub(crate) value: f64,
     pub(crate) information: Symmetric,
+    /// Curvature to expect of each coordinate: the number of events.
+    pub(crate) unit: f64,
     pub(crate) frame: Frame,
 }
 
@@ -258,11 +267,17 @@ impl Frame {
     }
 
     pub(crate) fn free(&self, at: &[f64]) -> Vec<f64> {
-        at.iter().zip(&self.offset).zip(&self.slope).map(|((x, a), b)| a + b * x).collect()
+        (0..at.len()).map(|i| self.free_at(i, at[i])).collect()
+    }
+
+    /// One coordinate of [`Frame::free`].
+    pub(crate) fn free_at(&self, i: usize, x: f64) -> f64 {
+        self.offset[i] + self.slope[i] * x
     }
 }
 
-struct Climb<'a> {
+/// See [`Evidence::climb`].
+pub(crate) struct Climb<'a> {
     family: &'a dyn Family,
     frame: &'a Frame,
     likelihood: &'a mut Likelihood,
@@ -272,7 +287,7 @@ impl Objective for Climb<'_> {
     fn evaluate(&mut self, at: &[f64], gradient: &mut [f64]) -> f64 {
         let mut free = [0.0; MAX_DIMENSION];
         for (i, &x) in at.iter().enumerate() {
-            free[i] = self.frame.offset[i] + self.frame.slope[i] * x;
+            free[i] = self.frame.free_at(i, x);
         }
         let Some(law) = self.family.law(&free[..at.len()]) else { return f64::NEG_INFINITY };
         let value = self.likelihood.gradient(law.as_ref(), gradient);
@@ -282,9 +297,14 @@ impl Objective for Climb<'_> {
 }
 
 /// Walls of the search. A never share below `logistic(-12)`, six in a million, or above `logistic(6)` cannot be
-/// told from none or all (RECIPE's second section).
-fn bounds(coordinate: &str) -> (f64, f64) {
-    if coordinate == "never" { (-12.0, 6.0) } else { (f64::NEG_INFINITY, f64::INFINITY) }
+/// told from none or all (RECIPE's second section). A tail index below -1 makes the density infinite at the
+/// end of its range (Smith 1985).
+pub(crate) fn bounds(coordinate: &str) -> (f64, f64) {
+    match coordinate {
+        "never" => (-12.0, 6.0),
+        "xi" => (-1.0, f64::INFINITY),
+        _ => (f64::NEG_INFINITY, f64::INFINITY),
+    }
 }
 
 /// Natural parameters with standard errors by the delta method.

@@ -28,6 +28,32 @@ pub fn log_likelihood_gradient(law: &dyn Law, sample: &Sample, gradient: &mut [f
     Likelihood::new(sample).gradient(law, gradient)
 }
 
+/// What one group of equal observations adds to a log-likelihood.
+#[derive(Clone, Copy, Debug, PartialEq)]
+pub(crate) struct Term {
+    /// Nats per observation.
+    pub(crate) value: f64,
+    pub(crate) weight: f64,
+}
+
+/// The terms of [`log_likelihood`] one by one: events, censored, entries.
+pub(crate) fn terms<'a>(law: &'a dyn Law, sample: &'a Sample) -> impl Iterator<Item = Term> + 'a {
+    let events = sample.events.iter().map(move |e| {
+        let value = if e.upto - e.over <= NARROW * e.upto {
+            let width = e.upto - e.over;
+            law.log_density(0.5 * (e.over + e.upto)) + if width > 0.0 { width.ln() } else { 0.0 }
+        } else {
+            let end = if e.upto.is_finite() { law.log_survival(e.upto) } else { never(law).ln() };
+            let start = law.log_survival(e.over);
+            start + log_one_minus_exp(end - start)
+        };
+        Term { value, weight: e.weight }
+    });
+    let censored = sample.censored.iter().map(|m| Term { value: law.log_survival(m.age), weight: m.weight });
+    let entries = sample.entries.iter().map(|m| Term { value: -law.log_survival(m.age), weight: m.weight });
+    events.chain(censored).chain(entries)
+}
+
 /// A sample laid out for many evaluations: every age at which a survival is needed stands once, in order.
 #[derive(Clone, Debug, Default)]
 pub(crate) struct Likelihood {
