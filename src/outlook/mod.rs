@@ -3,8 +3,10 @@
 //! An empirical curve, a fitted law, and the splice of both are outlooks; everything in
 //! [`crate::stopping`] takes an outlook and knows no more. Ages are seconds since the wait began.
 
+mod average;
 mod grid;
 
+pub use average::Average;
 pub use grid::{Grid, Sampled};
 
 /// The two curves of one wait with their integral.

@@ -2,6 +2,133 @@
 //!
 //! In: [`crate::wait::Wait`]. Out: [`Cells`]. No files, no clock.
 
+mod ages;
+mod book;
+mod buckets;
 mod cells;
 
+pub use ages::{Ages, Bin, EXACT_AGES};
+pub use book::{Book, Day, Days};
+pub use buckets::{Buckets, MOST_BUCKETS};
 pub use cells::{Cause, Cells, EventCell, Interval, Mass, Sample};
+
+use crate::wait::{Age, Ending, Wait};
+
+/// The waits of one stream and period, counted. [`Tally::merge`] is associative, commutative and exact.
+#[derive(Clone, Debug, Default, PartialEq)]
+pub struct Tally {
+    first: Side,
+    // Most streams number no attempts.
+    retry: Option<Box<Side>>,
+    seen: Option<(f64, f64)>,
+}
+
+/// First attempts, or retries: retries are drawn from those whose first attempt was slow, so the two never mix.
+#[derive(Clone, Debug, Default, PartialEq)]
+struct Side {
+    ages: [Ages; 4],
+    entries: Ages,
+    buckets: Option<Box<Buckets>>,
+}
+
+impl Tally {
+    /// Counts one wait.
+    #[inline]
+    pub fn add(&mut self, wait: &Wait) {
+        let side = if wait.attempt() == 1 { &mut self.first } else { self.retry.get_or_insert_default() };
+        match wait.age() {
+            Age::Exact(age) => side.ages[wait.ending() as usize].add(age, wait.count()),
+            Age::Between { over, upto } => {
+                side.buckets.get_or_insert_default().add(over, upto, wait.ending(), wait.count());
+            }
+        }
+        if wait.entered() > 0.0 {
+            side.entries.add(wait.entered(), wait.count());
+        }
+        if let Some(at) = wait.at() {
+            self.see(at, at);
+        }
+    }
+
+    /// Adds all of `other`.
+    pub fn merge(&mut self, other: &Tally) {
+        self.first.merge(&other.first);
+        if let Some(theirs) = &other.retry {
+            self.retry.get_or_insert_default().merge(theirs);
+        }
+        if let Some((from, to)) = other.seen {
+            self.see(from, to);
+        }
+    }
+
+    fn see(&mut self, from: f64, to: f64) {
+        let (a, b) = self.seen.unwrap_or((from, to));
+        self.seen = Some((a.min(from), b.max(to)));
+    }
+
+    /// The first attempts: what shapes every curve.
+    pub fn first_attempts(&self) -> Cells {
+        self.first.cells()
+    }
+
+    /// The later attempts: what shows stickiness.
+    pub fn retries(&self) -> Cells {
+        self.retry.as_ref().map(|side| side.cells()).unwrap_or_default()
+    }
+
+    /// Number of waits by ending, first attempts and retries together, in the order of [`Ending::ALL`].
+    pub fn counts(&self) -> [u64; 4] {
+        let mut counts = self.first.counts();
+        if let Some(side) = &self.retry {
+            for (n, more) in counts.iter_mut().zip(side.counts()) {
+                *n = n.saturating_add(more);
+            }
+        }
+        counts
+    }
+
+    /// First and last time of the waits that carried one, Unix seconds.
+    pub fn seen(&self) -> Option<(f64, f64)> {
+        self.seen
+    }
+}
+
+impl Side {
+    fn merge(&mut self, other: &Side) {
+        for (mine, theirs) in self.ages.iter_mut().zip(&other.ages) {
+            mine.merge(theirs);
+        }
+        self.entries.merge(&other.entries);
+        if let Some(theirs) = &other.buckets {
+            self.buckets.get_or_insert_default().merge(theirs);
+        }
+    }
+
+    fn counts(&self) -> [u64; 4] {
+        let mut counts = self.buckets.as_ref().map(|b| b.counts()).unwrap_or_default();
+        for (n, ages) in counts.iter_mut().zip(&self.ages) {
+            *n = n.saturating_add(ages.count());
+        }
+        counts
+    }
+
+    fn cells(&self) -> Cells {
+        let mut cells = Cells::default();
+        for (ending, ages) in Ending::ALL.into_iter().zip(&self.ages) {
+            for bin in ages.bins() {
+                cells.push(bin.low, bin.high, ending, bin.count as f64);
+            }
+        }
+        for (over, upto, counts) in self.buckets.iter().flat_map(|b| b.iter()) {
+            for (ending, &count) in Ending::ALL.into_iter().zip(counts) {
+                if count > 0 {
+                    cells.push(over, upto, ending, count as f64);
+                }
+            }
+        }
+        cells.entries =
+            self.entries.bins().iter().map(|b| Mass { age: b.low, weight: b.count as f64 }).collect();
+        cells.tidy();
+        cells
+    }
+}

@@ -1,0 +1,5 @@
+//! Tally -> nonparametric curves. METHODS.md section 2.
+
+mod piecewise;
+
+pub use piecewise::PiecewiseHazard;

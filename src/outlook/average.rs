@@ -1,0 +1,146 @@
+//! The weighted average of sampled outlooks: what is believed after all doubt, itself an outlook.
+
+use super::{Grid, Outlook, Sampled};
+
+/// Sampled curves averaged with weights, and straight lines between the ages of the grid.
+///
+/// The average of laws under their weights is the law of a wait whose law is drawn first; so every number
+/// quoted with an advice comes from it and they all agree.
+#[derive(Clone, Debug)]
+pub struct Average {
+    ages: Vec<f64>,
+    curve: Sampled,
+    sight: f64,
+}
+
+impl Average {
+    /// Averages curves that cover at least the grid up to its ceiling. `None` if no weight is above 0.
+    pub fn of<'a>(
+        grid: &Grid,
+        curves: impl IntoIterator<Item = (f64, &'a Sampled)>,
+        sight: f64,
+    ) -> Option<Average> {
+        let n = grid.decide().end;
+        let mut sum =
+            Sampled { survival: vec![0.0; n], area: vec![0.0; n], done: vec![0.0; n], failed: vec![0.0; n] };
+        let mut total = 0.0;
+        for (weight, curve) in curves {
+            if weight <= 0.0 || curve.survival.len() < n {
+                continue;
+            }
+            total += weight;
+            for (into, from) in [
+                (&mut sum.survival, &curve.survival),
+                (&mut sum.area, &curve.area),
+                (&mut sum.done, &curve.done),
+                (&mut sum.failed, &curve.failed),
+            ] {
+                into.iter_mut().zip(from).for_each(|(a, b)| *a += weight * b);
+            }
+        }
+        if total <= 0.0 {
+            return None;
+        }
+        for column in [&mut sum.survival, &mut sum.area, &mut sum.done, &mut sum.failed] {
+            column.iter_mut().for_each(|v| *v /= total);
+        }
+        // A leading 0 makes every age a stretch of its own.
+        let with_origin = |first: f64, rest: Vec<f64>| std::iter::once(first).chain(rest).collect();
+        Some(Average {
+            ages: with_origin(0.0, grid.ages()[..n].to_vec()),
+            curve: Sampled {
+                survival: with_origin(1.0, sum.survival),
+                area: with_origin(0.0, sum.area),
+                done: with_origin(0.0, sum.done),
+                failed: with_origin(0.0, sum.failed),
+            },
+            sight,
+        })
+    }
+
+    /// Last age it knows: the ceiling. Beyond it the curves stay where they are.
+    pub fn end(&self) -> f64 {
+        self.ages[self.ages.len() - 1]
+    }
+
+    /// Index of the stretch that holds `t`, and how far into it, 0 to 1.
+    fn place(&self, t: f64) -> (usize, f64) {
+        let n = self.ages.len();
+        let i = self.ages.partition_point(|&a| a <= t).clamp(1, n - 1) - 1;
+        let (from, to) = (self.ages[i], self.ages[i + 1]);
+        (i, ((t - from) / (to - from)).clamp(0.0, 1.0))
+    }
+
+    fn read(&self, column: &[f64], t: f64) -> f64 {
+        let (i, part) = self.place(t);
+        column[i] + part * (column[i + 1] - column[i])
+    }
+}
+
+impl Outlook for Average {
+    fn survival(&self, t: f64) -> f64 {
+        self.read(&self.curve.survival, t)
+    }
+
+    fn done(&self, t: f64) -> f64 {
+        self.read(&self.curve.done, t)
+    }
+
+    fn failed(&self, t: f64) -> f64 {
+        self.read(&self.curve.failed, t)
+    }
+
+    fn restricted_mean(&self, t: f64) -> f64 {
+        let beyond = (t - self.end()).max(0.0);
+        self.read(&self.curve.area, t) + beyond * self.curve.survival[self.curve.survival.len() - 1]
+    }
+
+    fn hazards(&self, t: f64) -> Option<(f64, f64)> {
+        let (i, _) = self.place(t);
+        let survival = self.survival(t);
+        let width = self.ages[i + 1] - self.ages[i];
+        let slope = |column: &[f64]| (column[i + 1] - column[i]) / width / survival;
+        (survival > 0.0 && t < self.end()).then(|| (slope(&self.curve.done), slope(&self.curve.failed)))
+    }
+
+    fn faded_done(&self, t: f64, worth: &dyn Fn(f64) -> f64) -> f64 {
+        let (last, part) = self.place(t);
+        (0..=last)
+            .map(|i| {
+                let share = if i == last { part } else { 1.0 };
+                let (from, to) = (self.ages[i], self.ages[i] + share * (self.ages[i + 1] - self.ages[i]));
+                worth(0.5 * (from + to)) * share * (self.curve.done[i + 1] - self.curve.done[i])
+            })
+            .sum()
+    }
+
+    fn knots(&self) -> &[f64] {
+        &self.ages[1..]
+    }
+
+    fn sight(&self) -> f64 {
+        self.sight
+    }
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    #[test]
+    fn averages_two_exponentials() {
+        let grid = Grid::new(1e-3, 0.01, 20.0);
+        let curve =
+            |rate: f64| Sampled::join(&grid, grid.ages().iter().map(|t| (-rate * t).exp()).collect(), &[]);
+        let (slow, fast) = (curve(0.5), curve(2.0));
+        let mean = Average::of(&grid, [(1.0, &slow), (3.0, &fast)], 5.0).unwrap();
+        for t in [0.02_f64, 0.7, 3.0, 19.0] {
+            let truth = 0.25 * (-0.5 * t).exp() + 0.75 * (-2.0_f64 * t).exp();
+            assert!((mean.survival(t) - truth).abs() < 1e-3, "{t}");
+            assert!((mean.survival(t) + mean.done(t) - 1.0).abs() < 1e-12);
+        }
+        assert!((mean.faded_done(20.0, &|_| 2.0) - 2.0 * mean.done(20.0)).abs() < 1e-12);
+        assert_eq!(mean.survival(0.0), 1.0);
+        assert!(Average::of(&grid, [(0.0, &slow)], 5.0).is_none());
+    }
+}

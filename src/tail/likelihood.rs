@@ -1,0 +1,220 @@
+//! Log-likelihood of a law over exact, interval-censored, right-censored and left-truncated observations
+//! together. METHODS.md section 3.
+
+use super::law::Law;
+use crate::tally::Sample;
+
+/// Most free coordinates a law may have; fixes the size of the small arrays of the fit.
+pub(crate) const MAX_DIMENSION: usize = 8;
+
+/// An interval narrower than this share of its age is read as a point with a density. There the difference of
+/// two survivals has lost half its digits, while the middle of the interval is good to the square of its width.
+const NARROW: f64 = 1e-6;
+
+/// A law with a never share is far from any ending here, in units of its own scale.
+const FAR: f64 = 1e12;
+
+/// `Σ_exact ln f(x) + Σ_interval ln(S(over) - S(upto)) + Σ_right ln S(c) - Σ ln S(entry)`, in nats.
+///
+/// Densities are per unit of the sample's ages. `-∞` where an observation is impossible under the law; never
+/// NaN, whatever the weights (which may reach 1e12 and more).
+pub fn log_likelihood(law: &dyn Law, sample: &Sample) -> f64 {
+    Likelihood::new(sample).value(law)
+}
+
+/// [`log_likelihood`] with its gradient in the law's free coordinates, written to `gradient`, whose length is
+/// the law's dimension (at most 8). Where the value is `-∞` the gradient means nothing.
+pub fn log_likelihood_gradient(law: &dyn Law, sample: &Sample, gradient: &mut [f64]) -> f64 {
+    Likelihood::new(sample).gradient(law, gradient)
+}
+
+/// What one group of equal observations adds to a log-likelihood.
+#[derive(Clone, Copy, Debug, PartialEq)]
+pub(crate) struct Term {
+    /// Nats per observation.
+    pub(crate) value: f64,
+    pub(crate) weight: f64,
+}
+
+/// The terms of [`log_likelihood`] one by one: events, censored, entries.
+pub(crate) fn terms<'a>(law: &'a dyn Law, sample: &'a Sample) -> impl Iterator<Item = Term> + 'a {
+    let events = sample.events.iter().map(move |e| {
+        let value = if e.upto - e.over <= NARROW * e.upto {
+            let width = e.upto - e.over;
+            law.log_density(0.5 * (e.over + e.upto)) + if width > 0.0 { width.ln() } else { 0.0 }
+        } else {
+            let end = if e.upto.is_finite() { law.log_survival(e.upto) } else { never(law).ln() };
+            let start = law.log_survival(e.over);
+            start + log_one_minus_exp(end - start)
+        };
+        Term { value, weight: e.weight }
+    });
+    let censored = sample.censored.iter().map(|m| Term { value: law.log_survival(m.age), weight: m.weight });
+    let entries = sample.entries.iter().map(|m| Term { value: -law.log_survival(m.age), weight: m.weight });
+    events.chain(censored).chain(entries)
+}
+
+/// A sample laid out for many evaluations: every age at which a survival is needed stands once, in order.
+#[derive(Clone, Debug, Default)]
+pub(crate) struct Likelihood {
+    /// Distinct positive ages, ascending, and their logarithms.
+    ages: Vec<f64>,
+    log_ages: Vec<f64>,
+    /// Weight of `ln S` at each age: censored waits, less entries.
+    tails: Vec<f64>,
+    /// Events between two of the ages.
+    between: Vec<Between>,
+    /// Events some time after one of the ages (the last bucket of a histogram): its index, and the weight.
+    open: Vec<(Option<usize>, f64)>,
+    /// Exact events: age and weight.
+    points: Vec<(f64, f64)>,
+    /// What the widths of narrow intervals add.
+    constant: f64,
+    /// Scratch: `ln S` and its gradient at each age, and the weight with which each gradient counts.
+    values: Vec<f64>,
+    gradients: Vec<f64>,
+    pulls: Vec<f64>,
+}
+
+#[derive(Clone, Copy, Debug)]
+struct Between {
+    /// Index of the lower age; `None` for 0.
+    over: Option<usize>,
+    upto: usize,
+    weight: f64,
+}
+
+impl Likelihood {
+    pub(crate) fn new(sample: &Sample) -> Likelihood {
+        let mut l = Likelihood::default();
+        let narrow = |over: f64, upto: f64| upto - over <= NARROW * upto;
+        let bounds = sample.events.iter().filter(|e| !narrow(e.over, e.upto)).flat_map(|e| [e.over, e.upto]);
+        let masses = sample.censored.iter().chain(&sample.entries).map(|m| m.age);
+        l.ages = bounds.chain(masses).filter(|&t| t > 0.0 && t.is_finite()).collect();
+        l.ages.sort_by(f64::total_cmp);
+        l.ages.dedup();
+        l.log_ages = l.ages.iter().map(|t| t.ln()).collect();
+        let place = |ages: &[f64], t: f64| ages.binary_search_by(|a| a.total_cmp(&t)).ok();
+        l.tails = vec![0.0; l.ages.len()];
+        for (masses, sign) in [(&sample.censored, 1.0), (&sample.entries, -1.0)] {
+            for m in masses {
+                if let Some(i) = place(&l.ages, m.age) {
+                    l.tails[i] += sign * m.weight;
+                }
+            }
+        }
+        for e in sample.events.iter().filter(|e| e.weight > 0.0) {
+            if narrow(e.over, e.upto) {
+                l.points.push((0.5 * (e.over + e.upto), e.weight));
+                if e.over < e.upto {
+                    l.constant += e.weight * (e.upto - e.over).ln();
+                }
+            } else if let Some(upto) = place(&l.ages, e.upto) {
+                l.between.push(Between { over: place(&l.ages, e.over), upto, weight: e.weight });
+            } else {
+                l.open.push((place(&l.ages, e.over), e.weight));
+            }
+        }
+        l.values = vec![0.0; l.ages.len()];
+        l.pulls = vec![0.0; l.ages.len()];
+        l
+    }
+
+    /// The log-likelihood; `-∞` where the law cannot be.
+    pub(crate) fn value(&mut self, law: &dyn Law) -> f64 {
+        for (value, &t) in self.values.iter_mut().zip(&self.ages) {
+            *value = law.log_survival(t);
+        }
+        let points: f64 = self.points.iter().map(|&(t, weight)| weight * law.log_density(t)).sum();
+        let far = if self.open.is_empty() { 0.0 } else { never(law) };
+        proper(self.constant + points + self.weigh(far))
+    }
+
+    /// The log-likelihood and its gradient.
+    pub(crate) fn gradient(&mut self, law: &dyn Law, gradient: &mut [f64]) -> f64 {
+        let n = gradient.len();
+        let mut row = [0.0; MAX_DIMENSION];
+        gradient.fill(0.0);
+        let mut total = self.constant;
+        for &(t, weight) in &self.points {
+            total += weight * law.log_density_gradient(t, &mut row[..n]);
+            add(gradient, weight, &row);
+        }
+        self.gradients.resize(n * self.ages.len(), 0.0);
+        law.log_survival_gradient_on(&self.ages, &self.log_ages, &mut self.values, &mut self.gradients);
+        let far = if self.open.is_empty() { 0.0 } else { never(law) };
+        total += self.weigh(far);
+        for (row, &pull) in self.gradients.chunks_exact(n.max(1)).zip(&self.pulls) {
+            // Where S has vanished its gradient may be infinite, and weighs nothing.
+            if pull != 0.0 {
+                add(gradient, pull, row);
+            }
+        }
+        if far > 0.0 {
+            law.log_survival_gradient(FAR * law.scale(), &mut row[..n]);
+            for &(over, weight) in &self.open {
+                add(gradient, -weight * odds(self.at(over), far.ln()), &row);
+            }
+        }
+        if gradient.iter().all(|g| g.is_finite()) { proper(total) } else { f64::NEG_INFINITY }
+    }
+
+    fn at(&self, index: Option<usize>) -> f64 {
+        index.map_or(0.0, |i| self.values[i])
+    }
+
+    /// The terms in `ln S`, from `values`; leaves in `pulls` the derivative by each of them.
+    fn weigh(&mut self, never: f64) -> f64 {
+        self.pulls.copy_from_slice(&self.tails);
+        let mut total = 0.0;
+        for (value, &weight) in self.values.iter().zip(&self.tails) {
+            if weight != 0.0 {
+                total += weight * value;
+            }
+        }
+        for i in 0..self.between.len() {
+            let Between { over, upto, weight } = self.between[i];
+            let (from, to) = (self.at(over), self.values[upto]);
+            total += weight * (from + log_one_minus_exp(to - from));
+            let odds = odds(from, to);
+            self.pulls[upto] -= weight * odds;
+            if let Some(over) = over {
+                self.pulls[over] += weight * (1.0 + odds);
+            }
+        }
+        for &(over, weight) in &self.open {
+            let (from, to) = (over.map_or(0.0, |i| self.values[i]), never.ln());
+            total += weight * (from + log_one_minus_exp(to - from));
+            if let Some(over) = over {
+                self.pulls[over] += weight * (1.0 + odds(from, to));
+            }
+        }
+        total
+    }
+}
+
+/// Share that never ends, 0 for most laws.
+fn never(law: &dyn Law) -> f64 {
+    law.never().max(0.0)
+}
+
+/// No observation is certain to infinity, and none is NaN.
+fn proper(log_likelihood: f64) -> f64 {
+    if log_likelihood < f64::INFINITY { log_likelihood } else { f64::NEG_INFINITY }
+}
+
+fn add(sum: &mut [f64], weight: f64, term: &[f64]) {
+    for (s, t) in sum.iter_mut().zip(term) {
+        *s += weight * t;
+    }
+}
+
+/// `S_u/(S_l - S_u)` from the logarithms: `∇ ln(S_l - S_u) = (1 + odds) ∇ln S_l - odds ∇ln S_u`.
+fn odds(from: f64, to: f64) -> f64 {
+    1.0 / (from - to).exp_m1()
+}
+
+/// `ln(1 - e^d)` for `d <= 0`, by whichever form keeps its digits (Mächler 2012).
+fn log_one_minus_exp(d: f64) -> f64 {
+    if d > -std::f64::consts::LN_2 { (-d.exp_m1()).ln() } else { (-d.exp()).ln_1p() }
+}

@@ -1,0 +1,342 @@
+//! Maximum of a smooth function of a few coordinates by the BFGS method, finished by a Newton step, with an
+//! account of why it stopped. Nocedal & Wright, *Numerical Optimization* (2006), chapters 3 and 6.
+
+use super::likelihood::MAX_DIMENSION;
+use super::symmetric::{Eigen, Symmetric, dot};
+
+/// A point in free coordinates; entries past the dimension are 0.
+pub(crate) type Point = [f64; MAX_DIMENSION];
+
+/// Why a maximiser stopped. Checked, not believed: see [`Stop::Converged`].
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+pub enum Stop {
+    /// The gradient is negligible and the curvature says that this is a maximum, with room on every side.
+    Converged,
+    /// The likelihood has no maximum inside: it is flat or rising as this coordinate runs off, so that the law is
+    /// at a limit of its family. The value is right to the tolerance, the coordinate is not an estimate.
+    Boundary {
+        /// Index of the coordinate in the family's order.
+        coordinate: usize,
+    },
+    /// The budget ended, or no step made progress, away from a maximum.
+    Stalled,
+    /// The function has no finite value near the start.
+    NotFinite,
+}
+
+/// What the search found.
+#[derive(Clone, Debug)]
+pub(crate) struct Maximum {
+    pub(crate) at: Point,
+    pub(crate) value: f64,
+    /// Minus the matrix of second derivatives.
+    pub(crate) information: Symmetric,
+    pub(crate) stop: Stop,
+    /// Evaluations spent.
+    pub(crate) evaluations: usize,
+}
+
+/// What is to be maximised: its value, with the gradient written to the slice; `-∞` outside its domain.
+pub(crate) trait Objective {
+    fn evaluate(&mut self, at: &[f64], gradient: &mut [f64]) -> f64;
+}
+
+impl<F: FnMut(&[f64], &mut [f64]) -> f64> Objective for F {
+    fn evaluate(&mut self, at: &[f64], gradient: &mut [f64]) -> f64 {
+        self(at, gradient)
+    }
+}
+
+/// The climb ends when a further step promises less than this, nats; Newton steps finish the rest.
+const GAIN: f64 = 1e-3;
+/// What a further Newton step may still promise at a maximum, nats: the coordinates are then within a
+/// thousandth of their standard errors.
+const CONVERGED: f64 = 1e-6;
+/// Newton steps go on to this promise, since one costs a single evaluation.
+const POLISHED: f64 = 1e-10;
+/// Relative rounding of a sum over cells, allowed for when values are compared.
+const ROUNDING: f64 = 1e-14;
+/// Below this curvature (nats per unit squared: a standard error above 30) a coordinate is not determined.
+const FLAT: f64 = 1e-3;
+/// A coordinate this far out has run off: a factor of a million where it is a logarithm.
+const FAR_OUT: f64 = 13.8;
+/// Most evaluations in one search.
+const BUDGET: usize = 400;
+/// Newton steps after a climb, and climbs in all.
+const NEWTON_STEPS: usize = 4;
+const ROUNDS: usize = 3;
+/// Longest step in any coordinate.
+const LONGEST: f64 = 2.0;
+/// Sufficient increase, and the share of its slope that a step may leave (weak Wolfe conditions).
+const ARMIJO: f64 = 1e-4;
+const CURVATURE: f64 = 0.9;
+/// Step of the central differences, in units of the width that one observation leaves a coordinate; the error
+/// of the curvature is about its square, relative.
+const DIFFERENCE: f64 = 1e-4;
+
+/// Climbs from `start`. `unit` is the curvature to expect (the number of events, for a log-likelihood in
+/// logarithms of parameters); it sets the first step only. `bounds` are walls: the search may slide along them.
+pub(crate) fn maximise(
+    objective: &mut dyn Objective,
+    start: &[f64],
+    bounds: &[(f64, f64)],
+    unit: f64,
+) -> Maximum {
+    let mut search = Search::new(objective, start, bounds);
+    if !search.value.is_finite() {
+        let information = Symmetric::zero(search.n);
+        return Maximum {
+            at: search.at,
+            value: search.value,
+            information,
+            stop: Stop::NotFinite,
+            evaluations: 1,
+        };
+    }
+    let mut inverse = Symmetric::diagonal(search.n, 1.0 / unit);
+    let mut scaled = false;
+    loop {
+        let done = search.climb(&mut inverse, scaled);
+        let information = search.information(&inverse, unit);
+        let eigen = information.eigen();
+        let curved = eigen.least().0 > FLAT;
+        let gain = if curved { search.polish(&eigen) } else { f64::NAN };
+        let again = curved && gain > CONVERGED && search.evaluations < BUDGET && search.rounds < ROUNDS;
+        if !again {
+            let stop = search.judge(&eigen, done, gain);
+            let Search { at, value, evaluations, .. } = search;
+            return Maximum { at, value, information, stop, evaluations };
+        }
+        // The climb believed too early that it had arrived: go on with the curvature as it is.
+        inverse = eigen.rebuild(|v| 1.0 / v);
+        scaled = true;
+        search.rounds += 1;
+    }
+}
+
+struct Search<'a> {
+    objective: &'a mut dyn Objective,
+    bounds: &'a [(f64, f64)],
+    n: usize,
+    at: Point,
+    value: f64,
+    gradient: Point,
+    evaluations: usize,
+    rounds: usize,
+}
+
+impl<'a> Search<'a> {
+    fn new(objective: &'a mut dyn Objective, start: &[f64], bounds: &'a [(f64, f64)]) -> Search<'a> {
+        let n = start.len();
+        let mut at = [0.0; MAX_DIMENSION];
+        for (i, (x, &s)) in at.iter_mut().zip(start).enumerate() {
+            *x = s.clamp(bounds[i].0, bounds[i].1);
+        }
+        let mut search = Search {
+            objective,
+            bounds,
+            n,
+            at,
+            value: 0.0,
+            gradient: [0.0; MAX_DIMENSION],
+            evaluations: 0,
+            rounds: 0,
+        };
+        (search.value, search.gradient) = search.evaluate(&at);
+        search
+    }
+
+    fn evaluate(&mut self, at: &Point) -> (f64, Point) {
+        self.evaluations += 1;
+        let mut gradient = [0.0; MAX_DIMENSION];
+        let value = self.objective.evaluate(&at[..self.n], &mut gradient[..self.n]);
+        (if value.is_nan() { f64::NEG_INFINITY } else { value }, gradient)
+    }
+
+    /// Whether the coordinate is at a wall and would go through it.
+    fn walled(&self, i: usize) -> bool {
+        let (low, high) = self.bounds[i];
+        (self.at[i] <= low && self.gradient[i] < 0.0) || (self.at[i] >= high && self.gradient[i] > 0.0)
+    }
+
+    /// The gradient with what points through a wall left out.
+    fn free_gradient(&self) -> Point {
+        let mut gradient = self.gradient;
+        for (i, g) in gradient.iter_mut().enumerate().take(self.n) {
+            if self.walled(i) {
+                *g = 0.0;
+            }
+        }
+        gradient
+    }
+
+    /// BFGS until a further step promises nothing; whether that was reached. `scaled` says that `inverse` is a
+    /// measured curvature and not just a unit.
+    fn climb(&mut self, inverse: &mut Symmetric, mut scaled: bool) -> bool {
+        let fresh = inverse.clone();
+        let start = scaled;
+        while self.evaluations < BUDGET {
+            let gradient = self.free_gradient();
+            let mut step = inverse.times(&gradient[..self.n]);
+            for (i, s) in step.iter_mut().enumerate().take(self.n) {
+                if self.walled(i) {
+                    *s = 0.0;
+                }
+            }
+            let mut slope = dot(&gradient, &step);
+            let promise = 0.5 * slope;
+            if promise == 0.0 || (scaled && promise <= GAIN.max(ROUNDING * self.value.abs())) {
+                return true;
+            }
+            let longest = step.iter().fold(0.0_f64, |m, s| m.max(s.abs()));
+            if longest > LONGEST {
+                let shrink = LONGEST / longest;
+                step.iter_mut().for_each(|s| *s *= shrink);
+                slope *= shrink;
+            }
+            let Some((at, value, next)) = self.line(&step, slope) else {
+                if scaled == start {
+                    return false;
+                }
+                inverse.clone_from(&fresh);
+                scaled = start;
+                continue;
+            };
+            let (mut moved, mut turned) = ([0.0; MAX_DIMENSION], [0.0; MAX_DIMENSION]);
+            for i in 0..self.n {
+                moved[i] = at[i] - self.at[i];
+                turned[i] = self.gradient[i] - next[i];
+            }
+            (self.at, self.value, self.gradient) = (at, value, next);
+            scaled |= update(inverse, &moved, &turned, !scaled);
+        }
+        false
+    }
+
+    /// A step along `step` that meets the weak Wolfe conditions, by bisection and doubling (Lewis & Overton
+    /// 2013); the best point seen when they cannot be met; `None` without progress.
+    fn line(&mut self, step: &Point, slope: f64) -> Option<(Point, f64, Point)> {
+        let noise = ROUNDING * self.value.abs();
+        let (mut low, mut high, mut t) = (0.0, f64::INFINITY, 1.0);
+        let mut best: Option<(Point, f64, Point)> = None;
+        for _ in 0..40 {
+            let mut at = self.at;
+            for i in 0..self.n {
+                at[i] = (self.at[i] + t * step[i]).clamp(self.bounds[i].0, self.bounds[i].1);
+            }
+            if at == self.at {
+                break;
+            }
+            let (value, gradient) = self.evaluate(&at);
+            let after = dot(&gradient, step);
+            if value >= self.value + ARMIJO * t * slope - noise && value.is_finite() {
+                let better = best.as_ref().is_none_or(|b| value >= b.1);
+                if better {
+                    best = Some((at, value, gradient));
+                }
+                if after <= CURVATURE * slope || !better || t >= 16.0 {
+                    break;
+                }
+                low = t;
+                t = if high.is_finite() { 0.5 * (low + high) } else { 2.0 * t };
+            } else {
+                if best.is_some() {
+                    break;
+                }
+                high = t;
+                // Top of the parabola through both values and the slope, kept away from the ends.
+                let drop = self.value + t * slope - value;
+                let vertex = if drop.is_finite() { 0.5 * slope * t * t / drop } else { 0.0 };
+                t = vertex.clamp(low + 0.1 * (high - low), low + 0.5 * (high - low));
+            }
+        }
+        best
+    }
+
+    /// Newton steps with a fixed curvature; what a further one would still gain.
+    fn polish(&mut self, information: &Eigen) -> f64 {
+        let mut gain = f64::INFINITY;
+        for _ in 0..NEWTON_STEPS {
+            let gradient = self.free_gradient();
+            let step = information.apply(|v| 1.0 / v, &gradient[..self.n]);
+            gain = 0.5 * dot(&gradient, &step);
+            if gain <= POLISHED || step.iter().any(|s| s.abs() > 1.0) {
+                break;
+            }
+            let mut at = self.at;
+            for i in 0..self.n {
+                at[i] = (at[i] + step[i]).clamp(self.bounds[i].0, self.bounds[i].1);
+            }
+            let (value, next) = self.evaluate(&at);
+            if value < self.value - ROUNDING * self.value.abs() {
+                break;
+            }
+            (self.at, self.value, self.gradient) = (at, value, next);
+        }
+        gain
+    }
+
+    fn judge(&self, information: &Eigen, climbed: bool, gain: f64) -> Stop {
+        if let Some(coordinate) = (0..self.n).find(|&i| self.at[i].abs() > FAR_OUT || self.walled(i)) {
+            return Stop::Boundary { coordinate };
+        }
+        let (least, coordinate) = information.least();
+        if least > FLAT {
+            let arrived = gain <= CONVERGED.max(ROUNDING * self.value.abs());
+            return if arrived { Stop::Converged } else { Stop::Stalled };
+        }
+        // Flat where a law reaches its limit; curved upwards where the search was left at a saddle.
+        if climbed && least > -1.0 { Stop::Boundary { coordinate } } else { Stop::Stalled }
+    }
+
+    /// Minus the second derivatives, by central differences of the gradient.
+    fn information(&mut self, inverse: &Symmetric, unit: f64) -> Symmetric {
+        let n = self.n;
+        let mut rows = [[0.0; MAX_DIMENSION]; MAX_DIMENSION];
+        for i in 0..n {
+            let width = (inverse.get(i, i).max(0.0) * unit).sqrt();
+            let step = DIFFERENCE * width.clamp(0.01, 10.0);
+            let (mut up, mut down) = (self.at, self.at);
+            up[i] += step;
+            down[i] -= step;
+            let (above, below) = (self.evaluate(&up), self.evaluate(&down));
+            for j in 0..n {
+                rows[i][j] = match (above.0.is_finite(), below.0.is_finite()) {
+                    (true, true) => (below.1[j] - above.1[j]) / (2.0 * step),
+                    (true, false) => (self.gradient[j] - above.1[j]) / step,
+                    (false, true) => (below.1[j] - self.gradient[j]) / step,
+                    (false, false) => f64::NAN,
+                };
+            }
+        }
+        let mut information = Symmetric::zero(n);
+        for i in 0..n {
+            for j in 0..=i {
+                information.set(i, j, 0.5 * (rows[i][j] + rows[j][i]));
+            }
+        }
+        information
+    }
+}
+
+/// The BFGS update of the inverse curvature, for a step `s` and the change `y` of minus the gradient; skipped
+/// (`false`) where the function is not concave along the step.
+fn update(inverse: &mut Symmetric, s: &Point, y: &Point, first: bool) -> bool {
+    let n = inverse.size();
+    let (sy, yy) = (dot(s, y), dot(y, y));
+    if sy.is_nan() || sy <= 1e-12 * (dot(s, s) * yy).sqrt() {
+        return false;
+    }
+    if first {
+        *inverse = Symmetric::diagonal(n, sy / yy);
+    }
+    let hy = inverse.times(&y[..n]);
+    let factor = (1.0 + dot(y, &hy) / sy) / sy;
+    for i in 0..n {
+        for j in 0..=i {
+            let value = inverse.get(i, j) + factor * s[i] * s[j] - (hy[i] * s[j] + s[i] * hy[j]) / sy;
+            inverse.set(i, j, value);
+        }
+    }
+    true
+}

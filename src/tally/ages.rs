@@ -1,0 +1,270 @@
+//! A multiset of ages in bounded memory: exact while it holds few distinct values, an HDR histogram after.
+//!
+//! Which of the two it is depends on the multiset alone, never on the order of arrival, so that merging is
+//! associative and commutative to the last bit.
+
+use hdrhistogram::{Counter, Histogram};
+
+/// Distinct ages kept exactly, each 16 bytes: about what a histogram of three digits takes (64 KiB).
+pub const EXACT_AGES: usize = 4096;
+
+/// Significant decimal digits of the histogram: bins at most 0.1% wide.
+const DIGITS: u8 = 3;
+
+/// Ticks per second of the histogram: 1 µs.
+const TICKS: f64 = 1e6;
+
+/// Counted ages, s. Empty costs one word.
+#[derive(Clone, Debug, Default)]
+pub struct Ages(Option<Box<Store>>);
+
+#[derive(Clone, Debug)]
+enum Store {
+    /// `grouped` is sorted and distinct, at most [`EXACT_AGES`] long; `loose` waits to be grouped, each counting 1.
+    Few {
+        grouped: Vec<(f64, u64)>,
+        loose: Vec<f64>,
+    },
+    Narrow(Histogram<u32>),
+    Wide(Histogram<u64>),
+}
+
+/// Ages known to lie in `[low, high]`, with their count; exact when `low == high`.
+#[derive(Clone, Copy, Debug, PartialEq)]
+pub struct Bin {
+    /// Lower edge, s.
+    pub low: f64,
+    /// Upper edge, s.
+    pub high: f64,
+    /// How many.
+    pub count: u64,
+}
+
+impl Ages {
+    /// Adds `count` waits of one age (s; a [`crate::wait::Wait`] has checked it).
+    #[inline]
+    pub fn add(&mut self, age: f64, count: u64) {
+        let store =
+            self.0.get_or_insert_with(|| Box::new(Store::Few { grouped: Vec::new(), loose: Vec::new() }));
+        match &mut **store {
+            Store::Few { loose, .. } if count == 1 => {
+                loose.push(age);
+                if loose.len() >= EXACT_AGES {
+                    store.settle();
+                }
+            }
+            Store::Few { grouped, .. } => {
+                match grouped.binary_search_by(|(a, _)| a.total_cmp(&age)) {
+                    Ok(i) => grouped[i].1 = grouped[i].1.saturating_add(count),
+                    Err(i) => grouped.insert(i, (age, count)),
+                }
+                if grouped.len() > EXACT_AGES {
+                    store.settle();
+                }
+            }
+            _ => store.record(ticks(age), count),
+        }
+    }
+
+    /// Adds all of `other`.
+    pub fn merge(&mut self, other: &Ages) {
+        let Some(theirs) = other.0.as_deref() else { return };
+        let Some(mine) = self.0.as_deref_mut() else {
+            self.0 = other.0.clone();
+            return;
+        };
+        match theirs {
+            Store::Few { grouped, loose } => {
+                for &(age, count) in grouped {
+                    self.add(age, count);
+                }
+                for &age in loose {
+                    self.add(age, 1);
+                }
+            }
+            Store::Narrow(h) => mine.record_all(h),
+            Store::Wide(h) => mine.record_all(h),
+        }
+    }
+
+    /// The ages grouped, in increasing order.
+    pub fn bins(&self) -> Vec<Bin> {
+        let Some(store) = self.0.as_deref() else { return Vec::new() };
+        match store.settled().as_ref() {
+            Store::Few { grouped, .. } => {
+                grouped.iter().map(|&(age, count)| Bin { low: age, high: age, count }).collect()
+            }
+            Store::Narrow(h) => histogram_bins(h),
+            Store::Wide(h) => histogram_bins(h),
+        }
+    }
+
+    /// How many ages it holds.
+    pub fn count(&self) -> u64 {
+        match self.0.as_deref() {
+            None => 0,
+            Some(Store::Few { grouped, loose }) => {
+                grouped.iter().fold(loose.len() as u64, |n, (_, c)| n.saturating_add(*c))
+            }
+            Some(Store::Narrow(h)) => h.len(),
+            Some(Store::Wide(h)) => h.len(),
+        }
+    }
+
+    /// Whether it holds nothing.
+    pub fn is_empty(&self) -> bool {
+        self.0.is_none()
+    }
+}
+
+/// Equal contents, however they came together.
+impl PartialEq for Ages {
+    fn eq(&self, other: &Ages) -> bool {
+        self.bins() == other.bins()
+    }
+}
+
+impl Store {
+    /// Groups what is loose; becomes a histogram when there are too many distinct ages.
+    fn settle(&mut self) {
+        let Store::Few { grouped, loose } = self else { return };
+        loose.sort_unstable_by(f64::total_cmp);
+        let mut merged: Vec<(f64, u64)> = Vec::with_capacity(grouped.len() + 64);
+        let mut push = |age: f64, count: u64| match merged.last_mut() {
+            Some((last, n)) if *last == age => *n = n.saturating_add(count),
+            _ => merged.push((age, count)),
+        };
+        let mut left = grouped.iter().copied().peekable();
+        for &age in loose.iter() {
+            while let Some(&(a, c)) = left.peek()
+                && a <= age
+            {
+                push(a, c);
+                left.next();
+            }
+            push(age, 1);
+        }
+        left.for_each(|(a, c)| push(a, c));
+        if merged.len() <= EXACT_AGES {
+            *grouped = merged;
+            loose.clear();
+            return;
+        }
+        let Some(histogram) = new_histogram::<u32>() else { return };
+        *self = Store::Narrow(histogram);
+        for (age, count) in merged {
+            self.record(ticks(age), count);
+        }
+    }
+
+    fn settled(&self) -> std::borrow::Cow<'_, Store> {
+        match self {
+            Store::Few { loose, .. } if !loose.is_empty() => {
+                let mut copy = self.clone();
+                copy.settle();
+                std::borrow::Cow::Owned(copy)
+            }
+            _ => std::borrow::Cow::Borrowed(self),
+        }
+    }
+
+    #[inline]
+    fn record(&mut self, tick: u64, count: u64) {
+        if let Store::Narrow(h) = self {
+            // No counter can exceed the total, so 32 bits suffice while the total fits them.
+            if h.len().saturating_add(count) <= u64::from(u32::MAX) {
+                // Auto-resizing histograms refuse no value up to 2^63; ages are at most 1e16 ticks.
+                let _ = h.record_n(tick, count as u32);
+                return;
+            }
+            let Some(mut wide) = new_histogram::<u64>() else { return };
+            for v in h.iter_recorded() {
+                let _ = wide.record_n(v.value_iterated_to(), u64::from(v.count_at_value()));
+            }
+            *self = Store::Wide(wide);
+        }
+        match self {
+            Store::Wide(h) => {
+                let _ = h.record_n(tick, count);
+            }
+            // Only reached while growing out of the exact form.
+            Store::Few { .. } | Store::Narrow(_) => {}
+        }
+    }
+
+    fn record_all<C: Counter>(&mut self, other: &Histogram<C>) {
+        if let Store::Few { grouped, loose } = self {
+            let (grouped, loose) = (std::mem::take(grouped), std::mem::take(loose));
+            let Some(histogram) = new_histogram::<u32>() else { return };
+            *self = Store::Narrow(histogram);
+            for (age, count) in grouped.into_iter().chain(loose.into_iter().map(|age| (age, 1))) {
+                self.record(ticks(age), count);
+            }
+        }
+        for v in other.iter_recorded() {
+            self.record(v.value_iterated_to(), v.count_at_value().as_u64());
+        }
+    }
+}
+
+/// An auto-resizing histogram. Creation fails only for more than 5 digits.
+fn new_histogram<C: Counter>() -> Option<Histogram<C>> {
+    Histogram::new(DIGITS).ok()
+}
+
+fn histogram_bins<C: Counter>(h: &Histogram<C>) -> Vec<Bin> {
+    h.iter_recorded()
+        .map(|v| {
+            let tick = v.value_iterated_to();
+            Bin {
+                low: (h.lowest_equivalent(tick) as f64 - 0.5) / TICKS,
+                high: (h.highest_equivalent(tick) as f64 + 0.5) / TICKS,
+                count: v.count_at_value().as_u64(),
+            }
+        })
+        .collect()
+}
+
+#[inline]
+fn ticks(age: f64) -> u64 {
+    ((age * TICKS).round() as u64).max(1)
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    fn of(ages: impl IntoIterator<Item = f64>) -> Ages {
+        let mut all = Ages::default();
+        ages.into_iter().for_each(|a| all.add(a, 1));
+        all
+    }
+
+    #[test]
+    fn exact_while_few_whatever_the_number() {
+        let ages = of((0..100_000).map(|i| f64::from(i % 7) + 0.123_456_789));
+        let bins = ages.bins();
+        assert_eq!(bins.len(), 7);
+        assert_eq!(bins[0], Bin { low: 0.123_456_789, high: 0.123_456_789, count: 14_286 });
+        assert_eq!(ages.count(), 100_000);
+    }
+
+    #[test]
+    fn a_histogram_when_many() {
+        let ages = of((1..=20_000).map(|i| f64::from(i) * 1e-3));
+        let bins = ages.bins();
+        assert_eq!(bins.iter().map(|b| b.count).sum::<u64>(), 20_000);
+        assert!(bins.iter().all(|b| b.high / b.low < 1.0015), "bins stay within three digits");
+        assert!(bins.windows(2).all(|w| w[0].high <= w[1].low));
+    }
+
+    #[test]
+    fn counts_beyond_32_bits() {
+        let mut ages = of((1..=5_000).map(|i| f64::from(i) * 1e-3));
+        ages.add(2.0, 1_000_000_000_000);
+        ages.add(2.0, 1);
+        assert_eq!(ages.count(), 1_000_000_005_001);
+        let most = ages.bins().into_iter().map(|b| b.count).max();
+        assert!(most >= Some(1_000_000_000_002));
+    }
+}

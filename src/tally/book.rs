@@ -1,0 +1,170 @@
+//! The tallies of many streams, filed by the UTC day in which a wait ended or was last seen (DESIGN: windows).
+
+use std::collections::HashMap;
+
+use super::Tally;
+use crate::wait::{StreamError, Wait, check_stream};
+
+/// Length of a period, s.
+const DAY: f64 = 86_400.0;
+
+/// Days since 1970-01-01 UTC; waits without a time are filed apart.
+#[derive(Clone, Copy, Debug, PartialEq, Eq, PartialOrd, Ord, Hash)]
+pub enum Day {
+    /// No `at` was given.
+    Undated,
+    /// Days since the epoch.
+    Number(i32),
+}
+
+impl Day {
+    /// The day of a Unix time in seconds.
+    pub fn of(at: Option<f64>) -> Day {
+        at.map_or(Day::Undated, |at| Day::Number((at / DAY).floor() as i32))
+    }
+}
+
+/// Every stream of a one-shot command, or of one ledger read.
+#[derive(Clone, Debug, Default)]
+pub struct Book {
+    streams: HashMap<String, Days>,
+}
+
+/// The tallies of one stream by day.
+#[derive(Clone, Debug, Default, PartialEq)]
+pub struct Days {
+    /// Sorted by day.
+    days: Vec<(Day, Tally)>,
+}
+
+impl Book {
+    /// Counts one wait.
+    ///
+    /// # Errors
+    /// [`StreamError`] if the name is new and not allowed; nothing is counted then.
+    #[inline]
+    pub fn add(&mut self, stream: &str, wait: &Wait) -> Result<(), StreamError> {
+        match self.streams.get_mut(stream) {
+            Some(days) => days.add(wait),
+            None => {
+                check_stream(stream)?;
+                self.streams.entry(stream.to_owned()).or_default().add(wait);
+            }
+        }
+        Ok(())
+    }
+
+    /// Adds all of `other`.
+    pub fn merge(&mut self, other: Book) {
+        if self.streams.is_empty() {
+            self.streams = other.streams;
+            return;
+        }
+        for (stream, days) in other.streams {
+            match self.streams.get_mut(&stream) {
+                Some(mine) => mine.merge(&days),
+                None => {
+                    self.streams.insert(stream, days);
+                }
+            }
+        }
+    }
+
+    /// Streams in the order of their names.
+    pub fn streams(&self) -> Vec<(&str, &Days)> {
+        let mut all: Vec<_> = self.streams.iter().map(|(name, days)| (name.as_str(), days)).collect();
+        all.sort_unstable_by_key(|(name, _)| *name);
+        all
+    }
+
+    /// One stream.
+    pub fn stream(&self, name: &str) -> Option<&Days> {
+        self.streams.get(name)
+    }
+
+    /// Whether nothing was counted.
+    pub fn is_empty(&self) -> bool {
+        self.streams.is_empty()
+    }
+}
+
+impl Days {
+    /// Counts one wait.
+    #[inline]
+    pub fn add(&mut self, wait: &Wait) {
+        let day = Day::of(wait.at());
+        // Records come roughly in order of time, so the day is nearly always the last.
+        match self.days.last_mut() {
+            Some((last, tally)) if *last == day => tally.add(wait),
+            _ => self.at(day).add(wait),
+        }
+    }
+
+    fn at(&mut self, day: Day) -> &mut Tally {
+        let i = match self.days.binary_search_by_key(&day, |(d, _)| *d) {
+            Ok(i) => i,
+            Err(i) => {
+                self.days.insert(i, (day, Tally::default()));
+                i
+            }
+        };
+        &mut self.days[i].1
+    }
+
+    /// Adds all of `other`.
+    pub fn merge(&mut self, other: &Days) {
+        for (day, tally) in &other.days {
+            self.at(*day).merge(tally);
+        }
+    }
+
+    /// The tallies with their days, sorted.
+    pub fn days(&self) -> &[(Day, Tally)] {
+        &self.days
+    }
+
+    /// Everything together.
+    pub fn whole(&self) -> Tally {
+        self.where_day(|_| true)
+    }
+
+    /// The days for which `keep` holds, together. Undated waits are asked about like the others.
+    pub fn where_day(&self, keep: impl Fn(Day) -> bool) -> Tally {
+        let mut sum = Tally::default();
+        for (_, tally) in self.days.iter().filter(|(day, _)| keep(*day)) {
+            sum.merge(tally);
+        }
+        sum
+    }
+
+    /// The last dated day, if any.
+    pub fn last_day(&self) -> Option<i32> {
+        match self.days.last() {
+            Some((Day::Number(n), _)) => Some(*n),
+            _ => None,
+        }
+    }
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+    use crate::wait::Ending;
+
+    #[test]
+    fn days_split_and_join() {
+        let mut book = Book::default();
+        for day in [3.0, 1.0, 2.0, 1.5] {
+            let wait = Wait::new(day, Ending::Done).unwrap().with_at(day * DAY).unwrap();
+            book.add("a", &wait).unwrap();
+        }
+        book.add("a", &Wait::new(9.0, Ending::Waiting).unwrap()).unwrap();
+        let days = book.stream("a").unwrap();
+        assert_eq!(days.days().len(), 4);
+        assert_eq!(days.last_day(), Some(3));
+        assert_eq!(days.whole().counts().iter().sum::<u64>(), 5);
+        assert_eq!(days.where_day(|d| d == Day::Number(1)).counts()[0], 2);
+        assert!(book.add("no good", &Wait::new(1.0, Ending::Done).unwrap()).is_err());
+        assert_eq!(book.streams().len(), 1);
+    }
+}
