@@ -5,6 +5,7 @@
 
 pub mod numeric;
 pub mod outlook;
+pub mod policy;
 pub mod say;
 pub mod stopping;
 pub mod tail;
