@@ -515,7 +515,14 @@ fn check_findings(bytes: &[u8]) -> Result<(), TestCaseError> {
                 prop_assert!((1..=lines).contains(&warning.at.line) && warning.at.column >= 1);
             }
             let said = describe(&policy, &["catalogue.lookup", ""]);
-            prop_assert!(!said.to_string().contains("NaN"));
+            prop_assert!(!said.to_string().is_empty());
+            for Entry { worth, guard, .. } in &policy.entries {
+                let worth = worth.unwrap_or_default();
+                let numbers = [worth.done, worth.failed, worth.gave_up, worth.attempt_cost, worth.pause.done];
+                let guards =
+                    [guard.largest_step, guard.window, guard.slack, guard.hysteresis, guard.cool_down];
+                prop_assert!(numbers.iter().chain(&guards).all(|number| number.is_finite()));
+            }
             prop_assert!(serde_json::to_string(&said).is_ok());
         }
         Err(error) => {
