@@ -8,6 +8,7 @@ pub mod curve;
 pub mod demo;
 pub mod numeric;
 pub mod outlook;
+pub mod policy;
 pub mod say;
 pub mod stopping;
 pub mod tail;
