@@ -45,7 +45,9 @@ fn pareto_tail_of_fire_losses() {
     println!("{at_ten:?}");
     let auto = splice(&sample).unwrap();
     println!("{} {:?} {:?} {:?}", auto.threshold, auto.xi, auto.sigma, auto.largest_gap);
-    for t in auto.tried { println!("{t:?}"); }
+    for t in auto.tried {
+        println!("{t:?}");
+    }
 }
 
 /// scipy 1.17.1: peaks over the 90% point.
@@ -58,9 +60,23 @@ fn peaks_over_threshold() {
         let sample = set.cells(None, Zeros::Drop).sample(Cause::Done);
         let tail = tail_above(&sample, u);
         match tail {
-            Ok(t) => println!("{name} xi {:?} {} ll {} {} {:?} sigma {:?} {}", t.xi, truth["parameters"]["xi"], t.fit.log_likelihood, truth["log_likelihood"], t.fit.stop, t.sigma, truth["parameters"]["sigma"]),
-            Err(e) => println!("{name} {e}")
+            Ok(t) => println!(
+                "{name} xi {:?} {} ll {} {} {:?} sigma {:?} {}",
+                t.xi,
+                truth["parameters"]["xi"],
+                t.fit.log_likelihood,
+                truth["log_likelihood"],
+                t.fit.stop,
+                t.sigma,
+                truth["parameters"]["sigma"]
+            ),
+            Err(e) => println!("{name} {e}"),
         }
-        match splice(&sample) { Ok(auto) => println!("   {} {:?} {:?} {:?}", auto.threshold, auto.xi, auto.sigma, auto.largest_gap), Err(e) => println!("{e}")}
+        match splice(&sample) {
+            Ok(auto) => {
+                println!("   {} {:?} {:?} {:?}", auto.threshold, auto.xi, auto.sigma, auto.largest_gap)
+            }
+            Err(e) => println!("{e}"),
+        }
     }
 }

@@ -299,7 +299,7 @@ fn nodes(outlook: &dyn Outlook, worth: &Worth, limits: Limits) -> Vec<f64> {
 }
 
 /// `∫_0^t share dF_d`, cumulated over the nodes by parts, `share·F - ∫ share' F`, which no infinite density
-/// disturbs; where the curve has no density its whole step lies on the node.
+/// disturbs; where the curve is flat between nodes its whole step lies on the second.
 struct Faded {
     fade: Fade,
     ages: Vec<f64>,
@@ -333,7 +333,8 @@ impl Faded {
             return 0.0;
         }
         let (before, after) = (outlook.done(from), outlook.done(to));
-        if outlook.hazards(0.5 * (from + to)).is_none() {
+        let middle = 0.5 * (from + to);
+        if outlook.hazards(middle).is_none() && outlook.done(middle) == before {
             return self.fade.share(to) * (after - before);
         }
         let lost = integrate(&|t| self.fade.slope(t) * outlook.done(t), from, to, 1e-11);

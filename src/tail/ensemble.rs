@@ -124,7 +124,8 @@ pub fn ensemble(sample: &Sample, grid: &Grid, seed: u64) -> Result<Ensemble, Fit
     for (i, (member, family)) in members.iter_mut().zip(&families).enumerate() {
         if member.matters() {
             // A stream of its own for each family: what others weigh changes nothing here.
-            let random = Xoshiro256PlusPlus::seed_from_u64(seed ^ (i as u64).wrapping_mul(0x9E37_79B9_7F4A_7C15));
+            let random =
+                Xoshiro256PlusPlus::seed_from_u64(seed ^ (i as u64).wrapping_mul(0x9E37_79B9_7F4A_7C15));
             member.draws = draws(&mut evidence, family.as_ref(), &member.fit, random);
             for draw in &mut member.draws {
                 draw.survival = vec![0.0; log_ages.len()];

@@ -2,8 +2,8 @@
 
 mod choice;
 mod condense;
-pub mod families;
 mod ensemble;
+pub mod families;
 mod fit;
 mod law;
 mod likelihood;

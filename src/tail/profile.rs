@@ -116,7 +116,8 @@ impl Profile<'_> {
             if self.fall(middle + direction * far) >= goal {
                 let this = std::cell::RefCell::new(self);
                 // At the maximum itself nothing has fallen, whatever rounding says there.
-                let fall = |d: f64| if d > 0.0 { this.borrow_mut().fall(middle + direction * d) } else { 0.0 };
+                let fall =
+                    |d: f64| if d > 0.0 { this.borrow_mut().fall(middle + direction * d) } else { 0.0 };
                 let excess = |d: f64| fall(d) - goal;
                 return root(&excess, near, far, ACCURACY).ok().map(|d| middle + direction * d);
             }

@@ -79,11 +79,7 @@ impl std::fmt::Debug for Splice {
 impl Splice {
     /// Survival function: the product-limit curve up to the threshold, the tail beyond.
     pub fn survival(&self, t: f64) -> f64 {
-        if t < self.threshold {
-            self.body.at(t)
-        } else {
-            self.survival * self.fit.law.survival(t)
-        }
+        if t < self.threshold { self.body.at(t) } else { self.survival * self.fit.law.survival(t) }
     }
 }
 
@@ -178,9 +174,8 @@ pub fn tail_above(sample: &Sample, threshold: f64) -> Result<Splice, SpliceError
 
 /// What the sample says of the waits that outlive the threshold.
 fn beyond(sample: &Sample, threshold: f64) -> Sample {
-    let masses = |masses: &[Mass]| -> Vec<Mass> {
-        masses.iter().filter(|m| m.age > threshold).copied().collect()
-    };
+    let masses =
+        |masses: &[Mass]| -> Vec<Mass> { masses.iter().filter(|m| m.age > threshold).copied().collect() };
     let events = sample
         .events
         .iter()

@@ -1,0 +1,357 @@
+//! Replicates of the empirical curve, by which it takes part in the doubt. RECIPE section 4.
+
+use rand::{Rng, RngExt};
+
+use crate::curve::{LifeTable, Row};
+use crate::outlook::{Grid, Sampled};
+
+/// The Bayesian bootstrap of a Kaplan-Meier curve (Rubin 1981; for censored data Lo 1993, *A Bayesian bootstrap
+/// for censored data*, Annals of Statistics 21:100).
+///
+/// An Exp(1) weight for every wait makes the share that ends in each interval of a life table, among those at risk, a
+/// Beta of the numbers that end and that go on, independent of all others (ratios of independent Gamma sums). So drawn
+/// it costs by the interval, not by the wait, and late entries need no weights of their own. Failures compete: what
+/// ends is shared between the endings by another Beta.
+#[derive(Clone, Debug)]
+pub struct Bootstrap {
+    rows: Vec<Row>,
+    sight: f64,
+}
+
+/// Where a curve stands at the end of an interval.
+#[derive(Clone, Copy)]
+struct Stand {
+    age: f64,
+    survival: f64,
+    done: f64,
+    failed: f64,
+    area: f64,
+}
+
+impl Bootstrap {
+    /// Prepares the table's intervals up to the age where sight ends; `None` where none ends by then.
+    pub fn of(table: &LifeTable) -> Option<Bootstrap> {
+        let sight = table.sight();
+        let rows: Vec<Row> = table.rows().iter().copied().filter(|r| r.upto <= sight).collect();
+        let last = rows.last()?.upto;
+        Some(Bootstrap { rows, sight: sight.min(table.last()).max(last) })
+    }
+
+    /// The age `L` beyond which a replicate follows the tail it is given, s.
+    pub fn sight(&self) -> f64 {
+        self.sight
+    }
+
+    /// One replicate on the ages of `grid`: up to [`Bootstrap::sight`] a draw of the curve, beyond it the course of
+    /// `tail` given that a wait is open there, as far as `tail` reaches. Where the tail leaves nobody at that age the
+    /// replicate stays where it is.
+    pub fn draw(&self, grid: &Grid, tail: &Sampled, random: &mut impl Rng) -> Sampled {
+        let ages = grid.ages();
+        let seen = ages.partition_point(|&a| a <= self.sight);
+        let n = tail.survival.len().min(ages.len()).max(seen);
+        let mut curve = Sampled {
+            survival: Vec::with_capacity(n),
+            area: Vec::with_capacity(n),
+            done: Vec::with_capacity(n),
+            failed: Vec::with_capacity(n),
+        };
+        let mut put = |s: Stand| {
+            curve.survival.push(s.survival);
+            curve.area.push(s.area);
+            curve.done.push(s.done);
+            curve.failed.push(s.failed);
+        };
+        let mut gamma = Gamma { spare: None, random };
+        let mut stand = Stand { age: 0.0, survival: 1.0, done: 0.0, failed: 0.0, area: 0.0 };
+        let mut rest = ages[..seen].iter().peekable();
+        for row in &self.rows {
+            let next = stand.after(row, &mut gamma);
+            while let Some(&age) = rest.next_if(|&&a| a < row.upto) {
+                put(stand.within(row, &next, age));
+            }
+            stand = next;
+        }
+        rest.for_each(|&age| put(stand.flat(age)));
+        let edge = stand.flat(self.sight);
+        let from = Stand::of_tail(ages, tail, self.sight);
+        for i in seen..n {
+            let to = Stand {
+                age: ages[i],
+                survival: tail.survival[i],
+                done: tail.done[i],
+                failed: tail.failed[i],
+                area: tail.area[i],
+            };
+            put(if from.survival > 0.0 { edge.follow(&from, &to) } else { edge.flat(ages[i]) });
+        }
+        curve
+    }
+}
+
+impl Stand {
+    /// After the endings of a row.
+    fn after(&self, row: &Row, gamma: &mut Gamma<'_, impl Rng>) -> Stand {
+        let ended = self.survival * gamma.beta(row.ended(), row.at_risk - row.ended());
+        let done = ended * gamma.beta(row.done, row.failed);
+        let survival = self.survival - ended;
+        Stand {
+            age: row.upto,
+            survival,
+            done: self.done + done,
+            failed: self.failed + (ended - done),
+            area: self.flat(row.over).area + 0.5 * (self.survival + survival) * (row.upto - row.over),
+        }
+    }
+
+    /// Before the end of a row: flat up to its beginning, straight within it.
+    fn within(&self, row: &Row, next: &Stand, age: f64) -> Stand {
+        if age <= row.over {
+            return self.flat(age);
+        }
+        let part = (age - row.over) / (row.upto - row.over);
+        let mix = |a: f64, b: f64| a + part * (b - a);
+        let survival = mix(self.survival, next.survival);
+        Stand {
+            age,
+            survival,
+            done: mix(self.done, next.done),
+            failed: mix(self.failed, next.failed),
+            area: self.flat(row.over).area + 0.5 * (self.survival + survival) * (age - row.over),
+        }
+    }
+
+    fn flat(&self, age: f64) -> Stand {
+        Stand { age, area: self.area + self.survival * (age - self.age), ..*self }
+    }
+
+    /// Onwards as the tail goes from `from` to `to`.
+    fn follow(&self, from: &Stand, to: &Stand) -> Stand {
+        let factor = self.survival / from.survival;
+        Stand {
+            age: to.age,
+            survival: factor * to.survival,
+            done: self.done + factor * (to.done - from.done),
+            failed: self.failed + factor * (to.failed - from.failed),
+            area: self.area + factor * (to.area - from.area),
+        }
+    }
+
+    /// Where a sampled tail stands at an age, on straight lines between those of the grid.
+    fn of_tail(ages: &[f64], tail: &Sampled, age: f64) -> Stand {
+        let end = ages.partition_point(|&a| a < age);
+        let Some(&to) = ages[..tail.survival.len().min(ages.len())].get(end) else {
+            return Stand { age, survival: 0.0, done: 0.0, failed: 0.0, area: 0.0 };
+        };
+        let from = if end == 0 { 0.0 } else { ages[end - 1] };
+        let part = (age - from) / (to - from);
+        let read = |column: &[f64], origin: f64| {
+            let before = if end == 0 { origin } else { column[end - 1] };
+            before + part * (column[end] - before)
+        };
+        Stand {
+            age,
+            survival: read(&tail.survival, 1.0),
+            done: read(&tail.done, 0.0),
+            failed: read(&tail.failed, 0.0),
+            area: read(&tail.area, 0.0),
+        }
+    }
+}
+
+/// Gamma and Beta draws.
+struct Gamma<'a, R> {
+    spare: Option<f64>,
+    random: &'a mut R,
+}
+
+/// From this shape on one draw in ten thousand would be rejected; all are taken.
+const LARGE: f64 = 1000.0;
+
+impl<R: Rng> Gamma<'_, R> {
+    /// Beta(a, b), `a + b > 0`; 0 or 1 where one of them is 0.
+    fn beta(&mut self, a: f64, b: f64) -> f64 {
+        if a <= 0.0 {
+            return 0.0;
+        }
+        if b <= 0.0 {
+            return 1.0;
+        }
+        let (x, y) = (self.gamma(a), self.gamma(b));
+        if x + y > 0.0 { x / (x + y) } else { a / (a + b) }
+    }
+
+    /// Gamma of this shape and scale 1, by squeeze of a cubed normal (Marsaglia & Tsang 2000, ACM TOMS 26:363).
+    fn gamma(&mut self, shape: f64) -> f64 {
+        if shape < 1.0 {
+            let smaller: f64 = 1.0 - self.random.random::<f64>();
+            return self.gamma(shape + 1.0) * smaller.powf(1.0 / shape);
+        }
+        if shape == 1.0 {
+            return -(1.0 - self.random.random::<f64>()).ln();
+        }
+        let d = shape - 1.0 / 3.0;
+        let c = 1.0 / (9.0 * d).sqrt();
+        loop {
+            let x = self.normal();
+            let v = (1.0 + c * x).powi(3);
+            if v <= 0.0 {
+                continue;
+            }
+            if shape >= LARGE {
+                return d * v;
+            }
+            let u: f64 = 1.0 - self.random.random::<f64>();
+            if u < 1.0 - 0.0331 * x.powi(4) || u.ln() < 0.5 * x * x + d * (1.0 - v + v.ln()) {
+                return d * v;
+            }
+        }
+    }
+
+    /// Standard normal by Marsaglia's polar method.
+    fn normal(&mut self) -> f64 {
+        if let Some(spare) = self.spare.take() {
+            return spare;
+        }
+        loop {
+            let (x, y) = (2.0 * self.random.random::<f64>() - 1.0, 2.0 * self.random.random::<f64>() - 1.0);
+            let square = x * x + y * y;
+            if square > 0.0 && square < 1.0 {
+                let factor = (-2.0 * square.ln() / square).sqrt();
+                self.spare = Some(y * factor);
+                return x * factor;
+            }
+        }
+    }
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+    use crate::tally::Cells;
+    use crate::wait::{Ending, Wait};
+    use rand::SeedableRng;
+    use rand_xoshiro::Xoshiro256PlusPlus;
+
+    fn mean_and_variance(values: &[f64]) -> (f64, f64) {
+        let n = values.len() as f64;
+        let mean = values.iter().sum::<f64>() / n;
+        (mean, values.iter().map(|v| (v - mean).powi(2)).sum::<f64>() / (n - 1.0))
+    }
+
+    #[test]
+    fn gammas_have_their_moments() {
+        let mut random = Xoshiro256PlusPlus::seed_from_u64(1);
+        let mut gamma = Gamma { spare: None, random: &mut random };
+        for shape in [0.3, 1.0, 2.5, 40.0, 5000.0] {
+            let draws: Vec<f64> = (0..40_000).map(|_| gamma.gamma(shape)).collect();
+            let (mean, variance) = mean_and_variance(&draws);
+            assert!((mean - shape).abs() < 5.0 * (shape / 40_000.0).sqrt(), "{shape}: {mean}");
+            // Variance of a sample variance: (6/shape + 2) shape² / n.
+            assert!(
+                (variance / shape - 1.0).abs() < 5.0 * ((6.0 / shape + 2.0) / 40_000.0).sqrt(),
+                "{shape}"
+            );
+        }
+    }
+
+    /// Replicates by their definition: an Exp(1) weight for every wait, then Kaplan-Meier and Aalen-Johansen.
+    fn by_definition(waits: &[(f64, Ending)], at: f64, random: &mut Xoshiro256PlusPlus) -> [f64; 2] {
+        let mut weighted: Vec<(f64, Ending, f64)> =
+            waits.iter().map(|w| (w.0, w.1, -(1.0 - random.random::<f64>()).ln())).collect();
+        weighted.sort_by(|a, b| a.0.total_cmp(&b.0).then((a.1).cmp(&b.1)));
+        let mut left: f64 = weighted.iter().map(|w| w.2).sum();
+        let (mut survival, mut done) = (1.0, 0.0);
+        for (age, ending, weight) in weighted {
+            if age > at {
+                break;
+            }
+            if ending == Ending::Done {
+                done += survival * weight / left;
+            }
+            if !ending.is_censored() {
+                survival *= 1.0 - weight / left;
+            }
+            left -= weight;
+        }
+        [survival, done]
+    }
+
+    #[test]
+    fn a_draw_is_the_bootstrap_by_definition() {
+        let waits: Vec<(f64, Ending)> = (0..60)
+            .map(|i| {
+                let ending = match i % 5 {
+                    0 => Ending::GaveUp,
+                    1 => Ending::Failed,
+                    _ => Ending::Done,
+                };
+                (0.1 + 0.05 * f64::from(i * 7 % 60), ending)
+            })
+            .collect();
+        let all: Vec<Wait> = waits.iter().map(|&(t, e)| Wait::new(t, e).unwrap()).collect();
+        let table = LifeTable::of(&Cells::from_waits(&all)).unwrap();
+        let bootstrap = Bootstrap::of(&table).unwrap();
+        let grid = Grid::new(0.1, 0.2, 2.0);
+        let flat = Sampled::join(&grid, vec![1.0; grid.ages().len()], &[]);
+        let mut random = Xoshiro256PlusPlus::seed_from_u64(7);
+        let rounds = 6000;
+        let i = grid.decide().end - 60;
+        let at = grid.ages()[i];
+        let (mut ours, mut theirs) = (vec![], vec![]);
+        for _ in 0..rounds {
+            let curve = bootstrap.draw(&grid, &flat, &mut random);
+            assert!((curve.survival[i] + curve.done[i] + curve.failed[i] - 1.0).abs() < 1e-12);
+            ours.push([curve.survival[i], curve.done[i]]);
+            theirs.push(by_definition(&waits, at, &mut random));
+        }
+        for k in 0..2 {
+            let column = |v: &[[f64; 2]]| mean_and_variance(&v.iter().map(|x| x[k]).collect::<Vec<_>>());
+            let ((m1, v1), (m2, v2)) = (column(&ours), column(&theirs));
+            assert!((m1 - m2).abs() < 4.0 * ((v1 + v2) / f64::from(rounds)).sqrt(), "{k}: {m1} {m2}");
+            assert!((v1 / v2 - 1.0).abs() < 4.0 * (4.0 / f64::from(rounds)).sqrt(), "{k}: {v1} {v2}");
+        }
+    }
+
+    #[test]
+    fn the_area_is_exact_and_the_tail_follows() {
+        let waits: Vec<Wait> =
+            (1..=40)
+                .map(|i| {
+                    if i < 30 {
+                        Wait::new(f64::from(i), Ending::Done)
+                    } else {
+                        Wait::new(30.0, Ending::GaveUp)
+                    }
+                })
+                .map(Result::unwrap)
+                .collect();
+        let table = LifeTable::of(&Cells::from_waits(&waits)).unwrap();
+        let bootstrap = Bootstrap::of(&table).unwrap();
+        assert_eq!(bootstrap.sight(), 30.0);
+        let grid = Grid::new(0.5, 0.7, 300.0);
+        let latent: Vec<f64> = grid.ages().iter().map(|t| (-0.02 * t).exp()).collect();
+        let failure: Vec<f64> = grid.ages().iter().map(|t| 0.01 * t).collect();
+        let tail = Sampled::join(&grid, latent, &failure);
+        let curve = bootstrap.draw(&grid, &tail, &mut Xoshiro256PlusPlus::seed_from_u64(3));
+        let at = |age: f64| grid.ages().partition_point(|&a| a < age);
+        let (edge, far) = (at(30.0) - 1, at(200.0));
+        let given = |c: &Sampled| c.survival[far] / c.survival[edge];
+        assert!((given(&curve) / given(&tail) - 1.0).abs() < 0.03);
+        // Steps at 1, 2, ..., 29: the area up to 29.5 from the steps alone.
+        let (mut area, mut last) = (0.0, 1.0);
+        for k in 1..=29 {
+            area += last;
+            last = curve.survival[at(f64::from(k) + 0.4)];
+        }
+        let i = at(29.5);
+        area += last * (grid.ages()[i] - 29.0);
+        assert!((curve.area[i] - area).abs() < 1e-9, "{} {area}", curve.area[i]);
+        for i in 0..grid.ages().len() {
+            assert!((curve.survival[i] + curve.done[i] + curve.failed[i] - 1.0).abs() < 1e-9);
+            assert!(
+                i == 0 || curve.survival[i] <= curve.survival[i - 1] && curve.area[i] >= curve.area[i - 1]
+            );
+        }
+        assert!(curve.failed[far] > 0.0 && curve.failed[edge] == 0.0);
+    }
+}
