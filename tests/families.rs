@@ -1,4 +1,5 @@
-//! Identities that every family must satisfy, whatever its formula.
+//! Identities that every family must satisfy, whatever its formula; and values from other programs.
+#![allow(clippy::expect_used)]
 
 use outwait::numeric::integrate;
 use outwait::tail::families::{LogLogistic, ParetoTail, Shifted, WithNever, all, decides, verdicts};
@@ -281,7 +282,7 @@ type Value = (&'static str, &'static [f64], f64, f64, f64);
 /// From scipy 1.17.1: expon, weibull_min, gamma, truncnorm, gompertz, invgauss, gengamma, lognorm, fisk, lomax,
 /// burr12, genpareto; `logsf` and `logpdf`.
 #[rustfmt::skip]
-#[allow(clippy::unreadable_literal, clippy::excessive_precision)]
+#[allow(clippy::approx_constant)]
 const SCIPY: &[Value] = &[
     ("exponential", &[0.25], 0.1, -0.025, -1.4112943611198905),
     ("exponential", &[0.25], 40.0, -10.0, -11.38629436111989),
@@ -341,7 +342,6 @@ const SCIPY: &[Value] = &[
 
 /// From mpmath 1.4.1 at 50 digits and more, by the definitions: far tails, near-degenerate laws, mixtures.
 #[rustfmt::skip]
-#[allow(clippy::unreadable_literal, clippy::excessive_precision)]
 const MPMATH: &[Value] = &[
     ("log_logistic", &[1.5, 3.0], 1e7, -22.52922504359963, -38.2418555866141),
     ("lognormal", &[0.5, 0.05], 1000000.0, -35467.06789832114, -35472.30300066922),
@@ -379,7 +379,6 @@ const MPMATH: &[Value] = &[
 
 /// Means, from the same scipy laws.
 #[rustfmt::skip]
-#[allow(clippy::unreadable_literal, clippy::excessive_precision)]
 const MEANS: &[(&str, &[f64], f64)] = &[
     ("weibull", &[0.4, 2.0], 6.646701940895686),
     ("gamma", &[2.5, 1.5], 3.75),

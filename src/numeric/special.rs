@@ -108,6 +108,7 @@ mod tests {
     /// From mpmath 1.4.1.
     #[test]
     #[rustfmt::skip]
+    #[allow(clippy::approx_constant)]
     fn normal_tails() {
         for (z, ln_tail) in [
             (-40.0, 0.0),
