@@ -3,6 +3,7 @@
 //! Read first: [`wait::Wait`] (one observation), [`tally::Cells`] (waits, counted), [`outlook::Outlook`] (what
 //! the future of a wait looks like), [`stopping::Worth`] (what time is worth).
 
+pub mod intake;
 pub mod numeric;
 pub mod outlook;
 pub mod say;
