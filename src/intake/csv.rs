@@ -5,7 +5,7 @@ use super::collect::Collector;
 use super::error::HeaderError;
 use super::flaw::Flaw;
 use super::format::DELIMITERS;
-use super::record::{Field, Fields};
+use super::record::{Field, Fields, excerpt};
 use super::{blocks, decimal};
 
 /// Where each field stands in a row.
@@ -32,33 +32,42 @@ impl Columns {
             }
             columns.used.push((index, field, unit));
         }
-        let has_age = columns.has(Field::Elapsed)
-            || (columns.has(Field::Over) && columns.has(Field::Upto))
-            || columns.has(Field::Started)
-            || columns.has(Field::Ended);
-        if !has_age {
-            return Err(missing(Field::Elapsed, &names));
+        let needed = match [Field::Over, Field::Upto].map(|field| columns.has(field)) {
+            _ if [Field::Elapsed, Field::Started, Field::Ended]
+                .into_iter()
+                .any(|field| columns.has(field)) =>
+            {
+                None
+            }
+            [true, true] => None,
+            [true, false] => Some(Field::Upto),
+            [false, true] => Some(Field::Over),
+            [false, false] => Some(Field::Elapsed),
+        };
+        let stream = (!named && !columns.has(Field::Stream)).then_some(Field::Stream);
+        match needed.or(stream) {
+            Some(field) => Err(columns.missing(field, &names)),
+            None => Ok(columns),
         }
-        if !named && !columns.has(Field::Stream) {
-            return Err(missing(Field::Stream, &names));
-        }
-        Ok(columns)
     }
 
     fn has(&self, field: Field) -> bool {
         self.used.iter().any(|&(_, used, _)| used == field)
     }
-}
 
-fn missing(field: Field, names: &::csv::StringRecord) -> HeaderError {
-    // A quarter of the letters in common and in order is little, but the names are short and it is only a hint.
-    let nearest = names
-        .iter()
-        .map(|name| (strsim::jaro_winkler(field.name(), &name.trim().to_ascii_lowercase()), name))
-        .max_by(|a, b| a.0.total_cmp(&b.0))
-        .filter(|&(likeness, _)| likeness > 0.0)
-        .map(|(_, name)| super::record::excerpt(name.trim()));
-    HeaderError::Missing { field: field.name(), nearest }
+    /// Names the column most like the missing one, of those that mean nothing else.
+    fn missing(&self, field: Field, names: &::csv::StringRecord) -> HeaderError {
+        let likeness = |name: &str| strsim::jaro_winkler(field.name(), &name.trim().to_ascii_lowercase());
+        let nearest = names
+            .iter()
+            .enumerate()
+            .filter(|&(index, _)| self.used.iter().all(|&(used, ..)| used != index))
+            .map(|(_, name)| (likeness(name), name))
+            .max_by(|a, b| a.0.total_cmp(&b.0))
+            .filter(|&(likeness, _)| likeness > 0.0)
+            .map(|(_, name)| excerpt(name.trim()));
+        HeaderError::Missing { field: field.name(), nearest }
+    }
 }
 
 /// The delimiter that the first line has most of; a comma if it has none.

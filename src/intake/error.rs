@@ -31,7 +31,7 @@ pub enum IntakeError {
         source: io::Error,
     },
     /// Compressed data are cut off or damaged.
-    #[error("{file} is cut off or damaged: its {compression} data end or break off; copy it again")]
+    #[error("{file} is cut off or damaged: its {compression} data do not unpack to their end; copy it again")]
     Damaged {
         /// The input.
         file: String,

@@ -97,8 +97,10 @@ impl<'o> Feed<'o> {
                 limit: self.options.total_bytes,
             })?;
             match found {
-                None => self.open = None,
-                Some(found) => {
+                // A header with nothing under it is told of in a block without lines.
+                None if open.lines_before == 0 => self.open = None,
+                found => {
+                    let found = found.unwrap_or(Found::Records);
                     return Ok(Some(Task {
                         file: open.number,
                         layout: Arc::clone(&open.layout),

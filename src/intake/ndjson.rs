@@ -390,3 +390,96 @@ impl<'a> Visitor<'a> for Any {
         Ok(Seen::Other("an object"))
     }
 }
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+    use proptest::prelude::*;
+
+    /// What serde_json makes of a line.
+    fn by_serde(line: &str) -> Option<Vec<(Field, String)>> {
+        Some(gather(&careful(line).ok()?).ok()?.told())
+    }
+
+    fn by_shape(shape: &Shape, text: &str) -> Option<(usize, Vec<(Field, String)>)> {
+        let mut fields = Fields::new();
+        let length = shape.read(text, &mut fields)?;
+        Some((length, fields.told()))
+    }
+
+    #[test]
+    fn a_shape_reads_lines_like_its_own_and_no_other() {
+        let shape = Shape::of(r#"{"stream":"a","elapsed":1.5,"at":"2026-11-30T10:00:00Z"}"#).unwrap();
+        let like = "{\"stream\":\"b\",\"elapsed\":-20e3,\"at\":\"\"}\nnext";
+        assert_eq!(by_shape(&shape, like).unwrap().0, like.len() - 5);
+        for unlike in [
+            r#"{"stream":"b","elapsed":2,"at":1}"#,
+            r#"{"stream":"b","elapsed":02,"at":""}"#,
+            r#"{"stream":"b\n","elapsed":2,"at":""}"#,
+            r#"{"stream":"b","elapsed":2,"at":""}}"#,
+            r#"{"stream":"b","elapsed":2,"at":""#,
+            "{\"stream\":\"b\n\",\"elapsed\":2,\"at\":\"\"}",
+            "",
+        ] {
+            assert_eq!(by_shape(&shape, unlike), None, "{unlike}");
+        }
+        for none in ["{}", "[]", r#"{"elapsed":1,"elapsed":2}"#, r#"{"id":7,"elapsed":1}"#, r#"{"at":null}"#]
+        {
+            assert!(Shape::of(none).is_none(), "{none}");
+        }
+    }
+
+    /// Lines that are nearly right, or right.
+    fn line() -> impl Strategy<Value = String> {
+        let key = prop_oneof![
+            4 => prop::sample::select(&["stream", "elapsed", "at", "ending", "id", "elapsed_ms", "over_ns", "host"][..])
+                .prop_map(String::from),
+            1 => "[a-z_\\\\\"é\n]{0,10}",
+        ];
+        let value = prop_oneof![
+            3 => "-?[0-9]{1,9}(\\.[0-9]{1,20})?",
+            1 => "-?[0-9.eE+-]{0,8}",
+            3 => "\"[a-z:. 0-9é]{0,20}\"",
+            1 => "\"[a-z\\\\\"\u{1}\t]{0,10}\"",
+            1 => prop::sample::select(&["null", "true", "[1]", "{\"a\":1}", ""][..]).prop_map(String::from),
+        ];
+        let space = prop_oneof![8 => Just(""), 1 => Just(" "), 1 => Just("\t\r ")];
+        let member = (space.clone(), key, space.clone(), value, space)
+            .prop_map(|(a, key, b, value, c)| format!("{a}\"{key}\"{b}:{b}{value}{c}"));
+        (prop::collection::vec(member, 0..5), prop::sample::select(&["}", "} ", "}\r", "", "}x"][..]))
+            .prop_map(|(members, end)| format!("{{{}{end}", members.join(",")))
+    }
+
+    proptest! {
+        #![proptest_config(ProptestConfig::with_cases(4000))]
+        #[test]
+        fn shapes_and_serde_agree(one in line(), other in line()) {
+            let Some(shape) = Shape::of(&one) else { return Ok(()) };
+            for text in [&one, &other] {
+                if let Some((length, told)) = by_shape(&shape, text) {
+                    prop_assert_eq!(length, text.len());
+                    prop_assert_eq!(by_serde(text), Some(told), "{}", text);
+                }
+            }
+        }
+
+        #[test]
+        fn a_changed_byte_fools_no_shape(one in line(), at in any::<prop::sample::Index>(), new in any::<char>()) {
+            let Some(shape) = Shape::of(&one) else { return Ok(()) };
+            let mut other: Vec<char> = one.chars().collect();
+            let at = at.index(other.len());
+            other[at] = new;
+            let other: String = other.into_iter().collect();
+            if let Some((length, told)) = by_shape(&shape, &other) {
+                // A newline ends the line.
+                prop_assert_eq!(by_serde(&other[..length]), Some(told), "{}", other);
+            }
+        }
+
+        #[test]
+        fn texts_end_where_a_slow_look_finds(bytes in prop::collection::vec(any::<u8>(), 0..40)) {
+            let slow = bytes.iter().position(|&byte| byte == b'"' || byte == b'\\' || byte < b' ');
+            prop_assert_eq!(plain_text_upto(&bytes, 0), slow.unwrap_or(bytes.len()));
+        }
+    }
+}

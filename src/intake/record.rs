@@ -188,6 +188,16 @@ impl<'a> Fields<'a> {
         }
     }
 
+    /// Every field with its value, numbers to the last bit.
+    #[cfg(test)]
+    pub(super) fn told(&self) -> Vec<(Field, String)> {
+        use Field::*;
+        [Stream, Elapsed, Ending, At, Attempt, Id, Entered, Count, Over, Upto, Started, Ended]
+            .into_iter()
+            .filter_map(|field| Some((field, format!("{:?} {}", self.get(field)?, self.unit_given))))
+            .collect()
+    }
+
     #[inline]
     fn text(&self, field: Field) -> Result<Option<&'a str>, Flaw> {
         match self.get(field) {
@@ -212,6 +222,15 @@ impl<'a> Fields<'a> {
             None => Ok(None),
             Some(Value::Number(seconds)) => Ok(Some(seconds)),
             Some(Value::Text(text)) => time(field, text).map(Some),
+        }
+    }
+
+    /// A time of start or end, which other than `at` is checked nowhere else.
+    fn end_time(&self, field: Field) -> Result<Option<f64>, Flaw> {
+        let Some(time) = self.time(field)? else { return Ok(None) };
+        match Wait::new(1.0, Ending::Done)?.with_at(time) {
+            Ok(_) => Ok(Some(time)),
+            Err(_) => Err(Flaw::Time { field, text: time.to_string() }),
         }
     }
 
@@ -309,7 +328,7 @@ fn make_rare<'a>(
 ) -> Result<Made<'a>, Flaw> {
     let elapsed = fields.duration(Field::Elapsed)?;
     let (over, upto) = (fields.duration(Field::Over)?, fields.duration(Field::Upto)?);
-    let (started, ended) = (fields.time(Field::Started)?, fields.time(Field::Ended)?);
+    let (started, ended) = (fields.end_time(Field::Started)?, fields.end_time(Field::Ended)?);
     let at = fields.time(Field::At)?;
     let attempt = fields.attempt()?.unwrap_or(1);
     let entered = fields.duration(Field::Entered)?.unwrap_or(0.0);
@@ -339,10 +358,6 @@ fn make_rare<'a>(
                 if count.is_some_and(|count| count != 1) {
                     return Err(Flaw::Clash { field: Field::Count, with: field });
                 }
-                // A throw-away wait checks what the pair will need, while the line is at hand.
-                Wait::new(1.0, Ending::Done)?
-                    .with_at(time)
-                    .map_err(|_| Flaw::Time { field, text: time.to_string() })?;
                 if attempt == 0 {
                     return Err(WaitError::Attempt.into());
                 }

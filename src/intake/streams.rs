@@ -12,6 +12,7 @@ use crate::wait::{Age, Ending, StreamError, Wait, check_stream};
 /// Streams seen by one worker. Merging is exact and commutative.
 #[derive(Debug, Default)]
 pub(super) struct Streams {
+    /// Looked up for every line, hence the fast hash; it is seeded, so no writer of names can aim at it.
     places: HashMap<Box<str>, usize, RandomState>,
     streams: Vec<Stream>,
 }
