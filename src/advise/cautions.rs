@@ -160,7 +160,7 @@ fn sticky(settled: &Settled) -> Option<Caution> {
     let sticky = settled.sticky.as_ref()?;
     let high = sticky.interval.map_or(sticky.value, |i| i[1]);
     let flips = sticky.flips_at.filter(|_| !settled.wait_it_out);
-    let unknown = sticky.interval.is_none() && sticky.from != "policy";
+    let unknown = sticky.from == "unknown";
     if let Some(flip) = flips.filter(|&flip| unknown && flip < 0.5) {
         return Some(caution(
             "stickiness_unknown",
@@ -213,14 +213,14 @@ fn near_a_bulk(settled: &Settled) -> Option<Caution> {
 }
 
 fn law_shifted(shift: &Shift) -> Caution {
-    let way = if shift.gap > 0.0 { "longer" } else { "shorter" };
+    let (way, more) = if shift.gap > 0.0 { ("longer", "more") } else { ("shorter", "fewer") };
     let loses = shift
         .loses
         .map(|l| format!("; the best time of before would lose {} under the latest law", say::percent(l)));
     caution(
         "law_shifted",
         format!(
-            "waits of the latest week are {way} than before: {} more or fewer are still open at {}{}",
+            "waits of the latest week are {way} than before: {} {more} of them are still open at {}{}",
             say::percent(shift.gap.abs()),
             say::duration(shift.at),
             loses.unwrap_or_default()

@@ -17,7 +17,7 @@ use crate::stopping::{
     Objective, Odds, Optimum, Reached, Regret, RequestTime, Retry, Rule, Sides, Worth, copy_or_retry,
     flips_at, stickiness,
 };
-use crate::tail::{self, Draw, Ensemble, LEAST_WEIGHT, Verdict, verdict};
+use crate::tail::{self, Draw, Ensemble, LEAST_WEIGHT, RemainingWait, TailClass, Verdict, verdict};
 use crate::tally::{Cause, Cells, Tally};
 
 /// Replicates of the empirical curve (RECIPE's fourth section).
@@ -171,7 +171,7 @@ fn sticky(cells: &Cells, retries: &Cells, entry: &Entry, curve: &KaplanMeier) ->
     };
     match entry.retry.sticky {
         Sticky::Given(phi) => named(phi, "policy"),
-        Sticky::Unknown => named(0.0, "nothing: taken as 0"),
+        Sticky::Unknown => named(0.0, "unknown"),
         Sticky::FromData => {
             let estimate = cut(cells).and_then(|at| {
                 let table = LifeTable::of(retries).ok()?;
@@ -182,11 +182,11 @@ fn sticky(cells: &Cells, retries: &Cells, entry: &Entry, curve: &KaplanMeier) ->
                 Some(found) => Some(Stickiness {
                     value: found.value,
                     interval: Some(found.interval),
-                    from: "the numbered attempts in the data".to_owned(),
+                    from: "data".to_owned(),
                     flips_at: None,
                 }),
                 None if cells.gave_up.is_empty() => None,
-                None => named(0.0, "nothing: no numbered attempts, taken as 0"),
+                None => named(0.0, "unknown"),
             }
         }
     }
@@ -275,12 +275,15 @@ impl Scene<'_> {
             Objective::new(&average, &self.worth, &self.retry, limits).map_err(|e| e.to_string())?;
         let optimum = stopping::best(&objective).map_err(|e| format!("{e}; {}", e.remedy()))?;
 
-        let (at, load) = self.within_load(&average, choice);
+        let (mut at, load) = self.within_load(&average, choice);
+        if self.nothing_to_gain(&judgement.verdict, choice) {
+            at = self.bounds.ceiling;
+        }
         let wait_it_out = at >= self.bounds.ceiling;
         let regrets = doubt.expected();
         let regret_at = |t: f64| interpolate(doubt.ages(), &regrets, t);
         let regret = match load {
-            LoadCeiling::Kept => choice.regret,
+            LoadCeiling::Kept if at == choice.at => choice.regret,
             _ => Regret {
                 expected: regret_at(at),
                 percentile_95: choice.regret.percentile_95.max(regret_at(at)),
@@ -336,6 +339,14 @@ impl Scene<'_> {
             .into_iter()
             .filter_map(|rule| Some((rule, rule.give_up_after(self.empirical, end)?)))
             .collect()
+    }
+
+    /// Whether waiting on is within the slack of the best, and the verdict says that the end comes nearer as one waits.
+    /// A give-up time would then rest on nothing but what no wait has shown.
+    fn nothing_to_gain(&self, verdict: &Verdict, choice: Choice) -> bool {
+        verdict.class == TailClass::Light
+            && matches!(verdict.remaining_wait, RemainingWait::Shrinking | RemainingWait::Flat)
+            && choice.band[1] >= self.bounds.ceiling
     }
 
     /// The choice, moved up where attempts per request would exceed the ceiling.

@@ -5,9 +5,11 @@ mod bounds;
 mod cautions;
 mod judge;
 mod shift;
+mod streams;
 mod summary;
 
 pub use shift::Shift;
+pub use streams::Terms;
 
 use crate::advice::{Action, Advice, Caution, Decision, Evidence, RemainingWait, Tail, TailClass};
 use crate::policy::Entry;

@@ -58,11 +58,11 @@ fn reason(verdict: &Verdict) -> String {
     );
     if verdict.unread > 0.5 {
         reason.push_str("; no family fits well");
-        if let Some(moments) = verdict.moments {
+        if let Some(moment) = verdict.moment {
             reason.push_str(&format!(
                 ", so the largest completions decide: moment estimate of the tail index {} ± {}",
-                say::number(moments.xi),
-                say::number(moments.standard_error)
+                say::number(moment.xi),
+                say::number(moment.standard_error)
             ));
         }
     }
@@ -109,7 +109,7 @@ fn stopped(fit: &crate::tail::Fit) -> String {
     match fit.stop {
         Stop::Converged => "converged".into(),
         Stop::Boundary { .. } => {
-            format!("at a limit of the family: {}", fit.boundary().unwrap_or("a parameter"))
+            format!("at a limit of the family: {}", fit.boundary.unwrap_or("a parameter"))
         }
         Stop::Stalled => "stalled short of a maximum".into(),
         Stop::NotFinite => "the likelihood is not finite".into(),
