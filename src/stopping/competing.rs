@@ -37,6 +37,26 @@ struct Table {
     failed: Vec<f64>,
 }
 
+impl std::fmt::Debug for Failure {
+    fn fmt(&self, f: &mut std::fmt::Formatter<'_>) -> std::fmt::Result {
+        match self {
+            Failure::Never => f.write_str("Never"),
+            Failure::Rate(rate) => f.debug_tuple("Rate").field(rate).finish(),
+            Failure::Law(law) => f.debug_tuple("Law").field(&law.parameters()).finish(),
+        }
+    }
+}
+
+impl std::fmt::Debug for Competing {
+    fn fmt(&self, f: &mut std::fmt::Formatter<'_>) -> std::fmt::Result {
+        f.debug_struct("Competing")
+            .field("done", &self.done.parameters())
+            .field("failed", &self.failed)
+            .field("knots", &self.knots)
+            .finish_non_exhaustive()
+    }
+}
+
 const TOLERANCE: f64 = 1e-12;
 
 impl Competing {
@@ -228,8 +248,8 @@ mod tests {
     fn two_exponentials() {
         for failed in [Failure::Rate(0.5), Failure::Law(law(&Exponential, &[0.5]))] {
             let both = Competing::new(law(&Exponential, &[2.0]), failed);
-            for t in [1e-6, 0.01, 0.3, 1.0, 7.0, 200.0] {
-                let ended = -(-2.5 * t as f64).exp_m1();
+            for t in [1e-6_f64, 0.01, 0.3, 1.0, 7.0, 200.0] {
+                let ended = -(-2.5 * t).exp_m1();
                 assert!(close(both.restricted_mean(t), ended / 2.5), "{t}");
                 assert!((both.failed(t) - ended * 0.2).abs() < 1e-12, "{t}");
                 assert!((both.done(t) - ended * 0.8).abs() < 1e-12, "{t}");

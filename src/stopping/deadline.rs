@@ -218,19 +218,36 @@ impl<'a> Deadline<'a> {
         let (pause, _) = self.pauses(k + 1);
         let let_go = self.rest(k, left - pause, true);
         let end = self.limits.ceiling().min(age + left).max(age);
+        let ages = self.candidates(age, end);
+        let chances = self.chances(k, left + age, &ages);
         let done = self.outlook.done(age);
-        let chance = |t: f64| {
-            let given_up = self.outlook.survival(t) * self.rest(k, left - (t - age) - pause, true);
-            (self.outlook.done(t) - done + given_up + self.after_failures(k, left + age, age, t)) / open
-        };
         let mut best = (let_go, age);
-        for t in self.candidates(age, end) {
-            let now = chance(t);
-            if now > best.0 {
-                best = (now, t);
+        for (&t, chance) in ages.iter().zip(chances) {
+            let chance = (chance - done) / open;
+            if chance > best.0 {
+                best = (chance, t);
             }
         }
         (best.0 - let_go, best.1)
+    }
+
+    /// For give-up times `ages`, sorted: `F_d(t) + S(t) Q_k(left-t-d_g) + ∫ P_k(left-u-d_f) dF_f(u)`, the integral from
+    /// the first of the ages on by the trapezoid rule. Good enough to say where a top lies.
+    fn chances(&self, k: usize, left: f64, ages: &[f64]) -> Vec<f64> {
+        let (pause, pause_failed) = self.pauses(k + 1);
+        let fails = k > 0 && !self.lattice.failed.is_empty();
+        let (mut sum, mut before) = (0.0, None);
+        ages.iter()
+            .map(|&t| {
+                if fails {
+                    let now = (self.outlook.failed(t), self.rest(k, left - t - pause_failed, false));
+                    if let Some((failed, rest)) = before.replace(now) {
+                        sum += 0.5 * (rest + now.1) * (now.0 - failed);
+                    }
+                }
+                self.outlook.done(t) + self.outlook.survival(t) * self.rest(k, left - t - pause, true) + sum
+            })
+            .collect()
     }
 
     /// Pauses after the attempt that is made with `k` attempts left, s: after a give-up, after a failure.
@@ -309,12 +326,30 @@ impl<'a> Deadline<'a> {
         if to <= from {
             return 0.0;
         }
-        if self.smooth {
+        if self.smooth && k == 1 {
             let density = |u: f64| {
                 let hazard = self.outlook.hazards(u).map_or(0.0, |h| h.1);
-                self.rest(k, left - u - pause, false) * hazard * self.outlook.survival(u)
+                self.rest(1, left - u - pause, false) * hazard * self.outlook.survival(u)
             };
-            return integrate(&density, from, to, if k == 1 { 1e-11 } else { 1e-8 });
+            return integrate(&density, from, to, 1e-11);
+        }
+        if self.smooth {
+            // The table is no smoother than its cells, so cell by cell, by the two points of Gauss.
+            let mean = |a: f64, b: f64| {
+                let (middle, reach) = (0.5 * (a + b), 0.5 * (b - a) / 3f64.sqrt());
+                let rest = |u: f64| self.rest(k, left - u - pause, false);
+                0.5 * (rest(middle - reach) + rest(middle + reach))
+            };
+            let piece = |a: f64, b: f64| (self.outlook.failed(b) - self.outlook.failed(a)) * mean(a, b);
+            let (first, last) = ((from / self.step).ceil() as usize, (to / self.step).floor() as usize);
+            if first > last {
+                return piece(from, to);
+            }
+            let at = |i: usize| self.step * i as f64;
+            let failed = &self.lattice.failed;
+            let whole: f64 =
+                (first..last).map(|i| (failed[i + 1] - failed[i]) * mean(at(i), at(i + 1))).sum();
+            return piece(from, at(first)) + whole + piece(at(last), to);
         }
         let knots = self.outlook.knots();
         let inside = knots.partition_point(|&u| u <= from)..knots.partition_point(|&u| u <= to);
@@ -334,8 +369,9 @@ impl<'a> Deadline<'a> {
     fn probability_of(&self, k: usize, left: f64, t: f64, stuck: bool) -> f64 {
         let (pause, _) = self.pauses(k);
         let rest = left - t - pause;
-        let after = if self.smooth && k > 2 {
-            self.choose(k - 1, rest, self.worth.sticky > 0.0).probability
+        // Two attempts without failures can be had exactly.
+        let after = if self.smooth && k == 3 && self.lattice.failed.is_empty() {
+            self.choose(2, rest, self.worth.sticky > 0.0).probability
         } else {
             self.rest(k - 1, rest, true)
         };
@@ -382,32 +418,19 @@ impl<'a> Deadline<'a> {
         if k == 1 {
             return NextAttempt { give_up_after: end, probability: self.rest(1, left, stuck) };
         }
-        let (pause, pause_failed) = self.pauses(k);
+        let (pause, _) = self.pauses(k);
         let mut ages = self.candidates(start, end);
         if !self.smooth && k == 2 {
             // So that the last attempt ends on an ending.
-            ages.extend(
-                self.outlook.knots().iter().map(|u| left - pause - u).filter(|&t| t >= start && t <= end),
-            );
+            let before_endings = self.outlook.knots().iter().map(|u| left - pause - u);
+            ages.extend(before_endings.filter(|&t| t >= start && t <= end));
             ages.sort_by(f64::total_cmp);
         }
-        // The table's own sums, good enough to say where the top lies.
-        let (mut sum, mut failed, mut follows) =
-            (self.after_failures(k - 1, left, 0.0, start), self.outlook.failed(start), f64::NAN);
-        let fails = !self.lattice.failed.is_empty();
+        let phi = if stuck { self.worth.sticky } else { 0.0 };
         let rough: Vec<f64> = ages
             .iter()
-            .map(|&t| {
-                if fails {
-                    let (now, next) =
-                        (self.outlook.failed(t), self.rest(k - 1, left - t - pause_failed, false));
-                    sum += if follows.is_nan() { 0.0 } else { 0.5 * (follows + next) * (now - failed) };
-                    (failed, follows) = (now, next);
-                }
-                let rest = self.rest(k - 1, left - t - pause, true);
-                let fresh = self.outlook.done(t) + self.outlook.survival(t) * rest + sum;
-                if stuck { (1.0 - self.worth.sticky) * fresh + self.worth.sticky * rest } else { fresh }
-            })
+            .zip(self.chances(k - 1, left, &ages))
+            .map(|(&t, fresh)| (1.0 - phi) * fresh + phi * self.rest(k - 1, left - t - pause, true))
             .collect();
         let peak = rough.iter().copied().fold(f64::NEG_INFINITY, f64::max);
         // Of equal tops the last: the longest attempt goes first.
@@ -505,7 +528,9 @@ pub(crate) fn cubic(table: &[f64], x: f64) -> (f64, f64) {
     let value = b + s * (first + (s + 1.0) * (second + (s - 1.0) * third));
     let slope = first + (2.0 * s + 1.0) * second + (3.0 * s * s - 1.0) * third;
     let near = x as usize;
-    (value.clamp(table[near], table[near + 1]), slope)
+    // Rounding may leave neighbours in the wrong order.
+    let (low, high) = (table[near].min(table[near + 1]), table[near].max(table[near + 1]));
+    (value.clamp(low, high), slope)
 }
 
 #[cfg(test)]

@@ -74,15 +74,15 @@ impl Bootstrap {
         rest.for_each(|&age| put(stand.flat(age)));
         let edge = stand.flat(self.sight);
         let from = Stand::of_tail(ages, tail, self.sight);
-        for i in seen..n {
+        for (i, &age) in ages.iter().enumerate().take(n).skip(seen) {
             let to = Stand {
-                age: ages[i],
+                age,
                 survival: tail.survival[i],
                 done: tail.done[i],
                 failed: tail.failed[i],
                 area: tail.area[i],
             };
-            put(if from.survival > 0.0 { edge.follow(&from, &to) } else { edge.flat(ages[i]) });
+            put(if from.survival > 0.0 { edge.follow(&from, &to) } else { edge.flat(age) });
         }
         curve
     }
