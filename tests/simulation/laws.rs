@@ -7,23 +7,23 @@ use rand_xoshiro::Xoshiro256PlusPlus;
 
 /// What the two verdicts should be, where the question has an answer in the observed range.
 #[derive(Clone, Copy, PartialEq, Eq, Debug)]
-pub enum Trend {
+pub(crate) enum Trend {
     Growing,
     Shrinking,
     Flat,
     Mixed,
 }
 
-pub struct Law {
-    pub name: &'static str,
+pub(crate) struct Law {
+    pub(crate) name: &'static str,
     /// Latent survival function of the completion; median near 1.
-    pub survival: fn(f64) -> f64,
+    pub(crate) survival: fn(f64) -> f64,
     /// Constant hazard of failures.
-    pub failing: f64,
+    pub(crate) failing: f64,
     /// Pause after giving up, in medians.
-    pub pause: f64,
-    pub heavy: bool,
-    pub trend: Trend,
+    pub(crate) pause: f64,
+    pub(crate) heavy: bool,
+    pub(crate) trend: Trend,
 }
 
 fn normal_tail(z: f64) -> f64 {
@@ -40,7 +40,7 @@ fn lognormal(t: f64, median: f64, sigma: f64) -> f64 {
 
 /// Sixteen laws: light and heavy, one bulk and two, with a share that never ends, with a least time, with failures,
 /// and two that are in no fitted family (Fréchet; a uniform bulk with a late atom's worth of normal).
-pub const LAWS: [Law; 16] = [
+pub(crate) const LAWS: [Law; 16] = [
     Law {
         name: "exponential",
         survival: |t| (-LN_2 * t).exp(),
@@ -172,8 +172,8 @@ pub const LAWS: [Law; 16] = [
 ];
 
 /// Ages searched, in medians.
-pub const FLOOR: f64 = 0.05;
-pub const CEILING: f64 = 60.0;
+pub(crate) const FLOOR: f64 = 0.05;
+pub(crate) const CEILING: f64 = 60.0;
 
 impl Law {
     /// Latent quantile of the completion; infinite where the never share is drawn.
@@ -190,7 +190,7 @@ impl Law {
     }
 
     /// Time to completion and to failure of one attempt; either may be infinite.
-    pub fn draw(&self, rng: &mut Xoshiro256PlusPlus) -> (f64, f64) {
+    pub(crate) fn draw(&self, rng: &mut Xoshiro256PlusPlus) -> (f64, f64) {
         let done = self.quantile(rng.random::<f64>());
         let failed =
             if self.failing > 0.0 { -(1.0 - rng.random::<f64>()).ln() / self.failing } else { f64::INFINITY };
@@ -198,7 +198,7 @@ impl Law {
     }
 
     /// Age by which this share of attempts has ended.
-    pub fn point(&self, share: f64) -> f64 {
+    pub(crate) fn point(&self, share: f64) -> f64 {
         let (mut low, mut high) = (1e-9_f64.ln(), 1e9_f64.ln());
         for _ in 0..60 {
             let middle = 0.5 * (low + high);
@@ -214,7 +214,7 @@ impl Law {
 
     /// True reward rate on a fine grid of give-up times (worth 1, no pause but after giving up), by the trapezoid
     /// rule: the definition of METHODS.md section 5 and nothing else.
-    pub fn truth(&self) -> Truth {
+    pub(crate) fn truth(&self) -> Truth {
         const STEPS: usize = 6_000;
         let first = FLOOR * 1e-3;
         let ratio = (CEILING / first).ln() / STEPS as f64;
@@ -237,22 +237,22 @@ impl Law {
     }
 }
 
-pub struct Truth {
-    pub ages: Vec<f64>,
-    pub rates: Vec<f64>,
-    pub best: f64,
+pub(crate) struct Truth {
+    pub(crate) ages: Vec<f64>,
+    pub(crate) rates: Vec<f64>,
+    pub(crate) best: f64,
 }
 
 impl Truth {
     /// Share of the best rate lost by giving up at `t`.
-    pub fn regret(&self, t: f64) -> f64 {
+    pub(crate) fn regret(&self, t: f64) -> f64 {
         let i = self.ages.partition_point(|&a| a < t).clamp(1, self.ages.len() - 1);
         let part = ((t - self.ages[i - 1]) / (self.ages[i] - self.ages[i - 1])).clamp(0.0, 1.0);
         1.0 - (self.rates[i - 1] + part * (self.rates[i] - self.rates[i - 1])) / self.best
     }
 
     /// The best give-up time.
-    pub fn optimum(&self) -> f64 {
+    pub(crate) fn optimum(&self) -> f64 {
         let i = (0..self.rates.len()).max_by(|&a, &b| self.rates[a].total_cmp(&self.rates[b])).unwrap_or(0);
         self.ages[i]
     }

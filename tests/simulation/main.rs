@@ -4,7 +4,7 @@
 //! The default run is small. The whole grid: `OUTWAIT_SIMULATION=whole cargo test --release --test simulation --
 //! --nocapture`; `OUTWAIT_SIMULATION=N` sets the repetitions of each cell to N.
 
-#![allow(clippy::unwrap_used)] // a test may fail
+#![allow(clippy::unwrap_used, clippy::panic)] // a test may fail
 
 mod laws;
 
@@ -85,21 +85,6 @@ fn run(law: &Law, truth: &Truth, size: usize, cut: Option<f64>, seed: u64) -> Ru
     let timeout = cut.map_or(f64::INFINITY, |share| law.point(share));
     let optimum = truth.optimum();
     let [low, high] = d.interval_s.unwrap();
-    if std::env::var_os("OUTWAIT_DEBUG").is_some() && heavy(law, &advice) == Some(Said::Wrong) {
-        println!("WRONG {} n={size} cut={cut:?} {} :: {:?}", law.name, advice.tail.reason, advice.tail.xi);
-        let mut fits = advice.fits.clone();
-        fits.sort_by(|a, b| a.bic.total_cmp(&b.bic));
-        for f in fits.iter().take(6) {
-            println!(
-                "    {} {:?} bic {:.1} gap {:.4} {}",
-                f.family,
-                f.parameters.values().map(|v| v.as_f64().unwrap_or(f64::NAN)).collect::<Vec<_>>(),
-                f.bic,
-                f.largest_gap,
-                f.stopped
-            );
-        }
-    }
     Run {
         size,
         cut,
