@@ -54,7 +54,7 @@ fn ages(n: u32, quantile: impl Fn(f64) -> f64) -> impl Iterator<Item = f64> {
     (0..n).map(move |i| quantile((f64::from(i) + 0.5) / f64::from(n)))
 }
 
-/// 400 look-ups with a Pareto tail, cut off at 2 s: from 10 ms on, S(t) = 1/(1 + 20 t)^1.1.
+/// 400 look-ups, log-logistic of scale 50 ms and shape 1.5, cut off at 2 s.
 fn lookups() -> String {
     let line = |t: f64, i: usize| {
         let (elapsed, ending) = if t > 2.0 { (2.0, "gave_up") } else { (t, "done") };
@@ -63,7 +63,7 @@ fn lookups() -> String {
             "{{\"stream\":\"catalogue.lookup\",\"elapsed\":{elapsed:.6},\"ending\":\"{ending}\",\"at\":{at}}}\n"
         )
     };
-    let ages = ages(400, |u| 0.01 + ((1.0 - u).powf(-1.0 / 1.1) - 1.0) / 20.0);
+    let ages = ages(400, |u| 0.05 * (u / (1.0 - u)).powf(1.0 / 1.5));
     // Spread over the hours, so that no hour has only short ones.
     ages.enumerate().map(|(i, t)| line(t, i * 149 % 400)).collect()
 }
@@ -71,7 +71,7 @@ fn lookups() -> String {
 /// 400 scans of 10 min, give or take: Weibull of shape 4.
 fn scans() -> String {
     let rows = ages(400, |u| 600.0 * (-(1.0 - u).ln()).powf(0.25)).map(|t| format!("scan.job,{t:.3},done\n"));
-    "stream,elapsed,ending\n".chars().collect::<String>() + &rows.collect::<String>()
+    "stream,elapsed,ending\n".to_owned() + &rows.collect::<String>()
 }
 
 const POLICY: &str = "\
@@ -176,6 +176,10 @@ fn json_has_the_fields_of_the_contract() {
     assert!(lookup["advice"]["give_up_after_s"].as_f64().unwrap() < 1.0);
     assert_eq!(scan["advice"]["action"], "wait_it_out");
     assert_eq!(scan["tail"]["remaining_wait"], "shrinking");
+    let codes = |stream: &Value| -> Vec<String> {
+        stream["cautions"].as_array().unwrap().iter().map(|c| c["code"].as_str().unwrap().into()).collect()
+    };
+    assert!(!codes(scan).contains(&"edge_of_sight".into()), "every scan was seen to its end");
 }
 
 #[test]
