@@ -236,7 +236,7 @@ fn few_waits(entry: &Entry, advice: &Advice, settled: &Settled) -> Option<Cautio
         caution(
             "few_waits",
             format!(
-                "{} completions: the advised time may lose up to {} of what could be earned",
+                "{} completions are few: what the advised time loses may come to {} of what could be earned",
                 say::count(done),
                 say::percent(settled.regret.percentile_95)
             ),

@@ -18,7 +18,7 @@ use crate::stopping::{
     flips_at, stickiness,
 };
 use crate::tail::{self, Draw, Ensemble, LEAST_WEIGHT, RemainingWait, TailClass, Verdict, verdict};
-use crate::tally::{Cause, Cells, Tally};
+use crate::tally::{Cause, Cells, Sample, Tally};
 
 /// Replicates of the empirical curve (RECIPE's fourth section).
 const REPLICATES: usize = 40;
@@ -39,7 +39,7 @@ pub(crate) struct Judgement {
     pub(crate) verdict: Verdict,
     /// Last age about which the data speak, s.
     pub(crate) sight: f64,
-    /// Share still waiting there.
+    /// Share of all waits that were cut off there or later, and not seen to end.
     pub(crate) unseen: f64,
     /// The choice, or why there is none although the evidence suffices.
     pub(crate) outcome: Result<Settled, String>,
@@ -110,7 +110,7 @@ impl Judgement {
         let mut judgement = Judgement {
             verdict,
             sight,
-            unseen: curve.survival(sight),
+            unseen: curve.survival(sight) * cut_off_share(&coarse.sample(Cause::Any), sight),
             outcome: Err(String::new()),
             ensemble,
         };
@@ -129,6 +129,13 @@ impl Judgement {
         judgement.outcome = scene.settle(&judgement, &failure, failing.as_ref(), &replicates, sticky);
         Some(judgement)
     }
+}
+
+/// Of the waits that reach past an age, the share that was cut off there or later and not seen to end.
+fn cut_off_share(sample: &Sample, sight: f64) -> f64 {
+    let cut_off: f64 = sample.censored.iter().filter(|m| m.age >= sight).map(|m| m.weight).sum();
+    let ended: f64 = sample.events.iter().filter(|e| e.upto > sight).map(|e| e.weight).sum();
+    if cut_off > 0.0 { cut_off / (cut_off + ended) } else { 0.0 }
 }
 
 /// Bootstrapped empirical curves, each going on past the edge of sight with a draw of a family that is picked by its
