@@ -2,7 +2,7 @@
 
 use super::bounds::Bounds;
 use super::caution;
-use super::judge::{Judgement, LoadCeiling, Settled};
+use super::judge::{Judgement, LoadCeiling, LongerTail, Settled};
 use super::{Case, Shift};
 use crate::advice::{Action, Advice, Caution, Change};
 use crate::policy::{Entry, GiveUp, Kind};
@@ -49,7 +49,7 @@ pub(super) fn all(
         found.extend(shift.map(law_shifted));
         found.extend(few_waits(entry, advice, settled));
         found.extend(step_limited(entry, advice));
-        found.extend(deadline(entry));
+        found.extend(deadline(entry, settled));
     } else if let Some(shift) = shift {
         found.push(law_shifted(shift));
     }
@@ -87,8 +87,8 @@ fn edge_of_sight(judgement: &Judgement, settled: &Settled) -> Option<Caution> {
     Some(caution(
         "edge_of_sight",
         format!(
-            "{} of the waits are cut off at {} and nothing in the data says what comes after; {} of the weight puts the \
-             best time there. The stated loss covers what the fitted laws differ in, not what no wait has shown",
+            "{} of the waits are cut off at {} and {} of the weight puts the best time past that, where the stated loss \
+             covers what the fitted laws differ in but not what no wait has shown",
             say::percent(judgement.unseen),
             say::duration(judgement.sight),
             say::percent(settled.sides.beyond)
@@ -186,13 +186,21 @@ fn sticky(settled: &Settled) -> Option<Caution> {
 }
 
 fn tail_lengthened(settled: &Settled) -> Option<Caution> {
-    let far = settled.far_tail.as_ref().filter(|f| f.shorter_but_longer_tailed())?;
+    let LongerTail { mean, mean_never, late } = settled.longer_tail?;
+    let yet = match late {
+        Some([with, without]) => format!(
+            "and yet one request in a thousand then takes over {} instead of {}",
+            say::duration(with),
+            say::duration(without)
+        ),
+        None => "and yet makes very long totals more frequent".to_owned(),
+    };
     Some(caution(
         "tail_lengthened",
         format!(
-            "giving up shortens the mean total from {} to {} and yet makes very long totals more frequent",
-            say::duration(far.mean_never),
-            say::duration(far.mean)
+            "giving up shortens the mean total from {} to {} {yet}",
+            say::duration(mean_never),
+            say::duration(mean)
         ),
         "if the slowest requests are what hurts, hold on longer or cap the attempts",
     ))
@@ -260,9 +268,9 @@ fn step_limited(entry: &Entry, advice: &Advice) -> Option<Caution> {
     ))
 }
 
-fn deadline(entry: &Entry) -> Option<Caution> {
-    let worth = entry.worth.filter(|w| matches!(w.aim, Aim::Deadline { .. }))?;
-    (worth.sticky == 0.0 && !entry.retry.repeatable).then(|| {
+fn deadline(entry: &Entry, settled: &Settled) -> Option<Caution> {
+    let within = entry.worth.is_some_and(|w| matches!(w.aim, Aim::Deadline { attempts: 2.., .. }));
+    (within && !settled.wait_it_out && !entry.retry.repeatable).then(|| {
         caution(
             "deadline_retries",
             "the schedule starts several attempts of one piece of work before the deadline",

@@ -28,6 +28,10 @@ const NINETY: f64 = 1.644_853_626_951_472_2;
 const HOLDING_POINTS: usize = 24;
 /// Extra load of a second copy where the policy names no ceiling: the common 5% (Dean & Barroso 2013).
 const COPY_LOAD: f64 = 0.05;
+/// The share of requests that must be over for a total to count as late.
+const LATE: f64 = 0.999;
+/// How much longer a late total must be with a timer than without.
+const LONGER: f64 = 1.05;
 /// A look past the edge is planned to take this long, s.
 const LOOK: f64 = 7.0 * 86_400.0;
 /// Cells beyond this many are joined before they are bootstrapped.
@@ -59,7 +63,7 @@ pub(crate) struct Settled {
     pub(crate) load: LoadCeiling,
     pub(crate) sides: Sides,
     pub(crate) sticky: Option<Stickiness>,
-    pub(crate) far_tail: Option<FarTail>,
+    pub(crate) longer_tail: Option<LongerTail>,
     advised: Outcome,
     in_force: Option<Outcome>,
     never: Outcome,
@@ -69,6 +73,16 @@ pub(crate) struct Settled {
     look: Option<Look>,
     second_copy: Option<SecondCopy>,
     schedule: Vec<f64>,
+}
+
+/// A timer that shortens the mean total and lengthens its tail. Means in s.
+#[derive(Clone, Copy, Debug, PartialEq)]
+pub(crate) struct LongerTail {
+    pub(crate) mean: f64,
+    pub(crate) mean_never: f64,
+    /// What one request in a thousand exceeds, s, with the timer and without; absent where only totals still longer are
+    /// more frequent.
+    pub(crate) late: Option<[f64; 2]>,
 }
 
 /// What the ceiling on attempts per request did.
@@ -115,8 +129,12 @@ impl Judgement {
             ensemble,
         };
         let Some(mut worth) = entry.worth else { return Some(judgement) };
-        let mut retry =
-            Retry { attempts: entry.retry.attempts, growth: entry.retry.backoff.factor, ..Retry::default() };
+        // A deadline brings its own cap.
+        let attempts = match worth.aim {
+            Aim::Deadline { attempts, .. } => Some(attempts),
+            _ => entry.retry.attempts,
+        };
+        let mut retry = Retry { attempts, growth: entry.retry.backoff.factor, ..Retry::default() };
         if entry.retry.backoff.jitter == Jitter::Full {
             // Drawn evenly from 0 to its full length, a pause lasts half of that on average.
             retry.jitter = true;
@@ -275,7 +293,10 @@ impl Scene<'_> {
         }
         let nothing = "nothing that can happen earns more than an attempt costs, so there is no rate to lose by waiting; \
                        give a completion a worth above the attempt cost, or choose another aim";
-        let choice = doubt.choose(self.entry.guard.slack).ok_or(nothing)?;
+        let mut choice = doubt.choose(self.entry.guard.slack).ok_or(nothing)?;
+        if ensemble.empirical > 0.5 {
+            choice = self.refined(choice, doubt.ages());
+        }
         let average = believed.finish(self.grid, self.sight).ok_or(nothing)?;
         let limits = Limits::new(self.bounds.floor, self.bounds.ceiling).map_err(|e| e.to_string())?;
         let objective =
@@ -319,7 +340,7 @@ impl Scene<'_> {
             now: now.and_then(|n| Some((n, doubt.regret_of_setting(rules.len())?))),
             sooner_costs: regret_at((at / 1.15).max(self.bounds.floor)) - regret_at(at),
             load,
-            far_tail: self.far_tail(ensemble, failing, &average, at),
+            longer_tail: self.longer_tail(ensemble, failing, &average, at),
             advised: outcome(Some(at)),
             in_force: now.map(|n| outcome(finite(n.seconds()))),
             never: outcome(None),
@@ -346,6 +367,23 @@ impl Scene<'_> {
             .into_iter()
             .filter_map(|rule| Some((rule, rule.give_up_after(self.empirical, end)?)))
             .collect()
+    }
+
+    /// The choice moved to the best age of the exact curve within a step of the grid. Where no family fits, completions may
+    /// stop at an age that lies between two of the grid, and a time just before it would cut the last of them.
+    fn refined(&self, choice: Choice, ages: &[f64]) -> Choice {
+        let i = ages.partition_point(|&t| t < choice.at);
+        let (from, upto) = (ages[i.saturating_sub(1)], ages[(i + 1).min(ages.len() - 1)]);
+        if choice.wait_it_out || upto > self.sight || matches!(self.worth.aim, Aim::Deadline { .. }) {
+            return choice;
+        }
+        let exact = |limits| {
+            let objective = Objective::new(self.empirical, &self.worth, &self.retry, limits).ok()?;
+            stopping::best(&objective).ok().map(|best| best.at)
+        };
+        let Some(at) = Limits::new(from, upto).ok().and_then(exact) else { return choice };
+        let holding = |[from, upto]: [f64; 2]| [from.min(at), upto.max(at)];
+        Choice { at, interval: holding(choice.interval), band: holding(choice.band), ..choice }
     }
 
     /// Whether waiting on is within the slack of the best, and the verdict says that the end comes nearer as one waits.
@@ -427,22 +465,34 @@ impl Scene<'_> {
         })
     }
 
-    /// What the timer does to very long totals, judged by the family that weighs most.
-    fn far_tail(
+    /// Whether the timer shortens the mean total and yet makes long totals more frequent: one in a thousand by the believed
+    /// curve, or in the limit by the family that weighs most (Eliazar & Reuveni 2020, 2021).
+    fn longer_tail(
         &self,
         ensemble: &Ensemble,
         failing: Option<&PiecewiseHazard>,
         average: &Average,
         at: f64,
-    ) -> Option<FarTail> {
-        let heaviest =
-            ensemble.members.iter().filter(|m| m.decides).max_by(|a, b| a.weight.total_cmp(&b.weight))?;
-        if at >= self.bounds.ceiling || heaviest.weight <= LEAST_WEIGHT {
+    ) -> Option<LongerTail> {
+        let ceiling = self.bounds.ceiling;
+        let mean = |t: f64| stopping::expected_time(average, &self.worth, &self.retry, t);
+        let (mean, mean_never) = (mean(at), mean(ceiling));
+        if at >= ceiling || mean.partial_cmp(&mean_never) != Some(std::cmp::Ordering::Less) {
             return None;
         }
-        let failed = failing.map_or(Failure::Never, |f| Failure::Rate(f.last_rate()));
-        let law = Competing::new(Arc::clone(&heaviest.fit.law), failed);
-        Some(FarTail::new(average, &self.worth, &self.retry, at, self.bounds.ceiling, law.final_hazard()))
+        let late = |t: f64| finite(RequestTime::new(average, &self.worth, &self.retry, t).quantile(LATE));
+        let late = late(at).zip(late(ceiling)).map(|(with, without)| [with, without]);
+        let late = late.filter(|[with, without]| *with > LONGER * without);
+        let far = || {
+            let heaviest =
+                ensemble.members.iter().filter(|m| m.decides).max_by(|a, b| a.weight.total_cmp(&b.weight))?;
+            let failed = failing.map_or(Failure::Never, |f| Failure::Rate(f.last_rate()));
+            let law = Competing::new(Arc::clone(&heaviest.fit.law), failed);
+            let far = FarTail::new(average, &self.worth, &self.retry, at, ceiling, law.final_hazard());
+            (heaviest.weight > LEAST_WEIGHT).then_some(far)
+        };
+        let longer = late.is_some() || far().is_some_and(|far| far.shorter_but_longer_tailed());
+        longer.then_some(LongerTail { mean, mean_never, late })
     }
 }
 

@@ -111,7 +111,9 @@ fn decide(cells: &Cells, entry: &Entry, bounds: Option<&Bounds>, judgement: Opti
     let done = cells.totals()[0];
     let needed = f64::from(entry.guard.evidence);
     let Some(judgement) = judgement.filter(|_| done >= needed) else {
-        decision.because = if done >= needed {
+        decision.because = if done < LEAST_COMPLETIONS {
+            format!("{} completions; no law can be read from fewer than {LEAST_COMPLETIONS}", say::count(done))
+        } else if done >= needed {
             "the completions all have the same age or cannot be told apart, so no tail can be read".into()
         } else {
             format!("{} of the {} completions that the guard asks for", say::count(done), say::count(needed))

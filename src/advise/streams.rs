@@ -4,7 +4,7 @@ use super::{Case, advise, caution};
 use crate::advice::{Advice, AdviceSet, SCHEMA};
 use crate::policy::{Entry, GiveUp, Jitter, Policy};
 use crate::say;
-use crate::stopping::{ChainFinding, Retry, Station, check_chain};
+use crate::stopping::{ChainFinding, Pause, Retry, Station, check_chain};
 use crate::tally::{Day, Days};
 
 /// Days that are held against those before them, to see whether the law has shifted.
@@ -89,7 +89,7 @@ impl Terms<'_> {
                 // The caller as advised; the callee as it is in force, where that is known.
                 give_up_after: advice.advice.give_up_after_s.unwrap_or(f64::INFINITY),
                 retry: retry(entry),
-                pause: entry.worth.map(|w| w.pause).unwrap_or_default(),
+                pause: mean_pause(entry),
                 calls: entry.calls.iter().filter_map(number).collect(),
             })
             .collect();
@@ -116,11 +116,13 @@ impl Terms<'_> {
                     continue;
                 }
                 let callee = streams[callee].stream.clone();
+                let until = match ends.is_finite() {
+                    true => format!("may still be at work until {}", say::duration(ends)),
+                    false => "may be at work without end".to_owned(),
+                };
                 let text = format!(
-                    "it would leave after {} while {callee} may still be at work until {} (attempt {attempts} of its \
-                     schedule has begun by then)",
+                    "it would leave after {} while {callee} {until} (attempt {attempts} of its schedule has begun by then)",
                     say::duration(leaves),
-                    say::duration(ends),
                 );
                 let remedy = format!(
                     "shorten the schedule of {callee} below {}, or pass the caller's deadline on to it",
@@ -140,6 +142,16 @@ fn retry(entry: &Entry) -> Retry {
         jitter: entry.retry.backoff.jitter == Jitter::Full,
         ..Retry::default()
     }
+}
+
+/// The pauses as a schedule counts them: one that is drawn evenly from 0 to its full length lasts half of that on average.
+fn mean_pause(entry: &Entry) -> Pause {
+    let mut pause = entry.worth.map(|w| w.pause).unwrap_or_default();
+    if entry.retry.backoff.jitter == Jitter::Full {
+        pause.failed *= 0.5;
+        pause.gave_up *= 0.5;
+    }
+    pause
 }
 
 /// FNV-1a of a name: so that a stream's numbers do not depend on which others are there.
