@@ -237,7 +237,7 @@ fn too_little_evidence() {
     let (code, text, err) = fed(Path::new("."), &["weigh", "-", "--stream", "other"], line);
     assert_eq!(code, 4);
     assert!(text.starts_with("No waits to weigh"), "{text}");
-    assert_eq!(err, "outwait: 1 waits of other streams left out\n");
+    assert_eq!(err, "outwait: 1 wait of other streams left out\n");
     let (code, json, _) = fed(Path::new("."), &["weigh", "-", "--stream", "other", "--format", "json"], line);
     assert_eq!((code, streams(&json)), (4, vec![]));
 }
@@ -295,7 +295,7 @@ fn starts_and_ends_are_one_wait() {
     assert_eq!(code, 4);
     let set: AdviceSet = serde_json::from_str(&json).unwrap();
     assert_eq!((set.streams[0].evidence.failed, set.streams[0].evidence.waiting), (1, 1));
-    assert!(err.contains("1 starts without an end taken as still waiting"), "{err}");
+    assert!(err.contains("1 start without an end taken as still waiting"), "{err}");
 }
 
 #[test]

@@ -134,22 +134,22 @@ fn tell(report: &Report) {
         }
     }
     let left = &report.left_out;
-    for (count, what) in [
-        (left.other_streams, "waits of other streams left out"),
-        (left.outside_window, "waits outside the asked time left out"),
-        (left.unmeasured, "jobs without the asked time left out"),
-        (left.partial, "records of parts of a job left out"),
-        (report.pairs.ends_alone, "ends without a start left out: how long they waited is not known"),
-        (report.pairs.open_unseen, "starts at the newest time left out: they say nothing yet"),
+    for (count, noun, what) in [
+        (left.other_streams, "wait", "of other streams left out"),
+        (left.outside_window, "wait", "outside the asked time left out"),
+        (left.unmeasured, "job", "without the asked time left out"),
+        (left.partial, "record", "of parts of a job left out"),
+        (report.pairs.ends_alone, "end", "without a start left out: how long they waited is not known"),
+        (report.pairs.open_unseen, "start", "at the newest time left out: they say nothing yet"),
     ] {
         if count > 0 {
-            lines.push(format!("{} {what}", say::count(count as f64)));
+            lines.push(format!("{} {what}", text::counted(count, noun)));
         }
     }
     if report.pairs.open > 0 {
         lines.push(format!(
-            "{} starts without an end taken as still waiting at the newest time",
-            say::count(report.pairs.open as f64)
+            "{} without an end taken as still waiting at the newest time",
+            text::counted(report.pairs.open, "start")
         ));
     }
     for line in lines {

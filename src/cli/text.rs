@@ -254,11 +254,11 @@ fn extras(out: &mut String, advice: &Advice, page: Page) {
                     .to_owned()
             }
             (_, Some([low, high])) => format!(
-                "one in the data meets the fate of the attempt it replaces {phi} of the time ({} to {})",
+                "in the data, one meets the fate of the attempt it replaces {phi} of the time ({} to {})",
                 say::percent(low),
                 say::percent(high)
             ),
-            _ => format!("by the policy one meets the fate of the attempt it replaces {phi} of the time"),
+            _ => format!("by the policy, one meets the fate of the attempt it replaces {phi} of the time"),
         };
         if let Some(flip) = sticky.flips_at {
             let _ = write!(line, "; from {} on, waiting it out would be best", say::percent(flip));
@@ -274,14 +274,12 @@ fn extras(out: &mut String, advice: &Advice, page: Page) {
             say::duration(copy.start_s),
             say::number(copy.extra_load)
         );
-        let by =
-            |t: Option<f64>| t.map_or("never done".to_owned(), |t| format!("done by {}", say::duration(t)));
-        let _ = write!(
-            line,
-            "; 99% are then {}, with a retry of equal load {}",
-            by(copy.p99_s),
-            by(copy.retry_p99_s)
-        );
+        let by = |t: Option<f64>| {
+            t.map_or("fewer than 99% are ever done".to_owned(), |t| {
+                format!("99% are done by {}", say::duration(t))
+            })
+        };
+        let _ = write!(line, ": {}; with a retry of equal load {}", by(copy.p99_s), by(copy.retry_p99_s));
         field(out, page, "Copy", &line);
     }
     if let Some(look) = &d.look {
