@@ -53,6 +53,9 @@ pub struct Evidence {
     pub waiting: u64,
     /// Waits that were retries (attempt 2 and later).
     pub retries: u64,
+    /// Share of the completions behind the advice that other streams of the same policy entry lent, 0 to 1; absent where
+    /// none did.
+    pub borrowed_share: Option<f64>,
     /// Last age about which the data speak, s.
     pub sight_s: Option<f64>,
     /// First time in the data, RFC 3339.

@@ -195,7 +195,8 @@ fn a_policy_is_found_by_name() {
 fn a_deadline_gives_a_schedule_that_fits() {
     for c in cases().iter().filter(|c| matches!(c.worth.aim, Aim::Deadline { .. })).take(3) {
         let Aim::Deadline { by, attempts } = c.worth.aim else { continue };
-        let advice = through(&waits(c.outlook.law(), c.failed_rate, f64::INFINITY, 3_000, 5), &entry(c.worth));
+        let advice =
+            through(&waits(c.outlook.law(), c.failed_rate, f64::INFINITY, 3_000, 5), &entry(c.worth));
         let schedule = &advice.advice.schedule_s;
         assert!(!schedule.is_empty() && schedule.len() <= attempts as usize, "{}: {schedule:?}", c.id);
         let pauses = c.worth.pause.gave_up * (schedule.len() - 1) as f64;

@@ -79,19 +79,54 @@ fn explore() {
         ("waltons_flies.csv", None, Measure::Wait),
     ] {
         let Some((book, report)) = read(file, name, measure) else { continue };
-        println!("== {file} {measure:?} waits {} bad {} left {:?} susp {:?}", report.waits, report.bad.count, report.left_out, report.suspicions.iter().map(|s| s.to_string()).collect::<Vec<_>>());
+        println!(
+            "== {file} {measure:?} waits {} bad {} left {:?} susp {:?}",
+            report.waits,
+            report.bad.count,
+            report.left_out,
+            report.suspicions.iter().map(|s| s.to_string()).collect::<Vec<_>>()
+        );
         for (stream, days) in book.streams() {
             let done = days.whole().counts();
-            if done[0] < 10 { println!("   {stream} {done:?}"); continue }
+            if done[0] < 10 {
+                println!("   {stream} {done:?}");
+                continue;
+            }
             let a = ask(&book, stream);
             let d = &a.advice;
-            println!("   {stream} {done:?} {} at {:?} int {:?} band {:?} rate {:?} never {:?} regret {:?} | {:?} h{:.2} l{:.2} {:?} | {} {:.2} gap {:.3} | median {:?} sight {:?} | {:?}\n       {}", d.action.name(), d.give_up_after_s, d.interval_s, d.band_s, d.rate_per_s, d.rate_never_per_s, d.expected_regret, a.tail.class, a.tail.heavy_weight, a.tail.light_weight, a.tail.remaining_wait, a.fits[0].family, a.fits[0].weight, a.fits[0].largest_gap, d.never.and_then(|n| n.p50_s), a.evidence.sight_s, a.cautions.iter().map(|c| c.code.as_str()).collect::<Vec<_>>(), d.because); println!("       {}", a.tail.reason);
+            println!(
+                "   {stream} {done:?} {} at {:?} int {:?} band {:?} rate {:?} never {:?} regret {:?} | {:?} h{:.2} l{:.2} {:?} | {} {:.2} gap {:.3} | median {:?} sight {:?} | {:?}\n       {}",
+                d.action.name(),
+                d.give_up_after_s,
+                d.interval_s,
+                d.band_s,
+                d.rate_per_s,
+                d.rate_never_per_s,
+                d.expected_regret,
+                a.tail.class,
+                a.tail.heavy_weight,
+                a.tail.light_weight,
+                a.tail.remaining_wait,
+                a.fits[0].family,
+                a.fits[0].weight,
+                a.fits[0].largest_gap,
+                d.never.and_then(|n| n.p50_s),
+                a.evidence.sight_s,
+                a.cautions.iter().map(|c| c.code.as_str()).collect::<Vec<_>>(),
+                d.because
+            );
+            println!("       {}", a.tail.reason);
         }
         let newest = book.streams().iter().filter_map(|(_, d)| d.last_day()).max();
         let terms = Terms { policy: None, newest, seed: 1 };
         for (stream, days) in book.streams().into_iter().take(40) {
             let a = terms.advise(stream, days, None);
-            println!("   as is: {stream} {} {:?} waits {}", a.advice.action.name(), a.advice.give_up_after_s, a.evidence.waits);
+            println!(
+                "   as is: {stream} {} {:?} waits {}",
+                a.advice.action.name(),
+                a.advice.give_up_after_s,
+                a.evidence.waits
+            );
         }
     }
     let _ = (TailClass::Heavy, RemainingWait::Mixed, Action::WaitItOut);

@@ -3,6 +3,7 @@
 use super::bounds::Bounds;
 use super::caution;
 use super::judge::{Judgement, LoadCeiling, LongerTail, Settled};
+use super::pool::Pooled;
 use super::{Case, Shift};
 use crate::advice::{Action, Advice, Caution, Change};
 use crate::policy::{Entry, GiveUp, Kind};
@@ -69,6 +70,24 @@ pub(super) fn all(
         ));
     }
     found
+}
+
+/// What was lent by other streams is said.
+pub(super) fn borrowed(pooled: &Pooled) -> Caution {
+    caution(
+        "borrowed_evidence",
+        format!(
+            "the stream has few waits of its own: {} of the completions behind this advice are lent by {} of the same \
+             policy entry, which look alike so far",
+            say::percent(pooled.share),
+            if pooled.siblings == 1 {
+                "another stream".to_owned()
+            } else {
+                format!("{} streams", pooled.siblings)
+            }
+        ),
+        "weigh again when it has enough of its own, or give it an entry of its own if it is another kind of wait",
+    )
 }
 
 /// Whether the optimum may lie where a timeout hides the data.

@@ -84,9 +84,13 @@ fn advise(book: &Book, report: &Report, policy: Option<&Policy>, common: &Common
     let terms = Terms { policy, newest: day, seed: common.seed };
     let suspicions: HashMap<&str, String> =
         report.suspicions.iter().map(|s| (s.stream.as_str(), s.to_string())).collect();
+    let lenders = terms.lenders(&streams);
     let advice: Vec<Advice> = streams
         .par_iter()
-        .map(|(stream, days)| terms.advise(stream, days, suspicions.get(stream).map(String::as_str)))
+        .map(|(stream, days)| {
+            let suspicion = suspicions.get(stream).map(String::as_str);
+            terms.advise_among(stream, days, suspicion, &lenders)
+        })
         .collect();
     terms.set(advice, newest.and_then(say::time))
 }
