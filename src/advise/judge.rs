@@ -28,6 +28,10 @@ const NINETY: f64 = 1.644_853_626_951_472_2;
 const HOLDING_POINTS: usize = 24;
 /// Extra load of a second copy where the policy names no ceiling: the common 5% (Dean & Barroso 2013).
 const COPY_LOAD: f64 = 0.05;
+/// What a time may lose, a share, to lie a little after the last of a bulk rather than a little before; and the steps in
+/// which it is sought.
+const NEXT_TO_NOTHING: f64 = 5e-4;
+const LATER: i32 = 64;
 /// The share of requests that must be over for a total to count as late.
 const LATE: f64 = 0.999;
 /// How much longer a late total must be with a timer than without.
@@ -362,8 +366,9 @@ impl Scene<'_> {
             .collect()
     }
 
-    /// The choice moved to the best age of the exact curve within a step of the grid. Where no family fits, completions may
-    /// stop at an age that lies between two of the grid, and a time just before it would cut the last of them.
+    /// The choice moved to the best age of the exact curve within a step of the grid, or as much later as costs next to
+    /// nothing. Where no family fits, completions may stop at an age that lies between two of the grid, and a time just
+    /// before it would cut the last of them.
     fn refined(&self, choice: Choice, ages: &[f64]) -> Choice {
         let i = ages.partition_point(|&t| t < choice.at);
         let (from, upto) = (ages[i.saturating_sub(1)], ages[(i + 1).min(ages.len() - 1)]);
@@ -372,7 +377,10 @@ impl Scene<'_> {
         }
         let exact = |limits| {
             let objective = Objective::new(self.empirical, &self.worth, &self.retry, limits).ok()?;
-            stopping::best(&objective).ok().map(|best| best.at)
+            let best = stopping::best(&objective).ok()?;
+            let least = best.score - NEXT_TO_NOTHING * best.score.abs();
+            let later = |i: i32| best.at + (upto - best.at) * f64::from(i) / f64::from(LATER);
+            (0..LATER).rev().map(later).find(|&t| objective.score(t) >= least)
         };
         let Some(at) = Limits::new(from, upto).ok().and_then(exact) else { return choice };
         let holding = |[from, upto]: [f64; 2]| [from.min(at), upto.max(at)];
