@@ -18,7 +18,7 @@ use crate::stopping::{
     flips_at, stickiness,
 };
 use crate::tail::{self, Draw, Ensemble, LEAST_WEIGHT, RemainingWait, TailClass, Verdict, verdict};
-use crate::tally::{Cause, Cells, Tally};
+use crate::tally::{Cause, Cells, Mass, Tally};
 
 /// Replicates of the empirical curve (RECIPE's fourth section).
 const REPLICATES: usize = 40;
@@ -101,10 +101,11 @@ pub(crate) enum LoadCeiling {
 }
 
 impl Judgement {
-    /// `None` where no law at all can be fitted and no curve drawn.
+    /// `None` where no law at all can be fitted and no curve drawn. `open`: every wait that is open, also those that are
+    /// not among the cells because nobody is watched at the ages before theirs.
     pub(crate) fn of(
         cells: &Cells,
-        retries: &Cells,
+        open: &[Mass],
         entry: &Entry,
         bounds: &Bounds,
         tally: &Tally,
@@ -123,7 +124,7 @@ impl Judgement {
             .map(|hazard| grid.ages().iter().map(|&t| hazard.cumulative(t)).collect())
             .unwrap_or_default();
         let replicates = replicates(&table, &ensemble, &failure, &grid, seed);
-        let verdict = verdict(&sample, &cells.waiting, &ensemble, &grid, &replicates);
+        let verdict = verdict(&sample, open, &ensemble, &grid, &replicates);
         let sight = table.sight();
         let mut judgement = Judgement {
             verdict,
@@ -145,7 +146,7 @@ impl Judgement {
             worth.pause.failed *= 0.5;
             worth.pause.gave_up *= 0.5;
         }
-        let sticky = sticky(cells, retries, entry, &curve);
+        let sticky = sticky(cells, &tally.retries(), entry, &curve);
         worth.sticky = sticky.as_ref().map_or(0.0, |s| s.value);
         let scene = Scene { entry, bounds, grid: &grid, worth, retry, empirical: &empirical, sight, tally };
         judgement.outcome = scene.settle(&judgement, &failure, failing.as_ref(), &replicates, sticky);
@@ -536,7 +537,7 @@ impl Settled {
         d.p99_s = self.advised.p99_s;
         d.now = self.in_force;
         d.never = Some(self.never);
-        d.proposal = self.proposal(entry);
+        d.proposal = self.proposal(entry, judgement.sight);
         d.rivals.clone_from(&self.rivals);
         d.holding_on.clone_from(&self.holding_on);
         d.retry_budget = self.retry_budget;
@@ -546,14 +547,21 @@ impl Settled {
         d.schedule_s.clone_from(&self.schedule);
     }
 
-    /// The next change of the time in force: none below the slack, none beyond the largest step.
-    fn proposal(&self, entry: &Entry) -> Option<Proposal> {
+    /// The next change of the time in force: none below the slack, none beyond the largest step, and none past the edge of
+    /// sight while the curves disagree on which side of it the best time lies. Such a change would be undone by the next
+    /// week's data as often as not; a look at a share of the waits tells before all are changed.
+    fn proposal(&self, entry: &Entry, sight: f64) -> Option<Proposal> {
         let (now, regret) = self.now?;
         let keep = Proposal { change: Change::Keep, to_s: finite(now.seconds()), step_limited: false };
         if regret.expected - self.regret.expected <= entry.guard.slack {
             return Some(keep);
         }
-        let (now, goal) = (now.seconds(), if self.wait_it_out { f64::INFINITY } else { self.at });
+        let now = now.seconds();
+        let goal = match self.wait_it_out {
+            _ if self.at > sight && now < self.at && self.sides.disagree() => now.max(sight),
+            true => f64::INFINITY,
+            false => self.at,
+        };
         let step = entry.guard.largest_step;
         Some(match goal.partial_cmp(&now) {
             Some(std::cmp::Ordering::Greater) => {

@@ -12,6 +12,7 @@ pub use shift::Shift;
 pub use streams::Terms;
 
 use crate::advice::{Action, Advice, Caution, Decision, Evidence, RemainingWait, Tail, TailClass};
+use crate::curve::ENOUGH;
 use crate::policy::Entry;
 use crate::say;
 use crate::stopping::universal_schedule;
@@ -65,7 +66,10 @@ impl<'a> Case<'a> {
 /// # Ok::<(), outwait::wait::WaitError>(())
 /// ```
 pub fn advise(case: &Case<'_>, entry: &Entry, seed: u64) -> Advice {
-    let cells = case.tally.first_attempts();
+    let all = case.tally.first_attempts();
+    // Before the data are cut where nobody is watched: what hangs is older than that.
+    let open = all.waiting.clone();
+    let cells = all.before_gap(ENOUGH);
     let mut advice = Advice {
         stream: case.stream.to_owned(),
         kind: entry.kind.name().to_owned(),
@@ -78,7 +82,7 @@ pub fn advise(case: &Case<'_>, entry: &Entry, seed: u64) -> Advice {
     let bounds = Bounds::of(&cells, entry);
     let judgement = match &bounds {
         Some(bounds) if cells.totals()[0] >= LEAST_COMPLETIONS => {
-            Judgement::of(&cells, &case.tally.retries(), entry, bounds, case.tally, seed)
+            Judgement::of(&cells, &open, entry, bounds, case.tally, seed)
         }
         _ => None,
     };
