@@ -40,7 +40,7 @@ pub(super) fn all(
     if let Some((judgement, settled)) =
         decided.filter(|_| matches!(advice.advice.action, Action::GiveUpAfter | Action::WaitItOut))
     {
-        found.extend(edge_of_sight(judgement, settled));
+        found.extend(edge_of_sight(judgement, settled, advice));
         found.extend(not_repeatable(entry, settled));
         found.extend(heavier_load(settled));
         found.extend(load_ceiling(entry, settled));
@@ -90,11 +90,24 @@ pub(super) fn borrowed(pooled: &Pooled) -> Caution {
     )
 }
 
-/// Whether the optimum may lie where a timeout hides the data.
-fn edge_of_sight(judgement: &Judgement, settled: &Settled) -> Option<Caution> {
+/// Whether the optimum may lie where a timeout hides the data, or where too few waits lead.
+fn edge_of_sight(judgement: &Judgement, settled: &Settled, advice: &Advice) -> Option<Caution> {
     let reaches_past = settled.at > judgement.sight || settled.sides.beyond > 0.05;
     if judgement.unseen < 0.005 || !reaches_past {
         return None;
+    }
+    let (unseen, sight) = (say::percent(judgement.unseen), say::duration(judgement.sight));
+    let beyond = format!(
+        "{} of the weight puts the best time past that, where the stated loss covers what the fitted laws differ in but \
+         not what no wait has shown",
+        say::percent(settled.sides.beyond)
+    );
+    if advice.evidence.gave_up + advice.evidence.waiting == 0 {
+        return Some(caution(
+            "edge_of_sight",
+            format!("{unseen} of the waits lasted longer than {sight}, too few to say what comes after, and {beyond}"),
+            "weigh again with more waits",
+        ));
     }
     let remedy = match settled.sides.median_beyond {
         Some(to) if settled.sides.disagree() => format!(
@@ -105,13 +118,7 @@ fn edge_of_sight(judgement: &Judgement, settled: &Settled) -> Option<Caution> {
     };
     Some(caution(
         "edge_of_sight",
-        format!(
-            "{} of the waits are cut off at {} and {} of the weight puts the best time past that, where the stated loss \
-             covers what the fitted laws differ in but not what no wait has shown",
-            say::percent(judgement.unseen),
-            say::duration(judgement.sight),
-            say::percent(settled.sides.beyond)
-        ),
+        format!("{unseen} of the waits are still open at {sight}, past which hardly any were watched, and {beyond}"),
         remedy,
     ))
 }

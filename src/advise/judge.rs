@@ -18,7 +18,7 @@ use crate::stopping::{
     flips_at, stickiness,
 };
 use crate::tail::{self, Draw, Ensemble, LEAST_WEIGHT, RemainingWait, TailClass, Verdict, verdict};
-use crate::tally::{Cause, Cells, Sample, Tally};
+use crate::tally::{Cause, Cells, Mass, Sample, Tally};
 
 /// Replicates of the empirical curve (RECIPE's fourth section).
 const REPLICATES: usize = 40;
@@ -28,6 +28,10 @@ const NINETY: f64 = 1.644_853_626_951_472_2;
 const HOLDING_POINTS: usize = 24;
 /// Extra load of a second copy where the policy names no ceiling: the common 5% (Dean & Barroso 2013).
 const COPY_LOAD: f64 = 0.05;
+/// What a time may lose, a share, to lie a little after the last of a bulk rather than a little before; and the steps in
+/// which it is sought.
+const NEXT_TO_NOTHING: f64 = 5e-4;
+const LATER: i32 = 64;
 /// The share of requests that must be over for a total to count as late.
 const LATE: f64 = 0.999;
 /// How much longer a late total must be with a timer than without.
@@ -97,10 +101,11 @@ pub(crate) enum LoadCeiling {
 }
 
 impl Judgement {
-    /// `None` where no law at all can be fitted and no curve drawn.
+    /// `None` where no law at all can be fitted and no curve drawn. `open`: every wait that is open, also those that are
+    /// not among the cells because nobody is watched at the ages before theirs.
     pub(crate) fn of(
         cells: &Cells,
-        retries: &Cells,
+        open: &[Mass],
         entry: &Entry,
         bounds: &Bounds,
         tally: &Tally,
@@ -119,7 +124,7 @@ impl Judgement {
             .map(|hazard| grid.ages().iter().map(|&t| hazard.cumulative(t)).collect())
             .unwrap_or_default();
         let replicates = replicates(&table, &ensemble, &failure, &grid, seed);
-        let verdict = verdict(&sample, &cells.waiting, &ensemble, &grid, &replicates);
+        let verdict = verdict(&sample, open, &ensemble, &grid, &replicates);
         let sight = table.sight();
         let mut judgement = Judgement {
             verdict,
@@ -141,7 +146,7 @@ impl Judgement {
             worth.pause.failed *= 0.5;
             worth.pause.gave_up *= 0.5;
         }
-        let sticky = sticky(cells, retries, entry, &curve);
+        let sticky = sticky(cells, &tally.retries(), entry, &curve);
         worth.sticky = sticky.as_ref().map_or(0.0, |s| s.value);
         let scene = Scene { entry, bounds, grid: &grid, worth, retry, empirical: &empirical, sight, tally };
         judgement.outcome = scene.settle(&judgement, &failure, failing.as_ref(), &replicates, sticky);
@@ -369,8 +374,9 @@ impl Scene<'_> {
             .collect()
     }
 
-    /// The choice moved to the best age of the exact curve within a step of the grid. Where no family fits, completions may
-    /// stop at an age that lies between two of the grid, and a time just before it would cut the last of them.
+    /// The choice moved to the best age of the exact curve within a step of the grid, or as much later as costs next to
+    /// nothing. Where no family fits, completions may stop at an age that lies between two of the grid, and a time just
+    /// before it would cut the last of them.
     fn refined(&self, choice: Choice, ages: &[f64]) -> Choice {
         let i = ages.partition_point(|&t| t < choice.at);
         let (from, upto) = (ages[i.saturating_sub(1)], ages[(i + 1).min(ages.len() - 1)]);
@@ -379,7 +385,10 @@ impl Scene<'_> {
         }
         let exact = |limits| {
             let objective = Objective::new(self.empirical, &self.worth, &self.retry, limits).ok()?;
-            stopping::best(&objective).ok().map(|best| best.at)
+            let best = stopping::best(&objective).ok()?;
+            let least = best.score - NEXT_TO_NOTHING * best.score.abs();
+            let later = |i: i32| best.at + (upto - best.at) * f64::from(i) / f64::from(LATER);
+            (0..LATER).rev().map(later).find(|&t| objective.score(t) >= least)
         };
         let Some(at) = Limits::new(from, upto).ok().and_then(exact) else { return choice };
         let holding = |[from, upto]: [f64; 2]| [from.min(at), upto.max(at)];
@@ -535,7 +544,7 @@ impl Settled {
         d.p99_s = self.advised.p99_s;
         d.now = self.in_force;
         d.never = Some(self.never);
-        d.proposal = self.proposal(entry);
+        d.proposal = self.proposal(entry, judgement.sight);
         d.rivals.clone_from(&self.rivals);
         d.holding_on.clone_from(&self.holding_on);
         d.retry_budget = self.retry_budget;
@@ -545,14 +554,21 @@ impl Settled {
         d.schedule_s.clone_from(&self.schedule);
     }
 
-    /// The next change of the time in force: none below the slack, none beyond the largest step.
-    fn proposal(&self, entry: &Entry) -> Option<Proposal> {
+    /// The next change of the time in force: none below the slack, none beyond the largest step, and none past the edge of
+    /// sight while the curves disagree on which side of it the best time lies. Such a change would be undone by the next
+    /// week's data as often as not; a look at a share of the waits tells before all are changed.
+    fn proposal(&self, entry: &Entry, sight: f64) -> Option<Proposal> {
         let (now, regret) = self.now?;
         let keep = Proposal { change: Change::Keep, to_s: finite(now.seconds()), step_limited: false };
         if regret.expected - self.regret.expected <= entry.guard.slack {
             return Some(keep);
         }
-        let (now, goal) = (now.seconds(), if self.wait_it_out { f64::INFINITY } else { self.at });
+        let now = now.seconds();
+        let goal = match self.wait_it_out {
+            _ if self.at > sight && now < self.at && self.sides.disagree() => now.max(sight),
+            true => f64::INFINITY,
+            false => self.at,
+        };
         let step = entry.guard.largest_step;
         Some(match goal.partial_cmp(&now) {
             Some(std::cmp::Ordering::Greater) => {

@@ -13,6 +13,7 @@ pub use shift::Shift;
 pub use streams::{Lenders, Terms};
 
 use crate::advice::{Action, Advice, Caution, Decision, Evidence, RemainingWait, Tail, TailClass};
+use crate::curve::ENOUGH;
 use crate::policy::Entry;
 use crate::say;
 use crate::stopping::universal_schedule;
@@ -70,9 +71,11 @@ impl<'a> Case<'a> {
 /// ```
 pub fn advise(case: &Case<'_>, entry: &Entry, seed: u64) -> Advice {
     let own = case.tally.first_attempts();
+    // Before the data are cut where nobody is watched: what hangs is older than that.
+    let open = own.waiting.clone();
     let thin = own.totals()[0] < f64::from(entry.guard.evidence);
     let pooled = if thin { pool(&own, case.siblings) } else { None };
-    let cells = pooled.as_ref().map_or(&own, |p| &p.cells);
+    let cells = pooled.as_ref().map_or(&own, |p| &p.cells).clone().before_gap(ENOUGH);
     let mut advice = Advice {
         stream: case.stream.to_owned(),
         kind: entry.kind.name().to_owned(),
@@ -83,10 +86,10 @@ pub fn advise(case: &Case<'_>, entry: &Entry, seed: u64) -> Advice {
         cautions: Vec::new(),
     };
     advice.evidence.borrowed_share = pooled.as_ref().map(|p| p.share);
-    let bounds = Bounds::of(cells, entry);
+    let bounds = Bounds::of(&cells, entry);
     let judgement = match &bounds {
         Some(bounds) if cells.totals()[0] >= LEAST_COMPLETIONS => {
-            Judgement::of(cells, &case.tally.retries(), entry, bounds, case.tally, seed)
+            Judgement::of(&cells, &open, entry, bounds, case.tally, seed)
         }
         _ => None,
     };
@@ -95,7 +98,7 @@ pub fn advise(case: &Case<'_>, entry: &Entry, seed: u64) -> Advice {
         advice.tail = summary::tail(&judgement.verdict);
         advice.fits = summary::fits(&judgement.ensemble);
     }
-    advice.advice = decide(cells, entry, bounds.as_ref(), judgement.as_ref());
+    advice.advice = decide(&cells, entry, bounds.as_ref(), judgement.as_ref());
     let shift = case.periods.and_then(|(earlier, latest)| {
         let bounds = bounds.as_ref()?;
         Shift::between(&earlier.first_attempts(), &latest.first_attempts(), entry, bounds)
