@@ -209,6 +209,8 @@ pub struct Decision {
     pub now: Option<Outcome>,
     /// Never giving up (waiting up to the ceiling), judged the same way.
     pub never: Option<Outcome>,
+    /// The next change of the time in force, within the guards; absent without a time in force.
+    pub proposal: Option<Proposal>,
     /// Common rules on the same evidence.
     pub rivals: Vec<Rival>,
     /// Worth of holding on at an age, above giving up now: `[age in s, worth]`, first 0 where it ends.
@@ -225,6 +227,29 @@ pub struct Decision {
     pub schedule_s: Vec<f64>,
     /// A stop-gap while evidence is gathered, s per attempt in turn; labelled as one.
     pub stop_gap_s: Vec<f64>,
+}
+
+/// Which way to move the time in force.
+#[derive(Clone, Copy, Debug, PartialEq, Eq, Serialize, Deserialize)]
+#[serde(rename_all = "snake_case")]
+pub enum Change {
+    /// What a change would win is below the slack.
+    Keep,
+    /// Hold on longer.
+    Raise,
+    /// Give up sooner.
+    Lower,
+}
+
+/// The next change of the time in force.
+#[derive(Clone, Copy, Debug, PartialEq, Serialize, Deserialize)]
+pub struct Proposal {
+    /// Which way.
+    pub change: Change,
+    /// To what, s; absent for never.
+    pub to_s: Option<f64>,
+    /// Whether the largest step of the guard keeps it short of the advised time.
+    pub step_limited: bool,
 }
 
 /// What a give-up time does.

@@ -4,20 +4,16 @@
 //! the future of a wait looks like), [`stopping::Worth`] (what time is worth).
 
 pub mod advice;
+pub mod advise;
+pub mod cli;
 pub mod curve;
 pub mod demo;
+pub mod intake;
 pub mod numeric;
 pub mod outlook;
+pub mod policy;
 pub mod say;
 pub mod stopping;
 pub mod tail;
 pub mod tally;
 pub mod wait;
-pub mod cli {
-    //! Placeholder until the commands stand.
-    use std::process::ExitCode;
-    /// Runs a command.
-    pub fn run(_: impl IntoIterator<Item = std::ffi::OsString>) -> ExitCode {
-        ExitCode::SUCCESS
-    }
-}

@@ -1,6 +1,6 @@
 //! One way to say a thing: durations in and out, numbers, shares. Pure text.
 
-use jiff::{Span, SpanRelativeTo, Unit};
+use jiff::{Span, SpanRelativeTo, Timestamp, Unit};
 
 /// Why a text is not a duration.
 #[derive(Clone, Debug, PartialEq, Eq, thiserror::Error)]
@@ -84,6 +84,12 @@ pub fn number(value: f64) -> String {
     format!("{value:.*}", (2 - magnitude).max(0) as usize)
 }
 
+/// A Unix time in seconds as RFC 3339 in UTC, to the second; `None` outside the years that has.
+pub fn time(unix: f64) -> Option<String> {
+    let time = Timestamp::from_second(unix.floor() as i64).ok()?;
+    Some(time.to_string())
+}
+
 /// A share as a percentage: `"3.1%"`, `"<0.1%"`, `"99.95%"`.
 pub fn percent(share: f64) -> String {
     let p = 100.0 * share;
@@ -148,6 +154,8 @@ mod tests {
         assert_eq!(number(9.999), "10.0");
         assert_eq!(number(1.0e9), "1.00e9");
         assert_eq!(count(1_204_311.0), "1,204,311");
+        assert_eq!(time(1_764_547_200.25).as_deref(), Some("2025-12-01T00:00:00Z"));
+        assert_eq!(time(1e300), None);
         assert_eq!(percent(0.0312), "3.1%");
         assert_eq!(percent(0.0001), "<0.1%");
     }

@@ -1,6 +1,6 @@
 //! Two ways to end that compete: the cumulative incidence of each. METHODS.md section 2.
 
-use super::interval::{Interval, least_when_all};
+use super::interval::{ConfidenceInterval, least_when_all};
 use super::life_table::{LifeTable, place};
 use crate::tally::Cause;
 
@@ -99,7 +99,7 @@ impl AalenJohansen {
     /// Confidence interval of the cumulative incidence on the log(-log) scale (Marubini & Valsecchi 1995, section
     /// 10; Kalbfleisch & Prentice 2002, section 8.2). Where that has no value (none of this kind yet, or all):
     /// the exact bound for none, or all, of those at risk at the last ending so far.
-    pub fn interval(&self, cause: Cause, t: f64, level: f64) -> Interval {
+    pub fn interval(&self, cause: Cause, t: f64, level: f64) -> ConfidenceInterval {
         let (passed, share) = place(&self.points, |p| (p.over, p.time), t);
         let before = self.interval_after(cause, passed, level);
         if share > 0.0 {
@@ -109,18 +109,18 @@ impl AalenJohansen {
         }
     }
 
-    fn interval_after(&self, cause: Cause, passed: usize, level: f64) -> Interval {
+    fn interval_after(&self, cause: Cause, passed: usize, level: f64) -> ConfidenceInterval {
         if passed == 0 {
-            return Interval { low: 0.0, high: 1.0 - least_when_all(self.intact, level) };
+            return ConfidenceInterval { low: 0.0, high: 1.0 - least_when_all(self.intact, level) };
         }
         let p = self.points[passed - 1];
         let (share, variance) = p.share(cause);
         if share <= 0.0 {
-            Interval { low: 0.0, high: 1.0 - least_when_all(p.at_risk, level) }
+            ConfidenceInterval { low: 0.0, high: 1.0 - least_when_all(p.at_risk, level) }
         } else if share < 1.0 {
-            Interval::log_log(share, variance.sqrt() / share, level)
+            ConfidenceInterval::log_log(share, variance.sqrt() / share, level)
         } else {
-            Interval { low: least_when_all(self.points[0].at_risk, level), high: 1.0 }
+            ConfidenceInterval { low: least_when_all(self.points[0].at_risk, level), high: 1.0 }
         }
     }
 

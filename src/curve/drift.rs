@@ -4,7 +4,7 @@
 //! that is in waiting time. What the give-up time of the old period loses under the new law is a question of worth
 //! and is answered in [`crate::stopping`].
 
-use super::interval::Interval;
+use super::interval::ConfidenceInterval;
 use super::kaplan_meier::KaplanMeier;
 use super::life_table::{CurveError, LifeTable};
 use super::log_rank::{Emphasis, LogRank, log_rank};
@@ -68,10 +68,10 @@ impl Drift {
 
     /// How much longer a wait lasts in the new period, up to [`Drift::sight`], s (negative: shorter), with its
     /// confidence interval.
-    pub fn longer(&self, level: f64) -> (f64, Interval) {
+    pub fn longer(&self, level: f64) -> (f64, ConfidenceInterval) {
         let difference = self.mean_new.value - self.mean_old.value;
         let error = (self.mean_new.variance + self.mean_old.variance).sqrt();
-        (difference, Interval::plain(difference, error, level, -self.sight, self.sight))
+        (difference, ConfidenceInterval::plain(difference, error, level, -self.sight, self.sight))
     }
 }
 

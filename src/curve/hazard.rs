@@ -1,6 +1,6 @@
 //! The hazard itself, smoothed. METHODS.md section 2.
 
-use super::interval::Interval;
+use super::interval::ConfidenceInterval;
 use super::life_table::LifeTable;
 use super::nelson_aalen::NelsonAalen;
 
@@ -49,11 +49,11 @@ pub struct HazardEstimate {
 
 impl HazardEstimate {
     /// Confidence interval on the log scale, 1/s; where the estimate is 0, from 0 to `z` standard errors.
-    pub fn interval(&self, level: f64) -> Interval {
+    pub fn interval(&self, level: f64) -> ConfidenceInterval {
         if self.hazard > 0.0 {
-            Interval::log(self.hazard, self.standard_error, level)
+            ConfidenceInterval::log(self.hazard, self.standard_error, level)
         } else {
-            Interval::plain(0.0, self.standard_error, level, 0.0, f64::MAX)
+            ConfidenceInterval::plain(0.0, self.standard_error, level, 0.0, f64::MAX)
         }
     }
 }

@@ -3,7 +3,7 @@
 //! They serve the verdict on the tail, not the decision. `xi` is the extreme-value index: larger is heavier, 0 is
 //! exponential, below 0 the tail ends; `alpha = 1/xi` where `xi > 0`.
 
-use super::interval::Interval;
+use super::interval::ConfidenceInterval;
 use crate::tally::Sample;
 
 /// The logarithms of the top ages over a threshold, summed up.
@@ -49,8 +49,8 @@ pub struct TailIndex {
 
 impl TailIndex {
     /// Confidence interval `xi ± z·se`.
-    pub fn interval(&self, level: f64) -> Interval {
-        Interval::plain(self.xi, self.standard_error, level, f64::MIN, f64::MAX)
+    pub fn interval(&self, level: f64) -> ConfidenceInterval {
+        ConfidenceInterval::plain(self.xi, self.standard_error, level, f64::MIN, f64::MAX)
     }
 }
 
@@ -135,7 +135,7 @@ impl TopAges {
     }
 
     /// The moment estimator (Dekkers, Einmahl & de Haan 1989, *Ann. Statist.* 17:1833), of any sign:
-    /// `M1 + 1 - ½ / (1 - M1²/M2)`, with the standard error of their Theorem 3.1 (corollary). `None` where all the
+    /// `M1 + 1 - ½ / (1 - M1²/M2)`, with its asymptotic standard error. `None` where all the
     /// excesses are equal.
     pub fn moment(&self) -> Option<TailIndex> {
         let spread = 1.0 - self.mean * self.mean / self.mean_square;

@@ -7,37 +7,40 @@ const MAX_LEVEL: f64 = 1.0 - 1e-12;
 
 /// A two-sided interval, `low <= high`.
 #[derive(Clone, Copy, Debug, PartialEq)]
-pub struct Interval {
+pub struct ConfidenceInterval {
     /// Lower end.
     pub low: f64,
     /// Upper end.
     pub high: f64,
 }
 
-impl Interval {
+impl ConfidenceInterval {
     /// `value ± z · error`, cut to `[floor, ceiling]`.
-    pub(super) fn plain(value: f64, error: f64, level: f64, floor: f64, ceiling: f64) -> Interval {
+    pub(super) fn plain(value: f64, error: f64, level: f64, floor: f64, ceiling: f64) -> ConfidenceInterval {
         let reach = quantile(level) * error;
-        Interval { low: (value - reach).clamp(floor, ceiling), high: (value + reach).clamp(floor, ceiling) }
+        ConfidenceInterval {
+            low: (value - reach).clamp(floor, ceiling),
+            high: (value + reach).clamp(floor, ceiling),
+        }
     }
 
     /// On the log scale, for a positive value: `value · exp(±z · error / value)`.
-    pub(super) fn log(value: f64, error: f64, level: f64) -> Interval {
+    pub(super) fn log(value: f64, error: f64, level: f64) -> ConfidenceInterval {
         let factor = (quantile(level) * error / value).min(700.0).exp();
-        Interval { low: value / factor, high: value * factor }
+        ConfidenceInterval { low: value / factor, high: value * factor }
     }
 
     /// On the log(-log) scale, for a probability `p` strictly between 0 and 1 with the standard error `error`
     /// of `ln p` (Kalbfleisch & Prentice 2002, section 1.4): `p^{exp(±z · error / |ln p|)}`.
-    pub(super) fn log_log(p: f64, error: f64, level: f64) -> Interval {
+    pub(super) fn log_log(p: f64, error: f64, level: f64) -> ConfidenceInterval {
         let log = p.ln();
         let factor = (quantile(level) * error / -log).min(700.0).exp();
-        Interval { low: (log * factor).exp(), high: (log / factor).exp() }
+        ConfidenceInterval { low: (log * factor).exp(), high: (log / factor).exp() }
     }
 
     /// The point between two intervals, each end by itself: `share` of the way from `self` to `next`.
-    pub(super) fn towards(self, next: Interval, share: f64) -> Interval {
-        Interval {
+    pub(super) fn towards(self, next: ConfidenceInterval, share: f64) -> ConfidenceInterval {
+        ConfidenceInterval {
             low: self.low + share * (next.low - self.low),
             high: self.high + share * (next.high - self.high),
         }
@@ -84,7 +87,7 @@ mod tests {
     fn ends_stay_in_range() {
         for p in [1e-300, 1e-9, 0.5, 1.0 - 1e-12] {
             for error in [0.0, 1e-3, 1e6] {
-                let i = Interval::log_log(p, error, 0.95);
+                let i = ConfidenceInterval::log_log(p, error, 0.95);
                 assert!(0.0 <= i.low && i.low <= i.high && i.high <= 1.0, "{p} {error} {i:?}");
             }
         }

@@ -1,6 +1,6 @@
 //! The survival curve by the product-limit estimate. METHODS.md section 2.
 
-use super::interval::{Interval, least_when_all};
+use super::interval::{ConfidenceInterval, least_when_all};
 use super::life_table::{LifeTable, place};
 
 /// The Kaplan-Meier estimate with left truncation: `S(t) = Π_{t_j <= t} (1 - d_j / n_j)`, of any ending (of one
@@ -78,7 +78,7 @@ impl KaplanMeier {
     ///
     /// Where that has no value: before the first ending, from the exact bound for no ending among those watched
     /// from their start up to it, to 1; after the curve has reached 0, from 0 to the upper end just before.
-    pub fn interval(&self, t: f64, level: f64) -> Interval {
+    pub fn interval(&self, t: f64, level: f64) -> ConfidenceInterval {
         let (passed, share) = self.place(t);
         let before = self.interval_after(passed, level);
         if share > 0.0 { before.towards(self.interval_after(passed + 1, level), share) } else { before }
@@ -111,17 +111,17 @@ impl KaplanMeier {
         if passed == 0 { 1.0 } else { self.points[passed - 1].survival }
     }
 
-    fn interval_after(&self, passed: usize, level: f64) -> Interval {
+    fn interval_after(&self, passed: usize, level: f64) -> ConfidenceInterval {
         if passed == 0 {
-            return Interval { low: least_when_all(self.intact, level), high: 1.0 };
+            return ConfidenceInterval { low: least_when_all(self.intact, level), high: 1.0 };
         }
         let p = self.points[passed - 1];
         if p.survival > 0.0 && p.survival < 1.0 {
-            Interval::log_log(p.survival, p.variance.sqrt() / p.survival, level)
+            ConfidenceInterval::log_log(p.survival, p.variance.sqrt() / p.survival, level)
         } else if p.survival > 0.0 {
-            Interval { low: least_when_all(p.at_risk, level), high: 1.0 }
+            ConfidenceInterval { low: least_when_all(p.at_risk, level), high: 1.0 }
         } else {
-            Interval { low: 0.0, high: self.interval_after(passed - 1, level).high }
+            ConfidenceInterval { low: 0.0, high: self.interval_after(passed - 1, level).high }
         }
     }
 }

@@ -52,6 +52,7 @@ pub struct LifeTable {
     left_out: f64,
     intact: f64,
     iterations: usize,
+    gap: f64,
 }
 
 /// Why there is no life table.
@@ -128,15 +129,15 @@ impl LifeTable {
             // All that was counted lies in (0, ∞).
             return Err(CurveError::OneBucket { over: 0.0, upto: f64::INFINITY });
         }
-        let (rows, iterations) = if parts.is_disjoint() {
-            (parts.tabulate(), 0)
+        let (mut rows, iterations, gap) = if parts.is_disjoint() {
+            (parts.tabulate(), 0, 0.0)
         } else {
             let solution = turnbull::share_out(&parts)?;
-            (solution.rows, solution.iterations)
+            (solution.rows, solution.iterations, solution.gap)
         };
-        let (kept, left_out) = drop_emptying(rows, &parts.entries);
+        let left_out = drop_emptying(&mut rows, &parts.entries);
         let (sight, last) = parts.sight();
-        let reach = kept.first().map_or(sight, |r| r.upto);
+        let reach = rows.first().map_or(sight, |r| r.upto);
         Ok(LifeTable {
             intact: parts.intact(reach),
             total: parts.total,
@@ -145,7 +146,8 @@ impl LifeTable {
             open: parts.open,
             left_out,
             iterations,
-            rows: kept,
+            gap,
+            rows,
         })
     }
 
@@ -184,6 +186,11 @@ impl LifeTable {
     /// Rounds that sharing out overlapping buckets took; 0 for disjoint ones.
     pub fn iterations(&self) -> usize {
         self.iterations
+    }
+
+    /// Bound on what the likelihood of that still lacked, nats per wait, at most 1e-4; 0 for disjoint buckets.
+    pub fn gap(&self) -> f64 {
+        self.gap
     }
 
     /// Number watched from age 0 that reached the first ending.
@@ -290,8 +297,7 @@ impl Parts {
 
     /// One row for each of disjoint cells.
     fn tabulate(&self) -> Vec<Row> {
-        let bounds: Vec<(f64, f64)> = self.events.iter().map(|e| (e.over, e.upto)).collect();
-        let others = Others::new(self, &bounds);
+        let others = Others::new(self, self.events.len(), |i| (self.events[i].over, self.events[i].upto));
         let mut rows: Vec<Row> = self
             .events
             .iter()
@@ -347,23 +353,23 @@ pub(super) struct Others {
 }
 
 impl Others {
-    /// `bounds`: disjoint intervals in order of age.
-    pub(super) fn new(parts: &Parts, bounds: &[(f64, f64)]) -> Others {
-        let mut others = Others { left: vec![0.0; bounds.len() + 1], entered: vec![0.0; bounds.len() + 1] };
+    /// `bounds`: disjoint intervals in order of age, `n` of them.
+    pub(super) fn new(parts: &Parts, n: usize, bounds: impl Fn(usize) -> (f64, f64)) -> Others {
+        let mut others = Others { left: vec![0.0; n + 1], entered: vec![0.0; n + 1] };
         let mut i = 0;
         for m in &parts.censored {
             // Endings precede: an exact age at the same time, an interval begun before.
-            while i < bounds.len() && (bounds[i].0 < m.age || bounds[i] == (m.age, m.age)) {
+            while i < n && (bounds(i).0 < m.age || bounds(i) == (m.age, m.age)) {
                 i += 1;
             }
             others.left[i] += m.weight;
         }
         i = 0;
         for m in &parts.entries {
-            while i < bounds.len() && bounds[i].1 <= m.age {
+            while i < n && bounds(i).1 <= m.age {
                 i += 1;
             }
-            if i < bounds.len() && bounds[i].0 < m.age {
+            if i < n && bounds(i).0 < m.age {
                 others.entered[i] += 0.5 * m.weight;
                 others.entered[i + 1] += 0.5 * m.weight;
             } else {
@@ -386,11 +392,15 @@ impl Others {
 }
 
 /// Takes out the rows after which nobody would be left although others are still to enter.
-fn drop_emptying(rows: Vec<Row>, entries: &[Mass]) -> (Vec<Row>, f64) {
+fn drop_emptying(rows: &mut Vec<Row>, entries: &[Mass]) -> f64 {
     let last_entry = entries.last().map_or(0.0, |m| m.age);
-    let emptying = |r: &Row| r.upto <= last_entry && r.at_risk <= r.ended() * (1.0 + 1e-12);
-    let left_out = rows.iter().filter(|r| emptying(r)).map(Row::ended).sum();
-    (rows.into_iter().filter(|r| !emptying(r)).collect(), left_out)
+    let mut left_out = 0.0;
+    rows.retain(|r| {
+        let emptying = r.upto <= last_entry && r.at_risk <= r.ended() * (1.0 + 1e-12);
+        left_out += if emptying { r.ended() } else { 0.0 };
+        !emptying
+    });
+    left_out
 }
 
 /// A wait carried over from one window into the next leaves the first and enters the second at the same age:

@@ -122,7 +122,7 @@ fn table_on(parts: &Parts, bounds: &[(f64, f64)]) -> Vec<Row> {
         }
         rows[i].done += e.done + e.failed;
     }
-    Others::new(parts, bounds).count_at_risk(&mut rows);
+    Others::new(parts, bounds.len(), |i| bounds[i]).count_at_risk(&mut rows);
     rows
 }
 

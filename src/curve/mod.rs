@@ -27,7 +27,7 @@ pub use drift::Drift;
 pub use empirical::Empirical;
 pub use hazard::{HazardEstimate, SmoothedHazard};
 pub use hill::{TailIndex, TopAges, TopError};
-pub use interval::Interval;
+pub use interval::ConfidenceInterval;
 pub use kaplan_meier::{KaplanMeier, Point};
 pub use life_table::{CurveError, ENOUGH, LifeTable, Row};
 pub use log_rank::{Emphasis, LogRank, ObservedExpected, log_rank};

@@ -1,6 +1,6 @@
 //! The cumulative hazard, step by step. METHODS.md section 2.
 
-use super::interval::{Interval, least_when_all};
+use super::interval::{ConfidenceInterval, least_when_all};
 use super::life_table::{LifeTable, place};
 
 /// The Nelson-Aalen estimate `H(t) = Σ_{t_j <= t} d_j / n_j` (Nelson 1969; Aalen 1978); straight within intervals.
@@ -70,21 +70,21 @@ impl NelsonAalen {
 
     /// Confidence interval of `H(t)` on the log scale (Kalbfleisch & Prentice 2002, section 1.4); before the
     /// first ending from 0 to the exact bound for no ending among those watched from their start up to it.
-    pub fn interval(&self, t: f64, level: f64) -> Interval {
+    pub fn interval(&self, t: f64, level: f64) -> ConfidenceInterval {
         let (passed, share) = place(&self.points, |p| (p.over, p.time), t);
         let before = self.interval_after(passed, level);
         if share > 0.0 { before.towards(self.interval_after(passed + 1, level), share) } else { before }
     }
 
-    fn interval_after(&self, passed: usize, level: f64) -> Interval {
+    fn interval_after(&self, passed: usize, level: f64) -> ConfidenceInterval {
         if passed == 0 {
-            return Interval {
+            return ConfidenceInterval {
                 low: 0.0,
                 high: -least_when_all(self.intact, level).max(f64::MIN_POSITIVE).ln(),
             };
         }
         let p = self.points[passed - 1];
-        Interval::log(p.cumulative_hazard, p.variance.sqrt(), level)
+        ConfidenceInterval::log(p.cumulative_hazard, p.variance.sqrt(), level)
     }
 
     fn between(&self, t: f64, value: impl Fn(&HazardPoint) -> f64) -> f64 {

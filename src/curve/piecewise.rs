@@ -65,6 +65,11 @@ impl PiecewiseHazard {
         Some(PiecewiseHazard { starts, rates })
     }
 
+    /// Hazard of the last piece, 1/s, which runs on for ever.
+    pub fn last_rate(&self) -> f64 {
+        self.rates[self.rates.len() - 1]
+    }
+
     /// Cumulative hazard at an age in s.
     pub fn cumulative(&self, age: f64) -> f64 {
         let mut sum = 0.0;

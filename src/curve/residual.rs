@@ -1,6 +1,6 @@
 //! Time to expect: the restricted mean, and the restricted mean residual life. METHODS.md section 2.
 
-use super::interval::Interval;
+use super::interval::ConfidenceInterval;
 use super::kaplan_meier::KaplanMeier;
 use super::life_table::{LifeTable, place};
 
@@ -36,8 +36,8 @@ pub struct MeanTime {
 
 impl MeanTime {
     /// Confidence interval `value ± z·se` within `[0, limit]`, s.
-    pub fn interval(&self, level: f64) -> Interval {
-        Interval::plain(self.value, self.variance.sqrt(), level, 0.0, self.limit)
+    pub fn interval(&self, level: f64) -> ConfidenceInterval {
+        ConfidenceInterval::plain(self.value, self.variance.sqrt(), level, 0.0, self.limit)
     }
 }
 

@@ -13,41 +13,53 @@ pub struct Average {
     sight: f64,
 }
 
-impl Average {
-    /// Averages curves that cover at least the grid up to its ceiling. `None` if no weight is above 0.
-    pub fn of<'a>(
-        grid: &Grid,
-        curves: impl IntoIterator<Item = (f64, &'a Sampled)>,
-        sight: f64,
-    ) -> Option<Average> {
-        let n = grid.decide().end;
-        let mut sum =
-            Sampled { survival: vec![0.0; n], area: vec![0.0; n], done: vec![0.0; n], failed: vec![0.0; n] };
-        let mut total = 0.0;
-        for (weight, curve) in curves {
-            if weight <= 0.0 || curve.survival.len() < n {
-                continue;
-            }
-            total += weight;
-            for (into, from) in [
-                (&mut sum.survival, &curve.survival),
-                (&mut sum.area, &curve.area),
-                (&mut sum.done, &curve.done),
-                (&mut sum.failed, &curve.failed),
-            ] {
-                into.iter_mut().zip(from).for_each(|(a, b)| *a += weight * b);
-            }
+/// Sums sampled curves as they are made, so that none need be kept.
+#[derive(Clone, Debug)]
+pub struct Averaging {
+    total: f64,
+    sum: Sampled,
+}
+
+impl Averaging {
+    /// Nothing yet, for curves on `grid` up to its ceiling.
+    pub fn new(grid: &Grid) -> Averaging {
+        let zero = || vec![0.0; grid.decide().end];
+        Averaging {
+            total: 0.0,
+            sum: Sampled { survival: zero(), area: zero(), done: zero(), failed: zero() },
         }
+    }
+
+    /// Adds a curve with its weight. One that is too short, or a weight that is not above 0, adds nothing.
+    pub fn add(&mut self, weight: f64, curve: &Sampled) {
+        let sum = &mut self.sum;
+        if !(weight > 0.0 && curve.survival.len() >= sum.survival.len()) {
+            return;
+        }
+        self.total += weight;
+        for (into, from) in [
+            (&mut sum.survival, &curve.survival),
+            (&mut sum.area, &curve.area),
+            (&mut sum.done, &curve.done),
+            (&mut sum.failed, &curve.failed),
+        ] {
+            into.iter_mut().zip(from).for_each(|(a, b)| *a += weight * b);
+        }
+    }
+
+    /// The average, with the age at which sight ends (s). `None` if nothing was added.
+    pub fn finish(self, grid: &Grid, sight: f64) -> Option<Average> {
+        let Averaging { total, sum } = self;
         if total <= 0.0 {
             return None;
         }
-        for column in [&mut sum.survival, &mut sum.area, &mut sum.done, &mut sum.failed] {
-            column.iter_mut().for_each(|v| *v /= total);
-        }
-        // A leading 0 makes every age a stretch of its own.
-        let with_origin = |first: f64, rest: Vec<f64>| std::iter::once(first).chain(rest).collect();
+        // A leading origin makes every age the end of a stretch.
+        let with_origin = |first: f64, rest: Vec<f64>| {
+            std::iter::once(first).chain(rest.into_iter().map(|v| v / total)).collect()
+        };
+        let n = sum.survival.len();
         Some(Average {
-            ages: with_origin(0.0, grid.ages()[..n].to_vec()),
+            ages: std::iter::once(0.0).chain(grid.ages()[..n].iter().copied()).collect(),
             curve: Sampled {
                 survival: with_origin(1.0, sum.survival),
                 area: with_origin(0.0, sum.area),
@@ -57,7 +69,9 @@ impl Average {
             sight,
         })
     }
+}
 
+impl Average {
     /// Last age it knows: the ceiling. Beyond it the curves stay where they are.
     pub fn end(&self) -> f64 {
         self.ages[self.ages.len() - 1]
@@ -133,7 +147,11 @@ mod tests {
         let curve =
             |rate: f64| Sampled::join(&grid, grid.ages().iter().map(|t| (-rate * t).exp()).collect(), &[]);
         let (slow, fast) = (curve(0.5), curve(2.0));
-        let mean = Average::of(&grid, [(1.0, &slow), (3.0, &fast)], 5.0).unwrap();
+        let mut sum = Averaging::new(&grid);
+        sum.add(1.0, &slow);
+        sum.add(3.0, &fast);
+        sum.add(f64::NAN, &fast);
+        let mean = sum.finish(&grid, 5.0).unwrap();
         for t in [0.02_f64, 0.7, 3.0, 19.0] {
             let truth = 0.25 * (-0.5 * t).exp() + 0.75 * (-2.0_f64 * t).exp();
             assert!((mean.survival(t) - truth).abs() < 1e-3, "{t}");
@@ -141,6 +159,6 @@ mod tests {
         }
         assert!((mean.faded_done(20.0, &|_| 2.0) - 2.0 * mean.done(20.0)).abs() < 1e-12);
         assert_eq!(mean.survival(0.0), 1.0);
-        assert!(Average::of(&grid, [(0.0, &slow)], 5.0).is_none());
+        assert!(Averaging::new(&grid).finish(&grid, 5.0).is_none());
     }
 }

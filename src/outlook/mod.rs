@@ -6,7 +6,7 @@
 mod average;
 mod grid;
 
-pub use average::Average;
+pub use average::{Average, Averaging};
 pub use grid::{Grid, Sampled};
 
 /// The two curves of one wait with their integral.

@@ -6,7 +6,7 @@ use crate::outlook::Sampled;
 
 /// What [`Doubt::choose`] may lose against the least expected regret by waiting up to the ceiling instead, since
 /// not to give up is the simpler advice.
-const SIMPLER: f64 = 0.0005;
+const SIMPLER: f64 = 0.005;
 /// Smallest share of the average best score by which a curve's regret is divided: a curve that hardly earns
 /// anything must not outvote all others.
 const SMALLEST_SCALE: f64 = 0.05;

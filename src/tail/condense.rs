@@ -2,6 +2,7 @@
 //! of a sample from which fits start. RECIPE's first section; METHODS.md section 3.
 
 use super::law::About;
+use crate::curve::{KaplanMeier, LifeTable};
 use crate::tally::{Interval, Mass, Sample};
 
 /// Quantile levels spaced evenly on the logit scale: they resolve both tails.
@@ -15,6 +16,11 @@ const FEW: usize = 100;
 const MARGIN: f64 = 1e-3;
 /// Fewest events in which a gap means anything.
 const CROWD: f64 = 8.0;
+/// A gap or overlap below this share of the narrower neighbour is none.
+const CRACK: f64 = 0.05;
+/// Endings at which a gap is sought, at most about so many: between two of them the curve drops by less than
+/// half a percent.
+pub(crate) const ENDINGS: usize = 256;
 /// Least spread assumed for logarithms, so that starts stay in reach when all ages are equal.
 const LEAST_LOG_SD: f64 = 0.05;
 
@@ -93,6 +99,7 @@ fn condense_events(events: &[Interval]) -> Vec<Interval> {
             from = upto;
         }
     }
+    close_cracks(&mut cells);
     cells.extend(open);
     cells
 }
@@ -118,6 +125,20 @@ fn join(run: &[Interval], cells: &mut Vec<Interval>) {
     }
 }
 
+/// Where neighbouring cells all but touch, as they do in the bulk of a large sample, gives them one common bound:
+/// the crack is no gap, and half as many survivals are wanted.
+fn close_cracks(cells: &mut [Interval]) {
+    for i in 1..cells.len() {
+        let (before, after) = (cells[i - 1], cells[i]);
+        let crack = (after.over - before.upto).abs();
+        if crack <= CRACK * (before.upto - before.over).min(after.upto - after.over) {
+            let bound = 0.5 * (before.upto + after.over);
+            cells[i - 1].upto = bound;
+            cells[i].over = bound;
+        }
+    }
+}
+
 /// Joins neighbouring masses at their mean age, which is exact to first order.
 fn condense_masses(masses: &[Mass]) -> Vec<Mass> {
     if masses.len() <= FEW {
@@ -139,11 +160,10 @@ fn condense_masses(masses: &[Mass]) -> Vec<Mass> {
     groups
 }
 
-/// Product-limit curve of a sample, evaluated just after its endings (Kaplan & Meier 1958), with left
-/// truncation. An interval counts at its upper end; endings precede censorings at the same age.
+/// Product-limit curve of a sample just after its endings, as plain columns: what fits are held against.
 #[derive(Clone, Debug, Default)]
 pub(crate) struct ProductLimit {
-    /// Distinct ages of endings, s.
+    /// Ages of endings, s; an interval counts at its upper end.
     pub(crate) ages: Vec<f64>,
     /// `Ŝ` just after each.
     pub(crate) survival: Vec<f64>,
@@ -152,38 +172,32 @@ pub(crate) struct ProductLimit {
 }
 
 impl ProductLimit {
+    /// The Kaplan-Meier curve; empty where the sample allows none (all endings in one bucket).
     pub(crate) fn of(sample: &Sample) -> ProductLimit {
         let mut curve = ProductLimit::default();
-        let total = sample.total();
-        let entries: f64 = sample.entries.iter().map(|m| m.weight).sum();
-        let (mut left, mut entered) = (0.0, total - entries);
-        let (mut censored, mut late) = (sample.censored.iter().peekable(), sample.entries.iter().peekable());
-        let mut survival = 1.0;
-        for together in sample.events.chunk_by(|a, b| a.upto == b.upto) {
-            let age = together[0].upto;
-            if !age.is_finite() {
-                break;
+        if let Ok(table) = LifeTable::of_sample(sample) {
+            for point in KaplanMeier::of(&table).points() {
+                curve.push(point.time, point.survival, point.at_risk);
             }
-            while let Some(m) = censored.next_if(|m| m.age < age) {
-                left += m.weight;
-            }
-            while let Some(m) = late.next_if(|m| m.age < age) {
-                entered += m.weight;
-            }
-            let events: f64 = together.iter().map(|e| e.weight).sum();
-            let at_risk = (entered - left).max(events);
-            if events <= 0.0 {
-                continue;
-            }
-            // A sliver of rounding must not pass for a survivor.
-            let kept = (at_risk - events) / at_risk;
-            survival *= if kept < 1e-14 { 0.0 } else { kept };
-            curve.ages.push(age);
-            curve.survival.push(survival);
-            curve.at_risk.push(at_risk);
-            left += events;
         }
         curve
+    }
+
+    fn push(&mut self, age: f64, survival: f64, at_risk: f64) {
+        self.ages.push(age);
+        self.survival.push(survival);
+        self.at_risk.push(at_risk);
+    }
+
+    /// The curve of the waits that outlive `threshold`.
+    pub(crate) fn beyond(&self, threshold: f64) -> ProductLimit {
+        let first = self.ages.partition_point(|&age| age <= threshold);
+        let kept = self.at(threshold);
+        ProductLimit {
+            ages: self.ages[first..].to_vec(),
+            survival: self.survival[first..].iter().map(|s| s / kept).collect(),
+            at_risk: self.at_risk[first..].to_vec(),
+        }
     }
 
     /// The same curve at about `n` of its endings, or all if there are no more; the last is kept.
@@ -196,9 +210,7 @@ impl ProductLimit {
         let mut goal = 1.0;
         for i in 0..self.ages.len() {
             if self.survival[i] <= goal || i + 1 == self.ages.len() {
-                thin.ages.push(self.ages[i]);
-                thin.survival.push(self.survival[i]);
-                thin.at_risk.push(self.at_risk[i]);
+                thin.push(self.ages[i], self.survival[i], self.at_risk[i]);
                 goal = self.survival[i] - step;
             }
         }

@@ -5,9 +5,9 @@ use rand::{RngExt, SeedableRng};
 use rand_xoshiro::Xoshiro256PlusPlus;
 
 use super::choice::criterion_weights;
-use super::condense::{ProductLimit, condense, middle};
+use super::condense::{ENDINGS, ProductLimit, condense, middle};
 use super::families;
-use super::fit::{Evidence, Fit, FitError};
+use super::fit::{COARSE, Evidence, Fit, FitError};
 use super::law::{Family, Law};
 use crate::outlook::Grid;
 use crate::tally::Sample;
@@ -35,10 +35,6 @@ const FAMILIES_SHARE: f64 = 0.9;
 /// `√n` times the largest gap up to which a family passes: for the decision, for the verdicts.
 const PASS_DECISION: f64 = 0.7;
 const PASS_VERDICT: f64 = 1.0;
-
-/// Endings at which a gap is sought, at most about so many: between two of them the curve drops by less than
-/// half a percent.
-const ENDINGS: usize = 256;
 
 /// Every family's fit to one sample, what it weighs, and draws from its doubt. Ages in seconds.
 #[derive(Debug)]
@@ -106,13 +102,22 @@ impl std::fmt::Debug for Draw {
 pub fn ensemble(sample: &Sample, grid: &Grid, seed: u64) -> Result<Ensemble, FitError> {
     let curve = ProductLimit::of(sample);
     let cells = condense(sample);
-    let mut evidence = Evidence::with_curve(&cells, curve.thinned(ENDINGS))?;
+    let mut evidence = Evidence::with_curve(&cells, curve.thinned(ENDINGS), COARSE)?;
     let shift = least_service(sample);
     let root_n = sample.total().sqrt();
     let (mut members, mut families, mut refused) = (vec![], vec![], vec![]);
+    let mut plain: Vec<(&'static str, Vec<f64>)> = vec![];
     for (family, role) in lists(shift) {
-        match evidence.fit(family.as_ref()) {
+        let without = plain.iter().find(|(name, _)| *name == family.name());
+        let fitted = match without.filter(|_| family.parameters().contains(&"never")) {
+            Some((_, at)) => evidence.fit_never(family.as_ref(), at),
+            None => evidence.fit(family.as_ref()),
+        };
+        match fitted {
             Ok(fit) => {
+                if without.is_none() {
+                    plain.push((fit.family, fit.free.clone()));
+                }
                 members.push(Member::new(fit, role, root_n));
                 families.push(family);
             }

@@ -3,9 +3,9 @@
 use std::sync::Arc;
 
 use super::condense::{ProductLimit, median};
-use super::law::{About, Family, Law, TailWeight};
+use super::law::{About, Coordinate, Family, Kind, Law, TailWeight};
 use super::likelihood::{Likelihood, MAX_DIMENSION};
-use super::maximise::{Maximum, Objective, Stop, maximise};
+use super::maximise::{FLAT, Maximum, Objective, Stop, Terrain, maximise};
 use super::symmetric::Symmetric;
 use crate::tally::Sample;
 
@@ -33,12 +33,16 @@ pub struct Fit {
     pub largest_gap: Gap,
     /// Why the search stopped.
     pub stop: Stop,
+    /// The parameter that ran off to a limit of the family, where one did.
+    pub boundary: Option<&'static str>,
     /// Which side of "heavy or light" the law falls on.
     pub tail: TailWeight,
     /// Weight of the events.
     pub events: f64,
     /// The law.
     pub law: Arc<dyn Law>,
+    /// Likelihoods evaluated, over all starts.
+    pub evaluations: usize,
     pub(crate) peak: Peak,
 }
 
@@ -58,14 +62,6 @@ impl Fit {
     /// The parameter of this name.
     pub fn parameter(&self, name: &str) -> Option<Parameter> {
         self.parameters.iter().copied().find(|p| p.name == name)
-    }
-
-    /// Name of the parameter that ran off to a limit of the family, if one did.
-    pub fn boundary(&self) -> Option<&'static str> {
-        match self.stop {
-            Stop::Boundary { coordinate } => self.parameters.get(coordinate).map(|p| p.name),
-            _ => None,
-        }
     }
 }
 
@@ -137,6 +133,10 @@ pub fn fit(sample: &Sample, family: &dyn Family) -> Result<Fit, FitError> {
     Evidence::new(sample)?.fit(family)
 }
 
+/// When a climb ends, nats: where the fit is the answer, and where it is one of many to be weighed.
+pub(crate) const FINE: f64 = 1e-6;
+pub(crate) const COARSE: f64 = 1e-3;
+
 /// A sample prepared for many fits.
 pub(crate) struct Evidence {
     likelihood: Likelihood,
@@ -146,17 +146,19 @@ pub(crate) struct Evidence {
     /// Median ending, s: the unit in which coordinates are near 0.
     unit: f64,
     events: f64,
+    /// When a climb ends, nats.
+    gain: f64,
     /// Distinct ages of events, if all are exact.
     exact_ages: Option<usize>,
 }
 
 impl Evidence {
     pub(crate) fn new(sample: &Sample) -> Result<Evidence, FitError> {
-        Evidence::with_curve(sample, ProductLimit::of(sample))
+        Evidence::with_curve(sample, ProductLimit::of(sample), FINE)
     }
 
-    /// The same, gaps measured against a curve that may be finer than the sample.
-    pub(crate) fn with_curve(sample: &Sample, curve: ProductLimit) -> Result<Evidence, FitError> {
+    /// The same with gaps measured against a curve that may be finer than the sample, and climbs that end at `gain`.
+    pub(crate) fn with_curve(sample: &Sample, curve: ProductLimit, gain: f64) -> Result<Evidence, FitError> {
         let none = FitError::NoEvents { waits: sample.total() };
         let (Some(about), Some(unit)) = (About::with(sample, &curve), median(sample)) else {
             return Err(none);
@@ -172,28 +174,65 @@ impl Evidence {
             about,
             unit,
             events: sample.event_count(),
+            gain,
             exact_ages: exact.then_some(sample.events.len()),
         })
     }
 
     pub(crate) fn fit(&mut self, family: &dyn Family) -> Result<Fit, FitError> {
+        self.fit_from(family, &family.starts(&self.about))
+    }
+
+    /// The fit of a family with a never share, which comes last among its coordinates, once the family without is
+    /// fitted at `plain`. From there without a share, or with a small one if the likelihood rises that way; and from
+    /// the family's own first start where waits are left at the end.
+    pub(crate) fn fit_never(&mut self, family: &dyn Family, plain: &[f64]) -> Result<Fit, FitError> {
+        let frame = Frame::new(family, self.unit);
+        let mut near = plain.to_vec();
+        near.push(NEVER.0);
+        let mut slopes = vec![0.0; near.len()];
+        self.climb(family, &frame).evaluate(&family.rescale(&near, 1.0 / frame.unit), &mut slopes);
+        if slopes.last().is_some_and(|&s| s > 0.0) {
+            near.pop();
+            near.push(NEVER_START);
+        }
+        let mut starts = vec![near];
+        if self.about.left > 1e-3 {
+            starts.extend(family.starts(&self.about).into_iter().take(1));
+        }
+        self.fit_from(family, &starts)
+    }
+
+    /// [`Evidence::fit`] from given starts.
+    pub(crate) fn fit_from(&mut self, family: &dyn Family, starts: &[Vec<f64>]) -> Result<Fit, FitError> {
         let (name, dimension) = (family.name(), family.dimension());
         if let Some(distinct) = self.exact_ages.filter(|&d| d < dimension) {
             return Err(FitError::TooFewAges { family: name, distinct, needed: dimension });
         }
         let frame = Frame::new(family, self.unit);
-        let events = self.events;
-        let bounds: Vec<(f64, f64)> = family.coordinates().iter().map(|c| bounds(c.name)).collect();
+        let terrain = self.terrain(family, None);
+        let mut climb = self.climb(family, &frame);
+        let mut starts: Vec<(f64, Vec<f64>)> = starts
+            .iter()
+            .map(|start| {
+                let near = family.rescale(start, 1.0 / frame.unit);
+                (if starts.len() > 1 { climb.evaluate(&near, &mut near.clone()) } else { 0.0 }, near)
+            })
+            .collect();
+        // Best first; the family's own order where they tie.
+        starts.sort_by(|a, b| b.0.total_cmp(&a.0));
         let mut best: Option<Maximum> = None;
-        for start in family.starts(&self.about) {
-            let near = family.rescale(&start, 1.0 / self.unit);
-            let mut climb = self.climb(family, &frame);
-            let found = maximise(&mut climb, &near, &bounds, events);
+        let mut evaluations = 0;
+        for (_, start) in &starts {
+            let bar = best.as_ref().map_or(f64::NEG_INFINITY, |b| b.value);
+            let found = maximise(&mut climb, start, &terrain, bar);
+            evaluations += found.evaluations;
             if best.as_ref().is_none_or(|b| found.value > b.value) {
                 best = Some(found);
             }
             // With two coordinates there is one hill; a second start is for when the first lost its way.
-            if dimension <= 2 && best.as_ref().is_some_and(|b| b.stop == Stop::Converged) {
+            let arrived = |b: &Maximum| matches!(b.stop, Stop::Converged | Stop::Boundary { .. });
+            if dimension <= 2 && best.as_ref().is_some_and(arrived) {
                 break;
             }
         }
@@ -204,10 +243,11 @@ impl Evidence {
         let k = family.parameters().len() as f64;
         let log_likelihood = best.value;
         let aic = 2.0 * (k - log_likelihood);
+        let (parameters, boundary) = parameters(family, &frame, &best, law.as_ref());
         let room = self.events - k - 1.0;
         Ok(Fit {
             family: name,
-            parameters: parameters(family, &frame, &best, law.as_ref()),
+            parameters,
             log_likelihood,
             aic,
             aicc: if room > 0.0 { aic + 2.0 * k * (k + 1.0) / room } else { f64::INFINITY },
@@ -215,15 +255,16 @@ impl Evidence {
             weight: 0.0,
             largest_gap: largest_gap(&self.curve, &self.log_ages, law.as_ref()),
             stop: best.stop,
+            boundary,
             tail: family.weight_of_tail(&free),
             events: self.events,
             free,
             law,
+            evaluations,
             peak: Peak {
                 at: best.at[..dimension].to_vec(),
                 value: best.value,
                 information: best.information,
-                unit: self.events,
                 frame,
             },
         })
@@ -234,9 +275,9 @@ impl Evidence {
         Climb { family, frame, likelihood: &mut self.likelihood }
     }
 
-    /// Log-likelihood of any law.
+    /// Log-likelihood of any law, to the accuracy that weighing it needs.
     pub(crate) fn log_likelihood(&mut self, law: &dyn Law) -> f64 {
-        self.likelihood.value(law)
+        self.likelihood.quick_value(law)
     }
 }
 
@@ -246,14 +287,13 @@ pub(crate) struct Peak {
     pub(crate) at: Vec<f64>,
     pub(crate) value: f64,
     pub(crate) information: Symmetric,
-    /// Curvature to expect of each coordinate: the number of events.
-    pub(crate) unit: f64,
     pub(crate) frame: Frame,
 }
 
 /// Turns coordinates in units of the data's median into those in seconds: `offset + slope · x`, for each.
 #[derive(Clone, Debug)]
 pub(crate) struct Frame {
+    unit: f64,
     offset: Vec<f64>,
     slope: Vec<f64>,
 }
@@ -263,7 +303,7 @@ impl Frame {
         let n = family.dimension();
         let offset = family.rescale(&vec![0.0; n], unit);
         let slope = family.rescale(&vec![1.0; n], unit).iter().zip(&offset).map(|(b, a)| b - a).collect();
-        Frame { offset, slope }
+        Frame { unit, offset, slope }
     }
 
     pub(crate) fn free(&self, at: &[f64]) -> Vec<f64> {
@@ -275,6 +315,12 @@ impl Frame {
         self.offset[i] + self.slope[i] * x
     }
 }
+
+/// Walls of the logit of a never share: one below six in a million, or above all but 0.25%, cannot be told from
+/// none or all (RECIPE's second section).
+const NEVER: (f64, f64) = (-12.0, 6.0);
+/// Where the search for a small share starts: 0.7%.
+const NEVER_START: f64 = -5.0;
 
 /// See [`Evidence::climb`].
 pub(crate) struct Climb<'a> {
@@ -296,19 +342,63 @@ impl Objective for Climb<'_> {
     }
 }
 
-/// Walls of the search. A never share below `logistic(-12)`, six in a million, or above `logistic(6)` cannot be
-/// told from none or all (RECIPE's second section). A tail index below -1 makes the density infinite at the
-/// end of its range (Smith 1985).
-pub(crate) fn bounds(coordinate: &str) -> (f64, f64) {
-    match coordinate {
-        "never" => (-12.0, 6.0),
-        "xi" => (-1.0, f64::INFINITY),
-        _ => (f64::NEG_INFINITY, f64::INFINITY),
+impl Evidence {
+    /// Walls of the search in units of the data's median (a fit that ends at one is at a limit of its family), and
+    /// the curvature to expect; of all coordinates but one, if one is held.
+    pub(crate) fn terrain(&self, family: &dyn Family, held: Option<usize>) -> Terrain {
+        let coordinates = family.coordinates();
+        let free = || coordinates.iter().enumerate().filter(|(i, _)| Some(*i) != held).map(|(_, c)| c);
+        let curvature =
+            free().map(|c| if c.kind == Kind::Share { SHARE_CURVATURE * self.events } else { self.events });
+        Terrain {
+            walls: free().map(|c| self.walls(c)).collect(),
+            curvature: curvature.collect(),
+            gain: self.gain,
+        }
+    }
+
+    /// Walls of one coordinate.
+    ///
+    /// A part of a mixture holds a few events and is no spike on a few equal ages, where the likelihood of a
+    /// mixture has no bound (Hathaway 1985). A tail index below -1 makes the density infinite at the end of its
+    /// range (Smith 1985). Elsewhere a factor of a million from 1 is a limit, but scales may lie as far from the
+    /// median as ages do.
+    pub(crate) fn walls(&self, coordinate: &Coordinate) -> (f64, f64) {
+        let narrowest = (NARROWEST_PART * self.about.log_sd).ln();
+        let reach = match (coordinate.name, coordinate.kind) {
+            ("never", _) => return NEVER,
+            ("xi", _) => return (-1.0, 1e3),
+            ("sigma_1" | "sigma_2", _) => return (narrowest, FAR_OUT),
+            ("shape_1" | "shape_2", _) => return (-FAR_OUT, -2.0 * narrowest),
+            (_, Kind::Share) => (self.events / FEWEST_IN_PART).ln().clamp(1.0, FAR_OUT),
+            (_, Kind::Shape) => FAR_OUT,
+            (_, Kind::Scale | Kind::Rate | Kind::LogLocation) => 40.0,
+            (_, Kind::Location | Kind::Index) => 1e3,
+        };
+        (-reach, reach)
     }
 }
 
-/// Natural parameters with standard errors by the delta method.
-fn parameters(family: &dyn Family, frame: &Frame, best: &Maximum, law: &dyn Law) -> Vec<Parameter> {
+/// Curvature of a logit, per event, when both shares are in evidence.
+const SHARE_CURVATURE: f64 = 0.1;
+
+/// Logarithm of a million.
+const FAR_OUT: f64 = 13.8;
+
+/// Least spread of a part of a mixture, in units of the whole sample's (standard deviations of logarithms; that of
+/// a gamma is about one over the root of its shape).
+const NARROWEST_PART: f64 = 0.02;
+
+/// Fewest events in a part of a mixture.
+const FEWEST_IN_PART: f64 = 5.0;
+
+/// Natural parameters with standard errors by the delta method, and which of them a boundary concerns.
+fn parameters(
+    family: &dyn Family,
+    frame: &Frame,
+    best: &Maximum,
+    law: &dyn Law,
+) -> (Vec<Parameter>, Option<&'static str>) {
     const STEP: f64 = 1e-5;
     let n = family.dimension();
     let eigen = best.information.eigen();
@@ -323,20 +413,37 @@ fn parameters(family: &dyn Family, frame: &Frame, best: &Maximum, law: &dyn Law)
         })
         .collect();
     let error = |k: usize| {
-        let slopes = slopes.as_ref().filter(|_| best.stop == Stop::Converged)?;
+        let slopes = slopes.as_ref().filter(|_| best.stop != Stop::Stalled)?;
         let slope: Vec<f64> = slopes.iter().map(|s| s[k]).collect();
-        let spread = eigen.apply(|v| 1.0 / v.sqrt(), &slope);
-        let error = spread.iter().map(|s| s * s).sum::<f64>().sqrt();
-        (error > 0.0 && error.is_finite()).then_some(error)
+        // What leans on a direction that the likelihood leaves open has no standard error.
+        let open = norm(&eigen.apply(|v| if v > FLAT { 0.0 } else { 1.0 }, &slope));
+        let spread = norm(&eigen.apply(|v| if v > FLAT { 1.0 / v.sqrt() } else { 0.0 }, &slope));
+        (open <= 1e-2 * norm(&slope) && spread > 0.0 && spread.is_finite()).then_some(spread)
     };
     let names = family.parameters();
     let values = law.parameters();
-    names
+    let boundary = match best.stop {
+        Stop::Boundary { coordinate } => slopes.as_ref().and_then(|slopes| {
+            let weight = |k: &usize| match slopes[coordinate][*k] {
+                0.0 => 0.0,
+                slope => (slope / values[*k]).abs(),
+            };
+            let most = (0..values.len()).max_by(|a, b| weight(a).total_cmp(&weight(b)))?;
+            Some(names[most])
+        }),
+        _ => None,
+    };
+    let parameters = names
         .into_iter()
         .zip(values)
         .enumerate()
         .map(|(k, (name, value))| Parameter { name, value, standard_error: error(k) })
-        .collect()
+        .collect();
+    (parameters, boundary)
+}
+
+fn norm(v: &[f64]) -> f64 {
+    v.iter().map(|x| x * x).sum::<f64>().sqrt()
 }
 
 fn largest_gap(curve: &ProductLimit, log_ages: &[f64], law: &dyn Law) -> Gap {

@@ -2,7 +2,7 @@
 //! together. METHODS.md section 3.
 
 use super::law::Law;
-use crate::tally::Sample;
+use crate::tally::{Interval, Sample};
 
 /// Most free coordinates a law may have; fixes the size of the small arrays of the fit.
 pub(crate) const MAX_DIMENSION: usize = 8;
@@ -10,6 +10,10 @@ pub(crate) const MAX_DIMENSION: usize = 8;
 /// An interval narrower than this share of its age is read as a point with a density. There the difference of
 /// two survivals has lost half its digits, while the middle of the interval is good to the square of its width.
 const NARROW: f64 = 1e-6;
+
+/// Below this share of the waits a cell in the lower tail is read by its density too: next to 1 a survival has no
+/// finer steps than 1e-16. Cells as unlikely hold outliers, for which the middle is as good as any age.
+const FAINT: f64 = 1e-9;
 
 /// A law with a never share is far from any ending here, in units of its own scale.
 const FAR: f64 = 1e12;
@@ -39,7 +43,7 @@ pub(crate) struct Term {
 /// The terms of [`log_likelihood`] one by one: events, censored, entries.
 pub(crate) fn terms<'a>(law: &'a dyn Law, sample: &'a Sample) -> impl Iterator<Item = Term> + 'a {
     let events = sample.events.iter().map(move |e| {
-        let value = if e.upto - e.over <= NARROW * e.upto {
+        let value = if narrow(e) {
             let width = e.upto - e.over;
             law.log_density(0.5 * (e.over + e.upto)) + if width > 0.0 { width.ln() } else { 0.0 }
         } else {
@@ -74,6 +78,8 @@ pub(crate) struct Likelihood {
     values: Vec<f64>,
     gradients: Vec<f64>,
     pulls: Vec<f64>,
+    /// Scratch: faint cells as points with a width.
+    faint: Vec<(f64, f64, f64)>,
 }
 
 #[derive(Clone, Copy, Debug)]
@@ -87,8 +93,7 @@ struct Between {
 impl Likelihood {
     pub(crate) fn new(sample: &Sample) -> Likelihood {
         let mut l = Likelihood::default();
-        let narrow = |over: f64, upto: f64| upto - over <= NARROW * upto;
-        let bounds = sample.events.iter().filter(|e| !narrow(e.over, e.upto)).flat_map(|e| [e.over, e.upto]);
+        let bounds = sample.events.iter().filter(|e| !narrow(e)).flat_map(|e| [e.over, e.upto]);
         let masses = sample.censored.iter().chain(&sample.entries).map(|m| m.age);
         l.ages = bounds.chain(masses).filter(|&t| t > 0.0 && t.is_finite()).collect();
         l.ages.sort_by(f64::total_cmp);
@@ -104,7 +109,7 @@ impl Likelihood {
             }
         }
         for e in sample.events.iter().filter(|e| e.weight > 0.0) {
-            if narrow(e.over, e.upto) {
+            if narrow(e) {
                 l.points.push((0.5 * (e.over + e.upto), e.weight));
                 if e.over < e.upto {
                     l.constant += e.weight * (e.upto - e.over).ln();
@@ -125,9 +130,42 @@ impl Likelihood {
         for (value, &t) in self.values.iter_mut().zip(&self.ages) {
             *value = law.log_survival(t);
         }
-        let points: f64 = self.points.iter().map(|&(t, weight)| weight * law.log_density(t)).sum();
         let far = if self.open.is_empty() { 0.0 } else { never(law) };
-        proper(self.constant + points + self.weigh(far))
+        let mut total = self.constant + self.weigh(far);
+        total += self.points.iter().map(|&(t, weight)| weight * law.log_density(t)).sum::<f64>();
+        for &(t, width, weight) in &self.faint {
+            total += weight * (law.log_density(t) + width.ln());
+        }
+        proper(total)
+    }
+
+    /// The log-likelihood from survivals computed together, several times faster: right to about 1e-9 of each
+    /// cell's weight over its probability, which is plenty to weigh a draw. Falls back to [`Likelihood::value`]
+    /// where that is not enough.
+    pub(crate) fn quick_value(&mut self, law: &dyn Law) -> f64 {
+        law.survival_on(&self.ages, &self.log_ages, &mut self.values);
+        let at = |index: Option<usize>| index.map_or(1.0, |i| self.values[i]);
+        let mut total = self.constant;
+        for (value, &weight) in self.values.iter().zip(&self.tails) {
+            if weight != 0.0 {
+                total += weight * value.ln();
+            }
+        }
+        for b in &self.between {
+            let share = at(b.over) - self.values[b.upto];
+            total += b.weight
+                * if share < FAINT && at(b.over) > 0.5 {
+                    let (middle, width) = self.point(b);
+                    law.log_density(middle) + width.ln()
+                } else {
+                    share.ln()
+                };
+        }
+        for &(over, weight) in &self.open {
+            total += weight * (at(over) - never(law)).ln();
+        }
+        total += self.points.iter().map(|&(t, weight)| weight * law.log_density(t)).sum::<f64>();
+        if total.is_finite() { total } else { self.value(law) }
     }
 
     /// The log-likelihood and its gradient.
@@ -141,9 +179,15 @@ impl Likelihood {
             add(gradient, weight, &row);
         }
         self.gradients.resize(n * self.ages.len(), 0.0);
-        law.log_survival_gradient_on(&self.ages, &self.log_ages, &mut self.values, &mut self.gradients);
+        if !self.ages.is_empty() {
+            law.log_survival_gradient_on(&self.ages, &self.log_ages, &mut self.values, &mut self.gradients);
+        }
         let far = if self.open.is_empty() { 0.0 } else { never(law) };
         total += self.weigh(far);
+        for &(t, width, weight) in &self.faint {
+            total += weight * (law.log_density_gradient(t, &mut row[..n]) + width.ln());
+            add(gradient, weight, &row);
+        }
         for (row, &pull) in self.gradients.chunks_exact(n.max(1)).zip(&self.pulls) {
             // Where S has vanished its gradient may be infinite, and weighs nothing.
             if pull != 0.0 {
@@ -159,13 +203,21 @@ impl Likelihood {
         if gradient.iter().all(|g| g.is_finite()) { proper(total) } else { f64::NEG_INFINITY }
     }
 
+    /// Middle and width of a cell.
+    fn point(&self, cell: &Between) -> (f64, f64) {
+        let (from, to) = (cell.over.map_or(0.0, |i| self.ages[i]), self.ages[cell.upto]);
+        (0.5 * (from + to), to - from)
+    }
+
     fn at(&self, index: Option<usize>) -> f64 {
         index.map_or(0.0, |i| self.values[i])
     }
 
-    /// The terms in `ln S`, from `values`; leaves in `pulls` the derivative by each of them.
+    /// The terms in `ln S`, from `values`; leaves in `pulls` the derivative by each of them, and in `faint` the cells
+    /// that it left out.
     fn weigh(&mut self, never: f64) -> f64 {
         self.pulls.copy_from_slice(&self.tails);
+        self.faint.clear();
         let mut total = 0.0;
         for (value, &weight) in self.values.iter().zip(&self.tails) {
             if weight != 0.0 {
@@ -175,6 +227,11 @@ impl Likelihood {
         for i in 0..self.between.len() {
             let Between { over, upto, weight } = self.between[i];
             let (from, to) = (self.at(over), self.values[upto]);
+            if from > -0.5 && from - to < FAINT {
+                let (middle, width) = self.point(&self.between[i]);
+                self.faint.push((middle, width, weight));
+                continue;
+            }
             total += weight * (from + log_one_minus_exp(to - from));
             let odds = odds(from, to);
             self.pulls[upto] -= weight * odds;
@@ -201,6 +258,11 @@ fn never(law: &dyn Law) -> f64 {
 /// No observation is certain to infinity, and none is NaN.
 fn proper(log_likelihood: f64) -> f64 {
     if log_likelihood < f64::INFINITY { log_likelihood } else { f64::NEG_INFINITY }
+}
+
+/// Whether an event is as good as exact.
+fn narrow(e: &Interval) -> bool {
+    e.upto.is_finite() && e.upto - e.over <= NARROW * e.upto
 }
 
 fn add(sum: &mut [f64], weight: f64, term: &[f64]) {

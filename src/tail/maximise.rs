@@ -47,25 +47,30 @@ impl<F: FnMut(&[f64], &mut [f64]) -> f64> Objective for F {
     }
 }
 
-/// The climb ends when a further step promises less than this, nats; Newton steps finish the rest.
-const GAIN: f64 = 1e-3;
 /// What a further Newton step may still promise at a maximum, nats: the coordinates are then within a
 /// thousandth of their standard errors.
 const CONVERGED: f64 = 1e-6;
+/// What a long step along directions without curvature may still promise at a limit of the family, in units of
+/// [`Terrain::gain`].
+const LEVEL: f64 = 20.0;
 /// Newton steps go on to this promise, since one costs a single evaluation.
 const POLISHED: f64 = 1e-10;
 /// Relative rounding of a sum over cells, allowed for when values are compared.
 const ROUNDING: f64 = 1e-14;
 /// Below this curvature (nats per unit squared: a standard error above 30) a coordinate is not determined.
-const FLAT: f64 = 1e-3;
-/// A coordinate this far out has run off: a factor of a million where it is a logarithm.
-const FAR_OUT: f64 = 13.8;
+pub(crate) const FLAT: f64 = 1e-3;
 /// Most evaluations in one search.
 const BUDGET: usize = 400;
+/// A climb from a second start is given up after so many evaluations, when so many times its promise would not
+/// bring it to the first's height.
+const PATIENCE: usize = 15;
+const HOPE: f64 = 10.0;
+/// Steps in a row that may gain less than [`Terrain::gain`], for all their promise.
+const MOST_IDLE: usize = 2;
 /// Newton steps after a climb, and climbs in all.
 const NEWTON_STEPS: usize = 4;
 const ROUNDS: usize = 3;
-/// Longest step in any coordinate.
+/// Longest step in any coordinate, or half of the way from 0 to where it is.
 const LONGEST: f64 = 2.0;
 /// Sufficient increase, and the share of its slope that a step may leave (weak Wolfe conditions).
 const ARMIJO: f64 = 1e-4;
@@ -74,49 +79,71 @@ const CURVATURE: f64 = 0.9;
 /// of the curvature is about its square, relative.
 const DIFFERENCE: f64 = 1e-4;
 
-/// Climbs from `start`. `unit` is the curvature to expect (the number of events, for a log-likelihood in
-/// logarithms of parameters); it sets the first step only. `bounds` are walls: the search may slide along them.
-pub(crate) fn maximise(
-    objective: &mut dyn Objective,
-    start: &[f64],
-    bounds: &[(f64, f64)],
-    unit: f64,
-) -> Maximum {
-    let mut search = Search::new(objective, start, bounds);
+/// What is known of a search beforehand.
+#[derive(Clone, Debug)]
+pub(crate) struct Terrain {
+    /// Walls of each coordinate; the search may slide along them.
+    pub(crate) walls: Vec<(f64, f64)>,
+    /// Curvature to expect of each coordinate: the number of events for the logarithm of a parameter. It sets the
+    /// first step only.
+    pub(crate) curvature: Vec<f64>,
+    /// The climb ends when a further step promises less than this, nats. Where there is a maximum inside, Newton
+    /// steps finish the rest; at a limit of the family this is how near the limit it gets.
+    pub(crate) gain: f64,
+}
+
+/// Climbs from `start`. A climb that is well under way and far below `bar`, a value found from another start, is
+/// given up.
+pub(crate) fn maximise(objective: &mut dyn Objective, start: &[f64], terrain: &Terrain, bar: f64) -> Maximum {
+    let mut search = Search::new(objective, start, terrain, bar);
     if !search.value.is_finite() {
-        let information = Symmetric::zero(search.n);
-        return Maximum {
-            at: search.at,
-            value: search.value,
-            information,
-            stop: Stop::NotFinite,
-            evaluations: 1,
-        };
+        return search.leave(Stop::NotFinite);
     }
-    let mut inverse = Symmetric::diagonal(search.n, 1.0 / unit);
+    let mut inverse = Symmetric::zero(search.n);
+    for (i, curvature) in terrain.curvature.iter().enumerate() {
+        inverse.set(i, i, 1.0 / curvature);
+    }
     let mut scaled = false;
     loop {
-        let done = search.climb(&mut inverse, scaled);
-        let information = search.information(&inverse, unit);
+        let done = match search.climb(&mut inverse, scaled) {
+            End::Hopeless => return search.leave(Stop::Stalled),
+            end => end == End::Top,
+        };
+        let mut information = search.information(&inverse);
         let eigen = information.eigen();
-        let curved = eigen.least().0 > FLAT;
-        let gain = if curved { search.polish(&eigen) } else { f64::NAN };
-        let again = curved && gain > CONVERGED && search.evaluations < BUDGET && search.rounds < ROUNDS;
-        if !again {
-            let stop = search.judge(&eigen, done, gain);
+        let gain = if eigen.least().0 > FLAT { search.polish(&eigen) } else { search.slope_of_flats(&eigen) };
+        let arrived = gain <= if eigen.least().0 > FLAT { CONVERGED } else { LEVEL * terrain.gain };
+        if arrived || gain.is_nan() || search.evaluations >= BUDGET || search.rounds >= ROUNDS {
+            let stop = search.judge(&eigen, done, arrived);
+            if stop == Stop::Converged && terrain.gain <= CONVERGED {
+                // The last steps were long enough to show in the standard errors' fifth digit.
+                information = search.information(&inverse);
+            }
             let Search { at, value, evaluations, .. } = search;
             return Maximum { at, value, information, stop, evaluations };
         }
-        // The climb believed too early that it had arrived: go on with the curvature as it is.
-        inverse = eigen.rebuild(|v| 1.0 / v);
+        // The climb believed too early that it had arrived: go on with the curvature as it is, upwards in any case.
+        inverse = eigen.rebuild(|v| 1.0 / v.abs().max(FLAT));
         scaled = true;
         search.rounds += 1;
     }
 }
 
+/// How a climb ended.
+#[derive(Clone, Copy, PartialEq)]
+enum End {
+    /// A further step promises nothing.
+    Top,
+    /// No step makes progress, or the budget is spent.
+    Stuck,
+    /// It will not reach the bar.
+    Hopeless,
+}
+
 struct Search<'a> {
     objective: &'a mut dyn Objective,
-    bounds: &'a [(f64, f64)],
+    terrain: &'a Terrain,
+    bar: f64,
     n: usize,
     at: Point,
     value: f64,
@@ -126,15 +153,16 @@ struct Search<'a> {
 }
 
 impl<'a> Search<'a> {
-    fn new(objective: &'a mut dyn Objective, start: &[f64], bounds: &'a [(f64, f64)]) -> Search<'a> {
+    fn new(objective: &'a mut dyn Objective, start: &[f64], terrain: &'a Terrain, bar: f64) -> Search<'a> {
         let n = start.len();
         let mut at = [0.0; MAX_DIMENSION];
         for (i, (x, &s)) in at.iter_mut().zip(start).enumerate() {
-            *x = s.clamp(bounds[i].0, bounds[i].1);
+            *x = s.clamp(terrain.walls[i].0, terrain.walls[i].1);
         }
         let mut search = Search {
             objective,
-            bounds,
+            terrain,
+            bar,
             n,
             at,
             value: 0.0,
@@ -155,7 +183,7 @@ impl<'a> Search<'a> {
 
     /// Whether the coordinate is at a wall and would go through it.
     fn walled(&self, i: usize) -> bool {
-        let (low, high) = self.bounds[i];
+        let (low, high) = self.terrain.walls[i];
         (self.at[i] <= low && self.gradient[i] < 0.0) || (self.at[i] >= high && self.gradient[i] > 0.0)
     }
 
@@ -170,11 +198,12 @@ impl<'a> Search<'a> {
         gradient
     }
 
-    /// BFGS until a further step promises nothing; whether that was reached. `scaled` says that `inverse` is a
+    /// BFGS until a further step promises nothing. `scaled` says that `inverse` is a
     /// measured curvature and not just a unit.
-    fn climb(&mut self, inverse: &mut Symmetric, mut scaled: bool) -> bool {
+    fn climb(&mut self, inverse: &mut Symmetric, mut scaled: bool) -> End {
         let fresh = inverse.clone();
         let start = scaled;
+        let mut idle = 0;
         while self.evaluations < BUDGET {
             let gradient = self.free_gradient();
             let mut step = inverse.times(&gradient[..self.n]);
@@ -185,23 +214,26 @@ impl<'a> Search<'a> {
             }
             let mut slope = dot(&gradient, &step);
             let promise = 0.5 * slope;
-            if promise == 0.0 || (scaled && promise <= GAIN.max(ROUNDING * self.value.abs())) {
-                return true;
+            if promise == 0.0 || (scaled && promise <= self.terrain.gain.max(ROUNDING * self.value.abs())) {
+                return End::Top;
             }
-            let longest = step.iter().fold(0.0_f64, |m, s| m.max(s.abs()));
-            if longest > LONGEST {
-                let shrink = LONGEST / longest;
-                step.iter_mut().for_each(|s| *s *= shrink);
-                slope *= shrink;
+            if self.evaluations >= PATIENCE && self.value + HOPE * promise < self.bar {
+                return End::Hopeless;
             }
+            // Long steps are for coordinates that are far out already.
+            let length = |(s, x): (&f64, &f64)| s.abs() / LONGEST.max(0.5 * x.abs());
+            let longest = step.iter().zip(&self.at).map(length).fold(1.0, f64::max);
+            step.iter_mut().for_each(|s| *s /= longest);
+            slope /= longest;
             let Some((at, value, next)) = self.line(&step, slope) else {
                 if scaled == start {
-                    return false;
+                    return End::Stuck;
                 }
                 inverse.clone_from(&fresh);
                 scaled = start;
                 continue;
             };
+            idle = if value - self.value > self.terrain.gain { 0 } else { idle + 1 };
             let (mut moved, mut turned) = ([0.0; MAX_DIMENSION], [0.0; MAX_DIMENSION]);
             for i in 0..self.n {
                 moved[i] = at[i] - self.at[i];
@@ -209,8 +241,17 @@ impl<'a> Search<'a> {
             }
             (self.at, self.value, self.gradient) = (at, value, next);
             scaled |= update(inverse, &moved, &turned, !scaled);
+            if idle > MOST_IDLE {
+                return End::Top;
+            }
         }
-        false
+        End::Stuck
+    }
+
+    /// The search as it stands, without a look at the curvature.
+    fn leave(self, stop: Stop) -> Maximum {
+        let Search { at, value, evaluations, n, .. } = self;
+        Maximum { at, value, information: Symmetric::zero(n), stop, evaluations }
     }
 
     /// A step along `step` that meets the weak Wolfe conditions, by bisection and doubling (Lewis & Overton
@@ -222,7 +263,7 @@ impl<'a> Search<'a> {
         for _ in 0..40 {
             let mut at = self.at;
             for i in 0..self.n {
-                at[i] = (self.at[i] + t * step[i]).clamp(self.bounds[i].0, self.bounds[i].1);
+                at[i] = (self.at[i] + t * step[i]).clamp(self.terrain.walls[i].0, self.terrain.walls[i].1);
             }
             if at == self.at {
                 break;
@@ -265,7 +306,7 @@ impl<'a> Search<'a> {
             }
             let mut at = self.at;
             for i in 0..self.n {
-                at[i] = (at[i] + step[i]).clamp(self.bounds[i].0, self.bounds[i].1);
+                at[i] = (at[i] + step[i]).clamp(self.terrain.walls[i].0, self.terrain.walls[i].1);
             }
             let (value, next) = self.evaluate(&at);
             if value < self.value - ROUNDING * self.value.abs() {
@@ -276,43 +317,62 @@ impl<'a> Search<'a> {
         gain
     }
 
-    fn judge(&self, information: &Eigen, climbed: bool, gain: f64) -> Stop {
-        if let Some(coordinate) = (0..self.n).find(|&i| self.at[i].abs() > FAR_OUT || self.walled(i)) {
+    /// What a step of [`LONGEST`] along the directions without curvature would gain.
+    fn slope_of_flats(&self, information: &Eigen) -> f64 {
+        let gradient = self.free_gradient();
+        let along = information.apply(|v| if v > FLAT { 0.0 } else { LONGEST }, &gradient[..self.n]);
+        dot(&along, &along).sqrt()
+    }
+
+    fn judge(&self, information: &Eigen, climbed: bool, arrived: bool) -> Stop {
+        if let Some(coordinate) = (0..self.n).find(|&i| self.walled(i)) {
             return Stop::Boundary { coordinate };
         }
         let (least, coordinate) = information.least();
-        if least > FLAT {
-            let arrived = gain <= CONVERGED.max(ROUNDING * self.value.abs());
-            return if arrived { Stop::Converged } else { Stop::Stalled };
+        let rounding = !arrived && self.promise(information) <= ROUNDING * self.value.abs();
+        match (arrived || rounding, least > FLAT) {
+            (true, true) => Stop::Converged,
+            // Flat where a law reaches its limit; curved upwards where the search was left at a saddle.
+            (true, false) if climbed && least > -1.0 => Stop::Boundary { coordinate },
+            _ => Stop::Stalled,
         }
-        // Flat where a law reaches its limit; curved upwards where the search was left at a saddle.
-        if climbed && least > -1.0 { Stop::Boundary { coordinate } } else { Stop::Stalled }
+    }
+
+    /// What a Newton step would gain, directions without curvature left out.
+    fn promise(&self, information: &Eigen) -> f64 {
+        let gradient = self.free_gradient();
+        let step = information.apply(|v| if v > FLAT { 1.0 / v } else { 0.0 }, &gradient[..self.n]);
+        0.5 * dot(&gradient, &step)
     }
 
     /// Minus the second derivatives, by central differences of the gradient.
-    fn information(&mut self, inverse: &Symmetric, unit: f64) -> Symmetric {
+    fn information(&mut self, inverse: &Symmetric) -> Symmetric {
         let n = self.n;
-        let mut rows = [[0.0; MAX_DIMENSION]; MAX_DIMENSION];
-        for i in 0..n {
-            let width = (inverse.get(i, i).max(0.0) * unit).sqrt();
-            let step = DIFFERENCE * width.clamp(0.01, 10.0);
-            let (mut up, mut down) = (self.at, self.at);
-            up[i] += step;
-            down[i] -= step;
-            let (above, below) = (self.evaluate(&up), self.evaluate(&down));
-            for j in 0..n {
-                rows[i][j] = match (above.0.is_finite(), below.0.is_finite()) {
+        let rows: Vec<Point> = (0..n)
+            .map(|i| {
+                let width = (inverse.get(i, i).max(0.0) * self.terrain.curvature[i]).sqrt();
+                let step = DIFFERENCE * width.clamp(0.01, 10.0);
+                let (mut up, mut down) = (self.at, self.at);
+                up[i] += step;
+                down[i] -= step;
+                // Beyond a wall the function is not what it is inside.
+                let (low, high) = self.terrain.walls[i];
+                let inside = |x: &Point| low <= x[i] && x[i] <= high;
+                let (above, below) = (self.evaluate(&up), self.evaluate(&down));
+                let (right, left) =
+                    (above.0.is_finite() && inside(&up), below.0.is_finite() && inside(&down));
+                std::array::from_fn(|j| match (right, left) {
                     (true, true) => (below.1[j] - above.1[j]) / (2.0 * step),
                     (true, false) => (self.gradient[j] - above.1[j]) / step,
                     (false, true) => (below.1[j] - self.gradient[j]) / step,
                     (false, false) => f64::NAN,
-                };
-            }
-        }
+                })
+            })
+            .collect();
         let mut information = Symmetric::zero(n);
-        for i in 0..n {
-            for j in 0..=i {
-                information.set(i, j, 0.5 * (rows[i][j] + rows[j][i]));
+        for (i, row) in rows.iter().enumerate() {
+            for (j, other) in rows.iter().enumerate().take(i + 1) {
+                information.set(i, j, 0.5 * (row[j] + other[i]));
             }
         }
         information
@@ -327,10 +387,17 @@ fn update(inverse: &mut Symmetric, s: &Point, y: &Point, first: bool) -> bool {
     if sy.is_nan() || sy <= 1e-12 * (dot(s, s) * yy).sqrt() {
         return false;
     }
+    let mut hy = inverse.times(&y[..n]);
     if first {
-        *inverse = Symmetric::diagonal(n, sy / yy);
+        // The guess had the shape of the inverse; now its size is known.
+        let size = sy / dot(y, &hy);
+        for i in 0..n {
+            for j in 0..=i {
+                inverse.set(i, j, size * inverse.get(i, j));
+            }
+        }
+        hy = inverse.times(&y[..n]);
     }
-    let hy = inverse.times(&y[..n]);
     let factor = (1.0 + dot(y, &hy) / sy) / sy;
     for i in 0..n {
         for j in 0..=i {

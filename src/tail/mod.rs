@@ -23,5 +23,5 @@ pub use law::{About, Coordinate, Family, Kind, Law, TailWeight, area_by_quadratu
 pub use likelihood::{log_likelihood, log_likelihood_gradient};
 pub use maximise::Stop;
 pub use profile::profile_interval;
-pub use splice::{Estimate, Splice, SpliceError, Tried, splice, tail_above};
-pub use verdict::{Moments, RemainingWait, TailClass, Trends, Verdict, verdict};
+pub use splice::{Estimate, INTERVAL_LEVEL, Splice, SpliceError, Tried, splice, tail_above};
+pub use verdict::{RemainingWait, TailClass, Trends, Verdict, verdict};

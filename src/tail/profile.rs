@@ -4,9 +4,9 @@
 
 use statrs::function::erf::erfc_inv;
 
-use super::fit::{Evidence, Fit, FitError, Peak, bounds};
+use super::fit::{Evidence, Fit, FitError, Peak};
 use super::law::{Family, Kind};
-use super::maximise::{Objective, maximise};
+use super::maximise::{Objective, Terrain, maximise};
 use crate::numeric::root;
 use crate::tally::Sample;
 
@@ -50,10 +50,12 @@ pub(crate) fn interval(
         Kind::Index if name == "xi" => (-1.0, f64::INFINITY),
         Kind::Index | Kind::Location | Kind::LogLocation => (f64::NEG_INFINITY, f64::INFINITY),
     };
+    let terrain = evidence.terrain(family, Some(index));
+    let bounds = evidence.walls(&coordinates[index]);
     let mut profile =
-        Profile { evidence, family, peak: &fit.peak, index, others: without(&fit.peak.at, index) };
+        Profile { evidence, family, peak: &fit.peak, index, others: without(&fit.peak.at, index), terrain };
     let mut side = |direction: f64| {
-        let x = profile.end(direction, fall, bounds(name))?;
+        let x = profile.end(direction, fall, bounds)?;
         coordinates[index].natural(profile.peak.frame.free_at(index, x))
     };
     Some((side(-1.0).unwrap_or(least), side(1.0).unwrap_or(most)))
@@ -67,6 +69,7 @@ struct Profile<'a> {
     index: usize,
     /// Where the others were best last time.
     others: Vec<f64>,
+    terrain: Terrain,
 }
 
 /// Doublings of the first step before a side counts as open: a million standard errors.
@@ -77,7 +80,7 @@ const ACCURACY: f64 = 1e-5;
 impl Profile<'_> {
     /// How far the best log-likelihood at `x` lies below the maximum, nats, at most 1e6.
     fn fall(&mut self, x: f64) -> f64 {
-        let index = self.index;
+        let (index, terrain) = (self.index, &self.terrain);
         let mut climb = self.evidence.climb(self.family, &self.peak.frame);
         let mut whole = vec![x; self.peak.at.len()];
         let mut slopes = whole.clone();
@@ -91,10 +94,7 @@ impl Profile<'_> {
         let best = if self.others.is_empty() {
             objective(&[], &mut [])
         } else {
-            let coordinates = self.family.coordinates();
-            let mut walls: Vec<(f64, f64)> = coordinates.iter().map(|c| bounds(c.name)).collect();
-            walls.remove(index);
-            let found = maximise(&mut objective, &self.others, &walls, self.peak.unit);
+            let found = maximise(&mut objective, &self.others, terrain, f64::NEG_INFINITY);
             if found.value.is_finite() {
                 let n = self.others.len();
                 self.others.copy_from_slice(&found.at[..n]);
@@ -105,12 +105,12 @@ impl Profile<'_> {
     }
 
     /// Where the fall reaches `goal`, going up or down; `None` where it never does.
-    fn end(&mut self, direction: f64, goal: f64, walls: (f64, f64)) -> Option<f64> {
+    fn end(&mut self, direction: f64, goal: f64, bounds: (f64, f64)) -> Option<f64> {
         let middle = self.peak.at[self.index];
         self.others = without(&self.peak.at, self.index);
         let variance =
             self.peak.information.eigen().rebuild(|v| 1.0 / v.max(1e-2)).get(self.index, self.index);
-        let room = if direction > 0.0 { walls.1 - middle } else { middle - walls.0 };
+        let room = if direction > 0.0 { bounds.1 - middle } else { middle - bounds.0 };
         let (mut near, mut far) = (0.0, (2.0 * goal * variance).sqrt().min(room));
         for _ in 0..DOUBLINGS {
             if self.fall(middle + direction * far) >= goal {

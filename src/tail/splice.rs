@@ -4,14 +4,15 @@
 //! Why a generalised Pareto: whatever the law, its excesses over a high threshold tend to one (Balkema & de Haan
 //! 1974, Pickands 1975). ξ > 0 is a power tail, ξ = 0 exponential, ξ < 0 ends at a finite age.
 
-use super::condense::{ProductLimit, condense, median, middle};
+use super::condense::{ENDINGS, ProductLimit, condense, median, middle};
 use super::families::ParetoTail;
-use super::fit::{Evidence, Fit, FitError, fit};
+use super::fit::{COARSE, Evidence, FINE, Fit, FitError};
+use super::law::Family;
 use super::profile::interval;
 use crate::tally::{Interval, Mass, Sample};
 
 /// Confidence of the intervals.
-pub const LEVEL: f64 = 0.95;
+pub const INTERVAL_LEVEL: f64 = 0.95;
 
 /// Fewest endings above a threshold from which a tail is estimated. Common practice, no source.
 const FEWEST: f64 = 30.0;
@@ -24,7 +25,7 @@ const MOST_OF_FEW: f64 = 0.5;
 /// Most thresholds tried.
 const CANDIDATES: usize = 16;
 
-/// An estimate with its interval at confidence [`LEVEL`].
+/// An estimate with its interval at confidence [`INTERVAL_LEVEL`].
 #[derive(Clone, Copy, Debug, PartialEq)]
 pub struct Estimate {
     /// The maximum-likelihood estimate.
@@ -116,6 +117,7 @@ pub enum SpliceError {
 /// [`SpliceError`] where too few waits have ended.
 pub fn splice(sample: &Sample) -> Result<Splice, SpliceError> {
     let cells = condense(sample);
+    let curve = ProductLimit::of(sample).thinned(ENDINGS);
     let total = cells.event_count();
     let mut above = total;
     let most = (MOST * total).max((2.0 * FEWEST).min(MOST_OF_FEW * total));
@@ -130,16 +132,31 @@ pub fn splice(sample: &Sample) -> Result<Splice, SpliceError> {
         let threshold = median(&cells).unwrap_or(0.0);
         SpliceError::TooFew { threshold, endings: most.floor() }
     };
-    let mut tried = vec![];
+    let mut tried: Vec<Tried> = vec![];
+    // Above a higher threshold a generalised Pareto tail has the same ξ and σ + ξ(u' - u): the next one starts there.
+    let mut start: Option<(f64, f64)> = None;
     for i in 0..candidates.len().min(CANDIDATES) {
         let threshold = candidates[i * candidates.len() / candidates.len().min(CANDIDATES)];
-        if let Ok(fit) = fit(&beyond(&cells, threshold), &ParetoTail { threshold }) {
-            let xi = fit.parameters[0].value;
+        let family = ParetoTail { threshold };
+        let outlived = beyond(&cells, threshold);
+        let Ok(mut evidence) = Evidence::with_curve(&outlived, curve.beyond(threshold), COARSE) else {
+            continue;
+        };
+        let natural = start.map(|(xi, sigma)| [xi, sigma + xi * (threshold - last(&tried)), threshold]);
+        let warm = natural.and_then(|n| family.free(&n)).and_then(|x| evidence.fit_from(&family, &[x]).ok());
+        if let Some(fit) = warm.or_else(|| evidence.fit(&family).ok()) {
+            let (xi, sigma) = (fit.parameters[0].value, fit.parameters[1].value);
             tried.push(Tried { threshold, xi, gap: fit.largest_gap.size });
+            start = Some((xi, sigma));
         }
     }
     let best = tried.iter().min_by(|a, b| a.gap.total_cmp(&b.gap)).ok_or_else(few)?;
-    Ok(Splice { tried: tried.clone(), ..tail_above(&cells, best.threshold)? })
+    Ok(Splice { tried: tried.clone(), ..tail_on(&cells, curve, best.threshold)? })
+}
+
+/// The threshold tried last.
+fn last(tried: &[Tried]) -> f64 {
+    tried.last().map_or(0.0, |t| t.threshold)
 }
 
 /// The tail above a given threshold `u` (s, at least 0), from the observations as they are; excesses are strict.
@@ -148,18 +165,21 @@ pub fn splice(sample: &Sample) -> Result<Splice, SpliceError> {
 /// # Errors
 /// [`SpliceError::Unfit`] with fewer than two distinct excesses, or none.
 pub fn tail_above(sample: &Sample, threshold: f64) -> Result<Splice, SpliceError> {
+    tail_on(sample, ProductLimit::of(sample), threshold)
+}
+
+fn tail_on(sample: &Sample, body: ProductLimit, threshold: f64) -> Result<Splice, SpliceError> {
     let unfit = |source| SpliceError::Unfit { threshold, source };
     let family = ParetoTail { threshold };
     let outlived = beyond(sample, threshold);
-    let mut evidence = Evidence::new(&outlived).map_err(unfit)?;
+    let mut evidence = Evidence::with_curve(&outlived, body.beyond(threshold), FINE).map_err(unfit)?;
     let fit = evidence.fit(&family).map_err(unfit)?;
     let mut estimate = |index: usize| {
         let p = fit.parameters[index];
-        let ends = interval(&mut evidence, &family, &fit, p.name, LEVEL);
+        let ends = interval(&mut evidence, &family, &fit, p.name, INTERVAL_LEVEL);
         Estimate { value: p.value, interval: ends.unwrap_or((f64::NEG_INFINITY, f64::INFINITY)) }
     };
     let (xi, sigma) = (estimate(0), estimate(1));
-    let body = ProductLimit::of(sample);
     Ok(Splice {
         threshold,
         survival: body.at(threshold),

@@ -96,8 +96,9 @@ fn rotate(
     for row in a.iter_mut().take(n) {
         (row[p], row[q]) = turn(row[p], row[q]);
     }
-    for j in 0..n {
-        (a[p][j], a[q][j]) = turn(a[p][j], a[q][j]);
+    let (above, below) = a.split_at_mut(q);
+    for (x, y) in above[p].iter_mut().zip(&mut below[0]).take(n) {
+        (*x, *y) = turn(*x, *y);
     }
     for row in vectors.iter_mut().take(n) {
         (row[p], row[q]) = turn(row[p], row[q]);

@@ -7,6 +7,7 @@ use super::condense::middle;
 use super::ensemble::{Ensemble, Member};
 use super::law::TailWeight;
 use super::splice::{Estimate, splice};
+use crate::curve::{TailIndex, TopAges, TopError};
 use crate::outlook::{Grid, Sampled};
 use crate::tally::{Mass, Sample};
 
@@ -61,8 +62,9 @@ pub struct Verdict {
     pub from_replicates: bool,
     /// Tail index of a generalised Pareto tail, by maximum likelihood, and its threshold, s; where there is one.
     pub xi: Option<(Estimate, f64)>,
-    /// Tail index by the moment estimator, where it was consulted.
-    pub moments: Option<Moments>,
+    /// Tail index by the moment estimator on the top tenth of the completions, where it was consulted; its standard error is
+    /// `√((1 + ξ²)/k)`.
+    pub moment: Option<TailIndex>,
 }
 
 /// Weight of each trend.
@@ -78,19 +80,10 @@ pub struct Trends {
     pub mixed: f64,
 }
 
-/// Moment estimate of the tail index from the largest completions (Dekkers, Einmahl & de Haan 1989).
-#[derive(Clone, Copy, Debug, PartialEq)]
-pub struct Moments {
-    /// `ξ̂`.
-    pub xi: f64,
-    /// `√((1 + ξ̂²)/k)`.
-    pub standard_error: f64,
-    /// Number of completions used.
-    pub top: f64,
-}
-
 /// Open waits that must be older than this many times the longest completion, and how many of them.
 const HANGING: (f64, f64) = (4.0, 3.0);
+/// Fewest completions at the top from which a moment estimate is made.
+const FEWEST_AT_TOP: f64 = 10.0;
 /// Depths at which certainty is asked to rise.
 const SHALLOW: f64 = 0.05;
 const DEEP: f64 = 0.2;
@@ -131,17 +124,23 @@ pub fn verdict(
         _ => 0.95,
     };
     let bound = if sample.event_count() < FEW { f64::max(bound, FEW_BOUND) } else { bound };
-    let mut moments = None;
+    let mut moment = None;
     let class = if hanging || weights.heavy > bound {
         TailClass::Heavy
     } else if weights.light > bound {
         TailClass::Light
     } else if weights.unread > 0.5 && depth < SHALLOW {
-        let top = Top::of(sample);
-        if let Top::Estimated(found) = top {
-            moments = Some(found);
+        let completions = Sample { events: sample.events.clone(), ..Sample::default() };
+        match TopAges::tenth(&completions, FEWEST_AT_TOP) {
+            // They end at one age.
+            Err(TopError::AllEqual { .. }) => TailClass::Light,
+            Err(TopError::TooFew { .. }) => TailClass::Undecided,
+            Ok(top) => {
+                let error = |xi: f64| ((1.0 + xi * xi) / top.k()).sqrt();
+                moment = top.moment().map(|m| TailIndex { standard_error: error(m.xi), ..m });
+                read_moment(moment)
+            }
         }
-        top.class()
     } else {
         TailClass::Undecided
     };
@@ -194,7 +193,7 @@ pub fn verdict(
         trends,
         from_replicates,
         xi: splice(sample).ok().map(|s| (s.xi, s.threshold)),
-        moments,
+        moment,
     }
 }
 
@@ -237,46 +236,12 @@ fn share_of_heavy(member: &Member) -> f64 {
     z.map_or(side, |z| 0.5 * erfc(z / std::f64::consts::SQRT_2))
 }
 
-/// What the largest completions say.
-enum Top {
-    /// Too few to say anything.
-    Few,
-    /// They are all equal: the data end at one age.
-    Tied,
-    Estimated(Moments),
-}
-
-impl Top {
-    /// From the top tenth of the completions, at least 10.
-    fn of(sample: &Sample) -> Top {
-        let top = (0.1 * sample.event_count()).floor().max(10.0);
-        let falling: Vec<(f64, f64)> = sample.events.iter().rev().map(|e| (middle(e), e.weight)).collect();
-        let (mut above, mut used) = (0.0, 0);
-        while used < falling.len() && above + falling[used].1 <= top {
-            above += falling[used].1;
-            used += 1;
-        }
-        // The threshold is the next largest; those of its ties that are among the top add nothing.
-        let Some(&(threshold, _)) = falling.get(used) else { return Top::Few };
-        let moment = |p: i32| {
-            falling[..used].iter().map(|(t, weight)| weight * (t / threshold).ln().powi(p)).sum::<f64>() / top
-        };
-        let (first, second) = (moment(1), moment(2));
-        let xi = first + 1.0 - 0.5 / (1.0 - first * first / second);
-        if xi.is_finite() {
-            Top::Estimated(Moments { xi, standard_error: ((1.0 + xi * xi) / top).sqrt(), top })
-        } else {
-            Top::Tied
-        }
-    }
-
-    fn class(&self) -> TailClass {
-        match self {
-            Top::Tied => TailClass::Light,
-            Top::Estimated(m) if m.xi + 2.0 * m.standard_error < 0.0 => TailClass::Light,
-            Top::Estimated(m) if m.xi - 2.0 * m.standard_error > 0.1 => TailClass::Heavy,
-            Top::Few | Top::Estimated(_) => TailClass::Undecided,
-        }
+/// What the moment estimate of the tail index says (Dekkers, Einmahl & de Haan 1989).
+fn read_moment(top: Option<TailIndex>) -> TailClass {
+    match top {
+        Some(t) if t.xi + 2.0 * t.standard_error < 0.0 => TailClass::Light,
+        Some(t) if t.xi - 2.0 * t.standard_error > 0.1 => TailClass::Heavy,
+        _ => TailClass::Undecided,
     }
 }
 

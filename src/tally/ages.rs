@@ -99,6 +99,34 @@ impl Ages {
         }
     }
 
+    /// What is left of `self` without `other`, and of `other` without `self`: equal ages cancel one by one. Ages are
+    /// compared exactly while both are kept so, else by the histogram's bins.
+    pub fn less(&self, other: &Ages) -> (Vec<Bin>, Vec<Bin>) {
+        let (mut mine, mut theirs) = (self.bins(), other.bins());
+        if theirs.is_empty() {
+            return (mine, theirs);
+        }
+        if is_exact(&mine) != is_exact(&theirs) {
+            (mine, theirs) = (binned(&mine), binned(&theirs));
+        }
+        let (mut i, mut j) = (0, 0);
+        while i < mine.len() && j < theirs.len() {
+            match mine[i].low.total_cmp(&theirs[j].low) {
+                std::cmp::Ordering::Less => i += 1,
+                std::cmp::Ordering::Greater => j += 1,
+                std::cmp::Ordering::Equal => {
+                    let both = mine[i].count.min(theirs[j].count);
+                    mine[i].count -= both;
+                    theirs[j].count -= both;
+                    (i, j) = (i + 1, j + 1);
+                }
+            }
+        }
+        mine.retain(|b| b.count > 0);
+        theirs.retain(|b| b.count > 0);
+        (mine, theirs)
+    }
+
     /// How many ages it holds.
     pub fn count(&self) -> u64 {
         match self.0.as_deref() {
@@ -225,6 +253,20 @@ fn histogram_bins<C: Counter>(h: &Histogram<C>) -> Vec<Bin> {
         .collect()
 }
 
+fn is_exact(bins: &[Bin]) -> bool {
+    bins.iter().all(|b| b.low == b.high)
+}
+
+/// Bins of the histogram that would hold these.
+fn binned(bins: &[Bin]) -> Vec<Bin> {
+    let Some(histogram) = new_histogram::<u32>() else { return Vec::new() };
+    let mut store = Store::Narrow(histogram);
+    for bin in bins {
+        store.record(ticks(0.5 * (bin.low + bin.high)), bin.count);
+    }
+    Ages(Some(Box::new(store))).bins()
+}
+
 #[inline]
 fn ticks(age: f64) -> u64 {
     ((age * TICKS).round() as u64).max(1)
@@ -256,6 +298,19 @@ mod tests {
         assert_eq!(bins.iter().map(|b| b.count).sum::<u64>(), 20_000);
         assert!(bins.iter().all(|b| b.high / b.low < 1.0015), "bins stay within three digits");
         assert!(bins.windows(2).all(|w| w[0].high <= w[1].low));
+    }
+
+    #[test]
+    fn what_is_left_of_each() {
+        let (left, right) = of([1.0, 2.0, 2.0, 3.0]).less(&of([2.0, 3.0, 4.0]));
+        let ages = |bins: &[Bin]| bins.iter().map(|b| (b.low, b.count)).collect::<Vec<_>>();
+        assert_eq!((ages(&left), ages(&right)), (vec![(1.0, 1), (2.0, 1)], vec![(4.0, 1)]));
+        // A histogram against exact ages: by bins.
+        let many = of((1..=6_000).map(|i| f64::from(i) * 1e-3));
+        let few = of((1..=3_000).map(|i| f64::from(i) * 1e-3));
+        let (left, right) = many.less(&few);
+        assert_eq!(left.iter().map(|b| b.count).sum::<u64>(), 3_000);
+        assert!(right.is_empty());
     }
 
     #[test]

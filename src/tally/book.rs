@@ -3,7 +3,8 @@
 use std::collections::HashMap;
 
 use super::Tally;
-use crate::wait::{StreamError, Wait, check_stream};
+use super::carry::crossings;
+use crate::wait::{Age, StreamError, Wait, check_stream};
 
 /// Length of a period, s.
 const DAY: f64 = 86_400.0;
@@ -89,14 +90,33 @@ impl Book {
 }
 
 impl Days {
-    /// Counts one wait.
+    /// Counts one wait under the day in which it ended; one that spans days also enters and leaves those before.
     #[inline]
     pub fn add(&mut self, wait: &Wait) {
         let day = Day::of(wait.at());
+        if let (Day::Number(_), Age::Exact(age)) = (day, wait.age())
+            && age >= DAY
+        {
+            return self.add_long(day, wait);
+        }
         // Records come roughly in order of time, so the day is nearly always the last.
         match self.days.last_mut() {
             Some((last, tally)) if *last == day => tally.add(wait),
             _ => self.at(day).add(wait),
+        }
+    }
+
+    fn add_long(&mut self, day: Day, wait: &Wait) {
+        self.at(day).end(wait);
+        let mut first = day;
+        for crossing in crossings(wait, DAY) {
+            let into = Day::Number(crossing.into as i32);
+            first = Day::Number(crossing.into as i32 - 1);
+            self.at(into).enter(wait, crossing.age);
+            self.at(first).carry(wait, crossing.age);
+        }
+        if wait.entered() > 0.0 {
+            self.at(first).enter(wait, wait.entered());
         }
     }
 
@@ -137,6 +157,14 @@ impl Days {
         sum
     }
 
+    /// The days from `opening` on (days since the epoch) and everything undated: a window as a policy means it.
+    pub fn since(&self, opening: i32) -> Tally {
+        self.where_day(|day| match day {
+            Day::Undated => true,
+            Day::Number(n) => n >= opening,
+        })
+    }
+
     /// The last dated day, if any.
     pub fn last_day(&self) -> Option<i32> {
         match self.days.last() {
@@ -150,6 +178,29 @@ impl Days {
 mod tests {
     use super::*;
     use crate::wait::Ending;
+
+    #[test]
+    fn a_window_sees_long_waits_from_its_opening_on() {
+        let at = |day: f64| day * DAY;
+        let long =
+            |days: f64, end: f64, ending| Wait::new(at(days), ending).unwrap().with_at(at(end)).unwrap();
+        let mut days = Days::default();
+        days.add(&long(5.0, 12.5, Ending::Done));
+        days.add(&long(1.0, 20.0, Ending::Waiting));
+        days.add(&Wait::new(7.0, Ending::Done).unwrap().with_at(at(9.9)).unwrap());
+        // Begun on day 7.5: it had waited 2.5 days when the window opened on day 10.
+        let window = days.since(10).first_attempts();
+        let ages: Vec<(f64, f64)> = window.entries.iter().map(|m| (m.age / DAY, m.weight)).collect();
+        assert_eq!(ages, [(2.5, 1.0)]);
+        assert_eq!(window.totals(), [1.0, 0.0, 0.0, 1.0]);
+        // All days together: entries and exits by carrying over cancel.
+        let whole = days.whole().first_attempts();
+        assert_eq!((whole.entries.len(), whole.totals()), (0, [2.0, 0.0, 0.0, 1.0]));
+        // A window that closes on day 11: the long wait is open when last seen.
+        let before = days.where_day(|d| d <= Day::Number(11)).first_attempts();
+        assert_eq!(before.totals(), [1.0, 0.0, 0.0, 1.0]);
+        assert_eq!(before.waiting[0].age, at(4.5));
+    }
 
     #[test]
     fn days_split_and_join() {

@@ -87,6 +87,37 @@ impl Cells {
         }
     }
 
+    /// The same with neighbouring events joined until there are at most about `most` cells of them, by steps of equal
+    /// ratio; for what is costly by the cell and needs no finer ages. Buckets without an upper bound stay apart, and so
+    /// do cells wider than a step.
+    pub fn coarsened(&self, most: usize) -> Cells {
+        let positive = |t: f64| t > 0.0 && t.is_finite();
+        let ages = || self.events.iter().map(|e| e.upto).filter(|&t| positive(t));
+        let (first, last) = (ages().fold(f64::INFINITY, f64::min), ages().fold(0.0, f64::max));
+        if self.events.len() <= most || last <= first {
+            return self.clone();
+        }
+        let step = (last / first).ln() / most as f64;
+        let key = |t: f64| ((t / first).ln() / step).floor();
+        let mut joined: Vec<EventCell> = Vec::with_capacity(most + 1);
+        for e in &self.events {
+            match joined.last_mut() {
+                Some(kept)
+                    if positive(e.upto)
+                        && positive(kept.over)
+                        && key(kept.over.max(first)) == key(e.upto)
+                        && e.over >= kept.over =>
+                {
+                    kept.upto = e.upto;
+                    kept.done += e.done;
+                    kept.failed += e.failed;
+                }
+                _ => joined.push(*e),
+            }
+        }
+        Cells { events: joined, ..self.clone() }
+    }
+
     /// Total weight of each ending, in the order of [`Ending::ALL`].
     pub fn totals(&self) -> [f64; 4] {
         [
@@ -186,6 +217,18 @@ impl Sample {
 #[cfg(test)]
 mod tests {
     use super::*;
+
+    #[test]
+    fn coarse_cells_hold_the_same_waits() {
+        let waits: Vec<Wait> =
+            (1..=5000).map(|i| Wait::new(f64::from(i) * 1e-3, Ending::Done).unwrap()).collect();
+        let cells = Cells::from_waits(&waits);
+        let coarse = cells.coarsened(300);
+        assert!(coarse.events.len() <= 301 && coarse.events.len() > 100, "{}", coarse.events.len());
+        assert_eq!(coarse.totals(), cells.totals());
+        assert!(coarse.events.windows(2).all(|w| w[0].upto < w[1].over || w[0].upto <= w[1].over));
+        assert_eq!(cells.coarsened(5000), cells);
+    }
 
     #[test]
     fn causes_split_the_same_waits() {

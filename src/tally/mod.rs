@@ -5,6 +5,7 @@
 mod ages;
 mod book;
 mod buckets;
+mod carry;
 mod cells;
 
 pub use ages::{Ages, Bin, EXACT_AGES};
@@ -28,6 +29,8 @@ pub struct Tally {
 struct Side {
     ages: [Ages; 4],
     entries: Ages,
+    /// Exits by carrying over into the next period; they cancel with the entries there ([`carry`]).
+    carried: Ages,
     buckets: Option<Box<Buckets>>,
 }
 
@@ -35,19 +38,40 @@ impl Tally {
     /// Counts one wait.
     #[inline]
     pub fn add(&mut self, wait: &Wait) {
-        let side = if wait.attempt() == 1 { &mut self.first } else { self.retry.get_or_insert_default() };
+        self.end(wait);
+        if wait.entered() > 0.0 {
+            self.side(wait).entries.add(wait.entered(), wait.count());
+        }
+    }
+
+    /// Counts how a wait ended, not where watching it began.
+    #[inline]
+    fn end(&mut self, wait: &Wait) {
+        let side = self.side(wait);
         match wait.age() {
             Age::Exact(age) => side.ages[wait.ending() as usize].add(age, wait.count()),
             Age::Between { over, upto } => {
                 side.buckets.get_or_insert_default().add(over, upto, wait.ending(), wait.count());
             }
         }
-        if wait.entered() > 0.0 {
-            side.entries.add(wait.entered(), wait.count());
-        }
         if let Some(at) = wait.at() {
             self.see(at, at);
         }
+    }
+
+    /// A wait enters the risk set at an age, s.
+    fn enter(&mut self, wait: &Wait, age: f64) {
+        self.side(wait).entries.add(age, wait.count());
+    }
+
+    /// A wait leaves for the next period at an age, s.
+    fn carry(&mut self, wait: &Wait, age: f64) {
+        self.side(wait).carried.add(age, wait.count());
+    }
+
+    #[inline]
+    fn side(&mut self, wait: &Wait) -> &mut Side {
+        if wait.attempt() == 1 { &mut self.first } else { self.retry.get_or_insert_default() }
     }
 
     /// Adds all of `other`.
@@ -99,6 +123,7 @@ impl Side {
             mine.merge(theirs);
         }
         self.entries.merge(&other.entries);
+        self.carried.merge(&other.carried);
         if let Some(theirs) = &other.buckets {
             self.buckets.get_or_insert_default().merge(theirs);
         }
@@ -126,8 +151,11 @@ impl Side {
                 }
             }
         }
-        cells.entries =
-            self.entries.bins().iter().map(|b| Mass { age: b.low, weight: b.count as f64 }).collect();
+        let (entered, left) = self.entries.less(&self.carried);
+        let mass = |bin: &Bin| Mass { age: bin.low, weight: bin.count as f64 };
+        cells.entries = entered.iter().map(mass).collect();
+        // Carried over out of the window: open when last seen.
+        cells.waiting.extend(left.iter().map(mass));
         cells.tidy();
         cells
     }

@@ -69,7 +69,7 @@ impl GeneralisedGammaLaw {
         gradient[2] = -self.shape * slope - times(hazard, ln_x);
     }
 
-    /// `E[T^1; X at shape + 1/p]/E[…]`: the factor `Γ(shape + 1/p)/Γ(shape)`, times `a`, as a logarithm.
+    /// `ln E[T] = ln a + ln Γ(shape + 1/p) - ln Γ(shape)`.
     fn ln_mean(&self) -> f64 {
         self.ln_a + ln_gamma(self.shape + 1.0 / self.p) - ln_gamma(self.shape)
     }

@@ -1,6 +1,7 @@
 //! Gompertz: hazard grows exponentially with age.
 
 use super::prelude::*;
+use crate::numeric::special::scaled_exponential_integral;
 
 /// `S(t) = exp(-shape·(e^(rate·t) - 1))`.
 pub struct Gompertz;
@@ -106,33 +107,4 @@ impl Law for GompertzLaw {
         let rest = GompertzLaw { shape: self.shape * (self.rate * t.max(0.0)).exp(), ..*self };
         if rest.shape == f64::INFINITY { 0.0 } else { rest.restricted_mean(limit - t) }
     }
-}
-
-/// `e^x E₁(x)` for `x > 0`: series below 1 (Abramowitz & Stegun 5.1.11), continued fraction above (5.1.22).
-pub(crate) fn scaled_exponential_integral(x: f64) -> f64 {
-    const EULER: f64 = 0.577_215_664_901_532_9;
-    if x < 1.0 {
-        let (mut sum, mut term) = (0.0, 1.0);
-        for n in 1..=25 {
-            let n = f64::from(n);
-            term *= -x / n;
-            sum -= term / n;
-        }
-        return x.exp() * (sum - EULER - x.ln());
-    }
-    // Lentz's evaluation of 1/(x + 1 - 1/(x + 3 - 4/(x + 5 - …))).
-    let mut b = x + 1.0;
-    let (mut c, mut d) = (1e300, 1.0 / b);
-    let mut value = d;
-    for n in 1..=300 {
-        let a = -f64::from(n * n);
-        b += 2.0;
-        d = 1.0 / (a * d + b);
-        c = b + a / c;
-        value *= c * d;
-        if (c * d - 1.0).abs() < 1e-16 {
-            break;
-        }
-    }
-    value
 }

@@ -137,6 +137,19 @@ impl Law for InverseGaussianLaw {
         // A bulk near mu when concentrated, else near the mode lambda/3.
         self.mu.min(self.lambda)
     }
+
+    fn survival_on(&self, ages: &[f64], _: &[f64], out: &mut [f64]) {
+        let doubled = (2.0 * self.concentration).exp();
+        for (s, &t) in out.iter_mut().zip(ages) {
+            let (r, a, b, _) = self.at(t);
+            // The definition, unless it overflows or cancels more than three digits.
+            let whole = normal_tail(a);
+            *s = if self.concentration < 100.0 { whole - doubled * normal_tail(b) } else { 0.0 };
+            if *s < 1e-3 * whole || *s < 1e-200 {
+                *s = self.ln_tail(r, a, b).exp();
+            }
+        }
+    }
 }
 
 /// `M(a) - M(b)` for a small step `b - a`, of the Mills ratio `M` whose slope is `zM(z) - 1`: 5-point Gauss rule.

@@ -35,17 +35,15 @@ impl<L: Law, const N: usize> Mixture<L, N> {
 
     /// Turns the parts' own gradients (already in `gradient`) into the mixture's.
     fn combine(&self, logs: [f64; N], gradient: &mut [f64]) -> f64 {
-        let total = ln_sum(&logs);
+        let (total, weights) = ln_sum_and_weights(&logs);
         let (odds, rest) = gradient.split_at_mut(N - 1);
         let width = rest.len() / N;
         for (i, own) in rest.chunks_exact_mut(width).enumerate() {
-            // Share of part i among what is there; none has one where nothing is.
-            let part = if total == f64::NEG_INFINITY { 0.0 } else { (logs[i] - total).exp() };
             for g in own {
-                *g = times(part, *g);
+                *g = times(weights[i], *g);
             }
             if i < N - 1 {
-                odds[i] = if total == f64::NEG_INFINITY { 0.0 } else { part - self.shares[i] };
+                odds[i] = if total == f64::NEG_INFINITY { 0.0 } else { weights[i] - self.shares[i] };
             }
         }
         total
@@ -108,13 +106,8 @@ impl<L: Law, const N: usize> Law for Mixture<L, N> {
 
     /// The parts' own, weighted by what is left of each at `t`.
     fn mean_residual_life(&self, t: f64, limit: f64) -> f64 {
-        let logs = self.logs(|part| part.log_survival(t));
-        let total = ln_sum(&logs);
-        if total == f64::NEG_INFINITY {
-            return 0.0;
-        }
-        let left = |i: usize| (logs[i] - total).exp();
-        (0..N).map(|i| times(left(i), self.parts[i].mean_residual_life(t, limit))).sum()
+        let (_, left) = ln_sum_and_weights(&self.logs(|part| part.log_survival(t)));
+        self.parts.iter().zip(left).map(|(part, w)| times(w, part.mean_residual_life(t, limit))).sum()
     }
 
     fn survival_on(&self, ages: &[f64], log_ages: &[f64], out: &mut [f64]) {
@@ -177,6 +170,11 @@ pub(crate) fn free_mixture<const N: usize>(natural: &[f64], parts: &[Coordinate]
 
 /// `ln Σ e^xᵢ`.
 fn ln_sum<const N: usize>(x: &[f64; N]) -> f64 {
+    ln_sum_and_weights(x).0
+}
+
+/// `ln Σ e^xᵢ`, and what share of the sum each has; none has one where nothing is.
+fn ln_sum_and_weights<const N: usize>(x: &[f64; N]) -> (f64, [f64; N]) {
     let mut top = 0;
     for i in 1..N {
         if x[i] > x[top] {
@@ -184,8 +182,15 @@ fn ln_sum<const N: usize>(x: &[f64; N]) -> f64 {
         }
     }
     if x[top] == f64::NEG_INFINITY {
-        return f64::NEG_INFINITY;
+        return (f64::NEG_INFINITY, [0.0; N]);
     }
-    let rest: f64 = (0..N).filter(|&i| i != top).map(|i| (x[i] - x[top]).exp()).sum();
-    x[top] + rest.ln_1p()
+    let mut weights = [1.0; N];
+    let mut rest = 0.0;
+    for i in 0..N {
+        if i != top {
+            weights[i] = (x[i] - x[top]).exp();
+            rest += weights[i];
+        }
+    }
+    (x[top] + rest.ln_1p(), weights.map(|w| w / (1.0 + rest)))
 }

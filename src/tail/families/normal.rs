@@ -3,7 +3,7 @@
 
 use super::prelude::*;
 use crate::numeric::integrate;
-use crate::numeric::special::{HALF_LN_TWO_PI, ln_normal_tail, mills, mills_deficit};
+use crate::numeric::special::{HALF_LN_TWO_PI, ln_normal_tail, mills, mills_deficit, normal_tail};
 
 /// `S(t) = Φ((mu - t)/sigma)/Φ(mu/sigma)`.
 pub struct Normal;
@@ -155,5 +155,20 @@ impl Law for NormalLaw {
             return self.residual(self.cut + t / self.sigma);
         }
         residual_by_quadrature(self, t, limit)
+    }
+
+    fn survival_on(&self, ages: &[f64], _: &[f64], out: &mut [f64]) {
+        let per_sigma = 1.0 / self.sigma;
+        if self.cut > 0.0 {
+            for (s, t) in out.iter_mut().zip(ages) {
+                let y = t * per_sigma;
+                *s = ((-y * (self.cut + 0.5 * y)).exp() * mills(self.cut + y) * self.pull).min(1.0);
+            }
+        } else {
+            let per_kept = (-self.ln_kept).exp();
+            for (s, t) in out.iter_mut().zip(ages) {
+                *s = (normal_tail(self.cut + t * per_sigma) * per_kept).min(1.0);
+            }
+        }
     }
 }

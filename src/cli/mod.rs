@@ -1,0 +1,55 @@
+//! The command line: arguments, progress, printing. A file a command.
+
+mod demo;
+mod exit;
+mod options;
+mod reading;
+mod text;
+mod vet;
+mod weigh;
+
+use std::ffi::OsString;
+use std::process::ExitCode;
+
+use clap::{Parser, Subcommand};
+
+pub use exit::Exit;
+
+/// Finds how long to wait before giving up, from completion times that are partly cut off by a timeout.
+#[derive(Debug, Parser)]
+#[command(name = "outwait", version, max_term_width = 100, after_help = EXIT_CODES)]
+struct Arguments {
+    #[command(subcommand)]
+    command: Command,
+}
+
+const EXIT_CODES: &str = "Exit codes: 0 well, 1 the gate is shut, 2 wrong usage, 3 bad input, \
+4 not enough evidence anywhere, 5 the system failed.";
+
+#[derive(Debug, Subcommand)]
+enum Command {
+    /// Weigh waits: for each stream, how long to wait before giving up, and why
+    Weigh(weigh::Weigh),
+    /// Read a policy and say what it means for each stream, or what is wrong with it
+    Vet(vet::Vet),
+    /// Write the demo scenario (waits, policy, what to expect) into a folder
+    Demo(demo::Demo),
+}
+
+/// Parses the arguments, runs the command, prints its errors on standard error, and maps the outcome to an exit code.
+pub fn run(arguments: impl IntoIterator<Item = OsString>) -> ExitCode {
+    let parsed = match Arguments::try_parse_from(arguments) {
+        Ok(parsed) => parsed,
+        Err(error) => {
+            // Help and version go to standard output and are no error; a closed pipe there is none either.
+            let _ = error.print();
+            return if error.use_stderr() { Exit::Usage.into() } else { Exit::Well.into() };
+        }
+    };
+    let outcome = match parsed.command {
+        Command::Weigh(weigh) => weigh.run(),
+        Command::Vet(vet) => vet.run(),
+        Command::Demo(demo) => demo.run(),
+    };
+    exit::report(outcome)
+}

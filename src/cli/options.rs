@@ -1,0 +1,189 @@
+//! Options that commands share, and how their texts are read.
+
+use std::io::{self, IsTerminal};
+use std::path::{Path, PathBuf};
+
+use anyhow::Context;
+use clap::{Args, ValueEnum};
+
+use super::exit::{Exit, Failure, OrExit};
+use super::text::Style;
+use crate::intake::{Allowed, Format, Measure, Options, Selector};
+use crate::policy::{self, Policy};
+
+/// How output is written.
+#[derive(Clone, Copy, Debug, Default, PartialEq, Eq, ValueEnum)]
+pub(super) enum Output {
+    /// For a person at a terminal
+    #[default]
+    Text,
+    /// One JSON document
+    Json,
+    /// The same document as YAML
+    Yaml,
+}
+
+impl Output {
+    /// A document in JSON or YAML; `text` makes the other form.
+    pub(super) fn render<T: serde::Serialize>(
+        self,
+        document: &T,
+        text: impl FnOnce() -> String,
+    ) -> Result<String, Failure> {
+        match self {
+            Output::Text => Ok(text()),
+            Output::Json => serde_json::to_string_pretty(document)
+                .map(|json| json + "\n")
+                .context("cannot write JSON")
+                .or_exit(Exit::System),
+            Output::Yaml => {
+                serde_yaml::to_string(document).context("cannot write YAML").or_exit(Exit::System)
+            }
+        }
+    }
+}
+
+/// What every command takes.
+#[derive(Clone, Debug, Args)]
+pub(super) struct Common {
+    /// Policy file: what waiting is worth, stream by stream
+    #[arg(long, value_name = "FILE", env = "OUTWAIT_POLICY")]
+    pub(super) policy: Option<PathBuf>,
+    /// How to write the answer
+    #[arg(long, value_enum, default_value_t)]
+    pub(super) format: Output,
+    /// Only waits that ended or were last seen then or later: RFC 3339, a date, or Unix seconds
+    #[arg(long, value_name = "TIME", value_parser = moment)]
+    pub(super) since: Option<f64>,
+    /// Only waits that ended or were last seen before then
+    #[arg(long, value_name = "TIME", value_parser = moment)]
+    pub(super) until: Option<f64>,
+    /// Only these streams (`*` any run of characters, `?` one); a plain name also names records that have none
+    #[arg(long, value_name = "GLOB", value_parser = selector)]
+    pub(super) stream: Option<Selector>,
+    /// Seed of everything drawn: the same seed gives the same bytes
+    #[arg(long, value_name = "N", default_value_t = 1)]
+    pub(super) seed: u64,
+}
+
+impl Common {
+    /// Reads the policy, if one was named.
+    pub(super) fn load_policy(&self) -> Result<Option<Policy>, Failure> {
+        self.policy.as_deref().map(load_policy).transpose()
+    }
+}
+
+/// What commands that read waits take besides.
+#[derive(Clone, Debug, Args)]
+pub(super) struct Reading {
+    /// Files of waits (NDJSON, CSV, SWF; plain, gzip or zstd); `-` is standard input
+    #[arg(required = true, value_name = "FILE")]
+    pub(super) files: Vec<std::ffi::OsString>,
+    /// How many bad lines are put up with: a number, or `all`
+    #[arg(long, value_name = "N|all", default_value = "0", value_parser = bad_lines)]
+    pub(super) bad_lines: Allowed,
+    /// Which time of a job log is the wait
+    #[arg(long, value_enum, default_value_t)]
+    pub(super) measure: JobTime,
+    /// Format of every file, instead of finding it out
+    #[arg(long, value_name = "FORMAT", value_parser = format)]
+    pub(super) input: Option<Format>,
+    /// Threads that read; as many as there are cores unless said
+    #[arg(long, value_name = "N")]
+    pub(super) threads: Option<std::num::NonZeroUsize>,
+}
+
+/// A time of a job log.
+#[derive(Clone, Copy, Debug, Default, PartialEq, Eq, ValueEnum)]
+pub(super) enum JobTime {
+    /// From submission to start
+    #[default]
+    Wait,
+    /// From start to end
+    Run,
+}
+
+impl Reading {
+    /// The same as the reader takes it.
+    pub(super) fn options(&self, common: &Common) -> Options {
+        Options {
+            format: self.input,
+            streams: common.stream.clone(),
+            measure: match self.measure {
+                JobTime::Wait => Measure::Wait,
+                JobTime::Run => Measure::Run,
+            },
+            bad_lines: self.bad_lines,
+            since: common.since,
+            until: common.until,
+            threads: self.threads,
+            ..Options::default()
+        }
+    }
+}
+
+/// Reads a policy file.
+pub(super) fn load_policy(path: &Path) -> Result<Policy, Failure> {
+    let name = path.display().to_string();
+    let bytes = std::fs::read(path)
+        .with_context(|| format!("cannot read the policy {name}; name a file that exists and may be read"))
+        .or_exit(Exit::BadInput)?;
+    policy::parse_bytes(&bytes, &name).or_exit(Exit::BadInput)
+}
+
+/// Colour for standard output: only on a terminal, and not where `NO_COLOR` asks for none.
+pub(super) fn style() -> Style {
+    let unwanted = std::env::var_os("NO_COLOR").is_some_and(|v| !v.is_empty());
+    Style { colour: !unwanted && io::stdout().is_terminal() }
+}
+
+fn moment(text: &str) -> Result<f64, String> {
+    let explain = || {
+        format!(
+            "{text:?} is not a time; write 2026-11-30T10:00:00Z, 2026-11-30 (midnight UTC) or Unix seconds"
+        )
+    };
+    if let Ok(seconds) = text.parse::<f64>() {
+        return if seconds.is_finite() { Ok(seconds) } else { Err(explain()) };
+    }
+    if let Ok(time) = text.parse::<jiff::Timestamp>() {
+        return Ok(time.as_second() as f64 + f64::from(time.subsec_nanosecond()) / 1e9);
+    }
+    let date: jiff::civil::Date = text.parse().map_err(|_| explain())?;
+    let midnight = date.to_datetime(jiff::civil::Time::midnight());
+    let time = jiff::tz::Offset::UTC.to_timestamp(midnight).map_err(|_| explain())?;
+    Ok(time.as_second() as f64)
+}
+
+fn selector(text: &str) -> Result<Selector, String> {
+    Selector::new(text).map_err(|error| format!("{error}; {}", error.remedy()))
+}
+
+fn bad_lines(text: &str) -> Result<Allowed, String> {
+    match text {
+        "all" => Ok(Allowed::All),
+        _ => text.parse().map(Allowed::AtMost).map_err(|_| "write a number, or `all`".into()),
+    }
+}
+
+fn format(text: &str) -> Result<Format, String> {
+    Format::parse(text).ok_or_else(|| {
+        let names: Vec<&str> = Format::ALL.iter().map(|f| f.name()).collect();
+        format!("the formats are {}", names.join(", "))
+    })
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    #[test]
+    fn times() {
+        assert_eq!(moment("2026-11-30"), Ok(1_795_996_800.0));
+        assert_eq!(moment("2026-11-30T00:00:00Z"), Ok(1_795_996_800.0));
+        assert_eq!(moment("1795996800.5"), Ok(1_795_996_800.5));
+        assert!(moment("yesterday").is_err() && moment("NaN").is_err());
+        assert_eq!(bad_lines("all"), Ok(Allowed::All));
+        assert!(bad_lines("-1").is_err() && format("xml").is_err());
+    }
+}

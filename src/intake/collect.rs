@@ -1,0 +1,156 @@
+//! What one block of a file gives: waits to the sink, and the rest to be settled in the order of the file.
+
+use std::collections::BTreeMap;
+
+use super::flaw::Flaw;
+use super::pairs::Halves;
+use super::record::{Fields, Made, Record, make};
+use super::report::EXAMPLES;
+use super::streams::Streams;
+use super::{Options, Selector, Sink};
+
+/// What a block leaves behind once its waits are in the sink.
+#[derive(Debug)]
+pub(super) struct Outcome {
+    pub(super) lines: u64,
+    pub(super) waits: u64,
+    pub(super) other_streams: u64,
+    pub(super) outside_window: u64,
+    pub(super) unmeasured: u64,
+    pub(super) partial: u64,
+    pub(super) flaws: Flaws,
+    pub(super) halves: Halves,
+    pub(super) comments: Vec<String>,
+}
+
+/// Refused lines: counted by field and reason, the first few kept.
+#[derive(Debug, Default)]
+pub(super) struct Flaws {
+    pub(super) counts: BTreeMap<(&'static str, &'static str), u64>,
+    pub(super) first: Vec<(u64, Flaw)>,
+}
+
+impl Flaws {
+    pub(super) fn add(&mut self, line: u64, flaw: Flaw) {
+        *self.counts.entry((flaw.field(), flaw.kind())).or_default() += 1;
+        // Halves of waits are settled after the other lines of their block, so not all come in order.
+        let place = self.first.partition_point(|&(earlier, _)| earlier <= line);
+        if place < EXAMPLES {
+            self.first.insert(place, (line, flaw));
+            self.first.truncate(EXAMPLES);
+        }
+    }
+}
+
+/// Where the formats bring what they read. Numbers of lines count from 0 at the start of the block.
+pub(super) struct Collector<'w, S> {
+    options: &'w Options,
+    sink: &'w mut S,
+    streams: &'w mut Streams,
+    outcome: Outcome,
+}
+
+impl<'w, S: Sink> Collector<'w, S> {
+    pub(super) fn new(options: &'w Options, sink: &'w mut S, streams: &'w mut Streams) -> Collector<'w, S> {
+        let outcome = Outcome {
+            lines: 0,
+            waits: 0,
+            other_streams: 0,
+            outside_window: 0,
+            unmeasured: 0,
+            partial: 0,
+            flaws: Flaws::default(),
+            halves: Halves::default(),
+            comments: Vec::new(),
+        };
+        Collector { options, sink, streams, outcome }
+    }
+
+    pub(super) fn finish(self) -> Outcome {
+        self.outcome
+    }
+
+    pub(super) fn line_limit(&self) -> usize {
+        self.options.line_bytes
+    }
+
+    pub(super) fn nameless(&self) -> Option<&'w str> {
+        self.options.streams.as_ref().and_then(Selector::name)
+    }
+
+    pub(super) fn count_lines(&mut self, lines: u64) {
+        self.outcome.lines += lines;
+    }
+
+    pub(super) fn refuse(&mut self, line: u64, flaw: Flaw) {
+        self.outcome.flaws.add(line, flaw);
+    }
+
+    pub(super) fn comment(&mut self, text: &str) {
+        if !text.is_empty() {
+            self.outcome.comments.push(text.into());
+        }
+    }
+
+    /// A record that carries no value of the measure asked for.
+    pub(super) fn unmeasured(&mut self) {
+        self.outcome.unmeasured += 1;
+    }
+
+    /// A record of a part of a job that another record has as a whole.
+    pub(super) fn partial(&mut self) {
+        self.outcome.partial += 1;
+    }
+
+    #[inline]
+    pub(super) fn record(&mut self, line: u64, fields: &Fields<'_>) -> Result<(), Flaw> {
+        match make(fields, self.nameless())? {
+            Made::Whole(record) => self.whole(&record, fields.is_bare()),
+            Made::Half(half) => {
+                let stream = self.streams.enter(half.stream, self.options.streams.as_ref())?;
+                stream.note_time(half.time);
+                if stream.wanted {
+                    self.outcome.halves.push(line, &half);
+                } else {
+                    self.outcome.other_streams += 1;
+                }
+                Ok(())
+            }
+        }
+    }
+
+    /// Takes a wait. `bare`: its age came as a number without a unit.
+    #[inline]
+    pub(super) fn whole(&mut self, record: &Record<'_>, bare: bool) -> Result<(), Flaw> {
+        let stream = self.streams.enter(record.stream, self.options.streams.as_ref())?;
+        if let Some(at) = record.wait.at() {
+            stream.note_time(at);
+        }
+        if !stream.wanted {
+            self.outcome.other_streams += 1;
+            return Ok(());
+        }
+        if !self.options.is_in_window(record.wait.at())? {
+            self.outcome.outside_window += 1;
+            return Ok(());
+        }
+        if bare {
+            stream.note_age(&record.wait);
+        }
+        self.sink.take(record);
+        self.outcome.waits += 1;
+        Ok(())
+    }
+}
+
+impl Options {
+    /// Whether a wait that ended or was last seen then is wanted.
+    #[inline]
+    pub(super) fn is_in_window(&self, at: Option<f64>) -> Result<bool, Flaw> {
+        if self.since.is_none() && self.until.is_none() {
+            return Ok(true);
+        }
+        let at = at.ok_or(Flaw::Undated)?;
+        Ok(self.since.is_none_or(|since| at >= since) && self.until.is_none_or(|until| at < until))
+    }
+}

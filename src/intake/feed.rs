@@ -1,0 +1,179 @@
+//! The inputs, one after the other, as blocks that can be read on their own.
+
+use std::sync::Arc;
+use std::sync::atomic::{AtomicU64, Ordering};
+use std::vec;
+
+use super::blocks::{Blocks, Found, Records, count_lines};
+use super::csv::Columns;
+use super::error::{HeaderError, IntakeError};
+use super::source::{Packing, Source, Unpacked};
+use super::{Format, Options, Selector, csv, swf};
+
+/// One block of one input.
+pub(super) struct Task {
+    /// The number of the input.
+    pub(super) file: usize,
+    pub(super) layout: Arc<Layout>,
+    pub(super) found: Found,
+    pub(super) bytes: Vec<u8>,
+    /// Lines between the block before and this one (a header).
+    pub(super) lines_before: u64,
+    /// Bytes read so far of all inputs, as they lie there.
+    pub(super) bytes_read: u64,
+}
+
+/// How to read the blocks of one input.
+#[derive(Debug)]
+pub(super) enum Layout {
+    Ndjson,
+    Csv(Columns),
+    Swf { unix_start: Option<f64> },
+}
+
+impl Layout {
+    pub(super) fn format(&self) -> Format {
+        match self {
+            Layout::Ndjson => Format::Ndjson,
+            Layout::Csv(_) => Format::Csv,
+            Layout::Swf { .. } => Format::Swf,
+        }
+    }
+
+    fn records(&self) -> Records {
+        match self {
+            Layout::Csv(columns) => Records::Rows { delimiter: columns.delimiter },
+            _ => Records::Lines,
+        }
+    }
+}
+
+pub(super) struct Feed<'o> {
+    options: &'o Options,
+    sources: std::iter::Enumerate<vec::IntoIter<Source>>,
+    open: Option<Open>,
+    bytes_read: Arc<AtomicU64>,
+    /// Bytes left before the limit, unpacked.
+    allowance: u64,
+}
+
+struct Open {
+    number: usize,
+    file: String,
+    packing: Option<Packing>,
+    blocks: Blocks<'static>,
+    layout: Arc<Layout>,
+    lines_before: u64,
+    /// Unpacked bytes that the allowance has paid for.
+    paid: u64,
+}
+
+impl<'o> Feed<'o> {
+    pub(super) fn new(sources: Vec<Source>, options: &'o Options) -> Feed<'o> {
+        Feed {
+            options,
+            sources: sources.into_iter().enumerate(),
+            open: None,
+            bytes_read: Arc::default(),
+            allowance: options.total_bytes,
+        }
+    }
+
+    /// The next block, in a buffer that is no longer needed; `None` after the last.
+    pub(super) fn next(&mut self, mut buffer: Vec<u8>) -> Result<Option<Task>, IntakeError> {
+        loop {
+            let Some(open) = &mut self.open else {
+                let Some((number, source)) = self.sources.next() else { return Ok(None) };
+                self.open = open(number, source, self.options, &self.bytes_read)?;
+                continue;
+            };
+            let found = open
+                .blocks
+                .next(&mut buffer, open.layout.records())
+                .map_err(|error| Unpacked::error(&open.file, open.packing, error))?;
+            let unpaid = open.blocks.read - std::mem::replace(&mut open.paid, open.blocks.read);
+            self.allowance = self.allowance.checked_sub(unpaid).ok_or_else(|| IntakeError::TooMuch {
+                file: open.file.clone(),
+                limit: self.options.total_bytes,
+            })?;
+            match found {
+                // A header with nothing under it is told of in a block without lines.
+                None if open.lines_before == 0 => self.open = None,
+                found => {
+                    let found = found.unwrap_or(Found::Records);
+                    return Ok(Some(Task {
+                        file: open.number,
+                        layout: Arc::clone(&open.layout),
+                        found,
+                        bytes: buffer,
+                        lines_before: std::mem::take(&mut open.lines_before),
+                        bytes_read: self.bytes_read.load(Ordering::Relaxed),
+                    }));
+                }
+            }
+        }
+    }
+}
+
+/// Opens an input and finds out its format; `None` if there is nothing in it.
+fn open(
+    number: usize,
+    source: Source,
+    options: &Options,
+    bytes_read: &Arc<AtomicU64>,
+) -> Result<Option<Open>, IntakeError> {
+    let unpacked = source.open(Arc::clone(bytes_read))?;
+    let (packing, file) = (unpacked.packing(), unpacked.file);
+    let mut blocks = Blocks::new(unpacked.reader, options.line_bytes);
+    let damaged = |error| Unpacked::error(&file, packing, error);
+    if blocks.peek().map_err(damaged)?.starts_with(b"\xef\xbb\xbf") {
+        blocks.skip(3);
+    }
+    let mut lines_before = 0;
+    let head = loop {
+        let head = blocks.peek().map_err(damaged)?;
+        let (length, lines) = (head.len(), count_lines(head));
+        if length == 0 {
+            return Ok(None);
+        }
+        if !head.trim_ascii().is_empty() {
+            break blocks.peek().map_err(damaged)?;
+        }
+        blocks.skip(length);
+        lines_before += lines;
+    };
+    let format = match options.format {
+        Some(format) => format,
+        None => match Format::detect(head, &file) {
+            Ok(format) => format,
+            Err(looks) => return Err(IntakeError::Unrecognised { file, looks }),
+        },
+    };
+    let layout = match format {
+        Format::Ndjson => Layout::Ndjson,
+        Format::Swf => Layout::Swf { unix_start: swf::unix_start(head) },
+        Format::Csv => {
+            // Blank lines before the header count as lines all the same.
+            let blank = head.iter().take_while(|byte| byte.is_ascii_whitespace()).count();
+            lines_before += memchr::memchr_iter(b'\n', &head[..blank]).count() as u64;
+            let delimiter = csv::delimiter(&head[blank..]);
+            blocks.skip(blank);
+            let header = blocks.first_record(Records::Rows { delimiter }).unwrap_or_default();
+            let length = header.len();
+            let columns = if (1..=options.line_bytes).contains(&length) {
+                let named = options.streams.as_ref().and_then(Selector::name).is_some();
+                Columns::from_header(header, delimiter, named)
+            } else {
+                Err(HeaderError::Long { limit: options.line_bytes })
+            };
+            let columns = match columns {
+                Ok(columns) => columns,
+                Err(source) => return Err(IntakeError::Header { file, source }),
+            };
+            lines_before += count_lines(header);
+            blocks.skip(length);
+            Layout::Csv(columns)
+        }
+    };
+    Ok(Some(Open { number, file, packing, blocks, layout: Arc::new(layout), lines_before, paid: 0 }))
+}

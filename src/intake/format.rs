@@ -1,0 +1,121 @@
+//! Which format an input is in: by its content, then by the ending of its name.
+
+use std::path::Path;
+
+use serde::Serialize;
+
+use super::record::Field;
+
+/// A format of waits.
+#[derive(Clone, Copy, Debug, PartialEq, Eq, Serialize)]
+#[serde(rename_all = "snake_case")]
+#[non_exhaustive]
+pub enum Format {
+    /// One JSON object a line.
+    Ndjson,
+    /// Comma-, semicolon- or tab-separated cells under a header.
+    Csv,
+    /// The Standard Workload Format, version 2.2, of job logs.
+    Swf,
+}
+
+impl Format {
+    /// Every format.
+    pub const ALL: [Format; 3] = [Format::Ndjson, Format::Csv, Format::Swf];
+
+    /// The name: `ndjson`, `csv`, `swf`.
+    pub fn name(self) -> &'static str {
+        match self {
+            Format::Ndjson => "ndjson",
+            Format::Csv => "csv",
+            Format::Swf => "swf",
+        }
+    }
+
+    /// The inverse of [`Format::name`].
+    pub fn parse(name: &str) -> Option<Format> {
+        Format::ALL.into_iter().find(|format| format.name() == name)
+    }
+
+    /// The format of an input that begins with `head` (decompressed, without a byte order mark) and is called
+    /// `name`; otherwise what it looks like.
+    pub(super) fn detect(head: &[u8], name: &str) -> Result<Format, String> {
+        let mut lines =
+            head.split(|&byte| byte == b'\n').map(<[u8]>::trim_ascii).filter(|line| !line.is_empty());
+        let first = lines.next().unwrap_or_default();
+        match first.first() {
+            Some(b'{') => return Ok(Format::Ndjson),
+            Some(b';') => return Ok(Format::Swf),
+            _ => {}
+        }
+        if let Some((_, what)) = FOREIGN.into_iter().find(|(magic, _)| head.starts_with(magic)) {
+            return Err(what.into());
+        }
+        if let Ok(first) = std::str::from_utf8(first) {
+            let cells = || first.split(DELIMITERS.map(char::from)).map(|cell| cell.trim().trim_matches('"'));
+            if cells().any(|cell| Field::with_unit(&cell.to_ascii_lowercase()).is_some()) {
+                return Ok(Format::Csv);
+            }
+            let mut numbers = first.split_ascii_whitespace().map(str::parse::<f64>);
+            if numbers.clone().count() == 18 && numbers.all(|number| number.is_ok()) {
+                return Ok(Format::Swf);
+            }
+        }
+        // A few lines of something else at the head of a log.
+        if lines.take(20).any(|line| line.starts_with(b"{")) {
+            return Ok(Format::Ndjson);
+        }
+        if head.contains(&0) {
+            return Err("binary data".into());
+        }
+        let name = name.trim_end_matches(".gz").trim_end_matches(".zst");
+        match Path::new(name).extension().and_then(|ending| ending.to_str()) {
+            Some("ndjson" | "jsonl" | "json") => return Ok(Format::Ndjson),
+            Some("csv" | "tsv") => return Ok(Format::Csv),
+            Some("swf") => return Ok(Format::Swf),
+            _ => {}
+        }
+        match std::str::from_utf8(first) {
+            Ok(first) if first.contains(DELIMITERS.map(char::from)) => Ok(Format::Csv),
+            Ok(first) => Err(format!("a text that begins {:?}", super::record::excerpt(first))),
+            Err(_) => Err("binary data".into()),
+        }
+    }
+}
+
+/// What may stand between the cells of a row.
+pub(super) const DELIMITERS: [u8; 3] = [b',', b';', b'\t'];
+
+/// Things that are often at hand in place of a file of waits.
+const FOREIGN: [(&[u8], &str); 9] = [
+    (b"[", "a JSON array"),
+    (b"\xff\xfe", "UTF-16 text"),
+    (b"\xfe\xff", "UTF-16 text"),
+    (b"PK\x03\x04", "a zip archive"),
+    (b"BZh", "bzip2"),
+    (b"\xfd7zXZ\0", "xz"),
+    (b"PAR1", "Parquet"),
+    (b"ARROW1", "Arrow"),
+    (b"SQLite format 3\0", "a SQLite database"),
+];
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    #[test]
+    fn content_speaks_before_the_name() {
+        let detect = |head: &str, name| Format::detect(head.as_bytes(), name);
+        assert_eq!(detect("\n {\"elapsed\":1}", "waits.csv"), Ok(Format::Ndjson));
+        assert_eq!(detect("starting\n{\"elapsed\":1}", "-"), Ok(Format::Ndjson));
+        assert_eq!(detect("; Version: 2.2\n", "waits.csv"), Ok(Format::Swf));
+        assert_eq!(detect("1 0 5 9 1 -1 -1 1 -1 -1 1 1 1 -1 1 -1 -1 -1\n", "-"), Ok(Format::Swf));
+        assert_eq!(detect("stream;Elapsed_MS\n", "-"), Ok(Format::Csv));
+        assert_eq!(detect("elapsed\n1\n", "-"), Ok(Format::Csv));
+        assert_eq!(detect("what\n", "waits.csv.gz"), Ok(Format::Csv));
+        assert_eq!(detect("who,what\n", "-"), Ok(Format::Csv));
+        assert_eq!(detect("[{\"elapsed\":1}]", "waits.ndjson"), Err("a JSON array".into()));
+        assert_eq!(detect("\u{1}\0\u{2}", "waits.ndjson"), Err("binary data".into()));
+        assert_eq!(detect("hello", "-"), Err("a text that begins \"hello\"".into()));
+    }
+}

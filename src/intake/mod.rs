@@ -1,0 +1,144 @@
+//! How files of waits become waits.
+//!
+//! In: files, standard input or any reader, packed or not, in one of the formats of [`Format`]. Out: a [`Record`]
+//! for each wait, handed to a [`Sink`], and a [`Report`] of what was read and what was refused. Nothing is printed
+//! and nothing is kept but the ids of waits whose end has not come: memory does not grow with the input.
+//!
+//! ```
+//! use outwait::intake::{Options, Record, Sink, Source, read};
+//!
+//! #[derive(Default)]
+//! struct Longest(f64);
+//!
+//! impl Sink for Longest {
+//!     fn take(&mut self, record: &Record<'_>) {
+//!         if let outwait::wait::Age::Exact(age) = record.wait.age() {
+//!             self.0 = self.0.max(age);
+//!         }
+//!     }
+//!     fn fork(&self) -> Self {
+//!         Longest::default()
+//!     }
+//!     fn absorb(&mut self, other: Self) {
+//!         self.0 = self.0.max(other.0);
+//!     }
+//! }
+//!
+//! let waits = "stream,elapsed_ms\ncatalogue.lookup,18.3\ncatalogue.lookup,203\n";
+//! let source = Source::reader("waits.csv", waits.as_bytes());
+//! let (longest, report) = read(vec![source], &Options::default(), Longest::default(), &mut |_| ())?;
+//! assert_eq!((longest.0, report.waits), (0.203, 2));
+//! # Ok::<(), outwait::intake::IntakeError>(())
+//! ```
+
+mod blocks;
+mod collect;
+mod csv;
+mod decimal;
+mod error;
+mod feed;
+mod flaw;
+mod format;
+mod lines;
+mod ndjson;
+mod pairs;
+mod read;
+mod record;
+mod report;
+mod select;
+mod source;
+mod streams;
+mod swf;
+
+use std::num::NonZeroUsize;
+
+pub use error::{HeaderError, IntakeError};
+pub use format::Format;
+pub use read::{Progress, read};
+pub use record::Record;
+pub use report::{
+    BadCount, BadLine, BadLines, Because, COMMENTS, Comment, EXAMPLES, FileReport, LeftOut, PairsReport,
+    Report, Suspicion,
+};
+pub use select::{Selector, glob};
+pub use source::Source;
+
+/// What takes the waits.
+///
+/// With more than one thread each has its own sink, made by [`Sink::fork`], and which waits go to which is left to
+/// chance. The result is the same for any number of threads if `absorb` makes the same of the same waits in any
+/// order and grouping, as a tally does. On one thread a sink takes whole records in the order of the input.
+pub trait Sink: Send + Sized {
+    /// Takes a wait.
+    fn take(&mut self, record: &Record<'_>);
+
+    /// An empty sink of the same kind, for another thread.
+    fn fork(&self) -> Self;
+
+    /// Takes over all that another sink took.
+    fn absorb(&mut self, other: Self);
+}
+
+/// What to read, and what to put up with.
+#[derive(Clone, Debug, PartialEq)]
+pub struct Options {
+    /// The format of every input; `None`: found out for each.
+    pub format: Option<Format>,
+    /// The streams wanted, and the name of records that have none; `None`: all, and each must have one.
+    pub streams: Option<Selector>,
+    /// Which time of a job log is the wait.
+    pub measure: Measure,
+    /// How many bad lines are put up with.
+    pub bad_lines: Allowed,
+    /// Only waits that ended or were last seen then or later, Unix seconds.
+    pub since: Option<f64>,
+    /// Only waits that ended or were last seen earlier, Unix seconds.
+    pub until: Option<f64>,
+    /// Threads that parse; one more reads and unpacks if there are several. `None`: as many as there are cores.
+    pub threads: Option<NonZeroUsize>,
+    /// Longest line, bytes. Default 1 MiB.
+    pub line_bytes: usize,
+    /// Most bytes of all inputs together, unpacked. Default: no limit.
+    pub total_bytes: u64,
+}
+
+impl Default for Options {
+    fn default() -> Options {
+        Options {
+            format: None,
+            streams: None,
+            measure: Measure::default(),
+            bad_lines: Allowed::default(),
+            since: None,
+            until: None,
+            threads: None,
+            line_bytes: 1 << 20,
+            total_bytes: u64::MAX,
+        }
+    }
+}
+
+/// Which time of a job log is the wait.
+#[derive(Clone, Copy, Debug, Default, PartialEq, Eq)]
+pub enum Measure {
+    /// From submission to start: what ran is done, what was cancelled in the queue was given up.
+    #[default]
+    Wait,
+    /// From start to end: completed is done, failed is failed, cancelled was given up.
+    Run,
+}
+
+/// How many bad lines are put up with.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+pub enum Allowed {
+    /// At most so many.
+    AtMost(u64),
+    /// Any number.
+    All,
+}
+
+impl Default for Allowed {
+    fn default() -> Allowed {
+        Allowed::AtMost(0)
+    }
+}

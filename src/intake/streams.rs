@@ -1,0 +1,221 @@
+//! What is remembered of each stream while reading: that its name is sound, whether it is wanted, and the facts
+//! that tell milliseconds from seconds.
+
+use std::collections::HashMap;
+
+use foldhash::fast::RandomState;
+
+use super::Selector;
+use super::report::{Because, Suspicion};
+use crate::wait::{Age, Ending, StreamError, Wait, check_stream};
+
+/// Streams seen by one worker. Merging is exact and commutative.
+#[derive(Debug, Default)]
+pub(super) struct Streams {
+    /// Looked up for every line, hence the fast hash; it is seeded, so no writer of names can aim at it.
+    places: HashMap<Box<str>, usize, RandomState>,
+    streams: Vec<Stream>,
+}
+
+#[derive(Clone, Copy, Debug)]
+pub(super) struct Stream {
+    pub(super) wanted: bool,
+    /// Ages of completions in whole seconds, from 1 s.
+    whole: Ages,
+    /// Ages of completions with a fraction of a second.
+    broken: Ages,
+    /// Times, and how many of them have a fraction of a second.
+    times: u64,
+    broken_times: u64,
+    oldest: f64,
+    newest: f64,
+}
+
+/// Ages on a scale of powers of two: enough to tell thousandfold differences, and exact to add up.
+#[derive(Clone, Copy, Debug, Default)]
+struct Ages {
+    number: u64,
+    exponents: i64,
+}
+
+impl Ages {
+    /// The geometric mean, s, to about a tenth.
+    fn typical(&self) -> f64 {
+        // An exponent rounds the logarithm down by about half on average.
+        (self.exponents as f64 / self.number as f64 + 0.5).exp2()
+    }
+}
+
+impl Streams {
+    /// The stream of that name, checked when first met.
+    #[inline]
+    pub(super) fn enter(
+        &mut self,
+        name: &str,
+        selector: Option<&Selector>,
+    ) -> Result<&mut Stream, StreamError> {
+        let place = match self.places.get(name) {
+            Some(&place) => place,
+            None => {
+                check_stream(name)?;
+                self.add(name.into(), Stream::new(selector.is_none_or(|selector| selector.admits(name))))
+            }
+        };
+        Ok(&mut self.streams[place])
+    }
+
+    #[cold]
+    fn add(&mut self, name: Box<str>, stream: Stream) -> usize {
+        self.places.insert(name, self.streams.len());
+        self.streams.push(stream);
+        self.streams.len() - 1
+    }
+
+    pub(super) fn absorb(&mut self, other: Streams) {
+        for (name, place) in other.places {
+            let theirs = other.streams[place];
+            match self.places.get(&name) {
+                Some(&place) => self.streams[place].absorb(&theirs),
+                None => {
+                    self.add(name, theirs);
+                }
+            }
+        }
+    }
+
+    /// The oldest and the newest time seen in any stream, Unix seconds.
+    pub(super) fn span(&self) -> Option<(f64, f64)> {
+        let oldest = self.streams.iter().map(|stream| stream.oldest).fold(f64::INFINITY, f64::min);
+        let newest = self.streams.iter().map(|stream| stream.newest).fold(f64::NEG_INFINITY, f64::max);
+        (oldest <= newest).then_some((oldest, newest))
+    }
+
+    /// Streams whose ages look like milliseconds, by name.
+    pub(super) fn suspicions(&self) -> Vec<Suspicion> {
+        let streams = self.places.iter().map(|(name, &place)| (name, &self.streams[place]));
+        let mut found: Vec<_> = streams.filter_map(|(name, stream)| stream.suspicion(name)).collect();
+        found.sort_by(|a, b| a.stream.cmp(&b.stream));
+        found
+    }
+}
+
+impl Stream {
+    fn new(wanted: bool) -> Stream {
+        Stream {
+            wanted,
+            whole: Ages::default(),
+            broken: Ages::default(),
+            times: 0,
+            broken_times: 0,
+            oldest: f64::INFINITY,
+            newest: f64::NEG_INFINITY,
+        }
+    }
+
+    #[inline]
+    pub(super) fn note_time(&mut self, at: f64) {
+        self.times += 1;
+        self.broken_times += u64::from(!is_whole(at));
+        self.oldest = self.oldest.min(at);
+        self.newest = self.newest.max(at);
+    }
+
+    /// Notes an age given as a number without a unit. Only completions count: a time-out is often a whole number.
+    #[inline]
+    pub(super) fn note_age(&mut self, wait: &Wait) {
+        let (Age::Exact(age), Ending::Done) = (wait.age(), wait.ending()) else { return };
+        let ages = if is_whole(age) { &mut self.whole } else { &mut self.broken };
+        ages.number += 1;
+        ages.exponents += (age.to_bits() >> 52) as i64 - 1023;
+    }
+
+    fn absorb(&mut self, other: &Stream) {
+        for (mine, theirs) in [(&mut self.whole, other.whole), (&mut self.broken, other.broken)] {
+            mine.number += theirs.number;
+            mine.exponents += theirs.exponents;
+        }
+        self.times += other.times;
+        self.broken_times += other.broken_times;
+        self.oldest = self.oldest.min(other.oldest);
+        self.newest = self.newest.max(other.newest);
+    }
+
+    /// Milliseconds given as seconds are whole numbers, mostly from 10 to a minute's worth. Whole seconds of that
+    /// size are common too (queues, jobs), so one more sign is asked for:
+    /// times that are finer than the ages; or more waits open at once than any of the whole-second sources would
+    /// have (number x age / span, Little's law); or other ages, with fractions, about a thousand times shorter.
+    fn suspicion(&self, name: &str) -> Option<Suspicion> {
+        let ages = self.whole.number + self.broken.number;
+        let typical = self.whole.typical();
+        if self.whole.number < LEAST_AGES || !(10.0..60_000.0).contains(&typical) {
+            return None;
+        }
+        let share = self.whole.number as f64 / ages as f64;
+        let open = self.whole.number as f64 * typical / (self.newest - self.oldest);
+        let because = if share >= 0.99 {
+            if self.broken_times * 2 > self.times {
+                Because::TimesAreFiner
+            } else if open >= CROWD && open.is_finite() {
+                Because::Crowded { open }
+            } else {
+                return None;
+            }
+        } else if share >= 0.05
+            && self.broken.number >= LEAST_AGES
+            && (250.0..4000.0).contains(&(typical / self.broken.typical()))
+        {
+            Because::OthersAreShorter { typical: self.broken.typical() }
+        } else {
+            return None;
+        };
+        Some(Suspicion { stream: name.into(), ages, whole: self.whole.number, typical, because })
+    }
+}
+
+/// Fewest ages to found a suspicion on.
+const LEAST_AGES: u64 = 50;
+
+/// Waits of one stream open at once that call for a second look.
+const CROWD: f64 = 1000.0;
+
+#[inline]
+fn is_whole(number: f64) -> bool {
+    number as i64 as f64 == number
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    fn suspicion(waits: impl Iterator<Item = (f64, f64)>) -> Option<Because> {
+        let mut streams = Streams::default();
+        for (age, at) in waits {
+            let stream = streams.enter("s", None).unwrap();
+            stream.note_time(at);
+            stream.note_age(&Wait::new(age, Ending::Done).unwrap());
+        }
+        streams.suspicions().first().map(|suspicion| suspicion.because)
+    }
+
+    #[test]
+    fn milliseconds_are_suspected_and_whole_seconds_are_not() {
+        let number = |i: u32| f64::from(i);
+        // Look-ups in whole milliseconds, times in milliseconds.
+        let fine = (0..200).map(|i| (number(20 + i * 7 % 300), 1e9 + number(i) * 1.234));
+        assert_eq!(suspicion(fine), Some(Because::TimesAreFiner));
+        // The same, a hundred a second, times in seconds.
+        let many = (0..20_000).map(|i| (number(20 + i * 7 % 300), 1e9 + (number(i) / 100.0).floor()));
+        assert!(matches!(suspicion(many), Some(Because::Crowded { .. })));
+        // Callers in a queue, whole seconds, one a minute.
+        let callers = (0..2000).map(|i| (number(20 + i * 7 % 300), 1e9 + number(i) * 60.0));
+        assert_eq!(suspicion(callers), None);
+        // A part of the writers in seconds, the rest in milliseconds.
+        let mixed = (0..2000).map(|i| {
+            let milliseconds = number(20 + i * 7 % 300);
+            (if i % 3 == 0 { milliseconds } else { milliseconds / 1000.0 }, 1e9 + number(i) * 60.0)
+        });
+        assert!(matches!(suspicion(mixed), Some(Because::OthersAreShorter { .. })));
+        // Seconds with fractions.
+        assert_eq!(suspicion((0..2000).map(|i| (number(i + 1) / 7.3, 1e9 + number(i) * 1.5))), None);
+    }
+}

@@ -1,0 +1,227 @@
+//! Every key that a policy may hold, with what it takes, and every default and limit.
+//!
+//! To add a key: a row in [`KEYS`], a field in `entry.rs`, a line in `read.rs`, a line in
+//! `policies/reference.yaml`. Error messages, the nearest-key search and the reference follow from the row.
+
+/// Largest policy, bytes: 1 MiB.
+pub const MAX_BYTES: usize = 1 << 20;
+/// Most values in a policy once aliases are followed.
+pub const MAX_VALUES: usize = 1_000_000;
+/// Deepest nesting of lists and maps; the schema needs 5.
+pub const MAX_DEPTH: usize = 16;
+/// Most entries.
+pub const MAX_ENTRIES: usize = 20_000;
+/// Most streams that one entry may say it calls.
+pub const MAX_CALLS: usize = 100;
+/// Most findings that one [`super::PolicyError`] lists.
+pub const MAX_PROBLEMS: usize = 50;
+/// Most attempts of one request that a policy may allow.
+pub const MAX_ATTEMPTS: u32 = 100;
+/// Largest worth or cost, either sign, in the unit of worth.
+pub const MAX_WORTH: f64 = 1e12;
+
+/// What is waited for, unless `kind` says so.
+pub const DEFAULT_KIND: super::Kind = super::Kind::Request;
+/// Attempts allowed by `aim: deadline` without `attempts`; whole number, 1 to [`MAX_ATTEMPTS`].
+pub const DEFAULT_DEADLINE_ATTEMPTS: u32 = 3;
+/// Factor by which pauses grow from attempt to attempt; number, 1 to 10.
+pub const DEFAULT_BACKOFF_FACTOR: f64 = 1.0;
+/// Largest change of a give-up time in one step; share of the time in force, above 0 to 10.
+pub const DEFAULT_LARGEST_STEP: f64 = 0.5;
+/// Completions needed before advice is given; number, 1 to 1e9.
+pub const DEFAULT_EVIDENCE: u32 = 300;
+/// How far back waits count; s, above 0 to 1e10.
+pub const DEFAULT_WINDOW: f64 = 14.0 * 86_400.0;
+/// Gain below which no change is proposed; share of the rate, 0 to below 1.
+pub const DEFAULT_SLACK: f64 = 0.01;
+/// Gain below which a standing proposal is not replaced; share of the rate, 0 to below 1.
+pub const DEFAULT_HYSTERESIS: f64 = 0.005;
+/// Rest after a change before the next is proposed; s, 0 to 1e10.
+pub const DEFAULT_COOL_DOWN: f64 = 7.0 * 86_400.0;
+
+/// A part of the policy that holds keys.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+pub enum Section {
+    /// The file itself.
+    File,
+    /// One entry under `streams`.
+    Entry,
+    /// `worth`.
+    Worth,
+    /// `fades`.
+    Fades,
+    /// `pause`.
+    Pause,
+    /// `retry`.
+    Retry,
+    /// `retry.backoff`.
+    Backoff,
+    /// `guard`.
+    Guard,
+}
+
+impl Section {
+    /// Path inside the file or the entry: empty, `worth`, `retry.backoff`.
+    pub fn path(self) -> &'static str {
+        match self {
+            Section::File | Section::Entry => "",
+            Section::Worth => "worth",
+            Section::Fades => "fades",
+            Section::Pause => "pause",
+            Section::Retry => "retry",
+            Section::Backoff => "retry.backoff",
+            Section::Guard => "guard",
+        }
+    }
+
+    /// The keys that may stand in it.
+    pub fn keys(self) -> impl Iterator<Item = &'static Key> {
+        KEYS.iter().copied().filter(move |key| key.section == self)
+    }
+}
+
+/// One key of the policy.
+#[derive(Debug, PartialEq)]
+pub struct Key {
+    /// Where it stands.
+    pub section: Section,
+    /// Its name.
+    pub name: &'static str,
+    /// What it takes, with unit and range.
+    pub takes: &'static str,
+    /// A value that it takes.
+    pub example: &'static str,
+    /// The value it has when absent, or what its absence means.
+    pub default: &'static str,
+    /// What it means.
+    pub about: &'static str,
+}
+
+impl Key {
+    /// Path inside the file or the entry: `version`, `guard.slack`.
+    pub fn path(&self) -> String {
+        match self.section.path() {
+            "" => self.name.to_owned(),
+            section => format!("{section}.{}", self.name),
+        }
+    }
+}
+
+/// Declares one constant a key, and the list of them all.
+macro_rules! keys {
+    ($($constant:ident: $section:ident $name:literal, $takes:literal, $example:literal, $default:literal, $about:literal;)*) => {
+        $(pub(super) static $constant: Key = Key {
+            section: Section::$section,
+            name: $name,
+            takes: $takes,
+            example: $example,
+            default: $default,
+            about: $about,
+        };)*
+
+        /// Every key, in the order of the reference.
+        pub static KEYS: &[&Key] = &[$(&$constant),*];
+    };
+}
+
+keys! {
+    VERSION: File "version", "the number 1", "1", "none, it must be given",
+        "Version of this schema.";
+    STREAMS: File "streams", "a list of entries, at least one", "[{match: \"*\", aim: rate}]", "none, it must be given",
+        "The entries; of those that match a stream the first counts.";
+
+    MATCH: Entry "match", "a stream name, with * for any run of characters and ? for one", "\"catalogue.*\"", "none, it must be given",
+        "The streams that this entry speaks for.";
+    KIND: Entry "kind", "request, job or reply", "request", "request",
+        "What is waited for: a service's answer, a piece of work, or a person or partner.";
+    AIM: Entry "aim", "rate, finish, carrying_cost or deadline", "rate", "none, and then no advice, since nothing says what waiting costs",
+        "What is sought: most worth per second; least time until done; most worth less the cost of waiting; best chance by a deadline.";
+    WORTH: Entry "worth", "a map of done, failed and gave_up", "{done: 1.0, gave_up: 0.2}", "its keys' defaults",
+        "What each ending is worth, in any one unit.";
+    WORTH_DONE: Worth "done", "a number above 0 and at most 1e12", "1.0", "1",
+        "Worth of a completion.";
+    WORTH_FAILED: Worth "failed", "a number from -1e12 to 1e12", "0.0", "0",
+        "Worth of a failure.";
+    WORTH_GAVE_UP: Worth "gave_up", "a number from -1e12 to 1e12", "0.0", "0",
+        "Worth of giving up: above 0 where a fallback answers, below 0 where a cancellation costs.";
+    FADES: Entry "fades", "a map with exactly one of half_life, zero_at and half_at", "{half_life: 4h}", "none, the worth stays",
+        "How the worth of a completion falls with its age.";
+    HALF_LIFE: Fades "half_life", "a duration with its unit, above 0", "4h", "none",
+        "The worth halves each time this passes.";
+    ZERO_AT: Fades "zero_at", "a duration with its unit, above 0", "8h", "none",
+        "The worth falls in a straight line to 0 at this age.";
+    HALF_AT: Fades "half_at", "a duration with its unit, above 0", "1h", "none",
+        "The worth falls fast, then ever more slowly: half at this age, a third at twice, a quarter at three times.";
+    ATTEMPT_COST: Entry "attempt_cost", "a number from 0 to 1e12", "0.01", "0",
+        "Cost of starting an attempt, in the unit of worth, paid at each start.";
+    PAUSE: Entry "pause", "a map of done, failed and gave_up", "{failed: 10ms, gave_up: 10ms}", "its keys' defaults",
+        "Time lost before the waiter can start again.";
+    PAUSE_DONE: Pause "done", "a duration with its unit, 0 or more", "0s", "0s",
+        "Pause after a completion.";
+    PAUSE_FAILED: Pause "failed", "a duration with its unit, 0 or more", "10ms", "0s",
+        "Pause after a failure.";
+    PAUSE_GAVE_UP: Pause "gave_up", "a duration with its unit, 0 or more", "10ms", "0s",
+        "Pause after giving up.";
+    CARRYING_COST: Entry "carrying_cost", "a number above 0 per s, min, h or d", "0.02/s", "none; `aim: carrying_cost` needs it",
+        "What waiting costs, in the unit of worth per unit of time.";
+    DEADLINE: Entry "deadline", "a duration with its unit, above 0", "2s", "none; `aim: deadline` needs it",
+        "When it must be done, counted from the first start.";
+    NOW: Entry "now", "a duration with its unit, above 0, or never", "800ms", "not known",
+        "The give-up time in force today.";
+    RETRY: Entry "retry", "a map of attempts, load_ceiling, sticky, repeatable and backoff", "{attempts: 3, repeatable: true}", "its keys' defaults",
+        "What happens after giving up.";
+    ATTEMPTS: Retry "attempts", "a whole number from 1 to 100", "3", "no cap, except 3 for `aim: deadline`",
+        "Most attempts of one request, the first included.";
+    LOAD_CEILING: Retry "load_ceiling", "a number from 1 to 100", "1.2", "no ceiling",
+        "Most attempts a request on average: what the other side can bear.";
+    STICKY: Retry "sticky", "from_data, unknown, or a share from 0 to below 1", "from_data", "from_data",
+        "How often a retry meets the same slow cause as the attempt it replaces.";
+    REPEATABLE: Retry "repeatable", "true or false", "true", "false",
+        "Whether doing the work twice harms nobody.";
+    BACKOFF: Retry "backoff", "a map of factor and jitter", "{factor: 2, jitter: full}", "its keys' defaults",
+        "How the pause after giving up grows from attempt to attempt.";
+    FACTOR: Backoff "factor", "a number from 1 to 10", "2", "1",
+        "Each pause is this many times the one before.";
+    JITTER: Backoff "jitter", "none or full", "full", "none",
+        "Whether a pause is drawn evenly between 0 and its full length.";
+    GUARD: Entry "guard", "a map of floor, ceiling, largest_step, evidence, window, slack, hysteresis and cool_down", "{floor: 20ms, ceiling: 5s}", "its keys' defaults",
+        "What the advice must keep to.";
+    FLOOR: Guard "floor", "a duration with its unit, above 0", "20ms", "none; the 5th percentile of completions where a restart is free",
+        "Least give-up time.";
+    CEILING: Guard "ceiling", "a duration with its unit, above 0", "5s", "none",
+        "Largest give-up time.";
+    LARGEST_STEP: Guard "largest_step", "a share above 0 and at most 10 (1000%)", "50%", "50%",
+        "Largest change in one step, as a share of the time in force.";
+    EVIDENCE: Guard "evidence", "a whole number from 1 to 1000000000", "300", "300",
+        "Completions needed before advice is given.";
+    WINDOW: Guard "window", "a duration with its unit, above 0", "14d", "14d",
+        "How far back waits count.";
+    SLACK: Guard "slack", "a share from 0 to below 1", "1%", "1%",
+        "A change that gains less than this share of the rate is not proposed.";
+    HYSTERESIS: Guard "hysteresis", "a share from 0 to below 1", "0.5%", "0.5%",
+        "A proposal that stands is replaced only by one that gains at least this share of the rate.";
+    COOL_DOWN: Guard "cool_down", "a duration with its unit, 0 or more", "7d", "7d",
+        "Rest after a change before the next is proposed.";
+    CALLS: Entry "calls", "a list of stream names, at most 100", "[index.search]", "none",
+        "The streams that this one waits for in its turn.";
+}
+
+/// Stands for the file where its keys should be and are not.
+pub(super) static FILE: Key = Key {
+    section: Section::File,
+    name: "version",
+    takes: "a map of version and streams",
+    example: "1",
+    default: "none, it must be given",
+    about: "The policy itself.",
+};
+
+/// Stands for an entry where its keys should be and are not.
+pub(super) static ENTRY: Key = Key {
+    section: Section::Entry,
+    name: "- match",
+    takes: "a map of keys, `match` among them",
+    example: "\"catalogue.*\"",
+    default: "none, it must be given",
+    about: "An entry.",
+};
