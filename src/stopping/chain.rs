@@ -27,8 +27,7 @@ impl Station {
         f64::from(attempts) * self.give_up_after + pauses
     }
 
-    /// Attempts that can start before `leaves` s have passed when each runs to its give-up time, with no pauses longer
-    /// than they must be on average.
+    /// Attempts that start before `leaves` s have passed when each is given up, with the expected pauses between.
     fn attempts_before(&self, leaves: f64) -> u32 {
         let pause = self.pause.gave_up;
         let (mut start, mut started) = (0.0, 0);

@@ -92,7 +92,10 @@ impl Competing {
         let (mut last, mut now) = (f64::NAN, f64::NAN);
         for _ in 0..60 {
             let (near, far) = (log_survival(age), log_survival(2.0 * age));
-            if far == f64::NEG_INFINITY || far < -1e14 {
+            if far == f64::NEG_INFINITY {
+                return f64::INFINITY;
+            }
+            if far < -1e14 {
                 break;
             }
             (last, now) = (now, (near - far) / age);
@@ -234,7 +237,7 @@ impl Outlook for Competing {
 mod tests {
     use super::*;
     use crate::tail::Family;
-    use crate::tail::families::{Exponential, Lognormal, Weibull};
+    use crate::tail::families::{Exponential, Gamma, Hyperexponential, InverseGaussian, Lognormal, Weibull};
 
     fn law(family: &dyn Family, natural: &[f64]) -> Arc<dyn Law> {
         family.law(&family.free(natural).unwrap()).unwrap().into()
@@ -295,6 +298,9 @@ mod tests {
         assert_eq!(alone(law(&Weibull, &[0.5, 1.0])), 0.0);
         assert_eq!(alone(law(&Weibull, &[2.0, 1.0])), f64::INFINITY);
         assert!(close(alone(law(&Exponential, &[3.0])), 3.0));
+        assert!(close(alone(law(&Hyperexponential, &[0.9, 10.0, 0.1])), 0.1));
+        assert!((alone(law(&Gamma, &[3.0, 0.5])) - 2.0).abs() < 1e-6);
+        assert!((alone(law(&InverseGaussian, &[2.0, 3.0])) - 3.0 / 8.0).abs() < 1e-6);
         let failing = Competing::new(law(&Lognormal, &[0.0, 1.0]), Failure::Rate(0.25));
         assert!((failing.final_hazard() - 0.25).abs() < 1e-9);
     }

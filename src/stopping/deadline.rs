@@ -19,6 +19,8 @@ use crate::outlook::Outlook;
 
 /// Steps of the lattice between now and the deadline.
 const STEPS: usize = 1000;
+/// An outlook with more knots is itself a table: adaptive quadrature would chase each of its kinks.
+const FEW_KNOTS: usize = 64;
 
 /// The curves of one wait at the ages of a lattice, from 0 on.
 pub(crate) struct Lattice {
@@ -326,7 +328,7 @@ impl<'a> Deadline<'a> {
         if to <= from {
             return 0.0;
         }
-        if self.smooth && k == 1 {
+        if self.smooth && k == 1 && self.outlook.knots().len() <= FEW_KNOTS {
             let density = |u: f64| {
                 let hazard = self.outlook.hazards(u).map_or(0.0, |h| h.1);
                 self.rest(1, left - u - pause, false) * hazard * self.outlook.survival(u)
@@ -334,7 +336,7 @@ impl<'a> Deadline<'a> {
             return integrate(&density, from, to, 1e-11);
         }
         if self.smooth {
-            // The table is no smoother than its cells, so cell by cell, by the two points of Gauss.
+            // No smoother than the table's cells (or than its own knots), so cell by cell, by the two points of Gauss.
             let mean = |a: f64, b: f64| {
                 let (middle, reach) = (0.5 * (a + b), 0.5 * (b - a) / 3f64.sqrt());
                 let rest = |u: f64| self.rest(k, left - u - pause, false);

@@ -116,16 +116,13 @@ impl GridObjective {
             return true;
         }
         let ages = &self.grid.ages()[..decide.end];
-        let faded: Vec<f64> = self
-            .share
-            .iter()
-            .enumerate()
-            .scan((0.0, 0.0), |(sum, before), (i, share)| {
-                *sum += share * (curve.done[i] - *before);
-                *before = curve.done[i];
-                Some(*sum)
-            })
-            .collect();
+        let mut faded = Vec::with_capacity(self.share.len());
+        let (mut sum, mut before) = (0.0, 0.0);
+        for (share, &done) in self.share.iter().zip(&curve.done) {
+            sum += share * (done - before);
+            before = done;
+            faded.push(sum);
+        }
         let read = |i: usize| Reading {
             odds: Odds { done: curve.done[i], failed: curve.failed[i], gave_up: curve.survival[i] },
             area: curve.area[i],

@@ -1,4 +1,23 @@
-//! Outlook + worth -> rate, optimum, value of holding on, doubt, edge of sight. METHODS.md sections 5 to 8.
+//! When to give up, what it earns, and how sure that is. METHODS.md sections 5 to 8.
+//!
+//! In: an [`Outlook`](crate::outlook::Outlook) (what the future of a wait looks like), a [`Worth`] (what time and endings
+//! are worth), a [`Retry`] (what follows an attempt that was not done) and [`Limits`]. Out: plain numbers. Nothing here
+//! reads data or policies; randomness comes in as a generator.
+//!
+//! | question | answer |
+//! |---|---|
+//! | What does a give-up time earn? | [`Objective`]; on a grid, for thousands of curves, [`GridObjective`] |
+//! | Which earns the most, and what is as good? | [`best`], [`band`]; under a deadline [`Deadline`] |
+//! | Is holding on worth it for a wait that is open now? | [`Holding`] |
+//! | What do retries add, and how long does a request take? | [`Retry::request`], [`RequestTime`], [`FarTail`] |
+//! | Do retries meet the same fate? | [`stickiness`], [`flips_at`] |
+//! | Would a second copy do better? | [`SecondCopy`], [`copy_or_retry`] |
+//! | Which time loses least over all that the data leave open? | [`Doubt`], with [`Bootstrap`] for the empirical curve |
+//! | What if the answer lies past the present timeout? | [`Sides`], [`Look`] |
+//! | What would the usual rules do? | [`Rule`], [`RetransmissionTimer`]; before any evidence [`universal_schedule`] |
+//! | Do callers stay as long as their callees try? | [`check_chain`], [`attempts_caused`] |
+//!
+//! [`Competing`] is the outlook of laws taken as true; the empirical one is [`Empirical`](crate::curve::Empirical).
 
 mod band;
 mod chain;

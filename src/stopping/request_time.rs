@@ -7,7 +7,7 @@ use crate::outlook::Outlook;
 use crate::wait::MAX_AGE;
 
 /// Cells of the lattice on which starts of retries are kept where they are not at fixed times.
-const CELLS: usize = 4096;
+const CELLS: usize = 2048;
 /// Retries that are followed at fixed times.
 const MOST_STARTS: usize = 20_000;
 /// Share of requests below which what is left is not followed.
@@ -17,7 +17,7 @@ const NEGLIGIBLE: f64 = 1e-13;
 ///
 /// The first attempt starts at 0. Where nothing fails and pauses are not drawn, every retry starts at a known time
 /// and all is exact: `S_tot(t) = S(τ)^n S(r)` for `t = n(τ+d_g) + r`, flat during a pause, and its counterparts
-/// with a cap, growing pauses and stickiness. Else the starts of retries are kept on a lattice of 4096 cells, each
+/// with a cap, growing pauses and stickiness. Else the starts of retries are kept on a lattice of 2048 cells, each
 /// mass split between its two neighbours so that means are kept; quantiles are then good to about a cell.
 pub struct RequestTime<'a> {
     outlook: &'a dyn Outlook,
