@@ -82,7 +82,14 @@ impl Ages {
                     self.add(age, 1);
                 }
             }
-            Store::Narrow(h) => mine.record_all(h),
+            Store::Narrow(h) => match mine {
+                // Counter by counter, many times faster than value by value; no counter can exceed the total.
+                Store::Narrow(mine) if mine.len().saturating_add(h.len()) <= u64::from(u32::MAX) => {
+                    // Auto-resizing histograms of one precision always add.
+                    let _ = mine.add(h);
+                }
+                _ => mine.record_all(h),
+            },
             Store::Wide(h) => mine.record_all(h),
         }
     }
