@@ -99,7 +99,7 @@ impl Judgement {
         let sample = cells.sample(Cause::Done);
         let grid = Grid::new(bounds.first, bounds.floor, bounds.ceiling);
         let ensemble = tail::ensemble(&sample, &grid, seed).ok()?;
-        let failing = PiecewiseHazard::fit(&cells.sample(Cause::Failed));
+        let failing = PiecewiseHazard::fit(&coarse.sample(Cause::Failed));
         let failure: Vec<f64> = failing
             .as_ref()
             .map(|hazard| grid.ages().iter().map(|&t| hazard.cumulative(t)).collect())

@@ -104,18 +104,12 @@ pub fn decay(outlook: &dyn Outlook, worth: &Worth, retry: &Retry, give_up_after:
     if odds.failed <= 0.0 && !retry.jitter {
         return -(phi + (1.0 - phi) * odds.gave_up).ln() / (give_up_after + pause);
     }
+    let failures = Failures::upto(outlook, give_up_after);
     // det(1 - M(θ)) of the two states; above 0 below the critical θ, and below 0 just after it.
     let surplus = |theta: f64| {
         let stay = (theta * give_up_after).exp() * paused(theta, pause);
-        let fail = if odds.failed > 0.0 {
-            let density = |u: f64| {
-                let hazard = outlook.hazards(u).map_or(0.0, |h| h.1);
-                (theta * u).exp() * hazard * outlook.survival(u)
-            };
-            failures(outlook, give_up_after, &density, theta) * paused(theta, pause_failed)
-        } else {
-            0.0
-        };
+        let fail =
+            if odds.failed > 0.0 { failures.moment(theta) * paused(theta, pause_failed) } else { 0.0 };
         let leave = odds.gave_up * stay;
         (1.0 - fail) * (1.0 - phi * stay - (1.0 - phi) * leave) - leave * (1.0 - phi) * fail
     };
@@ -133,18 +127,57 @@ pub fn decay(outlook: &dyn Outlook, worth: &Worth, retry: &Retry, give_up_after:
     f64::INFINITY
 }
 
-/// `∫ e^{θu} dF_f(u)` up to the give-up time, by density or step by step.
-fn failures(outlook: &dyn Outlook, upto: f64, density: &dyn Fn(f64) -> f64, theta: f64) -> f64 {
-    if outlook.hazards(0.5 * upto).is_some() {
-        return integrate(density, 0.0, upto, 1e-9);
+/// Widest stretch between knots, as a share of the give-up time, over which `F_f` is taken as straight.
+const STRETCH: f64 = 0.1;
+
+/// When failures come, up to the give-up time.
+enum Failures<'a> {
+    /// By a density, to be integrated.
+    Density(&'a dyn Outlook, f64),
+    /// Middle and half width of a stretch in which they come evenly (a step has no width), and their share.
+    Stretches(Vec<[f64; 3]>),
+}
+
+impl<'a> Failures<'a> {
+    /// A curve whose knots lie close together, as a sampled one's do, is straight between them, which makes its
+    /// moments sums. A step curve jumps at its knots.
+    fn upto(outlook: &'a dyn Outlook, upto: f64) -> Failures<'a> {
+        let steps = outlook.hazards(0.5 * upto).is_none();
+        let knots = outlook.knots();
+        let ends: Vec<f64> = knots[..knots.partition_point(|&u| u < upto)].iter().copied().chain([upto]).collect();
+        let close = |ends: &[f64]| ends[0] <= STRETCH * upto && ends.windows(2).all(|w| w[1] - w[0] <= STRETCH * upto);
+        if !steps && !close(&ends) {
+            return Failures::Density(outlook, upto);
+        }
+        let (mut from, mut before) = (0.0, 0.0);
+        let stretch = |to: f64| {
+            let after = outlook.failed(to);
+            let share = after - before;
+            let part = if steps { [to, 0.0, share] } else { [0.5 * (from + to), 0.5 * (to - from), share] };
+            (from, before) = (to, after);
+            part
+        };
+        Failures::Stretches(ends.into_iter().map(stretch).collect())
     }
-    let knots = outlook.knots();
-    let mut before = 0.0;
-    let mut sum = 0.0;
-    for &u in &knots[..knots.partition_point(|&u| u <= upto)] {
-        let after = outlook.failed(u);
-        sum += (theta * u).exp() * (after - before);
-        before = after;
+
+    /// `∫ e^{θu} dF_f(u)`.
+    fn moment(&self, theta: f64) -> f64 {
+        match self {
+            Failures::Density(outlook, upto) => {
+                let density = |u: f64| {
+                    let hazard = outlook.hazards(u).map_or(0.0, |h| h.1);
+                    (theta * u).exp() * hazard * outlook.survival(u)
+                };
+                integrate(&density, 0.0, *upto, 1e-9)
+            }
+            Failures::Stretches(stretches) => stretches
+                .iter()
+                .map(|&[middle, half, share]| {
+                    let x = theta * half;
+                    let spread = if x < 1e-4 { 1.0 + x * x / 6.0 } else { x.sinh() / x };
+                    share * (theta * middle).exp() * spread
+                })
+                .sum(),
+        }
     }
-    sum
 }
