@@ -30,8 +30,8 @@ const HOLDING_POINTS: usize = 24;
 const COPY_LOAD: f64 = 0.05;
 /// A look past the edge is planned to take this long, s.
 const LOOK: f64 = 7.0 * 86_400.0;
-/// Cells beyond this many are joined before they are bootstrapped.
-const MOST_CELLS: usize = 1500;
+/// Cells beyond this many are joined before they are bootstrapped: about as fine as the ages that are compared.
+const MOST_CELLS: usize = 600;
 
 /// Everything that was found out about one stream.
 pub(crate) struct Judgement {

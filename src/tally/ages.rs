@@ -113,9 +113,7 @@ impl Ages {
         if theirs.is_empty() {
             return (mine, theirs);
         }
-        if is_exact(&mine) != is_exact(&theirs) {
-            (mine, theirs) = (binned(&mine), binned(&theirs));
-        }
+        (mine, theirs) = alike(mine, theirs);
         let (mut i, mut j) = (0, 0);
         while i < mine.len() && j < theirs.len() {
             match mine[i].low.total_cmp(&theirs[j].low) {
@@ -258,6 +256,16 @@ fn histogram_bins<C: Counter>(h: &Histogram<C>) -> Vec<Bin> {
             }
         })
         .collect()
+}
+
+/// Two lists in one form: where only one holds exact ages, those go into the bins of the histogram too. Else an exact
+/// age would lie within a bin of the other.
+pub(super) fn alike(one: Vec<Bin>, other: Vec<Bin>) -> (Vec<Bin>, Vec<Bin>) {
+    if one.is_empty() || other.is_empty() || is_exact(&one) == is_exact(&other) {
+        (one, other)
+    } else {
+        (binned(&one), binned(&other))
+    }
 }
 
 fn is_exact(bins: &[Bin]) -> bool {
