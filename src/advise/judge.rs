@@ -38,8 +38,8 @@ const LATE: f64 = 0.999;
 const LONGER: f64 = 1.05;
 /// A look past the edge is planned to take this long, s.
 const LOOK: f64 = 7.0 * 86_400.0;
-/// Cells beyond this many are joined before they are bootstrapped.
-const MOST_CELLS: usize = 1500;
+/// Cells beyond this many are joined before they are bootstrapped: about as fine as the ages that are compared.
+const MOST_CELLS: usize = 600;
 
 /// Everything that was found out about one stream.
 pub(crate) struct Judgement {
@@ -118,7 +118,7 @@ impl Judgement {
         let sample = cells.sample(Cause::Done);
         let grid = Grid::new(bounds.first, bounds.floor, bounds.ceiling);
         let ensemble = tail::ensemble(&sample, &grid, seed).ok()?;
-        let failing = PiecewiseHazard::fit(&cells.sample(Cause::Failed));
+        let failing = PiecewiseHazard::fit(&coarse.sample(Cause::Failed));
         let failure: Vec<f64> = failing
             .as_ref()
             .map(|hazard| grid.ages().iter().map(|&t| hazard.cumulative(t)).collect())

@@ -101,6 +101,10 @@ pub fn advise(case: &Case<'_>, entry: &Entry, seed: u64) -> Advice {
     advice.advice = decide(&cells, entry, bounds.as_ref(), judgement.as_ref());
     let shift = case.periods.and_then(|(earlier, latest)| {
         let bounds = bounds.as_ref()?;
+        // Most windows have one period only.
+        if earlier.counts()[0] == 0 || latest.counts()[0] == 0 {
+            return None;
+        }
         Shift::between(&earlier.first_attempts(), &latest.first_attempts(), entry, bounds)
     });
     advice.cautions =

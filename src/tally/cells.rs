@@ -98,21 +98,23 @@ impl Cells {
             return self.clone();
         }
         let step = (last / first).ln() / most as f64;
-        let key = |t: f64| ((t / first).ln() / step).floor();
+        let key = |e: &EventCell| ((e.upto / first).ln() / step).floor();
+        let joins = |e: &EventCell| positive(e.upto) && e.over > 0.0 && (e.upto / e.over).ln() <= step;
         let mut joined: Vec<EventCell> = Vec::with_capacity(most + 1);
+        // Of the cell that is being filled; none where nothing may join it.
+        let mut filling = None;
         for e in &self.events {
+            let place = joins(e).then(|| key(e));
             match joined.last_mut() {
-                Some(kept)
-                    if positive(e.upto)
-                        && positive(kept.over)
-                        && key(kept.over.max(first)) == key(e.upto)
-                        && e.over >= kept.over =>
-                {
+                Some(kept) if place.is_some() && place == filling && e.over >= kept.over => {
                     kept.upto = e.upto;
                     kept.done += e.done;
                     kept.failed += e.failed;
                 }
-                _ => joined.push(*e),
+                _ => {
+                    joined.push(*e);
+                    filling = place;
+                }
             }
         }
         Cells { events: joined, ..self.clone() }
