@@ -56,7 +56,13 @@ impl Step {
 
 /// Every week's advice for one stream, each proposal put in force for the next. `closed`: the time in force cuts off
 /// the waits of its week, as it would in truth; otherwise only the scenario's own timer does.
-fn follow(policy: &Policy, scenario: &Scenario, records: &[DemoRecord], stream: &str, closed: bool) -> Vec<Step> {
+fn follow(
+    policy: &Policy,
+    scenario: &Scenario,
+    records: &[DemoRecord],
+    stream: &str,
+    closed: bool,
+) -> Vec<Step> {
     let mut policy = policy.clone();
     let mut steps: Vec<Step> = Vec::new();
     for week in 1..=WEEKS {
@@ -113,7 +119,8 @@ fn faults(stream: &demo::Stream, policy: &Policy, steps: &[Step]) -> Vec<String>
                 changes += u32::from(settled);
             }
             settled |= !proposal.step_limited;
-            let within = guard.floor.unwrap() <= next && (next <= guard.ceiling.unwrap() || next.is_infinite());
+            let within =
+                guard.floor.unwrap() <= next && (next <= guard.ceiling.unwrap() || next.is_infinite());
             let step = (1.0 - guard.largest_step) * now <= next * (1.0 + 1e-9)
                 && (next <= (1.0 + guard.largest_step) * now * (1.0 + 1e-9));
             if !within || !(step || now.is_infinite()) {

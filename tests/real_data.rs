@@ -5,6 +5,8 @@
 //! No one has published what these waits were worth, so the prices are ours: a completion is worth 1, and a new start
 //! costs a fifth of the median wait.
 
+#![allow(clippy::unwrap_used, clippy::panic)] // a test may fail
+
 mod support;
 
 use outwait::advice::{Action, Advice, RemainingWait, TailClass};
