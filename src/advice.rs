@@ -129,7 +129,8 @@ pub struct FitSummary {
     pub parameters: serde_json::Map<String, serde_json::Value>,
     /// Standard errors by the same names; `null` where the likelihood is flat.
     pub standard_errors: serde_json::Map<String, serde_json::Value>,
-    /// Natural logarithm, ages in seconds.
+    /// Natural logarithm of the likelihood of the ages as grouped for the fit (about 75 cells), hence of probabilities and
+    /// not of densities: it compares the families here, not with another program's.
     pub log_likelihood: f64,
     /// Akaike's criterion.
     pub aic: f64,
