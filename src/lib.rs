@@ -4,6 +4,7 @@
 //! the future of a wait looks like), [`stopping::Worth`] (what time is worth).
 
 pub mod advice;
+pub mod chart;
 pub mod curve;
 pub mod demo;
 pub mod numeric;
