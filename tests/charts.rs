@@ -1,6 +1,6 @@
 //! Pictures: well-formed, readable at every width, in both lights, in words too.
 
-#![allow(clippy::unwrap_used)] // a test may fail
+#![allow(clippy::unwrap_used, clippy::panic)] // a test may fail
 
 use std::collections::BTreeMap;
 
@@ -216,9 +216,50 @@ fn sparks() -> Vec<String> {
     all.collect()
 }
 
+/// Pictures of little data, and of strange ones.
+fn odd(frame: &Frame<'_>) -> Vec<(String, Svg)> {
+    let (stream, level) = ("branch-04.holds", 0.9);
+    let marks = Marks { advised: Some(0.5), in_force: Some(0.5) };
+    let ages = Ages { start: 0.5, middle: 0.5, end: 0.5, sight: 0.5 };
+    let of = |name: &str| format!("{}-{name}", frame.prefix);
+    let (a, b, c, d) = (of("one"), of("loss"), of("endless"), of("twice"));
+    let (curve, steps) = (&[Point::new(0.5, 0.0)][..], true);
+    let one = Waiting { stream, waits: 1, ages, curve, steps, level, marks };
+    let curve = &[Point::new(0.1, -3.0).between(-4.0, -2.5), Point::new(0.5, -1.0).between(-1.2, 0.3)][..];
+    let rivals = &[Rival { name: "never", age: f64::INFINITY, rate: -0.5 }; 9][..];
+    let quantity = Quantity::PerTime("worth");
+    let loss = Rate {
+        stream,
+        ages,
+        curve,
+        level,
+        marks,
+        never: Some(-0.5),
+        as_good: Some([0.4, 0.5]),
+        rivals,
+        quantity,
+    };
+    let curve = &[
+        Point::new(0.0, 1.0).between(0.5, f64::INFINITY),
+        Point::new(0.4, 3.0).between(1.0, f64::INFINITY),
+        Point::new(0.5, f64::INFINITY).between(2.0, f64::INFINITY),
+    ][..];
+    let endless = Remaining { stream, ages, curve, level, marks, trend: RemainingWait::Growing };
+    let curve = &[[0.0, 1.0], [1.0, 0.0], [2.0, 0.0], [2.5, 0.3], [3.0, 0.0], [4.0, 0.0]][..];
+    let ages = Ages { start: 1.0, middle: 1.0, end: 4.0, sight: 2.8 };
+    let marks = Marks { advised: Some(1.3), in_force: Some(3.5) };
+    let twice = Holding { stream, ages, curve, marks, unit: "completions" };
+    vec![
+        ("waiting-one".into(), waiting(&one, &Frame { prefix: &a, ..*frame })),
+        ("rate-loss".into(), rate(&loss, &Frame { prefix: &b, ..*frame })),
+        ("remaining-endless".into(), remaining(&endless, &Frame { prefix: &c, ..*frame })),
+        ("holding-twice".into(), holding(&twice, &Frame { prefix: &d, ..*frame })),
+    ]
+}
+
 /// Every picture there is, by name.
 fn gallery(frame: &Frame<'_>) -> Vec<(String, Svg)> {
-    let mut all = Vec::new();
+    let mut all = odd(frame);
     for (i, scene) in scenes().iter().enumerate() {
         let prefix = format!("{}{i}", frame.prefix);
         for (name, svg) in scene.pictures(&Frame { prefix: &prefix, ..*frame }) {
@@ -332,10 +373,10 @@ fn check(markup: &str) -> Result<(), String> {
     }
     let mut ids = BTreeMap::new();
     for node in root.descendants().filter(Node::is_element) {
-        if let Some(id) = node.attribute("id") {
-            if ids.insert(id, node).is_some() {
-                return say("id used twice", node);
-            }
+        if let Some(id) = node.attribute("id")
+            && ids.insert(id, node).is_some()
+        {
+            return say("id used twice", node);
         }
     }
     for id in root.attribute("aria-labelledby").unwrap_or("").split(' ') {
@@ -353,10 +394,10 @@ fn check(markup: &str) -> Result<(), String> {
             if name.starts_with("on") || name.ends_with("href") || name == "style" || outside {
                 return say("reaches outside", node);
             }
-            if let Some(id) = value.strip_prefix("url(#") {
-                if !ids.contains_key(id.trim_end_matches(')')) {
-                    return say("fills with nothing", node);
-                }
+            if let Some(id) = value.strip_prefix("url(#")
+                && !ids.contains_key(id.trim_end_matches(')'))
+            {
+                return say("fills with nothing", node);
             }
         }
         if node.ancestors().any(|a| a.has_tag_name("defs")) {
@@ -748,7 +789,7 @@ fn degenerate_data_make_a_clear_picture() {
     let one = [Point::new(0.5, 0.0)];
     let svg = waiting(&Waiting { stream, waits: 1, ages, curve: &one, steps: true, level, marks }, &frame);
     sound(&svg).unwrap();
-    assert_eq!(svg.title, "After 500 ms none is still waiting, and is given up");
+    assert_eq!(svg.title, "After 500 ms, the time in force, none is still waiting");
     // Every rate is zero.
     let zero = [Point::new(0.1, 0.0).between(0.0, 0.0), Point::new(0.5, 0.0).between(0.0, 0.0)];
     let rivals = [Rival { name: "never", age: f64::INFINITY, rate: 0.0 }; 3];

@@ -3,6 +3,7 @@
 use super::Marks;
 use super::scale::Scale;
 use super::trace::Trace;
+use super::words;
 use crate::outlook::Outlook;
 
 /// From this ratio of the last age to the median on, ages are logarithmic: a linear axis would press one half of
@@ -100,6 +101,22 @@ impl Road {
         let scale = Scale { from: if log { start } else { 0.0 }, to: end, log };
         let sight = if ages.sight < end { ages.sight.max(0.0) } else { f64::INFINITY };
         Some(Road { scale, sight })
+    }
+}
+
+impl Road {
+    /// Whether a curve runs on past the edge of sight.
+    pub(super) fn assumes(&self, trace: &Trace) -> bool {
+        trace.last_age().is_some_and(|last| last > self.sight)
+    }
+
+    /// The sentence that says so, without its full stop; empty where everything shown is seen.
+    pub(super) fn past_sight(&self, trace: &Trace) -> String {
+        if !self.sight.is_finite() {
+            return String::new();
+        }
+        let assumed = if self.assumes(trace) { "; the curve there is an assumption" } else { "" };
+        format!("Past {} nothing is seen{assumed}", words::time(self.sight))
     }
 }
 

@@ -5,7 +5,7 @@ use super::pen::Anchor;
 use super::scale::Scale;
 use super::sheet::{MARGIN, Sample, Sheet, advised_shape, in_force_shape, nothing, span};
 use super::text::{self, named};
-use super::words::{Quantity, Spoken, percent, range, roughly, sentences};
+use super::words::{Quantity, Spoken, brackets_hold, in_brackets, percent, range, roughly, sentences};
 use super::{Frame, Svg, Table};
 
 /// Below this width a bar's name stands above it, px.
@@ -158,8 +158,7 @@ impl Rows<'_> {
         let say = |v: f64| self.unit.short(v);
         match bar.interval {
             _ if bar.value.is_nan() => "not known".into(),
-            Some(interval) => format!("{} ({})", say(bar.value), range(interval, say)),
-            None => say(bar.value),
+            interval => say(bar.value) + &in_brackets(interval, say),
         }
     }
 
@@ -171,10 +170,7 @@ impl Rows<'_> {
             self.unit.caption(&self.lead),
             told.join("; "),
             if rest > 0 { format!("{rest} more are in the table") } else { String::new() },
-            match self.bars.iter().any(|b| b.interval.is_some()) {
-                true => format!("In brackets the {} interval", percent(self.level)),
-                false => String::new(),
-            },
+            brackets_hold(self.bars.iter().any(|b| b.interval.is_some()), self.level, "interval"),
         ])
     }
 

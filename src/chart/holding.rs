@@ -143,9 +143,6 @@ fn summary(input: &Holding<'_>, pays: &[[f64; 2]], trace: &Trace, road: &Road) -
         },
         at(input.marks.advised, "advised"),
         at(input.marks.in_force, "present"),
-        match road.sight.is_finite() {
-            true => format!("Past {} nothing is seen; the curve there is an assumption", time(road.sight)),
-            false => String::new(),
-        },
+        road.past_sight(trace),
     ])
 }

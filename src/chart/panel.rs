@@ -318,15 +318,13 @@ impl<'a> Panel<'a> {
         }
     }
 
-    /// The shapes of the marked times on a curve.
+    /// The shapes of the marked times on a curve, the full one over the open one where they coincide.
     pub(super) fn stations(&mut self, trace: &Trace) {
-        for post in self.posts.clone() {
+        for post in self.shaped() {
             if let Some(Point { value, .. }) = trace.at(post.age).filter(|_| self.reaches(post.age)) {
                 let at = self.at(post.age, value);
                 self.shape(post.kind, at);
-                if post.kind.has_shape() {
-                    self.taken.push(at);
-                }
+                self.taken.push(at);
             }
         }
     }
@@ -366,8 +364,13 @@ impl<'a> Panel<'a> {
         self.sheet.pen.line(&ink::TICK, (self.left, from.1), to);
     }
 
+    fn shaped(&self) -> Vec<Post> {
+        let of = |kind: Kind| self.posts.iter().copied().filter(move |p| p.kind == kind);
+        of(Kind::InForce).chain(of(Kind::Advised)).collect()
+    }
+
     /// The path itself, over everything, and the key under it.
-    pub(super) fn close(mut self, key: Vec<(Sample, String)>, summary: &str, table: Table) -> Svg {
+    pub(super) fn close(mut self, mut key: Vec<(Sample, String)>, summary: &str, table: Table) -> Svg {
         let y = self.bottom;
         let sight = if self.road.sight.is_finite() { self.x(self.road.sight) } else { self.right };
         let pen = &mut self.sheet.pen;
@@ -375,16 +378,15 @@ impl<'a> Panel<'a> {
         pen.line(&ink::PATH_OPEN, (sight, y), (self.right + 6.0, y));
         arrow(pen, (self.right + 12.0, y));
         pen.circle(&ink::WAITER, (self.left, y), 4.5);
-        for post in self.posts.clone() {
+        for post in self.shaped() {
             if self.reaches(post.age) {
                 self.shape(post.kind, (self.x(post.age), y));
             }
         }
-        let mut entries = key;
         if self.road.sight.is_finite() {
-            entries.push((Sample::Haze, format!("past {} nothing is seen", words::time(self.road.sight))));
+            key.push((Sample::Haze, format!("past {} nothing is seen", words::time(self.road.sight))));
         }
-        self.sheet.key(&entries);
+        self.sheet.key(&key);
         self.sheet.finish(summary, table)
     }
 }

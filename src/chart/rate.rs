@@ -6,7 +6,9 @@ use super::scale::{Measure, Scale};
 use super::sheet::{Sample, Sheet, nothing};
 use super::text::named;
 use super::trace::{Point, Trace};
-use super::words::{Quantity, Spoken, percent, range, roughly, rule, sentences, time};
+use super::words::{
+    Quantity, Spoken, brackets_hold, in_brackets, percent, range, roughly, rule, sentences, time,
+};
 use super::{Ages, Frame, Marks, Svg, Table};
 
 /// Differences below this share of the larger rate are not worth a sentence.
@@ -162,7 +164,7 @@ impl Facts<'_> {
             }
             Some((age, Some(rate))) => {
                 let band = self.trace.at(age).and_then(|p| p.band);
-                let band = band.map_or(String::new(), |b| format!(" ({})", range(b, |v| self.unit.short(v))));
+                let band = in_brackets(band, |v| self.unit.short(v));
                 format!("The {name} time of {} earns {}{band}", time(age), self.unit.short(rate))
             }
         };
@@ -184,17 +186,8 @@ impl Facts<'_> {
                 true => String::new(),
                 false => format!("Other rules: {}", rivals.join("; ")),
             },
-            match self.trace.points().iter().any(|p| p.band.is_some()) {
-                true => format!("The band holds {} of what the data allow", percent(level)),
-                false => String::new(),
-            },
-            match self.road.sight.is_finite() {
-                true => format!(
-                    "Past {} nothing is seen; the curve there is an assumption",
-                    time(self.road.sight)
-                ),
-                false => String::new(),
-            },
+            brackets_hold(self.trace.has_band(), level, "band"),
+            self.road.past_sight(self.trace),
         ])
     }
 
@@ -215,7 +208,7 @@ impl Facts<'_> {
         if let Some(band) = good {
             key.push((Sample::Good, format!("as good as the best: {}", range(band, time))));
         }
-        if self.trace.points().iter().any(|p| p.band.is_some()) {
+        if self.trace.has_band() {
             key.push((Sample::Band, format!("{} band", percent(self.input.level))));
         }
         key.extend(self.rivals.iter().enumerate().map(|(i, r)| {

@@ -5,7 +5,7 @@ use super::panel::{Level, Panel, posts};
 use super::scale::{Measure, Scale};
 use super::sheet::{Sample, Sheet, nothing};
 use super::trace::{Point, Trace};
-use super::words::{duration, percent, range, sentences, time};
+use super::words::{brackets_hold, duration, in_brackets, percent, range, sentences, time};
 use super::{Ages, Frame, Marks, Svg, Table};
 use crate::advice::RemainingWait;
 
@@ -54,10 +54,10 @@ pub fn remaining(input: &Remaining<'_>, frame: &Frame<'_>) -> Svg {
     panel.curve(&trace);
     panel.stations(&trace);
     let mut key = vec![(Sample::Line, "further wait".into())];
-    if trace.points().iter().any(|p| p.band.is_some()) {
+    if trace.has_band() {
         key.push((Sample::Band, format!("{} band", percent(input.level))));
     }
-    if road.sight.is_finite() {
+    if road.assumes(&trace) {
         key.push((Sample::LineOpen, "assumed".into()));
     }
     let rows = panel.told().into_iter().filter_map(|age| {
@@ -118,7 +118,7 @@ fn summary(input: &Remaining<'_>, trace: &Trace, road: &Road) -> String {
     ages.sort_by(f64::total_cmp);
     ages.dedup();
     let each = ages.into_iter().filter_map(|age| trace.at(age)).map(|p| {
-        let band = p.band.map_or(String::new(), |b| format!(" ({})", range(b, duration)));
+        let band = in_brackets(p.band, duration);
         format!("after {}, {}{band}", time(p.age), duration(p.value))
     });
     let each: Vec<String> = each.collect();
@@ -134,13 +134,7 @@ fn summary(input: &Remaining<'_>, trace: &Trace, road: &Road) -> String {
         },
         mark(input.marks.advised, "Advised"),
         mark(input.marks.in_force, "Present"),
-        match trace.points().iter().any(|p| p.band.is_some()) {
-            true => format!("In brackets the {} band", percent(input.level)),
-            false => String::new(),
-        },
-        match road.sight.is_finite() {
-            true => format!("Past {} nothing is seen; the curve there is an assumption", time(road.sight)),
-            false => String::new(),
-        },
+        brackets_hold(trace.has_band(), input.level, "band"),
+        road.past_sight(trace),
     ])
 }

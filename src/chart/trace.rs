@@ -57,6 +57,11 @@ impl Trace {
         matches!((self.points.first(), self.points.last()), (Some(a), Some(b)) if a.age < b.age)
     }
 
+    /// Whether any point past the first has a band.
+    pub(super) fn has_band(&self) -> bool {
+        self.points.iter().skip(1).any(|p| p.band.is_some())
+    }
+
     /// The least age above 0.
     pub(super) fn first_age(&self) -> Option<f64> {
         self.points.iter().map(|p| p.age).find(|a| *a > 0.0)

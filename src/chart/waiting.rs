@@ -5,7 +5,7 @@ use super::panel::{Level, Panel, posts};
 use super::scale::{Measure, Scale};
 use super::sheet::{Sample, Sheet, nothing};
 use super::trace::{Point, Trace};
-use super::words::{percent, range, sentences, still, time};
+use super::words::{brackets_hold, in_brackets, percent, range, sentences, still, time};
 use super::{Ages, Frame, Marks, Svg, Table};
 use crate::say;
 
@@ -38,11 +38,11 @@ pub fn waiting(input: &Waiting<'_>, frame: &Frame<'_>) -> Svg {
     let Some((trace, road)) = shares(input.curve, input.steps, &input.ages, &input.marks) else {
         return nothing(input.stream, "no wait has been seen", frame);
     };
-    let facts = Facts { input, trace: &trace, sight: road.sight };
+    let facts = Facts { input, trace: &trace, road };
     let panel = Panel::open(
         Sheet::open(frame, input.stream, &facts.title()),
         road,
-        Level { scale: facts.scale(&road), measure: Measure::Share, caption: "share still waiting".into() },
+        Level { scale: facts.scale(), measure: Measure::Share, caption: "share still waiting".into() },
         posts(&input.marks, &road),
     );
     facts.draw(panel)
@@ -64,7 +64,7 @@ pub(super) fn shares(curve: &[Point], steps: bool, ages: &Ages, marks: &Marks) -
 struct Facts<'a> {
     input: &'a Waiting<'a>,
     trace: &'a Trace,
-    sight: f64,
+    road: Road,
 }
 
 impl Facts<'_> {
@@ -79,12 +79,13 @@ impl Facts<'_> {
         let right = points.iter().position(|p| p.value <= share)?;
         let (a, b) = (points[right.checked_sub(1)?], points[right]);
         let part = if self.input.steps { 1.0 } else { (a.value - share) / (a.value - b.value) };
-        Some(a.age + part * (b.age - a.age)).filter(|age| *age <= self.sight)
+        Some(a.age + part * (b.age - a.age)).filter(|age| *age <= self.road.sight)
     }
 
-    fn scale(&self, road: &Road) -> Scale {
+    fn scale(&self) -> Scale {
         let marks = [self.input.marks.advised, self.input.marks.in_force];
-        let at_marks = marks.into_iter().flatten().filter(|m| *m <= road.scale.to).filter_map(|m| self.at(m));
+        let at_marks =
+            marks.into_iter().flatten().filter(|m| *m <= self.road.scale.to).filter_map(|m| self.at(m));
         let least = at_marks.map(|p| p.value).filter(|s| *s > 0.0).fold(1.0, f64::min);
         if least < LOG_BELOW {
             let floor = 10f64.powf((0.5 * least).log10().floor()).max(LEAST);
@@ -100,14 +101,16 @@ impl Facts<'_> {
             .filter(reached)
             .or(self.age_of(0.1))
             .or(in_force.filter(reached))
-            .or(self.trace.last_age().filter(|age| *age <= self.sight))
-            .unwrap_or(self.sight);
+            .or(self.trace.last_age().filter(|age| *age <= self.road.sight))
+            .unwrap_or(self.road.sight);
         let share = self.at(first).map_or(1.0, |p| p.value);
-        let known = if first > self.sight { " (not seen)" } else { "" };
+        let known = if first > self.road.sight { " (not seen)" } else { "" };
         let start = format!("After {} {} still waiting{known}", time(first), still(share));
         match in_force {
             None => start,
-            Some(now) if now == first => format!("{start}, and is given up"),
+            Some(now) if now == first => {
+                format!("After {}, the time in force, {} still waiting{known}", time(first), still(share))
+            }
             Some(now) if now.is_infinite() => format!("{start}; none is ever given up"),
             Some(now) => format!("{start}; the time in force is {}", time(now)),
         }
@@ -123,8 +126,8 @@ impl Facts<'_> {
         let mark = |age: Option<f64>, name: &str| {
             let Some(age) = age else { return String::new() };
             let Some(p) = self.at(age) else { return format!("The {name} time is {}", time(age)) };
-            let band = p.band.map_or(String::new(), |b| format!(" ({})", range(b, percent)));
-            let unseen = if age > self.sight { ", which is not seen" } else { "" };
+            let band = in_brackets(p.band, percent);
+            let unseen = if age > self.road.sight { ", which is not seen" } else { "" };
             format!("At the {name} time of {}, {}{band} still wait{unseen}", time(age), percent(p.value))
         };
         sentences([
@@ -135,16 +138,8 @@ impl Facts<'_> {
             },
             mark(marks.advised, "advised"),
             mark(marks.in_force, "present"),
-            match self.trace.points().iter().any(|p| p.band.is_some()) {
-                true => format!("In brackets the {} band", percent(level)),
-                false => String::new(),
-            },
-            match self.sight.is_finite() {
-                true => {
-                    format!("Past {} nothing is seen; the curve there is an assumption", time(self.sight))
-                }
-                false => String::new(),
-            },
+            brackets_hold(self.trace.has_band(), level, "band"),
+            self.road.past_sight(self.trace),
         ])
     }
 
@@ -155,10 +150,10 @@ impl Facts<'_> {
         panel.stations(self.trace);
         let level = percent(self.input.level);
         let mut key = vec![(Sample::Line, "still waiting".into())];
-        if self.trace.points().iter().skip(1).any(|p| p.band.is_some()) {
+        if self.trace.has_band() {
             key.push((Sample::Band, format!("{level} band")));
         }
-        if self.sight.is_finite() {
+        if self.road.assumes(self.trace) {
             key.push((Sample::LineOpen, "assumed".into()));
         }
         let rows = panel.told().into_iter().filter_map(|age| {

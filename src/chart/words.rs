@@ -131,6 +131,16 @@ pub(super) fn range([low, high]: [f64; 2], say: impl Fn(f64) -> String) -> Strin
     format!("{} to {}", say(low), say(high))
 }
 
+/// A band after its value: `" (a to b)"`, or nothing.
+pub(super) fn in_brackets(band: Option<[f64; 2]>, say: impl Fn(f64) -> String) -> String {
+    band.map_or(String::new(), |band| format!(" ({})", range(band, say)))
+}
+
+/// What stands in brackets, where anything does.
+pub(super) fn brackets_hold(any: bool, level: f64, what: &str) -> String {
+    if any { format!("In brackets the {} {what}", percent(level)) } else { String::new() }
+}
+
 /// Joins what there is to say into sentences.
 pub(super) fn sentences(parts: impl IntoIterator<Item = String>) -> String {
     let parts: Vec<String> = parts.into_iter().filter(|p| !p.is_empty()).map(|p| format!("{p}.")).collect();
