@@ -55,7 +55,8 @@ struct Scene {
     trend: RemainingWait,
     rate: Vec<Point>,
     as_good: Option<[f64; 2]>,
-    never: f64,
+    /// By the time in force.
+    earned: f64,
     rivals: Vec<(&'static str, f64, f64)>,
     holding: Vec<[f64; 2]>,
 }
@@ -114,7 +115,7 @@ impl Scene {
             trend,
             as_good: Some([good[0], good[good.len() - 1]]),
             rate: rate.collect(),
-            never: rate_at(f64::INFINITY),
+            earned: rate_at(in_force),
             rivals: rules.iter().map(|&(name, age)| (name, age, rate_at(age))).collect(),
             holding: at.iter().map(|&t| [t, worth(t)]).collect(),
             ages,
@@ -124,7 +125,7 @@ impl Scene {
     }
 
     fn pictures(&self, frame: &Frame<'_>) -> Vec<(&'static str, Svg)> {
-        let Scene { stream, waits, ages, marks, steps, trend, as_good, never, .. } = *self;
+        let Scene { stream, waits, ages, marks, steps, trend, as_good, .. } = *self;
         let level = 0.9;
         let prefix = |name: &str| format!("{}-{name}", frame.prefix);
         let rivals: Vec<Rival<'_>> =
@@ -141,9 +142,19 @@ impl Scene {
                 remaining(&Remaining { stream, ages, curve: &self.remaining, level, marks, trend }, f)
             }),
             draw("rate", &|f| {
-                let (never, rivals) = (Some(never), &rivals[..]);
+                let (earned, rivals) = ([None, Some(self.earned)], &rivals[..]);
                 rate(
-                    &Rate { stream, ages, curve: &self.rate, level, marks, never, as_good, rivals, quantity },
+                    &Rate {
+                        stream,
+                        ages,
+                        curve: &self.rate,
+                        level,
+                        marks,
+                        earned,
+                        as_good,
+                        rivals,
+                        quantity,
+                    },
                     f,
                 )
             }),
@@ -234,7 +245,7 @@ fn odd(frame: &Frame<'_>) -> Vec<(String, Svg)> {
         curve,
         level,
         marks,
-        never: Some(-0.5),
+        earned: [None, None],
         as_good: Some([0.4, 0.5]),
         rivals,
         quantity,
@@ -719,7 +730,7 @@ fn hostile_names_stay_text() {
                     curve: &curve,
                     level: 0.9,
                     marks,
-                    never: None,
+                    earned: [None, None],
                     as_good: None,
                     rivals: &rivals,
                     quantity,
@@ -755,7 +766,8 @@ fn says_why_there_is_nothing_to_draw() {
         let more = remaining(&Remaining { stream, ages, curve, level, marks, trend }, &frame);
         let quantity = Quantity::PerTime("worth");
         let (as_good, rivals) = (Some([f64::NAN, 1.0]), &[][..]);
-        let input = Rate { stream, ages, curve, level, marks, never: None, as_good, rivals, quantity };
+        let input =
+            Rate { stream, ages, curve, level, marks, earned: [None, None], as_good, rivals, quantity };
         let earns = rate(&input, &frame);
         let worth: Vec<[f64; 2]> = curve.iter().map(|p| [p.age, p.value]).collect();
         let holds = holding(&Holding { stream, ages, curve: &worth, marks, unit: "" }, &frame);
@@ -795,8 +807,8 @@ fn degenerate_data_make_a_clear_picture() {
     let rivals = [Rival { name: "never", age: f64::INFINITY, rate: 0.0 }; 3];
     let quantity = Quantity::PerTime("worth");
     let rates = |curve: &[Point]| {
-        let (never, as_good, rivals) = (Some(0.0), Some([0.1, 0.5]), &rivals[..]);
-        rate(&Rate { stream, ages, curve, level, marks, never, as_good, rivals, quantity }, &frame)
+        let (earned, as_good, rivals) = ([Some(0.0); 2], Some([0.1, 0.5]), &rivals[..]);
+        rate(&Rate { stream, ages, curve, level, marks, earned, as_good, rivals, quantity }, &frame)
     };
     sound(&rates(&zero)).unwrap();
     assert_eq!(rates(&zero).title, "Every give-up time earns nothing");
@@ -898,8 +910,9 @@ proptest! {
         kind in 0usize..3,
         trend in 0usize..5,
         spread in proptest::collection::vec(wild(), 1..12),
-        (never, level) in (proptest::option::of(wild()), 0.5..0.999f64),
+        (earned, level) in (proptest::option::of(wild()), 0.5..0.999f64),
     ) {
+        let earned = [None, earned];
         let frame = Frame { width, prefix: &stream, styled: false };
         let ages = Ages { start, middle, end, sight };
         let marks = Marks { advised, in_force };
@@ -925,7 +938,7 @@ proptest! {
         let pictures = [
             waiting(&Waiting { stream, waits: 9, ages, curve, steps, level, marks }, &frame),
             remaining(&Remaining { stream, ages, curve, level, marks, trend }, &frame),
-            rate(&Rate { stream, ages, curve, level, marks, never, as_good, rivals, quantity }, &frame),
+            rate(&Rate { stream, ages, curve, level, marks, earned, as_good, rivals, quantity }, &frame),
             holding(&Holding { stream, ages, curve: &worth, marks, unit: &unit }, &frame),
             week(&Week { stream, what: &unit, quantity, hours: &hours, zone: "UTC" }, &frame),
             replay(&Replay { stream, over: &unit, quantity, level, bars }, &frame),

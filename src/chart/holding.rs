@@ -1,7 +1,6 @@
 //! What holding on is worth at an age, above giving up there and then, and where it ends.
 
 use super::age::Road;
-use super::ink;
 use super::panel::{Kind, Level, Panel, Post, posts};
 use super::scale::{Measure, Scale};
 use super::sheet::{Sample, Sheet, nothing};
@@ -31,6 +30,7 @@ pub struct Holding<'a> {
 
 /// Draws what holding on is worth.
 pub fn holding(input: &Holding<'_>, frame: &Frame<'_>) -> Svg {
+    let input = &Holding { marks: input.marks.sound(), ..*input };
     let points: Vec<Point> = input.curve.iter().map(|&[age, worth]| Point::new(age, worth)).collect();
     let trace = Trace::of(&points, false);
     let road = Road::of(&input.ages, &input.marks, Some(&trace)).filter(|_| trace.is_line());
@@ -57,7 +57,7 @@ pub fn holding(input: &Holding<'_>, frame: &Frame<'_>) -> Svg {
         caption: unit.caption("worth of holding on"),
     };
     let mut panel = Panel::open(Sheet::open(frame, input.stream, &title), road, level, marked);
-    panel.ground(&ink::BAND, &trace, 0.0);
+    panel.ground(&trace);
     panel.zero();
     panel.posts();
     panel.curve(&trace);
@@ -123,9 +123,9 @@ fn summary(input: &Holding<'_>, pays: &[[f64; 2]], trace: &Trace, road: &Road) -
     let unit = Quantity::Number(input.unit).spoken([]);
     let at = |age: Option<f64>, name: &str| match age.map(|age| (age, trace.at(age))) {
         None => String::new(),
-        Some((age, None)) => format!("The {name} time is {}", time(age)),
+        Some((age, None)) => format!("The {name} is {}", time(age)),
         Some((age, Some(p))) => {
-            format!("At the {name} time of {} holding on is worth {}", time(age), unit.short(p.value))
+            format!("At the {name} of {} holding on is worth {}", time(age), unit.short(p.value))
         }
     };
     let finite = || trace.points().iter().filter(|p| p.value.is_finite());
@@ -141,8 +141,8 @@ fn summary(input: &Holding<'_>, pays: &[[f64; 2]], trace: &Trace, road: &Road) -
             true => "It never exceeds 0".into(),
             false => format!("It exceeds 0 from {}", stretches.join(", from ")),
         },
-        at(input.marks.advised, "advised"),
-        at(input.marks.in_force, "present"),
+        at(input.marks.advised, "advised time"),
+        at(input.marks.in_force, "time in force"),
         road.past_sight(trace),
     ])
 }

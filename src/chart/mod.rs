@@ -18,10 +18,9 @@
 //! grey printer. Light colours are plain attributes, dark ones a style sheet under `prefers-color-scheme`, so that
 //! a program which drops style sheets still shows the light picture. The palette is in `ink.rs`.
 //!
-//! **Why the markup is written here.** The plotting crates' SVG writers put whole-pixel coordinates and one fixed
-//! colour into each element, know neither classes, dashes, patterns nor text alternatives, and their tick finders
-//! count in tens, not in minutes and hours. What is left to take over is a linear map, so there is nothing left to
-//! depend on.
+//! **Why the markup is written here.** The SVG writer of plotters 0.3 puts whole-pixel coordinates and one fixed
+//! colour into each element and knows neither classes, dashes, patterns nor text alternatives; its tick finder
+//! counts in tens, not in minutes and hours. What is left to take over is a linear map, so nothing is.
 
 mod age;
 mod bars;
@@ -76,10 +75,18 @@ impl Frame<'_> {
 /// Give-up times to mark, s; infinite for never, `None` for nothing to mark.
 #[derive(Clone, Copy, Debug, Default, PartialEq)]
 pub struct Marks {
-    /// What is advised.
+    /// What is advised; infinite for waiting it out.
     pub advised: Option<f64>,
     /// What is in force.
     pub in_force: Option<f64>,
+}
+
+impl Marks {
+    /// Without what is no time.
+    fn sound(self) -> Marks {
+        let time = |age: &f64| *age > 0.0;
+        Marks { advised: self.advised.filter(time), in_force: self.in_force.filter(time) }
+    }
 }
 
 /// A picture with its text.

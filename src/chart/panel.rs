@@ -52,10 +52,9 @@ impl Kind {
 
 /// The posts of marks and of the edge of sight.
 pub(super) fn posts(marks: &Marks, road: &Road) -> Vec<Post> {
-    let sound = |age: Option<f64>| age.filter(|a| *a > 0.0);
     [
-        (Kind::Advised, sound(marks.advised)),
-        (Kind::InForce, sound(marks.in_force)),
+        (Kind::Advised, marks.advised),
+        (Kind::InForce, marks.in_force),
         (Kind::Sight, Some(road.sight).filter(|s| s.is_finite() && *s >= road.scale.from)),
     ]
     .into_iter()
@@ -165,9 +164,9 @@ impl<'a> Panel<'a> {
     }
 
     fn haze(&mut self) {
-        let id = self.sheet.id("haze");
-        self.sheet.pen.pattern(&id, &ink::HAZE, 7.0, true);
         if self.road.sight.is_finite() {
+            let id = self.sheet.id("haze");
+            self.sheet.pen.pattern(&id, &ink::HAZE, 7.0, true);
             let from = (self.x(self.road.sight), self.top);
             self.sheet.pen.hatched(&id, from, (self.right, self.bottom));
         }
@@ -206,17 +205,8 @@ impl<'a> Panel<'a> {
         let (font, strip) = (self.sheet.font, self.strip);
         let room = self.sheet.right() - MARGIN;
         let indent = |kind: Kind| if kind.has_shape() { 1.1 * font } else { 0.0 };
-        let values: Vec<String> =
-            self.posts
-                .iter()
-                .map(|p| {
-                    if self.reaches(p.age) {
-                        words::time(p.age)
-                    } else {
-                        format!("{} →", words::time(p.age))
-                    }
-                })
-                .collect();
+        let value = |p: &Post| words::time(p.age) + if self.reaches(p.age) { "" } else { " →" };
+        let values: Vec<String> = self.posts.iter().map(value).collect();
         let wanted: Vec<(f64, f64)> = (self.posts.iter().zip(&values))
             .map(|(p, value)| {
                 let name = text::width(p.kind.name(), font) + indent(p.kind);
@@ -292,14 +282,14 @@ impl<'a> Panel<'a> {
         }
     }
 
-    /// The ground between a curve and a value.
-    pub(super) fn ground(&mut self, ink: &Ink, trace: &Trace, value: f64) {
+    /// The ground between a curve and 0.
+    pub(super) fn ground(&mut self, trace: &Trace) {
         let part = trace.cut(self.road.scale.from, self.road.scale.to).thinned(self.columns());
         let mut outline = part.line(|p| p.value, |age, value| self.at(age, value));
         if let (Some(&first), Some(&last)) = (outline.first(), outline.last()) {
-            let y = self.at(0.0, value).1;
+            let y = self.at(0.0, 0.0).1;
             outline.extend([(last.0, y), (first.0, y)]);
-            self.sheet.pen.polygon(ink, &outline);
+            self.sheet.pen.polygon(&ink::BAND, &outline);
         }
     }
 
@@ -358,10 +348,10 @@ impl<'a> Panel<'a> {
         }
     }
 
-    /// A line at a value, with its name kept to the key.
+    /// A line where the value is 0.
     pub(super) fn zero(&mut self) {
-        let (from, to) = (self.at(0.0, 0.0), self.at(f64::INFINITY, 0.0));
-        self.sheet.pen.line(&ink::TICK, (self.left, from.1), to);
+        let y = self.at(0.0, 0.0).1;
+        self.sheet.pen.line(&ink::TICK, (self.left, y), (self.right, y));
     }
 
     fn shaped(&self) -> Vec<Post> {

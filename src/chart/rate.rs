@@ -38,8 +38,9 @@ pub struct Rate<'a> {
     pub level: f64,
     /// Times to mark.
     pub marks: Marks,
-    /// What never giving up earns, where [`Marks::in_force`] is never.
-    pub never: Option<f64>,
+    /// What the advised time earns, and what the time in force does; read off the curve where absent, which ends
+    /// before never.
+    pub earned: [Option<f64>; 2],
     /// Every give-up time between these is as good as the best.
     pub as_good: Option<[f64; 2]>,
     /// Rules to compare.
@@ -50,6 +51,8 @@ pub struct Rate<'a> {
 
 /// Draws what each give-up time earns.
 pub fn rate(input: &Rate<'_>, frame: &Frame<'_>) -> Svg {
+    let good = input.as_good.filter(|[a, b]| *a >= 0.0 && a <= b);
+    let input = &Rate { marks: input.marks.sound(), as_good: good, ..*input };
     let unit = input.quantity.spoken(input.curve.iter().map(|p| p.value));
     let by = |value: f64| value * unit.factor;
     let curve: Vec<Point> = input
@@ -70,8 +73,8 @@ pub fn rate(input: &Rate<'_>, frame: &Frame<'_>) -> Svg {
         input.rivals.iter().filter(|r| r.age > 0.0 && !r.rate.is_nan()).copied().collect();
     rivals.iter_mut().for_each(|r| r.rate = by(r.rate));
     rivals.sort_by(|a, b| a.age.total_cmp(&b.age));
-    let never = input.never.map(by);
-    let facts = Facts { input, trace: &trace, shown, road, rivals, unit, never };
+    let earned = input.earned.map(|rate| rate.filter(|r| !r.is_nan()).map(by));
+    let facts = Facts { input, trace: &trace, shown, road, rivals, unit, earned };
     let panel = Panel::open(
         Sheet::open(frame, input.stream, &facts.title()),
         road,
@@ -88,12 +91,15 @@ struct Facts<'a> {
     road: Road,
     rivals: Vec<Rival<'a>>,
     unit: Spoken,
-    never: Option<f64>,
+    earned: [Option<f64>; 2],
 }
 
 impl Facts<'_> {
     fn earned(&self, age: f64) -> Option<f64> {
-        if age.is_infinite() { self.never } else { self.trace.at(age).map(|p| p.value) }
+        let Marks { advised, in_force } = self.input.marks;
+        let marked = [advised, in_force].into_iter().zip(self.earned);
+        let told = marked.filter(|(mark, _)| *mark == Some(age)).find_map(|(_, rate)| rate);
+        told.or_else(|| self.trace.at(age).map(|p| p.value))
     }
 
     /// The best of the curve within the axis.
@@ -158,14 +164,14 @@ impl Facts<'_> {
         let best = self.best();
         let mark = |age: Option<f64>, name: &str| match age.map(|age| (age, self.earned(age))) {
             None => String::new(),
-            Some((age, None)) => format!("The {name} time is {}", time(age)),
+            Some((age, None)) => format!("The {name} is {}", time(age)),
             Some((age, Some(rate))) if age.is_infinite() => {
-                format!("The {name} time is never and earns {}", self.unit.short(rate))
+                format!("The {name} is never and earns {}", self.unit.short(rate))
             }
             Some((age, Some(rate))) => {
                 let band = self.trace.at(age).and_then(|p| p.band);
                 let band = in_brackets(band, |v| self.unit.short(v));
-                format!("The {name} time of {} earns {}{band}", time(age), self.unit.short(rate))
+                format!("The {name} of {} earns {}{band}", time(age), self.unit.short(rate))
             }
         };
         let rivals: Vec<String> = self
@@ -176,8 +182,8 @@ impl Facts<'_> {
         sentences([
             self.unit.caption("Earned in the long run against the give-up time"),
             format!("The curve is highest at {} with {}", time(best.age), self.unit.short(best.value)),
-            mark(marks.advised, "advised"),
-            mark(marks.in_force, "present"),
+            mark(marks.advised, "advised time"),
+            mark(marks.in_force, "time in force"),
             match as_good {
                 Some(band) => format!("Any time from {} is as good as the best", range(band, time)),
                 None => String::new(),
@@ -192,7 +198,7 @@ impl Facts<'_> {
     }
 
     fn draw(&self, mut panel: Panel<'_>) -> Svg {
-        let good = self.input.as_good.filter(|[a, b]| a <= b && *b > 0.0);
+        let good = self.input.as_good;
         if let Some([from, to]) = good {
             panel.good(from, to);
         }

@@ -35,6 +35,7 @@ pub struct Remaining<'a> {
 
 /// Draws how much longer there is to wait.
 pub fn remaining(input: &Remaining<'_>, frame: &Frame<'_>) -> Svg {
+    let input = &Remaining { marks: input.marks.sound(), ..*input };
     let trace = Trace::of(input.curve, false);
     let road = Road::of(&input.ages, &input.marks, Some(&trace)).filter(|_| trace.is_line());
     let Some(road) = road else {
@@ -123,7 +124,7 @@ fn summary(input: &Remaining<'_>, trace: &Trace, road: &Road) -> String {
     });
     let each: Vec<String> = each.collect();
     let mark = |age: Option<f64>, name: &str| match age {
-        Some(age) => format!("{name} give-up time: {}", time(age)),
+        Some(age) => format!("The {name} is {}", time(age)),
         None => String::new(),
     };
     sentences([
@@ -132,8 +133,8 @@ fn summary(input: &Remaining<'_>, trace: &Trace, road: &Road) -> String {
             true => String::new(),
             false => format!("Expected further wait: {}", each.join("; ")),
         },
-        mark(input.marks.advised, "Advised"),
-        mark(input.marks.in_force, "Present"),
+        mark(input.marks.advised, "advised time"),
+        mark(input.marks.in_force, "time in force"),
         brackets_hold(trace.has_band(), input.level, "band"),
         road.past_sight(trace),
     ])

@@ -31,6 +31,7 @@ pub struct Spark<'a> {
 
 /// Draws a line without axes: firm where seen, dashed beyond. `<title>` says it in words.
 pub fn spark(input: &Spark<'_>) -> String {
+    let input = &Spark { marks: input.marks.sound(), ..*input };
     let (width, height) = (f64::from(input.size.0.clamp(40, 400)), f64::from(input.size.1.clamp(12, 100)));
     let pad = 4.0;
     let mut body = String::new();
@@ -53,7 +54,7 @@ pub fn spark(input: &Spark<'_>) -> String {
             }
         }
         let at = |age: Option<f64>| {
-            let age = age.filter(|a| *a > 0.0 && *a <= scale.to)?;
+            let age = age.filter(|a| *a <= scale.to)?;
             let share = trace.at(age).or(trace.points().last().copied())?.value;
             Some((place(age, share), share))
         };

@@ -5,7 +5,7 @@ use super::panel::{Level, Panel, posts};
 use super::scale::{Measure, Scale};
 use super::sheet::{Sample, Sheet, nothing};
 use super::trace::{Point, Trace};
-use super::words::{brackets_hold, in_brackets, percent, range, sentences, still, time};
+use super::words::{brackets_hold, in_brackets, percent, range, sentences, share, still, time};
 use super::{Ages, Frame, Marks, Svg, Table};
 use crate::say;
 
@@ -35,6 +35,7 @@ pub struct Waiting<'a> {
 
 /// Draws who is still waiting.
 pub fn waiting(input: &Waiting<'_>, frame: &Frame<'_>) -> Svg {
+    let input = &Waiting { marks: input.marks.sound(), ..*input };
     let Some((trace, road)) = shares(input.curve, input.steps, &input.ages, &input.marks) else {
         return nothing(input.stream, "no wait has been seen", frame);
     };
@@ -50,8 +51,8 @@ pub fn waiting(input: &Waiting<'_>, frame: &Frame<'_>) -> Svg {
 
 /// The curve from 1 at age 0, within 0 and 1; one of steps stays where it is as far as one sees.
 pub(super) fn shares(curve: &[Point], steps: bool, ages: &Ages, marks: &Marks) -> Option<(Trace, Road)> {
-    let share = |s: f64| s.clamp(0.0, 1.0);
-    let sound = |p: &Point| Point { value: share(p.value), band: p.band.map(|b| b.map(share)), ..*p };
+    let within = |s: f64| s.clamp(0.0, 1.0);
+    let sound = |p: &Point| Point { value: within(p.value), band: p.band.map(|b| b.map(within)), ..*p };
     let origin = Point::new(0.0, 1.0).between(1.0, 1.0);
     let trace = Trace::of(&std::iter::once(origin).chain(curve.iter().map(sound)).collect::<Vec<_>>(), steps);
     let road = Road::of(ages, marks, Some(&trace)).filter(|_| trace.is_line())?;
@@ -125,19 +126,23 @@ impl Facts<'_> {
         let steps: Vec<String> = steps.into_iter().flatten().collect();
         let mark = |age: Option<f64>, name: &str| {
             let Some(age) = age else { return String::new() };
-            let Some(p) = self.at(age) else { return format!("The {name} time is {}", time(age)) };
-            let band = in_brackets(p.band, percent);
+            let Some(p) = self.at(age) else { return format!("The {name} is {}", time(age)) };
+            let band = in_brackets(p.band, share);
             let unseen = if age > self.road.sight { ", which is not seen" } else { "" };
-            format!("At the {name} time of {}, {}{band} still wait{unseen}", time(age), percent(p.value))
+            format!("At the {name} of {}, {}{band} still wait{unseen}", time(age), share(p.value))
         };
         sentences([
-            format!("Share still waiting against time waited, {} waits", say::count(waits as f64)),
+            format!(
+                "Share still waiting against time waited, {} {}",
+                say::count(waits as f64),
+                if waits == 1 { "wait" } else { "waits" }
+            ),
             match steps.is_empty() {
                 true => String::new(),
                 false => format!("Still waiting: {}", steps.join(", ")),
             },
-            mark(marks.advised, "advised"),
-            mark(marks.in_force, "present"),
+            mark(marks.advised, "advised time"),
+            mark(marks.in_force, "time in force"),
             brackets_hold(self.trace.has_band(), level, "band"),
             self.road.past_sight(self.trace),
         ])
@@ -158,8 +163,8 @@ impl Facts<'_> {
         }
         let rows = panel.told().into_iter().filter_map(|age| {
             let p = self.at(age)?;
-            let band = p.band.map_or(String::new(), |b| range(b, percent));
-            Some(vec![time(age), percent(p.value), band, panel.remark(age)])
+            let band = p.band.map_or(String::new(), |b| range(b, share));
+            Some(vec![time(age), share(p.value), band, panel.remark(age)])
         });
         let table = Table { columns: vec!["after", "still waiting", "band", "remark"], rows: rows.collect() };
         panel.close(key, &self.summary(), table)

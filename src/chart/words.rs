@@ -103,9 +103,17 @@ pub(super) fn rule(name: &str, age: f64) -> String {
     }
 }
 
-/// A count, e.g. the 12 in "1 in 12".
+/// A share with its size still seen where it is small: `"2.1%"`, `"1 in 4,000"`.
+pub(super) fn share(share: f64) -> String {
+    if share > 0.0 && share < 0.001 { one_in(share) } else { percent(share) }
+}
+
+/// `"1 in 12"`.
 fn one_in(share: f64) -> String {
     let n = 1.0 / share;
+    if n >= 1e9 {
+        return format!("1 in {}", number(n));
+    }
     let unit = 10f64.powi((n.log10().floor() as i32 - 1).max(0));
     format!("1 in {}", say::count((n / unit).round() * unit))
 }
@@ -170,6 +178,7 @@ mod tests {
         assert_eq!([1.0e9, 1200.0, -0.5, 0.0].map(number), ["1e9", "1200", "-0.5", "0"]);
         assert_eq!([0.421, 0.03, 0.0001, 1.0].map(percent), ["42.1%", "3%", "<0.1%", "100%"]);
         assert_eq!([0.1, 0.0099, 8.2e-5].map(one_in), ["1 in 10", "1 in 100", "1 in 12,000"]);
+        assert_eq!([0.021, 2.5e-4, 0.0, 1e-12].map(share), ["2.1%", "1 in 4,000", "0%", "1 in 1e12"]);
         assert_eq!(
             [1.0, 0.63, 0.49, 0.14, 0.0].map(still),
             ["nearly all are", "63% are", "half are", "only 1 in 7 is", "none is"]
