@@ -199,7 +199,8 @@ fn draw(mut sheet: Sheet<'_>, rows: Rows<'_>) -> Svg {
     let beside = sheet.width >= BESIDE_FROM;
     let values = widest(&mut rows.bars.iter().map(|b| rows.written(b)));
     let names = widest(&mut rows.bars.iter().map(|b| text::plain(b.name))).min(0.3 * sheet.width);
-    let shape = 1.4 * font;
+    let shaped = rows.bars.iter().any(|b| b.role != Role::Other);
+    let shape = if shaped { 1.4 * font } else { 0.0 };
     let (left, right) = match beside {
         true => {
             let left = MARGIN + shape + names + font;
