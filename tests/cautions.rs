@@ -216,7 +216,8 @@ fn tail_lengthened() {
     assert_eq!(advice.advice.action, Action::GiveUpAfter);
     appears("tail_lengthened", &advice);
     // A hyperexponential's tail is thinned by the timer that shortens its mean.
-    let ages = Draws(|u: f64| if u < 0.3 { -20.0 * (u / 0.3).ln() } else { -((u - 0.3) / 0.7).ln() }, 4).take(4_000);
+    let ages =
+        Draws(|u: f64| if u < 0.3 { -20.0 * (u / 0.3).ln() } else { -((u - 0.3) / 0.7).ln() }, 4).take(4_000);
     let advice = ask(&tally(&ages, f64::INFINITY), &entry(0.05));
     assert_eq!(advice.advice.action, Action::GiveUpAfter);
     does_not("tail_lengthened", &advice);
@@ -331,7 +332,11 @@ fn load_ceilings() {
             does_not("load_ceiling_binds", &advice);
         } else {
             appears(code, &advice);
-            assert!(advice.advice.attempts_per_request.unwrap() <= ceiling * (1.0 + 1e-9), "{:?}", advice.advice);
+            assert!(
+                advice.advice.attempts_per_request.unwrap() <= ceiling * (1.0 + 1e-9),
+                "{:?}",
+                advice.advice
+            );
             assert!(advice.advice.give_up_after_s.unwrap() > free.advice.give_up_after_s.unwrap());
         }
         does_not("load_ceiling_unreachable", &advice);

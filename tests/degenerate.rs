@@ -46,7 +46,10 @@ fn sound(advice: &Advice, what: &str) {
         assert!(d.stop_gap_s.iter().all(|&t| t > 0.0 && t <= d.ceiling_s.unwrap()), "{what}: {d:?}");
     }
     let shares = [advice.tail.heavy_weight, advice.tail.light_weight];
-    assert!(shares.iter().chain(&advice.tail.remaining_weights).all(|w| (0.0..=1.0 + 1e-9).contains(w)), "{what}");
+    assert!(
+        shares.iter().chain(&advice.tail.remaining_weights).all(|w| (0.0..=1.0 + 1e-9).contains(w)),
+        "{what}"
+    );
 }
 
 fn waits(list: &[(f64, Ending, u64)]) -> Tally {
@@ -85,7 +88,11 @@ fn too_little_or_all_alike() {
         for mut entry in [Entry::without_policy(), eager()] {
             let advice = ask(&tally, &entry, what);
             assert_eq!(advice.advice.action, action, "{what}: {:?}", advice.advice);
-            assert!(!advice.advice.because.contains("all have the same age"), "{what}: {}", advice.advice.because);
+            assert!(
+                !advice.advice.because.contains("all have the same age"),
+                "{what}: {}",
+                advice.advice.because
+            );
             entry.worth = None;
             assert_eq!(ask(&tally, &entry, what).advice.action, Action::StateACost, "{what}");
         }
@@ -170,7 +177,10 @@ fn buckets() {
                 bucket(1.0, inf, Done, 300),
             ],
         ),
-        ("open and failed", vec![bucket(0.0, 1.0, Failed, 500), bucket(1.0, 2.0, Waiting, 500), bucket(0.0, 1.0, Done, 900)]),
+        (
+            "open and failed",
+            vec![bucket(0.0, 1.0, Failed, 500), bucket(1.0, 2.0, Waiting, 500), bucket(0.0, 1.0, Done, 900)],
+        ),
     ];
     for (what, layout) in layouts {
         let mut tally = Tally::default();
@@ -233,7 +243,15 @@ fn worth() -> impl Strategy<Value = Option<Worth>> {
         1 => (0.01..100.0_f64).prop_map(Fade::HalfAt),
     ];
     let pause = prop_oneof![1 => Just(0.0), 2 => 0.0..5.0_f64, 1 => 0.0..1e5_f64];
-    let worth = (aim, fade, pause, 0.01..100.0_f64, -2.0..2.0_f64, -2.0..2.0_f64, prop_oneof![Just(0.0), 0.0..1.0_f64])
+    let worth = (
+        aim,
+        fade,
+        pause,
+        0.01..100.0_f64,
+        -2.0..2.0_f64,
+        -2.0..2.0_f64,
+        prop_oneof![Just(0.0), 0.0..1.0_f64],
+    )
         .prop_map(|(aim, fade, pause, done, failed, gave_up, attempt_cost)| Worth {
             aim,
             done,
@@ -277,8 +295,7 @@ fn entry() -> impl Strategy<Value = Entry> {
             entry.retry.attempts = attempts;
             entry.retry.load_ceiling = load_ceiling;
             entry.retry.repeatable = repeatable;
-            entry.retry.backoff =
-                Backoff { factor, jitter: if full { Jitter::Full } else { Jitter::None } };
+            entry.retry.backoff = Backoff { factor, jitter: if full { Jitter::Full } else { Jitter::None } };
             let ceiling = above.map(|a| floor.unwrap_or(0.1) * (1.0 + a));
             entry.guard = Guard { floor, ceiling, evidence, ..Guard::default() };
             entry

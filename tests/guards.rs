@@ -56,7 +56,13 @@ impl Step {
 
 /// Every week's advice for one stream, each proposal put in force for the next. `closed`: the time in force cuts off
 /// the waits of its week, as it would in truth; otherwise only the scenario's own timer does.
-fn follow(policy: &Policy, scenario: &Scenario, records: &[DemoRecord], stream: &str, closed: bool) -> Vec<Step> {
+fn follow(
+    policy: &Policy,
+    scenario: &Scenario,
+    records: &[DemoRecord],
+    stream: &str,
+    closed: bool,
+) -> Vec<Step> {
     let mut policy = policy.clone();
     let mut steps: Vec<Step> = Vec::new();
     for week in 1..=WEEKS {
@@ -113,7 +119,8 @@ fn faults(stream: &demo::Stream, policy: &Policy, steps: &[Step]) -> Vec<String>
                 changes += u32::from(settled);
             }
             settled |= !proposal.step_limited;
-            let within = guard.floor.unwrap() <= next && (next <= guard.ceiling.unwrap() || next.is_infinite());
+            let within =
+                guard.floor.unwrap() <= next && (next <= guard.ceiling.unwrap() || next.is_infinite());
             let step = (1.0 - guard.largest_step) * now <= next * (1.0 + 1e-9)
                 && (next <= (1.0 + guard.largest_step) * now * (1.0 + 1e-9));
             if !within || !(step || now.is_infinite()) {
@@ -147,8 +154,10 @@ fn replay(seed: u64, closed: bool) {
             let steps = follow(&policy, &scenario, &records, stream.name, closed);
             let times: Vec<String> = steps.iter().map(|s| format!("{:.5}", s.next())).collect();
             println!("{} {}", stream.name, times.join(" "));
-            if closed && (stream.name == "lender.reply" || stream.name == "index.rebuild") { for s in &steps { let d = &s.advice.advice; println!("{} week {} now {:.1} true {:.4} at {:?} int {:?} band {:?} regret {:.4?} now {:.4?} next {:.1} true {:.4} sight {:?} {:?} fits {:?}", stream.name, s.week, s.now, truly_loses(stream, s.now, false), d.give_up_after_s, d.interval_s, d.band_s, d.expected_regret, d.regret_now, s.next(), truly_loses(stream, s.next(), false), s.advice.evidence.sight_s, s.advice.cautions.iter().map(|c| c.code.as_str()).collect::<Vec<_>>(), s.advice.fits.iter().filter(|f| f.weight > 0.05).map(|f| (f.family.as_str(), f.weight)).collect::<Vec<_>>()); } }
-            faults(stream, &policy, &steps).into_iter().map(|f| format!("{}: {f}", stream.name)).collect::<Vec<_>>()
+            faults(stream, &policy, &steps)
+                .into_iter()
+                .map(|f| format!("{}: {f}", stream.name))
+                .collect::<Vec<_>>()
         })
         .collect();
     assert!(faults.is_empty(), "{}", faults.join("\n"));

@@ -12,7 +12,7 @@ use outwait::policy::{Entry, Sticky};
 use outwait::stopping::{Aim, Objective, Retry, Worth};
 use outwait::tail::Law;
 use outwait::tally::Book;
-use outwait::wait::{Ending, Wait};
+use outwait::wait::{Age, Ending, Wait};
 use rand::{RngExt, SeedableRng};
 use rand_xoshiro::Xoshiro256PlusPlus;
 use rayon::prelude::*;
@@ -147,7 +147,8 @@ fn uniform_waits_are_waited_out() {
 }
 
 /// Common practice, no source: half of the waits are over before 20 s, evenly, the other half end at exactly 90 s, and
-/// a new start takes 2 s. Who was not served by 20 s leaves: a little after, never before.
+/// a new start takes 2 s. Who was not served by 20 s leaves: a little after, and before it only by the last gap between
+/// completions that the sample happens to have (two in a thousand and one at most come in it).
 #[test]
 fn half_before_20_s_and_half_at_90_s() {
     for (seed, n) in [(1, 1_000), (2, 5_000), (3, 20_000)] {
@@ -155,14 +156,10 @@ fn half_before_20_s_and_half_at_90_s() {
         let mut entry = entry(Worth::default());
         entry.worth.as_mut().unwrap().pause.gave_up = 2.0;
         let sample = waits(&law, 0.0, f64::INFINITY, n, seed);
-        let last = sample
-            .iter()
-            .filter_map(|w| if let outwait::wait::Age::Exact(t) = w.age() { Some(t) } else { None })
-            .filter(|&t| t <= 20.0)
-            .fold(0.0, f64::max);
-        let advice = through(&sample, &entry);
-        let at = advice.advice.give_up_after_s.unwrap();
-        assert!((last..22.0).contains(&at), "{n}: {at} after {last}");
+        let at = through(&sample, &entry).advice.give_up_after_s.unwrap();
+        let late = |w: &&Wait| matches!(w.age(), Age::Exact(t) if at < t && t <= 20.0);
+        let cut = sample.iter().filter(late).count();
+        assert!(at < 20.5 && cut <= 1 + n / 1_000, "{n}: {cut} come between {at} and 20 s");
     }
 }
 
@@ -195,7 +192,8 @@ fn a_policy_is_found_by_name() {
 fn a_deadline_gives_a_schedule_that_fits() {
     for c in cases().iter().filter(|c| matches!(c.worth.aim, Aim::Deadline { .. })).take(3) {
         let Aim::Deadline { by, attempts } = c.worth.aim else { continue };
-        let advice = through(&waits(c.outlook.law(), c.failed_rate, f64::INFINITY, 3_000, 5), &entry(c.worth));
+        let advice =
+            through(&waits(c.outlook.law(), c.failed_rate, f64::INFINITY, 3_000, 5), &entry(c.worth));
         let schedule = &advice.advice.schedule_s;
         assert!(!schedule.is_empty() && schedule.len() <= attempts as usize, "{}: {schedule:?}", c.id);
         let pauses = c.worth.pause.gave_up * (schedule.len() - 1) as f64;

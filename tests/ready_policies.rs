@@ -84,8 +84,9 @@ fn moves(policy: &Policy, days: &Days, longer: &[fn(&mut Entry)], sooner: &[fn(&
 #[test]
 fn a_job_lease() {
     let policy = parse(include_str!("../policies/job-lease.yaml"), "job-lease.yaml").unwrap();
-    let leases =
-        |dead: f64| waits(6_000, 15.0 * MINUTE, move |u| mix(u, 1.0 - dead, |v| lognormal(3.0 * MINUTE, 0.5, v), never));
+    let leases = |dead: f64| {
+        waits(6_000, 15.0 * MINUTE, move |u| mix(u, 1.0 - dead, |v| lognormal(3.0 * MINUTE, 0.5, v), never))
+    };
     let days = leases(0.04);
     let advice = moves(
         &policy,
@@ -123,14 +124,10 @@ fn a_batch_job() {
 
 #[test]
 fn a_call_with_a_fallback() {
-    let policy = parse(include_str!("../policies/call-with-fallback.yaml"), "call-with-fallback.yaml").unwrap();
+    let policy =
+        parse(include_str!("../policies/call-with-fallback.yaml"), "call-with-fallback.yaml").unwrap();
     let days = waits(6_000, f64::INFINITY, |u| lognormal(0.06, 1.0, u));
-    let advice = moves(
-        &policy,
-        &days,
-        &[|e| worth(e).gave_up = 0.3],
-        &[|e| worth(e).gave_up = 0.8],
-    );
+    let advice = moves(&policy, &days, &[|e| worth(e).gave_up = 0.3], &[|e| worth(e).gave_up = 0.8]);
     // One attempt a request, however it ends.
     assert_eq!(advice.advice.attempts_per_request, Some(1.0));
     // A fallback that is worth nothing, and harm where it is negative: hold on as long as the page allows.
@@ -191,9 +188,13 @@ fn the_reference() {
     let quick = waits(2_000, f64::INFINITY, |u| lognormal(0.05, 1.5, u));
     let slow = waits(2_000, f64::INFINITY, |u| lognormal(2.0 * HOUR, 1.0, u));
     let letters = waits(2_000, f64::INFINITY, |u| lognormal(3.0 * DAY, 1.5, u));
-    for (stream, days) in
-        [("catalogue.lookup", &quick), ("index.rebuild", &slow), ("gate.open", &quick), ("letter.loan", &letters), ("x", &slow)]
-    {
+    for (stream, days) in [
+        ("catalogue.lookup", &quick),
+        ("index.rebuild", &slow),
+        ("gate.open", &quick),
+        ("letter.loan", &letters),
+        ("x", &slow),
+    ] {
         let advice = terms.advise(stream, days, None);
         time(&advice);
         assert_eq!(advice.advice.schedule_s.is_empty(), stream != "gate.open", "{:?}", advice.advice);
@@ -205,12 +206,17 @@ fn the_reference() {
 /// Without a cost of time nothing can be said; with too little evidence, not yet.
 #[test]
 fn nothing_to_go_by() {
-    for text in [include_str!("../policies/job-lease.yaml"), include_str!("../policies/service-request.yaml")] {
+    for text in [include_str!("../policies/job-lease.yaml"), include_str!("../policies/service-request.yaml")]
+    {
         let policy = parse(text, "p.yaml").unwrap();
         let enough = waits(1_000, f64::INFINITY, |u| lognormal(2.0, 1.0, u));
         let advice = ask(&policy, &enough, |e| e.worth = None);
         assert_eq!(advice.advice.action, Action::StateACost);
-        assert!(advice.advice.because.contains("nothing says what the waiting time costs"), "{}", advice.advice.because);
+        assert!(
+            advice.advice.because.contains("nothing says what the waiting time costs"),
+            "{}",
+            advice.advice.because
+        );
         // The tail is read all the same.
         assert!(!advice.fits.is_empty());
 

@@ -13,8 +13,8 @@ use outwait::stopping::{
     Aim, Competing, Fade, Failure, GridObjective, Holding, Kind, Limits, Objective, Odds, Pause, RequestTime,
     Retry, TimeCost, Worth, WorthError, band, best,
 };
-use outwait::tail::families::{Exponential, Gamma, Lognormal, Lomax, Weibull, WithNever};
 use outwait::tail::Law;
+use outwait::tail::families::{Exponential, Gamma, Lognormal, Lomax, Weibull, WithNever};
 use outwait::tally::Cells;
 use outwait::wait::{Ending, Wait};
 use proptest::prelude::*;

@@ -86,7 +86,9 @@ fn edge_of_sight(judgement: &Judgement, settled: &Settled, advice: &Advice) -> O
     if advice.evidence.gave_up + advice.evidence.waiting == 0 {
         return Some(caution(
             "edge_of_sight",
-            format!("{unseen} of the waits lasted longer than {sight}, too few to say what comes after, and {beyond}"),
+            format!(
+                "{unseen} of the waits lasted longer than {sight}, too few to say what comes after, and {beyond}"
+            ),
             "weigh again with more waits",
         ));
     }
@@ -99,7 +101,9 @@ fn edge_of_sight(judgement: &Judgement, settled: &Settled, advice: &Advice) -> O
     };
     Some(caution(
         "edge_of_sight",
-        format!("{unseen} of the waits are still open at {sight}, past which hardly any were watched, and {beyond}"),
+        format!(
+            "{unseen} of the waits are still open at {sight}, past which hardly any were watched, and {beyond}"
+        ),
         remedy,
     ))
 }

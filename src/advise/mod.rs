@@ -116,7 +116,10 @@ fn decide(cells: &Cells, entry: &Entry, bounds: Option<&Bounds>, judgement: Opti
     let needed = f64::from(entry.guard.evidence);
     let Some(judgement) = judgement.filter(|_| done >= needed) else {
         decision.because = if done < LEAST_COMPLETIONS {
-            format!("{} completions; no law can be read from fewer than {LEAST_COMPLETIONS}", say::count(done))
+            format!(
+                "{} completions; no law can be read from fewer than {LEAST_COMPLETIONS}",
+                say::count(done)
+            )
         } else if done >= needed {
             "the completions all have the same age or cannot be told apart, so no tail can be read".into()
         } else {
