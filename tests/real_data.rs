@@ -14,7 +14,7 @@ use outwait::intake::{self, Allowed, IntakeError, Measure, Options, Record, Repo
 use outwait::policy::Entry;
 use outwait::tally::{Book, Cells};
 
-#[derive(Default)]
+#[derive(Debug, Default)]
 struct Counting(Book);
 
 impl Sink for Counting {
