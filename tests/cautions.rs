@@ -1,5 +1,8 @@
 //! Every caution has a scene in which it appears and one, as near as can be, in which it does not.
 
+// A test may fail.
+#![allow(clippy::unwrap_used, clippy::panic)]
+
 use outwait::advice::{Action, Advice, Caution};
 use outwait::advise::{Case, Terms, advise};
 use outwait::policy::{Entry, GiveUp, Kind, Sticky, parse};

@@ -1,5 +1,8 @@
 //! Whatever is counted, an advice is a clear action with its reason, in numbers that are numbers, and never a panic.
 
+// A test may fail.
+#![allow(clippy::unwrap_used, clippy::panic)]
+
 use outwait::advice::{Action, Advice};
 use outwait::advise::{Case, advise};
 use outwait::policy::{Backoff, Entry, GiveUp, Guard, Jitter, Sticky};

@@ -1,6 +1,9 @@
 //! Week by week through twelve weeks of the demo scenario: the time in force follows the proposals, does not flap, keeps to
 //! its guards, and follows a shift of the law.
 
+// A test may fail.
+#![allow(clippy::unwrap_used, clippy::panic)]
+
 use outwait::advice::{Advice, Change};
 use outwait::advise::Terms;
 use outwait::demo::{self, DemoRecord, Scenario};

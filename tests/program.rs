@@ -3,6 +3,9 @@
 //! The optima are those of `tests/reference/stopping.json`, computed with 40 digits (mpmath) apart from this program;
 //! what an advised time is truly worth is read off the true law, not off the sample.
 
+// A test may fail.
+#![allow(clippy::unwrap_used, clippy::panic)]
+
 #[path = "support/truth_table.rs"]
 mod truth_table;
 

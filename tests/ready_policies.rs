@@ -1,6 +1,9 @@
 //! Every policy file that is shipped, on waits of the kind it is meant for: the advice is of use, keeps to the guards, and
 //! moves the right way when a price changes.
 
+// A test may fail.
+#![allow(clippy::unwrap_used, clippy::panic)]
+
 use outwait::advice::{Action, Advice};
 use outwait::advise::Terms;
 use outwait::policy::{Entry, Policy, parse};
