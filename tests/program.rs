@@ -112,12 +112,10 @@ fn samples_in_advice_out() {
             }
             let rate = decision.rate_per_s.unwrap_or(f64::NAN);
             let off = (rate - best).abs() / best.abs();
-            let off = (rate - best).abs() / best.abs();
             // Where the best comes early, few completions speak for it, and the best of many such rates looks better than
             // it is: three standard errors of their number.
             let completions = WAITS as f64 * decision.done_share.unwrap_or(0.0);
-            // NaN is a gap too.
-            if !(off <= f64::max(0.03, 3.0 / completions.sqrt())) {
+            if off.is_nan() || off > f64::max(0.03, 3.0 / completions.sqrt()) {
                 gaps.push(format!("earns {rate} for {best}"));
             }
             println!(
