@@ -1,6 +1,7 @@
 //! Every caution has a scene in which it appears and one, as near as can be, in which it does not.
 
-#![allow(clippy::unwrap_used, clippy::panic)] // a test may fail
+// A test may fail.
+#![allow(clippy::unwrap_used, clippy::panic)]
 
 use outwait::advice::{Action, Advice, Caution};
 use outwait::advise::{Case, Terms, advise};

@@ -1,6 +1,7 @@
 //! Whatever is counted, an advice is a clear action with its reason, in numbers that are numbers, and never a panic.
 
-#![allow(clippy::unwrap_used, clippy::panic)] // a test may fail
+// A test may fail.
+#![allow(clippy::unwrap_used, clippy::panic)]
 
 use outwait::advice::{Action, Advice};
 use outwait::advise::{Case, advise};

@@ -3,7 +3,8 @@
 //! The optima are those of `tests/reference/stopping.json`, computed with 40 digits (mpmath) apart from this program;
 //! what an advised time is truly worth is read off the true law, not off the sample.
 
-#![allow(clippy::unwrap_used, clippy::panic)] // a test may fail
+// A test may fail.
+#![allow(clippy::unwrap_used, clippy::panic)]
 
 #[path = "support/truth_table.rs"]
 mod truth_table;
@@ -14,7 +15,7 @@ use outwait::policy::{Entry, Sticky};
 use outwait::stopping::{Aim, Objective, Retry, Worth};
 use outwait::tail::Law;
 use outwait::tally::Book;
-use outwait::wait::{Ending, Wait};
+use outwait::wait::{Age, Ending, Wait};
 use rand::{RngExt, SeedableRng};
 use rand_xoshiro::Xoshiro256PlusPlus;
 use rayon::prelude::*;
@@ -111,12 +112,10 @@ fn samples_in_advice_out() {
             }
             let rate = decision.rate_per_s.unwrap_or(f64::NAN);
             let off = (rate - best).abs() / best.abs();
-            let off = (rate - best).abs() / best.abs();
             // Where the best comes early, few completions speak for it, and the best of many such rates looks better than
             // it is: three standard errors of their number.
             let completions = WAITS as f64 * decision.done_share.unwrap_or(0.0);
-            // NaN is a gap too.
-            if !(off <= f64::max(0.03, 3.0 / completions.sqrt())) {
+            if off.is_nan() || off > f64::max(0.03, 3.0 / completions.sqrt()) {
                 gaps.push(format!("earns {rate} for {best}"));
             }
             println!(
@@ -149,7 +148,8 @@ fn uniform_waits_are_waited_out() {
 }
 
 /// Common practice, no source: half of the waits are over before 20 s, evenly, the other half end at exactly 90 s, and
-/// a new start takes 2 s. Who was not served by 20 s leaves: a little after, never before.
+/// a new start takes 2 s. Who was not served by 20 s leaves: a little after, and before it only by the last gap between
+/// completions that the sample happens to have (two in a thousand and one at most come in it).
 #[test]
 fn half_before_20_s_and_half_at_90_s() {
     for (seed, n) in [(1, 1_000), (2, 5_000), (3, 20_000)] {
@@ -157,14 +157,10 @@ fn half_before_20_s_and_half_at_90_s() {
         let mut entry = entry(Worth::default());
         entry.worth.as_mut().unwrap().pause.gave_up = 2.0;
         let sample = waits(&law, 0.0, f64::INFINITY, n, seed);
-        let last = sample
-            .iter()
-            .filter_map(|w| if let outwait::wait::Age::Exact(t) = w.age() { Some(t) } else { None })
-            .filter(|&t| t <= 20.0)
-            .fold(0.0, f64::max);
-        let advice = through(&sample, &entry);
-        let at = advice.advice.give_up_after_s.unwrap();
-        assert!((last..22.0).contains(&at), "{n}: {at} after {last}");
+        let at = through(&sample, &entry).advice.give_up_after_s.unwrap();
+        let late = |w: &&Wait| matches!(w.age(), Age::Exact(t) if at < t && t <= 20.0);
+        let cut = sample.iter().filter(late).count();
+        assert!(at < 20.5 && cut <= 1 + n / 1_000, "{n}: {cut} come between {at} and 20 s");
     }
 }
 

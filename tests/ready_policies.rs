@@ -1,7 +1,8 @@
 //! Every policy file that is shipped, on waits of the kind it is meant for: the advice is of use, keeps to the guards, and
 //! moves the right way when a price changes.
 
-#![allow(clippy::unwrap_used, clippy::panic)] // a test may fail
+// A test may fail.
+#![allow(clippy::unwrap_used, clippy::panic)]
 
 use outwait::advice::{Action, Advice};
 use outwait::advise::Terms;

@@ -554,18 +554,22 @@ impl Settled {
         d.schedule_s.clone_from(&self.schedule);
     }
 
-    /// The next change of the time in force: none below the slack, none beyond the largest step, and none past the edge of
-    /// sight while the curves disagree on which side of it the best time lies. Such a change would be undone by the next
-    /// week's data as often as not; a look at a share of the waits tells before all are changed.
+    /// The next change of the time in force: none below the slack (twice that where it goes past the edge of sight), none
+    /// beyond the largest step, and none past the edge while the curves disagree on which side of it the best time lies.
+    /// Such a change would be undone by the next week's data as often as not; a look at a share of the waits tells before
+    /// all are changed.
     fn proposal(&self, entry: &Entry, sight: f64) -> Option<Proposal> {
         let (now, regret) = self.now?;
         let keep = Proposal { change: Change::Keep, to_s: finite(now.seconds()), step_limited: false };
-        if regret.expected - self.regret.expected <= entry.guard.slack {
+        let now = now.seconds();
+        // What no wait has shown must promise twice as much.
+        let unseen = self.at > sight && now < self.at;
+        let needed = entry.guard.slack * if unseen { 2.0 } else { 1.0 };
+        if regret.expected - self.regret.expected <= needed {
             return Some(keep);
         }
-        let now = now.seconds();
         let goal = match self.wait_it_out {
-            _ if self.at > sight && now < self.at && self.sides.disagree() => now.max(sight),
+            _ if unseen && self.sides.disagree() => now.max(sight),
             true => f64::INFINITY,
             false => self.at,
         };
