@@ -157,8 +157,8 @@ fn many_streams(criterion: &mut Criterion) {
     let newest = streams.iter().filter_map(|(_, days)| days.last_day()).max();
     let terms = Terms { policy: None, newest, seed: 1 };
     let start = Instant::now();
-    let advised: Vec<_> = pool
-        .install(|| streams.par_iter().map(|(name, days)| terms.advise(name, days, None)).collect());
+    let advised: Vec<_> =
+        pool.install(|| streams.par_iter().map(|(name, days)| terms.advise(name, days, None)).collect());
     let set = terms.set(advised, None);
     let seconds = start.elapsed().as_secs_f64();
     let all = seconds * STREAMS as f64 / some.max(1) as f64;

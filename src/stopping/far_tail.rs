@@ -108,8 +108,7 @@ pub fn decay(outlook: &dyn Outlook, worth: &Worth, retry: &Retry, give_up_after:
     // det(1 - M(θ)) of the two states; above 0 below the critical θ, and below 0 just after it.
     let surplus = |theta: f64| {
         let stay = (theta * give_up_after).exp() * paused(theta, pause);
-        let fail =
-            if odds.failed > 0.0 { failures.moment(theta) * paused(theta, pause_failed) } else { 0.0 };
+        let fail = if odds.failed > 0.0 { failures.moment(theta) * paused(theta, pause_failed) } else { 0.0 };
         let leave = odds.gave_up * stay;
         (1.0 - fail) * (1.0 - phi * stay - (1.0 - phi) * leave) - leave * (1.0 - phi) * fail
     };
@@ -144,8 +143,11 @@ impl<'a> Failures<'a> {
     fn upto(outlook: &'a dyn Outlook, upto: f64) -> Failures<'a> {
         let steps = outlook.hazards(0.5 * upto).is_none();
         let knots = outlook.knots();
-        let ends: Vec<f64> = knots[..knots.partition_point(|&u| u < upto)].iter().copied().chain([upto]).collect();
-        let close = |ends: &[f64]| ends[0] <= STRETCH * upto && ends.windows(2).all(|w| w[1] - w[0] <= STRETCH * upto);
+        let ends: Vec<f64> =
+            knots[..knots.partition_point(|&u| u < upto)].iter().copied().chain([upto]).collect();
+        let close = |ends: &[f64]| {
+            ends[0] <= STRETCH * upto && ends.windows(2).all(|w| w[1] - w[0] <= STRETCH * upto)
+        };
         if !steps && !close(&ends) {
             return Failures::Density(outlook, upto);
         }
