@@ -1,7 +1,7 @@
 //! Optimal give-up times against a truth table computed with 40 digits (`tests/reference/stopping.json`, made by
 //! `make_stopping.py` beside it with mpmath, our own computation), and the identities of METHODS.md section 5.
 
-// A test may fail.
+// What the scene needs is there, or the test stops.
 #![allow(clippy::unwrap_used)]
 
 #[path = "support/truth_table.rs"]
@@ -13,8 +13,8 @@ use outwait::curve::Empirical;
 use outwait::outlook::Outlook;
 use outwait::outlook::{Grid, Sampled};
 use outwait::stopping::{
-    Aim, Competing, Fade, Failure, GridObjective, Holding, Kind, Limits, Objective, Odds, Pause, RequestTime,
-    Retry, TimeCost, Worth, WorthError, band, best,
+    Aim, Competing, Fade, Failure, FarTail, GridObjective, Holding, Kind, Limits, Objective, Odds, Pause,
+    RequestTime, Retry, SecondCopy, TailEffect, TimeCost, Worth, WorthError, band, best, copy_or_retry,
 };
 use outwait::tail::Law;
 use outwait::tail::families::{Exponential, Gamma, Lognormal, Lomax, Weibull, WithNever};
@@ -641,4 +641,58 @@ fn an_exponential_hangs_on_nothing() {
     for q in [0.01_f64, 0.5, 0.99, 0.9999] {
         assert!((total.quantile(q) / (-2.0 * (-q).ln_1p()) - 1.0).abs() < 1e-10, "{q}");
     }
+}
+
+/// A timer can shorten the mean and yet make very long totals more frequent, and the reverse (Eliazar & Reuveni 2021).
+#[test]
+fn mean_and_far_tail_can_part() {
+    let pause = |d: f64| Worth { pause: Pause { gave_up: d, ..Pause::default() }, ..Worth::default() };
+    let tail = |outlook: &Competing, worth: &Worth, t: f64, ceiling: f64| {
+        FarTail::new(outlook, worth, &Retry::default(), t, ceiling, outlook.final_hazard())
+    };
+    // Half at exactly 90 s: never longer without a timer, without bound with one.
+    let bounded = HalfUniform { share: 0.5, high: 20.0, at: 90.0 };
+    let bounded =
+        Competing::new(Arc::new(bounded) as Arc<dyn Law>, Failure::Never).with_knots(vec![20.0, 90.0]);
+    let found = tail(&bounded, &pause(2.0), 20.0, 90.0);
+    assert!(found.shorter_but_longer_tailed(), "{found:?}");
+    // (15 + 2/2)/0.5 against 0.5*10 + 0.5*90; H/(τ+d) = ln 2/22.
+    assert!((found.mean - 32.0).abs() < 1e-9 && (found.mean_never - 50.0).abs() < 1e-9);
+    assert!((found.decay - std::f64::consts::LN_2 / 22.0).abs() < 1e-12);
+    // A heavy law is thinned by any timer.
+    let heavy = Competing::new(law(&Lomax, &[1.5, 2.0]), Failure::Never);
+    assert_eq!(tail(&heavy, &pause(0.5), 1.9, 1e9).effect, TailEffect::Thinned);
+    // Memoryless: the same without a pause, longer with one.
+    let flat = Competing::new(law(&Exponential, &[2.0]), Failure::Never);
+    assert_eq!(tail(&flat, &pause(0.0), 0.7, 1e3).effect, TailEffect::Same);
+    assert_eq!(tail(&flat, &pause(0.1), 0.7, 1e3).effect, TailEffect::Lengthened);
+    // With failures that cost nothing the chain of attempts only stretches the completions: two exponentials.
+    let failing = Competing::new(law(&Exponential, &[2.0]), Failure::Rate(0.5));
+    let found = tail(&failing, &pause(0.0), 0.7, 1e3);
+    assert!((found.decay - 2.0).abs() < 1e-5 && (found.mean - 0.5).abs() < 1e-9, "{found:?}");
+}
+
+/// The copy at the 95th percentile adds 5% (Dean & Barroso 2013), and beats the retry that adds as much.
+#[test]
+fn a_second_copy_beside_a_retry() {
+    let outlook = Competing::new(law(&Lognormal, &[-3.0, 1.2]), Failure::Never);
+    let worth = Worth { pause: Pause { gave_up: 0.01, ..Pause::default() }, ..Worth::default() };
+    let once = Retry { attempts: Some(2), ..Retry::default() };
+    let found = copy_or_retry(&outlook, &worth, &once, 0.05, 1e-3, 100.0).unwrap();
+    let p95 = outlook.law().quantile(0.95);
+    assert!((found.start / p95 - 1.0).abs() < 1e-9 && (found.extra_load - 0.05).abs() < 1e-12);
+    // With one retry the same share is tried again, at the same age.
+    assert!((found.retry_after.unwrap() / p95 - 1.0).abs() < 1e-6);
+    let retry = found.retry.unwrap();
+    assert!((found.copy.p50 / retry.p50 - 1.0).abs() < 1e-9);
+    assert!(found.copy.p99 < retry.p99 && found.copy.p999 < retry.p999, "{found:?}");
+    // S_2(t) = S(t) S(t-h).
+    let copy = SecondCopy::new(&outlook, found.start);
+    let s = |t: f64| outlook.survival(t);
+    assert!((copy.not_done(0.9) / (s(0.9) * s(0.9 - found.start)) - 1.0).abs() < 1e-12);
+    assert!((copy.not_done(found.copy.p999) - 0.001).abs() < 1e-12);
+    // An earlier copy shortens every quantile and costs more.
+    let sooner = SecondCopy::within_load(&outlook, 0.2, 100.0).unwrap();
+    assert!(sooner.start() < found.start && sooner.points(100.0).p99 < found.copy.p99);
+    assert!(SecondCopy::within_load(&outlook, 0.05, 0.1).is_none());
 }

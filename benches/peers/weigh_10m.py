@@ -94,7 +94,7 @@ def main():
         "outwait weigh, whole process": [args.outwait, "weigh", "--format", "json", path],
         "DuckDB, five quantiles a stream": peer(""),
         # The quantiles need two of the four fields; this reads them all, as we must.
-        "DuckDB, and endings and times": peer(", count_if(ending = 'done'), min(at), max(at)"),
+        "DuckDB, and endings and times": peer(", count_if(ending = 'done'), min(\"at\"), max(\"at\")"),
     }
     found = {name: [] for name in sides}
     for _ in range(args.runs):
