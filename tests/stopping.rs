@@ -13,8 +13,9 @@ use outwait::curve::Empirical;
 use outwait::outlook::Outlook;
 use outwait::outlook::{Grid, Sampled};
 use outwait::stopping::{
-    Aim, Competing, Fade, Failure, FarTail, GridObjective, Holding, Kind, Limits, Objective, Odds, Pause,
-    RequestTime, Retry, SecondCopy, TailEffect, TimeCost, Worth, WorthError, band, best, copy_or_retry,
+    Aim, Competing, Fade, Failure, FarTail, GridObjective, Holding, Kind, Limits, Look, Objective, Odds,
+    Pause, RequestTime, Retry, SecondCopy, TailEffect, TimeCost, Worth, WorthError, band, best,
+    copy_or_retry, flips_at,
 };
 use outwait::tail::Law;
 use outwait::tail::families::{Exponential, Gamma, Lognormal, Lomax, Weibull, WithNever};
@@ -344,6 +345,7 @@ proptest! {
         gave_up in -100.0..100.0_f64, cost in 0.0..10.0_f64, pause in prop_oneof![Just(0.0), 0.0..1e4_f64],
         sticky in prop_oneof![Just(0.0), 0.0..0.999_f64], floor in prop_oneof![Just(0.0), 1e-9..1.0_f64],
         aim in 0..4, growth in prop_oneof![Just(1.0), 1.0..50.0_f64], cap in prop_oneof![Just(None), (1_u32..9).prop_map(Some)],
+        jitter in any::<bool>(),
     ) {
         let law = law(&WithNever(Lognormal), &[0.0, sigma, never.max(1e-5)]);
         let outlook = Competing::new(law, Failure::Rate(failed));
@@ -358,8 +360,10 @@ proptest! {
             pause: Pause { done: pause, failed: pause, gave_up: pause },
             ..Worth::default()
         };
-        let retry = Retry { attempts: cap, growth, longest_pause: f64::INFINITY, jitter: false };
-        let Ok(objective) = Objective::new(&outlook, &worth, &retry, Limits::new(floor, 1e3).unwrap()) else {
+        let longest_pause = if jitter { 1e3 } else { f64::INFINITY };
+        let retry = Retry { attempts: cap, growth, longest_pause, jitter };
+        let limits = Limits::new(floor, 1e3).unwrap();
+        let Ok(objective) = Objective::new(&outlook, &worth, &retry, limits) else {
             return Ok(());
         };
         for t in [0.0, 1e-12, 0.5, 3.0, 1e3, 1e9, f64::INFINITY] {
@@ -375,6 +379,18 @@ proptest! {
             }
             let total = RequestTime::new(&outlook, &worth, &retry, found.at);
             prop_assert!(total.quantile(0.5) <= total.quantile(0.99), "{} {}", total.quantile(0.5), total.quantile(0.99));
+            let tail = FarTail::new(&outlook, &worth, &retry, found.at, 1e3, outlook.final_hazard());
+            prop_assert!(!(tail.decay + tail.mean).is_nan() && tail.mean_never > 0.0 && tail.decay >= 0.0, "{tail:?}");
+            if let Some(flip) = flips_at(&outlook, &worth, &retry, limits, found.at).unwrap() {
+                prop_assert!((0.0..1.0).contains(&flip), "{flip}");
+            }
+            if let Some(both) = copy_or_retry(&outlook, &worth, &retry, 0.2, floor.max(1e-6), 1e3) {
+                prop_assert!(both.copy.p50 <= both.copy.p999 && both.extra_load <= 0.2, "{both:?}");
+                prop_assert!(both.retry.is_none_or(|r| r.p50 <= r.p999), "{both:?}");
+            }
+            if let Some(look) = Look::plan(&worth, found.score, &outlook, 0.5, 5.0) {
+                prop_assert!(look.waits >= 1.0 && look.worst_cost_each > 0.0, "{look:?}");
+            }
         }
     }
 }

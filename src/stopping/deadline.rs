@@ -14,13 +14,11 @@
 use super::objective::Limits;
 use super::retry::Retry;
 use super::worth::Worth;
-use crate::numeric::{integrate, root};
+use crate::numeric::root;
 use crate::outlook::Outlook;
 
 /// Steps of the lattice between now and the deadline.
 const STEPS: usize = 1000;
-/// An outlook with more knots is itself a table: adaptive quadrature would chase each of its kinks.
-const FEW_KNOTS: usize = 64;
 
 /// The curves of one wait at the ages of a lattice, from 0 on.
 pub(crate) struct Lattice {
@@ -129,6 +127,8 @@ pub struct Deadline<'a> {
     step: f64,
     smooth: bool,
     lattice: Lattice,
+    /// Shares that fail, two to each step of the lattice; empty where nothing fails or the curve has steps.
+    failures: Vec<(f64, f64)>,
     /// With one attempt left, two, ...
     levels: Vec<Level>,
     schedule: Vec<f64>,
@@ -156,6 +156,11 @@ impl<'a> Deadline<'a> {
             lattice.failed = ages().map(|t| outlook.failed(t)).collect();
         }
         let smooth = (0..16).all(|i| outlook.hazards(by * (f64::from(i) + 0.5) / 16.0).is_some());
+        let failures = if smooth && !lattice.failed.is_empty() {
+            ages().zip(ages().skip(1)).flat_map(|(a, b)| failures(outlook, a, b)).collect()
+        } else {
+            vec![]
+        };
         let mut deadline = Deadline {
             outlook,
             by,
@@ -166,6 +171,7 @@ impl<'a> Deadline<'a> {
             step,
             smooth,
             lattice,
+            failures,
             levels: vec![],
             schedule: vec![],
             probability: 0.0,
@@ -328,30 +334,20 @@ impl<'a> Deadline<'a> {
         if to <= from {
             return 0.0;
         }
-        if self.smooth && k == 1 && self.outlook.knots().len() <= FEW_KNOTS {
-            let density = |u: f64| {
-                let hazard = self.outlook.hazards(u).map_or(0.0, |h| h.1);
-                self.rest(1, left - u - pause, false) * hazard * self.outlook.survival(u)
-            };
-            return integrate(&density, from, to, 1e-11);
-        }
         if self.smooth {
-            // No smoother than the table's cells (or than its own knots), so cell by cell, by the two points of Gauss.
-            let mean = |a: f64, b: f64| {
-                let (middle, reach) = (0.5 * (a + b), 0.5 * (b - a) / 3f64.sqrt());
-                let rest = |u: f64| self.rest(k, left - u - pause, false);
-                0.5 * (rest(middle - reach) + rest(middle + reach))
+            // From the tables even for one attempt: sums of many cells need no more, and a table carries no noise.
+            let table = &self.levels[k - 1].fresh;
+            let rest = |&(u, share): &(f64, f64)| {
+                let left = (left - u - pause) / self.step;
+                if left > 0.0 { share * cubic(table, left).0 } else { 0.0 }
             };
-            let piece = |a: f64, b: f64| (self.outlook.failed(b) - self.outlook.failed(a)) * mean(a, b);
+            let piece = |a: f64, b: f64| failures(self.outlook, a, b).iter().map(rest).sum::<f64>();
             let (first, last) = ((from / self.step).ceil() as usize, (to / self.step).floor() as usize);
             if first > last {
                 return piece(from, to);
             }
-            let at = |i: usize| self.step * i as f64;
-            let failed = &self.lattice.failed;
-            let whole: f64 =
-                (first..last).map(|i| (failed[i + 1] - failed[i]) * mean(at(i), at(i + 1))).sum();
-            return piece(from, at(first)) + whole + piece(at(last), to);
+            let whole: f64 = self.failures[2 * first..2 * last].iter().map(rest).sum();
+            return piece(from, self.step * first as f64) + whole + piece(self.step * last as f64, to);
         }
         let knots = self.outlook.knots();
         let inside = knots.partition_point(|&u| u <= from)..knots.partition_point(|&u| u <= to);
@@ -513,6 +509,17 @@ impl<'a> Deadline<'a> {
             }
         }
     }
+}
+
+/// The failures between two ages as shares at the two points of Gauss and Legendre, in proportion to the density there
+/// and adding up to what fails.
+fn failures(outlook: &dyn Outlook, from: f64, to: f64) -> [(f64, f64); 2] {
+    let (middle, reach) = (0.5 * (from + to), 0.5 * (to - from) / 3f64.sqrt());
+    let share = (outlook.failed(to) - outlook.failed(from)).max(0.0);
+    let density = |u: f64| outlook.hazards(u).map_or(0.0, |h| h.1 * outlook.survival(u));
+    let (early, late) = (density(middle - reach), density(middle + reach));
+    let part = if (early + late).is_normal() { early / (early + late) } else { 0.5 };
+    [(middle - reach, share * part), (middle + reach, share * (1.0 - part))]
 }
 
 /// Value and slope (per step) at `x` steps of the cubic through the four nearest entries, kept between the two

@@ -120,18 +120,18 @@ impl Retry {
             let grows = next_failed > failed_pause || next_gave_up > gave_up_pause;
             if self.attempts.is_none() && (!grows || number > 1000) {
                 // From here every pause has one length: fresh attempts to come are a geometric series.
-                let fresh = if odds.done > 0.0 {
-                    (free + stuck) / odds.done
-                } else {
+                if odds.done < HOPELESS {
+                    let for_ever = |pause: f64| if grows { f64::INFINITY } else { pause };
                     return Request {
                         fresh: f64::INFINITY,
                         doomed: phi / (1.0 - phi),
-                        gave_up_pause: if grows { f64::INFINITY } else { gave_up_pause / (1.0 - phi) },
-                        failed_pause: if grows { f64::INFINITY } else { failed_pause },
+                        gave_up_pause: for_ever(gave_up_pause) / (1.0 - phi),
+                        failed_pause: for_ever(failed_pause),
                         attempts: f64::INFINITY,
                         done: 0.0,
                     };
-                };
+                }
+                let fresh = (free + stuck) / odds.done;
                 // Each give-up, old or new, is followed by φ/(1-φ) doomed attempts.
                 let doomed = (fresh * odds.gave_up + stuck) * phi / (1.0 - phi);
                 sum.fresh += fresh;
@@ -216,6 +216,9 @@ impl Retry {
         Some(knots.get(at).copied().filter(|&k| k <= above && within(k)).unwrap_or(above))
     }
 }
+
+/// A share done that is as good as none: its inverse times a pause must stay finite.
+const HOPELESS: f64 = 1e-200;
 
 /// Sums over the attempts of a request.
 #[derive(Default)]
