@@ -430,8 +430,8 @@ fn mixtures_report_in_order_and_names_match_the_contract() {
     assert_eq!(family.parameters(), ["shape", "scale", "shift", "never"]);
     assert_eq!(family.dimension(), 3);
     assert_eq!(family.law(&[0.0, 0.0, -40.0]).map(|l| l.never() > 0.0), Some(true));
-    assert_eq!(decides(0.1).len(), 16);
-    assert_eq!(verdicts(0.1).len(), 21);
+    assert_eq!(decides(0.1).len(), 17);
+    assert_eq!(verdicts(0.1).len(), 22);
 }
 
 #[test]

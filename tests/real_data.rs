@@ -182,10 +182,19 @@ fn hpc2n_runs() {
     check("hpc2n_2002_first_jobs.swf", None, Measure::Run, (3_145, 0), &rows);
 }
 
-/// The same waits as a table of ours whose streams are called `procs>8` and the like: no names here, and every line says so.
+/// The same waits as a table whose streams are called `procs>8` and the like: no names here, and every line says so. Taken
+/// as one stream they are read and weighed.
 #[test]
 fn names_that_are_none() {
     let Some(path) = support::reference_path("data", "hpc2n_2002_waits.csv") else { return };
+    let options =
+        Options { one_stream: Some("cluster.wait".into()), bad_lines: Allowed::All, ..Options::default() };
+    let (Counting(book), report) =
+        intake::read(vec![Source::path(&path)], &options, Counting::default(), &mut |_| ()).unwrap();
+    assert_eq!((report.waits, report.bad.count), (3_071, 99));
+    let advice = ask(&book, "cluster.wait");
+    println!("{:?} {:?} {:?}", advice.advice.action, advice.advice.give_up_after_s, advice.tail);
+    assert_eq!(advice.advice.action, Action::GiveUpAfter);
     let options = Options { bad_lines: Allowed::All, ..Options::default() };
     let error =
         intake::read(vec![Source::path(path)], &options, Counting::default(), &mut |_| ()).unwrap_err();

@@ -62,6 +62,7 @@ impl Demo {
         let common = Common { policy: Some(policy), ..self.common.clone() };
         let reading = Reading {
             files: vec![waits.into()],
+            one_stream: None,
             bad_lines: Allowed::AtMost(0),
             measure: JobTime::Wait,
             input: None,

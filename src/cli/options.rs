@@ -91,6 +91,9 @@ pub(super) struct Reading {
     /// Files of waits (NDJSON, CSV, SWF; plain, gzip or zstd); `-` is standard input
     #[arg(required = true, value_name = "FILE")]
     pub(super) files: Vec<std::ffi::OsString>,
+    /// One stream for all waits, whatever their records call theirs
+    #[arg(long = "as", value_name = "NAME", value_parser = stream_name)]
+    pub(super) one_stream: Option<String>,
     /// How many bad lines are put up with: a number, or `all`
     #[arg(
         long,
@@ -127,6 +130,7 @@ impl Reading {
         Options {
             format: self.input,
             streams: common.stream.clone(),
+            one_stream: self.one_stream.clone(),
             measure: match self.measure {
                 JobTime::Wait => Measure::Wait,
                 JobTime::Run => Measure::Run,
@@ -178,6 +182,13 @@ fn moment(text: &str) -> Result<f64, String> {
     let midnight = date.to_datetime(jiff::civil::Time::midnight());
     let time = jiff::tz::Offset::UTC.to_timestamp(midnight).map_err(|_| explain())?;
     Ok(time.as_second() as f64)
+}
+
+fn stream_name(text: &str) -> Result<String, String> {
+    match crate::wait::check_stream(text) {
+        Ok(()) => Ok(text.to_owned()),
+        Err(error) => Err(format!("{error}; {}", error.remedy())),
+    }
 }
 
 fn selector(text: &str) -> Result<Selector, String> {

@@ -75,7 +75,12 @@ impl<'w, S: Sink> Collector<'w, S> {
     }
 
     pub(super) fn nameless(&self) -> Option<&'w str> {
-        self.options.streams.as_ref().and_then(Selector::name)
+        self.one_stream().or_else(|| self.options.streams.as_ref().and_then(Selector::name))
+    }
+
+    /// The stream of every record, where one was asked for.
+    pub(super) fn one_stream(&self) -> Option<&'w str> {
+        self.options.one_stream.as_deref()
     }
 
     pub(super) fn count_lines(&mut self, lines: u64) {
@@ -104,7 +109,7 @@ impl<'w, S: Sink> Collector<'w, S> {
 
     #[inline]
     pub(super) fn record(&mut self, line: u64, fields: &Fields<'_>) -> Result<(), Flaw> {
-        match make(fields, self.nameless())? {
+        match make(fields, self.nameless(), self.one_stream().is_some())? {
             Made::Whole(record) => self.whole(&record, fields.is_bare()),
             Made::Half(half) => {
                 let stream = self.streams.enter(half.stream, self.options.streams.as_ref())?;

@@ -86,6 +86,8 @@ pub struct Options {
     pub format: Option<Format>,
     /// The streams wanted, and the name of records that have none; `None`: all, and each must have one.
     pub streams: Option<Selector>,
+    /// One stream for all records, whatever they call theirs; a name there is then not even looked at.
+    pub one_stream: Option<String>,
     /// Which time of a job log is the wait.
     pub measure: Measure,
     /// How many bad lines are put up with.
@@ -107,6 +109,7 @@ impl Default for Options {
         Options {
             format: None,
             streams: None,
+            one_stream: None,
             measure: Measure::default(),
             bad_lines: Allowed::default(),
             since: None,

@@ -295,11 +295,16 @@ pub(super) enum Side {
     End(Ending),
 }
 
-/// Understands a record's fields. `nameless` is the stream of records that have none. The stream's name is the
+/// Understands a record's fields. `nameless` is the stream of records that have none, or of all (`one_stream`). The stream's name is the
 /// caller's to check, once for each stream.
 #[inline]
-pub(super) fn make<'a>(fields: &Fields<'a>, nameless: Option<&'a str>) -> Result<Made<'a>, Flaw> {
-    let stream = fields.text(Field::Stream)?.or(nameless).ok_or(Flaw::Missing { field: Field::Stream })?;
+pub(super) fn make<'a>(
+    fields: &Fields<'a>,
+    nameless: Option<&'a str>,
+    one_stream: bool,
+) -> Result<Made<'a>, Flaw> {
+    let named = if one_stream { None } else { fields.text(Field::Stream)? };
+    let stream = named.or(nameless).ok_or(Flaw::Missing { field: Field::Stream })?;
     let id = fields.text(Field::Id)?;
     let ending = fields.ending()?;
     const PLAIN: u16 = 1 << Field::Stream as u8

@@ -71,12 +71,12 @@ fn take<S: Sink>(
         Job::Wait { id, place, wait } => {
             stream.clear();
             let stream = match place {
-                Some((kind, number)) => {
+                Some((kind, number)) if collector.one_stream().is_none() => {
                     // Writing to a text cannot fail.
                     let _ = write!(stream, "{kind}-{number}");
                     stream
                 }
-                None => collector.nameless().ok_or(Flaw::Missing { field: Field::Stream })?,
+                _ => collector.nameless().ok_or(Flaw::Missing { field: Field::Stream })?,
             };
             collector.whole(&Record { stream, id: Some(id), wait }, false)?;
         }
