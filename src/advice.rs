@@ -53,6 +53,9 @@ pub struct Evidence {
     pub waiting: u64,
     /// Waits that were retries (attempt 2 and later).
     pub retries: u64,
+    /// Share of the completions behind the advice that other streams of the same policy entry lent, 0 to 1; absent where
+    /// none did.
+    pub borrowed_share: Option<f64>,
     /// Last age about which the data speak, s.
     pub sight_s: Option<f64>,
     /// First time in the data, RFC 3339.
@@ -126,7 +129,8 @@ pub struct FitSummary {
     pub parameters: serde_json::Map<String, serde_json::Value>,
     /// Standard errors by the same names; `null` where the likelihood is flat.
     pub standard_errors: serde_json::Map<String, serde_json::Value>,
-    /// Natural logarithm, ages in seconds.
+    /// Natural logarithm of the likelihood of the ages as grouped for the fit (about 75 cells), hence of probabilities and
+    /// not of densities: it compares the families here, not with another program's.
     pub log_likelihood: f64,
     /// Akaike's criterion.
     pub aic: f64,

@@ -90,12 +90,14 @@ pub fn time(unix: f64) -> Option<String> {
     Some(time.to_string())
 }
 
-/// A share as a percentage: `"3.1%"`, `"<0.1%"`, `"99.95%"`.
+/// A share as a percentage: `"3.1%"`, `"<0.1%"`, `"99.95%"`, `">99.99%"`: all and nothing are said only of all and
+/// nothing.
 pub fn percent(share: f64) -> String {
     let p = 100.0 * share;
     match p {
         _ if p.is_nan() => "unknown".into(),
         _ if p != 0.0 && p.abs() < 0.05 => format!("{}0.1%", if p < 0.0 { ">-" } else { "<" }),
+        _ if p > 99.99 && p < 100.0 => ">99.99%".into(),
         _ if p > 99.0 && p < 100.0 => format!("{p:.2}%"),
         _ if p.abs() >= 1000.0 => format!("{}%", number(p)),
         _ => format!("{p:.1}%"),
@@ -158,5 +160,7 @@ mod tests {
         assert_eq!(time(1e300), None);
         assert_eq!(percent(0.0312), "3.1%");
         assert_eq!(percent(0.0001), "<0.1%");
+        assert_eq!(percent(0.999_99), ">99.99%");
+        assert_eq!(percent(1.0), "100.0%");
     }
 }

@@ -1,4 +1,6 @@
 //! Fits against general-purpose libraries, published tables, and simulated data whose law is known.
+// A bad reference file or a failed fit should stop the test.
+#![allow(clippy::unwrap_used, clippy::panic)]
 
 mod support;
 

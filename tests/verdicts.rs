@@ -1,4 +1,6 @@
 //! Ensembles and verdicts on simulated streams whose law is known, and on data that say nothing.
+// A bad reference file or a failed fit should stop the test.
+#![allow(clippy::unwrap_used, clippy::panic)]
 
 use outwait::outlook::{Grid, Sampled};
 use outwait::tail::families::{

@@ -2,7 +2,8 @@
 
 use super::bounds::Bounds;
 use super::caution;
-use super::judge::{Judgement, LoadCeiling, Settled};
+use super::judge::{Judgement, LoadCeiling, LongerTail, Settled};
+use super::pool::Pooled;
 use super::{Case, Shift};
 use crate::advice::{Action, Advice, Caution, Change};
 use crate::policy::{Entry, GiveUp, Kind};
@@ -39,7 +40,7 @@ pub(super) fn all(
     if let Some((judgement, settled)) =
         decided.filter(|_| matches!(advice.advice.action, Action::GiveUpAfter | Action::WaitItOut))
     {
-        found.extend(edge_of_sight(judgement, settled));
+        found.extend(edge_of_sight(judgement, settled, advice));
         found.extend(not_repeatable(entry, settled));
         found.extend(heavier_load(settled));
         found.extend(load_ceiling(entry, settled));
@@ -49,7 +50,7 @@ pub(super) fn all(
         found.extend(shift.map(law_shifted));
         found.extend(few_waits(entry, advice, settled));
         found.extend(step_limited(entry, advice));
-        found.extend(deadline(entry));
+        found.extend(deadline(entry, settled));
     } else if let Some(shift) = shift {
         found.push(law_shifted(shift));
     }
@@ -71,11 +72,44 @@ pub(super) fn all(
     found
 }
 
-/// Whether the optimum may lie where a timeout hides the data.
-fn edge_of_sight(judgement: &Judgement, settled: &Settled) -> Option<Caution> {
+/// What was lent by other streams is said.
+pub(super) fn borrowed(pooled: &Pooled) -> Caution {
+    caution(
+        "borrowed_evidence",
+        format!(
+            "the stream has few waits of its own: {} of the completions behind this advice are lent by {} of the same \
+             policy entry, which look alike so far",
+            say::percent(pooled.share),
+            if pooled.siblings == 1 {
+                "another stream".to_owned()
+            } else {
+                format!("{} streams", pooled.siblings)
+            }
+        ),
+        "weigh again when it has enough of its own, or give it an entry of its own if it is another kind of wait",
+    )
+}
+
+/// Whether the optimum may lie where a timeout hides the data, or where too few waits lead.
+fn edge_of_sight(judgement: &Judgement, settled: &Settled, advice: &Advice) -> Option<Caution> {
     let reaches_past = settled.at > judgement.sight || settled.sides.beyond > 0.05;
     if judgement.unseen < 0.005 || !reaches_past {
         return None;
+    }
+    let (unseen, sight) = (say::percent(judgement.unseen), say::duration(judgement.sight));
+    let beyond = format!(
+        "{} of the weight puts the best time past that, where the stated loss covers what the fitted laws differ in but \
+         not what no wait has shown",
+        say::percent(settled.sides.beyond)
+    );
+    if advice.evidence.gave_up + advice.evidence.waiting == 0 {
+        return Some(caution(
+            "edge_of_sight",
+            format!(
+                "{unseen} of the waits lasted longer than {sight}, too few to say what comes after, and {beyond}"
+            ),
+            "weigh again with more waits",
+        ));
     }
     let remedy = match settled.sides.median_beyond {
         Some(to) if settled.sides.disagree() => format!(
@@ -87,11 +121,7 @@ fn edge_of_sight(judgement: &Judgement, settled: &Settled) -> Option<Caution> {
     Some(caution(
         "edge_of_sight",
         format!(
-            "{} of the waits are cut off at {} and nothing in the data says what comes after; {} of the weight puts the \
-             best time there. The stated loss covers what the fitted laws differ in, not what no wait has shown",
-            say::percent(judgement.unseen),
-            say::duration(judgement.sight),
-            say::percent(settled.sides.beyond)
+            "{unseen} of the waits are still open at {sight}, past which hardly any were watched, and {beyond}"
         ),
         remedy,
     ))
@@ -186,13 +216,21 @@ fn sticky(settled: &Settled) -> Option<Caution> {
 }
 
 fn tail_lengthened(settled: &Settled) -> Option<Caution> {
-    let far = settled.far_tail.as_ref().filter(|f| f.shorter_but_longer_tailed())?;
+    let LongerTail { mean, mean_never, late } = settled.longer_tail?;
+    let yet = match late {
+        Some([with, without]) => format!(
+            "and yet one request in a thousand then takes over {} instead of {}",
+            say::duration(with),
+            say::duration(without)
+        ),
+        None => "and yet makes very long totals more frequent".to_owned(),
+    };
     Some(caution(
         "tail_lengthened",
         format!(
-            "giving up shortens the mean total from {} to {} and yet makes very long totals more frequent",
-            say::duration(far.mean_never),
-            say::duration(far.mean)
+            "giving up shortens the mean total from {} to {} {yet}",
+            say::duration(mean_never),
+            say::duration(mean)
         ),
         "if the slowest requests are what hurts, hold on longer or cap the attempts",
     ))
@@ -236,7 +274,7 @@ fn few_waits(entry: &Entry, advice: &Advice, settled: &Settled) -> Option<Cautio
         caution(
             "few_waits",
             format!(
-                "{} completions: the advised time may lose up to {} of what could be earned",
+                "{} completions are few: what the advised time loses may come to {} of what could be earned",
                 say::count(done),
                 say::percent(settled.regret.percentile_95)
             ),
@@ -260,9 +298,9 @@ fn step_limited(entry: &Entry, advice: &Advice) -> Option<Caution> {
     ))
 }
 
-fn deadline(entry: &Entry) -> Option<Caution> {
-    let worth = entry.worth.filter(|w| matches!(w.aim, Aim::Deadline { .. }))?;
-    (worth.sticky == 0.0 && !entry.retry.repeatable).then(|| {
+fn deadline(entry: &Entry, settled: &Settled) -> Option<Caution> {
+    let within = entry.worth.is_some_and(|w| matches!(w.aim, Aim::Deadline { attempts: 2.., .. }));
+    (within && !settled.wait_it_out && !entry.retry.repeatable).then(|| {
         caution(
             "deadline_retries",
             "the schedule starts several attempts of one piece of work before the deadline",

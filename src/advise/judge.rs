@@ -18,7 +18,7 @@ use crate::stopping::{
     flips_at, stickiness,
 };
 use crate::tail::{self, Draw, Ensemble, LEAST_WEIGHT, RemainingWait, TailClass, Verdict, verdict};
-use crate::tally::{Cause, Cells, Tally};
+use crate::tally::{Cause, Cells, Mass, Sample, Tally};
 
 /// Replicates of the empirical curve (RECIPE's fourth section).
 const REPLICATES: usize = 40;
@@ -28,10 +28,18 @@ const NINETY: f64 = 1.644_853_626_951_472_2;
 const HOLDING_POINTS: usize = 24;
 /// Extra load of a second copy where the policy names no ceiling: the common 5% (Dean & Barroso 2013).
 const COPY_LOAD: f64 = 0.05;
+/// What a time may lose, a share, to lie a little after the last of a bulk rather than a little before; and the steps in
+/// which it is sought.
+const NEXT_TO_NOTHING: f64 = 5e-4;
+const LATER: i32 = 64;
+/// The share of requests that must be over for a total to count as late.
+const LATE: f64 = 0.999;
+/// How much longer a late total must be with a timer than without.
+const LONGER: f64 = 1.05;
 /// A look past the edge is planned to take this long, s.
 const LOOK: f64 = 7.0 * 86_400.0;
-/// Cells beyond this many are joined before they are bootstrapped.
-const MOST_CELLS: usize = 1500;
+/// Cells beyond this many are joined before they are bootstrapped: about as fine as the ages that are compared.
+const MOST_CELLS: usize = 600;
 
 /// Everything that was found out about one stream.
 pub(crate) struct Judgement {
@@ -39,7 +47,7 @@ pub(crate) struct Judgement {
     pub(crate) verdict: Verdict,
     /// Last age about which the data speak, s.
     pub(crate) sight: f64,
-    /// Share still waiting there.
+    /// Share of all waits that were cut off there or later, and not seen to end.
     pub(crate) unseen: f64,
     /// The choice, or why there is none although the evidence suffices.
     pub(crate) outcome: Result<Settled, String>,
@@ -59,7 +67,7 @@ pub(crate) struct Settled {
     pub(crate) load: LoadCeiling,
     pub(crate) sides: Sides,
     pub(crate) sticky: Option<Stickiness>,
-    pub(crate) far_tail: Option<FarTail>,
+    pub(crate) longer_tail: Option<LongerTail>,
     advised: Outcome,
     in_force: Option<Outcome>,
     never: Outcome,
@@ -69,6 +77,16 @@ pub(crate) struct Settled {
     look: Option<Look>,
     second_copy: Option<SecondCopy>,
     schedule: Vec<f64>,
+}
+
+/// A timer that shortens the mean total and lengthens its tail. Means in s.
+#[derive(Clone, Copy, Debug, PartialEq)]
+pub(crate) struct LongerTail {
+    pub(crate) mean: f64,
+    pub(crate) mean_never: f64,
+    /// What one request in a thousand exceeds, s, with the timer and without; absent where only totals still longer are
+    /// more frequent.
+    pub(crate) late: Option<[f64; 2]>,
 }
 
 /// What the ceiling on attempts per request did.
@@ -83,10 +101,11 @@ pub(crate) enum LoadCeiling {
 }
 
 impl Judgement {
-    /// `None` where no law at all can be fitted and no curve drawn.
+    /// `None` where no law at all can be fitted and no curve drawn. `open`: every wait that is open, also those that are
+    /// not among the cells because nobody is watched at the ages before theirs.
     pub(crate) fn of(
         cells: &Cells,
-        retries: &Cells,
+        open: &[Mass],
         entry: &Entry,
         bounds: &Bounds,
         tally: &Tally,
@@ -99,36 +118,47 @@ impl Judgement {
         let sample = cells.sample(Cause::Done);
         let grid = Grid::new(bounds.first, bounds.floor, bounds.ceiling);
         let ensemble = tail::ensemble(&sample, &grid, seed).ok()?;
-        let failing = PiecewiseHazard::fit(&cells.sample(Cause::Failed));
+        let failing = PiecewiseHazard::fit(&coarse.sample(Cause::Failed));
         let failure: Vec<f64> = failing
             .as_ref()
             .map(|hazard| grid.ages().iter().map(|&t| hazard.cumulative(t)).collect())
             .unwrap_or_default();
         let replicates = replicates(&table, &ensemble, &failure, &grid, seed);
-        let verdict = verdict(&sample, &cells.waiting, &ensemble, &grid, &replicates);
+        let verdict = verdict(&sample, open, &ensemble, &grid, &replicates);
         let sight = table.sight();
         let mut judgement = Judgement {
             verdict,
             sight,
-            unseen: curve.survival(sight),
+            unseen: curve.survival(sight) * cut_off_share(&coarse.sample(Cause::Any), sight),
             outcome: Err(String::new()),
             ensemble,
         };
         let Some(mut worth) = entry.worth else { return Some(judgement) };
-        let mut retry =
-            Retry { attempts: entry.retry.attempts, growth: entry.retry.backoff.factor, ..Retry::default() };
+        // A deadline brings its own cap.
+        let attempts = match worth.aim {
+            Aim::Deadline { attempts, .. } => Some(attempts),
+            _ => entry.retry.attempts,
+        };
+        let mut retry = Retry { attempts, growth: entry.retry.backoff.factor, ..Retry::default() };
         if entry.retry.backoff.jitter == Jitter::Full {
             // Drawn evenly from 0 to its full length, a pause lasts half of that on average.
             retry.jitter = true;
             worth.pause.failed *= 0.5;
             worth.pause.gave_up *= 0.5;
         }
-        let sticky = sticky(cells, retries, entry, &curve);
+        let sticky = sticky(cells, &tally.retries(), entry, &curve);
         worth.sticky = sticky.as_ref().map_or(0.0, |s| s.value);
         let scene = Scene { entry, bounds, grid: &grid, worth, retry, empirical: &empirical, sight, tally };
         judgement.outcome = scene.settle(&judgement, &failure, failing.as_ref(), &replicates, sticky);
         Some(judgement)
     }
+}
+
+/// Of the waits that reach past an age, the share that was cut off there or later and not seen to end.
+fn cut_off_share(sample: &Sample, sight: f64) -> f64 {
+    let cut_off: f64 = sample.censored.iter().filter(|m| m.age >= sight).map(|m| m.weight).sum();
+    let ended: f64 = sample.events.iter().filter(|e| e.upto > sight).map(|e| e.weight).sum();
+    if cut_off > 0.0 { cut_off / (cut_off + ended) } else { 0.0 }
 }
 
 /// Bootstrapped empirical curves, each going on past the edge of sight with a draw of a family that is picked by its
@@ -268,7 +298,10 @@ impl Scene<'_> {
         }
         let nothing = "nothing that can happen earns more than an attempt costs, so there is no rate to lose by waiting; \
                        give a completion a worth above the attempt cost, or choose another aim";
-        let choice = doubt.choose(self.entry.guard.slack).ok_or(nothing)?;
+        let mut choice = doubt.choose(self.entry.guard.slack).ok_or(nothing)?;
+        if ensemble.empirical > 0.5 {
+            choice = self.refined(choice, doubt.ages());
+        }
         let average = believed.finish(self.grid, self.sight).ok_or(nothing)?;
         let limits = Limits::new(self.bounds.floor, self.bounds.ceiling).map_err(|e| e.to_string())?;
         let objective =
@@ -312,7 +345,7 @@ impl Scene<'_> {
             now: now.and_then(|n| Some((n, doubt.regret_of_setting(rules.len())?))),
             sooner_costs: regret_at((at / 1.15).max(self.bounds.floor)) - regret_at(at),
             load,
-            far_tail: self.far_tail(ensemble, failing, &average, at),
+            longer_tail: self.longer_tail(ensemble, failing, &average, at),
             advised: outcome(Some(at)),
             in_force: now.map(|n| outcome(finite(n.seconds()))),
             never: outcome(None),
@@ -339,6 +372,27 @@ impl Scene<'_> {
             .into_iter()
             .filter_map(|rule| Some((rule, rule.give_up_after(self.empirical, end)?)))
             .collect()
+    }
+
+    /// The choice moved to the best age of the exact curve within a step of the grid, or as much later as costs next to
+    /// nothing. Where no family fits, completions may stop at an age that lies between two of the grid, and a time just
+    /// before it would cut the last of them.
+    fn refined(&self, choice: Choice, ages: &[f64]) -> Choice {
+        let i = ages.partition_point(|&t| t < choice.at);
+        let (from, upto) = (ages[i.saturating_sub(1)], ages[(i + 1).min(ages.len() - 1)]);
+        if choice.wait_it_out || upto > self.sight || matches!(self.worth.aim, Aim::Deadline { .. }) {
+            return choice;
+        }
+        let exact = |limits| {
+            let objective = Objective::new(self.empirical, &self.worth, &self.retry, limits).ok()?;
+            let best = stopping::best(&objective).ok()?;
+            let least = best.score - NEXT_TO_NOTHING * best.score.abs();
+            let later = |i: i32| best.at + (upto - best.at) * f64::from(i) / f64::from(LATER);
+            (0..LATER).rev().map(later).find(|&t| objective.score(t) >= least)
+        };
+        let Some(at) = Limits::new(from, upto).ok().and_then(exact) else { return choice };
+        let holding = |[from, upto]: [f64; 2]| [from.min(at), upto.max(at)];
+        Choice { at, interval: holding(choice.interval), band: holding(choice.band), ..choice }
     }
 
     /// Whether waiting on is within the slack of the best, and the verdict says that the end comes nearer as one waits.
@@ -420,22 +474,34 @@ impl Scene<'_> {
         })
     }
 
-    /// What the timer does to very long totals, judged by the family that weighs most.
-    fn far_tail(
+    /// Whether the timer shortens the mean total and yet makes long totals more frequent: one in a thousand by the believed
+    /// curve, or in the limit by the family that weighs most (Eliazar & Reuveni 2020, 2021).
+    fn longer_tail(
         &self,
         ensemble: &Ensemble,
         failing: Option<&PiecewiseHazard>,
         average: &Average,
         at: f64,
-    ) -> Option<FarTail> {
-        let heaviest =
-            ensemble.members.iter().filter(|m| m.decides).max_by(|a, b| a.weight.total_cmp(&b.weight))?;
-        if at >= self.bounds.ceiling || heaviest.weight <= LEAST_WEIGHT {
+    ) -> Option<LongerTail> {
+        let ceiling = self.bounds.ceiling;
+        let mean = |t: f64| stopping::expected_time(average, &self.worth, &self.retry, t);
+        let (mean, mean_never) = (mean(at), mean(ceiling));
+        if at >= ceiling || mean.partial_cmp(&mean_never) != Some(std::cmp::Ordering::Less) {
             return None;
         }
-        let failed = failing.map_or(Failure::Never, |f| Failure::Rate(f.last_rate()));
-        let law = Competing::new(Arc::clone(&heaviest.fit.law), failed);
-        Some(FarTail::new(average, &self.worth, &self.retry, at, self.bounds.ceiling, law.final_hazard()))
+        let late = |t: f64| finite(RequestTime::new(average, &self.worth, &self.retry, t).quantile(LATE));
+        let late = late(at).zip(late(ceiling)).map(|(with, without)| [with, without]);
+        let late = late.filter(|[with, without]| *with > LONGER * without);
+        let far = || {
+            let heaviest =
+                ensemble.members.iter().filter(|m| m.decides).max_by(|a, b| a.weight.total_cmp(&b.weight))?;
+            let failed = failing.map_or(Failure::Never, |f| Failure::Rate(f.last_rate()));
+            let law = Competing::new(Arc::clone(&heaviest.fit.law), failed);
+            let far = FarTail::new(average, &self.worth, &self.retry, at, ceiling, law.final_hazard());
+            (heaviest.weight > LEAST_WEIGHT).then_some(far)
+        };
+        let longer = late.is_some() || far().is_some_and(|far| far.shorter_but_longer_tailed());
+        longer.then_some(LongerTail { mean, mean_never, late })
     }
 }
 
@@ -478,7 +544,7 @@ impl Settled {
         d.p99_s = self.advised.p99_s;
         d.now = self.in_force;
         d.never = Some(self.never);
-        d.proposal = self.proposal(entry);
+        d.proposal = self.proposal(entry, judgement.sight);
         d.rivals.clone_from(&self.rivals);
         d.holding_on.clone_from(&self.holding_on);
         d.retry_budget = self.retry_budget;
@@ -488,14 +554,25 @@ impl Settled {
         d.schedule_s.clone_from(&self.schedule);
     }
 
-    /// The next change of the time in force: none below the slack, none beyond the largest step.
-    fn proposal(&self, entry: &Entry) -> Option<Proposal> {
+    /// The next change of the time in force: none below the slack (twice that where it goes past the edge of sight), none
+    /// beyond the largest step, and none past the edge while the curves disagree on which side of it the best time lies.
+    /// Such a change would be undone by the next week's data as often as not; a look at a share of the waits tells before
+    /// all are changed.
+    fn proposal(&self, entry: &Entry, sight: f64) -> Option<Proposal> {
         let (now, regret) = self.now?;
         let keep = Proposal { change: Change::Keep, to_s: finite(now.seconds()), step_limited: false };
-        if regret.expected - self.regret.expected <= entry.guard.slack {
+        let now = now.seconds();
+        // What no wait has shown must promise twice as much.
+        let unseen = self.at > sight && now < self.at;
+        let needed = entry.guard.slack * if unseen { 2.0 } else { 1.0 };
+        if regret.expected - self.regret.expected <= needed {
             return Some(keep);
         }
-        let (now, goal) = (now.seconds(), if self.wait_it_out { f64::INFINITY } else { self.at });
+        let goal = match self.wait_it_out {
+            _ if unseen && self.sides.disagree() => now.max(sight),
+            true => f64::INFINITY,
+            false => self.at,
+        };
         let step = entry.guard.largest_step;
         Some(match goal.partial_cmp(&now) {
             Some(std::cmp::Ordering::Greater) => {

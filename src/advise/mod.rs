@@ -4,14 +4,16 @@
 mod bounds;
 mod cautions;
 mod judge;
+mod pool;
 mod shift;
 mod streams;
 mod summary;
 
 pub use shift::Shift;
-pub use streams::Terms;
+pub use streams::{Lenders, Terms};
 
 use crate::advice::{Action, Advice, Caution, Decision, Evidence, RemainingWait, Tail, TailClass};
+use crate::curve::ENOUGH;
 use crate::policy::Entry;
 use crate::say;
 use crate::stopping::universal_schedule;
@@ -19,6 +21,7 @@ use crate::tally::{Cells, Tally};
 
 use bounds::Bounds;
 use judge::Judgement;
+use pool::pool;
 
 /// Fewer completions than this, and no tail is fitted at all.
 const LEAST_COMPLETIONS: f64 = 5.0;
@@ -36,12 +39,14 @@ pub struct Case<'a> {
     pub periods: Option<(&'a Tally, &'a Tally)>,
     /// Why the ages may be in another unit, if something speaks for it.
     pub suspicion: Option<&'a str>,
+    /// First attempts of streams of the same policy entry, from which a stream with few waits may borrow.
+    pub siblings: &'a [&'a Cells],
 }
 
 impl<'a> Case<'a> {
     /// A stream and its waits, nothing else.
     pub fn new(stream: &'a str, tally: &'a Tally) -> Case<'a> {
-        Case { stream, tally, periods: None, suspicion: None }
+        Case { stream, tally, periods: None, suspicion: None, siblings: &[] }
     }
 }
 
@@ -65,7 +70,12 @@ impl<'a> Case<'a> {
 /// # Ok::<(), outwait::wait::WaitError>(())
 /// ```
 pub fn advise(case: &Case<'_>, entry: &Entry, seed: u64) -> Advice {
-    let cells = case.tally.first_attempts();
+    let own = case.tally.first_attempts();
+    // Before the data are cut where nobody is watched: what hangs is older than that.
+    let open = own.waiting.clone();
+    let thin = own.totals()[0] < f64::from(entry.guard.evidence);
+    let pooled = if thin { pool(&own, case.siblings) } else { None };
+    let cells = pooled.as_ref().map_or(&own, |p| &p.cells).clone().before_gap(ENOUGH);
     let mut advice = Advice {
         stream: case.stream.to_owned(),
         kind: entry.kind.name().to_owned(),
@@ -75,10 +85,11 @@ pub fn advise(case: &Case<'_>, entry: &Entry, seed: u64) -> Advice {
         advice: nothing_yet(),
         cautions: Vec::new(),
     };
+    advice.evidence.borrowed_share = pooled.as_ref().map(|p| p.share);
     let bounds = Bounds::of(&cells, entry);
     let judgement = match &bounds {
         Some(bounds) if cells.totals()[0] >= LEAST_COMPLETIONS => {
-            Judgement::of(&cells, &case.tally.retries(), entry, bounds, case.tally, seed)
+            Judgement::of(&cells, &open, entry, bounds, case.tally, seed)
         }
         _ => None,
     };
@@ -90,10 +101,17 @@ pub fn advise(case: &Case<'_>, entry: &Entry, seed: u64) -> Advice {
     advice.advice = decide(&cells, entry, bounds.as_ref(), judgement.as_ref());
     let shift = case.periods.and_then(|(earlier, latest)| {
         let bounds = bounds.as_ref()?;
+        // Most windows have one period only.
+        if earlier.counts()[0] == 0 || latest.counts()[0] == 0 {
+            return None;
+        }
         Shift::between(&earlier.first_attempts(), &latest.first_attempts(), entry, bounds)
     });
     advice.cautions =
         cautions::all(case, entry, bounds.as_ref(), judgement.as_ref(), shift.as_ref(), &advice);
+    if let Some(pooled) = &pooled {
+        advice.cautions.push(cautions::borrowed(pooled));
+    }
     advice
 }
 
@@ -111,7 +129,12 @@ fn decide(cells: &Cells, entry: &Entry, bounds: Option<&Bounds>, judgement: Opti
     let done = cells.totals()[0];
     let needed = f64::from(entry.guard.evidence);
     let Some(judgement) = judgement.filter(|_| done >= needed) else {
-        decision.because = if done >= needed {
+        decision.because = if done < LEAST_COMPLETIONS {
+            format!(
+                "{} completions; no law can be read from fewer than {LEAST_COMPLETIONS}",
+                say::count(done)
+            )
+        } else if done >= needed {
             "the completions all have the same age or cannot be told apart, so no tail can be read".into()
         } else {
             format!("{} of the {} completions that the guard asks for", say::count(done), say::count(needed))
@@ -143,6 +166,7 @@ fn evidence(tally: &Tally) -> Evidence {
         gave_up,
         waiting,
         retries: tally.retries().total() as u64,
+        borrowed_share: None,
         sight_s: None,
         from: seen.and_then(|(from, _)| say::time(from)),
         to: seen.and_then(|(_, to)| say::time(to)),

@@ -1,11 +1,14 @@
 //! From a book of many streams to one set of advice: windows, periods, and what only the whole set shows.
 
+use std::collections::HashMap;
+
+use super::pool::{MOST_SIBLINGS, SIBLING_CELLS};
 use super::{Case, advise, caution};
-use crate::advice::{Advice, AdviceSet, SCHEMA};
+use crate::advice::{Advice, AdviceSet, Caution, SCHEMA};
 use crate::policy::{Entry, GiveUp, Jitter, Policy};
 use crate::say;
-use crate::stopping::{ChainFinding, Retry, Station, check_chain};
-use crate::tally::{Day, Days};
+use crate::stopping::{ChainFinding, Pause, Retry, Station, check_chain};
+use crate::tally::{Cells, Day, Days};
 
 /// Days that are held against those before them, to see whether the law has shifted.
 const LATEST: i32 = 7;
@@ -36,12 +39,21 @@ impl Terms<'_> {
     /// Advice on one stream from its days: those in the window of its entry, counted back from the newest day of all.
     /// Independent of the other streams.
     pub fn advise(&self, stream: &str, days: &Days, suspicion: Option<&str>) -> Advice {
+        self.advise_among(stream, days, suspicion, &Lenders::default())
+    }
+
+    /// The same, where the stream may borrow from others of its policy entry.
+    pub fn advise_among(
+        &self,
+        stream: &str,
+        days: &Days,
+        suspicion: Option<&str>,
+        lenders: &Lenders,
+    ) -> Advice {
         let entry = self.entry(stream);
-        let opening = match self.newest {
-            Some(newest) => newest - ((entry.guard.window / DAY).ceil() as i32).max(1) + 1,
-            None => i32::MIN,
-        };
+        let opening = self.opening(&entry);
         let tally = days.since(opening);
+        let siblings = lenders.of(entry.number, stream);
         let periods = self.newest.map(|newest| {
             let latest = newest - LATEST + 1;
             let within = |from: i32, to: i32| {
@@ -54,8 +66,46 @@ impl Terms<'_> {
             tally: &tally,
             periods: periods.as_ref().map(|(earlier, latest)| (earlier, latest)),
             suspicion,
+            siblings: &siblings,
         };
         advise(&case, &entry, self.seed ^ name_hash(stream))
+    }
+
+    /// First day of an entry's window.
+    fn opening(&self, entry: &Entry) -> i32 {
+        match self.newest {
+            Some(newest) => newest - ((entry.guard.window / DAY).ceil() as i32).max(1) + 1,
+            None => i32::MIN,
+        }
+    }
+
+    /// Which streams can lend to the thin ones of their policy entry; nothing without a policy, and nothing for entries
+    /// whose streams all have enough of their own.
+    pub fn lenders(&self, streams: &[(&str, &Days)]) -> Lenders {
+        let mut lenders = Lenders::default();
+        let Some(policy) = self.policy else { return lenders };
+        let mut members: HashMap<usize, Vec<(u64, usize)>> = HashMap::new();
+        for (i, (stream, days)) in streams.iter().enumerate() {
+            if let Some((_, entry)) = policy.entry_for(stream) {
+                let done = days.days().iter().map(|(_, tally)| tally.counts()[0]).sum();
+                members.entry(entry).or_default().push((done, i));
+            }
+        }
+        for (number, mut of_entry) in members {
+            let entry = &policy.entries[number];
+            let thin = of_entry.iter().any(|(done, _)| *done < u64::from(entry.guard.evidence));
+            if of_entry.len() < 2 || !thin {
+                continue;
+            }
+            of_entry.sort_by_key(|&(done, i)| (std::cmp::Reverse(done), i));
+            let opening = self.opening(entry);
+            let cells = of_entry.iter().take(MOST_SIBLINGS + 1).map(|&(_, i)| {
+                let (stream, days) = streams[i];
+                (stream.to_owned(), days.since(opening).first_attempts().coarsened(SIBLING_CELLS))
+            });
+            lenders.by_entry.insert(entry.number, cells.collect());
+        }
+        lenders
     }
 
     /// Joins the advice of all streams: in the order of their names, with the cautions that only the whole chain of calls
@@ -81,54 +131,84 @@ impl Terms<'_> {
     /// A caller that leaves before its callee's schedule ends leaves work running for nobody.
     fn check_calls(&self, streams: &mut [Advice]) {
         let entries: Vec<Entry> = streams.iter().map(|a| self.entry(&a.stream)).collect();
-        let number = |name: &String| streams.iter().position(|a| a.stream == *name);
-        let stations: Vec<Station> = streams
+        if entries.iter().all(|entry| entry.calls.is_empty()) {
+            return;
+        }
+        let numbers: HashMap<String, usize> =
+            streams.iter().enumerate().map(|(i, a)| (a.stream.clone(), i)).collect();
+        let called: Vec<Vec<usize>> = entries
             .iter()
-            .zip(&entries)
-            .map(|(advice, entry)| Station {
-                // The caller as advised; the callee as it is in force, where that is known.
-                give_up_after: advice.advice.give_up_after_s.unwrap_or(f64::INFINITY),
-                retry: retry(entry),
-                pause: entry.worth.map(|w| w.pause).unwrap_or_default(),
-                calls: entry.calls.iter().filter_map(number).collect(),
-            })
+            .map(|entry| entry.calls.iter().filter_map(|name| numbers.get(name).copied()).collect())
             .collect();
-        let in_force: Vec<Station> = stations
-            .iter()
-            .zip(&entries)
-            .map(|(station, entry)| Station {
-                give_up_after: entry.now.map_or(station.give_up_after, GiveUp::seconds),
-                ..station.clone()
-            })
-            .collect();
-        for caller in 0..stations.len() {
-            if stations[caller].give_up_after.is_infinite() {
-                continue;
-            }
-            let mut chain = in_force.clone();
-            chain[caller].give_up_after = stations[caller].give_up_after;
+        let station = |i: usize, give_up_after: f64, calls: Vec<usize>| Station {
+            give_up_after,
+            retry: retry(&entries[i]),
+            pause: mean_pause(&entries[i]),
+            calls,
+        };
+        let advised = |i: usize| streams[i].advice.give_up_after_s.unwrap_or(f64::INFINITY);
+        // The caller as advised; a callee as it is in force, where that is known.
+        let in_force = |i: usize| entries[i].now.map_or(advised(i), GiveUp::seconds);
+        let mut found: Vec<(usize, Caution)> = Vec::new();
+        for (caller, callees) in called.iter().enumerate().filter(|(_, callees)| !callees.is_empty()) {
+            let mut chain = vec![station(caller, advised(caller), (1..=callees.len()).collect())];
+            chain.extend(callees.iter().map(|&i| station(i, in_force(i), Vec::new())));
             for finding in check_chain(&chain) {
-                let ChainFinding::LeavesEarly { caller: who, callee, leaves, ends, attempts } = finding
-                else {
-                    continue;
-                };
-                if who != caller {
-                    continue;
+                if let ChainFinding::LeavesEarly { callee, leaves, ends, attempts, .. } = finding {
+                    let callee = &streams[callees[callee - 1]].stream;
+                    found.push((caller, leaves_first(callee, leaves, ends, attempts)));
                 }
-                let callee = streams[callee].stream.clone();
-                let text = format!(
-                    "it would leave after {} while {callee} may still be at work until {} (attempt {attempts} of its \
-                     schedule has begun by then)",
-                    say::duration(leaves),
-                    say::duration(ends),
-                );
-                let remedy = format!(
-                    "shorten the schedule of {callee} below {}, or pass the caller's deadline on to it",
-                    say::duration(leaves)
-                );
-                streams[caller].cautions.push(caution("caller_leaves_first", text, remedy));
             }
         }
+        let all: Vec<Station> =
+            (0..streams.len()).map(|i| station(i, f64::INFINITY, called[i].clone())).collect();
+        for finding in check_chain(&all) {
+            if let ChainFinding::Circle(path) = finding {
+                let names: Vec<&str> = path.iter().map(|&i| streams[i].stream.as_str()).collect();
+                found.push((path[0], circle(&names)));
+            }
+        }
+        for (i, caution) in found {
+            streams[i].cautions.push(caution);
+        }
+    }
+}
+
+fn circle(names: &[&str]) -> Caution {
+    caution(
+        "calls_in_circle",
+        format!("the policy's `calls` lead from {} back to where they began", names.join(" to ")),
+        "correct `calls`: no chain of waits can end that waits for itself",
+    )
+}
+
+fn leaves_first(callee: &str, leaves: f64, ends: f64, attempts: u32) -> Caution {
+    let until = match ends.is_finite() {
+        true => format!("may still be at work until {}", say::duration(ends)),
+        false => "may be at work without end".to_owned(),
+    };
+    let text = format!(
+        "it would leave after {} while {callee} {until} (attempt {attempts} of its schedule has begun by then)",
+        say::duration(leaves),
+    );
+    let remedy = format!(
+        "shorten the schedule of {callee} below {}, or pass the caller's deadline on to it",
+        say::duration(leaves)
+    );
+    caution("caller_leaves_first", text, remedy)
+}
+
+/// Streams with many waits, by policy entry: what its thin ones may borrow from.
+#[derive(Clone, Debug, Default)]
+pub struct Lenders {
+    by_entry: HashMap<usize, Vec<(String, Cells)>>,
+}
+
+impl Lenders {
+    /// The siblings of a stream.
+    fn of(&self, entry: usize, stream: &str) -> Vec<&Cells> {
+        let all = self.by_entry.get(&entry).map(Vec::as_slice).unwrap_or_default();
+        all.iter().filter(|(name, _)| name != stream).map(|(_, cells)| cells).take(MOST_SIBLINGS).collect()
     }
 }
 
@@ -140,6 +220,16 @@ fn retry(entry: &Entry) -> Retry {
         jitter: entry.retry.backoff.jitter == Jitter::Full,
         ..Retry::default()
     }
+}
+
+/// The pauses as a schedule counts them: one that is drawn evenly from 0 to its full length lasts half of that on average.
+fn mean_pause(entry: &Entry) -> Pause {
+    let mut pause = entry.worth.map(|w| w.pause).unwrap_or_default();
+    if entry.retry.backoff.jitter == Jitter::Full {
+        pause.failed *= 0.5;
+        pause.gave_up *= 0.5;
+    }
+    pause
 }
 
 /// FNV-1a of a name: so that a stream's numbers do not depend on which others are there.

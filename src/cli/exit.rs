@@ -33,11 +33,22 @@ impl From<Exit> for ExitCode {
     }
 }
 
-/// A command's failure: the exit code it maps to, and the chain of causes to print.
+/// A command's failure: the exit code it maps to, the chain of causes to print, and what to do if they do not say.
 #[derive(Debug)]
 pub(super) struct Failure {
-    pub(super) exit: Exit,
-    pub(super) error: anyhow::Error,
+    exit: Exit,
+    error: anyhow::Error,
+    remedy: Option<String>,
+}
+
+impl Failure {
+    pub(super) fn new(exit: Exit, error: impl Into<anyhow::Error>) -> Failure {
+        Failure { exit, error: error.into(), remedy: None }
+    }
+
+    pub(super) fn with_remedy(self, remedy: impl Into<String>) -> Failure {
+        Failure { remedy: Some(remedy.into()), ..self }
+    }
 }
 
 /// Attaches an exit code to an error.
@@ -47,7 +58,7 @@ pub(super) trait OrExit<T> {
 
 impl<T, E: Into<anyhow::Error>> OrExit<T> for Result<T, E> {
     fn or_exit(self, exit: Exit) -> Result<T, Failure> {
-        self.map_err(|error| Failure { exit, error: error.into() })
+        self.map_err(|error| Failure::new(exit, error))
     }
 }
 
@@ -58,10 +69,27 @@ pub(super) fn report(outcome: Result<Exit, Failure>) -> ExitCode {
         // Whoever read our output has seen enough: not an error of ours.
         Err(failure) if is_broken_pipe(&failure.error) => Exit::Well.into(),
         Err(failure) => {
-            let _ = writeln!(io::stderr(), "outwait: {:#}", failure.error);
+            let mut text = format!("outwait: {}\n", chain(&failure.error));
+            if let Some(remedy) = &failure.remedy {
+                text += &format!("  {remedy}\n");
+            }
+            let _ = io::stderr().write_all(text.as_bytes());
             failure.exit.into()
         }
     }
+}
+
+/// The causes, outermost first; one that the text before it tells already is not told again.
+fn chain(error: &anyhow::Error) -> String {
+    let mut text = String::new();
+    for cause in error.chain().map(ToString::to_string).filter(|cause| !cause.is_empty()) {
+        if text.is_empty() {
+            text = cause;
+        } else if !text.contains(&cause) {
+            text = text + ": " + &cause;
+        }
+    }
+    text
 }
 
 fn is_broken_pipe(error: &anyhow::Error) -> bool {
@@ -74,8 +102,13 @@ fn is_broken_pipe(error: &anyhow::Error) -> bool {
 /// Writes a command's output to standard output, whole.
 pub(super) fn print(text: &str) -> Result<(), Failure> {
     let mut out = io::stdout().lock();
-    out.write_all(text.as_bytes())
-        .and_then(|()| out.flush())
-        .map_err(|e| anyhow::Error::new(e).context("cannot write to standard output"))
-        .or_exit(Exit::System)
+    printed(out.write_all(text.as_bytes()).and_then(|()| out.flush()))
+}
+
+/// What became of writing to standard output.
+pub(super) fn printed(outcome: io::Result<()>) -> Result<(), Failure> {
+    outcome.map_err(|error| {
+        Failure::new(Exit::System, anyhow::Error::new(error).context("cannot write to standard output"))
+            .with_remedy("send it where there is room and where you may write")
+    })
 }

@@ -2,6 +2,7 @@
 
 mod demo;
 mod exit;
+mod layout;
 mod options;
 mod reading;
 mod text;
@@ -41,9 +42,12 @@ pub fn run(arguments: impl IntoIterator<Item = OsString>) -> ExitCode {
     let parsed = match Arguments::try_parse_from(arguments) {
         Ok(parsed) => parsed,
         Err(error) => {
+            let printed = error.print();
+            if error.use_stderr() {
+                return Exit::Usage.into();
+            }
             // Help and version go to standard output and are no error; a closed pipe there is none either.
-            let _ = error.print();
-            return if error.use_stderr() { Exit::Usage.into() } else { Exit::Well.into() };
+            return exit::report(exit::printed(printed).map(|()| Exit::Well));
         }
     };
     let outcome = match parsed.command {

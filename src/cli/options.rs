@@ -1,13 +1,14 @@
 //! Options that commands share, and how their texts are read.
 
-use std::io::{self, IsTerminal};
+use std::fs::File;
+use std::io::{self, Read};
+use std::num::NonZeroUsize;
 use std::path::{Path, PathBuf};
 
 use anyhow::Context;
 use clap::{Args, ValueEnum};
 
 use super::exit::{Exit, Failure, OrExit};
-use super::text::Style;
 use crate::intake::{Allowed, Format, Measure, Options, Selector};
 use crate::policy::{self, Policy};
 
@@ -47,29 +48,40 @@ impl Output {
 #[derive(Clone, Debug, Args)]
 pub(super) struct Common {
     /// Policy file: what waiting is worth, stream by stream
-    #[arg(long, value_name = "FILE", env = "OUTWAIT_POLICY")]
+    #[arg(long, value_name = "FILE")]
     pub(super) policy: Option<PathBuf>,
     /// How to write the answer
     #[arg(long, value_enum, default_value_t)]
     pub(super) format: Output,
     /// Only waits that ended or were last seen then or later: RFC 3339, a date, or Unix seconds
-    #[arg(long, value_name = "TIME", value_parser = moment)]
+    #[arg(long, value_name = "TIME", value_parser = moment, allow_negative_numbers = true)]
     pub(super) since: Option<f64>,
     /// Only waits that ended or were last seen before then
-    #[arg(long, value_name = "TIME", value_parser = moment)]
+    #[arg(long, value_name = "TIME", value_parser = moment, allow_negative_numbers = true)]
     pub(super) until: Option<f64>,
     /// Only these streams (`*` any run of characters, `?` one); a plain name also names records that have none
     #[arg(long, value_name = "GLOB", value_parser = selector)]
     pub(super) stream: Option<Selector>,
     /// Seed of everything drawn: the same seed gives the same bytes
-    #[arg(long, value_name = "N", default_value_t = 1)]
+    #[arg(long, value_name = "N", default_value_t = 1, value_parser = seed, allow_negative_numbers = true)]
     pub(super) seed: u64,
 }
 
 impl Common {
+    /// The policy file that was named here or in the environment.
+    pub(super) fn policy_file(&self) -> Option<PathBuf> {
+        let named = || std::env::var_os("OUTWAIT_POLICY").filter(|name| !name.is_empty());
+        self.policy.clone().or_else(|| named().map(PathBuf::from))
+    }
+
+    /// Whether something is named that only matters where waits are weighed.
+    pub(super) fn narrows(&self) -> bool {
+        self.policy.is_some() || self.since.is_some() || self.until.is_some() || self.stream.is_some()
+    }
+
     /// Reads the policy, if one was named.
     pub(super) fn load_policy(&self) -> Result<Option<Policy>, Failure> {
-        self.policy.as_deref().map(load_policy).transpose()
+        self.policy_file().as_deref().map(load_policy).transpose()
     }
 }
 
@@ -80,17 +92,23 @@ pub(super) struct Reading {
     #[arg(required = true, value_name = "FILE")]
     pub(super) files: Vec<std::ffi::OsString>,
     /// How many bad lines are put up with: a number, or `all`
-    #[arg(long, value_name = "N|all", default_value = "0", value_parser = bad_lines)]
+    #[arg(
+        long,
+        value_name = "N|all",
+        default_value = "0",
+        value_parser = bad_lines,
+        allow_negative_numbers = true
+    )]
     pub(super) bad_lines: Allowed,
     /// Which time of a job log is the wait
-    #[arg(long, value_enum, default_value_t)]
+    #[arg(long, value_name = "wait|run", value_enum, default_value_t)]
     pub(super) measure: JobTime,
-    /// Format of every file, instead of finding it out
+    /// Format of every file (ndjson, csv, swf), instead of finding it out
     #[arg(long, value_name = "FORMAT", value_parser = format)]
     pub(super) input: Option<Format>,
     /// Threads that read; as many as there are cores unless said
-    #[arg(long, value_name = "N")]
-    pub(super) threads: Option<std::num::NonZeroUsize>,
+    #[arg(long, value_name = "N", value_parser = threads, allow_negative_numbers = true)]
+    pub(super) threads: Option<NonZeroUsize>,
 }
 
 /// A time of a job log.
@@ -122,19 +140,26 @@ impl Reading {
     }
 }
 
-/// Reads a policy file.
+/// Reads a policy file; `-` is standard input.
 pub(super) fn load_policy(path: &Path) -> Result<Policy, Failure> {
-    let name = path.display().to_string();
-    let bytes = std::fs::read(path)
-        .with_context(|| format!("cannot read the policy {name}; name a file that exists and may be read"))
-        .or_exit(Exit::BadInput)?;
+    let standard_input = path == Path::new("-");
+    let name = if standard_input { "standard input".to_owned() } else { path.display().to_string() };
+    let bytes = if standard_input { some(io::stdin().lock()) } else { File::open(path).and_then(some) };
+    let bytes = bytes.map_err(|error| {
+        Failure::new(
+            Exit::BadInput,
+            anyhow::Error::new(error).context(format!("cannot read the policy {name}")),
+        )
+        .with_remedy("name a file that exists and may be read")
+    })?;
     policy::parse_bytes(&bytes, &name).or_exit(Exit::BadInput)
 }
 
-/// Colour for standard output: only on a terminal, and not where `NO_COLOR` asks for none.
-pub(super) fn style() -> Style {
-    let unwanted = std::env::var_os("NO_COLOR").is_some_and(|v| !v.is_empty());
-    Style { colour: !unwanted && io::stdout().is_terminal() }
+/// As much as a policy may have, and a byte more, so that too much is seen without being read whole.
+fn some(reader: impl Read) -> io::Result<Vec<u8>> {
+    let mut bytes = Vec::new();
+    reader.take(policy::MAX_BYTES as u64 + 1).read_to_end(&mut bytes)?;
+    Ok(bytes)
 }
 
 fn moment(text: &str) -> Result<f64, String> {
@@ -164,6 +189,14 @@ fn bad_lines(text: &str) -> Result<Allowed, String> {
         "all" => Ok(Allowed::All),
         _ => text.parse().map(Allowed::AtMost).map_err(|_| "write a number, or `all`".into()),
     }
+}
+
+fn seed(text: &str) -> Result<u64, String> {
+    text.parse().map_err(|_| format!("write a whole number from 0 to {}", u64::MAX))
+}
+
+fn threads(text: &str) -> Result<NonZeroUsize, String> {
+    text.parse().map_err(|_| "write a whole number from 1".into())
 }
 
 fn format(text: &str) -> Result<Format, String> {

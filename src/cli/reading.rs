@@ -1,14 +1,21 @@
 //! Reading the named files into a book, with a progress bar where someone watches.
 
+use std::ffi::OsStr;
 use std::io::{self, IsTerminal, Write};
-use std::time::Duration;
+use std::time::{Duration, Instant};
 
+use anyhow::anyhow;
 use indicatif::{ProgressBar, ProgressDrawTarget, ProgressStyle};
 
 use super::exit::{Exit, Failure};
 use super::options::{Common, Reading};
+use super::text;
 use crate::intake::{self, IntakeError, Record, Report, Sink, Source};
+use crate::say;
 use crate::tally::Book;
+
+/// How long the reading lasts before a bar shows.
+const PATIENCE: Duration = Duration::from_millis(500);
 
 /// Counts what is read.
 #[derive(Default)]
@@ -32,81 +39,125 @@ impl Sink for Counting {
 
 /// Reads all files and tells on standard error what was left out.
 pub(super) fn book(reading: &Reading, common: &Common) -> Result<(Book, Report), Failure> {
+    let standard_input = |name: &OsStr| name == "-";
+    let named = reading.files.iter().filter(|file| standard_input(file)).count();
+    let policy = common.policy_file().is_some_and(|file| standard_input(file.as_os_str()));
+    if named + usize::from(policy) > 1 {
+        return Err(Failure::new(Exit::Usage, anyhow!("standard input (`-`) is named more than once"))
+            .with_remedy("name it once; it can be read only once"));
+    }
     let sources: Vec<Source> = reading.files.iter().map(|file| Source::argument(file)).collect();
-    let bar = bar();
+    let mut bar = Bar::new();
     let outcome = intake::read(sources, &reading.options(common), Counting::default(), &mut |progress| {
-        if let Some(total) = progress.total {
-            bar.set_length(total);
-        }
-        bar.set_position(progress.bytes);
+        bar.show(progress.bytes, progress.total);
     });
-    bar.finish_and_clear();
+    bar.0.finish_and_clear();
     match outcome {
         Ok((Counting(book), report)) => {
             tell(&report);
             Ok((book, report))
         }
-        Err(error) => {
-            if let IntakeError::BadLines { report, .. } | IntakeError::NoWaits { report } = &error {
-                tell(report);
-            }
-            let exit = match error {
-                IntakeError::Read { .. } => Exit::System,
-                _ => Exit::BadInput,
-            };
-            Err(Failure { exit, error: error.into() })
+        Err(error) => Err(failure(error)),
+    }
+}
+
+fn failure(error: IntakeError) -> Failure {
+    match error {
+        // Told line by line above it, so that the last line need not repeat the first.
+        IntakeError::BadLines { report, allowed } => {
+            tell(&report);
+            let be = |n: u64| format!("{} {}", say::count(n as f64), if n == 1 { "is" } else { "are" });
+            let told = anyhow!(
+                "of {} {} bad, and {} allowed; nothing was weighed",
+                text::counted(report.lines, "line"),
+                be(report.bad.count),
+                be(allowed)
+            );
+            Failure::new(Exit::BadInput, told)
+                .with_remedy("mend them, or leave them out with `--bad-lines N` or `--bad-lines all`")
         }
+        IntakeError::NoWaits { report } => {
+            tell(&report);
+            Failure::new(Exit::BadInput, IntakeError::NoWaits { report })
+        }
+        IntakeError::Open { .. } => {
+            Failure::new(Exit::BadInput, error).with_remedy("name a file that exists and may be read")
+        }
+        IntakeError::Read { .. } => {
+            Failure::new(Exit::System, error).with_remedy("see to the disk or the pipe, and start again")
+        }
+        _ => Failure::new(Exit::BadInput, error),
     }
 }
 
 /// Hidden unless standard error is a terminal and the reading lasts.
-fn bar() -> ProgressBar {
-    if !io::stderr().is_terminal() {
-        return ProgressBar::hidden();
+struct Bar(ProgressBar, Instant);
+
+impl Bar {
+    fn new() -> Bar {
+        Bar(ProgressBar::hidden(), Instant::now())
     }
-    let bar = ProgressBar::with_draw_target(None, ProgressDrawTarget::stderr_with_hz(5));
-    if let Ok(style) = ProgressStyle::with_template("reading {bytes} of {total_bytes} {wide_bar} {eta}") {
-        bar.set_style(style);
+
+    fn show(&mut self, bytes: u64, total: Option<u64>) {
+        let Bar(bar, begun) = self;
+        if bar.is_hidden() && begun.elapsed() > PATIENCE && io::stderr().is_terminal() {
+            bar.set_draw_target(ProgressDrawTarget::stderr_with_hz(5));
+            if let Ok(style) =
+                ProgressStyle::with_template("reading {bytes} of {total_bytes} {wide_bar} {eta}")
+            {
+                bar.set_style(style);
+            }
+        }
+        if let Some(total) = total {
+            bar.set_length(total);
+        }
+        bar.set_position(bytes);
     }
-    bar.enable_steady_tick(Duration::from_millis(500));
-    bar
 }
 
 /// What was read and left out; nothing if all is well.
 fn tell(report: &Report) {
     let mut lines = Vec::new();
     if report.bad.count > 0 {
-        lines.push(format!("{} bad lines left out:", report.bad.count));
+        lines.push(format!("{}:", text::counted(report.bad.count, "bad line")));
         lines.extend(
-            report.bad.by_reason.iter().map(|b| format!("  {} x {}: {}", b.lines, b.field, b.reason)),
+            report
+                .bad
+                .by_reason
+                .iter()
+                .map(|b| format!("  {} x {}: {}", say::count(b.lines as f64), b.field, b.reason)),
         );
         lines.extend(report.bad.examples.iter().map(|bad| format!("  {bad}")));
         let more = report.bad.count.saturating_sub(report.bad.examples.len() as u64);
         if more > 0 {
-            lines.push(format!("  and {more} more"));
+            lines.push(format!("  and {} more", say::count(more as f64)));
         }
     }
     let left = &report.left_out;
-    for (count, what) in [
-        (left.other_streams, "waits of other streams left out"),
-        (left.outside_window, "waits outside the asked time left out"),
-        (left.unmeasured, "jobs without the asked time left out"),
-        (left.partial, "records of parts of a job left out"),
-        (report.pairs.ends_alone, "ends without a start left out: how long they waited is not known"),
-        (report.pairs.open_unseen, "starts at the newest time left out: they say nothing yet"),
+    for (count, noun, what) in [
+        (left.other_streams, "wait", "of other streams left out"),
+        (left.outside_window, "wait", "outside the asked time left out"),
+        (left.unmeasured, "job", "without the asked time left out"),
+        (left.partial, "record", "of parts of a job left out"),
+        (report.pairs.ends_alone, "end", "without a start left out: how long they waited is not known"),
+        (report.pairs.open_unseen, "start", "at the newest time left out: they say nothing yet"),
     ] {
         if count > 0 {
-            lines.push(format!("{count} {what}"));
+            lines.push(format!("{} {what}", text::counted(count, noun)));
         }
     }
     if report.pairs.open > 0 {
         lines.push(format!(
-            "{} starts without an end taken as still waiting at the newest time",
-            report.pairs.open
+            "{} without an end taken as still waiting at the newest time",
+            text::counted(report.pairs.open, "start")
         ));
     }
-    let mut err = io::stderr().lock();
     for line in lines {
-        let _ = writeln!(err, "outwait: {line}");
+        note(&line);
     }
+}
+
+/// A line on standard error beside the answer.
+pub(super) fn note(line: &str) {
+    let _ = writeln!(io::stderr(), "outwait: {line}");
 }

@@ -2,44 +2,24 @@
 
 use std::fmt::Write;
 
-use crate::advice::{Action, Advice, AdviceSet, Outcome, RemainingWait, TailClass};
+use crate::advice::{Action, Advice, AdviceSet, Change, Outcome, RemainingWait, TailClass};
 use crate::say;
 
-/// Colour and emphasis, only where a terminal shows them; never the only sign of anything.
-#[derive(Clone, Copy, Debug, Default)]
-pub(super) struct Style {
-    /// Whether escape sequences may be written.
-    pub(super) colour: bool,
-}
+use super::layout::{Dressed, Page};
 
-impl Style {
-    fn wrap(self, code: &str, text: &str) -> String {
-        if self.colour { format!("\x1b[{code}m{text}\x1b[0m") } else { text.to_owned() }
-    }
-
-    fn strong(self, text: &str) -> String {
-        self.wrap("1", text)
-    }
-
-    fn warn(self, text: &str) -> String {
-        self.wrap("33", text)
-    }
-
-    fn faint(self, text: &str) -> String {
-        self.wrap("2", text)
-    }
-}
+/// Where the text of a field begins.
+const FIELD: usize = 11;
 
 /// The whole of a run.
-pub(super) fn advice_set(set: &AdviceSet, style: Style) -> String {
+pub(super) fn advice_set(set: &AdviceSet, page: Page) -> String {
     let mut out = String::new();
+    page.paragraph(&mut out, Dressed("", Page::plain), Dressed(&summary(set), Page::strong), 0);
     for line in &set.assumed {
-        let _ = writeln!(out, "{} {line}", style.warn("assumed:"));
+        page.paragraph(&mut out, Dressed("assumed: ", Page::warn), Dressed(line, Page::plain), 2);
     }
-    let _ = writeln!(out, "{}", style.strong(&summary(set)));
     for advice in &set.streams {
         out.push('\n');
-        out.push_str(&block(advice, style));
+        block(&mut out, advice, page);
     }
     out
 }
@@ -48,6 +28,9 @@ pub(super) fn advice_set(set: &AdviceSet, style: Style) -> String {
 fn summary(set: &AdviceSet) -> String {
     let waits: u64 = set.streams.iter().map(|s| s.evidence.waits).sum();
     let n = set.streams.len();
+    if n == 0 {
+        return "No waits to weigh: every one was left out.".into();
+    }
     let count = |action: Action| set.streams.iter().filter(|s| s.advice.action == action).count();
     let mut parts = Vec::new();
     for (action, words) in [
@@ -61,12 +44,8 @@ fn summary(set: &AdviceSet) -> String {
             n => parts.push(format!("{n} {words}")),
         }
     }
-    let mut line = format!(
-        "{} waits in {n} {}: {}.",
-        say::count(waits as f64),
-        if n == 1 { "stream" } else { "streams" },
-        parts.join(", ")
-    );
+    let mut line =
+        format!("{} in {}: {}.", counted(waits, "wait"), counted(n as u64, "stream"), parts.join(", "));
     let worst = set
         .streams
         .iter()
@@ -79,38 +58,42 @@ fn summary(set: &AdviceSet) -> String {
     line
 }
 
-fn block(advice: &Advice, style: Style) -> String {
-    let mut out = String::new();
-    let e = &advice.evidence;
-    let _ = writeln!(
-        out,
-        "{}  {}",
-        style.strong(&advice.stream),
-        style.faint(&format!(
-            "{}, {} waits: {} done, {} failed, {} given up, {} open",
-            advice.kind,
-            say::count(e.waits as f64),
-            say::count(e.done as f64),
-            say::count(e.failed as f64),
-            say::count(e.gave_up as f64),
-            say::count(e.waiting as f64)
-        ))
-    );
-    field(&mut out, "Verdict", &verdict(advice));
-    field(&mut out, "Advice", &style.strong(&headline(advice)));
-    field(&mut out, "Why", &advice.advice.because);
-    outcomes(&mut out, advice);
-    doubt(&mut out, advice);
-    extras(&mut out, advice);
-    for caution in &advice.cautions {
-        let _ = writeln!(out, "  {} {}", style.warn(&format!("! {}:", caution.code)), caution.text);
-        let _ = writeln!(out, "    -> {}", caution.remedy);
-    }
-    out
+/// `1 wait`, `2,000 waits`.
+pub(super) fn counted(n: u64, what: &str) -> String {
+    format!("{} {what}{}", say::count(n as f64), if n == 1 { "" } else { "s" })
 }
 
-fn field(out: &mut String, name: &str, text: &str) {
-    let _ = writeln!(out, "  {name:<9}{text}");
+fn block(out: &mut String, advice: &Advice, page: Page) {
+    let e = &advice.evidence;
+    let mut head =
+        format!("{}, {}: {} done", advice.kind, counted(e.waits, "wait"), say::count(e.done as f64));
+    for (n, what) in [(e.failed, "failed"), (e.gave_up, "given up"), (e.waiting, "open")] {
+        if n > 0 {
+            let _ = write!(head, ", {} {what}", say::count(n as f64));
+        }
+    }
+    let name = format!("{}  ", advice.stream);
+    page.paragraph(out, Dressed(&name, Page::strong), Dressed(&head, Page::faint), 2);
+    field(out, page, "Verdict", &verdict(advice));
+    styled_field(out, page, "Advice", Dressed(&headline(advice), Page::strong));
+    field(out, page, "Why", &advice.advice.because);
+    outcomes(out, advice, page);
+    change(out, advice, page);
+    doubt(out, advice, page);
+    extras(out, advice, page);
+    for caution in &advice.cautions {
+        let code = format!("  ! {}: ", caution.code);
+        page.paragraph(out, Dressed(&code, Page::warn), Dressed(&caution.text, Page::plain), 4);
+        page.paragraph(out, Dressed("    -> ", Page::plain), Dressed(&caution.remedy, Page::plain), 7);
+    }
+}
+
+fn field(out: &mut String, page: Page, name: &str, text: &str) {
+    styled_field(out, page, name, Dressed(text, Page::plain));
+}
+
+fn styled_field(out: &mut String, page: Page, name: &str, text: Dressed<'_>) {
+    page.paragraph(out, Dressed(&format!("  {name:<9}"), Page::plain), text, FIELD);
 }
 
 fn verdict(advice: &Advice) -> String {
@@ -157,7 +140,7 @@ fn headline(advice: &Advice) -> String {
 }
 
 /// The table of what the advised time, the one in force and never giving up do.
-fn outcomes(out: &mut String, advice: &Advice) {
+fn outcomes(out: &mut String, advice: &Advice, page: Page) {
     let d = &advice.advice;
     let advised = d.rate_per_s.map(|rate| Outcome {
         give_up_after_s: d.give_up_after_s.or(d.ceiling_s),
@@ -195,8 +178,11 @@ fn outcomes(out: &mut String, advice: &Advice) {
             *width = (*width).max(cell.chars().count());
         }
     }
+    // Under the texts of the fields, where there is room.
+    let table = widths.iter().sum::<usize>() + 2 * (widths.len() - 1);
+    let indent = if FIELD + table <= page.columns { FIELD } else { 2 };
     for row in &cells {
-        let mut line = String::from("           ");
+        let mut line = " ".repeat(indent);
         for (i, (cell, width)) in row.iter().zip(widths).enumerate() {
             let pad = " ".repeat(width - cell.chars().count());
             // Names to the left, figures to the right.
@@ -217,7 +203,27 @@ fn per_second(rate: f64) -> String {
     format!("{}{unit}", say::number(value))
 }
 
-fn doubt(out: &mut String, advice: &Advice) {
+/// The next change of the time in force.
+fn change(out: &mut String, advice: &Advice, page: Page) {
+    let d = &advice.advice;
+    let (Some(proposal), Some(now)) = (&d.proposal, &d.now) else { return };
+    let time = |t: Option<f64>| say::duration(t.unwrap_or(f64::INFINITY));
+    let text = match proposal.change {
+        Change::Keep => {
+            format!("keep {}: what a change would gain is less than the slack", time(now.give_up_after_s))
+        }
+        change => format!(
+            "{} the time in force from {} to {}{}",
+            if change == Change::Raise { "raise" } else { "lower" },
+            time(now.give_up_after_s),
+            time(proposal.to_s),
+            if proposal.step_limited { ", the largest step that the guard allows" } else { "" }
+        ),
+    };
+    field(out, page, "Change", &text);
+}
+
+fn doubt(out: &mut String, advice: &Advice, page: Page) {
     let d = &advice.advice;
     let mut parts = Vec::new();
     if let Some([low, high]) = d.interval_s {
@@ -234,11 +240,11 @@ fn doubt(out: &mut String, advice: &Advice) {
         parts.push(format!("the time in force loses {}", say::percent(regret)));
     }
     if !parts.is_empty() {
-        field(out, "Doubt", &parts.join("; "));
+        field(out, page, "Doubt", &parts.join("; "));
     }
 }
 
-fn extras(out: &mut String, advice: &Advice) {
+fn extras(out: &mut String, advice: &Advice, page: Page) {
     let d = &advice.advice;
     if let Some(sticky) = &d.sticky {
         let phi = say::percent(sticky.value);
@@ -248,19 +254,19 @@ fn extras(out: &mut String, advice: &Advice) {
                     .to_owned()
             }
             (_, Some([low, high])) => format!(
-                "one in the data meets the fate of the attempt it replaces {phi} of the time ({} to {})",
+                "in the data, one meets the fate of the attempt it replaces {phi} of the time ({} to {})",
                 say::percent(low),
                 say::percent(high)
             ),
-            _ => format!("by the policy one meets the fate of the attempt it replaces {phi} of the time"),
+            _ => format!("by the policy, one meets the fate of the attempt it replaces {phi} of the time"),
         };
         if let Some(flip) = sticky.flips_at {
             let _ = write!(line, "; from {} on, waiting it out would be best", say::percent(flip));
         }
-        field(out, "Retries", &line);
+        field(out, page, "Retries", &line);
     }
     if !d.schedule_s.is_empty() {
-        field(out, "Schedule", &list(&d.schedule_s));
+        field(out, page, "Schedule", &list(&d.schedule_s));
     }
     if let Some(copy) = &d.second_copy {
         let mut line = format!(
@@ -268,19 +274,19 @@ fn extras(out: &mut String, advice: &Advice) {
             say::duration(copy.start_s),
             say::number(copy.extra_load)
         );
-        let by = |t: Option<f64>| t.map_or("never".to_owned(), |t| format!("by {}", say::duration(t)));
-        let _ = write!(
-            line,
-            "; 99% are then done {}, with a retry of equal load {}",
-            by(copy.p99_s),
-            by(copy.retry_p99_s)
-        );
-        field(out, "Copy", &line);
+        let by = |t: Option<f64>| {
+            t.map_or("fewer than 99% are ever done".to_owned(), |t| {
+                format!("99% are done by {}", say::duration(t))
+            })
+        };
+        let _ = write!(line, ": {}; with a retry of equal load {}", by(copy.p99_s), by(copy.retry_p99_s));
+        field(out, page, "Copy", &line);
     }
     if let Some(look) = &d.look {
         let share = look.share.map(|s| format!(", {} of the traffic for a week", say::percent(s)));
         field(
             out,
+            page,
             "Look",
             &format!(
                 "past the edge of sight: let {} waits{} run from {} to {}; worth it if more than {} of them end by then",
@@ -295,6 +301,7 @@ fn extras(out: &mut String, advice: &Advice) {
     if !d.stop_gap_s.is_empty() {
         field(
             out,
+            page,
             "Stop-gap",
             &format!("until there is evidence, give up in turn after {}", list(&d.stop_gap_s)),
         );

@@ -5,13 +5,14 @@ use std::path::PathBuf;
 use clap::Args;
 
 use super::exit::{Exit, Failure, print};
+use super::layout::Page;
 use super::options::{self, Output};
 use crate::policy;
 
 /// Arguments of `vet`.
 #[derive(Debug, Args)]
 pub(super) struct Vet {
-    /// The policy file
+    /// The policy file; `-` is standard input
     policy: PathBuf,
     /// Say what it means for these streams; for each of its entries if none is named
     #[arg(value_name = "STREAM")]
@@ -26,7 +27,9 @@ impl Vet {
         let policy = options::load_policy(&self.policy)?;
         let streams: Vec<&str> = self.streams.iter().map(String::as_str).collect();
         let description = policy::describe(&policy, &streams);
-        print(&self.format.render(&description, || description.to_string())?)?;
+        print(
+            &self.format.render(&description, || Page::standard_output().lines(&description.to_string()))?,
+        )?;
         Ok(Exit::Well)
     }
 }

@@ -6,17 +6,29 @@ use clap::Args;
 use rayon::prelude::*;
 
 use super::exit::{Exit, Failure, print};
-use super::options::{self, Common, Reading};
+use super::layout::Page;
+use super::options::{Common, Reading};
 use super::{reading, text};
 use crate::advice::{Action, Advice, AdviceSet};
 use crate::advise::Terms;
 use crate::intake::Report;
 use crate::policy::Policy;
 use crate::say;
-use crate::tally::Book;
+use crate::tally::{Book, Day, Days};
+
+const EXAMPLES: &str = "\
+Examples:
+  outwait weigh waits.ndjson more.csv.gz --policy policy.yaml
+  outwait weigh cluster.swf --measure run --stream 'cluster.*' --since 2026-11-01
+  zcat waits.csv.gz | outwait weigh - --stream catalogue.lookup --format json
+
+A wait is a line like {\"stream\":\"catalogue.lookup\",\"elapsed\":0.0183,\"ending\":\"done\"};
+endings are done, failed, gave_up and waiting. Without --policy, OUTWAIT_POLICY may name one.
+Exit codes: 0 well, 2 wrong usage, 3 bad input, 4 not enough evidence anywhere, 5 the system failed.";
 
 /// Arguments of `weigh`.
 #[derive(Debug, Args)]
+#[command(after_help = EXAMPLES)]
 pub(super) struct Weigh {
     #[command(flatten)]
     reading: Reading,
@@ -39,22 +51,46 @@ pub(super) fn answer(
     policy: Option<&Policy>,
     common: &Common,
 ) -> Result<Exit, Failure> {
-    let set = advise(book, report, policy, common.seed);
-    let text = || text::advice_set(&set, options::style());
+    let set = advise(book, report, policy, common);
+    let counted: u64 = set.streams.iter().map(|s| s.evidence.waits).sum();
+    let read: u64 = book.streams().iter().map(|(_, days)| waits(days)).sum();
+    if counted < read {
+        reading::note(&format!(
+            "{} older than the window of their stream (`guard: window`, in days before the newest wait) left out",
+            text::counted(read - counted, "wait")
+        ));
+    }
+    let text = || text::advice_set(&set, Page::standard_output());
     print(&common.format.render(&set, text)?)?;
     let in_the_dark = set.streams.iter().all(|s| s.advice.action == Action::GatherEvidence);
     Ok(if in_the_dark { Exit::NoEvidence } else { Exit::Well })
 }
 
-fn advise(book: &Book, report: &Report, policy: Option<&Policy>, seed: u64) -> AdviceSet {
+/// All waits of a stream.
+fn waits(days: &Days) -> u64 {
+    days.days().iter().flat_map(|(_, tally)| tally.counts()).fold(0, u64::saturating_add)
+}
+
+fn advise(book: &Book, report: &Report, policy: Option<&Policy>, common: &Common) -> AdviceSet {
     let streams = book.streams();
-    let newest = streams.iter().filter_map(|(_, days)| days.last_day()).max();
-    let terms = Terms { policy, newest, seed };
+    // Of all that was read, asked for or not, so that the advice on a stream does not depend on which others are asked
+    // for; but nothing after `--until`, as if the data ended there.
+    let newest =
+        report.newest.map(|newest| common.until.map_or(newest, |until| newest.min(until.next_down())));
+    let day = newest.and_then(|newest| match Day::of(Some(newest)) {
+        Day::Number(day) => Some(day),
+        Day::Undated => None,
+    });
+    let terms = Terms { policy, newest: day, seed: common.seed };
     let suspicions: HashMap<&str, String> =
         report.suspicions.iter().map(|s| (s.stream.as_str(), s.to_string())).collect();
+    let lenders = terms.lenders(&streams);
     let advice: Vec<Advice> = streams
         .par_iter()
-        .map(|(stream, days)| terms.advise(stream, days, suspicions.get(stream).map(String::as_str)))
+        .map(|(stream, days)| {
+            let suspicion = suspicions.get(stream).map(String::as_str);
+            terms.advise_among(stream, days, suspicion, &lenders)
+        })
         .collect();
-    terms.set(advice, report.newest.and_then(say::time))
+    terms.set(advice, newest.and_then(say::time))
 }

@@ -61,12 +61,12 @@ impl Format {
                 return Ok(Format::Swf);
             }
         }
+        if head.contains(&0) {
+            return Err("binary data".into());
+        }
         // A few lines of something else at the head of a log.
         if lines.take(20).any(|line| line.starts_with(b"{")) {
             return Ok(Format::Ndjson);
-        }
-        if head.contains(&0) {
-            return Err("binary data".into());
         }
         let name = name.trim_end_matches(".gz").trim_end_matches(".zst");
         match Path::new(name).extension().and_then(|ending| ending.to_str()) {
@@ -116,6 +116,7 @@ mod tests {
         assert_eq!(detect("who,what\n", "-"), Ok(Format::Csv));
         assert_eq!(detect("[{\"elapsed\":1}]", "waits.ndjson"), Err("a JSON array".into()));
         assert_eq!(detect("\u{1}\0\u{2}", "waits.ndjson"), Err("binary data".into()));
+        assert_eq!(detect("\u{1}\0\n{\u{2}", "waits"), Err("binary data".into()));
         assert_eq!(detect("hello", "-"), Err("a text that begins \"hello\"".into()));
     }
 }

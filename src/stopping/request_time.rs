@@ -204,7 +204,7 @@ impl<'a> RequestTime<'a> {
             for cell in 0..CELLS {
                 let fresh = free[cell] + (1.0 - worth.sticky) * stuck[cell];
                 let left = fresh * odds.gave_up + worth.sticky * stuck[cell];
-                if fresh + left <= 0.0 {
+                if fresh + left <= NEGLIGIBLE {
                     continue;
                 }
                 total[cell] += fresh;

@@ -180,3 +180,70 @@ pub fn cox_snell(sample: &Sample, law: &dyn Law) -> Vec<Residual> {
         sample.censored.iter().map(|m| Residual { residual: hazard(m.age), weight: m.weight, ended: false });
     events.chain(censored).filter(|r| r.residual.is_finite()).collect()
 }
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+    use crate::tail::families::{Exponential, Weibull};
+    use crate::tail::{Family, Gap, fit};
+    use crate::tally::{Interval, Mass};
+
+    fn sample() -> Sample {
+        let ages = [0.2, 0.5, 0.9, 1.4, 1.6, 2.5, 4.0];
+        let events = ages.iter().map(|&t| Interval { over: t, upto: t, weight: 1.0 }).collect();
+        Sample { events, censored: vec![Mass { age: 2.0, weight: 3.0 }], entries: vec![] }
+    }
+
+    #[test]
+    fn weights_by_hand() {
+        // 1, e^-0.6, e^-0.95, e^-1.75, e^-6.9 over their sum 2.1103.
+        let weights = criterion_weights(&[100.0, 101.2, 101.9, 103.5, 113.8, f64::INFINITY], 2.0);
+        for (ours, printed) in weights.iter().zip([0.4739, 0.2601, 0.1833, 0.0823, 0.0005, 0.0]) {
+            assert!((ours - printed).abs() < 1e-4, "{weights:?}");
+        }
+        assert!((weights.iter().sum::<f64>() - 1.0).abs() < 1e-15);
+        assert_eq!(criterion_weights(&[f64::INFINITY], 2.0), [0.0]);
+    }
+
+    /// At the maximum the residuals of a scale family sum to the number of events, exactly.
+    #[test]
+    fn residuals_sum_to_the_events() {
+        let sample = sample();
+        for fit in [fit(&sample, &Exponential).unwrap(), fit(&sample, &Weibull).unwrap()] {
+            let residuals = cox_snell(&sample, fit.law.as_ref());
+            let sum: f64 = residuals.iter().map(|r| r.residual * r.weight).sum();
+            assert!((sum - 7.0).abs() < 1e-6, "{sum}");
+            assert_eq!(residuals.iter().filter(|r| r.ended).count(), 7);
+        }
+    }
+
+    /// An interval's residual is the mean of an exponential between its ends; the whole line's is 1.
+    #[test]
+    fn residuals_of_intervals() {
+        let law = Exponential.law(&[0.0]).unwrap();
+        let residual = |over, upto| {
+            let events = vec![Interval { over, upto, weight: 1.0 }];
+            cox_snell(&Sample { events, ..Sample::default() }, law.as_ref())[0].residual
+        };
+        assert!((residual(0.0, f64::INFINITY) - 1.0).abs() < 1e-12);
+        assert!((residual(2.0, f64::INFINITY) - 3.0).abs() < 1e-12);
+        // ∫_0^1 x e^-x dx / (1 - 1/e) = (1 - 2/e)/(1 - 1/e)
+        let e = std::f64::consts::E;
+        assert!((residual(0.0, 1.0) - (1.0 - 2.0 / e) / (1.0 - 1.0 / e)).abs() < 1e-12);
+        assert!((residual(1.0, 1.0 + 1e-9) - 1.0).abs() < 1e-8);
+    }
+
+    #[test]
+    fn agreement_is_judged_by_size() {
+        let mut fit = fit(&sample(), &Exponential).unwrap();
+        for (gap, waits, agreement) in [
+            (0.25, 10.0, Agreement::Close),
+            (0.25, 1000.0, Agreement::Poor),
+            (0.03, 1e6, Agreement::Fair),
+            (0.019, 1e12, Agreement::Close),
+        ] {
+            fit.largest_gap = Gap { size: gap, at: 1.0 };
+            assert_eq!(Agreement::of(&fit, waits), agreement, "{gap} {waits}");
+        }
+    }
+}

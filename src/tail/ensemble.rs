@@ -36,6 +36,9 @@ const FAMILIES_SHARE: f64 = 0.9;
 const PASS_DECISION: f64 = 0.7;
 const PASS_VERDICT: f64 = 1.0;
 
+/// Share still waiting at the end of sight from which verdicts ask for more certainty, and read trends by AIC.
+pub(crate) const DEEP: f64 = 0.2;
+
 /// Every family's fit to one sample, what it weighs, and draws from its doubt. Ages in seconds.
 #[derive(Debug)]
 pub struct Ensemble {
@@ -125,9 +128,10 @@ pub fn ensemble(sample: &Sample, grid: &Grid, seed: u64) -> Result<Ensemble, Fit
         }
     }
     weigh(&mut members, root_n);
+    let deep = curve.end() >= DEEP;
     let log_ages: Vec<f64> = grid.ages().iter().map(|t| t.ln()).collect();
     for (i, (member, family)) in members.iter_mut().zip(&families).enumerate() {
-        if member.matters() {
+        if member.matters(deep) {
             // A stream of its own for each family: what others weigh changes nothing here.
             let random =
                 Xoshiro256PlusPlus::seed_from_u64(seed ^ (i as u64).wrapping_mul(0x9E37_79B9_7F4A_7C15));
@@ -192,11 +196,11 @@ impl Member {
         }
     }
 
-    /// Whether its draws can move the decision, the tail of an empirical replicate, or a verdict.
-    fn matters(&self) -> bool {
-        [self.weight, self.fit.weight, self.pass * self.by_bic, self.pass * self.by_aic]
-            .into_iter()
-            .any(|w| w > LEAST_WEIGHT)
+    /// Whether its draws can move the decision, the tail of an empirical replicate, or a verdict; `deep` says that
+    /// the last is read by AIC.
+    fn matters(&self, deep: bool) -> bool {
+        let judged = self.pass * if deep { self.by_bic.max(self.by_aic) } else { self.by_bic };
+        [self.weight, self.fit.weight, judged].into_iter().any(|w| w > LEAST_WEIGHT)
     }
 
     /// Leaves no weight to a draw whose curve is not finite; the rest share it.

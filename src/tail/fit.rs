@@ -126,6 +126,20 @@ impl FitError {
 
 /// Fits one family to the observations as they are; the cost grows with the number of distinct ages.
 ///
+/// ```
+/// use outwait::tail::{families::Weibull, fit};
+/// use outwait::tally::{Cause, Cells};
+/// use outwait::wait::{Ending, Wait};
+///
+/// // Hours to failure of 20 units, the test stopped at 500 (NIST/SEMATECH e-Handbook, section 8.4.1.3).
+/// let failed = [54.0, 187.0, 216.0, 240.0, 244.0, 335.0, 361.0, 373.0, 375.0, 386.0];
+/// let mut waits: Vec<Wait> = failed.iter().map(|&t| Wait::new(t, Ending::Done)).collect::<Result<_, _>>()?;
+/// waits.push(Wait::new(500.0, Ending::GaveUp)?.with_count(10)?);
+/// let weibull = fit(&Cells::from_waits(&waits).sample(Cause::Done), &Weibull)?;
+/// assert_eq!(format!("{:.4}", weibull.parameters[0].value), "1.7208");
+/// # Ok::<(), Box<dyn std::error::Error>>(())
+/// ```
+///
 /// # Errors
 /// [`FitError`] where there is no maximum to speak of. A maximum at a limit of the family is not an error: see
 /// [`Fit::stop`].

@@ -407,3 +407,76 @@ fn update(inverse: &mut Symmetric, s: &Point, y: &Point, first: bool) -> bool {
     }
     true
 }
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    fn terrain(n: usize) -> Terrain {
+        Terrain { walls: vec![(-13.8, 13.8); n], curvature: vec![1.0; n], gain: 1e-6 }
+    }
+
+    /// Minus Rosenbrock's valley (1960): the classic of curved ridges.
+    #[test]
+    fn climbs_a_curved_ridge() {
+        let mut f = |x: &[f64], g: &mut [f64]| {
+            let (a, b) = (1.0 - x[0], x[1] - x[0] * x[0]);
+            g[0] = 2.0 * a + 400.0 * x[0] * b;
+            g[1] = -200.0 * b;
+            -(a * a + 100.0 * b * b)
+        };
+        let top = maximise(&mut f, &[-1.2, 1.0], &terrain(2), f64::NEG_INFINITY);
+        assert_eq!(top.stop, Stop::Converged, "{top:?}");
+        assert!(top.value > -1e-8 && (top.at[0] - 1.0).abs() < 1e-4, "{top:?}");
+        // Second derivatives by hand: 802, -400, 200.
+        assert!(
+            (top.information.get(0, 0) - 802.0).abs() < 0.2
+                && (top.information.get(0, 1) + 400.0).abs() < 0.1
+        );
+        assert!(top.evaluations < 80, "{}", top.evaluations);
+    }
+
+    #[test]
+    fn names_what_is_not_a_maximum() {
+        // Rises to a limit: the coordinate runs off.
+        let mut limit = |x: &[f64], g: &mut [f64]| {
+            g[0] = (-x[0]).exp();
+            g[1] = -2.0 * (x[1] - 1.0);
+            -g[0] - (x[1] - 1.0).powi(2)
+        };
+        let top = maximise(&mut limit, &[0.0, 0.0], &terrain(2), f64::NEG_INFINITY);
+        assert_eq!(top.stop, Stop::Boundary { coordinate: 0 }, "{top:?}");
+        assert!(top.value > -1e-4 && (top.at[1] - 1.0).abs() < 1e-3);
+        // A wall in the way.
+        let walled = Terrain { walls: vec![(-1.0, 0.5); 1], curvature: vec![1.0], gain: 1e-6 };
+        let mut hill = |x: &[f64], g: &mut [f64]| {
+            g[0] = -(x[0] - 2.0);
+            -0.5 * (x[0] - 2.0).powi(2)
+        };
+        let top = maximise(&mut hill, &[0.0], &walled, f64::NEG_INFINITY);
+        assert_eq!((top.stop, top.at[0]), (Stop::Boundary { coordinate: 0 }, 0.5));
+        // No value at all; a saddle, exactly.
+        let mut nothing = |_: &[f64], _: &mut [f64]| f64::NAN;
+        assert_eq!(maximise(&mut nothing, &[0.0], &terrain(1), f64::NEG_INFINITY).stop, Stop::NotFinite);
+        let mut saddle = |x: &[f64], g: &mut [f64]| {
+            (g[0], g[1]) = (-2.0 * x[0], 10.0 * x[1]);
+            5.0 * x[1] * x[1] - x[0] * x[0]
+        };
+        assert_eq!(maximise(&mut saddle, &[0.3, 0.0], &terrain(2), f64::NEG_INFINITY).stop, Stop::Stalled);
+    }
+
+    /// A second start far below the first's height is given up soon.
+    #[test]
+    fn gives_up_a_hopeless_start() {
+        let mut slow = |x: &[f64], g: &mut [f64]| {
+            g[0] = -4.0 * (x[0] - 5.0).powi(3);
+            -(x[0] - 5.0).powi(4)
+        };
+        let alone = maximise(&mut slow, &[-5.0], &terrain(1), f64::NEG_INFINITY);
+        let beaten = maximise(&mut slow, &[-5.0], &terrain(1), 1e9);
+        assert!(
+            (alone.at[0] - 5.0).abs() < 0.1 && beaten.evaluations <= PATIENCE + 2,
+            "{alone:?} {beaten:?}"
+        );
+    }
+}

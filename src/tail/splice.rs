@@ -22,6 +22,10 @@ const FEWEST: f64 = 30.0;
 const MOST: f64 = 0.25;
 const MOST_OF_FEW: f64 = 0.5;
 
+/// Largest share of the waits above a threshold that may be left at the end: of a tail that is mostly cut off the
+/// nearest part fits anything.
+const MOST_UNSEEN: f64 = 0.5;
+
 /// Most thresholds tried.
 const CANDIDATES: usize = 16;
 
@@ -95,6 +99,9 @@ pub enum SpliceError {
         /// Endings above it.
         endings: f64,
     },
+    /// More than half of the waits that outlive any high threshold are cut off.
+    #[error("most waits that outlive any high threshold are cut off: the tail is out of sight")]
+    OutOfSight,
     /// The excesses allow no fit.
     #[error("no tail fits the ages beyond {threshold} s: {source}")]
     Unfit {
@@ -106,7 +113,7 @@ pub enum SpliceError {
 }
 
 /// The tail above an automatic threshold: of up to 16 candidates that leave between a quarter of the endings and
-/// 30 of them, the one where the largest gap between the product-limit curve of the excesses and their fitted law
+/// 30 of them and of which at least half is in sight, the one where the largest gap between the product-limit curve of the excesses and their fitted law
 /// is least (Clauset, Shalizi & Newman 2009, section 3.3, with the product-limit curve for the empirical one, so
 /// that censored excesses count). Lower thresholds have more waits and a smaller gap by chance, until the bulk
 /// begins to show.
@@ -122,15 +129,22 @@ pub fn splice(sample: &Sample) -> Result<Splice, SpliceError> {
     let mut above = total;
     let most = (MOST * total).max((2.0 * FEWEST).min(MOST_OF_FEW * total));
     let mut candidates: Vec<f64> = vec![];
+    let mut out_of_sight = false;
     for e in cells.events.iter().filter(|e| e.upto.is_finite()) {
         above -= e.weight;
-        if above <= most && above >= FEWEST && candidates.last().is_none_or(|&c| e.upto > c) {
+        let seen = curve.end() <= MOST_UNSEEN * curve.at(e.upto);
+        out_of_sight |= above <= most && above >= FEWEST && !seen;
+        if above <= most && above >= FEWEST && seen && candidates.last().is_none_or(|&c| e.upto > c) {
             candidates.push(e.upto);
         }
     }
-    let few = || {
+    let none = || {
         let threshold = median(&cells).unwrap_or(0.0);
-        SpliceError::TooFew { threshold, endings: most.floor() }
+        if out_of_sight {
+            SpliceError::OutOfSight
+        } else {
+            SpliceError::TooFew { threshold, endings: most.floor() }
+        }
     };
     let mut tried: Vec<Tried> = vec![];
     // Above a higher threshold a generalised Pareto tail has the same ξ and σ + ξ(u' - u): the next one starts there.
@@ -150,7 +164,7 @@ pub fn splice(sample: &Sample) -> Result<Splice, SpliceError> {
             start = Some((xi, sigma));
         }
     }
-    let best = tried.iter().min_by(|a, b| a.gap.total_cmp(&b.gap)).ok_or_else(few)?;
+    let best = tried.iter().min_by(|a, b| a.gap.total_cmp(&b.gap)).ok_or_else(none)?;
     Ok(Splice { tried: tried.clone(), ..tail_on(&cells, curve, best.threshold)? })
 }
 

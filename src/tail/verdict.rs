@@ -4,7 +4,7 @@
 use statrs::function::erf::erfc;
 
 use super::condense::middle;
-use super::ensemble::{Ensemble, Member};
+use super::ensemble::{DEEP, Ensemble, Member};
 use super::law::TailWeight;
 use super::splice::{Estimate, splice};
 use crate::curve::{TailIndex, TopAges, TopError};
@@ -84,9 +84,8 @@ pub struct Trends {
 const HANGING: (f64, f64) = (4.0, 3.0);
 /// Fewest completions at the top from which a moment estimate is made.
 const FEWEST_AT_TOP: f64 = 10.0;
-/// Depths at which certainty is asked to rise.
+/// Depth at which certainty is first asked to rise; [`DEEP`] is the second.
 const SHALLOW: f64 = 0.05;
-const DEEP: f64 = 0.2;
 /// Fewer completions than this ask for `FEW_BOUND` in any case.
 const FEW: f64 = 500.0;
 const FEW_BOUND: f64 = 0.9;

@@ -82,7 +82,14 @@ impl Ages {
                     self.add(age, 1);
                 }
             }
-            Store::Narrow(h) => mine.record_all(h),
+            Store::Narrow(h) => match mine {
+                // Counter by counter, many times faster than value by value; no counter can exceed the total.
+                Store::Narrow(mine) if mine.len().saturating_add(h.len()) <= u64::from(u32::MAX) => {
+                    // Auto-resizing histograms of one precision always add.
+                    let _ = mine.add(h);
+                }
+                _ => mine.record_all(h),
+            },
             Store::Wide(h) => mine.record_all(h),
         }
     }
@@ -106,9 +113,7 @@ impl Ages {
         if theirs.is_empty() {
             return (mine, theirs);
         }
-        if is_exact(&mine) != is_exact(&theirs) {
-            (mine, theirs) = (binned(&mine), binned(&theirs));
-        }
+        (mine, theirs) = alike(mine, theirs);
         let (mut i, mut j) = (0, 0);
         while i < mine.len() && j < theirs.len() {
             match mine[i].low.total_cmp(&theirs[j].low) {
@@ -251,6 +256,16 @@ fn histogram_bins<C: Counter>(h: &Histogram<C>) -> Vec<Bin> {
             }
         })
         .collect()
+}
+
+/// Two lists in one form: where only one holds exact ages, those go into the bins of the histogram too. Else an exact
+/// age would lie within a bin of the other.
+pub(super) fn alike(one: Vec<Bin>, other: Vec<Bin>) -> (Vec<Bin>, Vec<Bin>) {
+    if one.is_empty() || other.is_empty() || is_exact(&one) == is_exact(&other) {
+        (one, other)
+    } else {
+        (binned(&one), binned(&other))
+    }
 }
 
 fn is_exact(bins: &[Bin]) -> bool {

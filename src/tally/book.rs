@@ -2,6 +2,8 @@
 
 use std::collections::HashMap;
 
+use foldhash::fast::RandomState;
+
 use super::Tally;
 use super::carry::crossings;
 use crate::wait::{Age, StreamError, Wait, check_stream};
@@ -28,7 +30,8 @@ impl Day {
 /// Every stream of a one-shot command, or of one ledger read.
 #[derive(Clone, Debug, Default)]
 pub struct Book {
-    streams: HashMap<String, Days>,
+    /// Looked up for every wait, hence the fast hash; it is seeded, so no writer of names can aim at it.
+    streams: HashMap<String, Days, RandomState>,
 }
 
 /// The tallies of one stream by day.

@@ -98,21 +98,23 @@ impl Cells {
             return self.clone();
         }
         let step = (last / first).ln() / most as f64;
-        let key = |t: f64| ((t / first).ln() / step).floor();
+        let key = |e: &EventCell| ((e.upto / first).ln() / step).floor();
+        let joins = |e: &EventCell| positive(e.upto) && e.over > 0.0 && (e.upto / e.over).ln() <= step;
         let mut joined: Vec<EventCell> = Vec::with_capacity(most + 1);
+        // Of the cell that is being filled; none where nothing may join it.
+        let mut filling = None;
         for e in &self.events {
+            let place = joins(e).then(|| key(e));
             match joined.last_mut() {
-                Some(kept)
-                    if positive(e.upto)
-                        && positive(kept.over)
-                        && key(kept.over.max(first)) == key(e.upto)
-                        && e.over >= kept.over =>
-                {
+                Some(kept) if place.is_some() && place == filling && e.over >= kept.over => {
                     kept.upto = e.upto;
                     kept.done += e.done;
                     kept.failed += e.failed;
                 }
-                _ => joined.push(*e),
+                _ => {
+                    joined.push(*e);
+                    filling = place;
+                }
             }
         }
         Cells { events: joined, ..self.clone() }
@@ -131,6 +133,60 @@ impl Cells {
     /// Number of waits of any ending.
     pub fn total(&self) -> f64 {
         self.totals().iter().sum()
+    }
+
+    /// The same up to the first age at which fewer than `enough` are at risk although late entries make them `enough`
+    /// again further on; all of it where there is no such age, or where less than half of the completions lie before.
+    ///
+    /// In between nobody is watched, and a product-limit curve runs level through it as if nothing could end there. That
+    /// happens where a timer was set lately: old waits are still open, new ones are all cut off, none is between.
+    pub(crate) fn before_gap(self, enough: f64) -> Cells {
+        if self.entries.is_empty() {
+            return self;
+        }
+        let ended = self.events.iter().map(|e| (e.upto, -(e.done + e.failed)));
+        let censored = self.gave_up.iter().chain(&self.waiting).map(|m| (m.age, -m.weight));
+        let entered = self.entries.iter().map(|m| (m.age, m.weight));
+        let mut steps: Vec<(f64, f64)> = ended.chain(censored).chain(entered).collect();
+        // Who leaves at an age was at risk there, who enters is so only after it.
+        steps.sort_by(|a, b| a.0.total_cmp(&b.0).then(a.1.total_cmp(&b.1)));
+        let mut at_risk = -steps.iter().map(|(_, change)| change).sum::<f64>();
+        let mut gap = None;
+        for (age, change) in steps {
+            let before = at_risk;
+            at_risk += change;
+            match gap {
+                None if before >= enough && at_risk < enough => gap = Some((age, at_risk)),
+                Some((from, left)) if at_risk >= enough => {
+                    if age > from {
+                        return self.upto(from, left);
+                    }
+                    gap = None;
+                }
+                Some((from, _)) if age == from => gap = Some((from, at_risk)),
+                _ => {}
+            }
+        }
+        self
+    }
+
+    /// What is known up to an age at which `left` are still open.
+    fn upto(self, age: f64, left: f64) -> Cells {
+        let done: f64 = self.events.iter().filter(|e| e.upto <= age).map(|e| e.done).sum();
+        if done < 0.5 * self.totals()[0] {
+            return self;
+        }
+        let mut cells = self;
+        cells.events.retain(|e| e.upto <= age);
+        for masses in [&mut cells.gave_up, &mut cells.waiting] {
+            masses.retain(|m| m.age <= age);
+        }
+        cells.entries.retain(|m| m.age < age);
+        if left > 0.0 {
+            cells.waiting.push(Mass { age, weight: left });
+            tidy_masses(&mut cells.waiting);
+        }
+        cells
     }
 
     /// The data of one cause: its events, everything else right-censored (METHODS.md section 3).
@@ -228,6 +284,32 @@ mod tests {
         assert_eq!(coarse.totals(), cells.totals());
         assert!(coarse.events.windows(2).all(|w| w[0].upto < w[1].over || w[0].upto <= w[1].over));
         assert_eq!(cells.coarsened(5000), cells);
+    }
+
+    #[test]
+    fn where_nobody_is_watched_the_data_end() {
+        let wait = |age: f64, ending, entered: f64, n| {
+            Wait::new(age, ending).unwrap().with_entered(entered).unwrap().with_count(n).unwrap()
+        };
+        let mut waits = vec![
+            wait(1.0, Ending::Done, 0.0, 60),
+            wait(2.0, Ending::Done, 0.5, 40),
+            wait(2.0, Ending::GaveUp, 0.0, 97),
+            wait(3.0, Ending::GaveUp, 0.0, 3),
+        ];
+        let young = Cells::from_waits(&waits);
+        assert_eq!(young.clone().before_gap(5.0), young);
+        // Old waits, from before the timer of 2 s.
+        waits.extend([wait(40.0, Ending::Waiting, 30.0, 50), wait(35.0, Ending::Done, 28.0, 8)]);
+        let cells = Cells::from_waits(&waits).before_gap(5.0);
+        assert_eq!(cells.totals(), [100.0, 0.0, 97.0, 3.0]);
+        assert_eq!((cells.waiting[0].age, cells.entries.len()), (2.0, 1));
+        // Carried over without a gap: as it was.
+        let whole = [wait(4.0, Ending::Waiting, 0.0, 50), wait(9.0, Ending::Done, 4.0, 50)];
+        assert_eq!(Cells::from_waits(&whole).before_gap(5.0), Cells::from_waits(&whole));
+        // Late entries only: nothing comes before a gap.
+        let late = [wait(9.0, Ending::Done, 8.0, 50)];
+        assert_eq!(Cells::from_waits(&late).before_gap(5.0), Cells::from_waits(&late));
     }
 
     #[test]

@@ -139,8 +139,10 @@ impl Side {
 
     fn cells(&self) -> Cells {
         let mut cells = Cells::default();
-        for (ending, ages) in Ending::ALL.into_iter().zip(&self.ages) {
-            for bin in ages.bins() {
+        let [done, failed, gave_up, waiting] = self.ages.each_ref().map(Ages::bins);
+        let (done, failed) = ages::alike(done, failed);
+        for (ending, bins) in Ending::ALL.into_iter().zip([done, failed, gave_up, waiting]) {
+            for bin in bins {
                 cells.push(bin.low, bin.high, ending, bin.count as f64);
             }
         }

@@ -1,0 +1,112 @@
+//! Pictures as SVG text: data in, markup out, with the same facts in words and as a table. No files, no clock.
+//!
+//! **The visual idea.** Time lies ahead of one who waits. The axis of ages is a path: it starts at a dot (the one
+//! who waits) and ends in an arrow. What is known is drawn firm; what no datum shows is drawn open: a dashed line,
+//! a hatched ground, and the words "sight ends" where it begins. Give-up times are posts beside the path, each
+//! with its own shape: a diamond for the advised time, a square for the time in force, numbered rings for others.
+//!
+//! **Titles state the finding.** A caller gives facts, a chart words the sentence, and [`Svg::title`] and
+//! [`Svg::summary`] carry it with its numbers to those who do not see the picture.
+//!
+//! **Scales.** Ages are drawn on a logarithmic axis where the median would fall into the first twentieth of a
+//! linear one ([`Ages::is_log`]), else from 0; both have marks where people count (1, 2, 5 in ms and s; 1, 5, 15,
+//! 30 min; 1, 6, 12 h; 1, 7, 30 d). Shares are logarithmic where fewer than one in 50 is still waiting at a marked
+//! time, remaining waits where they differ by more than a factor of 30; each says so beside its axis. Rates and
+//! worth are always linear and always show 0.
+//!
+//! **Colour is never the only sign**: line styles, hatches, shapes and words differ too, so the pictures survive a
+//! grey printer. Light colours are plain attributes, dark ones a style sheet under `prefers-color-scheme`, so that
+//! a program which drops style sheets still shows the light picture. The palette is in `ink.rs`.
+//!
+//! **Why the markup is written here.** The SVG writer of plotters 0.3 puts whole-pixel coordinates and one fixed
+//! colour into each element and knows neither classes, dashes, patterns nor text alternatives; its tick finder
+//! counts in tens, not in minutes and hours. What is left to take over is a linear map, so nothing is.
+
+mod age;
+mod bars;
+mod holding;
+mod ink;
+mod panel;
+mod pen;
+mod rate;
+mod remaining;
+mod scale;
+mod sheet;
+mod spark;
+mod text;
+mod trace;
+mod waiting;
+mod week;
+mod words;
+
+pub use age::Ages;
+pub use bars::{Bar, Ranking, Replay, Role, ranking, replay};
+pub use holding::{Holding, holding};
+pub use ink::style;
+pub use rate::{Rate, Rival, rate};
+pub use remaining::{Remaining, remaining};
+pub use sheet::nothing;
+pub use spark::{Spark, spark};
+pub use trace::Point;
+pub use waiting::{Waiting, waiting};
+pub use week::{Week, week};
+pub use words::Quantity;
+
+/// Where a picture goes.
+#[derive(Clone, Copy, Debug, PartialEq)]
+pub struct Frame<'a> {
+    /// Width in CSS pixels; brought into [`Frame::NARROWEST`] to [`Frame::WIDEST`]. The height follows.
+    pub width: u32,
+    /// Starts every id, so that several pictures fit into one page; characters other than ASCII letters, digits,
+    /// `-` and `_` become `-`.
+    pub prefix: &'a str,
+    /// Whether the picture brings its dark colours. Without them, put [`style`] once into the page (or its digest
+    /// into a content-security policy).
+    pub styled: bool,
+}
+
+impl Frame<'_> {
+    /// Least width, px.
+    pub const NARROWEST: u32 = 320;
+    /// Largest width, px.
+    pub const WIDEST: u32 = 1600;
+}
+
+/// Give-up times to mark, s; infinite for never, `None` for nothing to mark.
+#[derive(Clone, Copy, Debug, Default, PartialEq)]
+pub struct Marks {
+    /// What is advised; infinite for waiting it out.
+    pub advised: Option<f64>,
+    /// What is in force.
+    pub in_force: Option<f64>,
+}
+
+impl Marks {
+    /// Without what is no time.
+    fn sound(self) -> Marks {
+        let time = |age: &f64| *age > 0.0;
+        Marks { advised: self.advised.filter(time), in_force: self.in_force.filter(time) }
+    }
+}
+
+/// A picture with its text.
+#[derive(Clone, Debug, PartialEq)]
+pub struct Svg {
+    /// One `<svg>` element; well-formed XML, and fit for being put into HTML as it is.
+    pub markup: String,
+    /// The finding, one sentence.
+    pub title: String,
+    /// The numbers of the picture in sentences, for those who do not see it.
+    pub summary: String,
+    /// The same as a table, to stand under the picture.
+    pub table: Table,
+}
+
+/// A table of texts. Every row is as long as the columns.
+#[derive(Clone, Debug, Default, PartialEq)]
+pub struct Table {
+    /// Heads.
+    pub columns: Vec<&'static str>,
+    /// Cells, the first of each row its head.
+    pub rows: Vec<Vec<String>>,
+}
