@@ -7,6 +7,7 @@ use rand::{RngExt, SeedableRng};
 use rand_xoshiro::Xoshiro256PlusPlus;
 
 use super::bounds::Bounds;
+use super::{Case, History};
 use crate::advice::{Action, Change, Decision, Look, Outcome, Proposal, Rival, SecondCopy, Stickiness};
 use crate::curve::{Empirical, KaplanMeier, LifeTable, PiecewiseHazard};
 use crate::outlook::{Average, Averaging, Grid, Sampled};
@@ -61,6 +62,10 @@ pub(crate) struct Settled {
     pub(crate) regret: Regret,
     /// Regret of the time in force, where one is.
     pub(crate) now: Option<(GiveUp, Regret)>,
+    /// The time proposed before, s, with its regret.
+    standing: Option<(f64, Regret)>,
+    /// Whether the last change is too recent for another.
+    resting: bool,
     /// Expected regret of giving up a little sooner, above that of the choice.
     pub(crate) sooner_costs: f64,
     /// How the load ceiling moved the choice.
@@ -108,9 +113,10 @@ impl Judgement {
         open: &[Mass],
         entry: &Entry,
         bounds: &Bounds,
-        tally: &Tally,
+        case: &Case<'_>,
         seed: u64,
     ) -> Option<Judgement> {
+        let (tally, history) = (case.tally, case.history);
         let coarse = cells.coarsened(MOST_CELLS);
         let table = LifeTable::of(&coarse).ok()?;
         let curve = KaplanMeier::of(&table);
@@ -148,7 +154,8 @@ impl Judgement {
         }
         let sticky = sticky(cells, &tally.retries(), entry, &curve);
         worth.sticky = sticky.as_ref().map_or(0.0, |s| s.value);
-        let scene = Scene { entry, bounds, grid: &grid, worth, retry, empirical: &empirical, sight, tally };
+        let scene =
+            Scene { entry, bounds, grid: &grid, worth, retry, empirical: &empirical, sight, tally, history };
         judgement.outcome = scene.settle(&judgement, &failure, failing.as_ref(), &replicates, sticky);
         Some(judgement)
     }
@@ -255,6 +262,7 @@ struct Scene<'a> {
     empirical: &'a Empirical,
     sight: f64,
     tally: &'a Tally,
+    history: History,
 }
 
 impl Scene<'_> {
@@ -271,6 +279,7 @@ impl Scene<'_> {
         let now = self.entry.now;
         let mut settings: Vec<f64> = rules.iter().map(|(_, t)| *t).collect();
         settings.extend(now.map(GiveUp::seconds));
+        settings.extend(self.history.standing);
         let objective = GridObjective::new(self.grid, &self.worth, &self.retry, &settings)
             .map_err(|error| format!("{error}; {}", error.remedy()))?;
         let mut doubt = Doubt::new(objective);
@@ -342,6 +351,11 @@ impl Scene<'_> {
             wait_it_out,
             choice,
             regret,
+            standing: self.history.standing.and_then(|t| {
+                let number = rules.len() + usize::from(now.is_some());
+                Some((t, doubt.regret_of_setting(number)?))
+            }),
+            resting: self.history.since_change.is_some_and(|t| t < self.entry.guard.cool_down),
             now: now.and_then(|n| Some((n, doubt.regret_of_setting(rules.len())?))),
             sooner_costs: regret_at((at / 1.15).max(self.bounds.floor)) - regret_at(at),
             load,
@@ -565,10 +579,14 @@ impl Settled {
         // What no wait has shown must promise twice as much.
         let unseen = self.at > sight && now < self.at;
         let needed = entry.guard.slack * if unseen { 2.0 } else { 1.0 };
-        if regret.expected - self.regret.expected <= needed {
+        if self.resting || regret.expected - self.regret.expected <= needed {
             return Some(keep);
         }
+        let standing = self
+            .standing
+            .filter(|(_, regret)| regret.expected - self.regret.expected <= entry.guard.hysteresis);
         let goal = match self.wait_it_out {
+            _ if standing.is_some() => standing.map_or(now, |(t, _)| t),
             _ if unseen && self.sides.disagree() => now.max(sight),
             true => f64::INFINITY,
             false => self.at,

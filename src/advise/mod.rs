@@ -41,12 +41,24 @@ pub struct Case<'a> {
     pub suspicion: Option<&'a str>,
     /// First attempts of streams of the same policy entry, from which a stream with few waits may borrow.
     pub siblings: &'a [&'a Cells],
+    /// What was proposed and changed before.
+    pub history: History,
+}
+
+/// What is remembered of a stream's give-up time; nothing unless said.
+#[derive(Clone, Copy, Debug, Default, PartialEq)]
+pub struct History {
+    /// The time that was proposed last, s, infinite for never: another replaces it only for more than the guard's
+    /// `hysteresis`.
+    pub standing: Option<f64>,
+    /// How long ago the time in force was changed, s: no change is proposed before the guard's `cool_down` is over.
+    pub since_change: Option<f64>,
 }
 
 impl<'a> Case<'a> {
     /// A stream and its waits, nothing else.
     pub fn new(stream: &'a str, tally: &'a Tally) -> Case<'a> {
-        Case { stream, tally, periods: None, suspicion: None, siblings: &[] }
+        Case { stream, tally, periods: None, suspicion: None, siblings: &[], history: History::default() }
     }
 }
 
@@ -89,7 +101,7 @@ pub fn advise(case: &Case<'_>, entry: &Entry, seed: u64) -> Advice {
     let bounds = Bounds::of(&cells, entry);
     let judgement = match &bounds {
         Some(bounds) if cells.totals()[0] >= LEAST_COMPLETIONS => {
-            Judgement::of(&cells, &open, entry, bounds, case.tally, seed)
+            Judgement::of(&cells, &open, entry, bounds, case, seed)
         }
         _ => None,
     };

@@ -3,7 +3,7 @@
 use std::collections::HashMap;
 
 use super::pool::{MOST_SIBLINGS, SIBLING_CELLS};
-use super::{Case, advise, caution};
+use super::{Case, History, advise, caution};
 use crate::advice::{Advice, AdviceSet, Caution, SCHEMA};
 use crate::policy::{Entry, GiveUp, Jitter, Policy};
 use crate::say;
@@ -67,6 +67,7 @@ impl Terms<'_> {
             periods: periods.as_ref().map(|(earlier, latest)| (earlier, latest)),
             suspicion,
             siblings: &siblings,
+            history: History::default(),
         };
         advise(&case, &entry, self.seed ^ name_hash(stream))
     }

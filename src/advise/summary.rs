@@ -1,5 +1,7 @@
 //! The judgement in the words and plain data of an advice.
 
+use std::fmt::Write;
+
 use serde_json::{Map, Value};
 
 use super::judge::{Judgement, LoadCeiling, Settled};
@@ -65,6 +67,14 @@ fn reason(verdict: &Verdict) -> String {
                 say::number(moment.standard_error)
             ));
         }
+    }
+    if let Some((xi, threshold)) = &verdict.xi {
+        let _ = write!(
+            reason,
+            "; a generalised Pareto tail fits best from {} on, with a tail index of {}",
+            say::duration(*threshold),
+            say::number(xi.value)
+        );
     }
     if verdict.depth >= 0.05 {
         reason.push_str(&format!(

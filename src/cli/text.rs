@@ -265,6 +265,10 @@ fn extras(out: &mut String, advice: &Advice, page: Page) {
         }
         field(out, page, "Retries", &line);
     }
+    if let Some(budget) = d.retry_budget.filter(|&b| b > 0.0) {
+        let text = format!("a throttle must let through {} retries a request", say::number(budget));
+        field(out, page, "Budget", &text);
+    }
     if !d.schedule_s.is_empty() {
         field(out, page, "Schedule", &list(&d.schedule_s));
     }
@@ -289,12 +293,14 @@ fn extras(out: &mut String, advice: &Advice, page: Page) {
             page,
             "Look",
             &format!(
-                "past the edge of sight: let {} waits{} run from {} to {}; worth it if more than {} of them end by then",
+                "past the edge of sight: let {} waits{} run from {} to {}; worth it if more than {} of them end by then; \
+                 each that does not costs {} of worth",
                 say::count(look.waits_needed),
                 share.unwrap_or_default(),
                 say::duration(look.from_s),
                 say::duration(look.to_s),
-                say::percent(look.break_even)
+                say::percent(look.break_even),
+                say::number(look.worst_cost_each)
             ),
         );
     }

@@ -1,6 +1,6 @@
 //! Fernhollow, an invented network of lending libraries: a scenario whose true laws are known.
 //!
-//! [`Scenario`] turns a seed into [`DemoRecord`]s, [`truth`] says what was put in and which give-up time would be
+//! [`Scenario`] turns a seed into [`DemoRecord`]s, [`truth()`] says what was put in and which give-up time would be
 //! right; both are pure. Only `write.rs` touches files. Nothing here describes a real library.
 
 mod fernhollow;

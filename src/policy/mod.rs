@@ -2,7 +2,7 @@
 //!
 //! In: the text of a YAML file. Out: a [`Policy`], an [`Entry`] for every pattern of streams with all defaults
 //! filled in, and [`Warning`]s; or a [`PolicyError`] with everything that is wrong, where, and what to do about it.
-//! [`describe`] says in sentences what a policy means. No files, no clock.
+//! [`describe()`] says in sentences what a policy means. No files, no clock.
 //!
 //! ```
 //! let policy = outwait::policy::parse("version: 1\nstreams: [{match: 'scan.*', aim: finish}]", "p.yaml").unwrap();

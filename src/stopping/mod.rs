@@ -7,7 +7,7 @@
 //! | question | answer |
 //! |---|---|
 //! | What does a give-up time earn? | [`Objective`]; on a grid, for thousands of curves, [`GridObjective`] |
-//! | Which earns the most, and what is as good? | [`best`], [`band`]; under a deadline [`Deadline`] |
+//! | Which earns the most, and what is as good? | [`best`], [`band()`]; under a deadline [`Deadline`] |
 //! | Is holding on worth it for a wait that is open now? | [`Holding`] |
 //! | What do retries add, and how long does a request take? | [`Retry::request`], [`RequestTime`], [`FarTail`] |
 //! | Do retries meet the same fate? | [`stickiness`], [`flips_at`] |
