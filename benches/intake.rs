@@ -14,7 +14,7 @@ use std::time::Duration;
 
 use criterion::{Criterion, Throughput, criterion_group, criterion_main};
 use hdrhistogram::Histogram;
-use outwait::intake::{Options, Record, Selector, Sink, Source, read};
+use outwait::intake::{Options, Record, Sink, Source, read};
 use outwait::wait::{Age, Ending, Wait};
 use rand::{RngExt, SeedableRng};
 use rand_xoshiro::Xoshiro256PlusPlus;
@@ -127,7 +127,7 @@ fn bare_csv(bytes: &[u8]) -> f64 {
 fn ours(bytes: &'static [u8], threads: usize) -> Histograms {
     let options = Options {
         threads: NonZeroUsize::new(threads),
-        streams: Some(Selector::new("*").unwrap()),
+        streams: Some(outwait::glob::Glob::new("*").unwrap()),
         ..Options::default()
     };
     let source = Source::reader("bench", bytes);

@@ -9,6 +9,7 @@ pub mod chart;
 pub mod cli;
 pub mod curve;
 pub mod demo;
+pub mod glob;
 pub mod intake;
 pub mod numeric;
 pub mod outlook;

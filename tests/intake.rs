@@ -9,8 +9,7 @@ use std::sync::Arc;
 use std::sync::atomic::{AtomicU64, Ordering};
 
 use outwait::intake::{
-    Allowed, Because, Format, HeaderError, IntakeError, Measure, Options, Record, Report, Selector, Sink,
-    Source, read,
+    Allowed, Because, Format, HeaderError, IntakeError, Measure, Options, Record, Report, Sink, Source, read,
 };
 use outwait::wait::{Age, Ending, Wait};
 use proptest::prelude::*;
@@ -410,7 +409,7 @@ fn headers_that_cannot_be_used() {
     let error = read_bytes("w.csv", "stream,elapsd\ns,1\n", &one_thread()).unwrap_err().to_string();
     assert!(error.contains("no column `elapsed`; the nearest is \"elapsd\""), "{error}");
     // Without a stream's column the name must come from elsewhere.
-    let named = Options { streams: Some(Selector::new("s").unwrap()), ..one_thread() };
+    let named = Options { streams: Some(outwait::glob::Glob::new("s").unwrap()), ..one_thread() };
     assert_eq!(read_bytes("w.csv", "elapsed\n1\n", &named).unwrap().0.streams(), ["s"]);
 }
 
@@ -541,7 +540,7 @@ fn a_name_names_and_filters_and_a_pattern_filters() {
     let text = "{\"stream\":\"catalogue.lookup\",\"elapsed\":1}\n\
                 {\"stream\":\"courier.slots\",\"elapsed\":2}\n\
                 {\"elapsed\":3}";
-    let select = |pattern| Options { streams: Some(Selector::new(pattern).unwrap()), ..lenient() };
+    let select = |pattern| Options { streams: Some(outwait::glob::Glob::new(pattern).unwrap()), ..lenient() };
     let (kept, report) = read_bytes("waits", text, &select("catalogue.*")).unwrap();
     assert_eq!((kept.ages(), report.left_out.other_streams, report.bad.count), (vec![1.0], 1, 1));
     let (kept, report) = read_bytes("waits", text, &select("courier.slots")).unwrap();
@@ -883,7 +882,7 @@ proptest! {
             format!("{{{}}}\n", members.join(","))
         };
         let text: String = records.iter().map(line).collect();
-        let options = Options { streams: Some(Selector::new("a").unwrap()), ..lenient() };
+        let options = Options { streams: Some(outwait::glob::Glob::new("a").unwrap()), ..lenient() };
         let report = match read_bytes("x.ndjson", text, &options) {
             Ok((_, report)) => report,
             Err(IntakeError::NoWaits { report }) => *report,

@@ -13,7 +13,7 @@ mod support;
 use outwait::advice::{Action, Advice, RemainingWait, TailClass};
 use outwait::advise::{Case, Terms, advise};
 use outwait::curve::{KaplanMeier, LifeTable};
-use outwait::intake::{self, Allowed, IntakeError, Measure, Options, Record, Report, Selector, Sink, Source};
+use outwait::intake::{self, Allowed, IntakeError, Measure, Options, Record, Report, Sink, Source};
 use outwait::policy::Entry;
 use outwait::tally::{Book, Cells};
 
@@ -35,7 +35,7 @@ impl Sink for Counting {
 fn read(file: &str, name: Option<&str>, measure: Measure) -> Option<(Book, Report)> {
     let path = support::reference_path("data", file)?;
     let options = Options {
-        streams: name.map(|n| Selector::new(n).unwrap()),
+        streams: name.map(|n| outwait::glob::Glob::new(n).unwrap()),
         measure,
         bad_lines: Allowed::All,
         ..Options::default()

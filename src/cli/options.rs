@@ -9,7 +9,8 @@ use anyhow::Context;
 use clap::{Args, ValueEnum};
 
 use super::exit::{Exit, Failure, OrExit};
-use crate::intake::{Allowed, Format, Measure, Options, Selector};
+use crate::glob::Glob;
+use crate::intake::{Allowed, Format, Measure, Options};
 use crate::policy::{self, Policy};
 
 /// How output is written.
@@ -61,7 +62,7 @@ pub(super) struct Common {
     pub(super) until: Option<f64>,
     /// Only these streams (`*` any run of characters, `?` one); a plain name also names records that have none
     #[arg(long, value_name = "GLOB", value_parser = selector)]
-    pub(super) stream: Option<Selector>,
+    pub(super) stream: Option<Glob>,
     /// Seed of everything drawn: the same seed gives the same bytes
     #[arg(long, value_name = "N", default_value_t = 1, value_parser = seed, allow_negative_numbers = true)]
     pub(super) seed: u64,
@@ -191,8 +192,8 @@ fn stream_name(text: &str) -> Result<String, String> {
     }
 }
 
-fn selector(text: &str) -> Result<Selector, String> {
-    Selector::new(text).map_err(|error| format!("{error}; {}", error.remedy()))
+fn selector(text: &str) -> Result<Glob, String> {
+    Glob::new(text).map_err(|error| format!("it {error}; use letters, digits and . _ - / : with `*` and `?`"))
 }
 
 fn bad_lines(text: &str) -> Result<Allowed, String> {

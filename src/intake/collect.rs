@@ -7,7 +7,8 @@ use super::pairs::Halves;
 use super::record::{Fields, Made, Record, make};
 use super::report::EXAMPLES;
 use super::streams::Streams;
-use super::{Options, Selector, Sink};
+use super::{Options, Sink};
+use crate::glob::Glob;
 
 /// What a block leaves behind once its waits are in the sink.
 #[derive(Debug)]
@@ -75,7 +76,7 @@ impl<'w, S: Sink> Collector<'w, S> {
     }
 
     pub(super) fn nameless(&self) -> Option<&'w str> {
-        self.one_stream().or_else(|| self.options.streams.as_ref().and_then(Selector::name))
+        self.one_stream().or_else(|| self.options.streams.as_ref().and_then(Glob::literal))
     }
 
     /// The stream of every record, where one was asked for.

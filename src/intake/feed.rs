@@ -8,7 +8,8 @@ use super::blocks::{Blocks, Found, Records, count_lines};
 use super::csv::Columns;
 use super::error::{HeaderError, IntakeError};
 use super::source::{Packing, Source, Unpacked};
-use super::{Format, Options, Selector, csv, swf};
+use super::{Format, Options, csv, swf};
+use crate::glob::Glob;
 
 /// One block of one input.
 pub(super) struct Task {
@@ -161,7 +162,8 @@ fn open(
             let header = blocks.first_record(Records::Rows { delimiter }).unwrap_or_default();
             let length = header.len();
             let columns = if (1..=options.line_bytes).contains(&length) {
-                let named = options.streams.as_ref().and_then(Selector::name).is_some();
+                let named = options.one_stream.is_some()
+                    || options.streams.as_ref().and_then(Glob::literal).is_some();
                 Columns::from_header(header, delimiter, named)
             } else {
                 Err(HeaderError::Long { limit: options.line_bytes })

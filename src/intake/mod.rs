@@ -45,12 +45,13 @@ mod pairs;
 mod read;
 mod record;
 mod report;
-mod select;
 mod source;
 mod streams;
 mod swf;
 
 use std::num::NonZeroUsize;
+
+use crate::glob::Glob;
 
 pub use error::{HeaderError, IntakeError};
 pub use format::Format;
@@ -60,7 +61,6 @@ pub use report::{
     BadCount, BadLine, BadLines, Because, COMMENTS, Comment, EXAMPLES, FileReport, LeftOut, PairsReport,
     Report, Suspicion,
 };
-pub use select::{Selector, glob};
 pub use source::Source;
 
 /// What takes the waits.
@@ -85,7 +85,7 @@ pub struct Options {
     /// The format of every input; `None`: found out for each.
     pub format: Option<Format>,
     /// The streams wanted, and the name of records that have none; `None`: all, and each must have one.
-    pub streams: Option<Selector>,
+    pub streams: Option<Glob>,
     /// One stream for all records, whatever they call theirs; a name there is then not even looked at.
     pub one_stream: Option<String>,
     /// Which time of a job log is the wait.

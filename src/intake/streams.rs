@@ -5,8 +5,8 @@ use std::collections::HashMap;
 
 use foldhash::fast::RandomState;
 
-use super::Selector;
 use super::report::{Because, Suspicion};
+use crate::glob::Glob;
 use crate::wait::{Age, Ending, StreamError, Wait, check_stream};
 
 /// Streams seen by one worker. Merging is exact and commutative.
@@ -49,16 +49,12 @@ impl Ages {
 impl Streams {
     /// The stream of that name, checked when first met.
     #[inline]
-    pub(super) fn enter(
-        &mut self,
-        name: &str,
-        selector: Option<&Selector>,
-    ) -> Result<&mut Stream, StreamError> {
+    pub(super) fn enter(&mut self, name: &str, selector: Option<&Glob>) -> Result<&mut Stream, StreamError> {
         let place = match self.places.get(name) {
             Some(&place) => place,
             None => {
                 check_stream(name)?;
-                self.add(name.into(), Stream::new(selector.is_none_or(|selector| selector.admits(name))))
+                self.add(name.into(), Stream::new(selector.is_none_or(|selector| selector.matches(name))))
             }
         };
         Ok(&mut self.streams[place])

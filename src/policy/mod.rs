@@ -17,17 +17,16 @@ mod check;
 mod describe;
 mod entry;
 mod finding;
-mod glob;
 mod keys;
 mod read;
 mod scalar;
 mod schema;
 mod tree;
 
+pub use crate::glob::{Glob, GlobError};
 pub use describe::{Description, Endings, Settings, Subject, describe};
 pub use entry::{Backoff, Entry, GiveUp, Guard, Jitter, Kind, NO_COST_OF_TIME, Policy, Retry, Sticky};
 pub use finding::{Concern, Fault, Finding, Flaw, Place, PolicyError, Problem, Remedy, Slip, Warning};
-pub use glob::{Glob, GlobError};
 pub use keys::{
     DEFAULT_BACKOFF_FACTOR, DEFAULT_COOL_DOWN, DEFAULT_DEADLINE_ATTEMPTS, DEFAULT_EVIDENCE,
     DEFAULT_HYSTERESIS, DEFAULT_KIND, DEFAULT_LARGEST_STEP, DEFAULT_SLACK, DEFAULT_WINDOW, KEYS, Key,

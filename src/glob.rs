@@ -6,7 +6,7 @@ use std::fmt;
 /// A checked pattern of stream names. At most [`MAX_STREAM_BYTES`] bytes.
 ///
 /// ```
-/// use outwait::policy::Glob;
+/// use outwait::glob::Glob;
 /// let glob = Glob::new("catalogue.*").unwrap();
 /// assert!(glob.matches("catalogue.lookup"));
 /// assert!(!glob.matches("scan.job"));
