@@ -132,7 +132,7 @@ fn bank_calls() {
         ("IN", After(545.0), Undecided, Flat),
         ("NE", Out, Light, Flat),
         ("NW", Out, Undecided, Open),
-        ("PE", After(179.0), Undecided, Open),
+        ("PE", After(112.0), Undecided, Open),
         ("PS", Out, Heavy, Growing),
         ("TT", After(205.0), Undecided, Flat),
     ];
@@ -178,7 +178,7 @@ fn hpc2n_queue() {
 /// would act on it before the policy says what they are worth.
 #[test]
 fn hpc2n_runs() {
-    let rows = [("partition-1", After(71.0), Heavy, Growing)];
+    let rows = [("partition-1", After(73.0), Heavy, Open)];
     check("hpc2n_2002_first_jobs.swf", None, Measure::Run, (3_145, 0), &rows);
 }
 
@@ -210,7 +210,7 @@ fn names_that_are_none() {
 /// Run times of system staff (half within a minute) and of users (half within two, the mean a quarter of an hour).
 #[test]
 fn nasa_ipsc_1993_runtimes() {
-    let rows = [("system", After(107.0), Heavy, Growing), ("users", After(44.0), Heavy, Growing)];
+    let rows = [("system", After(107.0), Heavy, Growing), ("users", After(62.0), Heavy, Growing)];
     check("nasa_ipsc_1993_runtimes.csv", None, Measure::Wait, (18_066, 173), &rows);
 }
 
@@ -269,9 +269,9 @@ fn unemployment_spells() {
     check("unemployment_spells.csv", None, Measure::Wait, (3_343, 0), &rows);
 }
 
-/// Lives of flies: a hazard that rises. Nobody would wish them over; the verdict is what counts.
+/// Lives of flies: a hazard that rises. Nobody would wish them over; the verdict is what counts. 112 days lie past the longest life.
 #[test]
 fn waltons_flies() {
-    let rows = [("control", Out, Light, Shrinking), ("miR-137", Out, Undecided, Open)];
+    let rows = [("control", Out, Light, Shrinking), ("miR-137", After(112.0), Undecided, Open)];
     check("waltons_flies.csv", None, Measure::Wait, (163, 0), &rows);
 }
