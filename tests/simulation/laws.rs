@@ -37,8 +37,8 @@ fn lognormal(t: f64, median: f64, sigma: f64) -> f64 {
     normal_tail((t / median).ln() / sigma)
 }
 
-/// Sixteen laws: light and heavy, one bulk and two, with a share that never ends, with a least time, with failures,
-/// and two that are in no fitted family (Fréchet; a uniform bulk with a late atom's worth of normal).
+/// Sixteen laws: light and heavy, one bulk and two, with a share that never ends, with a least time, with failures, and one
+/// that is in no fitted family (Fréchet).
 pub(crate) const LAWS: [Law; 16] = [
     Law { name: "exponential", survival: |t| (-LN_2 * t).exp(), failing: 0.0, pause: 0.2, heavy: false },
     Law {
