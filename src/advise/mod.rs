@@ -3,14 +3,18 @@
 
 mod bounds;
 mod cautions;
+mod curves;
 mod judge;
 mod pool;
 mod shift;
 mod streams;
+mod study;
 mod summary;
 
+pub use curves::{CURVE_SCHEMA, CurvePoint, Curves, Mark};
 pub use shift::Shift;
 pub use streams::{Lenders, Terms};
+pub use study::{Study, WHAT_IF_SCHEMA, WhatIf, WhatIfError};
 
 use crate::advice::{Action, Advice, Caution, Decision, Evidence, RemainingWait, Tail, TailClass};
 use crate::curve::ENOUGH;
@@ -82,6 +86,24 @@ impl<'a> Case<'a> {
 /// # Ok::<(), outwait::wait::WaitError>(())
 /// ```
 pub fn advise(case: &Case<'_>, entry: &Entry, seed: u64) -> Advice {
+    study(case, entry, seed).into_advice()
+}
+
+/// The curves behind the advice on one stream, over a grid of ages.
+pub fn curves(case: &Case<'_>, entry: &Entry, seed: u64) -> Curves {
+    study(case, entry, seed).curves()
+}
+
+/// What a give-up time (s, infinite for never) would do, set against the time in force and the advised one.
+///
+/// # Errors
+/// [`WhatIfError`]: no time, or no curve to judge it by.
+pub fn what_if(case: &Case<'_>, entry: &Entry, seed: u64, give_up_after: f64) -> Result<WhatIf, WhatIfError> {
+    study(case, entry, seed).what_if(give_up_after)
+}
+
+/// The advice on one stream with what it rests on, for more than one question about it.
+pub fn study(case: &Case<'_>, entry: &Entry, seed: u64) -> Study {
     let own = case.tally.first_attempts();
     // Before the data are cut where nobody is watched: what hangs is older than that.
     let open = own.waiting.clone();
@@ -124,7 +146,7 @@ pub fn advise(case: &Case<'_>, entry: &Entry, seed: u64) -> Advice {
     if let Some(pooled) = &pooled {
         advice.cautions.push(cautions::borrowed(pooled));
     }
-    advice
+    Study { advice, cells, entry: entry.clone(), bounds, judgement }
 }
 
 /// The action, and everything that goes with it.

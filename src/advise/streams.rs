@@ -3,7 +3,7 @@
 use std::collections::HashMap;
 
 use super::pool::{MOST_SIBLINGS, SIBLING_CELLS};
-use super::{Case, History, advise, caution};
+use super::{Case, History, Study, caution, study};
 use crate::advice::{Advice, AdviceSet, Caution, SCHEMA};
 use crate::policy::{Entry, GiveUp, Jitter, Policy};
 use crate::say;
@@ -50,6 +50,17 @@ impl Terms<'_> {
         suspicion: Option<&str>,
         lenders: &Lenders,
     ) -> Advice {
+        self.study_among(stream, days, suspicion, lenders).into_advice()
+    }
+
+    /// The same with what the advice rests on.
+    pub fn study_among(
+        &self,
+        stream: &str,
+        days: &Days,
+        suspicion: Option<&str>,
+        lenders: &Lenders,
+    ) -> Study {
         let entry = self.entry(stream);
         let opening = self.opening(&entry);
         let tally = days.since(opening);
@@ -69,7 +80,7 @@ impl Terms<'_> {
             siblings: &siblings,
             history: History::default(),
         };
-        advise(&case, &entry, self.seed ^ name_hash(stream))
+        study(&case, &entry, self.seed ^ name_hash(stream))
     }
 
     /// First day of an entry's window.
