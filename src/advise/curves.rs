@@ -57,6 +57,9 @@ pub struct Curves {
     pub rivals: Vec<Rival>,
     /// Does the remaining wait grow or shrink?
     pub remaining_wait: RemainingWait,
+    /// The further wait is counted up to this age, s: the ceiling, where no end is to be expected at some age; absent where
+    /// it is counted to its end.
+    pub remaining_upto_s: Option<f64>,
     /// Last age about which the data speak, s; past it the curves are assumptions.
     pub sight_s: Option<f64>,
     /// Age by which one in 100 has ended, s.
@@ -99,8 +102,8 @@ pub struct CurvePoint {
     pub hazard_per_s: Option<f64>,
     /// Its band.
     pub hazard_band_per_s: Option<[f64; 2]>,
-    /// Further wait to expect, s: the middle over all that the data leave open. Absent where no end is to be expected, and
-    /// without laws.
+    /// Further wait to expect, s: the middle over all that the data leave open. Absent where no end is to be expected, at
+    /// or past [`Curves::remaining_upto_s`], and without laws.
     pub remaining_s: Option<f64>,
     /// Its band; an end that is absent is endless.
     pub remaining_band_s: Option<[Option<f64>; 2]>,
@@ -132,6 +135,7 @@ impl Study {
             band_s: decision.band_s,
             rivals: decision.rivals.clone(),
             remaining_wait: advice.tail.remaining_wait,
+            remaining_upto_s: None,
             sight_s: None,
             start_s: None,
             median_s: None,
@@ -149,11 +153,19 @@ impl Study {
         curves.start_s = waiting.age_of(1.0 - FIRST);
         curves.median_s = waiting.age_of(0.5);
         let hazard = SmoothedHazard::of(&table);
+        let endless = |laws: &Laws<'_>| {
+            let seen = ages.iter().filter(|age| **age <= waiting.sight);
+            seen.filter_map(|&age| laws.remaining(age, f64::INFINITY))
+                .any(|[_, middle, _]| middle.is_infinite())
+        };
+        curves.remaining_upto_s =
+            self.bounds.as_ref().map(|b| b.ceiling).filter(|_| laws.as_ref().is_some_and(endless));
+        let upto = curves.remaining_upto_s.unwrap_or(f64::INFINITY);
         curves.points = ages
             .into_iter()
             .map(|age| {
                 let hazard = hazard.at(age).filter(|h| h.hazard.is_finite());
-                let remaining = laws.as_ref().and_then(|laws| laws.remaining(age));
+                let remaining = laws.as_ref().and_then(|laws| laws.remaining(age, upto));
                 CurvePoint {
                     age_s: age,
                     survival: waiting.survival(age),
@@ -280,16 +292,24 @@ impl Laws<'_> {
         mean.is_finite().then(|| [quantile(tail).min(mean), mean, quantile(1.0 - tail).max(mean)])
     }
 
-    /// The wait still to come at an age, s: low, middle and high; infinite where it is endless.
-    fn remaining(&self, t: f64) -> Option<[f64; 3]> {
+    /// The wait still to come at an age, s, as far as it lies before `upto`: low, middle and high; infinite where it is
+    /// endless.
+    fn remaining(&self, t: f64, upto: f64) -> Option<[f64; 3]> {
         let end = self.ages[self.ages.len() - 1];
+        if t >= upto {
+            return None;
+        }
         let mut waits: Vec<(f64, f64)> = self
             .lines
             .iter()
             .filter_map(|line| {
                 let (survival, rest) = line.at(self.ages, t);
                 let beyond = line.survival[line.survival.len() - 1] * end;
-                let wait = if beyond > ENDLESS * rest { f64::INFINITY } else { rest / survival };
+                let wait = match upto.is_finite() {
+                    true => (rest - line.at(self.ages, upto).1) / survival,
+                    false if beyond > ENDLESS * rest => f64::INFINITY,
+                    false => rest / survival,
+                };
                 (survival > 0.0 && !wait.is_nan()).then_some((wait, line.weight))
             })
             .collect();

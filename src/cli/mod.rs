@@ -2,8 +2,10 @@
 
 mod demo;
 mod exit;
+mod files;
 mod layout;
 mod options;
+mod pictures;
 mod reading;
 mod text;
 mod vet;

@@ -25,7 +25,7 @@ pub(super) fn advice_set(set: &AdviceSet, page: Page) -> String {
 }
 
 /// How many streams get which advice, and where most is lost.
-fn summary(set: &AdviceSet) -> String {
+pub(super) fn summary(set: &AdviceSet) -> String {
     let waits: u64 = set.streams.iter().map(|s| s.evidence.waits).sum();
     let n = set.streams.len();
     if n == 0 {
@@ -112,7 +112,8 @@ fn verdict(advice: &Advice) -> String {
     format!("{tail}; {wait}")
 }
 
-fn headline(advice: &Advice) -> String {
+/// What to do, in a line.
+pub(super) fn headline(advice: &Advice) -> String {
     let d = &advice.advice;
     match d.action {
         Action::GiveUpAfter => match d.give_up_after_s {
