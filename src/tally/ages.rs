@@ -9,17 +9,17 @@ use hdrhistogram::{Counter, Histogram};
 pub const EXACT_AGES: usize = 4096;
 
 /// Significant decimal digits of the histogram: bins at most 0.1% wide.
-const DIGITS: u8 = 3;
+pub(super) const DIGITS: u8 = 3;
 
 /// Ticks per second of the histogram: 1 µs.
-const TICKS: f64 = 1e6;
+pub(super) const TICKS: f64 = 1e6;
 
 /// Counted ages, s. Empty costs one word.
 #[derive(Clone, Debug, Default)]
-pub struct Ages(Option<Box<Store>>);
+pub struct Ages(pub(super) Option<Box<Store>>);
 
 #[derive(Clone, Debug)]
-enum Store {
+pub(super) enum Store {
     /// `grouped` is sorted and distinct, at most [`EXACT_AGES`] long; `loose` waits to be grouped, each counting 1.
     Few {
         grouped: Vec<(f64, u64)>,
@@ -73,8 +73,19 @@ impl Ages {
             self.0 = other.0.clone();
             return;
         };
-        match theirs {
-            Store::Few { grouped, loose } => {
+        match (&mut *mine, theirs) {
+            // Two histograms of one counter add up array to array. Neither can fail: they resize by themselves.
+            (Store::Narrow(h), Store::Narrow(other))
+                if h.len().saturating_add(other.len()) <= u64::from(u32::MAX) =>
+            {
+                let _ = h.add(other);
+            }
+            (Store::Wide(h), Store::Wide(other)) => {
+                let _ = h.add(other);
+            }
+            (_, Store::Narrow(other)) => mine.record_all(other),
+            (_, Store::Wide(other)) => mine.record_all(other),
+            (_, Store::Few { grouped, loose }) => {
                 for &(age, count) in grouped {
                     self.add(age, count);
                 }
@@ -82,8 +93,6 @@ impl Ages {
                     self.add(age, 1);
                 }
             }
-            Store::Narrow(h) => mine.record_all(h),
-            Store::Wide(h) => mine.record_all(h),
         }
     }
 
@@ -157,7 +166,7 @@ impl Store {
         }
     }
 
-    fn settled(&self) -> std::borrow::Cow<'_, Store> {
+    pub(super) fn settled(&self) -> std::borrow::Cow<'_, Store> {
         match self {
             Store::Few { loose, .. } if !loose.is_empty() => {
                 let mut copy = self.clone();
@@ -169,7 +178,7 @@ impl Store {
     }
 
     #[inline]
-    fn record(&mut self, tick: u64, count: u64) {
+    pub(super) fn record(&mut self, tick: u64, count: u64) {
         if let Store::Narrow(h) = self {
             // No counter can exceed the total, so 32 bits suffice while the total fits them.
             if h.len().saturating_add(count) <= u64::from(u32::MAX) {

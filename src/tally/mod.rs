@@ -6,11 +6,14 @@ mod ages;
 mod book;
 mod buckets;
 mod cells;
+mod encode;
+mod waits;
 
 pub use ages::{Ages, Bin, EXACT_AGES};
 pub use book::{Book, Day, Days};
 pub use buckets::{Buckets, MOST_BUCKETS};
 pub use cells::{Cause, Cells, EventCell, Interval, Mass, Sample};
+pub use encode::{DecodeError, TALLY_VERSION};
 
 use crate::wait::{Age, Ending, Wait};
 

@@ -1,0 +1,6 @@
+//! What was acknowledged is counted once: in memory and on disk, through crashes, full disks and damaged files.
+
+#![allow(clippy::unwrap_used)] // a test may fail
+
+mod coding;
+mod made;
