@@ -6,6 +6,7 @@
 pub mod advice;
 pub mod curve;
 pub mod demo;
+pub mod ledger;
 pub mod numeric;
 pub mod outlook;
 pub mod say;

@@ -70,9 +70,19 @@ impl Tally {
     /// # Errors
     /// [`DecodeError`]; [`DecodeError::Newer`] for bytes of a later version.
     pub fn decode(bytes: &[u8]) -> Result<Tally, DecodeError> {
+        let mut tally = Tally::default();
+        tally.merge_encoded(bytes)?;
+        Ok(tally)
+    }
+
+    /// Adds what [`Tally::encode`] wrote, without making a tally of it first.
+    ///
+    /// # Errors
+    /// As [`Tally::decode`]; a part may be added then.
+    pub fn merge_encoded(&mut self, bytes: &[u8]) -> Result<(), DecodeError> {
         let mut bytes = Bytes(bytes);
         match bytes.byte()? {
-            1 => decode_1(&mut bytes),
+            1 => decode_1(&mut bytes, self),
             0 => Err(DecodeError::Impossible { what: "version" }),
             found => Err(DecodeError::Newer { found }),
         }
@@ -102,26 +112,24 @@ impl Ages {
     }
 }
 
-fn decode_1(bytes: &mut Bytes<'_>) -> Result<Tally, DecodeError> {
+fn decode_1(bytes: &mut Bytes<'_>, into: &mut Tally) -> Result<(), DecodeError> {
     let flags = bytes.byte()?;
     if flags & !(SEEN | SEEN_ONCE | RETRY) != 0 || flags & (SEEN | SEEN_ONCE) == SEEN | SEEN_ONCE {
         return Err(DecodeError::Impossible { what: "flag" });
     }
-    let mut seen = None;
     if flags & (SEEN | SEEN_ONCE) != 0 {
         let from = bytes.float()?;
         let to = if flags & SEEN != 0 { bytes.float()? } else { from };
         if !(from >= 0.0 && from <= to && to.is_finite()) {
             return Err(DecodeError::Impossible { what: "time" });
         }
-        seen = Some((from, to));
+        into.see(from, to);
     }
-    let first = decode_side(bytes)?;
-    let retry = if flags & RETRY != 0 { Some(Box::new(decode_side(bytes)?)) } else { None };
-    if !bytes.0.is_empty() {
-        return Err(DecodeError::Trailing);
+    decode_side(bytes, &mut into.first)?;
+    if flags & RETRY != 0 {
+        decode_side(bytes, into.retry.get_or_insert_default())?;
     }
-    Ok(Tally { first, retry, seen })
+    if bytes.0.is_empty() { Ok(()) } else { Err(DecodeError::Trailing) }
 }
 
 fn encode_side(side: &Side, out: &mut Vec<u8>) {
@@ -142,21 +150,24 @@ fn encode_side(side: &Side, out: &mut Vec<u8>) {
     }
 }
 
-fn decode_side(bytes: &mut Bytes<'_>) -> Result<Side, DecodeError> {
+fn decode_side(bytes: &mut Bytes<'_>, into: &mut Side) -> Result<(), DecodeError> {
     let mask = bytes.byte()?;
     if mask & !(0b1_1111 | BUCKETS | COARSE) != 0 || mask & (BUCKETS | COARSE) == COARSE {
         return Err(DecodeError::Impossible { what: "mask" });
     }
-    let mut side = Side::default();
-    for (i, ages) in side.ages.iter_mut().chain([&mut side.entries]).enumerate() {
+    for (i, ages) in into.ages.iter_mut().chain([&mut into.entries]).enumerate() {
         if mask & 1 << i != 0 {
-            *ages = Ages(Some(Box::new(decode_ages(bytes)?)));
+            decode_ages(bytes, ages)?;
         }
     }
     if mask & BUCKETS != 0 {
-        side.buckets = Some(Box::new(decode_buckets(bytes, mask & COARSE != 0)?));
+        let buckets = decode_buckets(bytes, mask & COARSE != 0)?;
+        match &mut into.buckets {
+            Some(mine) => mine.merge(&buckets),
+            none => *none = Some(Box::new(buckets)),
+        }
     }
-    Ok(side)
+    Ok(())
 }
 
 fn encode_ages(ages: &Ages, out: &mut Vec<u8>) {
@@ -168,14 +179,28 @@ fn encode_ages(ages: &Ages, out: &mut Vec<u8>) {
     }
 }
 
-fn decode_ages(bytes: &mut Bytes<'_>) -> Result<Store, DecodeError> {
-    match bytes.byte()? {
-        form if form & !ALL_ONE <= BITS => decode_exact(form, bytes),
-        NARROW => Ok(Store::Narrow(decode_histogram(bytes)?)),
-        WIDE => Ok(Store::Wide(decode_histogram(bytes)?)),
-        SPARSE => decode_sparse(bytes),
-        _ => Err(DecodeError::Impossible { what: "form" }),
+fn decode_ages(bytes: &mut Bytes<'_>, into: &mut Ages) -> Result<(), DecodeError> {
+    let store = match bytes.byte()? {
+        form if form & !ALL_ONE <= BITS && !into.is_empty() => {
+            return decode_exact(form, bytes, |age, count| into.add(age, count));
+        }
+        form if form & !ALL_ONE <= BITS => {
+            let mut grouped = Vec::new();
+            decode_exact(form, bytes, |age, count| grouped.push((age, count)))?;
+            Store::Few { grouped, loose: Vec::new() }
+        }
+        NARROW => Store::Narrow(decode_histogram(bytes)?),
+        WIDE => Store::Wide(decode_histogram(bytes)?),
+        SPARSE => decode_sparse(bytes)?,
+        _ => return Err(DecodeError::Impossible { what: "form" }),
+    };
+    let ages = Ages(Some(Box::new(store)));
+    if into.is_empty() {
+        *into = ages;
+    } else {
+        into.merge(&ages);
     }
+    Ok(())
 }
 
 /// Clocks tick in decimal fractions, so most ages are whole microseconds or nanoseconds: a gap between two such
@@ -197,13 +222,12 @@ fn encode_exact(grouped: &[(f64, u64)], out: &mut Vec<u8>) {
     }
 }
 
-fn decode_exact(form: u8, bytes: &mut Bytes<'_>) -> Result<Store, DecodeError> {
+fn decode_exact(form: u8, bytes: &mut Bytes<'_>, mut take: impl FnMut(f64, u64)) -> Result<(), DecodeError> {
     let (all_one, form) = (form & ALL_ONE != 0, form & !ALL_ONE);
     let length = bytes.length(1)?;
     if length == 0 || length > EXACT_AGES {
         return Err(DecodeError::Impossible { what: "number of ages" });
     }
-    let mut grouped = Vec::with_capacity(length);
     let mut code = 0u64;
     for _ in 0..length {
         let gap = bytes.varint()?;
@@ -213,9 +237,9 @@ fn decode_exact(form: u8, bytes: &mut Bytes<'_>) -> Result<Store, DecodeError> {
         if gap == 0 || count == 0 || !(age > 0.0 && age <= MAX_AGE) {
             return Err(DecodeError::Impossible { what: "age" });
         }
-        grouped.push((age, count));
+        take(age, count);
     }
-    Ok(Store::Few { grouped, loose: Vec::new() })
+    Ok(())
 }
 
 /// The age as a whole number in the given form, in the same order as the ages; `None` if it would not come back

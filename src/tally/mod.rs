@@ -13,6 +13,7 @@ pub use ages::{Ages, Bin, EXACT_AGES};
 pub use book::{Book, Day, Days};
 pub use buckets::{Buckets, MOST_BUCKETS};
 pub use cells::{Cause, Cells, EventCell, Interval, Mass, Sample};
+pub(crate) use encode::{Bytes, varint};
 pub use encode::{DecodeError, TALLY_VERSION};
 
 use crate::wait::{Age, Ending, Wait};
