@@ -19,9 +19,12 @@ use crate::suite::EVER;
 
 const STREAMS: [&str; 3] = ["desk.loan", "desk.return", "search"];
 
-/// Limits so small that every commit merges something and the log is cut all the time.
+/// Limits so small that every commit merges something and the log is cut all the time. Nothing expires: after a crash
+/// the ledger's clock stands a little behind, on purpose, and the model's does not.
 fn tight() -> Options {
-    Options { log_bytes: 4_000, live_bytes: 60_000, hours_for: HOUR, ..Options::default() }
+    let never = 1e9;
+    let times = Options { hours_for: HOUR, keys_for: never, open_for: never, ..Options::default() };
+    Options { log_bytes: 4_000, live_bytes: 60_000, ..times }
 }
 
 #[derive(Clone, Debug)]
@@ -35,7 +38,8 @@ struct Spec {
 #[derive(Clone, Debug)]
 enum Step {
     Commit(Vec<Spec>),
-    Maintain(u16),
+    /// Upkeep once an hour, for so many hours.
+    Maintain(u8),
     Reopen,
     /// The files as they lie there, without a word to the process that writes them.
     Crash,
@@ -51,7 +55,7 @@ fn spec() -> impl Strategy<Value = Spec> {
 fn steps() -> impl Strategy<Value = Vec<Step>> {
     let step = prop_oneof![
         8 => prop::collection::vec(spec(), 0..4).prop_map(Step::Commit),
-        2 => (0u16..40_000).prop_map(Step::Maintain),
+        3 => (1u8..9).prop_map(Step::Maintain),
         1 => Just(Step::Reopen),
         2 => Just(Step::Crash),
     ];
@@ -109,7 +113,7 @@ fn assert_same(disk: &dyn Reader, memory: &dyn Reader) {
 }
 
 proptest! {
-    #![proptest_config(ProptestConfig::with_cases(24))]
+    #![proptest_config(ProptestConfig::with_cases(60))]
 
     /// The ledger in memory, which is never interrupted, is the model.
     #[test]
@@ -125,10 +129,12 @@ proptest! {
                     let receipt = disk.as_mut().unwrap().commit(&batches, now).unwrap();
                     prop_assert_eq!(receipt, memory.commit(&batches, now).unwrap());
                 }
-                Step::Maintain(seconds) => {
-                    now += f64::from(seconds);
-                    while disk.as_mut().unwrap().maintain(now).unwrap().more {}
-                    memory.maintain(now).unwrap();
+                Step::Maintain(hours) => {
+                    for _ in 0..hours {
+                        now += HOUR;
+                        disk.as_mut().unwrap().maintain(now).unwrap();
+                        memory.maintain(now).unwrap();
+                    }
                 }
                 Step::Reopen => {
                     drop(disk.take());
