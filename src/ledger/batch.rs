@@ -118,8 +118,8 @@ impl Batch {
         *sum = sum.saturating_add(lines);
     }
 
-    /// The streams it names, some more than once.
-    pub(super) fn names(&self) -> impl Iterator<Item = &str> {
+    /// The streams it names, some more than once: those that change with it.
+    pub fn streams(&self) -> impl Iterator<Item = &str> {
         self.streams.keys().map(|name| &**name).chain(self.events.iter().map(|event| &*event.key.stream))
     }
 

@@ -85,7 +85,7 @@ impl Held {
                 Err(BatchError::KeyReused { key: key.to_string() })
             };
         }
-        let new: HashSet<&str> = batch.names().filter(|name| !self.streams.contains_key(*name)).collect();
+        let new: HashSet<&str> = batch.streams().filter(|name| !self.streams.contains_key(*name)).collect();
         if !new.is_empty() && self.streams.len() + new.len() > self.options.most_streams {
             return Err(BatchError::TooManyStreams { limit: self.options.most_streams });
         }

@@ -19,6 +19,25 @@
 //! by a clock that follows the caller's without its leaps, so that a system clock set wrong by years for an hour
 //! deletes nothing.
 //!
+//! # An example
+//!
+//! ```
+//! use outwait::ledger::{Batch, Hour, Ledger, MemoryLedger, Options, Reader};
+//! use outwait::wait::{Ending, Wait};
+//!
+//! # fn main() -> Result<(), Box<dyn std::error::Error>> {
+//! let mut ledger = MemoryLedger::new(Options::default());
+//! let now = 1_796_040_000.0;
+//! let mut batch = Batch::default();
+//! batch.add("catalogue.lookup", &Wait::new(0.018, Ending::Done)?, now)?;
+//! ledger.commit(&[batch], now)?;
+//! let hour = Hour::of(now);
+//! let window = ledger.window("catalogue.lookup", hour..Hour(hour.0 + 1))?;
+//! assert_eq!(window.tally.counts(), [1, 0, 0, 0]);
+//! # Ok(())
+//! # }
+//! ```
+//!
 //! # Two ledgers, one behaviour
 //!
 //! [`MemoryLedger`] for one-shot commands and tests, [`SqliteLedger`] for a daemon. They pass the same tests. Both
@@ -170,7 +189,7 @@ pub struct Entry {
 /// What one [`Ledger::maintain`] did.
 #[derive(Clone, Copy, Debug, Default, PartialEq, Eq)]
 pub struct Upkeep {
-    /// Hours and days merged into their places.
+    /// Hours that were merged from the log into their tallies.
     pub merged: u64,
     /// Hours rolled into days.
     pub rolled: u64,
@@ -191,7 +210,7 @@ pub struct Extent {
     pub streams: usize,
     /// Waits open now, with ends that await their start.
     pub open: usize,
-    /// Idempotency keys kept.
+    /// Idempotency keys kept, or a few more.
     pub keys: usize,
     /// Batches acknowledged and not yet merged into their hours: bytes in the log, bytes of memory.
     pub log_bytes: u64,

@@ -468,7 +468,7 @@ const ALL_ONE: u8 = 0x80;
 
 /// First four bytes of HdrHistogram's V2+DEFLATE form.
 const V2_DEFLATE: u32 = 0x1c84_9304;
-/// Level 6 saves a twentieth of the bytes at twice the time.
+/// Level 6 saves 3 to 8% of the bytes for up to twice the time (measured on lognormal ages, 5,000 to 2,000,000).
 const ZIP_LEVEL: u32 = 1;
 /// More than any histogram of ours takes unzipped: 46 octaves of 1,024 counts, 9 bytes each.
 const MOST_PLAIN: u64 = 512 * 1024;

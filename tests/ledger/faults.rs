@@ -358,3 +358,39 @@ fn a_broken_tally_does_not_stop_its_hour() {
     let House::Disk { ledger, .. } = &house else { unreachable!() };
     assert_eq!(ledger.as_ref().unwrap().sqlite_reader().unwrap().check().unwrap().len(), 1);
 }
+
+/// A log entry that is broken is moved aside when the ledger is opened; it stays named, and the count goes on.
+#[test]
+fn a_broken_entry_does_not_stop_the_ledger() {
+    let mut house = House::disk(Options::default());
+    for number in 0..5 {
+        house.ledger().commit(&[numbered(number, 4)], NOON).unwrap();
+    }
+    let House::Disk { ledger, folder, .. } = &mut house else { unreachable!() };
+    drop(ledger.take());
+    let db = rusqlite::Connection::open(folder.path().join("ledger.sqlite3")).unwrap();
+    assert_eq!(db.execute("UPDATE log SET entry = zeroblob(99) WHERE sequence IN (3, 5)", []).unwrap(), 2);
+    assert_eq!(db.execute("UPDATE streams SET name = 'stream-x' WHERE name = 'stream-1'", []).unwrap(), 1);
+    drop(db);
+    let broken = |damage: &[Damage]| {
+        damage.iter().filter(|d| matches!(d, Damage::Entry { sequence: 3 | 5, .. })).count()
+    };
+    let read = SqliteReader::attach(folder.path()).unwrap();
+    assert_eq!((broken(&read.check().unwrap()), count(&read)), (2, 3 * 4));
+    house.reopen();
+    let House::Disk { ledger, .. } = &house else { unreachable!() };
+    let found = ledger.as_ref().unwrap().damage();
+    assert_eq!((broken(found), found.len()), (2, 3), "two entries and a name: {found:?}");
+    for number in 5..9 {
+        house.ledger().commit(&[numbered(number, 4)], NOON).unwrap();
+    }
+    house.maintain(NOON + HOUR);
+    house.reopen();
+    assert_eq!(count(house.ledger()), 7 * 4);
+    let names = house.ledger().streams().unwrap();
+    assert!(names.contains(&"stream-1".to_owned()), "counted anew under its name: {names:?}");
+    assert!(names.iter().any(|name| name.starts_with("stream-x:damaged-")), "{names:?}");
+    let House::Disk { ledger, .. } = &house else { unreachable!() };
+    let checked = ledger.as_ref().unwrap().sqlite_reader().unwrap().check().unwrap();
+    assert_eq!((broken(&checked), checked.len()), (2, 3), "{checked:?}");
+}

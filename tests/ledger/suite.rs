@@ -431,6 +431,29 @@ fn a_clock_that_leaps_ages_nothing() {
     }
 }
 
+/// What waits to be merged stays within its limits of memory and log, also where a few bytes unpack to much.
+#[test]
+fn what_is_not_merged_yet_is_bounded() {
+    let options = Options { live_bytes: 2_000_000, log_bytes: 300_000, ..Options::default() };
+    let mut house = House::disk(options);
+    let mut most = 0;
+    for i in 0..120 {
+        let mut batch = Batch::default();
+        for j in 0..5_000 {
+            batch
+                .add(&format!("s-{}", i % 90), &done(1.0 + f64::from(j) * 1e-3 + f64::from(i), NOON), NOON)
+                .unwrap();
+        }
+        house.ledger().commit(&[batch], NOON).unwrap();
+        let extent = house.ledger().extent().unwrap();
+        assert!(extent.live_bytes <= 2_000_000 + 200_000, "{extent:?}");
+        assert!(extent.log_bytes <= 300_000 + 20_000, "{extent:?}");
+        most = most.max(extent.live_bytes);
+    }
+    assert!(most > 1_000_000, "the limit was reached: {most}");
+    assert_eq!((0..90).map(|i| house.count(&format!("s-{i}"))).sum::<u64>(), 120 * 5_000);
+}
+
 #[test]
 fn nothing_is_a_commit_too() {
     for mut house in House::both(&Options::default()) {

@@ -6,7 +6,7 @@ use rusqlite::backup::{Backup, StepResult};
 use rusqlite::types::ValueRef;
 use rusqlite::{Connection, Result};
 
-use super::read::{open_tally, period};
+use super::read::{name_flaw, open_tally, period, set_aside};
 use super::{entry, fault, is_damage, read_lock};
 use crate::ledger::{Damage, Hour, LedgerError, Reader, SqliteReader};
 use crate::tally::Tally;
@@ -25,9 +25,12 @@ impl SqliteReader {
         if let Err(error) = check_file(&self.db, &mut damage) {
             damage.push(Damage::File { flaw: kept(error)? });
         }
-        if self.attached.is_none()
-            && let Err(error) = check_log(&self.db, &mut damage)
-        {
+        // An attached reader has read names and log already.
+        let log = match self.attached {
+            None => check_names(&self.db, &mut damage).and_then(|()| check_log(&self.db, &mut damage)),
+            Some(_) => Ok(()),
+        };
+        if let Err(error) = log.and_then(|()| entries_set_aside(&self.db, &mut damage)) {
             damage.push(Damage::File { flaw: kept(error)? });
         }
         for stream in self.streams()? {
@@ -52,11 +55,15 @@ impl SqliteReader {
             return Err(taken(std::io::ErrorKind::AlreadyExists.into()));
         }
         let mut part = to.as_os_str().to_owned();
-        part.push(".part");
+        part.push(format!(".{}.part", std::process::id()));
         let part = Path::new(&part);
         let copied = self.copy(part).and_then(|()| {
             std::fs::File::open(part).and_then(|file| file.sync_all()).map_err(taken)?;
-            std::fs::rename(part, to).map_err(taken)
+            std::fs::rename(part, to).map_err(taken)?;
+            // The name is on disk as well.
+            let folder =
+                to.parent().filter(|folder| !folder.as_os_str().is_empty()).unwrap_or(Path::new("."));
+            std::fs::File::open(folder).and_then(|folder| folder.sync_all()).map_err(taken)
         });
         if copied.is_err() {
             let _ = std::fs::remove_file(part);
@@ -65,21 +72,15 @@ impl SqliteReader {
     }
 
     fn copy(&self, to: &Path) -> Result<(), LedgerError> {
-        let _ = std::fs::remove_file(to);
         let mut target = Connection::open(to).map_err(|error| fault(to, error))?;
-        let copy = || -> Result<bool> {
-            // In one step, so that a busy writer cannot make it begin again and again. Readers do not block writers.
-            let whole = matches!(Backup::new(&self.db, &mut target)?.step(-1)?, StepResult::Done);
-            // The copy is one file: its write-ahead log comes back when it is opened for writing.
-            target.query_row("PRAGMA journal_mode = DELETE", [], |_| Ok(()))?;
-            Ok(whole)
-        };
-        let mut copy = copy;
-        match copy() {
-            Ok(true) => Ok(()),
-            Ok(false) => Err(LedgerError::io("backing up to", to, std::io::ErrorKind::ResourceBusy.into())),
-            Err(error) => Err(fault(to, error)),
+        // In one step, so that a busy writer cannot make it begin again and again. Readers do not block writers.
+        let step = Backup::new(&self.db, &mut target).and_then(|backup| backup.step(-1));
+        match step.map_err(|error| fault(to, error))? {
+            StepResult::Done => {}
+            _ => return Err(LedgerError::io("backing up to", to, std::io::ErrorKind::ResourceBusy.into())),
         }
+        // The copy is one file; its write-ahead log comes back when it is opened for writing.
+        target.query_row("PRAGMA journal_mode = DELETE", [], |_| Ok(())).map_err(|error| fault(to, error))
     }
 }
 
@@ -92,6 +93,16 @@ fn check_file(db: &Connection, damage: &mut Vec<Damage>) -> Result<()> {
         if line != "ok" {
             damage.push(Damage::File { flaw: line });
         }
+    }
+    Ok(())
+}
+
+fn check_names(db: &Connection, damage: &mut Vec<Damage>) -> Result<()> {
+    let mut read = db.prepare("SELECT id, name, seal FROM streams")?;
+    let mut rows = read.query([])?;
+    while let Some(row) = rows.next()? {
+        let name = row.get_ref(1)?.as_bytes().unwrap_or_default();
+        damage.extend(name_flaw(row.get(0)?, name, row.get(2)?).map(|flaw| Damage::File { flaw }));
     }
     Ok(())
 }
@@ -112,6 +123,16 @@ fn check_log(db: &Connection, damage: &mut Vec<Damage>) -> Result<()> {
     Ok(())
 }
 
+/// Log entries that could not be read when the ledger was opened for writing.
+fn entries_set_aside(db: &Connection, damage: &mut Vec<Damage>) -> Result<()> {
+    let mut read = db.prepare("SELECT sequence, flaw FROM damaged WHERE sequence IS NOT NULL")?;
+    let mut rows = read.query([])?;
+    while let Some(row) = rows.next()? {
+        damage.push(Damage::Entry { sequence: row.get(0)?, flaw: row.get(1)? });
+    }
+    Ok(())
+}
+
 fn check_stream(db: &Connection, id: i64, stream: &str, damage: &mut Vec<Damage>) -> Result<()> {
     let mut read = db.prepare_cached("SELECT start, hours, through, tally FROM tallies WHERE stream = ?1")?;
     let mut rows = read.query([id])?;
@@ -122,5 +143,5 @@ fn check_stream(db: &Connection, id: i64, stream: &str, damage: &mut Vec<Damage>
         }
     }
     drop(rows);
-    super::read::set_aside(db, id, stream, &(Hour(i32::MIN)..Hour(i32::MAX)), damage)
+    set_aside(db, id, stream, &(Hour(i32::MIN)..Hour(i32::MAX)), damage)
 }

@@ -59,7 +59,7 @@ impl SqliteLedger {
         let mut entry = entry::Writer::new();
         plan.tallies.iter().for_each(|(target, hour, tally)| entry.add(target.id, *hour, tally));
         if !entry.is_empty() {
-            let sequence = self.sequence + 1;
+            let sequence = self.sequence.saturating_add(1);
             let bytes = entry.finish(sequence);
             tx.prepare_cached("INSERT INTO log VALUES (?1, ?2)")?.execute(params![sequence, bytes])?;
             let length = entry::cost(&bytes);
@@ -82,7 +82,7 @@ impl SqliteLedger {
         let mut live = write_lock(&self.live);
         live.log_bytes += appended.map_or(0, |(_, length)| length);
         (live.singles, live.joined) = (plan.singles, plan.joined);
-        self.next_stream += plan.names.len() as i64;
+        self.next_stream = self.next_stream.saturating_add(plan.names.len() as i64);
         for (name, id) in plan.names {
             live.insert(name.into(), id);
         }
@@ -140,8 +140,9 @@ impl<'b> Plan<'b> {
         if outcome.singles > 0 && self.singles + outcome.singles as usize > options.most_open {
             return Ok(Err(BatchError::TooManyOpen { limit: options.most_open }));
         }
-        let first = next_stream + self.names.len() as i64;
-        self.names.extend(new.into_iter().zip(first..));
+        let first = self.names.len() as i64;
+        let ids = (first..).map(|i| next_stream.saturating_add(i));
+        self.names.extend(new.into_iter().zip(ids));
         for (name, hours, found) in known {
             let Some(target) = self.target(found, name) else { continue };
             self.tallies.extend(hours.0.iter().map(|(hour, tally)| (target, *hour, Cow::Borrowed(tally))));

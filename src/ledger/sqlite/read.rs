@@ -68,8 +68,8 @@ impl SqliteReader {
         fault(&self.path, error)
     }
 
-    /// A view of the file, with the slots of a stream that belong to it.
-    fn view(&self, stream: &str) -> Result<(Option<Transaction<'_>>, Option<i64>, Vec<Slot>)> {
+    /// A view of the file, with a stream's id and those of its slots that belong to the view.
+    fn view(&self, stream: &str, hours: &Range<Hour>) -> Result<(Option<Transaction<'_>>, i64, Vec<Slot>)> {
         let live = read_lock(&self.live);
         let mut view = None;
         if self.attached.is_none() {
@@ -79,9 +79,10 @@ impl SqliteReader {
             begun.query_row("SELECT 1 FROM layout", [], |_| Ok(()))?;
             view = Some(begun);
         }
-        let id = live.id(stream);
-        let slots = id.map(|id| live.slots(id).to_vec()).unwrap_or_default();
-        Ok((view, id, slots))
+        // No stream has the id 0.
+        let id = live.id(stream).unwrap_or(0);
+        let wanted = |slot: &&Slot| Period::Hour(slot.hour).overlaps(hours);
+        Ok((view, id, live.slots(id).iter().filter(wanted).cloned().collect()))
     }
 }
 
@@ -98,12 +99,10 @@ impl Reader for SqliteReader {
         hours: Range<Hour>,
         take: &mut dyn FnMut(Period, Tally),
     ) -> Result<Vec<Damage>, LedgerError> {
-        let (_view, id, mut slots) = self.view(stream).map_err(|error| self.fault(error))?;
-        let Some(id) = id else { return Ok(Vec::new()) };
-        slots.retain(|slot| Period::Hour(slot.hour).overlaps(&hours));
+        let (_view, id, slots) = self.view(stream, &hours).map_err(|error| self.fault(error))?;
         let mut slots = slots.into_iter().peekable();
         let mut damage = Vec::new();
-        let stored = stored(&self.db, id, &hours, |row| {
+        let read = stored(&self.db, id, &hours, |row| {
             while let Some(slot) = slots.next_if(|slot| slot.hour < row.period.hours().start) {
                 take(Period::Hour(slot.hour), slot.tally);
             }
@@ -120,8 +119,7 @@ impl Reader for SqliteReader {
             }
         });
         slots.for_each(|slot| take(Period::Hour(slot.hour), slot.tally));
-        let stored = stored.and_then(|()| set_aside(&self.db, id, stream, &hours, &mut damage));
-        match stored {
+        match read.and_then(|()| set_aside(&self.db, id, stream, &hours, &mut damage)) {
             Ok(()) => {}
             Err(error) if is_damage(&error) => {
                 damage.push(Damage::Stream { stream: stream.to_owned(), flaw: error.to_string() });
@@ -201,19 +199,14 @@ pub(super) fn key_count(db: &Connection) -> Result<usize> {
 }
 
 /// A stored tally.
-pub(super) struct Stored {
-    pub(super) period: Period,
-    pub(super) through: i64,
-    pub(super) tally: Result<Tally, String>,
+struct Stored {
+    period: Period,
+    through: i64,
+    tally: Result<Tally, String>,
 }
 
 /// Hands out the stored tallies of a stream that share an hour with `hours`, in order of time.
-pub(super) fn stored(
-    db: &Connection,
-    stream: i64,
-    hours: &Range<Hour>,
-    mut take: impl FnMut(Stored),
-) -> Result<()> {
+fn stored(db: &Connection, stream: i64, hours: &Range<Hour>, mut take: impl FnMut(Stored)) -> Result<()> {
     let mut statement = db.prepare_cached(
         "SELECT start, hours, through, tally FROM tallies
          WHERE stream = ?1 AND start >= ?2 AND start < ?3 ORDER BY start, hours",
@@ -379,15 +372,22 @@ fn read_names(db: &Connection, found: &mut Recovered) -> Result<()> {
         let (id, seal): (i64, i64) = (row.get(0)?, row.get(2)?);
         found.next_stream = found.next_stream.max(id.saturating_add(1));
         let name = row.get_ref(1)?.as_bytes().unwrap_or_default();
-        let sound = i64::from(checksum(&[id], name)) == seal;
+        let flaw = name_flaw(id, name, seal);
         let mut name = String::from_utf8_lossy(name).into_owned();
-        if !sound {
+        if let Some(flaw) = flaw {
             // Its tallies are whole; under which name is not known for certain.
-            let flaw = format!("the name of stream {id}, {name:?}, does not match its checksum");
             found.damage.push(Damage::File { flaw });
             name = format!("{name}:damaged-{id}");
         }
         found.live.insert(name.into(), id);
     }
     Ok(())
+}
+
+/// What is wrong with a stream's row.
+pub(super) fn name_flaw(id: i64, name: &[u8], seal: i64) -> Option<String> {
+    let broken = i64::from(checksum(&[id], name)) != seal;
+    broken.then(|| {
+        format!("the name of stream {id}, {:?}, does not match its checksum", String::from_utf8_lossy(name))
+    })
 }

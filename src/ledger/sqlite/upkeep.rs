@@ -62,9 +62,9 @@ impl SqliteLedger {
         Ok(())
     }
 
-    /// Merges slots of hours that are over.
+    /// Merges slots of hours other than the present one, to which nothing much will be added.
     fn merge_closed(&mut self, current: Hour, upkeep: &mut Upkeep) -> Result<()> {
-        let closed = self.queue.iter().take(MERGES).take_while(|queued| queued.hour < current).count();
+        let closed = self.queue.iter().take(MERGES).take_while(|queued| queued.hour != current).count();
         if closed == 0 {
             return Ok(());
         }
@@ -104,7 +104,11 @@ impl SqliteLedger {
             tx.prepare_cached("INSERT OR REPLACE INTO meta VALUES ('clock', ?1)")?.execute([time])?;
             rounds.clock_filed = Some(time);
         }
-        let gone = self.round(&tx, &mut rounds, time, now, upkeep)?;
+        // What is still to be merged keeps log entries, and these keep hours from being rolled.
+        let gone = match upkeep.merged as usize {
+            MERGES => Vec::new(),
+            _ => self.round(&tx, &mut rounds, time, now, upkeep)?,
+        };
         give_back(&tx)?;
         tx.commit()?;
 
@@ -280,10 +284,10 @@ fn give_back(db: &Connection) -> Result<()> {
 }
 
 // The size of a piece: each bound is some milliseconds of work.
-const MERGES: usize = 64;
-const FORGETS: usize = 1024;
+const MERGES: usize = 32;
+const FORGETS: usize = 512;
 const STREAMS: usize = 64;
-const ROLLS: usize = 48;
+const ROLLS: usize = 24;
 const SPARE_PAGES: i64 = 4096;
 const GIVE_PAGES: i64 = 512;
 
