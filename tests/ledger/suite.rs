@@ -531,3 +531,28 @@ fn an_export_reads_back_to_equal_tallies() {
         }
     }
 }
+
+/// A window that opens while a wait goes on sees it from the age it had then; all periods together see one wait.
+#[test]
+fn long_waits_are_at_risk_in_every_day_they_span() {
+    let wait = Wait::new(2.5 * DAY, Ending::Done).unwrap().with_at(NOON).unwrap();
+    for mut house in House::both(&Options::default()) {
+        let mut batch = Batch::default();
+        batch.add("lender.reply", &wait, NOON).unwrap();
+        house.commit(batch, NOON).unwrap();
+        house.reopen();
+        let today = Hour::of(NOON).day();
+        let whole = house.ledger().window("lender.reply", EVER).unwrap().tally.first_attempts();
+        assert_eq!((whole.totals(), whole.entries.len()), ([1.0, 0.0, 0.0, 0.0], 0));
+        let late = house.ledger().window("lender.reply", Hour::first_of(today)..Hour(i32::MAX)).unwrap().tally;
+        let late = late.first_attempts();
+        assert_eq!(late.entries[0].age, 2.0 * DAY);
+        let early = house.ledger().window("lender.reply", EVER.start..Hour::first_of(today)).unwrap().tally;
+        assert_eq!(early.first_attempts().waiting[0].age, 2.0 * DAY);
+        // Exported and read again, the same waits are at risk.
+        let reader = house.ledger().reader().unwrap();
+        let mut text = Vec::new();
+        export(&*reader, &mut text).unwrap();
+        assert!(String::from_utf8(text).unwrap().lines().count() >= 3);
+    }
+}
