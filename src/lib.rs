@@ -11,6 +11,7 @@ pub mod curve;
 pub mod demo;
 pub mod glob;
 pub mod intake;
+pub mod ledger;
 pub mod numeric;
 pub mod outlook;
 pub mod policy;

@@ -9,17 +9,17 @@ use hdrhistogram::{Counter, Histogram};
 pub const EXACT_AGES: usize = 4096;
 
 /// Significant decimal digits of the histogram: bins at most 0.1% wide.
-const DIGITS: u8 = 3;
+pub(super) const DIGITS: u8 = 3;
 
 /// Ticks per second of the histogram: 1 µs.
-const TICKS: f64 = 1e6;
+pub(super) const TICKS: f64 = 1e6;
 
 /// Counted ages, s. Empty costs one word.
 #[derive(Clone, Debug, Default)]
-pub struct Ages(Option<Box<Store>>);
+pub struct Ages(pub(super) Option<Box<Store>>);
 
 #[derive(Clone, Debug)]
-enum Store {
+pub(super) enum Store {
     /// `grouped` is sorted and distinct, at most [`EXACT_AGES`] long; `loose` waits to be grouped, each counting 1.
     Few {
         grouped: Vec<(f64, u64)>,
@@ -73,8 +73,19 @@ impl Ages {
             self.0 = other.0.clone();
             return;
         };
-        match theirs {
-            Store::Few { grouped, loose } => {
+        match (&mut *mine, theirs) {
+            // Two histograms of one counter add up array to array. Neither can fail: they resize by themselves.
+            (Store::Narrow(h), Store::Narrow(other))
+                if h.len().saturating_add(other.len()) <= u64::from(u32::MAX) =>
+            {
+                let _ = h.add(other);
+            }
+            (Store::Wide(h), Store::Wide(other)) => {
+                let _ = h.add(other);
+            }
+            (_, Store::Narrow(other)) => mine.record_all(other),
+            (_, Store::Wide(other)) => mine.record_all(other),
+            (_, Store::Few { grouped, loose }) => {
                 for &(age, count) in grouped {
                     self.add(age, count);
                 }
@@ -82,15 +93,6 @@ impl Ages {
                     self.add(age, 1);
                 }
             }
-            Store::Narrow(h) => match mine {
-                // Counter by counter, many times faster than value by value; no counter can exceed the total.
-                Store::Narrow(mine) if mine.len().saturating_add(h.len()) <= u64::from(u32::MAX) => {
-                    // Auto-resizing histograms of one precision always add.
-                    let _ = mine.add(h);
-                }
-                _ => mine.record_all(h),
-            },
-            Store::Wide(h) => mine.record_all(h),
         }
     }
 
@@ -104,32 +106,6 @@ impl Ages {
             Store::Narrow(h) => histogram_bins(h),
             Store::Wide(h) => histogram_bins(h),
         }
-    }
-
-    /// What is left of `self` without `other`, and of `other` without `self`: equal ages cancel one by one. Ages are
-    /// compared exactly while both are kept so, else by the histogram's bins.
-    pub fn less(&self, other: &Ages) -> (Vec<Bin>, Vec<Bin>) {
-        let (mut mine, mut theirs) = (self.bins(), other.bins());
-        if theirs.is_empty() {
-            return (mine, theirs);
-        }
-        (mine, theirs) = alike(mine, theirs);
-        let (mut i, mut j) = (0, 0);
-        while i < mine.len() && j < theirs.len() {
-            match mine[i].low.total_cmp(&theirs[j].low) {
-                std::cmp::Ordering::Less => i += 1,
-                std::cmp::Ordering::Greater => j += 1,
-                std::cmp::Ordering::Equal => {
-                    let both = mine[i].count.min(theirs[j].count);
-                    mine[i].count -= both;
-                    theirs[j].count -= both;
-                    (i, j) = (i + 1, j + 1);
-                }
-            }
-        }
-        mine.retain(|b| b.count > 0);
-        theirs.retain(|b| b.count > 0);
-        (mine, theirs)
     }
 
     /// How many ages it holds.
@@ -148,6 +124,31 @@ impl Ages {
     pub fn is_empty(&self) -> bool {
         self.0.is_none()
     }
+}
+
+/// What is left of one multiset of bins without the other, and the other way round: equal ages cancel one by one. Ages
+/// are compared exactly while both are kept so, else by the histogram's bins.
+pub(super) fn less(mine: Vec<Bin>, theirs: Vec<Bin>) -> (Vec<Bin>, Vec<Bin>) {
+    if mine.is_empty() || theirs.is_empty() {
+        return (mine, theirs);
+    }
+    let (mut mine, mut theirs) = alike(mine, theirs);
+    let (mut i, mut j) = (0, 0);
+    while i < mine.len() && j < theirs.len() {
+        match mine[i].low.total_cmp(&theirs[j].low) {
+            std::cmp::Ordering::Less => i += 1,
+            std::cmp::Ordering::Greater => j += 1,
+            std::cmp::Ordering::Equal => {
+                let both = mine[i].count.min(theirs[j].count);
+                mine[i].count -= both;
+                theirs[j].count -= both;
+                (i, j) = (i + 1, j + 1);
+            }
+        }
+    }
+    mine.retain(|b| b.count > 0);
+    theirs.retain(|b| b.count > 0);
+    (mine, theirs)
 }
 
 /// Equal contents, however they came together.
@@ -190,7 +191,7 @@ impl Store {
         }
     }
 
-    fn settled(&self) -> std::borrow::Cow<'_, Store> {
+    pub(super) fn settled(&self) -> std::borrow::Cow<'_, Store> {
         match self {
             Store::Few { loose, .. } if !loose.is_empty() => {
                 let mut copy = self.clone();
@@ -202,7 +203,7 @@ impl Store {
     }
 
     #[inline]
-    fn record(&mut self, tick: u64, count: u64) {
+    pub(super) fn record(&mut self, tick: u64, count: u64) {
         if let Store::Narrow(h) = self {
             // No counter can exceed the total, so 32 bits suffice while the total fits them.
             if h.len().saturating_add(count) <= u64::from(u32::MAX) {
@@ -317,13 +318,13 @@ mod tests {
 
     #[test]
     fn what_is_left_of_each() {
-        let (left, right) = of([1.0, 2.0, 2.0, 3.0]).less(&of([2.0, 3.0, 4.0]));
+        let (left, right) = less(of([1.0, 2.0, 2.0, 3.0]).bins(), of([2.0, 3.0, 4.0]).bins());
         let ages = |bins: &[Bin]| bins.iter().map(|b| (b.low, b.count)).collect::<Vec<_>>();
         assert_eq!((ages(&left), ages(&right)), (vec![(1.0, 1), (2.0, 1)], vec![(4.0, 1)]));
         // A histogram against exact ages: by bins.
         let many = of((1..=6_000).map(|i| f64::from(i) * 1e-3));
         let few = of((1..=3_000).map(|i| f64::from(i) * 1e-3));
-        let (left, right) = many.less(&few);
+        let (left, right) = less(many.bins(), few.bins());
         assert_eq!(left.iter().map(|b| b.count).sum::<u64>(), 3_000);
         assert!(right.is_empty());
     }
