@@ -15,6 +15,7 @@ use crate::glob::Glob;
 pub(super) struct Outcome {
     pub(super) lines: u64,
     pub(super) waits: u64,
+    pub(super) halves_taken: u64,
     pub(super) other_streams: u64,
     pub(super) outside_window: u64,
     pub(super) unmeasured: u64,
@@ -56,6 +57,7 @@ impl<'w, S: Sink> Collector<'w, S> {
         let outcome = Outcome {
             lines: 0,
             waits: 0,
+            halves_taken: 0,
             other_streams: 0,
             outside_window: 0,
             unmeasured: 0,
@@ -115,10 +117,12 @@ impl<'w, S: Sink> Collector<'w, S> {
             Made::Half(half) => {
                 let stream = self.streams.enter(half.stream, self.options.streams.as_ref())?;
                 stream.note_time(half.time);
-                if stream.wanted {
-                    self.outcome.halves.push(line, &half);
-                } else {
+                if !stream.wanted {
                     self.outcome.other_streams += 1;
+                } else if self.sink.take_half(&half) {
+                    self.outcome.halves_taken += 1;
+                } else {
+                    self.outcome.halves.push(line, &half);
                 }
                 Ok(())
             }

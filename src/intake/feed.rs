@@ -85,7 +85,7 @@ impl<'o> Feed<'o> {
         loop {
             let Some(open) = &mut self.open else {
                 let Some((number, source)) = self.sources.next() else { return Ok(None) };
-                self.open = open(number, source, self.options, &self.bytes_read)?;
+                self.open = open(number, source, self.options, &self.bytes_read, self.allowance)?;
                 continue;
             };
             let found = open
@@ -122,6 +122,7 @@ fn open(
     source: Source,
     options: &Options,
     bytes_read: &Arc<AtomicU64>,
+    allowance: u64,
 ) -> Result<Option<Open>, IntakeError> {
     let unpacked = source.open(Arc::clone(bytes_read))?;
     let (packing, file) = (unpacked.packing(), unpacked.file);
@@ -130,7 +131,7 @@ fn open(
     if blocks.peek().map_err(damaged)?.starts_with(b"\xef\xbb\xbf") {
         blocks.skip(3);
     }
-    let mut lines_before = 0;
+    let (mut lines_before, mut blank) = (0, 0);
     let head = loop {
         let head = blocks.peek().map_err(damaged)?;
         let (length, lines) = (head.len(), count_lines(head));
@@ -142,6 +143,10 @@ fn open(
         }
         blocks.skip(length);
         lines_before += lines;
+        blank += length as u64;
+        if blank > allowance {
+            return Err(IntakeError::TooMuch { file, limit: options.total_bytes });
+        }
     };
     let format = match options.format {
         Some(format) => format,

@@ -265,6 +265,7 @@ impl<'o, S: Sink> Settler<'o, S> {
             }
         });
         report.waits += outcome.waits;
+        report.pairs.handed_on += outcome.halves_taken;
         report.left_out.other_streams += outcome.other_streams;
         report.left_out.outside_window += outcome.outside_window;
         report.left_out.unmeasured += outcome.unmeasured;
@@ -317,7 +318,12 @@ impl<'o, S: Sink> Settler<'o, S> {
             Allowed::AtMost(allowed) if report.bad.count > allowed => {
                 Err(IntakeError::BadLines { report: Box::new(report), allowed })
             }
-            _ if report.waits + report.left_out.other_streams + report.left_out.outside_window == 0 => {
+            _ if report.waits
+                + report.pairs.handed_on
+                + report.left_out.other_streams
+                + report.left_out.outside_window
+                == 0 =>
+            {
                 Err(IntakeError::NoWaits { report: Box::new(report) })
             }
             _ => Ok((sink, report)),

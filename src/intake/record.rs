@@ -277,21 +277,27 @@ pub(super) enum Made<'a> {
 
 /// A start without its end, or the reverse.
 #[derive(Clone, Copy, Debug, PartialEq)]
-pub(super) struct Half<'a> {
-    pub(super) stream: &'a str,
-    pub(super) id: &'a str,
-    pub(super) side: Side,
-    /// Unix seconds.
-    pub(super) time: f64,
-    pub(super) attempt: u32,
+pub struct Half<'a> {
+    /// The stream.
+    pub stream: &'a str,
+    /// What ties it to its other half.
+    pub id: &'a str,
+    /// Which half it is.
+    pub side: Side,
+    /// When it started or ended, Unix seconds.
+    pub time: f64,
+    /// Which attempt of its request, from 1.
+    pub attempt: u32,
     /// Age at which watching began, s.
-    pub(super) entered: f64,
+    pub entered: f64,
 }
 
 /// Which half, and how it ended.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
-pub(super) enum Side {
+pub enum Side {
+    /// It has started.
     Start,
+    /// It has ended, and how.
     End(Ending),
 }
 

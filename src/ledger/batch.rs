@@ -68,6 +68,18 @@ impl Batch {
         self.hours(stream, |hours| hours.at(hour).merge(tally))
     }
 
+    /// Adds all of another batch, whatever its key.
+    pub fn absorb(&mut self, other: Batch) {
+        for (stream, hours) in other.streams {
+            let mine = self.streams.entry(stream).or_default();
+            hours.0.iter().for_each(|(hour, tally)| mine.at(*hour).merge(tally));
+        }
+        self.events.extend(other.events);
+        for (reason, lines) in other.bad_lines {
+            self.bad_lines(&reason, lines);
+        }
+    }
+
     #[inline]
     fn hours(&mut self, stream: &str, count: impl FnOnce(&mut Hours)) -> Result<(), StreamError> {
         match self.streams.get_mut(stream) {
@@ -97,6 +109,14 @@ impl Batch {
     /// [`EventError`] for a name, id, attempt or time that is not allowed.
     pub fn end(&mut self, tie: Tie<'_>, ended: f64, ending: Ending) -> Result<(), EventError> {
         self.event(tie, ended, Half::End { ended, ending })
+    }
+
+    /// Files that a wait, counted by [`Batch::add`], is no longer open, if it was. Nothing more is counted.
+    ///
+    /// # Errors
+    /// [`EventError`] for a name, id, attempt or time that is not allowed.
+    pub fn close(&mut self, tie: Tie<'_>, ended: f64) -> Result<(), EventError> {
+        self.event(tie, ended, Half::Close { ended })
     }
 
     fn event(&mut self, tie: Tie<'_>, time: f64, half: Half) -> Result<(), EventError> {
@@ -215,8 +235,18 @@ pub(super) struct EventKey {
 
 #[derive(Clone, Copy, Debug, PartialEq)]
 pub(super) enum Half {
-    Start { started: f64, entered: f64 },
-    End { ended: f64, ending: Ending },
+    Start {
+        started: f64,
+        entered: f64,
+    },
+    End {
+        ended: f64,
+        ending: Ending,
+    },
+    /// It was counted as a whole wait, so that it is open no longer.
+    Close {
+        ended: f64,
+    },
 }
 
 /// Why an idempotency key was refused.

@@ -40,6 +40,8 @@ enum Step {
     Keep(State),
     /// A whole wait.
     Join(State, Wait),
+    /// Nothing to close.
+    Nothing,
     /// Known already; nothing changes.
     Again,
     /// No wait can be made of it; nothing changes.
@@ -48,6 +50,10 @@ enum Step {
 
 fn step(state: Option<State>, half: Half, attempt: u32) -> Step {
     match (state, half) {
+        (Some(State::Open { started, .. }), Half::Close { ended }) if ended >= started => {
+            Step::Keep(State::Joined { started, ended })
+        }
+        (_, Half::Close { .. }) => Step::Nothing,
         (None, Half::Start { started, entered }) => Step::Keep(State::Open { started, entered }),
         (None, Half::End { ended, ending }) => Step::Keep(State::Ended { ended, ending }),
         (Some(State::Open { .. }), Half::Start { .. }) | (Some(State::Ended { .. }), Half::End { .. }) => {
@@ -70,7 +76,7 @@ fn step(state: Option<State>, half: Half, attempt: u32) -> Step {
         (Some(State::Joined { started, ended }), half) => {
             let same = match half {
                 Half::Start { started: again, .. } => again == started,
-                Half::End { ended: again, .. } => again == ended,
+                Half::End { ended: again, .. } | Half::Close { ended: again } => again == ended,
             };
             if same { Step::Again } else { Step::Refused }
         }
@@ -119,6 +125,7 @@ pub(super) fn settle<E>(
                 outcome.waits.push((key.stream.clone(), wait));
                 state
             }
+            Step::Nothing => continue,
             Step::Again => {
                 outcome.again += 1;
                 continue;
@@ -157,7 +164,7 @@ mod tests {
                     state = Some(next);
                     waits.push(wait);
                 }
-                Step::Again | Step::Refused => {}
+                Step::Nothing | Step::Again | Step::Refused => {}
             }
         }
         (state, waits)
@@ -184,6 +191,15 @@ mod tests {
         let (_, waits) = take(&[START, END, later, END, end, later, START]);
         assert_eq!(waits.len(), 2);
         assert_eq!(waits[1].at(), Some(21.0));
+    }
+
+    #[test]
+    fn a_whole_wait_closes_and_counts_nothing() {
+        let close = Half::Close { ended: 12.5 };
+        let (state, waits) = take(&[START, close, START]);
+        assert_eq!((state, waits.len()), (Some(State::Joined { started: 10.0, ended: 12.5 }), 0));
+        assert_eq!(take(&[close]).0, None);
+        assert_eq!(take(&[START, Half::Close { ended: 9.0 }]).0, take(&[START]).0);
     }
 
     #[test]
