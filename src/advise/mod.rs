@@ -14,7 +14,7 @@ mod summary;
 pub use curves::{CURVE_SCHEMA, CurvePoint, Curves, Mark};
 pub use shift::Shift;
 pub use streams::{Lenders, Terms};
-pub use study::{Study, WHAT_IF_SCHEMA, WhatIf, WhatIfError};
+pub use study::{Study, Survival, WHAT_IF_SCHEMA, WhatIf, WhatIfError};
 
 use crate::advice::{Action, Advice, Caution, Decision, Evidence, RemainingWait, Tail, TailClass};
 use crate::curve::ENOUGH;

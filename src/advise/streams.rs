@@ -83,8 +83,8 @@ impl Terms<'_> {
         study(&case, &entry, self.seed ^ name_hash(stream))
     }
 
-    /// First day of an entry's window.
-    fn opening(&self, entry: &Entry) -> i32 {
+    /// First day of an entry's window, days since 1970-01-01.
+    pub fn opening(&self, entry: &Entry) -> i32 {
         match self.newest {
             Some(newest) => newest - ((entry.guard.window / DAY).ceil() as i32).max(1) + 1,
             None => i32::MIN,
@@ -217,6 +217,9 @@ pub struct Lenders {
 }
 
 impl Lenders {
+    /// Most streams of an entry from which one borrows.
+    pub const MOST: usize = MOST_SIBLINGS;
+
     /// The siblings of a stream.
     fn of(&self, entry: usize, stream: &str) -> Vec<&Cells> {
         let all = self.by_entry.get(&entry).map(Vec::as_slice).unwrap_or_default();

@@ -5,6 +5,8 @@ use serde::{Deserialize, Serialize};
 use super::bounds::Bounds;
 use super::judge::{self, Judgement, Settled, finite, interpolate};
 use crate::advice::{Advice, Outcome};
+use crate::curve::Empirical;
+use crate::outlook::Outlook;
 use crate::policy::Entry;
 use crate::stopping::{self, Hold, Holding, Limits, Objective};
 use crate::tally::Cells;
@@ -41,6 +43,19 @@ pub struct WhatIf {
     pub now: Option<Outcome>,
     /// Never giving up (waiting up to the ceiling).
     pub never: Outcome,
+}
+
+/// Who is still waiting, at some ages.
+#[derive(Clone, Debug, PartialEq)]
+pub struct Survival {
+    /// Waits it rests on.
+    pub waits: f64,
+    /// Last age about which the data speak, s.
+    pub sight_s: f64,
+    /// Mean wait up to there, s.
+    pub restricted_mean_s: f64,
+    /// Age, s, and share still waiting; up to the edge of sight.
+    pub points: Vec<[f64; 2]>,
 }
 
 /// Why a give-up time cannot be judged.
@@ -101,6 +116,23 @@ impl Study {
         let optimum = stopping::best(&objective).ok()?;
         let holding = Holding::new(&objective, &optimum);
         Some(ages.iter().map(|&age| holding.at(age)).collect())
+    }
+
+    /// Who is still waiting at these ages (s, rising), by the product-limit estimate alone (METHODS.md section 2). `None`
+    /// while no wait has ended.
+    pub fn survival(&self, ages: &[f64]) -> Option<Survival> {
+        let curve = Empirical::new(&self.cells).ok()?;
+        let sight = curve.sight();
+        Some(Survival {
+            waits: self.cells.total(),
+            sight_s: sight,
+            restricted_mean_s: curve.restricted_mean(sight),
+            points: ages
+                .iter()
+                .take_while(|age| **age <= sight)
+                .map(|&age| [age, curve.survival(age)])
+                .collect(),
+        })
     }
 
     pub(super) fn settled(&self) -> Option<(&Settled, &Bounds)> {
