@@ -16,6 +16,7 @@ pub mod numeric;
 pub mod outlook;
 pub mod policy;
 pub mod say;
+pub mod serve;
 pub mod stopping;
 pub mod tail;
 pub mod tally;

@@ -4,9 +4,11 @@ mod demo;
 mod exit;
 mod files;
 mod layout;
+mod ledger;
 mod options;
 mod pictures;
 mod reading;
+mod serve;
 mod text;
 mod vet;
 mod weigh;
@@ -35,6 +37,10 @@ enum Command {
     Weigh(weigh::Weigh),
     /// Read a policy and say what it means for each stream, or what is wrong with it
     Vet(vet::Vet),
+    /// Run the daemon: waits in over HTTP, advice and metrics out
+    Serve(serve::Serve),
+    /// Show, check, back up or export the daemon's data
+    Ledger(ledger::Ledger),
     /// Write the demo scenario (waits, policy, what to expect) into a folder
     Demo(demo::Demo),
 }
@@ -55,6 +61,8 @@ pub fn run(arguments: impl IntoIterator<Item = OsString>) -> ExitCode {
     let outcome = match parsed.command {
         Command::Weigh(weigh) => weigh.run(),
         Command::Vet(vet) => vet.run(),
+        Command::Serve(serve) => serve.run(),
+        Command::Ledger(ledger) => ledger.run(),
         Command::Demo(demo) => demo.run(),
     };
     exit::report(outcome)
