@@ -544,7 +544,8 @@ fn long_waits_are_at_risk_in_every_day_they_span() {
         let today = Hour::of(NOON).day();
         let whole = house.ledger().window("lender.reply", EVER).unwrap().tally.first_attempts();
         assert_eq!((whole.totals(), whole.entries.len()), ([1.0, 0.0, 0.0, 0.0], 0));
-        let late = house.ledger().window("lender.reply", Hour::first_of(today)..Hour(i32::MAX)).unwrap().tally;
+        let late =
+            house.ledger().window("lender.reply", Hour::first_of(today)..Hour(i32::MAX)).unwrap().tally;
         let late = late.first_attempts();
         assert_eq!(late.entries[0].age, 2.0 * DAY);
         let early = house.ledger().window("lender.reply", EVER.start..Hour::first_of(today)).unwrap().tally;
