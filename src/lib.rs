@@ -14,6 +14,7 @@ pub mod intake;
 pub mod numeric;
 pub mod outlook;
 pub mod policy;
+pub mod replay;
 pub mod say;
 pub mod stopping;
 pub mod tail;

@@ -84,7 +84,7 @@ impl Terms<'_> {
     }
 
     /// First day of an entry's window.
-    fn opening(&self, entry: &Entry) -> i32 {
+    pub(crate) fn opening(&self, entry: &Entry) -> i32 {
         match self.newest {
             Some(newest) => newest - ((entry.guard.window / DAY).ceil() as i32).max(1) + 1,
             None => i32::MIN,
@@ -128,7 +128,8 @@ impl Terms<'_> {
         AdviceSet { schema: SCHEMA.to_owned(), made_at, assumed: self.assumed(), streams }
     }
 
-    fn assumed(&self) -> Vec<String> {
+    /// What is assumed for want of a policy.
+    pub(crate) fn assumed(&self) -> Vec<String> {
         match self.policy {
             Some(_) => Vec::new(),
             None => vec![
@@ -245,7 +246,7 @@ fn mean_pause(entry: &Entry) -> Pause {
 }
 
 /// FNV-1a of a name: so that a stream's numbers do not depend on which others are there.
-fn name_hash(name: &str) -> u64 {
+pub(crate) fn name_hash(name: &str) -> u64 {
     name.bytes()
         .fold(0xcbf2_9ce4_8422_2325, |hash, byte| (hash ^ u64::from(byte)).wrapping_mul(0x0100_0000_01b3))
 }

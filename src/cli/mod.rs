@@ -7,6 +7,7 @@ mod layout;
 mod options;
 mod pictures;
 mod reading;
+mod replay;
 mod text;
 mod vet;
 mod weigh;
@@ -33,6 +34,8 @@ const EXIT_CODES: &str = "Exit codes: 0 well, 1 the gate is shut, 2 wrong usage,
 enum Command {
     /// Weigh waits: for each stream, how long to wait before giving up, and why
     Weigh(weigh::Weigh),
+    /// Replay rival rules on later waits than they learnt from
+    Replay(replay::Replay),
     /// Read a policy and say what it means for each stream, or what is wrong with it
     Vet(vet::Vet),
     /// Write the demo scenario (waits, policy, what to expect) into a folder
@@ -54,6 +57,7 @@ pub fn run(arguments: impl IntoIterator<Item = OsString>) -> ExitCode {
     };
     let outcome = match parsed.command {
         Command::Weigh(weigh) => weigh.run(),
+        Command::Replay(replay) => replay.run(),
         Command::Vet(vet) => vet.run(),
         Command::Demo(demo) => demo.run(),
     };

@@ -123,7 +123,8 @@ impl Days {
         }
     }
 
-    fn at(&mut self, day: Day) -> &mut Tally {
+    /// The tally of a day, empty where it has none yet.
+    pub(crate) fn at(&mut self, day: Day) -> &mut Tally {
         let i = match self.days.binary_search_by_key(&day, |(d, _)| *d) {
             Ok(i) => i,
             Err(i) => {
