@@ -15,6 +15,7 @@ pub mod ledger;
 pub mod numeric;
 pub mod outlook;
 pub mod policy;
+pub mod replay;
 pub mod say;
 pub mod serve;
 pub mod stopping;

@@ -128,7 +128,7 @@ impl Study {
             schema: CURVE_SCHEMA.to_owned(),
             stream: advice.stream.clone(),
             waits: advice.evidence.waits,
-            aim: self.entry.worth.map(|worth| aim(worth.aim).to_owned()),
+            aim: self.entry.worth.map(|worth| aim_name(worth.aim).to_owned()),
             action: decision.action,
             advised,
             now: now.map(|t| Mark { give_up_after_s: finite(t), rate_per_s: decision.rate_now_per_s }),
@@ -213,7 +213,8 @@ impl Study {
     }
 }
 
-fn aim(aim: Aim) -> &'static str {
+/// The name of an aim in JSON.
+pub(crate) fn aim_name(aim: Aim) -> &'static str {
     match aim {
         Aim::Rate => "rate",
         Aim::Finish => "finish",

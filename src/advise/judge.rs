@@ -153,19 +153,7 @@ impl Judgement {
             failure,
             replicates,
         };
-        let Some(mut worth) = entry.worth else { return Some(judgement) };
-        // A deadline brings its own cap.
-        let attempts = match worth.aim {
-            Aim::Deadline { attempts, .. } => Some(attempts),
-            _ => entry.retry.attempts,
-        };
-        let mut retry = Retry { attempts, growth: entry.retry.backoff.factor, ..Retry::default() };
-        if entry.retry.backoff.jitter == Jitter::Full {
-            // Drawn evenly from 0 to its full length, a pause lasts half of that on average.
-            retry.jitter = true;
-            worth.pause.failed *= 0.5;
-            worth.pause.gave_up *= 0.5;
-        }
+        let Some((mut worth, retry)) = prices(entry) else { return Some(judgement) };
         let sticky = sticky(cells, &tally.retries(), entry, &curve);
         worth.sticky = sticky.as_ref().map_or(0.0, |s| s.value);
         let (grid, empirical) = (&judgement.grid, &empirical);
@@ -173,6 +161,24 @@ impl Judgement {
         judgement.outcome = scene.settle(&judgement, failing.as_ref(), sticky);
         Some(judgement)
     }
+}
+
+/// The price list of an entry and what follows an attempt, as they are reckoned with; without an aim none.
+pub(crate) fn prices(entry: &Entry) -> Option<(Worth, Retry)> {
+    let mut worth = entry.worth?;
+    // A deadline brings its own cap.
+    let attempts = match worth.aim {
+        Aim::Deadline { attempts, .. } => Some(attempts),
+        _ => entry.retry.attempts,
+    };
+    let mut retry = Retry { attempts, growth: entry.retry.backoff.factor, ..Retry::default() };
+    if entry.retry.backoff.jitter == Jitter::Full {
+        // Drawn evenly from 0 to its full length, a pause lasts half of that on average.
+        retry.jitter = true;
+        worth.pause.failed *= 0.5;
+        worth.pause.gave_up *= 0.5;
+    }
+    Some((worth, retry))
 }
 
 /// Of the waits that reach past an age, the share that was cut off there or later and not seen to end.

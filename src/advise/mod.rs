@@ -11,10 +11,14 @@ mod streams;
 mod study;
 mod summary;
 
+pub(crate) use curves::aim_name;
 pub use curves::{CURVE_SCHEMA, CurvePoint, Curves, Mark};
+pub(crate) use judge::prices;
 pub use shift::Shift;
+pub(crate) use streams::name_hash;
 pub use streams::{Lenders, Terms};
 pub use study::{Study, Survival, WHAT_IF_SCHEMA, WhatIf, WhatIfError};
+pub(crate) use summary::cost_of_time;
 
 use crate::advice::{Action, Advice, Caution, Decision, Evidence, RemainingWait, Tail, TailClass};
 use crate::curve::ENOUGH;

@@ -128,7 +128,8 @@ impl Terms<'_> {
         AdviceSet { schema: SCHEMA.to_owned(), made_at, assumed: self.assumed(), streams }
     }
 
-    fn assumed(&self) -> Vec<String> {
+    /// What is assumed for want of a policy.
+    pub(crate) fn assumed(&self) -> Vec<String> {
         match self.policy {
             Some(_) => Vec::new(),
             None => vec![
@@ -248,7 +249,7 @@ fn mean_pause(entry: &Entry) -> Pause {
 }
 
 /// FNV-1a of a name: so that a stream's numbers do not depend on which others are there.
-fn name_hash(name: &str) -> u64 {
+pub(crate) fn name_hash(name: &str) -> u64 {
     name.bytes()
         .fold(0xcbf2_9ce4_8422_2325, |hash, byte| (hash ^ u64::from(byte)).wrapping_mul(0x0100_0000_01b3))
 }

@@ -4,7 +4,7 @@ use serde::{Deserialize, Serialize};
 
 use super::bounds::Bounds;
 use super::judge::{self, Judgement, Settled, finite, interpolate};
-use crate::advice::{Advice, Outcome};
+use crate::advice::{Action, Advice, Outcome};
 use crate::curve::Empirical;
 use crate::outlook::Outlook;
 use crate::policy::Entry;
@@ -135,7 +135,11 @@ impl Study {
         })
     }
 
+    /// What was settled, where the evidence suffices to act on it.
     pub(super) fn settled(&self) -> Option<(&Settled, &Bounds)> {
+        if !matches!(self.advice.advice.action, Action::GiveUpAfter | Action::WaitItOut) {
+            return None;
+        }
         Some((self.judgement.as_ref()?.outcome.as_ref().ok()?, self.bounds.as_ref()?))
     }
 }
@@ -242,8 +246,15 @@ mod tests {
         assert!(curves.points.iter().all(|p| p.rate_per_s.is_none() && p.holding_on.is_none()));
         assert!(curves.points.iter().any(|p| p.age_s > 1.0 && p.remaining_s.is_some()));
         assert_eq!(curves.sight_s, Some(1.0));
+        // Enough to fit a law, not enough to act on it.
+        let some = waits(60, f64::INFINITY);
+        let study = study(&Case::new("desk", &some), &entry(), 1);
+        let curves = study.curves();
+        assert_eq!((curves.action, curves.advised), (Action::GatherEvidence, None));
+        assert!(curves.points.iter().all(|p| p.rate_per_s.is_none()));
+        assert!(study.what_if(1.0).is_err() && study.holding(&[1.0]).is_none());
         let few = waits(4, 1.0);
-        let study = study(&Case::new("desk", &few), &entry(), 1);
+        let study = super::super::study(&Case::new("desk", &few), &entry(), 1);
         curves_hold(&study.curves());
         assert!(study.curves().steps && study.curves().points.len() > 4);
         assert!(matches!(study.what_if(1.0), Err(WhatIfError::NoCurve(_))));

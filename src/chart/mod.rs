@@ -51,6 +51,7 @@ pub use remaining::{Remaining, remaining};
 pub use sheet::nothing;
 pub use spark::{Spark, spark};
 pub use story::Picture;
+pub(crate) use story::quantity;
 pub use trace::Point;
 pub use waiting::{Waiting, waiting};
 pub use week::{Week, week};

@@ -42,7 +42,7 @@ impl Picture {
     pub fn draw(self, curves: &Curves, frame: &Frame<'_>) -> Svg {
         let (stream, level) = (curves.stream.as_str(), curves.level);
         let marks = Marks { advised: time(curves.advised), in_force: time(curves.now) };
-        let ages = ages(curves);
+        let ages = ages(curves, &marks);
         let points = |value: fn(&CurvePoint) -> Option<Point>| -> Vec<Point> {
             curves.points.iter().filter_map(value).collect()
         };
@@ -104,14 +104,12 @@ pub(crate) fn quantity(aim: Option<&str>) -> Quantity<'static> {
     }
 }
 
-fn ages(curves: &Curves) -> Ages {
+/// Where a post would stand in the first twentieth of the path it counts as the middle, so that the path is logarithmic.
+fn ages(curves: &Curves, marks: &Marks) -> Ages {
     let end = curves.points.last().map_or(f64::NAN, |p| p.age_s);
-    Ages {
-        start: curves.start_s.unwrap_or(end),
-        middle: curves.median_s.unwrap_or(end),
-        end,
-        sight: curves.sight_s.unwrap_or(f64::INFINITY),
-    }
+    let posts = [marks.advised, marks.in_force].into_iter().flatten();
+    let middle = posts.fold(curves.median_s.unwrap_or(end), f64::min);
+    Ages { start: curves.start_s.unwrap_or(end), middle, end, sight: curves.sight_s.unwrap_or(f64::INFINITY) }
 }
 
 fn time(mark: Option<Mark>) -> Option<f64> {

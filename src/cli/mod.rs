@@ -8,6 +8,7 @@ mod ledger;
 mod options;
 mod pictures;
 mod reading;
+mod replay;
 mod serve;
 mod text;
 mod vet;
@@ -35,6 +36,8 @@ const EXIT_CODES: &str = "Exit codes: 0 well, 1 the gate is shut, 2 wrong usage,
 enum Command {
     /// Weigh waits: for each stream, how long to wait before giving up, and why
     Weigh(weigh::Weigh),
+    /// Replay rival rules on later waits than they learnt from
+    Replay(replay::Replay),
     /// Read a policy and say what it means for each stream, or what is wrong with it
     Vet(vet::Vet),
     /// Run the daemon: waits in over HTTP, advice and metrics out
@@ -60,6 +63,7 @@ pub fn run(arguments: impl IntoIterator<Item = OsString>) -> ExitCode {
     };
     let outcome = match parsed.command {
         Command::Weigh(weigh) => weigh.run(),
+        Command::Replay(replay) => replay.run(),
         Command::Vet(vet) => vet.run(),
         Command::Serve(serve) => serve.run(),
         Command::Ledger(ledger) => ledger.run(),

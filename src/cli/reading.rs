@@ -39,6 +39,12 @@ impl Sink for Counting {
 
 /// Reads all files and tells on standard error what was left out.
 pub(super) fn book(reading: &Reading, common: &Common) -> Result<(Book, Report), Failure> {
+    let (Counting(book), report) = into(Counting::default(), reading, common)?;
+    Ok((book, report))
+}
+
+/// The same into any sink.
+pub(super) fn into<S: Sink>(sink: S, reading: &Reading, common: &Common) -> Result<(S, Report), Failure> {
     let standard_input = |name: &OsStr| name == "-";
     let named = reading.files.iter().filter(|file| standard_input(file)).count();
     let policy = common.policy_file().is_some_and(|file| standard_input(file.as_os_str()));
@@ -48,14 +54,14 @@ pub(super) fn book(reading: &Reading, common: &Common) -> Result<(Book, Report),
     }
     let sources: Vec<Source> = reading.files.iter().map(|file| Source::argument(file)).collect();
     let mut bar = Bar::new();
-    let outcome = intake::read(sources, &reading.options(common), Counting::default(), &mut |progress| {
+    let outcome = intake::read(sources, &reading.options(common), sink, &mut |progress| {
         bar.show(progress.bytes, progress.total);
     });
     bar.0.finish_and_clear();
     match outcome {
-        Ok((Counting(book), report)) => {
+        Ok((sink, report)) => {
             tell(&report);
-            Ok((book, report))
+            Ok((sink, report))
         }
         Err(error) => Err(failure(error)),
     }
@@ -68,7 +74,7 @@ fn failure(error: IntakeError) -> Failure {
             tell(&report);
             let be = |n: u64| format!("{} {}", say::count(n as f64), if n == 1 { "is" } else { "are" });
             let told = anyhow!(
-                "of {} {} bad, and {} allowed; nothing was weighed",
+                "of {} {} bad, and {} allowed; nothing was reckoned",
                 text::counted(report.lines, "line"),
                 be(report.bad.count),
                 be(allowed)

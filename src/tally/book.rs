@@ -99,8 +99,9 @@ impl Days {
         }
     }
 
+    /// The tally of a day, empty where it has none yet.
     #[inline]
-    fn at(&mut self, day: Day) -> &mut Tally {
+    pub(crate) fn at(&mut self, day: Day) -> &mut Tally {
         // Records come roughly in order of time, so the day is nearly always the last.
         let i = match self.days.last() {
             Some((last, _)) if *last == day => self.days.len() - 1,
