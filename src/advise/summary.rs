@@ -122,6 +122,7 @@ fn stopped(fit: &crate::tail::Fit) -> String {
             format!("at a limit of the family: {}", fit.boundary.unwrap_or("a parameter"))
         }
         Stop::Stalled => "stalled short of a maximum".into(),
+        Stop::Hopeless => "given up far below the best".into(),
         Stop::NotFinite => "the likelihood is not finite".into(),
     }
 }

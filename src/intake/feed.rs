@@ -93,6 +93,10 @@ impl<'o> Feed<'o> {
                 .next(&mut buffer, open.layout.records())
                 .map_err(|error| Unpacked::error(&open.file, open.packing, error))?;
             let unpaid = open.blocks.read - std::mem::replace(&mut open.paid, open.blocks.read);
+            if open.packing.is_none() {
+                // Not counted one by one: in between, a file is read into a block without clearing the block first.
+                self.bytes_read.fetch_add(unpaid, Ordering::Relaxed);
+            }
             self.allowance = self.allowance.checked_sub(unpaid).ok_or_else(|| IntakeError::TooMuch {
                 file: open.file.clone(),
                 limit: self.options.total_bytes,

@@ -9,6 +9,9 @@ use crate::wait::{Ending, Wait, WaitError};
 pub struct Record<'a> {
     /// The stream's name, checked.
     pub stream: &'a str,
+    /// The stream's number, the same for all records of it that a [`crate::intake::Sink`] is handed: a look-up of the name is
+    /// done once already. From 0; some may be missing, and another thread's sink knows it by another.
+    pub place: usize,
     /// What ties it to the other attempts of its request, if the record says.
     pub id: Option<&'a str>,
     /// The wait.
@@ -328,7 +331,7 @@ pub(super) fn make<'a>(
     if let Some(at) = fields.time(Field::At)? {
         wait = wait.with_at(at)?;
     }
-    Ok(Made::Whole(Record { stream, id, wait }))
+    Ok(Made::Whole(Record { stream, place: 0, id, wait }))
 }
 
 fn make_rare<'a>(
@@ -380,7 +383,7 @@ fn make_rare<'a>(
     if let Some(at) = at.or(ended) {
         wait = wait.with_at(at)?;
     }
-    Ok(Made::Whole(Record { stream, id, wait }))
+    Ok(Made::Whole(Record { stream, place: 0, id, wait }))
 }
 
 /// The wait from one time to another, Unix seconds.

@@ -8,6 +8,10 @@ use hdrhistogram::{Counter, Histogram};
 /// Distinct ages kept exactly, each 16 bytes: about what a histogram of three digits takes (64 KiB).
 pub const EXACT_AGES: usize = 4096;
 
+/// Ages that wait to be grouped, each 8 bytes: as large as a histogram too, and so many more than [`EXACT_AGES`] that many
+/// distinct ones show at the first look.
+const MOST_LOOSE: usize = 2 * EXACT_AGES;
+
 /// Significant decimal digits of the histogram: bins at most 0.1% wide.
 pub(super) const DIGITS: u8 = 3;
 
@@ -49,7 +53,7 @@ impl Ages {
         match &mut **store {
             Store::Few { loose, .. } if count == 1 => {
                 loose.push(age);
-                if loose.len() >= EXACT_AGES {
+                if loose.len() >= MOST_LOOSE {
                     store.settle();
                 }
             }
@@ -162,31 +166,22 @@ impl Store {
     /// Groups what is loose; becomes a histogram when there are too many distinct ages.
     fn settle(&mut self) {
         let Store::Few { grouped, loose } = self else { return };
-        loose.sort_unstable_by(f64::total_cmp);
-        let mut merged: Vec<(f64, u64)> = Vec::with_capacity(grouped.len() + 64);
-        let mut push = |age: f64, count: u64| match merged.last_mut() {
-            Some((last, n)) if *last == age => *n = n.saturating_add(count),
-            _ => merged.push((age, count)),
-        };
-        let mut left = grouped.iter().copied().peekable();
-        for &age in loose.iter() {
-            while let Some(&(a, c)) = left.peek()
-                && a <= age
-            {
-                push(a, c);
-                left.next();
-            }
-            push(age, 1);
-        }
-        left.for_each(|(a, c)| push(a, c));
-        if merged.len() <= EXACT_AGES {
-            *grouped = merged;
+        if !surely_many(grouped.iter().map(|(age, _)| age).chain(loose.iter())) {
+            *grouped = group(grouped, loose);
             loose.clear();
-            return;
         }
+        if grouped.len() + loose.len() > EXACT_AGES {
+            self.widen();
+        }
+    }
+
+    /// Becomes a histogram, if it is none.
+    fn widen(&mut self) {
+        let Store::Few { grouped, loose } = self else { return };
+        let (grouped, loose) = (std::mem::take(grouped), std::mem::take(loose));
         let Some(histogram) = new_histogram::<u32>() else { return };
         *self = Store::Narrow(histogram);
-        for (age, count) in merged {
+        for (age, count) in grouped.into_iter().chain(loose.into_iter().map(|age| (age, 1))) {
             self.record(ticks(age), count);
         }
     }
@@ -227,18 +222,47 @@ impl Store {
     }
 
     fn record_all<C: Counter>(&mut self, other: &Histogram<C>) {
-        if let Store::Few { grouped, loose } = self {
-            let (grouped, loose) = (std::mem::take(grouped), std::mem::take(loose));
-            let Some(histogram) = new_histogram::<u32>() else { return };
-            *self = Store::Narrow(histogram);
-            for (age, count) in grouped.into_iter().chain(loose.into_iter().map(|age| (age, 1))) {
-                self.record(ticks(age), count);
-            }
-        }
+        self.widen();
         for v in other.iter_recorded() {
             self.record(v.value_iterated_to(), v.count_at_value().as_u64());
         }
     }
+}
+
+/// Whether more than [`EXACT_AGES`] of the ages are distinct, seen without sorting them. It errs towards "no": two ages may
+/// share a place.
+fn surely_many<'a>(ages: impl Iterator<Item = &'a f64>) -> bool {
+    const PLACES: u32 = 17;
+    let mut taken = [0u64; 1 << (PLACES - 6)];
+    let mut distinct = 0;
+    for age in ages {
+        // Fibonacci hashing (Knuth, volume 3, section 6.4).
+        let place = age.to_bits().wrapping_mul(0x9E37_79B9_7F4A_7C15) >> (64 - PLACES);
+        let (word, bit) = (&mut taken[(place >> 6) as usize], 1 << (place & 63));
+        distinct += usize::from(*word & bit == 0);
+        *word |= bit;
+    }
+    distinct > EXACT_AGES
+}
+
+/// Joins loose ages to sorted, distinct ones.
+fn group(grouped: &[(f64, u64)], loose: &mut [f64]) -> Vec<(f64, u64)> {
+    // Above 0 numbers sort as their bits do.
+    loose.sort_unstable_by_key(|age| age.to_bits());
+    let mut joined: Vec<(f64, u64)> = Vec::with_capacity(grouped.len() + 64);
+    let mut push = |age: f64, count: u64| match joined.last_mut() {
+        Some((last, n)) if *last == age => *n = n.saturating_add(count),
+        _ => joined.push((age, count)),
+    };
+    let mut left = grouped.iter().copied().peekable();
+    for &age in loose.iter() {
+        while let Some((a, c)) = left.next_if(|(a, _)| *a <= age) {
+            push(a, c);
+        }
+        push(age, 1);
+    }
+    left.for_each(|(a, c)| push(a, c));
+    joined
 }
 
 /// An auto-resizing histogram. Creation fails only for more than 5 digits.
@@ -285,7 +309,10 @@ fn binned(bins: &[Bin]) -> Vec<Bin> {
 
 #[inline]
 fn ticks(age: f64) -> u64 {
-    ((age * TICKS).round() as u64).max(1)
+    let exact = age * TICKS;
+    // Half up; a call of `round` would take longer than all else.
+    let whole = exact as u64;
+    (whole + u64::from(exact - whole as f64 >= 0.5)).max(1)
 }
 
 #[cfg(test)]

@@ -89,6 +89,13 @@ impl Book {
     }
 }
 
+/// Of streams by name; the names are the caller's to check.
+impl FromIterator<(String, Days)> for Book {
+    fn from_iter<I: IntoIterator<Item = (String, Days)>>(streams: I) -> Book {
+        Book { streams: streams.into_iter().collect() }
+    }
+}
+
 impl Days {
     /// Counts one wait under the day in which it ended; one that spans days also enters and leaves those before.
     #[inline]
