@@ -19,6 +19,7 @@ pub mod numeric;
 pub mod outlook;
 pub mod policy;
 pub mod replay;
+pub mod report;
 pub mod say;
 pub mod serve;
 pub mod settle;

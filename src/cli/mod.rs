@@ -16,6 +16,7 @@ mod serve;
 mod settle;
 mod text;
 mod vet;
+mod weekly;
 mod weigh;
 
 use std::ffi::OsString;
@@ -50,6 +51,8 @@ enum Command {
     Export(export::ExportArguments),
     /// Shut the gate of a build where a time in force costs more than its slack
     Gate(gate::GateArguments),
+    /// Say what to keep, raise or lower this week, ready to be signed
+    Weekly(weekly::WeeklyArguments),
     /// Run the daemon: waits in over HTTP, advice and metrics out
     Serve(serve::Serve),
     /// Show, check, back up or export the daemon's data
@@ -78,6 +81,7 @@ pub fn run(arguments: impl IntoIterator<Item = OsString>) -> ExitCode {
         Command::Settle(settle) => settle.run(),
         Command::Export(export) => export.run(),
         Command::Gate(gate) => gate.run(),
+        Command::Weekly(weekly) => weekly.run(),
         Command::Serve(serve) => serve.run(),
         Command::Ledger(ledger) => ledger.run(),
         Command::Demo(demo) => demo.run(),
