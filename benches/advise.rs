@@ -140,7 +140,7 @@ fn many_streams(criterion: &mut Criterion) {
     group.sample_size(10);
     group.bench_function("one", |b| {
         let days = stream(4_321);
-        let terms = Terms { policy: None, newest: days.last_day(), seed: 1 };
+        let terms = Terms { policy: None, newest: days.last_day(), seed: 1, past: None };
         b.iter(|| terms.advise("catalogue.lookup", black_box(&days), None));
     });
     group.finish();
@@ -155,7 +155,7 @@ fn many_streams(criterion: &mut Criterion) {
         .map(|number| (format!("stream-{number}"), stream(number)))
         .collect();
     let newest = streams.iter().filter_map(|(_, days)| days.last_day()).max();
-    let terms = Terms { policy: None, newest, seed: 1 };
+    let terms = Terms { policy: None, newest, seed: 1, past: None };
     let start = Instant::now();
     let advised: Vec<_> =
         pool.install(|| streams.par_iter().map(|(name, days)| terms.advise(name, days, None)).collect());

@@ -53,6 +53,9 @@ pub struct Evidence {
     pub waiting: u64,
     /// Waits that were retries (attempt 2 and later).
     pub retries: u64,
+    /// Time waited in all of them together, s; a wait counts from where watching it began.
+    #[serde(default)]
+    pub waited_s: f64,
     /// Share of the completions behind the advice that other streams of the same policy entry lent, 0 to 1; absent where
     /// none did.
     pub borrowed_share: Option<f64>,
@@ -294,6 +297,9 @@ pub struct Proposal {
     pub to_s: Option<f64>,
     /// Whether the largest step of the guard keeps it short of the advised time.
     pub step_limited: bool,
+    /// What that time does; absent where nothing is changed.
+    #[serde(default)]
+    pub then: Option<Outcome>,
 }
 
 /// What a give-up time does.

@@ -64,6 +64,33 @@ pub fn duration(seconds: f64) -> String {
     format!("{} {unit}", number(seconds / length))
 }
 
+/// A duration that reads back ([`parse_duration`]) as the same to the nanosecond: `"76.5ms"`, `"1.5h"`, `"14d"`;
+/// `"never"` if infinite.
+pub fn exact_duration(seconds: f64) -> String {
+    if seconds.is_infinite() {
+        return "never".into();
+    }
+    let all = (seconds.max(0.0) * 1e9).round() as u128;
+    // Only whole days, since a share of a day is not read; no more than three decimals of the rest.
+    let day = 86_400_000_000_000;
+    if all >= 2 * day && all.is_multiple_of(day) {
+        return format!("{}d", all / day);
+    }
+    let units = [("h", 3_600_000_000_000), ("min", 60_000_000_000), ("s", 1_000_000_000), ("ms", 1_000_000), ("us", 1_000)];
+    for (unit, length) in units {
+        if all >= length && (1_000 * all).is_multiple_of(length) {
+            let (whole, part) = (all / length, 1_000 * (all % length) / length);
+            let text = format!("{whole}.{part:03}");
+            return format!("{}{unit}", text.trim_end_matches('0').trim_end_matches('.'));
+        }
+    }
+    if all >= 1_000 && all < day {
+        // Finer than a thousandth of every unit.
+        return format!("{}.{:09}s", all / 1_000_000_000, all % 1_000_000_000);
+    }
+    format!("{all}ns")
+}
+
 /// A number with three significant digits, without an exponent between 0.001 and a million.
 pub fn number(value: f64) -> String {
     if value == 0.0 {
@@ -144,6 +171,20 @@ mod tests {
         }
         for bad in ["", "fast", "NaN", "1e999", "1 year", "5 parsecs"] {
             assert!(parse_duration(bad).is_err(), "{bad}");
+        }
+        for (seconds, text) in [
+            (0.0765, "76.5ms"),
+            (5_400.0, "1.5h"),
+            (1_209_600.0, "14d"),
+            (129_600.0, "36h"),
+            (0.4, "400ms"),
+            (0.076_512_345, "0.076512345s"),
+            (1e-9, "1ns"),
+            (100_000.123_456_7, "100000.1234567s"),
+        ] {
+            let exact = exact_duration(seconds);
+            assert!((parse_duration(&exact).unwrap() - seconds).abs() < 1e-9, "{exact}");
+            assert!(exact == text || seconds > 99_999.0, "{exact} {text}");
         }
         assert_eq!(parse_duration(" 1h 30m ").unwrap(), 5_400.0);
         assert_eq!(parse_duration("-2s").unwrap(), -2.0);

@@ -303,7 +303,7 @@ fn a_caller_that_leaves_first() {
     }
     let front = |now: &str, attempts: u32, jitter: &str| {
         let policy = policy(now, attempts, jitter);
-        let terms = Terms { policy: Some(&policy), newest: None, seed: 1 };
+        let terms = Terms { policy: Some(&policy), newest: None, seed: 1, past: None };
         let all = book.streams().into_iter().map(|(name, days)| terms.advise(name, days, None)).collect();
         let set = terms.set(all, None);
         assert!(find(&set.streams[0], "caller_leaves_first").is_none(), "who calls nobody leaves nobody");

@@ -82,7 +82,7 @@ fn follow(
             }
         }
         let Day::Number(newest) = Day::of(Some(end - 1.0)) else { unreachable!() };
-        let terms = Terms { policy: Some(&policy), newest: Some(newest), seed: 1 };
+        let terms = Terms { policy: Some(&policy), newest: Some(newest), seed: 1, past: None };
         let now = terms.entry(stream).now.unwrap();
         let advice = terms.advise(stream, &days, None);
         let step = Step { week, now: now.seconds(), advice };

@@ -179,7 +179,7 @@ fn a_policy_is_found_by_name() {
             book.add(stream, &wait).unwrap();
         }
     }
-    let terms = Terms { policy: Some(&policy), newest: None, seed: 1 };
+    let terms = Terms { policy: Some(&policy), newest: None, seed: 1, past: None };
     let all = book.streams().into_iter().map(|(stream, days)| terms.advise(stream, days, None)).collect();
     let set = terms.set(all, None);
     let actions: Vec<Action> = set.streams.iter().map(|a| a.advice.action).collect();

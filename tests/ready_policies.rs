@@ -51,7 +51,7 @@ fn never(_: f64) -> f64 {
 fn ask(policy: &Policy, days: &Days, change: impl Fn(&mut Entry)) -> Advice {
     let mut policy = policy.clone();
     change(&mut policy.entries[0]);
-    Terms { policy: Some(&policy), newest: None, seed: 1 }.advise("s", days, None)
+    Terms { policy: Some(&policy), newest: None, seed: 1, past: None }.advise("s", days, None)
 }
 
 /// The advised time; the ceiling where one waits it out.
@@ -187,7 +187,7 @@ fn a_request_to_a_service() {
 #[test]
 fn the_reference() {
     let policy = parse(include_str!("../policies/reference.yaml"), "reference.yaml").unwrap();
-    let terms = Terms { policy: Some(&policy), newest: None, seed: 1 };
+    let terms = Terms { policy: Some(&policy), newest: None, seed: 1, past: None };
     let quick = waits(2_000, f64::INFINITY, |u| lognormal(0.05, 1.5, u));
     let slow = waits(2_000, f64::INFINITY, |u| lognormal(2.0 * HOUR, 1.0, u));
     let letters = waits(2_000, f64::INFINITY, |u| lognormal(3.0 * DAY, 1.5, u));

@@ -106,7 +106,7 @@ fn check(file: &str, name: Option<&str>, measure: Measure, counts: (u64, u64), r
     }
     // As the program takes them without a policy: only the last two weeks where the waits are dated.
     let newest = book.streams().iter().filter_map(|(_, days)| days.last_day()).max();
-    let terms = Terms { policy: None, newest, seed: 1 };
+    let terms = Terms { policy: None, newest, seed: 1, past: None };
     for (stream, days) in book.streams() {
         assert!(!terms.advise(stream, days, None).advice.because.is_empty());
     }

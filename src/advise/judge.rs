@@ -562,7 +562,7 @@ pub(super) fn interpolate(ages: &[f64], values: &[f64], t: f64) -> f64 {
 
 impl Settled {
     /// Writes the decision.
-    pub(crate) fn fill(&self, d: &mut Decision, entry: &Entry, judgement: &Judgement) {
+    pub(crate) fn fill(&self, d: &mut Decision, entry: &Entry, bounds: &Bounds, judgement: &Judgement) {
         d.action = if self.wait_it_out { Action::WaitItOut } else { Action::GiveUpAfter };
         d.because = super::summary::because(self, judgement);
         d.give_up_after_s = (!self.wait_it_out).then_some(self.at);
@@ -580,7 +580,7 @@ impl Settled {
         d.p99_s = self.advised.p99_s;
         d.now = self.in_force;
         d.never = Some(self.never);
-        d.proposal = self.proposal(entry, judgement.sight);
+        d.proposal = self.proposal(entry, bounds, judgement.sight);
         d.rivals.clone_from(&self.rivals);
         d.holding_on.clone_from(&self.holding_on);
         d.retry_budget = self.retry_budget;
@@ -594,9 +594,9 @@ impl Settled {
     /// beyond the largest step, and none past the edge while the curves disagree on which side of it the best time lies.
     /// Such a change would be undone by the next week's data as often as not; a look at a share of the waits tells before
     /// all are changed.
-    fn proposal(&self, entry: &Entry, sight: f64) -> Option<Proposal> {
+    fn proposal(&self, entry: &Entry, bounds: &Bounds, sight: f64) -> Option<Proposal> {
         let (now, regret) = self.now?;
-        let keep = Proposal { change: Change::Keep, to_s: finite(now.seconds()), step_limited: false };
+        let keep = Proposal { change: Change::Keep, to_s: finite(now.seconds()), step_limited: false, then: None };
         let now = now.seconds();
         // What no wait has shown must promise twice as much.
         let unseen = self.at > sight && now < self.at;
@@ -614,18 +614,22 @@ impl Settled {
             false => self.at,
         };
         let step = entry.guard.largest_step;
+        let proposal = |change, to: f64, step_limited| {
+            let then = self.objective(bounds).map(|objective| outcome(&objective, bounds.ceiling, finite(to)));
+            Proposal { change, to_s: finite(to), step_limited, then }
+        };
         Some(match goal.partial_cmp(&now) {
             Some(std::cmp::Ordering::Greater) => {
                 let most = now * (1.0 + step);
-                Proposal { change: Change::Raise, to_s: finite(goal.min(most)), step_limited: goal > most }
+                proposal(Change::Raise, goal.min(most), goal > most)
             }
             // From never there is no share to step by: the first step is to the time itself.
             Some(std::cmp::Ordering::Less) if now.is_infinite() => {
-                Proposal { change: Change::Lower, to_s: finite(goal), step_limited: false }
+                proposal(Change::Lower, goal, false)
             }
             Some(std::cmp::Ordering::Less) => {
                 let least = now * (1.0 - step).max(0.0);
-                Proposal { change: Change::Lower, to_s: finite(goal.max(least)), step_limited: goal < least }
+                proposal(Change::Lower, goal.max(least), goal < least)
             }
             _ => keep,
         })

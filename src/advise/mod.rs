@@ -5,6 +5,7 @@ mod bounds;
 mod cautions;
 mod curves;
 mod judge;
+mod past;
 mod pool;
 mod shift;
 mod streams;
@@ -16,7 +17,8 @@ pub use curves::{CURVE_SCHEMA, CurvePoint, Curves, Mark};
 pub(crate) use judge::prices;
 pub use shift::Shift;
 pub(crate) use streams::name_hash;
-pub use streams::{Lenders, Terms};
+pub use past::{Before, Past};
+pub use streams::{EarlyLeave, Lenders, Terms};
 pub use study::{Study, Survival, WHAT_IF_SCHEMA, WhatIf, WhatIfError};
 pub(crate) use summary::cost_of_time;
 
@@ -117,7 +119,7 @@ pub fn study(case: &Case<'_>, entry: &Entry, seed: u64) -> Study {
     let mut advice = Advice {
         stream: case.stream.to_owned(),
         kind: entry.kind.name().to_owned(),
-        evidence: evidence(case.tally),
+        evidence: evidence(case.tally, &own),
         tail: unread("too few waits have ended to say"),
         fits: Vec::new(),
         advice: nothing_yet(),
@@ -185,7 +187,11 @@ fn decide(cells: &Cells, entry: &Entry, bounds: Option<&Bounds>, judgement: Opti
         return decision;
     };
     match &judgement.outcome {
-        Ok(settled) => settled.fill(&mut decision, entry, judgement),
+        Ok(settled) => {
+            if let Some(bounds) = bounds {
+                settled.fill(&mut decision, entry, bounds, judgement);
+            }
+        }
         Err(reason) => {
             decision.action = Action::StateACost;
             decision.because.clone_from(reason);
@@ -194,16 +200,17 @@ fn decide(cells: &Cells, entry: &Entry, bounds: Option<&Bounds>, judgement: Opti
     decision
 }
 
-fn evidence(tally: &Tally) -> Evidence {
+fn evidence(tally: &Tally, first: &Cells) -> Evidence {
     let [done, failed, gave_up, waiting] = tally.counts();
-    let seen = tally.seen();
+    let (seen, retries) = (tally.seen(), tally.retries());
     Evidence {
         waits: [done, failed, gave_up, waiting].into_iter().fold(0, u64::saturating_add),
         done,
         failed,
         gave_up,
         waiting,
-        retries: tally.retries().total() as u64,
+        retries: retries.total() as u64,
+        waited_s: first.waited() + retries.waited(),
         borrowed_share: None,
         sight_s: None,
         from: seen.and_then(|(from, _)| say::time(from)),

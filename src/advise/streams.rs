@@ -3,7 +3,7 @@
 use std::collections::HashMap;
 
 use super::pool::{MOST_SIBLINGS, SIBLING_CELLS};
-use super::{Case, History, Study, caution, study};
+use super::{Before, Case, Past, Study, caution, study};
 use crate::advice::{Advice, AdviceSet, Caution, SCHEMA};
 use crate::policy::{Entry, GiveUp, Jitter, Policy};
 use crate::say;
@@ -23,11 +23,26 @@ pub struct Terms<'a> {
     pub newest: Option<i32>,
     /// Seed of everything drawn.
     pub seed: u64,
+    /// What was settled before; `None` where nothing is known of it.
+    pub past: Option<&'a Past>,
 }
 
 impl Terms<'_> {
-    /// The entry that speaks for a stream; one without an aim where the policy has none for it.
+    /// The entry that speaks for a stream, with the settled time in force; one without an aim where the policy has none
+    /// for it.
     pub fn entry(&self, stream: &str) -> Entry {
+        let mut entry = self.written(stream);
+        entry.now = self.before(stream).now.or(entry.now);
+        entry
+    }
+
+    /// What was settled of a stream.
+    fn before(&self, stream: &str) -> Before {
+        self.past.map(|past| past.of(stream)).unwrap_or_default()
+    }
+
+    /// The entry as the policy has it.
+    fn written(&self, stream: &str) -> Entry {
         match self.policy {
             None => Entry::without_policy(),
             Some(policy) => policy
@@ -78,7 +93,7 @@ impl Terms<'_> {
             periods: periods.as_ref().map(|(earlier, latest)| (earlier, latest)),
             suspicion,
             siblings: &siblings,
-            history: History::default(),
+            history: self.before(stream).history,
         };
         study(&case, &entry, self.seed ^ name_hash(stream))
     }
@@ -153,28 +168,17 @@ impl Terms<'_> {
             .iter()
             .map(|entry| entry.calls.iter().filter_map(|name| numbers.get(name).copied()).collect())
             .collect();
-        let station = |i: usize, give_up_after: f64, calls: Vec<usize>| Station {
-            give_up_after,
-            retry: retry(&entries[i]),
-            pause: mean_pause(&entries[i]),
-            calls,
-        };
         let advised = |i: usize| streams[i].advice.give_up_after_s.unwrap_or(f64::INFINITY);
         // The caller as advised; a callee as it is in force, where that is known.
         let in_force = |i: usize| entries[i].now.map_or(advised(i), GiveUp::seconds);
         let mut found: Vec<(usize, Caution)> = Vec::new();
-        for (caller, callees) in called.iter().enumerate().filter(|(_, callees)| !callees.is_empty()) {
-            let mut chain = vec![station(caller, advised(caller), (1..=callees.len()).collect())];
-            chain.extend(callees.iter().map(|&i| station(i, in_force(i), Vec::new())));
-            for finding in check_chain(&chain) {
-                if let ChainFinding::LeavesEarly { callee, leaves, ends, attempts, .. } = finding {
-                    let callee = &streams[callees[callee - 1]].stream;
-                    found.push((caller, leaves_first(callee, leaves, ends, attempts)));
-                }
+        for (caller, callee, finding) in early(&entries, &called, &advised, &in_force) {
+            if let ChainFinding::LeavesEarly { leaves, ends, attempts, .. } = finding {
+                found.push((caller, leaves_first(&streams[callee].stream, leaves, ends, attempts)));
             }
         }
         let all: Vec<Station> =
-            (0..streams.len()).map(|i| station(i, f64::INFINITY, called[i].clone())).collect();
+            (0..streams.len()).map(|i| station(&entries[i], f64::INFINITY, called[i].clone())).collect();
         for finding in check_chain(&all) {
             if let ChainFinding::Circle(path) = finding {
                 let names: Vec<&str> = path.iter().map(|&i| streams[i].stream.as_str()).collect();
@@ -185,6 +189,59 @@ impl Terms<'_> {
             streams[i].cautions.push(caution);
         }
     }
+}
+
+/// A call within which the caller gives up before its callee's schedule has ended.
+#[derive(Clone, Debug, PartialEq)]
+pub struct EarlyLeave {
+    /// Who leaves.
+    pub caller: String,
+    /// Whom it leaves at work.
+    pub callee: String,
+    /// What is the matter, and what to do.
+    pub caution: Caution,
+}
+
+impl Terms<'_> {
+    /// The calls among these streams in which the caller, by the times in force, leaves before its callee's schedule ends.
+    /// A caller whose time in force is not known is passed over; a callee's is then never.
+    pub fn early_leaves(&self, streams: &[&str]) -> Vec<EarlyLeave> {
+        let entries: Vec<Entry> = streams.iter().map(|stream| self.entry(stream)).collect();
+        let place = |name: &str| streams.iter().position(|stream| *stream == name);
+        let called: Vec<Vec<usize>> =
+            entries.iter().map(|entry| entry.calls.iter().filter_map(|name| place(name)).collect()).collect();
+        let in_force = |i: usize| entries[i].now.map_or(f64::INFINITY, GiveUp::seconds);
+        let found = early(&entries, &called, &in_force, &in_force).into_iter().filter_map(|(caller, callee, found)| {
+            let ChainFinding::LeavesEarly { leaves, ends, attempts, .. } = found else { return None };
+            let (caller, callee) = (streams[caller].to_owned(), streams[callee].to_owned());
+            Some(EarlyLeave { caution: leaves_first(&callee, leaves, ends, attempts), caller, callee })
+        });
+        found.collect()
+    }
+}
+
+fn station(entry: &Entry, give_up_after: f64, calls: Vec<usize>) -> Station {
+    Station { give_up_after, retry: retry(entry), pause: mean_pause(entry), calls }
+}
+
+/// Callers that leave early, each with its callee. `called`: whom each calls, by place.
+fn early(
+    entries: &[Entry],
+    called: &[Vec<usize>],
+    leaves: &dyn Fn(usize) -> f64,
+    stays: &dyn Fn(usize) -> f64,
+) -> Vec<(usize, usize, ChainFinding)> {
+    let mut found = Vec::new();
+    for (caller, callees) in called.iter().enumerate().filter(|(_, callees)| !callees.is_empty()) {
+        let mut chain = vec![station(&entries[caller], leaves(caller), (1..=callees.len()).collect())];
+        chain.extend(callees.iter().map(|&i| station(&entries[i], stays(i), Vec::new())));
+        for finding in check_chain(&chain) {
+            if let ChainFinding::LeavesEarly { callee, .. } = finding {
+                found.push((caller, callees[callee - 1], finding));
+            }
+        }
+    }
+    found
 }
 
 fn circle(names: &[&str]) -> Caution {

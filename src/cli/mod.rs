@@ -1,6 +1,9 @@
 //! The command line: arguments, progress, printing. A file a command.
 
+mod basis;
 mod demo;
+mod export;
+mod gate;
 mod exit;
 mod files;
 mod layout;
@@ -10,8 +13,10 @@ mod pictures;
 mod reading;
 mod replay;
 mod serve;
+mod settle;
 mod text;
 mod vet;
+mod weekly;
 mod weigh;
 
 use std::ffi::OsString;
@@ -40,6 +45,14 @@ enum Command {
     Replay(replay::Replay),
     /// Read a policy and say what it means for each stream, or what is wrong with it
     Vet(vet::Vet),
+    /// Decide on what is proposed: accept, pin, postpone, refuse, undo
+    Settle(settle::Settle),
+    /// Write settled times in the form that another system reads
+    Export(export::ExportArguments),
+    /// Shut the gate of a build where a time in force costs more than its slack
+    Gate(gate::GateArguments),
+    /// Say what to keep, raise or lower this week, ready to be signed
+    Weekly(weekly::WeeklyArguments),
     /// Run the daemon: waits in over HTTP, advice and metrics out
     Serve(serve::Serve),
     /// Show, check, back up or export the daemon's data
@@ -65,6 +78,10 @@ pub fn run(arguments: impl IntoIterator<Item = OsString>) -> ExitCode {
         Command::Weigh(weigh) => weigh.run(),
         Command::Replay(replay) => replay.run(),
         Command::Vet(vet) => vet.run(),
+        Command::Settle(settle) => settle.run(),
+        Command::Export(export) => export.run(),
+        Command::Gate(gate) => gate.run(),
+        Command::Weekly(weekly) => weekly.run(),
         Command::Serve(serve) => serve.run(),
         Command::Ledger(ledger) => ledger.run(),
         Command::Demo(demo) => demo.run(),

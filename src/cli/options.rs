@@ -84,6 +84,11 @@ pub(super) struct Common {
 }
 
 impl Common {
+    /// With a policy and a choice of streams, all else as it is unless said.
+    pub(super) fn of(policy: Option<PathBuf>, stream: Option<Glob>) -> Common {
+        Common { policy, format: Output::Text, since: None, until: None, stream, seed: 1 }
+    }
+
     /// The policy file that was named here or in the environment.
     pub(super) fn policy_file(&self) -> Option<PathBuf> {
         let named = || std::env::var_os("OUTWAIT_POLICY").filter(|name| !name.is_empty());
@@ -207,7 +212,7 @@ fn stream_name(text: &str) -> Result<String, String> {
     }
 }
 
-fn selector(text: &str) -> Result<Glob, String> {
+pub(super) fn selector(text: &str) -> Result<Glob, String> {
     Glob::new(text).map_err(|error| format!("it {error}; use letters, digits and . _ - / : with `*` and `?`"))
 }
 

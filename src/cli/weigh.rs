@@ -93,7 +93,7 @@ fn advise(
         Day::Number(day) => Some(day),
         Day::Undated => None,
     });
-    let terms = Terms { policy, newest: day, seed: common.seed };
+    let terms = Terms { policy, newest: day, seed: common.seed, past: None };
     let suspicions: HashMap<&str, String> =
         report.suspicions.iter().map(|s| (s.stream.as_str(), s.to_string())).collect();
     let lenders = terms.lenders(&streams);

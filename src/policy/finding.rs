@@ -18,7 +18,7 @@ pub struct Place {
 
 impl Place {
     /// Where the file begins.
-    pub(super) const START: Place = Place { line: 1, column: 1 };
+    pub(crate) const START: Place = Place { line: 1, column: 1 };
 }
 
 /// Something to tell about one place of a policy: [`Problem`] or [`Warning`].
@@ -449,7 +449,7 @@ impl Remedy for Concern {
 }
 
 /// A text from the file as shown in a message: at most 60 characters, what cannot be printed escaped.
-pub(super) fn shown(text: &str) -> String {
+pub(crate) fn shown(text: &str) -> String {
     let mut out = String::new();
     for c in text.chars().take(60) {
         match c {

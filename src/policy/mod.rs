@@ -19,13 +19,14 @@ mod entry;
 mod finding;
 mod keys;
 mod read;
-mod scalar;
+pub(crate) mod scalar;
 mod schema;
-mod tree;
+pub(crate) mod tree;
 
 pub use crate::glob::{Glob, GlobError};
 pub use describe::{Description, Endings, Settings, Subject, describe};
 pub use entry::{Backoff, Entry, GiveUp, Guard, Jitter, Kind, NO_COST_OF_TIME, Policy, Retry, Sticky};
+pub(crate) use finding::shown;
 pub use finding::{Concern, Fault, Finding, Flaw, Place, PolicyError, Problem, Remedy, Slip, Warning};
 pub use keys::{
     DEFAULT_BACKOFF_FACTOR, DEFAULT_COOL_DOWN, DEFAULT_DEADLINE_ATTEMPTS, DEFAULT_EVIDENCE,

@@ -16,7 +16,7 @@ pub(super) fn duration(text: &str) -> Result<f64, Flaw> {
 }
 
 /// A duration above 0, s.
-pub(super) fn span(text: &str) -> Result<f64, Flaw> {
+pub(crate) fn span(text: &str) -> Result<f64, Flaw> {
     duration(text).and_then(|s| within(s, s > 0.0 && s <= MAX_AGE, text))
 }
 
@@ -26,7 +26,7 @@ pub(super) fn pause(text: &str) -> Result<f64, Flaw> {
 }
 
 /// A duration above 0, or `never`.
-pub(super) fn give_up(text: &str) -> Result<GiveUp, Flaw> {
+pub(crate) fn give_up(text: &str) -> Result<GiveUp, Flaw> {
     if text.trim() == "never" { Ok(GiveUp::Never) } else { span(text).map(GiveUp::After) }
 }
 
@@ -104,7 +104,7 @@ pub(super) fn choice<T: Copy>(text: &str, among: &[(&'static str, T)]) -> Result
 
 /// The name that a mistyped word most likely stands for: fewest slips (a letter more, less, other, or two swapped),
 /// at most a third of its letters, rounded up.
-pub(super) fn nearest(word: &str, among: impl Iterator<Item = &'static str>) -> Option<&'static str> {
+pub(crate) fn nearest(word: &str, among: impl Iterator<Item = &'static str>) -> Option<&'static str> {
     // No name is so long that a longer word could be near it.
     let word: String = word.chars().take(40).flat_map(char::to_lowercase).collect();
     among

@@ -12,15 +12,15 @@ use std::rc::Rc;
 
 /// A value and where it stands.
 #[derive(Debug)]
-pub(super) struct Node {
-    pub(super) at: Place,
-    pub(super) value: Value,
+pub(crate) struct Node {
+    pub(crate) at: Place,
+    pub(crate) value: Value,
     /// Number of values in it, aliases followed.
     size: usize,
 }
 
 #[derive(Debug)]
-pub(super) enum Value {
+pub(crate) enum Value {
     /// `plain`: written without quotes.
     Scalar {
         text: String,
@@ -33,21 +33,21 @@ pub(super) enum Value {
 
 /// A key with its value.
 #[derive(Debug)]
-pub(super) struct Pair {
-    pub(super) at: Place,
-    pub(super) key: String,
-    pub(super) value: Rc<Node>,
+pub(crate) struct Pair {
+    pub(crate) at: Place,
+    pub(crate) key: String,
+    pub(crate) value: Rc<Node>,
 }
 
 impl Node {
     /// Where the value under a key stands; where the node does, if there is none.
-    pub(super) fn place(&self, key: &str) -> Place {
+    pub(crate) fn place(&self, key: &str) -> Place {
         let Value::Map(pairs) = &self.value else { return self.at };
         pairs.iter().find(|pair| pair.key == key).map_or(self.at, |pair| pair.value.at)
     }
 
     /// Whether nothing was written: `key:`, `~` or `null`.
-    pub(super) fn is_null(&self) -> bool {
+    pub(crate) fn is_null(&self) -> bool {
         matches!(&self.value, Value::Scalar { text, plain: true }
             if matches!(text.as_str(), "" | "~" | "null" | "Null" | "NULL"))
     }
@@ -55,7 +55,7 @@ impl Node {
 
 /// Reads one document. `None` and no fault: there is none. Duplicate keys and tags are told, and reading goes on;
 /// every other fault ends it.
-pub(super) fn read(text: &str, tell: &mut dyn FnMut(Place, Fault)) -> Option<Rc<Node>> {
+pub(crate) fn read(text: &str, tell: &mut dyn FnMut(Place, Fault)) -> Option<Rc<Node>> {
     let mut builder = Builder { open: Vec::new(), anchors: HashMap::new(), root: None, size: 0, tell };
     let mut documents = 0;
     for event in Parser::new_from_str(text) {

@@ -164,7 +164,7 @@ impl Roll<'_> {
     }
 
     fn terms(&self, newest: Option<i32>) -> Terms<'_> {
-        Terms { policy: self.policy, newest, seed: self.seed }
+        Terms { policy: self.policy, newest, seed: self.seed, past: None }
     }
 
     /// One period; `None` where nothing ended in it, or before it nothing that a rule could learn from.

@@ -126,6 +126,16 @@ impl Token {
     pub fn is(&self, shown: &[u8]) -> bool {
         self.0.ct_eq(shown).into()
     }
+
+    /// The value of the header that shows it.
+    pub(crate) fn bearer(&self) -> String {
+        format!("Bearer {}", String::from_utf8_lossy(&self.0))
+    }
+
+    /// The bytes, as a key for signing.
+    pub(crate) fn key(&self) -> &[u8] {
+        &self.0
+    }
 }
 
 impl fmt::Debug for Token {

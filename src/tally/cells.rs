@@ -71,6 +71,18 @@ impl Cells {
         }
     }
 
+    /// Time waited in all of them together, s, each from where watching it began. An event in a bucket counts at its middle,
+    /// at its lower end where it has no upper one.
+    pub fn waited(&self) -> f64 {
+        let event = |e: &EventCell| {
+            let age = if e.upto.is_finite() { 0.5 * (e.over + e.upto) } else { e.over };
+            age * (e.done + e.failed)
+        };
+        let mass = |masses: &[Mass]| masses.iter().map(|m| m.age * m.weight).sum::<f64>();
+        let ended: f64 = self.events.iter().map(event).sum();
+        (ended + mass(&self.gave_up) + mass(&self.waiting) - mass(&self.entries)).max(0.0)
+    }
+
     /// Sorts and joins equal groups.
     pub(crate) fn tidy(&mut self) {
         self.events.sort_by(|a, b| a.upto.total_cmp(&b.upto).then(a.over.total_cmp(&b.over)));
