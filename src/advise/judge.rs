@@ -344,7 +344,9 @@ impl Scene<'_> {
                 })
             })
             .collect();
-        let outcome = |t: Option<f64>| self.outcome(&objective, t);
+        let ceiling = self.bounds.ceiling;
+        let request = |t: f64| RequestTime::new(&average, &self.worth, &self.retry, t.min(ceiling));
+        let (with, without) = (request(at), request(ceiling));
         let attempts = |t: f64| self.retry.request(Odds::at(&average, t), &self.worth).attempts;
         Ok(Settled {
             at,
@@ -359,10 +361,13 @@ impl Scene<'_> {
             now: now.and_then(|n| Some((n, doubt.regret_of_setting(rules.len())?))),
             sooner_costs: regret_at((at / 1.15).max(self.bounds.floor)) - regret_at(at),
             load,
-            longer_tail: self.longer_tail(ensemble, failing, &average, at),
-            advised: outcome(Some(at)),
-            in_force: now.map(|n| outcome(finite(n.seconds()))),
-            never: outcome(None),
+            longer_tail: self.longer_tail(ensemble, failing, &average, at, [&with, &without]),
+            advised: self.outcome(&objective, Some(at), &with),
+            in_force: now.map(|n| {
+                let total = request(n.seconds());
+                self.outcome(&objective, finite(n.seconds()), &total)
+            }),
+            never: self.outcome(&objective, None, &without),
             rivals,
             holding_on: self.holding_on(&objective, &optimum),
             retry_budget: finite(attempts(at) - 1.0).filter(|_| !wait_it_out),
@@ -428,11 +433,11 @@ impl Scene<'_> {
         }
     }
 
-    fn outcome(&self, objective: &Objective<'_>, at: Option<f64>) -> Outcome {
+    /// `total`: how long a request takes with that give-up time.
+    fn outcome(&self, objective: &Objective<'_>, at: Option<f64>, total: &RequestTime<'_>) -> Outcome {
         let average = objective.outlook();
         let t = at.unwrap_or(self.bounds.ceiling).min(self.bounds.ceiling);
         let request = self.retry.request(Odds::at(average, t), &self.worth);
-        let total = RequestTime::new(average, &self.worth, &self.retry, t);
         Outcome {
             give_up_after_s: at,
             rate_per_s: objective.score(t),
@@ -489,13 +494,15 @@ impl Scene<'_> {
     }
 
     /// Whether the timer shortens the mean total and yet makes long totals more frequent: one in a thousand by the believed
-    /// curve, or in the limit by the family that weighs most (Eliazar & Reuveni 2020, 2021).
+    /// curve, or in the limit by the family that weighs most (Eliazar & Reuveni 2020, 2021). `totals`: of a request with the
+    /// timer and without.
     fn longer_tail(
         &self,
         ensemble: &Ensemble,
         failing: Option<&PiecewiseHazard>,
         average: &Average,
         at: f64,
+        totals: [&RequestTime<'_>; 2],
     ) -> Option<LongerTail> {
         let ceiling = self.bounds.ceiling;
         let mean = |t: f64| stopping::expected_time(average, &self.worth, &self.retry, t);
@@ -503,8 +510,8 @@ impl Scene<'_> {
         if at >= ceiling || mean.partial_cmp(&mean_never) != Some(std::cmp::Ordering::Less) {
             return None;
         }
-        let late = |t: f64| finite(RequestTime::new(average, &self.worth, &self.retry, t).quantile(LATE));
-        let late = late(at).zip(late(ceiling)).map(|(with, without)| [with, without]);
+        let [with, without] = totals.map(|total| finite(total.quantile(LATE)));
+        let late = with.zip(without).map(|(with, without)| [with, without]);
         let late = late.filter(|[with, without]| *with > LONGER * without);
         let far = || {
             let heaviest =
