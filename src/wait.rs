@@ -86,7 +86,7 @@ impl Wait {
     ///
     /// # Errors
     /// [`WaitError::Age`] unless the age is > 0 and at most [`MAX_AGE`].
-    #[inline]
+    #[inline(always)]
     pub fn new(elapsed: f64, ending: Ending) -> Result<Wait, WaitError> {
         if !(elapsed > 0.0 && elapsed <= MAX_AGE) {
             return Err(WaitError::Age { field: "elapsed", value: elapsed });
@@ -159,7 +159,7 @@ impl Wait {
     ///
     /// # Errors
     /// [`WaitError::At`] out of that range.
-    #[inline]
+    #[inline(always)]
     pub fn with_at(mut self, at: f64) -> Result<Wait, WaitError> {
         if !(0.0..=253_402_300_799.0).contains(&at) {
             return Err(WaitError::At { at });

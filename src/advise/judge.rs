@@ -362,7 +362,9 @@ impl Scene<'_> {
                 })
             })
             .collect();
-        let outcome = |t: Option<f64>| outcome(&objective, self.bounds.ceiling, t);
+        let ceiling = self.bounds.ceiling;
+        let request = |t: f64| RequestTime::new(&average, &self.worth, &self.retry, t.min(ceiling));
+        let (with, without) = (request(at), request(ceiling));
         let attempts = |t: f64| self.retry.request(Odds::at(&average, t), &self.worth).attempts;
         Ok(Settled {
             at,
@@ -377,10 +379,13 @@ impl Scene<'_> {
             now: now.and_then(|n| Some((n, doubt.regret_of_setting(rules.len())?))),
             sooner_costs: regret_at((at / 1.15).max(self.bounds.floor)) - regret_at(at),
             load,
-            longer_tail: self.longer_tail(ensemble, failing, &average, at),
-            advised: outcome(Some(at)),
-            in_force: now.map(|n| outcome(finite(n.seconds()))),
-            never: outcome(None),
+            longer_tail: self.longer_tail(ensemble, failing, &average, at, [&with, &without]),
+            advised: outcome_over(&objective, ceiling, Some(at), &with),
+            in_force: now.map(|n| {
+                let total = request(n.seconds());
+                outcome_over(&objective, ceiling, finite(n.seconds()), &total)
+            }),
+            never: outcome_over(&objective, ceiling, None, &without),
             rivals,
             holding_on: self.holding_on(&objective, &optimum),
             retry_budget: finite(attempts(at) - 1.0).filter(|_| !wait_it_out),
@@ -496,13 +501,15 @@ impl Scene<'_> {
     }
 
     /// Whether the timer shortens the mean total and yet makes long totals more frequent: one in a thousand by the believed
-    /// curve, or in the limit by the family that weighs most (Eliazar & Reuveni 2020, 2021).
+    /// curve, or in the limit by the family that weighs most (Eliazar & Reuveni 2020, 2021). `totals`: of a request with the
+    /// timer and without.
     fn longer_tail(
         &self,
         ensemble: &Ensemble,
         failing: Option<&PiecewiseHazard>,
         average: &Average,
         at: f64,
+        totals: [&RequestTime<'_>; 2],
     ) -> Option<LongerTail> {
         let ceiling = self.bounds.ceiling;
         let mean = |t: f64| stopping::expected_time(average, &self.worth, &self.retry, t);
@@ -510,8 +517,8 @@ impl Scene<'_> {
         if at >= ceiling || mean.partial_cmp(&mean_never) != Some(std::cmp::Ordering::Less) {
             return None;
         }
-        let late = |t: f64| finite(RequestTime::new(average, &self.worth, &self.retry, t).quantile(LATE));
-        let late = late(at).zip(late(ceiling)).map(|(with, without)| [with, without]);
+        let [with, without] = totals.map(|total| finite(total.quantile(LATE)));
+        let late = with.zip(without).map(|(with, without)| [with, without]);
         let late = late.filter(|[with, without]| *with > LONGER * without);
         let far = || {
             let heaviest =
@@ -528,9 +535,20 @@ impl Scene<'_> {
 
 /// What a give-up time does by the objective's outlook; `None` and what is beyond the ceiling count as the ceiling.
 pub(super) fn outcome(objective: &Objective<'_>, ceiling: f64, at: Option<f64>) -> Outcome {
+    let t = at.unwrap_or(ceiling).min(ceiling);
+    let total = RequestTime::new(objective.outlook(), objective.worth(), objective.retry(), t);
+    outcome_over(objective, ceiling, at, &total)
+}
+
+/// The same where it is known how long a request takes with that time.
+fn outcome_over(
+    objective: &Objective<'_>,
+    ceiling: f64,
+    at: Option<f64>,
+    total: &RequestTime<'_>,
+) -> Outcome {
     let (outlook, worth, retry) = (objective.outlook(), objective.worth(), objective.retry());
     let t = at.unwrap_or(ceiling).min(ceiling);
-    let total = RequestTime::new(outlook, worth, retry, t);
     Outcome {
         give_up_after_s: at,
         rate_per_s: objective.score(t),
@@ -596,7 +614,8 @@ impl Settled {
     /// all are changed.
     fn proposal(&self, entry: &Entry, bounds: &Bounds, sight: f64) -> Option<Proposal> {
         let (now, regret) = self.now?;
-        let keep = Proposal { change: Change::Keep, to_s: finite(now.seconds()), step_limited: false, then: None };
+        let keep =
+            Proposal { change: Change::Keep, to_s: finite(now.seconds()), step_limited: false, then: None };
         let now = now.seconds();
         // What no wait has shown must promise twice as much.
         let unseen = self.at > sight && now < self.at;
@@ -615,7 +634,8 @@ impl Settled {
         };
         let step = entry.guard.largest_step;
         let proposal = |change, to: f64, step_limited| {
-            let then = self.objective(bounds).map(|objective| outcome(&objective, bounds.ceiling, finite(to)));
+            let then =
+                self.objective(bounds).map(|objective| outcome(&objective, bounds.ceiling, finite(to)));
             Proposal { change, to_s: finite(to), step_limited, then }
         };
         Some(match goal.partial_cmp(&now) {
@@ -624,9 +644,7 @@ impl Settled {
                 proposal(Change::Raise, goal.min(most), goal > most)
             }
             // From never there is no share to step by: the first step is to the time itself.
-            Some(std::cmp::Ordering::Less) if now.is_infinite() => {
-                proposal(Change::Lower, goal, false)
-            }
+            Some(std::cmp::Ordering::Less) if now.is_infinite() => proposal(Change::Lower, goal, false),
             Some(std::cmp::Ordering::Less) => {
                 let least = now * (1.0 - step).max(0.0);
                 proposal(Change::Lower, goal.max(least), goal < least)

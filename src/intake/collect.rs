@@ -130,7 +130,7 @@ impl<'w, S: Sink> Collector<'w, S> {
     }
 
     /// Takes a wait. `bare`: its age came as a number without a unit.
-    #[inline]
+    #[inline(always)]
     pub(super) fn whole(&mut self, record: Record<'_>, bare: bool) -> Result<(), Flaw> {
         let (place, stream) = self.streams.enter(record.stream, self.options.streams.as_ref())?;
         if let Some(at) = record.wait.at() {

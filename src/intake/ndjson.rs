@@ -206,12 +206,15 @@ fn same(one: &[u8], other: &[u8]) -> bool {
 /// control; or the end.
 #[inline]
 fn plain_text_upto(bytes: &[u8], mut at: usize) -> usize {
-    while let Some(word) = bytes.get(at..).and_then(<[u8]>::first_chunk) {
-        let stops = stops(u64::from_le_bytes(*word));
-        if stops != 0 {
-            return at + stops.trailing_zeros() as usize / 8;
+    // Two words at once, so that names of either length take one way.
+    while let Some(words) = bytes.get(at..).and_then(<[u8]>::first_chunk) {
+        let words = u128::from_le_bytes(*words);
+        let (low, high) = (stops(words as u64), stops((words >> 64) as u64));
+        if low | high != 0 {
+            let place = if low != 0 { low.trailing_zeros() } else { 64 + high.trailing_zeros() };
+            return at + place as usize / 8;
         }
-        at += 8;
+        at += 16;
     }
     while bytes.get(at).is_some_and(|&byte| byte != b'"' && byte != b'\\' && byte >= b' ') {
         at += 1;

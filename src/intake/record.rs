@@ -306,7 +306,7 @@ pub enum Side {
 
 /// Understands a record's fields. `nameless` is the stream of records that have none, or of all (`one_stream`). The stream's name is the
 /// caller's to check, once for each stream.
-#[inline]
+#[inline(always)]
 pub(super) fn make<'a>(
     fields: &Fields<'a>,
     nameless: Option<&'a str>,

@@ -208,6 +208,10 @@ impl<'a> RequestTime<'a> {
                     continue;
                 }
                 total[cell] += fresh;
+                // What would start after the last one that matters is not followed.
+                if number == attempts && !last {
+                    continue;
+                }
                 after_failure.add(&mut next_free, cell, fresh);
                 after_give_up.add(&mut next_stuck, cell, left);
             }
@@ -290,7 +294,8 @@ impl Lengths {
     fn of_failures(outlook: &dyn Outlook, give_up_after: f64, step: f64) -> Lengths {
         let mut lengths = Lengths { step, first: 0, share: vec![] };
         let (mut from, mut before) = (0.0, 0.0);
-        while from < give_up_after && outlook.failed(give_up_after) > 0.0 {
+        let any = outlook.failed(give_up_after) > 0.0;
+        while any && from < give_up_after {
             let to = (from + step).min(give_up_after);
             let after = outlook.failed(to);
             lengths.put(0.5 * (from + to), after - before);
