@@ -7,7 +7,7 @@ use rand::{RngExt, SeedableRng};
 use rand_xoshiro::Xoshiro256PlusPlus;
 
 use super::bounds::Bounds;
-use super::{Case, History};
+use super::{Believed, Case, History};
 use crate::advice::{Action, Change, Decision, Look, Outcome, Proposal, Rival, SecondCopy, Stickiness};
 use crate::curve::{Empirical, KaplanMeier, LifeTable, PiecewiseHazard};
 use crate::outlook::{Average, Averaging, Grid, Sampled};
@@ -82,6 +82,7 @@ pub(crate) struct Settled {
     look: Option<Look>,
     second_copy: Option<SecondCopy>,
     schedule: Vec<f64>,
+    pub(crate) believed: Believed,
 }
 
 /// A timer that shortens the mean total and lengthens its tail. Means in s.
@@ -365,6 +366,7 @@ impl Scene<'_> {
             never: outcome(None),
             rivals,
             holding_on: self.holding_on(&objective, &optimum),
+            believed: Believed { outlook: average.clone(), worth: self.worth, retry: self.retry, limits, at },
             retry_budget: finite(attempts(at) - 1.0).filter(|_| !wait_it_out),
             look: self.look(&sides, worth_of(&objective, &optimum), beyond),
             second_copy: self.second_copy(&average),

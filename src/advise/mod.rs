@@ -1,6 +1,7 @@
 //! The one place where tally, curve, tail, stopping and policy meet: a tally and a policy entry give an advice.
 //! Pure: no clock, no files; the same seed gives the same numbers. METHODS.md sections 4 to 8, RECIPE.
 
+mod believed;
 mod bounds;
 mod cautions;
 mod judge;
@@ -9,6 +10,7 @@ mod shift;
 mod streams;
 mod summary;
 
+pub use believed::Believed;
 pub use shift::Shift;
 pub use streams::{Lenders, Terms};
 
@@ -82,6 +84,12 @@ impl<'a> Case<'a> {
 /// # Ok::<(), outwait::wait::WaitError>(())
 /// ```
 pub fn advise(case: &Case<'_>, entry: &Entry, seed: u64) -> Advice {
+    advise_believing(case, entry, seed).0
+}
+
+/// The same, with what is believed of a wait: for judging single ones. `None` where no give-up time is advised, nor waiting
+/// it out.
+pub fn advise_believing(case: &Case<'_>, entry: &Entry, seed: u64) -> (Advice, Option<Believed>) {
     let own = case.tally.first_attempts();
     // Before the data are cut where nobody is watched: what hangs is older than that.
     let open = own.waiting.clone();
@@ -124,7 +132,9 @@ pub fn advise(case: &Case<'_>, entry: &Entry, seed: u64) -> Advice {
     if let Some(pooled) = &pooled {
         advice.cautions.push(cautions::borrowed(pooled));
     }
-    advice
+    let settled = matches!(advice.advice.action, Action::GiveUpAfter | Action::WaitItOut);
+    let believed = judgement.filter(|_| settled).and_then(|j| j.outcome.ok()).map(|s| s.believed);
+    (advice, believed)
 }
 
 /// The action, and everything that goes with it.

@@ -3,7 +3,7 @@
 use std::collections::HashMap;
 
 use super::pool::{MOST_SIBLINGS, SIBLING_CELLS};
-use super::{Case, History, advise, caution};
+use super::{Believed, Case, History, advise_believing, caution};
 use crate::advice::{Advice, AdviceSet, Caution, SCHEMA};
 use crate::policy::{Entry, GiveUp, Jitter, Policy};
 use crate::say;
@@ -50,6 +50,17 @@ impl Terms<'_> {
         suspicion: Option<&str>,
         lenders: &Lenders,
     ) -> Advice {
+        self.advise_believing(stream, days, suspicion, lenders).0
+    }
+
+    /// The same, with what is believed of a wait, where a time is advised.
+    pub fn advise_believing(
+        &self,
+        stream: &str,
+        days: &Days,
+        suspicion: Option<&str>,
+        lenders: &Lenders,
+    ) -> (Advice, Option<Believed>) {
         let entry = self.entry(stream);
         let opening = self.opening(&entry);
         let tally = days.since(opening);
@@ -69,11 +80,11 @@ impl Terms<'_> {
             siblings: &siblings,
             history: History::default(),
         };
-        advise(&case, &entry, self.seed ^ name_hash(stream))
+        advise_believing(&case, &entry, self.seed ^ name_hash(stream))
     }
 
-    /// First day of an entry's window.
-    fn opening(&self, entry: &Entry) -> i32 {
+    /// First day of an entry's window, since the epoch.
+    pub fn opening(&self, entry: &Entry) -> i32 {
         match self.newest {
             Some(newest) => newest - ((entry.guard.window / DAY).ceil() as i32).max(1) + 1,
             None => i32::MIN,

@@ -1,11 +1,13 @@
 //! The command line: arguments, progress, printing. A file a command.
 
+mod audit;
 mod demo;
 mod exit;
 mod layout;
 mod options;
 mod reading;
 mod text;
+mod twice;
 mod vet;
 mod weigh;
 
@@ -31,6 +33,8 @@ const EXIT_CODES: &str = "Exit codes: 0 well, 1 the gate is shut, 2 wrong usage,
 enum Command {
     /// Weigh waits: for each stream, how long to wait before giving up, and why
     Weigh(weigh::Weigh),
+    /// Audit waits: what was over-waited, what was given up too early, which open waits to let go of now
+    Audit(audit::Command),
     /// Read a policy and say what it means for each stream, or what is wrong with it
     Vet(vet::Vet),
     /// Write the demo scenario (waits, policy, what to expect) into a folder
@@ -52,6 +56,7 @@ pub fn run(arguments: impl IntoIterator<Item = OsString>) -> ExitCode {
     };
     let outcome = match parsed.command {
         Command::Weigh(weigh) => weigh.run(),
+        Command::Audit(audit) => audit.run(),
         Command::Vet(vet) => vet.run(),
         Command::Demo(demo) => demo.run(),
     };

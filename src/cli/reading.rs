@@ -39,6 +39,24 @@ impl Sink for Counting {
 
 /// Reads all files and tells on standard error what was left out.
 pub(super) fn book(reading: &Reading, common: &Common) -> Result<(Book, Report), Failure> {
+    once(reading, common)?;
+    let sources = reading.files.iter().map(|file| Source::argument(file)).collect();
+    counted(sources, reading, common)
+}
+
+/// Counts what the sources hold and tells on standard error what was left out.
+pub(super) fn counted(
+    sources: Vec<Source>,
+    reading: &Reading,
+    common: &Common,
+) -> Result<(Book, Report), Failure> {
+    let (Counting(book), report) = into(sources, reading, common, Counting::default())?;
+    tell(&report);
+    Ok((book, report))
+}
+
+/// Standard input can be read only once, so it can be named only once.
+pub(super) fn once(reading: &Reading, common: &Common) -> Result<(), Failure> {
     let standard_input = |name: &OsStr| name == "-";
     let named = reading.files.iter().filter(|file| standard_input(file)).count();
     let policy = common.policy_file().is_some_and(|file| standard_input(file.as_os_str()));
@@ -46,19 +64,22 @@ pub(super) fn book(reading: &Reading, common: &Common) -> Result<(Book, Report),
         return Err(Failure::new(Exit::Usage, anyhow!("standard input (`-`) is named more than once"))
             .with_remedy("name it once; it can be read only once"));
     }
-    let sources: Vec<Source> = reading.files.iter().map(|file| Source::argument(file)).collect();
+    Ok(())
+}
+
+/// Reads the sources into a sink, under a progress bar. Tells of what was left out only if that is why it fails.
+pub(super) fn into<S: Sink>(
+    sources: Vec<Source>,
+    reading: &Reading,
+    common: &Common,
+    sink: S,
+) -> Result<(S, Report), Failure> {
     let mut bar = Bar::new();
-    let outcome = intake::read(sources, &reading.options(common), Counting::default(), &mut |progress| {
+    let outcome = intake::read(sources, &reading.options(common), sink, &mut |progress| {
         bar.show(progress.bytes, progress.total);
     });
     bar.0.finish_and_clear();
-    match outcome {
-        Ok((Counting(book), report)) => {
-            tell(&report);
-            Ok((book, report))
-        }
-        Err(error) => Err(failure(error)),
-    }
+    outcome.map_err(failure)
 }
 
 fn failure(error: IntakeError) -> Failure {
