@@ -359,17 +359,18 @@ impl Advised {
         Some(known + passes)
     }
 
-    /// What an ending at `age` brought, above a give-up at the advised age; the time between is not counted.
+    /// What an ending at `age` brought, above a give-up at the advised age; the time between is not counted, nor is what a
+    /// later give-up adds to doomed retries, whose waits are counted themselves.
     fn back(&self, age: f64, ending: Ending) -> i128 {
         let Some(price) = self.price else { return 0 };
         let price = price / self.factor;
-        let gave_up = |t: f64| self.gave_up - price * (self.pause + self.doomed * t);
         let came = match ending {
             Ending::Done => self.worth.completion(age) - price * self.worth.pause.done,
             Ending::Failed => self.worth.failed - price * self.worth.pause.failed,
-            Ending::GaveUp | Ending::Waiting => gave_up(age),
+            Ending::GaveUp | Ending::Waiting => return 0,
         };
-        self.parts(self.factor * (came - gave_up(self.at)))
+        let gave_up = self.gave_up - price * (self.pause + self.doomed * self.at);
+        self.parts(self.factor * (came - gave_up))
     }
 
     #[inline]

@@ -12,6 +12,8 @@ use crate::tally::{Cause, Cells, EventCell, Mass};
 
 /// Cells that a fit of patience is made on: steps of a few percent.
 const FIT_CELLS: usize = 120;
+/// Steps of a thinned curve at most.
+const STEPS: f64 = 80.0;
 
 /// Both curves of a queue.
 #[derive(Clone, Debug)]
@@ -98,6 +100,8 @@ pub struct CurveSummary {
     pub mean_s: f64,
     /// Last age with enough at risk, s: past it the data are silent.
     pub sight_s: f64,
+    /// The curve up to there: ages in s and the shares that last longer, thinned to about as many as a picture shows.
+    pub curve: Vec<[f64; 2]>,
 }
 
 impl CurveSummary {
@@ -107,8 +111,27 @@ impl CurveSummary {
             p90_s: curve.quantile(0.9),
             mean_s: mean.restricted_mean(curve.sight()).value,
             sight_s: curve.sight(),
+            curve: thinned(curve),
         }
     }
+}
+
+/// Points of a curve up to its sight, a step of at least one part in [`STEPS`] between them, and the last.
+fn thinned(curve: &KaplanMeier) -> Vec<[f64; 2]> {
+    let mut kept: Vec<[f64; 2]> = Vec::new();
+    let seen = curve.points().iter().take_while(|p| p.time <= curve.sight());
+    let mut last = None;
+    for p in seen {
+        let point = [p.time, p.survival];
+        let before = kept.last().map_or(1.0, |k| k[1]);
+        last = Some(point);
+        if before - p.survival >= 1.0 / STEPS {
+            kept.push(point);
+            last = None;
+        }
+    }
+    kept.extend(last);
+    kept
 }
 
 /// Patience as it was fitted, beside the exponential one that Erlang A assumes.

@@ -230,8 +230,9 @@ pub(super) fn cut_name(cut: Cut) -> &'static str {
 pub(super) const LOST_HEADS: [&str; 6] = ["waits", "too long", "for", "lost", "too soon", "lost"];
 
 /// The cells under [`LOST_HEADS`].
-pub(super) fn lost_cells(lost: &Lost) -> [String; 6] {
-    let or_dash = |value: Option<f64>| value.map_or("-".to_owned(), say::number);
+pub(super) fn lost_cells(lost: &Lost, unit: Option<Unit>) -> [String; 6] {
+    let says = if unit == Some(Unit::Seconds) { say::duration } else { say::number };
+    let or_dash = |value: Option<f64>| value.map_or("-".to_owned(), says);
     [
         say::count(lost.waits as f64),
         say::count(lost.over.waits as f64),
@@ -248,7 +249,11 @@ fn by_rule(out: &mut String, stream: &StreamAudit, page: Page) {
     }
     let mut rows = vec![std::iter::once("").chain(LOST_HEADS).map(String::from).collect::<Vec<_>>()];
     for row in &stream.closed.by_rule {
-        rows.push(std::iter::once(cut_name(row.cut).to_owned()).chain(lost_cells(&row.lost)).collect());
+        rows.push(
+            std::iter::once(cut_name(row.cut).to_owned())
+                .chain(lost_cells(&row.lost, stream.advice.unit))
+                .collect(),
+        );
     }
     page.table(out, &rows, FIELD);
 }
@@ -288,17 +293,19 @@ pub(super) fn open(stream: &StreamAudit) -> String {
 fn queue_lines(out: &mut String, queue: &QueueReport, page: Page) {
     for (name, text) in queue_fields(queue) {
         field(out, page, name, &text);
+        if name == "Patience" {
+            let mut rows = vec![QUEUE_HEADS.map(String::from).to_vec()];
+            rows.extend(queue.by_age.iter().map(|row| queue_cells(row).to_vec()));
+            page.table(out, &rows, FIELD);
+        }
     }
-    let mut rows = vec![QUEUE_HEADS.map(String::from).to_vec()];
-    rows.extend(queue.by_age.iter().map(|row| queue_cells(row).to_vec()));
-    page.table(out, &rows, FIELD);
     if let Some(sizing) = &queue.sizing {
         field(out, page, "Sizing", &sizing_line(sizing));
         let mut rows = vec![SIZING_HEADS.map(String::from).to_vec()];
         rows.extend(sizing_cells(sizing));
         page.table(out, &rows, FIELD);
-        for line in &sizing.assumptions {
-            field(out, page, "  assumes", line);
+        for (i, line) in sizing.assumptions.iter().enumerate() {
+            field(out, page, if i == 0 { "Assumed" } else { "" }, line);
         }
     }
 }
@@ -419,7 +426,11 @@ pub(super) fn sizing_line(sizing: &Sizing) -> String {
         by(sizing.least_c)
     );
     if let Some(n) = sizing.as_seen {
-        let _ = write!(line, "; as many leave as were seen to with {}", counted(u64::from(n), "server"));
+        let _ = write!(
+            line,
+            "; the share that left is nearest to Erlang A's with {}",
+            counted(u64::from(n), "server")
+        );
     }
     line
 }
@@ -461,19 +472,27 @@ fn open_waits(out: &mut String, open: &OpenList, page: Page) {
     page.paragraph(out, Dressed("", Page::plain), Dressed(&head, Page::strong), 2);
     let mut rows = vec![OPEN_HEADS.map(String::from).to_vec()];
     rows.extend(open.waits.iter().map(|wait| open_cells(wait).to_vec()));
+    if open.waits.iter().all(|wait| wait.id.is_none() && wait.count == 1) {
+        rows.iter_mut().for_each(|row| drop(row.remove(1)));
+    }
     page.table(out, &rows, 2);
     let step = match open.within_s {
         Some(step) => format!("within the next {}", say::duration(step)),
         None => "within as long again as it has waited".to_owned(),
     };
     let note = format!(
-        "ends: chance to be done {step}; rest: expected remaining wait if held; worth: of holding on above giving up now; again: \
-         when to look again, from when it was last seen"
+        "done: chance of it {step}; rest: expected remaining wait if held; worth: of holding on above giving up now; again: \
+         when the verdict changes, from when it was last seen"
     );
     page.paragraph(out, Dressed("  ", Page::plain), Dressed(&note, Page::faint), 2);
 }
 
-pub(super) const OPEN_HEADS: [&str; 8] = ["stream", "id", "age", "verdict", "ends", "rest", "worth", "again"];
+pub(super) const OPEN_HEADS: [&str; 8] = ["stream", "id", "age", "verdict", "done", "rest", "worth", "again"];
+
+/// The beginning of an id, without what a terminal would obey.
+fn printable(id: &str) -> String {
+    id.chars().take(24).map(|c| if c.is_control() { char::REPLACEMENT_CHARACTER } else { c }).collect()
+}
 
 /// The cells under [`OPEN_HEADS`].
 pub(super) fn open_cells(wait: &OpenWait) -> [String; 8] {
@@ -483,7 +502,7 @@ pub(super) fn open_cells(wait: &OpenWait) -> [String; 8] {
         Verdict::Unknown => "-",
     };
     let id = match (&wait.id, wait.count) {
-        (Some(id), _) => id.chars().take(24).collect(),
+        (Some(id), _) => printable(id),
         (None, 1) => "-".to_owned(),
         (None, n) => format!("{} alike", say::count(n as f64)),
     };
