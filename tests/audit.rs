@@ -496,3 +496,89 @@ fn an_id_cannot_command_the_terminal() {
     let (_, text, _) = run(folder.path(), &FILES, None);
     assert!(text.contains("[2J<b>=1") && !text.contains('\u{1b}'), "{text}");
 }
+
+// ---- other forms ----
+
+#[test]
+fn a_page_that_needs_nothing_else() {
+    let mut waits = lines(|i| 600.0 * i as f64);
+    let at = MONDAY + 600.0 * 1_199.0;
+    writeln!(
+        waits,
+        "{{\"stream\":\"courier.slot\",\"elapsed\":70,\"ending\":\"waiting\",\"at\":{at},\"id\":\"<script>alert('&')\"}}"
+    )
+    .unwrap();
+    let folder = folder(&waits);
+    let (code, page, err) = run(folder.path(), &[&FILES[..], &["--format", "html"]].concat(), None);
+    assert_eq!((code, err.as_str()), (0, ""));
+    assert!(page.starts_with("<!doctype html>") && page.trim_end().ends_with("</html>"));
+    // Nothing is run or fetched, and what an id says stays text.
+    for bad in ["<script", "<link", "<img", "<iframe", " on", "src=", "@import", "url(http", "javascript:"] {
+        let found = page.find(bad).filter(|&i| bad != " on" || page[i..].starts_with(" onload"));
+        assert_eq!(found, None, "{bad}");
+    }
+    assert!(page.contains("&lt;script&gt;alert("), "{page}");
+    assert!(page.contains("default-src 'none'") && page.contains("prefers-color-scheme:dark"));
+    assert!(page.contains("Most waited past the advice") && page.contains("<svg"));
+    // Ids are unique, and the pictures well-formed.
+    let mut ids: Vec<&str> =
+        page.split(" id=\"").skip(1).map(|rest| rest.split('"').next().unwrap()).collect();
+    let all = ids.len();
+    ids.sort_unstable();
+    ids.dedup();
+    assert_eq!(ids.len(), all);
+    for picture in page.split("<svg").skip(1) {
+        let markup = format!("<svg{}", &picture[..picture.find("</svg>").unwrap() + 6]);
+        roxmltree::Document::parse(&markup).unwrap();
+    }
+}
+
+#[test]
+fn rows_for_a_spreadsheet() {
+    let mut waits = lines(|i| 600.0 * i as f64);
+    let at = MONDAY + 600.0 * 1_199.0;
+    writeln!(
+        waits,
+        "{{\"stream\":\"courier.slot\",\"elapsed\":70,\"ending\":\"waiting\",\"at\":{at},\"id\":\"=1+1, \\\"x\\\"\"}}"
+    )
+    .unwrap();
+    let folder = folder(&waits);
+    let rows = |form: &str| {
+        let (code, out, _) = run(folder.path(), &[&FILES[..], &["--format", form]].concat(), None);
+        assert_eq!(code, 0);
+        let mut reader = csv::Reader::from_reader(out.as_bytes());
+        let heads = reader.headers().unwrap().clone();
+        let rows: Vec<csv::StringRecord> = reader.records().map(Result::unwrap).collect();
+        (heads, rows)
+    };
+    let (heads, lost) = rows("csv");
+    let column = |name: &str| heads.iter().position(|h| h == name).unwrap();
+    let sum = |by: &str, name: &str| -> f64 {
+        let of = lost.iter().filter(|r| &r[column("by")] == by);
+        of.map(|r| r[column(name)].parse::<f64>().unwrap()).sum()
+    };
+    assert_eq!(sum("all", "waits"), 1_200.0);
+    for name in ["waits", "over_hours", "over_lost", "under_waits"] {
+        for by in ["rule", "hour"] {
+            assert!(
+                (sum(by, name) - sum("all", name)).abs() < 1e-6 * sum("all", name).abs().max(1.0),
+                "{by} {name}"
+            );
+        }
+    }
+    let (heads, open) = rows("open-csv");
+    assert_eq!((&heads[1], open.len()), ("id", 3));
+    // Not a formula.
+    assert_eq!(&open.iter().find(|r| &r[4] == "70").unwrap()[1], "'=1+1, \"x\"");
+    assert_eq!(&open[0][6], "let_go");
+}
+
+#[test]
+fn yaml_is_the_same_document() {
+    let folder = folder(&lines(|i| 600.0 * i as f64));
+    let (_, yaml, _) = run(folder.path(), &[&FILES[..], &["--format", "yaml"]].concat(), None);
+    let (_, value) = json(folder.path(), &[]);
+    let set: AuditSet = serde_yaml::from_str(&yaml).unwrap();
+    let same: AuditSet = serde_json::from_value(value).unwrap();
+    assert_eq!(set, same);
+}

@@ -1,13 +1,16 @@
 //! `outwait audit`: waits held against the advice, and what to do with those that are open.
 
+mod html;
+mod table;
 mod text;
 
 use std::collections::HashMap;
 
+use anyhow::Context;
 use clap::{Args, ValueEnum};
 use rayon::prelude::*;
 
-use super::exit::{Exit, Failure, print};
+use super::exit::{Exit, Failure, OrExit, print};
 use super::layout::Page;
 use super::options::{Common, Output, Reading};
 use super::twice::Twice;
@@ -69,6 +72,12 @@ enum Form {
     Json,
     /// The same document as YAML
     Yaml,
+    /// What was lost, a row a stream and group: all, by rule, by hour of the week
+    Csv,
+    /// The open waits that are listed, a row each
+    OpenCsv,
+    /// One page to look at, to send and to print
+    Html,
 }
 
 /// Holds every wait against the advice.
@@ -144,6 +153,9 @@ impl Command {
             Form::Text => Ok(text::audit_set(set, Page::standard_output())),
             Form::Json => Output::Json.render(set, String::new),
             Form::Yaml => Output::Yaml.render(set, String::new),
+            Form::Csv => table::lost(set).context("cannot write CSV").or_exit(Exit::System),
+            Form::OpenCsv => table::open(set).context("cannot write CSV").or_exit(Exit::System),
+            Form::Html => html::page(set).context("cannot write the page").or_exit(Exit::System),
         }
     }
 }

@@ -41,17 +41,19 @@ pub(super) fn summary(set: &AuditSet) -> String {
     let mut line =
         format!("{} in {}", counted(closed, "closed wait"), counted(set.streams.len() as u64, "stream"));
     let most = |of: &dyn Fn(&Lost) -> f64| {
-        set.streams.iter().max_by(|a, b| of(&a.closed.total).total_cmp(&of(&b.closed.total)))
+        let worst = set.streams.iter().max_by(|a, b| of(&a.closed.total).total_cmp(&of(&b.closed.total)));
+        // Of one stream alone it goes without saying.
+        worst.filter(|_| set.streams.len() > 1).map_or(String::new(), |s| format!(", most in {}", s.stream))
     };
     let hours: f64 = set.streams.iter().map(|s| s.closed.total.over.hours).sum();
-    if let Some(worst) = most(&|lost| lost.over.hours).filter(|_| hours > 0.0) {
-        let _ = write!(line, ": {} waited past the advice, most in {}", long(hours), worst.stream);
-    } else {
-        line.push_str(": none waited past the advice");
-    }
+    let _ = match hours > 0.0 {
+        true => write!(line, ": {} waited past the advice{}", long(hours), most(&|lost| lost.over.hours)),
+        false => write!(line, ": none waited past the advice"),
+    };
     let early: u64 = set.streams.iter().map(|s| s.closed.total.under.waits).sum();
-    if let Some(worst) = most(&|lost| lost.under.waits as f64).filter(|_| early > 0) {
-        let _ = write!(line, "; {} given up too early, most in {}", say::count(early as f64), worst.stream);
+    if early > 0 {
+        let worst = most(&|lost| lost.under.waits as f64);
+        let _ = write!(line, "; {} given up too early{worst}", say::count(early as f64));
     }
     line.push('.');
     if set.open.total > 0 {
@@ -72,6 +74,26 @@ pub(super) fn long(hours: f64) -> String {
 }
 
 fn block(out: &mut String, stream: &StreamAudit, page: Page) {
+    let name = format!("{}  ", stream.stream);
+    page.paragraph(out, Dressed(&name, Page::strong), Dressed(&head(stream), Page::faint), 2);
+    for (name, text) in fields(stream) {
+        field(out, page, name, &text);
+        if name == "In force" {
+            table(out, page, std::iter::once("").chain(LOST_HEADS), rule_rows(stream));
+        }
+    }
+    // Without a rule the table has no sentence to follow.
+    if stream.rule.is_none() {
+        table(out, page, std::iter::once("").chain(LOST_HEADS), rule_rows(stream));
+    }
+    if let Some(queue) = &stream.queue {
+        queue_lines(out, queue, page);
+    }
+    cautions(out, &stream.cautions, page);
+}
+
+/// What the audit of a stream rests on.
+pub(super) fn head(stream: &StreamAudit) -> String {
     let e = &stream.evidence;
     let endings = [(e.done, "done"), (e.failed, "failed"), (e.gave_up, "given up"), (e.waiting, "open")];
     let named: Vec<String> = endings
@@ -79,28 +101,30 @@ fn block(out: &mut String, stream: &StreamAudit, page: Page) {
         .filter(|(n, _)| *n > 0)
         .map(|(n, what)| format!("{} {what}", say::count(n as f64)))
         .collect();
-    let head = format!("{}, {}: {}", stream.kind, counted(e.waits, "wait"), named.join(", "));
-    let name = format!("{}  ", stream.stream);
-    page.paragraph(out, Dressed(&name, Page::strong), Dressed(&head, Page::faint), 2);
-    field(out, page, "Advice", &measure(stream));
+    format!("{}, {}: {}", stream.kind, counted(e.waits, "wait"), named.join(", "))
+}
+
+/// What is said of a stream, by name; not of the queue behind it.
+pub(super) fn fields(stream: &StreamAudit) -> Vec<(&'static str, String)> {
+    let mut fields = vec![("Advice", measure(stream))];
     if stream.closed.total.waits > 0 && stream.advice.unit.is_some() {
-        field(out, page, "Too long", &too_long(stream));
-        field(out, page, "Too soon", &too_soon(stream));
+        fields.extend([("Too long", too_long(stream)), ("Too soon", too_soon(stream))]);
     }
-    if let Some(rule) = &stream.rule {
-        field(out, page, "In force", &in_force(rule));
-    }
-    by_rule(out, stream, page);
-    if let Some(text) = worst_hours(&stream.closed) {
-        field(out, page, "Hours", &text);
-    }
+    fields.extend(stream.rule.as_ref().map(|rule| ("In force", in_force(rule))));
+    fields.extend(worst_hours(&stream.closed).map(|text| ("Hours", text)));
     if stream.open.waits > 0 {
-        field(out, page, "Open", &open(stream));
+        fields.push(("Open", open(stream)));
     }
-    if let Some(queue) = &stream.queue {
-        queue_lines(out, queue, page);
+    fields
+}
+
+/// A table, heads first; nothing without rows.
+fn table<'a>(out: &mut String, page: Page, heads: impl IntoIterator<Item = &'a str>, rows: Vec<Vec<String>>) {
+    if !rows.is_empty() {
+        let heads = heads.into_iter().map(String::from).collect();
+        let all: Vec<Vec<String>> = std::iter::once(heads).chain(rows).collect();
+        page.table(out, &all, FIELD);
     }
-    cautions(out, &stream.cautions, page);
 }
 
 fn field(out: &mut String, page: Page, name: &str, text: &str) {
@@ -227,7 +251,8 @@ pub(super) fn cut_name(cut: Cut) -> &'static str {
 }
 
 /// Heads of the tables of losses.
-pub(super) const LOST_HEADS: [&str; 6] = ["waits", "too long", "for", "lost", "too soon", "lost"];
+pub(super) const LOST_HEADS: [&str; 6] =
+    ["waits", "too long", "time past", "lost by it", "too soon", "lost by it"];
 
 /// The cells under [`LOST_HEADS`].
 pub(super) fn lost_cells(lost: &Lost, unit: Option<Unit>) -> [String; 6] {
@@ -243,19 +268,17 @@ pub(super) fn lost_cells(lost: &Lost, unit: Option<Unit>) -> [String; 6] {
     ]
 }
 
-fn by_rule(out: &mut String, stream: &StreamAudit, page: Page) {
-    if stream.advice.unit.is_none() || stream.closed.by_rule.len() < 2 {
-        return;
+/// The rows of a table by the time in force; none where all would be one.
+pub(super) fn rule_rows(stream: &StreamAudit) -> Vec<Vec<String>> {
+    let rows = &stream.closed.by_rule;
+    if stream.advice.unit.is_none() || rows.len() < 2 {
+        return Vec::new();
     }
-    let mut rows = vec![std::iter::once("").chain(LOST_HEADS).map(String::from).collect::<Vec<_>>()];
-    for row in &stream.closed.by_rule {
-        rows.push(
-            std::iter::once(cut_name(row.cut).to_owned())
-                .chain(lost_cells(&row.lost, stream.advice.unit))
-                .collect(),
-        );
-    }
-    page.table(out, &rows, FIELD);
+    let row = |row: &crate::audit::ByRule| {
+        let name = std::iter::once(cut_name(row.cut).to_owned());
+        name.chain(lost_cells(&row.lost, stream.advice.unit)).collect()
+    };
+    rows.iter().map(row).collect()
 }
 
 /// The hours in which the most was lost.
@@ -294,16 +317,13 @@ fn queue_lines(out: &mut String, queue: &QueueReport, page: Page) {
     for (name, text) in queue_fields(queue) {
         field(out, page, name, &text);
         if name == "Patience" {
-            let mut rows = vec![QUEUE_HEADS.map(String::from).to_vec()];
-            rows.extend(queue.by_age.iter().map(|row| queue_cells(row).to_vec()));
-            page.table(out, &rows, FIELD);
+            let rows = queue.by_age.iter().map(|row| queue_cells(row).to_vec()).collect();
+            table(out, page, QUEUE_HEADS, rows);
         }
     }
     if let Some(sizing) = &queue.sizing {
         field(out, page, "Sizing", &sizing_line(sizing));
-        let mut rows = vec![SIZING_HEADS.map(String::from).to_vec()];
-        rows.extend(sizing_cells(sizing));
-        page.table(out, &rows, FIELD);
+        table(out, page, SIZING_HEADS, sizing_cells(sizing));
         for (i, line) in sizing.assumptions.iter().enumerate() {
             field(out, page, if i == 0 { "Assumed" } else { "" }, line);
         }
@@ -459,35 +479,48 @@ fn open_waits(out: &mut String, open: &OpenList, page: Page) {
     if open.waits.is_empty() {
         return;
     }
+    out.push('\n');
+    page.paragraph(out, Dressed("", Page::plain), Dressed(&open_head(open), Page::strong), 2);
+    page.table(out, &open_rows(open), 2);
+    page.paragraph(out, Dressed("  ", Page::plain), Dressed(&open_note(open), Page::faint), 2);
+}
+
+/// The open waits as a table, heads first; without ids where none has one.
+pub(super) fn open_rows(open: &OpenList) -> Vec<Vec<String>> {
+    let mut rows = vec![OPEN_HEADS.map(String::from).to_vec()];
+    rows.extend(open.waits.iter().map(|wait| open_cells(wait).to_vec()));
+    if open.waits.iter().all(|wait| wait.id.is_none() && wait.count == 1) {
+        rows.iter_mut().for_each(|row| drop(row.remove(1)));
+    }
+    rows
+}
+
+/// The head of the list of open waits.
+pub(super) fn open_head(open: &OpenList) -> String {
     let listed = open.waits.len() as u64;
-    let head = match open.total > listed {
+    match open.total > listed {
         true => format!(
             "Open waits, the {} most urgent of {}",
             say::count(listed as f64),
             say::count(open.total as f64)
         ),
         false => "Open waits, the most urgent first".to_owned(),
-    };
-    out.push('\n');
-    page.paragraph(out, Dressed("", Page::plain), Dressed(&head, Page::strong), 2);
-    let mut rows = vec![OPEN_HEADS.map(String::from).to_vec()];
-    rows.extend(open.waits.iter().map(|wait| open_cells(wait).to_vec()));
-    if open.waits.iter().all(|wait| wait.id.is_none() && wait.count == 1) {
-        rows.iter_mut().for_each(|row| drop(row.remove(1)));
     }
-    page.table(out, &rows, 2);
+}
+
+/// What its columns mean.
+pub(super) fn open_note(open: &OpenList) -> String {
     let step = match open.within_s {
         Some(step) => format!("within the next {}", say::duration(step)),
         None => "within as long again as it has waited".to_owned(),
     };
-    let note = format!(
-        "done: chance of it {step}; rest: expected remaining wait if held; worth: of holding on above giving up now; again: \
-         when the verdict changes, from when it was last seen"
-    );
-    page.paragraph(out, Dressed("  ", Page::plain), Dressed(&note, Page::faint), 2);
+    format!(
+        "done: chance of it {step}; rest: expected remaining wait if held to the end; worth: of holding on above giving up \
+         now; again: when the verdict changes, from when it was last seen"
+    )
 }
 
-pub(super) const OPEN_HEADS: [&str; 8] = ["stream", "id", "age", "verdict", "done", "rest", "worth", "again"];
+const OPEN_HEADS: [&str; 8] = ["stream", "id", "age", "verdict", "done", "rest", "worth", "again"];
 
 /// The beginning of an id, without what a terminal would obey.
 fn printable(id: &str) -> String {
@@ -495,7 +528,7 @@ fn printable(id: &str) -> String {
 }
 
 /// The cells under [`OPEN_HEADS`].
-pub(super) fn open_cells(wait: &OpenWait) -> [String; 8] {
+fn open_cells(wait: &OpenWait) -> [String; 8] {
     let verdict = match wait.verdict {
         Verdict::Hold => "hold",
         Verdict::LetGo => "let go",
