@@ -169,6 +169,7 @@ fn counts_and_buckets_weigh_as_many() {
     let many = set.streams[0].closed.total;
     assert_eq!(many.waits, one.waits + 1_011);
     assert_eq!(many.over.waits, one.over.waits + 1_011);
+    assert_eq!(set.streams[0].cautions.iter().filter(|c| c.code == "endless_buckets").count(), 1);
 }
 
 // ---- open waits ----

@@ -150,6 +150,8 @@ pub struct Sums<'a> {
     streams: Vec<Option<Box<StreamSums>>>,
     open: Shortlist,
     open_total: u64,
+    /// Waits older than the window of their stream.
+    older: u64,
 }
 
 impl Audit {
@@ -167,12 +169,13 @@ impl Audit {
             streams: (0..self.subjects.len()).map(|_| None).collect(),
             open: Shortlist::new(self.question.list),
             open_total: 0,
+            older: 0,
         }
     }
 
     /// The answer. `assumed` and `made_at` as in a set of advice.
     pub fn report(&self, sums: Sums<'_>, assumed: Vec<String>, made_at: Option<String>) -> AuditSet {
-        let Sums { streams, open, open_total, .. } = sums;
+        let Sums { streams, open, open_total, older, .. } = sums;
         let streams: Vec<StreamAudit> = self
             .subjects
             .iter()
@@ -196,6 +199,7 @@ impl Audit {
             assumed,
             cautions,
             streams,
+            older,
             open: OpenList { total: open_total, within_s: self.question.within, waits },
         }
     }
@@ -238,7 +242,7 @@ impl Audit {
             closed: Closed { total: sums.closed().lost(yardstick), undated: sums.undated, by_rule, by_hour },
             open,
             queue,
-            cautions: cautions(subject, &open),
+            cautions: cautions(subject, &open, sums.endless),
         }
     }
 
@@ -278,6 +282,7 @@ impl Sums<'_> {
         if let Day::Number(day) = Day::of(wait.at())
             && day < subject.opening
         {
+            self.older = self.older.saturating_add(wait.count());
             return;
         }
         let against = Against {
@@ -321,10 +326,11 @@ impl Sums<'_> {
         }
         self.open.merge(other.open);
         self.open_total = self.open_total.saturating_add(other.open_total);
+        self.older = self.older.saturating_add(other.older);
     }
 }
 
-fn cautions(subject: &Subject, open: &OpenCounts) -> Vec<Caution> {
+fn cautions(subject: &Subject, open: &OpenCounts, endless: u64) -> Vec<Caution> {
     let mut found: Vec<Caution> = subject
         .advice
         .cautions
@@ -340,6 +346,17 @@ fn cautions(subject: &Subject, open: &OpenCounts) -> Vec<Caution> {
             "letting go of a wait does not stop the work behind it, and trying again does it twice; the policy does not say \
              that it may be repeated",
             "let go only of what is idempotent or was cancelled for certain; then say `repeatable: true`",
+        ));
+    }
+    if endless > 0 {
+        found.push(caution(
+            "endless_buckets",
+            format!(
+                "{} waits ended in a bucket without an upper bound and are counted at its lower one: they were longer, and \
+                 more was lost than is said",
+                say::count(endless as f64)
+            ),
+            "give single waits, or buckets that reach further",
         ));
     }
     if open.stale > 0 {

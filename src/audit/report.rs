@@ -24,6 +24,8 @@ pub struct AuditSet {
     pub cautions: Vec<Caution>,
     /// One entry a stream, by name.
     pub streams: Vec<StreamAudit>,
+    /// Waits older than the window of their stream's policy entry, left out.
+    pub older: u64,
     /// The waits that are open.
     pub open: OpenList,
 }

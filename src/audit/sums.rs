@@ -36,13 +36,13 @@ impl Cell {
     #[inline]
     fn add(&mut self, more: &Cell) {
         self.waits = self.waits.saturating_add(more.waits);
-        self.waited += more.waited;
+        self.waited = self.waited.saturating_add(more.waited);
         self.over = self.over.saturating_add(more.over);
-        self.past += more.past;
-        self.back += more.back;
+        self.past = self.past.saturating_add(more.past);
+        self.back = self.back.saturating_add(more.back);
         self.under = self.under.saturating_add(more.under);
-        self.further += more.further;
-        self.worth += more.worth;
+        self.further = self.further.saturating_add(more.further);
+        self.worth = self.worth.saturating_add(more.worth);
         self.bulk = self.bulk.saturating_add(more.bulk);
     }
 
@@ -87,6 +87,8 @@ pub(super) struct StreamSums {
     pub(super) by_cut: [Cell; Cut::ALL.len()],
     pub(super) hours: Hours,
     pub(super) undated: u64,
+    /// Ended in a bucket without an upper bound, and counted at its lower one.
+    pub(super) endless: u64,
     pub(super) open: OpenSums,
     pub(super) flow: Flow,
 }
@@ -97,6 +99,7 @@ impl Default for StreamSums {
             by_cut: Default::default(),
             hours: Hours { places: [NONE; HOURS], cells: Vec::new() },
             undated: 0,
+            endless: 0,
             open: OpenSums::default(),
             flow: Flow::default(),
         }
@@ -186,14 +189,17 @@ impl StreamSums {
         if let Some(over) = against.yardstick.over(age, ending) {
             cell.over = count;
             cell.past = nano(over.past) * n;
-            cell.back = over.back * n as i128;
+            cell.back = over.back.saturating_mul(n as i128);
         } else if ending == Ending::GaveUp
             && let Some(under) = against.yardstick.under(age)
         {
             cell.under = count;
             cell.further = nano(under.further) * n;
-            cell.worth = under.parts * n as i128;
+            cell.worth = under.parts.saturating_mul(n as i128);
             cell.bulk = if under.bulk { count } else { 0 };
+        }
+        if !ending.is_censored() && matches!(wait.age(), Age::Between { upto: f64::INFINITY, .. }) {
+            self.endless = self.endless.saturating_add(count);
         }
         self.by_cut[cut(against.rule, age, ending) as usize].add(&cell);
         match wait.at() {
@@ -250,6 +256,7 @@ impl StreamSums {
             self.hours.cell(hour).add(cell);
         }
         self.undated = self.undated.saturating_add(other.undated);
+        self.endless = self.endless.saturating_add(other.endless);
         let (mine, theirs) = (&mut self.open, &other.open);
         mine.hold = mine.hold.saturating_add(theirs.hold);
         mine.let_go = mine.let_go.saturating_add(theirs.let_go);

@@ -112,7 +112,7 @@ impl ErlangA {
             return None;
         }
         let (x, y) = (n * patience / service, arrivals * patience);
-        let (mut term, mut total, mut first, mut ln_scale) = (1.0, 1.0, 0.0, 0.0);
+        let (mut term, mut total, mut first, mut ln_scale) = (1.0, 1.0, 0.0, 0.0_f64);
         let mut settled = false;
         for j in 1..=MOST_TERMS {
             let ratio = y / (x + f64::from(j));
@@ -133,7 +133,7 @@ impl ErlangA {
         let lost = erlang_b(servers, arrivals * service);
         let (waits, behind) = if settled {
             // A·B / (1 - B + A·B) without forming A, which may be too large.
-            let odds = (1.0 - lost) / lost / total * (-ln_scale as f64).exp();
+            let odds = (1.0 - lost) / lost / total * (-ln_scale).exp();
             (1.0 / (1.0 + odds), first / total)
         } else {
             // So many wait that they leave at the rate at which they come too many.

@@ -231,9 +231,8 @@ impl Sizing {
     ) -> Option<Sizing> {
         let load = arrivals * service_time;
         let sound = |v: f64| v > 0.0 && v.is_finite();
-        if ![service_time, arrivals, mean_patience].into_iter().all(sound)
-            || !(load > 0.0 && load < f64::from(MOST_SERVERS) / 4.0)
-        {
+        let sized = load > 0.0 && load < f64::from(MOST_SERVERS) / 4.0;
+        if !(sized && [service_time, arrivals, mean_patience].into_iter().all(sound)) {
             return None;
         }
         let goal = known.goal;

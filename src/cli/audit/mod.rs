@@ -13,6 +13,7 @@ use rayon::prelude::*;
 use super::exit::{Exit, Failure, OrExit, print};
 use super::layout::Page;
 use super::options::{Common, Output, Reading};
+use super::text::counted;
 use super::twice::Twice;
 use super::{reading, weigh};
 use crate::advice::Action;
@@ -81,16 +82,16 @@ enum Form {
 }
 
 /// Holds every wait against the advice.
-struct Holding<'a>(Sums<'a>);
+struct Held<'a>(Sums<'a>);
 
-impl Sink for Holding<'_> {
+impl Sink for Held<'_> {
     #[inline]
     fn take(&mut self, record: &Record<'_>) {
         self.0.add(record.stream, &record.wait, record.id);
     }
 
     fn fork(&self) -> Self {
-        Holding(self.0.fork())
+        Held(self.0.fork())
     }
 
     fn absorb(&mut self, other: Self) {
@@ -107,8 +108,7 @@ impl Command {
         let (book, report) = reading::counted(sources, &self.reading, &common)?;
         let audit = self.prepare(&book, &report, policy.as_ref(), &common);
         drop(book);
-        let (Holding(sums), again) =
-            reading::into(twice.again()?, &self.reading, &common, Holding(audit.sums()))?;
+        let (Held(sums), again) = reading::into(twice.again()?, &self.reading, &common, Held(audit.sums()))?;
         if (again.lines, again.waits) != (report.lines, report.waits) {
             reading::note(
                 "the inputs changed between the two readings; the audit is of the second, by the advice of the first",
@@ -116,6 +116,12 @@ impl Command {
         }
         let (newest, _) = weigh::newest(&report, &common);
         let set = audit.report(sums, assumed(policy.as_ref()), newest.and_then(say::time));
+        if set.older > 0 {
+            reading::note(&format!(
+                "{} older than the window of their stream (`guard: window`, in days before the newest wait) left out",
+                counted(set.older, "wait")
+            ));
+        }
         print(&self.render(&set)?)?;
         let in_the_dark = set.streams.iter().all(|s| s.advice.action == Action::GatherEvidence);
         Ok(if in_the_dark { Exit::NoEvidence } else { Exit::Well })

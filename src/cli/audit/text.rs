@@ -101,6 +101,9 @@ pub(super) fn head(stream: &StreamAudit) -> String {
         .filter(|(n, _)| *n > 0)
         .map(|(n, what)| format!("{} {what}", say::count(n as f64)))
         .collect();
+    if named.is_empty() {
+        return format!("{}, no wait in its window", stream.kind);
+    }
     format!("{}, {}: {}", stream.kind, counted(e.waits, "wait"), named.join(", "))
 }
 
@@ -181,26 +184,19 @@ pub(super) fn too_long(stream: &StreamAudit) -> String {
         say::percent(over.hours / hours)
     );
     let unit = stream.advice.unit;
-    match (over.cost, over.won_back, over.lost) {
-        (Some(cost), Some(back), Some(lost)) if unit == Some(Unit::Worth) => {
-            let _ = write!(
-                line,
-                ": time worth {}, of which late endings brought back {}; lost {}",
-                say::number(cost),
-                say::number(back),
-                say::number(lost)
-            );
-        }
-        (_, Some(back), Some(lost)) => {
-            let _ = write!(
-                line,
-                "; late endings brought back {}; lost {}",
-                say::duration(back),
-                amount(lost, unit)
-            );
-        }
-        _ => {}
-    }
+    let (Some(cost), Some(back), Some(lost)) = (over.cost, over.won_back, over.lost) else { return line };
+    // Time is worth itself where worth is counted in it.
+    let (cost, back) = match unit {
+        Some(Unit::Seconds) => (String::new(), say::duration(back)),
+        _ => (format!(": time worth {}", say::number(cost)), say::number(back)),
+    };
+    let sep = if cost.is_empty() { "; " } else { ", of which " };
+    let _ = write!(
+        line,
+        "{cost}{sep}late endings brought back {back}; {} {}",
+        if lost < 0.0 { "gained" } else { "lost" },
+        amount(lost.abs(), unit)
+    );
     line
 }
 
@@ -497,7 +493,7 @@ pub(super) fn open_rows(open: &OpenList) -> Vec<Vec<String>> {
 
 /// The head of the list of open waits.
 pub(super) fn open_head(open: &OpenList) -> String {
-    let listed = open.waits.len() as u64;
+    let listed = open.waits.iter().fold(0, |n: u64, wait| n.saturating_add(wait.count));
     match open.total > listed {
         true => format!(
             "Open waits, the {} most urgent of {}",
