@@ -179,7 +179,7 @@ fn benches(criterion: &mut Criterion) {
         let mut sink = Histograms::default();
         b.iter(|| {
             for (row, &wait) in rows.iter().zip(&waits) {
-                sink.take(&Record { stream: row.stream, id: None, wait });
+                sink.take(&Record { stream: row.stream, place: 0, id: None, wait });
             }
         });
     });

@@ -95,6 +95,20 @@ pub enum TailClass {
     Undecided,
 }
 
+impl TailClass {
+    /// All of them.
+    pub const ALL: [TailClass; 3] = [TailClass::Heavy, TailClass::Light, TailClass::Undecided];
+
+    /// The name in JSON.
+    pub fn name(self) -> &'static str {
+        match self {
+            TailClass::Heavy => "heavy",
+            TailClass::Light => "light",
+            TailClass::Undecided => "undecided",
+        }
+    }
+}
+
 /// Trend of the mean residual life over the observed ages.
 #[derive(Clone, Copy, Debug, PartialEq, Eq, Serialize, Deserialize)]
 #[serde(rename_all = "snake_case")]
@@ -109,6 +123,28 @@ pub enum RemainingWait {
     Mixed,
     /// The data do not tell.
     Undecided,
+}
+
+impl RemainingWait {
+    /// All of them.
+    pub const ALL: [RemainingWait; 5] = [
+        RemainingWait::Growing,
+        RemainingWait::Shrinking,
+        RemainingWait::Flat,
+        RemainingWait::Mixed,
+        RemainingWait::Undecided,
+    ];
+
+    /// The name in JSON.
+    pub fn name(self) -> &'static str {
+        match self {
+            RemainingWait::Growing => "growing",
+            RemainingWait::Shrinking => "shrinking",
+            RemainingWait::Flat => "flat",
+            RemainingWait::Mixed => "mixed",
+            RemainingWait::Undecided => "undecided",
+        }
+    }
 }
 
 /// A value with an interval.
@@ -161,6 +197,10 @@ pub enum Action {
 }
 
 impl Action {
+    /// All of them.
+    pub const ALL: [Action; 4] =
+        [Action::GiveUpAfter, Action::WaitItOut, Action::GatherEvidence, Action::StateACost];
+
     /// The name in JSON.
     pub fn name(self) -> &'static str {
         match self {

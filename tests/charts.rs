@@ -139,7 +139,18 @@ impl Scene {
                 waiting(&Waiting { stream, waits, ages, curve: &self.survival, steps, level, marks }, f)
             }),
             draw("remaining", &|f| {
-                remaining(&Remaining { stream, ages, curve: &self.remaining, level, marks, trend }, f)
+                remaining(
+                    &Remaining {
+                        stream,
+                        ages,
+                        curve: &self.remaining,
+                        level,
+                        marks,
+                        trend,
+                        upto: f64::INFINITY,
+                    },
+                    f,
+                )
             }),
             draw("rate", &|f| {
                 let (earned, rivals) = ([None, Some(self.earned)], &rivals[..]);
@@ -255,7 +266,7 @@ fn odd(frame: &Frame<'_>) -> Vec<(String, Svg)> {
         Point::new(0.4, 3.0).between(1.0, f64::INFINITY),
         Point::new(0.5, f64::INFINITY).between(2.0, f64::INFINITY),
     ][..];
-    let endless = Remaining { stream, ages, curve, level, marks, trend: RemainingWait::Growing };
+    let endless = Remaining { stream, ages, curve, level, marks, trend: RemainingWait::Growing, upto: 9.0 };
     let curve = &[[0.0, 1.0], [1.0, 0.0], [2.0, 0.0], [2.5, 0.3], [3.0, 0.0], [4.0, 0.0]][..];
     let ages = Ages { start: 1.0, middle: 1.0, end: 4.0, sight: 2.8 };
     let marks = Marks { advised: Some(1.3), in_force: Some(3.5) };
@@ -763,7 +774,8 @@ fn says_why_there_is_nothing_to_draw() {
     let endless = [Point::new(1.0, f64::INFINITY), Point::new(2.0, f64::INFINITY)];
     for curve in [&none[..], &nan, &endless] {
         let trend = RemainingWait::Undecided;
-        let more = remaining(&Remaining { stream, ages, curve, level, marks, trend }, &frame);
+        let more =
+            remaining(&Remaining { stream, ages, curve, level, marks, trend, upto: f64::INFINITY }, &frame);
         let quantity = Quantity::PerTime("worth");
         let (as_good, rivals) = (Some([f64::NAN, 1.0]), &[][..]);
         let input =
@@ -818,7 +830,10 @@ fn degenerate_data_make_a_clear_picture() {
     // An infinite remaining wait leaves the axis and is said.
     let endless = [Point::new(0.1, 1.0).between(0.5, f64::INFINITY), Point::new(0.5, f64::INFINITY)];
     let trend = RemainingWait::Growing;
-    let svg = remaining(&Remaining { stream, ages, curve: &endless, level, marks, trend }, &frame);
+    let svg = remaining(
+        &Remaining { stream, ages, curve: &endless, level, marks, trend, upto: f64::INFINITY },
+        &frame,
+    );
     sound(&svg).unwrap();
     assert!(svg.title.ends_with("1 s more at the start, no end after 500 ms"), "{}", svg.title);
     // Nothing was over-waited.
@@ -937,7 +952,7 @@ proptest! {
         let as_good = as_good.map(|(a, b)| [a, b]);
         let pictures = [
             waiting(&Waiting { stream, waits: 9, ages, curve, steps, level, marks }, &frame),
-            remaining(&Remaining { stream, ages, curve, level, marks, trend }, &frame),
+            remaining(&Remaining { stream, ages, curve, level, marks, trend, upto: f64::INFINITY }, &frame),
             rate(&Rate { stream, ages, curve, level, marks, earned, as_good, rivals, quantity }, &frame),
             holding(&Holding { stream, ages, curve: &worth, marks, unit: &unit }, &frame),
             week(&Week { stream, what: &unit, quantity, hours: &hours, zone: "UTC" }, &frame),

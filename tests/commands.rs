@@ -451,7 +451,7 @@ fn bad_lines_are_told_and_counted() {
         let (code, out, err) = weigh(&["--bad-lines", allowed]);
         assert_eq!(code, 4, "{err}");
         assert!(out.starts_with("1 wait in 1 stream: 1 with too little evidence.\n"), "{out}");
-        assert!(err.starts_with(told) && !err.contains("nothing was weighed"), "{err}");
+        assert!(err.starts_with(told) && !err.contains("nothing was reckoned"), "{err}");
     }
 }
 

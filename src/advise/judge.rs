@@ -7,7 +7,7 @@ use rand::{RngExt, SeedableRng};
 use rand_xoshiro::Xoshiro256PlusPlus;
 
 use super::bounds::Bounds;
-use super::{Believed, Case, History};
+use super::{Case, History};
 use crate::advice::{Action, Change, Decision, Look, Outcome, Proposal, Rival, SecondCopy, Stickiness};
 use crate::curve::{Empirical, KaplanMeier, LifeTable, PiecewiseHazard};
 use crate::outlook::{Average, Averaging, Grid, Sampled};
@@ -50,6 +50,12 @@ pub(crate) struct Judgement {
     pub(crate) sight: f64,
     /// Share of all waits that were cut off there or later, and not seen to end.
     pub(crate) unseen: f64,
+    /// The ages on which curves are sampled.
+    pub(crate) grid: Grid,
+    /// Cumulative hazard of failures at those ages; empty where nothing fails.
+    pub(crate) failure: Vec<f64>,
+    /// Replicates of the empirical curve.
+    pub(crate) replicates: Vec<Sampled>,
     /// The choice, or why there is none although the evidence suffices.
     pub(crate) outcome: Result<Settled, String>,
 }
@@ -82,7 +88,11 @@ pub(crate) struct Settled {
     look: Option<Look>,
     second_copy: Option<SecondCopy>,
     schedule: Vec<f64>,
-    pub(crate) believed: Believed,
+    /// The believed curve, every curve with its scores, and the prices by which both are read.
+    pub(super) average: Average,
+    pub(super) doubt: Doubt,
+    pub(super) worth: Worth,
+    pub(super) retry: Retry,
 }
 
 /// A timer that shortens the mean total and lengthens its tail. Means in s.
@@ -139,27 +149,36 @@ impl Judgement {
             unseen: curve.survival(sight) * cut_off_share(&coarse.sample(Cause::Any), sight),
             outcome: Err(String::new()),
             ensemble,
+            grid,
+            failure,
+            replicates,
         };
-        let Some(mut worth) = entry.worth else { return Some(judgement) };
-        // A deadline brings its own cap.
-        let attempts = match worth.aim {
-            Aim::Deadline { attempts, .. } => Some(attempts),
-            _ => entry.retry.attempts,
-        };
-        let mut retry = Retry { attempts, growth: entry.retry.backoff.factor, ..Retry::default() };
-        if entry.retry.backoff.jitter == Jitter::Full {
-            // Drawn evenly from 0 to its full length, a pause lasts half of that on average.
-            retry.jitter = true;
-            worth.pause.failed *= 0.5;
-            worth.pause.gave_up *= 0.5;
-        }
+        let Some((mut worth, retry)) = prices(entry) else { return Some(judgement) };
         let sticky = sticky(cells, &tally.retries(), entry, &curve);
         worth.sticky = sticky.as_ref().map_or(0.0, |s| s.value);
-        let scene =
-            Scene { entry, bounds, grid: &grid, worth, retry, empirical: &empirical, sight, tally, history };
-        judgement.outcome = scene.settle(&judgement, &failure, failing.as_ref(), &replicates, sticky);
+        let (grid, empirical) = (&judgement.grid, &empirical);
+        let scene = Scene { entry, bounds, grid, worth, retry, empirical, sight, tally, history };
+        judgement.outcome = scene.settle(&judgement, failing.as_ref(), sticky);
         Some(judgement)
     }
+}
+
+/// The price list of an entry and what follows an attempt, as they are reckoned with; without an aim none.
+pub(crate) fn prices(entry: &Entry) -> Option<(Worth, Retry)> {
+    let mut worth = entry.worth?;
+    // A deadline brings its own cap.
+    let attempts = match worth.aim {
+        Aim::Deadline { attempts, .. } => Some(attempts),
+        _ => entry.retry.attempts,
+    };
+    let mut retry = Retry { attempts, growth: entry.retry.backoff.factor, ..Retry::default() };
+    if entry.retry.backoff.jitter == Jitter::Full {
+        // Drawn evenly from 0 to its full length, a pause lasts half of that on average.
+        retry.jitter = true;
+        worth.pause.failed *= 0.5;
+        worth.pause.gave_up *= 0.5;
+    }
+    Some((worth, retry))
 }
 
 /// Of the waits that reach past an age, the share that was cut off there or later and not seen to end.
@@ -270,12 +289,10 @@ impl Scene<'_> {
     fn settle(
         &self,
         judgement: &Judgement,
-        failure: &[f64],
         failing: Option<&PiecewiseHazard>,
-        replicates: &[Sampled],
         sticky: Option<Stickiness>,
     ) -> Result<Settled, String> {
-        let ensemble = &judgement.ensemble;
+        let Judgement { ensemble, failure, replicates, .. } = judgement;
         let rules = self.rules();
         let now = self.entry.now;
         let mut settings: Vec<f64> = rules.iter().map(|(_, t)| *t).collect();
@@ -345,7 +362,7 @@ impl Scene<'_> {
                 })
             })
             .collect();
-        let outcome = |t: Option<f64>| self.outcome(&objective, t);
+        let outcome = |t: Option<f64>| outcome(&objective, self.bounds.ceiling, t);
         let attempts = |t: f64| self.retry.request(Odds::at(&average, t), &self.worth).attempts;
         Ok(Settled {
             at,
@@ -366,7 +383,6 @@ impl Scene<'_> {
             never: outcome(None),
             rivals,
             holding_on: self.holding_on(&objective, &optimum),
-            believed: Believed { outlook: average.clone(), worth: self.worth, retry: self.retry, limits, at },
             retry_budget: finite(attempts(at) - 1.0).filter(|_| !wait_it_out),
             look: self.look(&sides, worth_of(&objective, &optimum), beyond),
             second_copy: self.second_copy(&average),
@@ -378,6 +394,10 @@ impl Scene<'_> {
                 ..s
             }),
             sides,
+            worth: self.worth,
+            retry: self.retry,
+            average,
+            doubt,
         })
     }
 
@@ -427,21 +447,6 @@ impl Scene<'_> {
             None => (ceiling, LoadCeiling::Unreachable),
             Some(least) if least > choice.at => (least, LoadCeiling::Moved(choice.at)),
             Some(_) => (choice.at, LoadCeiling::Kept),
-        }
-    }
-
-    fn outcome(&self, objective: &Objective<'_>, at: Option<f64>) -> Outcome {
-        let average = objective.outlook();
-        let t = at.unwrap_or(self.bounds.ceiling).min(self.bounds.ceiling);
-        let request = self.retry.request(Odds::at(average, t), &self.worth);
-        let total = RequestTime::new(average, &self.worth, &self.retry, t);
-        Outcome {
-            give_up_after_s: at,
-            rate_per_s: objective.score(t),
-            done_share: average.done(t),
-            attempts_per_request: finite(request.attempts),
-            p50_s: finite(total.quantile(0.5)),
-            p99_s: finite(total.quantile(0.99)),
         }
     }
 
@@ -521,6 +526,21 @@ impl Scene<'_> {
     }
 }
 
+/// What a give-up time does by the objective's outlook; `None` and what is beyond the ceiling count as the ceiling.
+pub(super) fn outcome(objective: &Objective<'_>, ceiling: f64, at: Option<f64>) -> Outcome {
+    let (outlook, worth, retry) = (objective.outlook(), objective.worth(), objective.retry());
+    let t = at.unwrap_or(ceiling).min(ceiling);
+    let total = RequestTime::new(outlook, worth, retry, t);
+    Outcome {
+        give_up_after_s: at,
+        rate_per_s: objective.score(t),
+        done_share: outlook.done(t),
+        attempts_per_request: finite(retry.request(Odds::at(outlook, t), worth).attempts),
+        p50_s: finite(total.quantile(0.5)),
+        p99_s: finite(total.quantile(0.99)),
+    }
+}
+
 /// What a second is worth at the optimum.
 fn worth_of(objective: &Objective<'_>, optimum: &Optimum) -> f64 {
     match objective.worth().aim {
@@ -529,12 +549,12 @@ fn worth_of(objective: &Objective<'_>, optimum: &Optimum) -> f64 {
     }
 }
 
-fn finite(value: f64) -> Option<f64> {
+pub(super) fn finite(value: f64) -> Option<f64> {
     value.is_finite().then_some(value)
 }
 
 /// A curve on sorted ages read at `t`, straight between them.
-fn interpolate(ages: &[f64], values: &[f64], t: f64) -> f64 {
+pub(super) fn interpolate(ages: &[f64], values: &[f64], t: f64) -> f64 {
     let i = ages.partition_point(|&a| a < t).clamp(1, ages.len() - 1);
     let part = ((t - ages[i - 1]) / (ages[i] - ages[i - 1])).clamp(0.0, 1.0);
     values[i - 1] + part * (values[i] - values[i - 1])

@@ -4,15 +4,23 @@
 mod believed;
 mod bounds;
 mod cautions;
+mod curves;
 mod judge;
 mod pool;
 mod shift;
 mod streams;
+mod study;
 mod summary;
 
 pub use believed::Believed;
+pub(crate) use curves::aim_name;
+pub use curves::{CURVE_SCHEMA, CurvePoint, Curves, Mark};
+pub(crate) use judge::prices;
 pub use shift::Shift;
+pub(crate) use streams::name_hash;
 pub use streams::{Lenders, Terms};
+pub use study::{Study, Survival, WHAT_IF_SCHEMA, WhatIf, WhatIfError};
+pub(crate) use summary::cost_of_time;
 
 use crate::advice::{Action, Advice, Caution, Decision, Evidence, RemainingWait, Tail, TailClass};
 use crate::curve::ENOUGH;
@@ -84,12 +92,24 @@ impl<'a> Case<'a> {
 /// # Ok::<(), outwait::wait::WaitError>(())
 /// ```
 pub fn advise(case: &Case<'_>, entry: &Entry, seed: u64) -> Advice {
-    advise_believing(case, entry, seed).0
+    study(case, entry, seed).into_advice()
 }
 
-/// The same, with what is believed of a wait: for judging single ones. `None` where no give-up time is advised, nor waiting
-/// it out.
-pub fn advise_believing(case: &Case<'_>, entry: &Entry, seed: u64) -> (Advice, Option<Believed>) {
+/// The curves behind the advice on one stream, over a grid of ages.
+pub fn curves(case: &Case<'_>, entry: &Entry, seed: u64) -> Curves {
+    study(case, entry, seed).curves()
+}
+
+/// What a give-up time (s, infinite for never) would do, set against the time in force and the advised one.
+///
+/// # Errors
+/// [`WhatIfError`]: no time, or no curve to judge it by.
+pub fn what_if(case: &Case<'_>, entry: &Entry, seed: u64, give_up_after: f64) -> Result<WhatIf, WhatIfError> {
+    study(case, entry, seed).what_if(give_up_after)
+}
+
+/// The advice on one stream with what it rests on, for more than one question about it.
+pub fn study(case: &Case<'_>, entry: &Entry, seed: u64) -> Study {
     let own = case.tally.first_attempts();
     // Before the data are cut where nobody is watched: what hangs is older than that.
     let open = own.waiting.clone();
@@ -132,9 +152,7 @@ pub fn advise_believing(case: &Case<'_>, entry: &Entry, seed: u64) -> (Advice, O
     if let Some(pooled) = &pooled {
         advice.cautions.push(cautions::borrowed(pooled));
     }
-    let settled = matches!(advice.advice.action, Action::GiveUpAfter | Action::WaitItOut);
-    let believed = judgement.filter(|_| settled).and_then(|j| j.outcome.ok()).map(|s| s.believed);
-    (advice, believed)
+    Study { advice, cells, entry: entry.clone(), bounds, judgement }
 }
 
 /// The action, and everything that goes with it.

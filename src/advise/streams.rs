@@ -3,7 +3,7 @@
 use std::collections::HashMap;
 
 use super::pool::{MOST_SIBLINGS, SIBLING_CELLS};
-use super::{Believed, Case, History, advise_believing, caution};
+use super::{Case, History, Study, caution, study};
 use crate::advice::{Advice, AdviceSet, Caution, SCHEMA};
 use crate::policy::{Entry, GiveUp, Jitter, Policy};
 use crate::say;
@@ -50,17 +50,17 @@ impl Terms<'_> {
         suspicion: Option<&str>,
         lenders: &Lenders,
     ) -> Advice {
-        self.advise_believing(stream, days, suspicion, lenders).0
+        self.study_among(stream, days, suspicion, lenders).into_advice()
     }
 
-    /// The same, with what is believed of a wait, where a time is advised.
-    pub fn advise_believing(
+    /// The same with what the advice rests on.
+    pub fn study_among(
         &self,
         stream: &str,
         days: &Days,
         suspicion: Option<&str>,
         lenders: &Lenders,
-    ) -> (Advice, Option<Believed>) {
+    ) -> Study {
         let entry = self.entry(stream);
         let opening = self.opening(&entry);
         let tally = days.since(opening);
@@ -80,10 +80,10 @@ impl Terms<'_> {
             siblings: &siblings,
             history: History::default(),
         };
-        advise_believing(&case, &entry, self.seed ^ name_hash(stream))
+        study(&case, &entry, self.seed ^ name_hash(stream))
     }
 
-    /// First day of an entry's window, since the epoch.
+    /// First day of an entry's window, days since 1970-01-01.
     pub fn opening(&self, entry: &Entry) -> i32 {
         match self.newest {
             Some(newest) => newest - ((entry.guard.window / DAY).ceil() as i32).max(1) + 1,
@@ -128,7 +128,8 @@ impl Terms<'_> {
         AdviceSet { schema: SCHEMA.to_owned(), made_at, assumed: self.assumed(), streams }
     }
 
-    fn assumed(&self) -> Vec<String> {
+    /// What is assumed for want of a policy.
+    pub(crate) fn assumed(&self) -> Vec<String> {
         match self.policy {
             Some(_) => Vec::new(),
             None => vec![
@@ -217,6 +218,9 @@ pub struct Lenders {
 }
 
 impl Lenders {
+    /// Most streams of an entry from which one borrows.
+    pub const MOST: usize = MOST_SIBLINGS;
+
     /// The siblings of a stream.
     fn of(&self, entry: usize, stream: &str) -> Vec<&Cells> {
         let all = self.by_entry.get(&entry).map(Vec::as_slice).unwrap_or_default();
@@ -245,7 +249,7 @@ fn mean_pause(entry: &Entry) -> Pause {
 }
 
 /// FNV-1a of a name: so that a stream's numbers do not depend on which others are there.
-fn name_hash(name: &str) -> u64 {
+pub(crate) fn name_hash(name: &str) -> u64 {
     name.bytes()
         .fold(0xcbf2_9ce4_8422_2325, |hash, byte| (hash ^ u64::from(byte)).wrapping_mul(0x0100_0000_01b3))
 }

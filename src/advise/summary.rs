@@ -11,7 +11,7 @@ use crate::say;
 use crate::tail::{Ensemble, RemainingWait, Stop, TailClass, Verdict};
 
 /// Whether the policy says what time costs; the reason if it does not.
-pub(super) fn cost_of_time(entry: &Entry) -> Result<(), String> {
+pub(crate) fn cost_of_time(entry: &Entry) -> Result<(), String> {
     match &entry.worth {
         None => Err(format!(
             "{NO_COST_OF_TIME}; give the entry an aim: rate or finish (the time has another use), carrying_cost, or \
@@ -122,6 +122,7 @@ fn stopped(fit: &crate::tail::Fit) -> String {
             format!("at a limit of the family: {}", fit.boundary.unwrap_or("a parameter"))
         }
         Stop::Stalled => "stalled short of a maximum".into(),
+        Stop::Hopeless => "given up far below the best".into(),
         Stop::NotFinite => "the likelihood is not finite".into(),
     }
 }

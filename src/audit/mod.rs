@@ -109,7 +109,7 @@ impl Subject {
         lenders: &Lenders,
     ) -> Subject {
         let entry = terms.entry(stream);
-        let (advice, believed) = terms.advise_believing(stream, days, suspicion, lenders);
+        let (advice, believed) = terms.study_among(stream, days, suspicion, lenders).into_believed();
         let opening = terms.opening(&entry);
         let tally = days.since(opening);
         let cells = tally.first_attempts();

@@ -33,7 +33,7 @@ pub struct Bar<'a> {
     pub name: &'a str,
     /// Its length; NaN where it is not known.
     pub value: f64,
-    /// Its interval, low and high.
+    /// Its interval, low and high; of a length that is not known, the bounds within which it lies.
     pub interval: Option<[f64; 2]>,
     /// Whose it is.
     pub role: Role,
@@ -117,6 +117,9 @@ fn ordered<'a>(bars: &[Bar<'a>], quantity: Quantity<'_>) -> (Vec<Bar<'a>>, Spoke
 fn replay_title(unit: &Spoken, bars: &[Bar<'_>]) -> String {
     let of = |role: Role| bars.iter().find(|b| b.role == role && b.value.is_finite());
     let Some(ours) = of(Role::Ours) else {
+        if bars.iter().any(|b| b.role == Role::Ours) {
+            return "What the advice would have earned was not seen".into();
+        }
         return format!("{} earned most, {}", capital(&named(bars[0].name)), unit.long(bars[0].value));
     };
     let gap = |other: &Bar<'_>| (ours.value - other.value) / ours.value.abs().max(other.value.abs());
@@ -127,6 +130,7 @@ fn replay_title(unit: &Spoken, bars: &[Bar<'_>]) -> String {
     };
     let name = match other.role {
         Role::InForce => "the time in force".into(),
+        _ if other.name == "never" => "never giving up".into(),
         _ => named(other.name),
     };
     let overlap = ours.interval.zip(other.interval).is_some_and(|(a, b)| a[0] <= b[1] && b[0] <= a[1]);
@@ -157,7 +161,8 @@ impl Rows<'_> {
     fn written(&self, bar: &Bar<'_>) -> String {
         let say = |v: f64| self.unit.short(v);
         match bar.interval {
-            _ if bar.value.is_nan() => "not known".into(),
+            Some(bounds) if bar.value.is_nan() => format!("not seen: {}", range(bounds, say)),
+            None if bar.value.is_nan() => "not known".into(),
             interval => say(bar.value) + &in_brackets(interval, say),
         }
     }

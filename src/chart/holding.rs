@@ -10,6 +10,8 @@ use super::{Ages, Frame, Marks, Svg, Table};
 
 /// Worth below this share of the most there is counts as none.
 const NONE: f64 = 1e-6;
+/// A later stretch of at least this share of the most is worth a word in the title; what is less may be noise.
+const AGAIN: f64 = 0.2;
 /// Ages that differ by less than this share are one.
 const SAME: f64 = 0.02;
 
@@ -104,7 +106,12 @@ fn title(input: &Holding<'_>, pays: &[[f64; 2]], trace: &Trace) -> String {
         (false, true) => return format!("Holding on pays from {} on", time(from)),
         (false, false) => format!("Holding on pays from {}", range([from, to], time)),
     };
-    let again = match pays.get(1) {
+    let most_within = |[from, to]: [f64; 2]| {
+        let points = trace.points().iter().filter(|p| (from..=to).contains(&p.age));
+        points.map(|p| p.value).filter(|v| v.is_finite()).fold(0.0, f64::max)
+    };
+    let worth_a_word = AGAIN * most_within([first, last]);
+    let again = match pays.iter().skip(1).find(|stretch| most_within(**stretch) >= worth_a_word) {
         Some(&[from, _]) => format!(", and again from {}", time(from)),
         None => String::new(),
     };

@@ -31,6 +31,8 @@ pub struct Remaining<'a> {
     pub marks: Marks,
     /// The verdict.
     pub trend: RemainingWait,
+    /// The age up to which the further wait is counted, s; infinite where it is counted to its end.
+    pub upto: f64,
 }
 
 /// Draws how much longer there is to wait.
@@ -46,8 +48,7 @@ pub fn remaining(input: &Remaining<'_>, frame: &Frame<'_>) -> Svg {
         return nothing(input.stream, "no end of the wait is to be expected at any age", frame);
     }
     let title = title(input, &trace, &road);
-    let level =
-        Level { scale: scale(&shown), measure: Measure::Time, caption: "further wait to expect".into() };
+    let level = Level { scale: scale(&shown), measure: Measure::Time, caption: caption(input.upto) };
     let mut panel =
         Panel::open(Sheet::open(frame, input.stream, &title), road, level, posts(&input.marks, &road));
     panel.band(&trace);
@@ -68,6 +69,13 @@ pub fn remaining(input: &Remaining<'_>, frame: &Frame<'_>) -> Svg {
     });
     let table = Table { columns: vec!["after", "further wait", "band", "remark"], rows: rows.collect() };
     panel.close(key, &summary(input, &trace, &road), table)
+}
+
+fn caption(upto: f64) -> String {
+    match upto.is_finite() {
+        true => format!("further wait to expect, up to an age of {}", time(upto)),
+        false => "further wait to expect".into(),
+    }
 }
 
 fn scale(shown: &Trace) -> Scale {
@@ -128,7 +136,7 @@ fn summary(input: &Remaining<'_>, trace: &Trace, road: &Road) -> String {
         None => String::new(),
     };
     sentences([
-        "Further wait to expect against time waited".into(),
+        format!("F{} against time waited", &caption(input.upto)[1..]),
         match each.is_empty() {
             true => String::new(),
             false => format!("Expected further wait: {}", each.join("; ")),

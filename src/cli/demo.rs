@@ -9,6 +9,7 @@ use serde::Serialize;
 
 use super::exit::{Exit, Failure, print};
 use super::options::{Common, JobTime, Output, Reading};
+use super::pictures::Pictures;
 use super::{reading, weigh};
 use crate::demo::{self, DemoError};
 use crate::intake::Allowed;
@@ -73,7 +74,7 @@ impl Demo {
         if format == Output::Text {
             print(&(text + "\n"))?;
         }
-        weigh::answer(&book, &report, policy.as_ref(), &common)
+        weigh::answer(&book, &report, policy.as_ref(), &common, &Pictures::default())
     }
 }
 

@@ -3,9 +3,14 @@
 mod audit;
 mod demo;
 mod exit;
+mod files;
 mod layout;
+mod ledger;
 mod options;
+mod pictures;
 mod reading;
+mod replay;
+mod serve;
 mod text;
 mod twice;
 mod vet;
@@ -35,8 +40,14 @@ enum Command {
     Weigh(weigh::Weigh),
     /// Audit waits: what was over-waited, what was given up too early, which open waits to let go of now
     Audit(audit::Command),
+    /// Replay rival rules on later waits than they learnt from
+    Replay(replay::Replay),
     /// Read a policy and say what it means for each stream, or what is wrong with it
     Vet(vet::Vet),
+    /// Run the daemon: waits in over HTTP, advice and metrics out
+    Serve(serve::Serve),
+    /// Show, check, back up or export the daemon's data
+    Ledger(ledger::Ledger),
     /// Write the demo scenario (waits, policy, what to expect) into a folder
     Demo(demo::Demo),
 }
@@ -57,7 +68,10 @@ pub fn run(arguments: impl IntoIterator<Item = OsString>) -> ExitCode {
     let outcome = match parsed.command {
         Command::Weigh(weigh) => weigh.run(),
         Command::Audit(audit) => audit.run(),
+        Command::Replay(replay) => replay.run(),
         Command::Vet(vet) => vet.run(),
+        Command::Serve(serve) => serve.run(),
+        Command::Ledger(ledger) => ledger.run(),
         Command::Demo(demo) => demo.run(),
     };
     exit::report(outcome)

@@ -6,6 +6,7 @@ use std::num::NonZeroUsize;
 use std::path::{Path, PathBuf};
 
 use anyhow::Context;
+use clap::builder::{PossibleValue, PossibleValuesParser, TypedValueParser};
 use clap::{Args, ValueEnum};
 
 use super::exit::{Exit, Failure, OrExit};
@@ -23,17 +24,31 @@ pub(super) enum Output {
     Json,
     /// The same document as YAML
     Yaml,
+    /// A table of comma-separated values, where a command has one ([`Output::with_csv`])
+    #[value(skip)]
+    Csv,
 }
 
 impl Output {
-    /// A document in JSON or YAML; `text` makes the other form.
+    /// The option of a command that writes tables too.
+    pub(super) fn with_csv(option: clap::Arg) -> clap::Arg {
+        let parse = |name: String| match name.as_str() {
+            "csv" => Ok(Output::Csv),
+            name => Output::from_str(name, false),
+        };
+        let table = PossibleValue::new("csv").help("A table, a row a rule");
+        let values = Output::value_variants().iter().filter_map(ValueEnum::to_possible_value).chain([table]);
+        option.value_parser(PossibleValuesParser::new(values).try_map(parse))
+    }
+
+    /// A document in JSON or YAML; `text` makes the other form (or the table).
     pub(super) fn render<T: serde::Serialize>(
         self,
         document: &T,
         text: impl FnOnce() -> String,
     ) -> Result<String, Failure> {
         match self {
-            Output::Text => Ok(text()),
+            Output::Text | Output::Csv => Ok(text()),
             Output::Json => serde_json::to_string_pretty(document)
                 .map(|json| json + "\n")
                 .context("cannot write JSON")

@@ -1,31 +1,40 @@
 //! Reading the named files into a book, with a progress bar where someone watches.
 
+use std::collections::HashMap;
 use std::ffi::OsStr;
 use std::io::{self, IsTerminal, Write};
 use std::time::{Duration, Instant};
 
 use anyhow::anyhow;
 use indicatif::{ProgressBar, ProgressDrawTarget, ProgressStyle};
+use rayon::prelude::*;
 
 use super::exit::{Exit, Failure};
 use super::options::{Common, Reading};
 use super::text;
 use crate::intake::{self, IntakeError, Record, Report, Sink, Source};
 use crate::say;
-use crate::tally::Book;
+use crate::tally::{Book, Days};
 
 /// How long the reading lasts before a bar shows.
 const PATIENCE: Duration = Duration::from_millis(500);
 
 /// Counts what is read.
 #[derive(Default)]
-struct Counting(Book);
+struct Counting {
+    /// By the reader's number.
+    streams: Vec<Option<(String, Days)>>,
+    /// What other threads counted.
+    others: Vec<Option<(String, Days)>>,
+}
 
 impl Sink for Counting {
     #[inline]
     fn take(&mut self, record: &Record<'_>) {
-        // The reader has checked the name.
-        let _ = self.0.add(record.stream, &record.wait);
+        match self.streams.get_mut(record.place) {
+            Some(Some((_, days))) => days.add(&record.wait),
+            _ => self.open(record),
+        }
     }
 
     fn fork(&self) -> Self {
@@ -33,15 +42,52 @@ impl Sink for Counting {
     }
 
     fn absorb(&mut self, other: Self) {
-        self.0.merge(other.0);
+        self.others.extend(other.others);
+        self.others.extend(other.streams);
+    }
+}
+
+impl Counting {
+    #[cold]
+    fn open(&mut self, record: &Record<'_>) {
+        if self.streams.len() <= record.place {
+            self.streams.resize_with(record.place + 1, || None);
+        }
+        let days =
+            &mut self.streams[record.place].get_or_insert((record.stream.to_owned(), Days::default())).1;
+        days.add(&record.wait);
+    }
+
+    /// Everything together; streams are joined on all cores.
+    fn book(self) -> Book {
+        let mut parts: HashMap<String, Vec<Days>> = HashMap::new();
+        for (name, days) in self.others.into_iter().chain(self.streams).flatten() {
+            parts.entry(name).or_default().push(days);
+        }
+        let join = |(name, parts): (String, Vec<Days>)| {
+            let whole = parts.into_iter().reduce(|mut whole, part| {
+                whole.merge(&part);
+                whole
+            });
+            (name, whole.unwrap_or_default())
+        };
+        parts.into_par_iter().map(join).collect::<Vec<_>>().into_iter().collect()
     }
 }
 
 /// Reads all files and tells on standard error what was left out.
 pub(super) fn book(reading: &Reading, common: &Common) -> Result<(Book, Report), Failure> {
+    let (counting, report) = into(Counting::default(), reading, common)?;
+    Ok((counting.book(), report))
+}
+
+/// The same into any sink.
+pub(super) fn into<S: Sink>(sink: S, reading: &Reading, common: &Common) -> Result<(S, Report), Failure> {
     once(reading, common)?;
     let sources = reading.files.iter().map(|file| Source::argument(file)).collect();
-    counted(sources, reading, common)
+    let (sink, report) = read(sources, sink, reading, common)?;
+    tell(&report);
+    Ok((sink, report))
 }
 
 /// Counts what the sources hold and tells on standard error what was left out.
@@ -50,9 +96,9 @@ pub(super) fn counted(
     reading: &Reading,
     common: &Common,
 ) -> Result<(Book, Report), Failure> {
-    let (Counting(book), report) = into(sources, reading, common, Counting::default())?;
+    let (counting, report) = read(sources, Counting::default(), reading, common)?;
     tell(&report);
-    Ok((book, report))
+    Ok((counting.book(), report))
 }
 
 /// Standard input can be read only once, so it can be named only once.
@@ -68,11 +114,11 @@ pub(super) fn once(reading: &Reading, common: &Common) -> Result<(), Failure> {
 }
 
 /// Reads the sources into a sink, under a progress bar. Tells of what was left out only if that is why it fails.
-pub(super) fn into<S: Sink>(
+pub(super) fn read<S: Sink>(
     sources: Vec<Source>,
+    sink: S,
     reading: &Reading,
     common: &Common,
-    sink: S,
 ) -> Result<(S, Report), Failure> {
     let mut bar = Bar::new();
     let outcome = intake::read(sources, &reading.options(common), sink, &mut |progress| {
@@ -89,7 +135,7 @@ fn failure(error: IntakeError) -> Failure {
             tell(&report);
             let be = |n: u64| format!("{} {}", say::count(n as f64), if n == 1 { "is" } else { "are" });
             let told = anyhow!(
-                "of {} {} bad, and {} allowed; nothing was weighed",
+                "of {} {} bad, and {} allowed; nothing was reckoned",
                 text::counted(report.lines, "line"),
                 be(report.bad.count),
                 be(allowed)

@@ -25,7 +25,7 @@ pub(super) fn advice_set(set: &AdviceSet, page: Page) -> String {
 }
 
 /// How many streams get which advice, and where most is lost.
-fn summary(set: &AdviceSet) -> String {
+pub(super) fn summary(set: &AdviceSet) -> String {
     let waits: u64 = set.streams.iter().map(|s| s.evidence.waits).sum();
     let n = set.streams.len();
     if n == 0 {
@@ -112,7 +112,8 @@ fn verdict(advice: &Advice) -> String {
     format!("{tail}; {wait}")
 }
 
-fn headline(advice: &Advice) -> String {
+/// What to do, in a line.
+pub(super) fn headline(advice: &Advice) -> String {
     let d = &advice.advice;
     match d.action {
         Action::GiveUpAfter => match d.give_up_after_s {
@@ -172,35 +173,59 @@ fn outcomes(out: &mut String, advice: &Advice, page: Page) {
         ]
     }))
     .collect();
-    let mut widths = [0; 7];
-    for row in &cells {
-        for (width, cell) in widths.iter_mut().zip(row) {
-            *width = (*width).max(cell.chars().count());
-        }
-    }
     // Under the texts of the fields, where there is room.
-    let table = widths.iter().sum::<usize>() + 2 * (widths.len() - 1);
-    let indent = if FIELD + table <= page.columns { FIELD } else { 2 };
-    for row in &cells {
+    let indent = if FIELD + width(&cells) <= page.columns { FIELD } else { 2 };
+    columns(out, &cells, indent);
+}
+
+/// Columns of a table with two spaces between them, names to the left, figures to the right.
+pub(super) fn columns<const N: usize>(out: &mut String, rows: &[[String; N]], indent: usize) {
+    let widths = widths(rows);
+    for row in rows {
         let mut line = " ".repeat(indent);
         for (i, (cell, width)) in row.iter().zip(widths).enumerate() {
             let pad = " ".repeat(width - cell.chars().count());
-            // Names to the left, figures to the right.
             let _ = if i == 0 { write!(line, "{cell}{pad}") } else { write!(line, "  {pad}{cell}") };
         }
         let _ = writeln!(out, "{}", line.trim_end());
     }
 }
 
+fn widths<const N: usize>(rows: &[[String; N]]) -> [usize; N] {
+    let mut widths = [0; N];
+    for row in rows {
+        for (width, cell) in widths.iter_mut().zip(row) {
+            *width = (*width).max(cell.chars().count());
+        }
+    }
+    widths
+}
+
+/// Of a table, the indent apart.
+fn width<const N: usize>(rows: &[[String; N]]) -> usize {
+    widths(rows).iter().sum::<usize>() + 2 * (N - 1)
+}
+
 /// A rate in the unit that keeps it readable: per second, minute, hour or day.
 fn per_second(rate: f64) -> String {
-    let (value, unit) = match rate.abs() {
-        r if r >= 0.1 || r == 0.0 => (rate, "/s"),
-        r if r >= 0.1 / 60.0 => (rate * 60.0, "/min"),
-        r if r >= 0.1 / 3600.0 => (rate * 3600.0, "/h"),
-        _ => (rate * 86_400.0, "/d"),
-    };
-    format!("{}{unit}", say::number(value))
+    let (factor, unit) = period(rate);
+    format!("{}{unit}", say::number(factor * rate))
+}
+
+/// The unit that keeps a rate readable, and its length in s.
+pub(super) fn period(rate: f64) -> (f64, &'static str) {
+    match rate.abs() {
+        r if r >= 0.1 || r == 0.0 => (1.0, "/s"),
+        r if r >= 0.1 / 60.0 => (60.0, "/min"),
+        r if r >= 0.1 / 3600.0 => (3600.0, "/h"),
+        _ => (86_400.0, "/d"),
+    }
+}
+
+/// A sentence's first letter.
+pub(super) fn capital(text: &str) -> String {
+    let mut chars = text.chars();
+    chars.next().map_or(String::new(), |first| first.to_uppercase().chain(chars).collect())
 }
 
 /// The next change of the time in force.

@@ -8,9 +8,11 @@ use rayon::prelude::*;
 use super::exit::{Exit, Failure, print};
 use super::layout::Page;
 use super::options::{Common, Reading};
+use super::pictures::{Album, Pictures};
 use super::{reading, text};
 use crate::advice::{Action, Advice, AdviceSet};
 use crate::advise::Terms;
+use crate::chart::Section;
 use crate::intake::Report;
 use crate::policy::Policy;
 use crate::say;
@@ -34,24 +36,27 @@ pub(super) struct Weigh {
     reading: Reading,
     #[command(flatten)]
     common: Common,
+    #[command(flatten)]
+    pictures: Pictures,
 }
 
 impl Weigh {
     pub(super) fn run(&self) -> Result<Exit, Failure> {
         let policy = self.common.load_policy()?;
         let (book, report) = reading::book(&self.reading, &self.common)?;
-        answer(&book, &report, policy.as_ref(), &self.common)
+        answer(&book, &report, policy.as_ref(), &self.common, &self.pictures)
     }
 }
 
-/// Advises on a book and prints it.
+/// Advises on a book, draws it if asked, and prints it.
 pub(super) fn answer(
     book: &Book,
     report: &Report,
     policy: Option<&Policy>,
     common: &Common,
+    pictures: &Pictures,
 ) -> Result<Exit, Failure> {
-    let set = advise(book, report, policy, common);
+    let set = advise(book, report, policy, common, pictures)?;
     let counted: u64 = set.streams.iter().map(|s| s.evidence.waits).sum();
     let read: u64 = book.streams().iter().map(|(_, days)| waits(days)).sum();
     if counted < read {
@@ -83,19 +88,36 @@ fn waits(days: &Days) -> u64 {
     days.days().iter().flat_map(|(_, tally)| tally.counts()).fold(0, u64::saturating_add)
 }
 
-fn advise(book: &Book, report: &Report, policy: Option<&Policy>, common: &Common) -> AdviceSet {
+fn advise(
+    book: &Book,
+    report: &Report,
+    policy: Option<&Policy>,
+    common: &Common,
+    pictures: &Pictures,
+) -> Result<AdviceSet, Failure> {
     let streams = book.streams();
+    let album = pictures.open(streams.len())?;
     let (newest, day) = newest(report, common);
     let terms = Terms { policy, newest: day, seed: common.seed };
     let suspicions: HashMap<&str, String> =
         report.suspicions.iter().map(|s| (s.stream.as_str(), s.to_string())).collect();
     let lenders = terms.lenders(&streams);
-    let advice: Vec<Advice> = streams
+    let weighed: Vec<(Advice, Option<Section>)> = streams
         .par_iter()
-        .map(|(stream, days)| {
+        .enumerate()
+        .map(|(number, (stream, days))| {
             let suspicion = suspicions.get(stream).map(String::as_str);
-            terms.advise_among(stream, days, suspicion, &lenders)
+            let study = terms.study_among(stream, days, suspicion, &lenders);
+            let draw = |album: &Album| album.stream(&study.curves(), number, text::headline(study.advice()));
+            let section = album.as_ref().map(draw).transpose()?;
+            Ok((study.into_advice(), section))
         })
-        .collect();
-    terms.set(advice, newest.and_then(say::time))
+        .collect::<Result<_, Failure>>()?;
+    let (advice, sections): (Vec<Advice>, Vec<Option<Section>>) = weighed.into_iter().unzip();
+    let set = terms.set(advice, newest.and_then(say::time));
+    if let Some(album) = album {
+        let sections: Vec<Section> = sections.into_iter().flatten().collect();
+        album.page("How long to wait before giving up", &text::summary(&set), &sections)?;
+    }
+    Ok(set)
 }

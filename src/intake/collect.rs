@@ -15,6 +15,7 @@ use crate::glob::Glob;
 pub(super) struct Outcome {
     pub(super) lines: u64,
     pub(super) waits: u64,
+    pub(super) halves_taken: u64,
     pub(super) other_streams: u64,
     pub(super) outside_window: u64,
     pub(super) unmeasured: u64,
@@ -56,6 +57,7 @@ impl<'w, S: Sink> Collector<'w, S> {
         let outcome = Outcome {
             lines: 0,
             waits: 0,
+            halves_taken: 0,
             other_streams: 0,
             outside_window: 0,
             unmeasured: 0,
@@ -111,14 +113,16 @@ impl<'w, S: Sink> Collector<'w, S> {
     #[inline]
     pub(super) fn record(&mut self, line: u64, fields: &Fields<'_>) -> Result<(), Flaw> {
         match make(fields, self.nameless(), self.one_stream().is_some())? {
-            Made::Whole(record) => self.whole(&record, fields.is_bare()),
+            Made::Whole(record) => self.whole(record, fields.is_bare()),
             Made::Half(half) => {
-                let stream = self.streams.enter(half.stream, self.options.streams.as_ref())?;
+                let (_, stream) = self.streams.enter(half.stream, self.options.streams.as_ref())?;
                 stream.note_time(half.time);
-                if stream.wanted {
-                    self.outcome.halves.push(line, &half);
-                } else {
+                if !stream.wanted {
                     self.outcome.other_streams += 1;
+                } else if self.sink.take_half(&half) {
+                    self.outcome.halves_taken += 1;
+                } else {
+                    self.outcome.halves.push(line, &half);
                 }
                 Ok(())
             }
@@ -127,8 +131,8 @@ impl<'w, S: Sink> Collector<'w, S> {
 
     /// Takes a wait. `bare`: its age came as a number without a unit.
     #[inline]
-    pub(super) fn whole(&mut self, record: &Record<'_>, bare: bool) -> Result<(), Flaw> {
-        let stream = self.streams.enter(record.stream, self.options.streams.as_ref())?;
+    pub(super) fn whole(&mut self, record: Record<'_>, bare: bool) -> Result<(), Flaw> {
+        let (place, stream) = self.streams.enter(record.stream, self.options.streams.as_ref())?;
         if let Some(at) = record.wait.at() {
             stream.note_time(at);
         }
@@ -143,7 +147,7 @@ impl<'w, S: Sink> Collector<'w, S> {
         if bare {
             stream.note_age(&record.wait);
         }
-        self.sink.take(record);
+        self.sink.take(&Record { place, ..record });
         self.outcome.waits += 1;
         Ok(())
     }

@@ -8,16 +8,13 @@ const POWERS: [f64; 23] = [
 
 /// A number in JSON's grammar (RFC 8259, section 6) at the head of `bytes`, correctly rounded, and its length in
 /// bytes. `None` if there is none, or if it is too large for a double.
-#[inline]
+#[inline(always)]
 pub(super) fn json_number(bytes: &[u8]) -> Option<(f64, usize)> {
     let negative = bytes.first() == Some(&b'-');
     let mut at = usize::from(negative);
     let mut mantissa = 0u64;
     let whole_from = at;
-    while let Some(digit @ b'0'..=b'9') = bytes.get(at) {
-        mantissa = mantissa.wrapping_mul(10).wrapping_add(u64::from(digit - b'0'));
-        at += 1;
-    }
+    (mantissa, at) = figures(bytes, mantissa, at);
     let mut digits = at - whole_from;
     if digits == 0 || (digits > 1 && bytes[whole_from] == b'0') {
         return None;
@@ -26,10 +23,7 @@ pub(super) fn json_number(bytes: &[u8]) -> Option<(f64, usize)> {
     if bytes.get(at) == Some(&b'.') {
         at += 1;
         let from = at;
-        while let Some(digit @ b'0'..=b'9') = bytes.get(at) {
-            mantissa = mantissa.wrapping_mul(10).wrapping_add(u64::from(digit - b'0'));
-            at += 1;
-        }
+        (mantissa, at) = figures(bytes, mantissa, at);
         places = at - from;
         if places == 0 {
             return None;
@@ -55,6 +49,44 @@ pub(super) fn json_number(bytes: &[u8]) -> Option<(f64, usize)> {
         return Some((if negative { -size } else { size }, at));
     }
     by_the_book(&bytes[..at]).map(|number| (number, at))
+}
+
+/// Appends the figures of `bytes` from `at` on to a whole number, which wraps when there are too many, and gives the place
+/// after them. Eight at a time: half of the time of a parse was spent going from one figure to the next.
+#[inline(always)]
+fn figures(bytes: &[u8], mut number: u64, mut at: usize) -> (u64, usize) {
+    const ONES: u64 = u64::MAX / 255;
+    const TENS: [u64; 9] = [1, 10, 100, 1_000, 10_000, 100_000, 1_000_000, 10_000_000, 100_000_000];
+    while let Some(word) = bytes.get(at..).and_then(<[u8]>::first_chunk) {
+        let word = u64::from_le_bytes(*word) ^ (ONES * u64::from(b'0'));
+        // Figures are 0 to 9 now; the first byte that is not has its highest bit set here.
+        let others = (word.wrapping_add(ONES * (0x80 - 10)) | word) & (ONES * 0x80);
+        let digits = others.trailing_zeros() / 8;
+        if digits == 0 {
+            return (number, at);
+        }
+        number = number.wrapping_mul(TENS[digits as usize]).wrapping_add(eight(word << (64 - 8 * digits)));
+        at += digits as usize;
+        if digits < 8 {
+            return (number, at);
+        }
+    }
+    while let Some(digit @ b'0'..=b'9') = bytes.get(at) {
+        number = number.wrapping_mul(10).wrapping_add(u64::from(digit - b'0'));
+        at += 1;
+    }
+    (number, at)
+}
+
+/// The number whose eight figures are the bytes of a word, the lowest first: pairs, then fours, then all (Lemire 2021,
+/// *Software: Practice and Experience* 51:1700).
+#[inline(always)]
+fn eight(word: u64) -> u64 {
+    const EVERY_FOURTH: u64 = 0x0000_00FF_0000_00FF;
+    let pairs = word.wrapping_mul(10).wrapping_add(word >> 8);
+    let high = (pairs & EVERY_FOURTH).wrapping_mul(100 + (1_000_000 << 32));
+    let low = (pairs >> 16 & EVERY_FOURTH).wrapping_mul(1 + (10_000 << 32));
+    high.wrapping_add(low) >> 32
 }
 
 #[cold]

@@ -85,7 +85,7 @@ impl<'o> Feed<'o> {
         loop {
             let Some(open) = &mut self.open else {
                 let Some((number, source)) = self.sources.next() else { return Ok(None) };
-                self.open = open(number, source, self.options, &self.bytes_read)?;
+                self.open = open(number, source, self.options, &self.bytes_read, self.allowance)?;
                 continue;
             };
             let found = open
@@ -93,6 +93,10 @@ impl<'o> Feed<'o> {
                 .next(&mut buffer, open.layout.records())
                 .map_err(|error| Unpacked::error(&open.file, open.packing, error))?;
             let unpaid = open.blocks.read - std::mem::replace(&mut open.paid, open.blocks.read);
+            if open.packing.is_none() {
+                // Not counted one by one: in between, a file is read into a block without clearing the block first.
+                self.bytes_read.fetch_add(unpaid, Ordering::Relaxed);
+            }
             self.allowance = self.allowance.checked_sub(unpaid).ok_or_else(|| IntakeError::TooMuch {
                 file: open.file.clone(),
                 limit: self.options.total_bytes,
@@ -122,6 +126,7 @@ fn open(
     source: Source,
     options: &Options,
     bytes_read: &Arc<AtomicU64>,
+    allowance: u64,
 ) -> Result<Option<Open>, IntakeError> {
     let unpacked = source.open(Arc::clone(bytes_read))?;
     let (packing, file) = (unpacked.packing(), unpacked.file);
@@ -130,7 +135,7 @@ fn open(
     if blocks.peek().map_err(damaged)?.starts_with(b"\xef\xbb\xbf") {
         blocks.skip(3);
     }
-    let mut lines_before = 0;
+    let (mut lines_before, mut blank) = (0, 0);
     let head = loop {
         let head = blocks.peek().map_err(damaged)?;
         let (length, lines) = (head.len(), count_lines(head));
@@ -142,6 +147,10 @@ fn open(
         }
         blocks.skip(length);
         lines_before += lines;
+        blank += length as u64;
+        if blank > allowance {
+            return Err(IntakeError::TooMuch { file, limit: options.total_bytes });
+        }
     };
     let format = match options.format {
         Some(format) => format,

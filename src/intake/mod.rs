@@ -56,7 +56,7 @@ use crate::glob::Glob;
 pub use error::{HeaderError, IntakeError};
 pub use format::Format;
 pub use read::{Progress, read};
-pub use record::Record;
+pub use record::{Half, Record, Side};
 pub use report::{
     BadCount, BadLine, BadLines, Because, COMMENTS, Comment, EXAMPLES, FileReport, LeftOut, PairsReport,
     Report, Suspicion,
@@ -71,6 +71,13 @@ pub use source::Source;
 pub trait Sink: Send + Sized {
     /// Takes a wait.
     fn take(&mut self, record: &Record<'_>);
+
+    /// Takes a start or an end that came in a line of its own, and says so; what is left is joined by the reader, and
+    /// comes as a wait. Unless said, nothing is taken.
+    fn take_half(&mut self, half: &Half<'_>) -> bool {
+        let _ = half;
+        false
+    }
 
     /// An empty sink of the same kind, for another thread.
     fn fork(&self) -> Self;

@@ -190,7 +190,16 @@ fn expect(bytes: &[u8], at: usize, byte: u8) -> Option<usize> {
 
 #[inline]
 fn expect_all(bytes: &[u8], at: usize, wanted: &[u8]) -> Option<usize> {
-    bytes.get(at..)?.starts_with(wanted).then_some(at + wanted.len())
+    let upto = at + wanted.len();
+    same(bytes.get(at..upto)?, wanted).then_some(upto)
+}
+
+/// Whether two byte strings of one length are equal. They are short, and a call of `memcmp` takes longer than the work.
+#[inline]
+fn same(one: &[u8], other: &[u8]) -> bool {
+    let ((words, rest), (others, other_rest)) = (one.as_chunks(), other.as_chunks());
+    let equal = |(a, b): (&[u8; 8], &[u8; 8])| u64::from_ne_bytes(*a) == u64::from_ne_bytes(*b);
+    words.iter().zip(others).all(equal) && rest.iter().zip(other_rest).all(|(a, b)| a == b)
 }
 
 /// The first place from `at` on whose byte a JSON text cannot hold as it is: a quotation mark, a backslash, a

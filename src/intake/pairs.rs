@@ -96,7 +96,7 @@ impl Pairs {
             let wait = between_times(started, ended, ending).and_then(|wait| {
                 Ok(wait.with_attempt(half.attempt)?.with_entered(half.entered.max(other.entered))?)
             });
-            take(line, wait.map(|wait| Record { stream: half.stream, id: Some(half.id), wait }));
+            take(line, wait.map(|wait| Record { stream: half.stream, place: 0, id: Some(half.id), wait }));
         }
     }
 
@@ -117,7 +117,7 @@ impl Pairs {
                 Side::Start => {
                     let wait = between_times(open.time, seen, Ending::Waiting)
                         .and_then(|wait| Ok(wait.with_attempt(attempt)?.with_entered(open.entered)?));
-                    start(wait.ok().map(|wait| Record { stream, id: Some(id), wait }));
+                    start(wait.ok().map(|wait| Record { stream, place: 0, id: Some(id), wait }));
                 }
             }
         }

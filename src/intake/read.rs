@@ -12,6 +12,7 @@ use super::error::IntakeError;
 use super::feed::{Feed, Layout, Task};
 use super::flaw::Flaw;
 use super::pairs::Pairs;
+use super::record::Record;
 use super::report::{BadCount, BadLine, COMMENTS, Comment, EXAMPLES, FileReport, Report};
 use super::source::Source;
 use super::streams::Streams;
@@ -244,7 +245,7 @@ impl<'o, S: Sink> Settler<'o, S> {
     }
 
     fn settle(&mut self, task: &Task, outcome: Outcome) {
-        let Settler { options, sink, report, .. } = self;
+        let Settler { options, sink, streams, report, .. } = self;
         let Some(file) = report.files.get_mut(task.file) else { return };
         file.format = Some(task.layout.format());
         let mut flaws = outcome.flaws;
@@ -253,7 +254,7 @@ impl<'o, S: Sink> Settler<'o, S> {
             let taken = record.and_then(|record| {
                 match options.is_in_window(record.wait.at())? {
                     true => {
-                        sink.take(&record);
+                        sink.take(&Record { place: streams.place(record.stream), ..record });
                         *waits += 1;
                     }
                     false => left_out.outside_window += 1,
@@ -265,6 +266,7 @@ impl<'o, S: Sink> Settler<'o, S> {
             }
         });
         report.waits += outcome.waits;
+        report.pairs.handed_on += outcome.halves_taken;
         report.left_out.other_streams += outcome.other_streams;
         report.left_out.outside_window += outcome.outside_window;
         report.left_out.unmeasured += outcome.unmeasured;
@@ -281,7 +283,7 @@ impl<'o, S: Sink> Settler<'o, S> {
     }
 
     fn finish(self) -> Result<(S, Report), IntakeError> {
-        let Settler { options, mut sink, streams, pairs, counts, mut report } = self;
+        let Settler { options, mut sink, mut streams, pairs, counts, mut report } = self;
         if let Some((oldest, newest)) = streams.span() {
             report.oldest = Some(oldest);
             report.newest = Some(newest);
@@ -294,7 +296,7 @@ impl<'o, S: Sink> Settler<'o, S> {
             |open| match open {
                 None => report.pairs.open_unseen += 1,
                 Some(record) if options.is_in_window(Some(seen)) == Ok(true) => {
-                    sink.take(&record);
+                    sink.take(&Record { place: streams.place(record.stream), ..record });
                     report.waits += 1;
                     report.pairs.open += 1;
                 }
@@ -317,7 +319,12 @@ impl<'o, S: Sink> Settler<'o, S> {
             Allowed::AtMost(allowed) if report.bad.count > allowed => {
                 Err(IntakeError::BadLines { report: Box::new(report), allowed })
             }
-            _ if report.waits + report.left_out.other_streams + report.left_out.outside_window == 0 => {
+            _ if report.waits
+                + report.pairs.handed_on
+                + report.left_out.other_streams
+                + report.left_out.outside_window
+                == 0 =>
+            {
                 Err(IntakeError::NoWaits { report: Box::new(report) })
             }
             _ => Ok((sink, report)),

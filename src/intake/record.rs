@@ -9,6 +9,9 @@ use crate::wait::{Ending, Wait, WaitError};
 pub struct Record<'a> {
     /// The stream's name, checked.
     pub stream: &'a str,
+    /// The stream's number, the same for all records of it that a [`crate::intake::Sink`] is handed: a look-up of the name is
+    /// done once already. From 0; some may be missing, and another thread's sink knows it by another.
+    pub place: usize,
     /// What ties it to the other attempts of its request, if the record says.
     pub id: Option<&'a str>,
     /// The wait.
@@ -277,21 +280,27 @@ pub(super) enum Made<'a> {
 
 /// A start without its end, or the reverse.
 #[derive(Clone, Copy, Debug, PartialEq)]
-pub(super) struct Half<'a> {
-    pub(super) stream: &'a str,
-    pub(super) id: &'a str,
-    pub(super) side: Side,
-    /// Unix seconds.
-    pub(super) time: f64,
-    pub(super) attempt: u32,
+pub struct Half<'a> {
+    /// The stream.
+    pub stream: &'a str,
+    /// What ties it to its other half.
+    pub id: &'a str,
+    /// Which half it is.
+    pub side: Side,
+    /// When it started or ended, Unix seconds.
+    pub time: f64,
+    /// Which attempt of its request, from 1.
+    pub attempt: u32,
     /// Age at which watching began, s.
-    pub(super) entered: f64,
+    pub entered: f64,
 }
 
 /// Which half, and how it ended.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
-pub(super) enum Side {
+pub enum Side {
+    /// It has started.
     Start,
+    /// It has ended, and how.
     End(Ending),
 }
 
@@ -322,7 +331,7 @@ pub(super) fn make<'a>(
     if let Some(at) = fields.time(Field::At)? {
         wait = wait.with_at(at)?;
     }
-    Ok(Made::Whole(Record { stream, id, wait }))
+    Ok(Made::Whole(Record { stream, place: 0, id, wait }))
 }
 
 fn make_rare<'a>(
@@ -374,7 +383,7 @@ fn make_rare<'a>(
     if let Some(at) = at.or(ended) {
         wait = wait.with_at(at)?;
     }
-    Ok(Made::Whole(Record { stream, id, wait }))
+    Ok(Made::Whole(Record { stream, place: 0, id, wait }))
 }
 
 /// The wait from one time to another, Unix seconds.

@@ -117,6 +117,9 @@ pub struct LeftOut {
 #[derive(Clone, Debug, Default, PartialEq, Serialize)]
 #[non_exhaustive]
 pub struct PairsReport {
+    /// Starts and ends that the sink took as they were ([`super::Sink::take_half`]).
+    #[serde(skip)]
+    pub handed_on: u64,
     /// Pairs that became one wait.
     pub joined: u64,
     /// Starts without an end that became waits still open, seen last at `seen`.

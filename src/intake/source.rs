@@ -55,10 +55,10 @@ impl Source {
         path.metadata().ok().filter(|metadata| metadata.is_file()).map(|metadata| metadata.len())
     }
 
-    /// Opens it and finds out how it is compressed. Bytes are counted as they lie there.
+    /// Opens it and finds out how it is compressed. If it is, bytes are counted as they lie there.
     pub(super) fn open(self, counter: Arc<AtomicU64>) -> Result<Unpacked, IntakeError> {
         let file = self.name;
-        let reader: Box<dyn Read + Send> = match self.origin {
+        let mut reader: Box<dyn Read + Send> = match self.origin {
             Origin::Reader(reader) => reader,
             Origin::StandardInput => Box::new(io::stdin()),
             Origin::Path(path) => match File::open(&path) {
@@ -70,12 +70,15 @@ impl Source {
                 Err(source) => return Err(IntakeError::Open { file, source }),
             },
         };
-        let mut reader = Counted { reader, counter };
         let mut magic = Vec::with_capacity(4);
         if let Err(source) = reader.by_ref().take(4).read_to_end(&mut magic) {
             return Err(IntakeError::Read { file, source });
         }
         let packing = Packing::of(&magic);
+        if packing.is_some() {
+            counter.fetch_add(magic.len() as u64, Ordering::Relaxed);
+            reader = Box::new(Counted { reader, counter });
+        }
         let whole = Cursor::new(magic).chain(reader);
         let reader: Box<dyn Read + Send> = match packing {
             None => Box::new(whole),

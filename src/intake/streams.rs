@@ -47,9 +47,13 @@ impl Ages {
 }
 
 impl Streams {
-    /// The stream of that name, checked when first met.
+    /// The stream of that name, checked when first met, and its number.
     #[inline]
-    pub(super) fn enter(&mut self, name: &str, selector: Option<&Glob>) -> Result<&mut Stream, StreamError> {
+    pub(super) fn enter(
+        &mut self,
+        name: &str,
+        selector: Option<&Glob>,
+    ) -> Result<(usize, &mut Stream), StreamError> {
         let place = match self.places.get(name) {
             Some(&place) => place,
             None => {
@@ -57,7 +61,15 @@ impl Streams {
                 self.add(name.into(), Stream::new(selector.is_none_or(|selector| selector.matches(name))))
             }
         };
-        Ok(&mut self.streams[place])
+        Ok((place, &mut self.streams[place]))
+    }
+
+    /// The number of a stream that is checked and wanted.
+    pub(super) fn place(&mut self, name: &str) -> usize {
+        match self.places.get(name) {
+            Some(&place) => place,
+            None => self.add(name.into(), Stream::new(true)),
+        }
     }
 
     #[cold]
@@ -186,7 +198,7 @@ mod tests {
     fn suspicion(waits: impl Iterator<Item = (f64, f64)>) -> Option<Because> {
         let mut streams = Streams::default();
         for (age, at) in waits {
-            let stream = streams.enter("s", None).unwrap();
+            let (_, stream) = streams.enter("s", None).unwrap();
             stream.note_time(at);
             stream.note_age(&Wait::new(age, Ending::Done).unwrap());
         }

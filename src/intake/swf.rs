@@ -78,7 +78,7 @@ fn take<S: Sink>(
                 }
                 _ => collector.nameless().ok_or(Flaw::Missing { field: Field::Stream })?,
             };
-            collector.whole(&Record { stream, id: Some(id), wait }, false)?;
+            collector.whole(Record { stream, place: 0, id: Some(id), wait }, false)?;
         }
     }
     Ok(())

@@ -117,6 +117,20 @@ impl Doubt {
         expected
     }
 
+    /// The stretch that holds this share of the curves' weight, half of the rest on either side, of the scores at every age
+    /// of the grid; empty without curves.
+    pub fn band(&self, level: f64) -> Vec<[f64; 2]> {
+        let ages = if self.bests.is_empty() { 0 } else { self.ages().len() };
+        let tail = 0.5 * (1.0 - level);
+        (0..ages)
+            .map(|column| {
+                let weights = self.bests.iter().map(|b| b.weight);
+                let mut scores: Vec<(f64, f64)> = self.rows().map(|row| row[column]).zip(weights).collect();
+                [weighted_quantile(&mut scores, tail), weighted_quantile(&mut scores, 1.0 - tail)]
+            })
+            .collect()
+    }
+
     /// The choice. `slack`: what the band may lose, as a share. `None` without curves.
     pub fn choose(&self, slack: f64) -> Option<Choice> {
         let expected = self.expected();
@@ -191,7 +205,7 @@ impl Doubt {
 }
 
 /// Least value at which the weight of what is not above it reaches a share `q` of all.
-fn weighted_quantile(values: &mut [(f64, f64)], q: f64) -> f64 {
+pub(crate) fn weighted_quantile(values: &mut [(f64, f64)], q: f64) -> f64 {
     values.sort_by(|a, b| a.0.total_cmp(&b.0));
     let goal = q * values.iter().map(|v| v.1).sum::<f64>();
     let mut sum = 0.0;
@@ -259,6 +273,7 @@ mod tests {
         assert_eq!(choice.regret, Regret { expected: 0.0, percentile_95: 0.0 });
         assert!(choice.interval[0] < choice.at && choice.interval[1] > choice.at);
         assert!(choice.band[0] < choice.at && choice.band[1] > choice.at);
+        assert!(doubt.band(0.9).iter().all(|[low, high]| low == high), "one curve leaves no doubt");
         let never = doubt.regret_of_setting(1).unwrap().expected;
         assert!((never - doubt.expected()[399]).abs() < 1e-12 && never > 0.5, "{never}");
         assert!(doubt.regret_of_setting(0).unwrap().expected < 0.2);

@@ -44,6 +44,7 @@ pub use band::band;
 pub use chain::{ChainFinding, Station, attempts_caused, check_chain};
 pub use competing::{Competing, Failure};
 pub use deadline::{Deadline, NextAttempt};
+pub(crate) use doubt::weighted_quantile;
 pub use doubt::{BestOfCurve, Choice, Doubt, Regret};
 pub use edge::{Look, Sides};
 pub use far_tail::{FarTail, TailEffect, decay, expected_time};

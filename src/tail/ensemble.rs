@@ -22,6 +22,9 @@ pub const LEAST_WEIGHT: f64 = 0.001;
 /// as a never share near 0, thus stays wide, which is the guard against "wait for ever".
 const LEAST_CURVATURE: f64 = 1.0 / 9.0;
 
+/// A search is given up where it would end so far below the least likelihood with which a family weighs anything, nats.
+const FAR_BELOW: f64 = 30.0;
+
 /// Range of the logarithm of an importance weight.
 const LOG_WEIGHT: (f64, f64) = (-50.0, 2.0);
 
@@ -110,7 +113,14 @@ pub fn ensemble(sample: &Sample, grid: &Grid, seed: u64) -> Result<Ensemble, Fit
     let root_n = sample.total().sqrt();
     let (mut members, mut families, mut refused) = (vec![], vec![], vec![]);
     let mut plain: Vec<(&'static str, Vec<f64>)> = vec![];
+    let deep = curve.end() >= DEEP;
+    let mut standing = Standing::new(sample.event_count(), deep);
     for (family, role) in lists(shift) {
+        // From the plain ones others start, and they cost little; mixtures come over saddles where nothing promises much.
+        evidence.least = match (family.dimension(), role.decides) {
+            (..=2, true) | (5.., _) => f64::NEG_INFINITY,
+            _ => standing.least(family.as_ref(), role) - FAR_BELOW,
+        };
         let without = plain.iter().find(|(name, _)| *name == family.name());
         let fitted = match without.filter(|_| family.parameters().contains(&"never")) {
             Some((_, at)) => evidence.fit_never(family.as_ref(), at),
@@ -121,6 +131,7 @@ pub fn ensemble(sample: &Sample, grid: &Grid, seed: u64) -> Result<Ensemble, Fit
                 if without.is_none() {
                     plain.push((fit.family, fit.free.clone()));
                 }
+                standing.note(&fit, role);
                 members.push(Member::new(fit, role, root_n));
                 families.push(family);
             }
@@ -128,7 +139,6 @@ pub fn ensemble(sample: &Sample, grid: &Grid, seed: u64) -> Result<Ensemble, Fit
         }
     }
     weigh(&mut members, root_n);
-    let deep = curve.end() >= DEEP;
     let log_ages: Vec<f64> = grid.ages().iter().map(|t| t.ln()).collect();
     for (i, (member, family)) in members.iter_mut().zip(&families).enumerate() {
         if member.matters(deep) {
@@ -152,6 +162,51 @@ pub fn ensemble(sample: &Sample, grid: &Grid, seed: u64) -> Result<Ensemble, Fit
 struct Role {
     decides: bool,
     judges: bool,
+}
+
+/// The best criteria so far, from which follows what a further family must reach to weigh anything.
+struct Standing {
+    ln_n: f64,
+    /// Whether verdicts read AIC too.
+    deep: bool,
+    deciding_aic: f64,
+    judging_aic: f64,
+    judging_bic: f64,
+}
+
+impl Standing {
+    fn new(events: f64, deep: bool) -> Standing {
+        let none = f64::INFINITY;
+        let ln_n = events.max(1.0).ln();
+        Standing { ln_n, deep, deciding_aic: none, judging_aic: none, judging_bic: none }
+    }
+
+    fn note(&mut self, fit: &Fit, role: Role) {
+        if role.decides {
+            self.deciding_aic = self.deciding_aic.min(fit.aic);
+        }
+        if role.judges {
+            self.judging_aic = self.judging_aic.min(fit.aic);
+            self.judging_bic = self.judging_bic.min(fit.bic);
+        }
+    }
+
+    /// The log-likelihood with which some weight of the family is [`LEAST_WEIGHT`] of the best one's.
+    fn least(&self, family: &dyn Family, role: Role) -> f64 {
+        let k = family.parameters().len() as f64;
+        let fall = -LEAST_WEIGHT.ln();
+        let mut least = f64::INFINITY;
+        if role.decides {
+            least = least.min(k - 0.5 * (self.deciding_aic + SOFTNESS * fall));
+        }
+        if role.judges {
+            least = least.min(0.5 * (k * self.ln_n - self.judging_bic) - fall);
+        }
+        if role.judges && self.deep {
+            least = least.min(k - 0.5 * self.judging_aic - fall);
+        }
+        least
+    }
 }
 
 /// Both lists of families, each family once. Without a shift the shifted ones are the plain ones over again.

@@ -162,6 +162,8 @@ pub(crate) struct Evidence {
     events: f64,
     /// When a climb ends, nats.
     gain: f64,
+    /// A likelihood below this is of no use.
+    pub(crate) least: f64,
     /// Distinct ages of events, if all are exact.
     exact_ages: Option<usize>,
 }
@@ -189,6 +191,7 @@ impl Evidence {
             unit,
             events: sample.event_count(),
             gain,
+            least: f64::NEG_INFINITY,
             exact_ages: exact.then_some(sample.events.len()),
         })
     }
@@ -368,6 +371,7 @@ impl Evidence {
             walls: free().map(|c| self.walls(c)).collect(),
             curvature: curvature.collect(),
             gain: self.gain,
+            least: self.least,
         }
     }
 
@@ -427,7 +431,7 @@ fn parameters(
         })
         .collect();
     let error = |k: usize| {
-        let slopes = slopes.as_ref().filter(|_| best.stop != Stop::Stalled)?;
+        let slopes = slopes.as_ref().filter(|_| !matches!(best.stop, Stop::Stalled | Stop::Hopeless))?;
         let slope: Vec<f64> = slopes.iter().map(|s| s[k]).collect();
         // What leans on a direction that the likelihood leaves open has no standard error.
         let open = norm(&eigen.apply(|v| if v > FLAT { 0.0 } else { 1.0 }, &slope));

@@ -20,6 +20,8 @@ pub enum Stop {
     },
     /// The budget ended, or no step made progress, away from a maximum.
     Stalled,
+    /// The search was given up far below what would have counted: the family is out of the question.
+    Hopeless,
     /// The function has no finite value near the start.
     NotFinite,
 }
@@ -65,6 +67,10 @@ const BUDGET: usize = 400;
 /// bring it to the first's height.
 const PATIENCE: usize = 15;
 const HOPE: f64 = 10.0;
+/// The same for any climb that would not come to [`Terrain::least`]. In simulation one fit in a
+/// thousand that would have come there was lost.
+const PATIENCE_AT_ALL: usize = 8;
+const HOPE_AT_ALL: f64 = 100.0;
 /// Steps in a row that may gain less than [`Terrain::gain`], for all their promise.
 const MOST_IDLE: usize = 2;
 /// Newton steps after a climb, and climbs in all.
@@ -90,6 +96,8 @@ pub(crate) struct Terrain {
     /// The climb ends when a further step promises less than this, nats. Where there is a maximum inside, Newton
     /// steps finish the rest; at a limit of the family this is how near the limit it gets.
     pub(crate) gain: f64,
+    /// A value below this is of no use.
+    pub(crate) least: f64,
 }
 
 /// Climbs from `start`. A climb that is well under way and far below `bar`, a value found from another start, is
@@ -106,7 +114,7 @@ pub(crate) fn maximise(objective: &mut dyn Objective, start: &[f64], terrain: &T
     let mut scaled = false;
     loop {
         let done = match search.climb(&mut inverse, scaled) {
-            End::Hopeless => return search.leave(Stop::Stalled),
+            End::Hopeless => return search.leave(Stop::Hopeless),
             end => end == End::Top,
         };
         let mut information = search.information(&inverse);
@@ -136,7 +144,7 @@ enum End {
     Top,
     /// No step makes progress, or the budget is spent.
     Stuck,
-    /// It will not reach the bar.
+    /// It will not reach the bar, or nothing of use.
     Hopeless,
 }
 
@@ -217,7 +225,10 @@ impl<'a> Search<'a> {
             if promise == 0.0 || (scaled && promise <= self.terrain.gain.max(ROUNDING * self.value.abs())) {
                 return End::Top;
             }
-            if self.evaluations >= PATIENCE && self.value + HOPE * promise < self.bar {
+            let below = |bar: f64, patience, hope: f64| {
+                self.evaluations >= patience && self.value + hope * promise < bar
+            };
+            if below(self.bar, PATIENCE, HOPE) || below(self.terrain.least, PATIENCE_AT_ALL, HOPE_AT_ALL) {
                 return End::Hopeless;
             }
             // Long steps are for coordinates that are far out already.
@@ -413,7 +424,26 @@ mod tests {
     use super::*;
 
     fn terrain(n: usize) -> Terrain {
-        Terrain { walls: vec![(-13.8, 13.8); n], curvature: vec![1.0; n], gain: 1e-6 }
+        Terrain {
+            walls: vec![(-13.8, 13.8); n],
+            curvature: vec![1.0; n],
+            gain: 1e-6,
+            least: f64::NEG_INFINITY,
+        }
+    }
+
+    #[test]
+    fn gives_up_where_the_top_is_of_no_use() {
+        let mut valley = |x: &[f64], g: &mut [f64]| {
+            let (a, b) = (1.0 - x[0], x[1] - x[0] * x[0]);
+            (g[0], g[1]) = (2.0 * a + 400.0 * x[0] * b, -200.0 * b);
+            -a * a - 100.0 * b * b
+        };
+        let low =
+            maximise(&mut valley, &[-1.2, 1.0], &Terrain { least: 1e5, ..terrain(2) }, f64::NEG_INFINITY);
+        assert_eq!(low.stop, Stop::Hopeless);
+        let enough = Terrain { least: -30.0, ..terrain(2) };
+        assert_eq!(maximise(&mut valley, &[-1.2, 1.0], &enough, f64::NEG_INFINITY).stop, Stop::Converged);
     }
 
     /// Minus Rosenbrock's valley (1960): the classic of curved ridges.
@@ -448,7 +478,12 @@ mod tests {
         assert_eq!(top.stop, Stop::Boundary { coordinate: 0 }, "{top:?}");
         assert!(top.value > -1e-4 && (top.at[1] - 1.0).abs() < 1e-3);
         // A wall in the way.
-        let walled = Terrain { walls: vec![(-1.0, 0.5); 1], curvature: vec![1.0], gain: 1e-6 };
+        let walled = Terrain {
+            walls: vec![(-1.0, 0.5); 1],
+            curvature: vec![1.0],
+            gain: 1e-6,
+            least: f64::NEG_INFINITY,
+        };
         let mut hill = |x: &[f64], g: &mut [f64]| {
             g[0] = -(x[0] - 2.0);
             -0.5 * (x[0] - 2.0).powi(2)

@@ -8,18 +8,22 @@ use hdrhistogram::{Counter, Histogram};
 /// Distinct ages kept exactly, each 16 bytes: about what a histogram of three digits takes (64 KiB).
 pub const EXACT_AGES: usize = 4096;
 
+/// Ages that wait to be grouped, each 8 bytes: as large as a histogram too, and so many more than [`EXACT_AGES`] that many
+/// distinct ones show at the first look.
+const MOST_LOOSE: usize = 2 * EXACT_AGES;
+
 /// Significant decimal digits of the histogram: bins at most 0.1% wide.
-const DIGITS: u8 = 3;
+pub(super) const DIGITS: u8 = 3;
 
 /// Ticks per second of the histogram: 1 µs.
-const TICKS: f64 = 1e6;
+pub(super) const TICKS: f64 = 1e6;
 
 /// Counted ages, s. Empty costs one word.
 #[derive(Clone, Debug, Default)]
-pub struct Ages(Option<Box<Store>>);
+pub struct Ages(pub(super) Option<Box<Store>>);
 
 #[derive(Clone, Debug)]
-enum Store {
+pub(super) enum Store {
     /// `grouped` is sorted and distinct, at most [`EXACT_AGES`] long; `loose` waits to be grouped, each counting 1.
     Few {
         grouped: Vec<(f64, u64)>,
@@ -49,7 +53,7 @@ impl Ages {
         match &mut **store {
             Store::Few { loose, .. } if count == 1 => {
                 loose.push(age);
-                if loose.len() >= EXACT_AGES {
+                if loose.len() >= MOST_LOOSE {
                     store.settle();
                 }
             }
@@ -73,8 +77,19 @@ impl Ages {
             self.0 = other.0.clone();
             return;
         };
-        match theirs {
-            Store::Few { grouped, loose } => {
+        match (&mut *mine, theirs) {
+            // Two histograms of one counter add up array to array. Neither can fail: they resize by themselves.
+            (Store::Narrow(h), Store::Narrow(other))
+                if h.len().saturating_add(other.len()) <= u64::from(u32::MAX) =>
+            {
+                let _ = h.add(other);
+            }
+            (Store::Wide(h), Store::Wide(other)) => {
+                let _ = h.add(other);
+            }
+            (_, Store::Narrow(other)) => mine.record_all(other),
+            (_, Store::Wide(other)) => mine.record_all(other),
+            (_, Store::Few { grouped, loose }) => {
                 for &(age, count) in grouped {
                     self.add(age, count);
                 }
@@ -82,15 +97,6 @@ impl Ages {
                     self.add(age, 1);
                 }
             }
-            Store::Narrow(h) => match mine {
-                // Counter by counter, many times faster than value by value; no counter can exceed the total.
-                Store::Narrow(mine) if mine.len().saturating_add(h.len()) <= u64::from(u32::MAX) => {
-                    // Auto-resizing histograms of one precision always add.
-                    let _ = mine.add(h);
-                }
-                _ => mine.record_all(h),
-            },
-            Store::Wide(h) => mine.record_all(h),
         }
     }
 
@@ -104,32 +110,6 @@ impl Ages {
             Store::Narrow(h) => histogram_bins(h),
             Store::Wide(h) => histogram_bins(h),
         }
-    }
-
-    /// What is left of `self` without `other`, and of `other` without `self`: equal ages cancel one by one. Ages are
-    /// compared exactly while both are kept so, else by the histogram's bins.
-    pub fn less(&self, other: &Ages) -> (Vec<Bin>, Vec<Bin>) {
-        let (mut mine, mut theirs) = (self.bins(), other.bins());
-        if theirs.is_empty() {
-            return (mine, theirs);
-        }
-        (mine, theirs) = alike(mine, theirs);
-        let (mut i, mut j) = (0, 0);
-        while i < mine.len() && j < theirs.len() {
-            match mine[i].low.total_cmp(&theirs[j].low) {
-                std::cmp::Ordering::Less => i += 1,
-                std::cmp::Ordering::Greater => j += 1,
-                std::cmp::Ordering::Equal => {
-                    let both = mine[i].count.min(theirs[j].count);
-                    mine[i].count -= both;
-                    theirs[j].count -= both;
-                    (i, j) = (i + 1, j + 1);
-                }
-            }
-        }
-        mine.retain(|b| b.count > 0);
-        theirs.retain(|b| b.count > 0);
-        (mine, theirs)
     }
 
     /// How many ages it holds.
@@ -150,6 +130,31 @@ impl Ages {
     }
 }
 
+/// What is left of one multiset of bins without the other, and the other way round: equal ages cancel one by one. Ages
+/// are compared exactly while both are kept so, else by the histogram's bins.
+pub(super) fn less(mine: Vec<Bin>, theirs: Vec<Bin>) -> (Vec<Bin>, Vec<Bin>) {
+    if mine.is_empty() || theirs.is_empty() {
+        return (mine, theirs);
+    }
+    let (mut mine, mut theirs) = alike(mine, theirs);
+    let (mut i, mut j) = (0, 0);
+    while i < mine.len() && j < theirs.len() {
+        match mine[i].low.total_cmp(&theirs[j].low) {
+            std::cmp::Ordering::Less => i += 1,
+            std::cmp::Ordering::Greater => j += 1,
+            std::cmp::Ordering::Equal => {
+                let both = mine[i].count.min(theirs[j].count);
+                mine[i].count -= both;
+                theirs[j].count -= both;
+                (i, j) = (i + 1, j + 1);
+            }
+        }
+    }
+    mine.retain(|b| b.count > 0);
+    theirs.retain(|b| b.count > 0);
+    (mine, theirs)
+}
+
 /// Equal contents, however they came together.
 impl PartialEq for Ages {
     fn eq(&self, other: &Ages) -> bool {
@@ -161,36 +166,27 @@ impl Store {
     /// Groups what is loose; becomes a histogram when there are too many distinct ages.
     fn settle(&mut self) {
         let Store::Few { grouped, loose } = self else { return };
-        loose.sort_unstable_by(f64::total_cmp);
-        let mut merged: Vec<(f64, u64)> = Vec::with_capacity(grouped.len() + 64);
-        let mut push = |age: f64, count: u64| match merged.last_mut() {
-            Some((last, n)) if *last == age => *n = n.saturating_add(count),
-            _ => merged.push((age, count)),
-        };
-        let mut left = grouped.iter().copied().peekable();
-        for &age in loose.iter() {
-            while let Some(&(a, c)) = left.peek()
-                && a <= age
-            {
-                push(a, c);
-                left.next();
-            }
-            push(age, 1);
-        }
-        left.for_each(|(a, c)| push(a, c));
-        if merged.len() <= EXACT_AGES {
-            *grouped = merged;
+        if !surely_many(grouped.iter().map(|(age, _)| age).chain(loose.iter())) {
+            *grouped = group(grouped, loose);
             loose.clear();
-            return;
         }
+        if grouped.len() + loose.len() > EXACT_AGES {
+            self.widen();
+        }
+    }
+
+    /// Becomes a histogram, if it is none.
+    fn widen(&mut self) {
+        let Store::Few { grouped, loose } = self else { return };
+        let (grouped, loose) = (std::mem::take(grouped), std::mem::take(loose));
         let Some(histogram) = new_histogram::<u32>() else { return };
         *self = Store::Narrow(histogram);
-        for (age, count) in merged {
+        for (age, count) in grouped.into_iter().chain(loose.into_iter().map(|age| (age, 1))) {
             self.record(ticks(age), count);
         }
     }
 
-    fn settled(&self) -> std::borrow::Cow<'_, Store> {
+    pub(super) fn settled(&self) -> std::borrow::Cow<'_, Store> {
         match self {
             Store::Few { loose, .. } if !loose.is_empty() => {
                 let mut copy = self.clone();
@@ -202,7 +198,7 @@ impl Store {
     }
 
     #[inline]
-    fn record(&mut self, tick: u64, count: u64) {
+    pub(super) fn record(&mut self, tick: u64, count: u64) {
         if let Store::Narrow(h) = self {
             // No counter can exceed the total, so 32 bits suffice while the total fits them.
             if h.len().saturating_add(count) <= u64::from(u32::MAX) {
@@ -226,18 +222,47 @@ impl Store {
     }
 
     fn record_all<C: Counter>(&mut self, other: &Histogram<C>) {
-        if let Store::Few { grouped, loose } = self {
-            let (grouped, loose) = (std::mem::take(grouped), std::mem::take(loose));
-            let Some(histogram) = new_histogram::<u32>() else { return };
-            *self = Store::Narrow(histogram);
-            for (age, count) in grouped.into_iter().chain(loose.into_iter().map(|age| (age, 1))) {
-                self.record(ticks(age), count);
-            }
-        }
+        self.widen();
         for v in other.iter_recorded() {
             self.record(v.value_iterated_to(), v.count_at_value().as_u64());
         }
     }
+}
+
+/// Whether more than [`EXACT_AGES`] of the ages are distinct, seen without sorting them. It errs towards "no": two ages may
+/// share a place.
+fn surely_many<'a>(ages: impl Iterator<Item = &'a f64>) -> bool {
+    const PLACES: u32 = 17;
+    let mut taken = [0u64; 1 << (PLACES - 6)];
+    let mut distinct = 0;
+    for age in ages {
+        // Fibonacci hashing (Knuth, volume 3, section 6.4).
+        let place = age.to_bits().wrapping_mul(0x9E37_79B9_7F4A_7C15) >> (64 - PLACES);
+        let (word, bit) = (&mut taken[(place >> 6) as usize], 1 << (place & 63));
+        distinct += usize::from(*word & bit == 0);
+        *word |= bit;
+    }
+    distinct > EXACT_AGES
+}
+
+/// Joins loose ages to sorted, distinct ones.
+fn group(grouped: &[(f64, u64)], loose: &mut [f64]) -> Vec<(f64, u64)> {
+    // Above 0 numbers sort as their bits do.
+    loose.sort_unstable_by_key(|age| age.to_bits());
+    let mut joined: Vec<(f64, u64)> = Vec::with_capacity(grouped.len() + 64);
+    let mut push = |age: f64, count: u64| match joined.last_mut() {
+        Some((last, n)) if *last == age => *n = n.saturating_add(count),
+        _ => joined.push((age, count)),
+    };
+    let mut left = grouped.iter().copied().peekable();
+    for &age in loose.iter() {
+        while let Some((a, c)) = left.next_if(|(a, _)| *a <= age) {
+            push(a, c);
+        }
+        push(age, 1);
+    }
+    left.for_each(|(a, c)| push(a, c));
+    joined
 }
 
 /// An auto-resizing histogram. Creation fails only for more than 5 digits.
@@ -284,7 +309,10 @@ fn binned(bins: &[Bin]) -> Vec<Bin> {
 
 #[inline]
 fn ticks(age: f64) -> u64 {
-    ((age * TICKS).round() as u64).max(1)
+    let exact = age * TICKS;
+    // Half up; a call of `round` would take longer than all else.
+    let whole = exact as u64;
+    (whole + u64::from(exact - whole as f64 >= 0.5)).max(1)
 }
 
 #[cfg(test)]
@@ -317,13 +345,13 @@ mod tests {
 
     #[test]
     fn what_is_left_of_each() {
-        let (left, right) = of([1.0, 2.0, 2.0, 3.0]).less(&of([2.0, 3.0, 4.0]));
+        let (left, right) = less(of([1.0, 2.0, 2.0, 3.0]).bins(), of([2.0, 3.0, 4.0]).bins());
         let ages = |bins: &[Bin]| bins.iter().map(|b| (b.low, b.count)).collect::<Vec<_>>();
         assert_eq!((ages(&left), ages(&right)), (vec![(1.0, 1), (2.0, 1)], vec![(4.0, 1)]));
         // A histogram against exact ages: by bins.
         let many = of((1..=6_000).map(|i| f64::from(i) * 1e-3));
         let few = of((1..=3_000).map(|i| f64::from(i) * 1e-3));
-        let (left, right) = many.less(&few);
+        let (left, right) = less(many.bins(), few.bins());
         assert_eq!(left.iter().map(|b| b.count).sum::<u64>(), 3_000);
         assert!(right.is_empty());
     }

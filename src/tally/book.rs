@@ -5,11 +5,8 @@ use std::collections::HashMap;
 use foldhash::fast::RandomState;
 
 use super::Tally;
-use super::carry::crossings;
-use crate::wait::{Age, StreamError, Wait, check_stream};
-
-/// Length of a period, s.
-const DAY: f64 = 86_400.0;
+use super::carry::{self, DAY, Periods};
+use crate::wait::{StreamError, Wait, check_stream};
 
 /// Days since 1970-01-01 UTC; waits without a time are filed apart.
 #[derive(Clone, Copy, Debug, PartialEq, Eq, PartialOrd, Ord, Hash)]
@@ -92,46 +89,40 @@ impl Book {
     }
 }
 
+/// Of streams by name; the names are the caller's to check.
+impl FromIterator<(String, Days)> for Book {
+    fn from_iter<I: IntoIterator<Item = (String, Days)>>(streams: I) -> Book {
+        Book { streams: streams.into_iter().collect() }
+    }
+}
+
 impl Days {
     /// Counts one wait under the day in which it ended; one that spans days also enters and leaves those before.
     #[inline]
     pub fn add(&mut self, wait: &Wait) {
-        let day = Day::of(wait.at());
-        if let (Day::Number(_), Age::Exact(age)) = (day, wait.age())
-            && age >= DAY
-        {
-            return self.add_long(day, wait);
+        match wait.at() {
+            Some(at) => carry::file(wait, at, self),
+            None => self.at(Day::Undated).add(wait),
         }
+    }
+
+    /// The tally of a day, empty where it has none yet.
+    #[inline]
+    pub(crate) fn at(&mut self, day: Day) -> &mut Tally {
         // Records come roughly in order of time, so the day is nearly always the last.
-        match self.days.last_mut() {
-            Some((last, tally)) if *last == day => tally.add(wait),
-            _ => self.at(day).add(wait),
-        }
-    }
-
-    fn add_long(&mut self, day: Day, wait: &Wait) {
-        self.at(day).end(wait);
-        let mut first = day;
-        for crossing in crossings(wait, DAY) {
-            let into = Day::Number(crossing.into as i32);
-            first = Day::Number(crossing.into as i32 - 1);
-            self.at(into).enter(wait, crossing.age);
-            self.at(first).carry(wait, crossing.age);
-        }
-        if wait.entered() > 0.0 {
-            self.at(first).enter(wait, wait.entered());
-        }
-    }
-
-    fn at(&mut self, day: Day) -> &mut Tally {
-        let i = match self.days.binary_search_by_key(&day, |(d, _)| *d) {
-            Ok(i) => i,
-            Err(i) => {
+        let i = match self.days.last() {
+            Some((last, _)) if *last == day => self.days.len() - 1,
+            _ => self.days.binary_search_by_key(&day, |(d, _)| *d).unwrap_or_else(|i| {
                 self.days.insert(i, (day, Tally::default()));
                 i
-            }
+            }),
         };
         &mut self.days[i].1
+    }
+
+    /// Adds a tally to a day's.
+    pub fn merge_day(&mut self, day: Day, tally: &Tally) {
+        self.at(day).merge(tally);
     }
 
     /// Adds all of `other`.
@@ -174,6 +165,21 @@ impl Days {
             Some((Day::Number(n), _)) => Some(*n),
             _ => None,
         }
+    }
+}
+
+impl Periods for Days {
+    fn closing(&mut self, day: i32) -> &mut Tally {
+        self.at(Day::Number(day))
+    }
+
+    fn opening(&mut self, day: i32) -> &mut Tally {
+        self.at(Day::Number(day))
+    }
+
+    #[inline]
+    fn during(&mut self, at: f64) -> &mut Tally {
+        self.at(Day::of(Some(at)))
     }
 }
 

@@ -14,12 +14,12 @@ const GRID: f64 = 100.0;
 /// Counts by bucket and ending.
 #[derive(Clone, Debug, Default, PartialEq)]
 pub struct Buckets {
-    counts: BTreeMap<(Bound, Bound), [u64; 4]>,
-    coarse: bool,
+    pub(super) counts: BTreeMap<(Bound, Bound), [u64; 4]>,
+    pub(super) coarse: bool,
 }
 
 /// A bound as its bits: for numbers >= 0 these sort as the numbers do.
-type Bound = u64;
+pub(super) type Bound = u64;
 
 impl Buckets {
     /// Adds `count` waits of one bucket (s; `upto` may be infinite).

@@ -5,23 +5,65 @@
 //! left is a wait that joined the risk set when the window opened (left truncation, METHODS.md section 2). Waits shorter
 //! than a period need no splitting: what they lack is less than a period's edge.
 
+use super::Tally;
 use crate::wait::{Age, Wait};
+
+/// Length of the periods between which long waits are carried over, s.
+pub(crate) const DAY: f64 = 86_400.0;
+
+/// The tallies of a stream by period; a period lies within one day (UTC).
+pub(crate) trait Periods {
+    /// The tally of the last period of a day, days since 1970-01-01.
+    fn closing(&mut self, day: i32) -> &mut Tally;
+    /// The tally of the first period of a day.
+    fn opening(&mut self, day: i32) -> &mut Tally;
+    /// The tally of the period in which a time lies, Unix seconds.
+    fn during(&mut self, at: f64) -> &mut Tally;
+}
+
+/// Counts a wait that ended or was last seen at `at`, its own time. One that spans days also leaves and enters those
+/// before.
+#[inline]
+pub(crate) fn file(wait: &Wait, at: f64, periods: &mut impl Periods) {
+    match wait.age() {
+        Age::Exact(age) if age >= DAY => file_long(wait, at, periods),
+        _ => periods.during(at).add(wait),
+    }
+}
+
+fn file_long(wait: &Wait, at: f64, periods: &mut impl Periods) {
+    periods.during(at).end(wait);
+    let mut first = None;
+    for crossing in crossings(wait, DAY) {
+        let into = crossing.into as i32;
+        periods.opening(into).enter(wait, crossing.age);
+        periods.closing(into - 1).carry(wait, crossing.age);
+        first = Some(into - 1);
+    }
+    if wait.entered() > 0.0 {
+        let began = match first {
+            Some(day) => periods.closing(day),
+            None => periods.during(at),
+        };
+        began.enter(wait, wait.entered());
+    }
+}
 
 /// Pieces of one wait at most: beyond it the wait enters at the age it had so many periods before its end.
 const MOST_PIECES: i64 = 400;
 
 /// A wait's passage from one period to the next.
 #[derive(Clone, Copy, Debug, PartialEq)]
-pub(super) struct Crossing {
+struct Crossing {
     /// Number of the period that it enters; it leaves the one before.
-    pub(super) into: i64,
+    into: i64,
     /// The age it has there, s.
-    pub(super) age: f64,
+    age: f64,
 }
 
 /// Where a dated wait of an exact age of at least `period` s crossed from one period to the next while it was watched,
 /// latest first; nothing for any other wait.
-pub(super) fn crossings(wait: &Wait, period: f64) -> impl Iterator<Item = Crossing> {
+fn crossings(wait: &Wait, period: f64) -> impl Iterator<Item = Crossing> {
     let (age, end) = match (wait.age(), wait.at()) {
         (Age::Exact(age), Some(at)) if age >= period => (age, at),
         _ => (0.0, 0.0),

@@ -7,11 +7,16 @@ mod book;
 mod buckets;
 mod carry;
 mod cells;
+mod encode;
+mod waits;
 
 pub use ages::{Ages, Bin, EXACT_AGES};
 pub use book::{Book, Day, Days};
 pub use buckets::{Buckets, MOST_BUCKETS};
+pub(crate) use carry::{Periods, file};
 pub use cells::{Cause, Cells, EventCell, Interval, Mass, Sample};
+pub(crate) use encode::{Bytes, varint};
+pub use encode::{DecodeError, TALLY_VERSION};
 
 use crate::wait::{Age, Ending, Wait};
 
@@ -140,6 +145,10 @@ impl Side {
     fn cells(&self) -> Cells {
         let mut cells = Cells::default();
         let [done, failed, gave_up, waiting] = self.ages.each_ref().map(Ages::bins);
+        let (entered, left) = ages::less(self.entries.bins(), self.carried.bins());
+        // A wait last seen at an age and one that enters at it are one at every age; files written from a ledger hold
+        // long waits so.
+        let (entered, waiting) = ages::less(entered, waiting);
         let (done, failed) = ages::alike(done, failed);
         for (ending, bins) in Ending::ALL.into_iter().zip([done, failed, gave_up, waiting]) {
             for bin in bins {
@@ -153,7 +162,6 @@ impl Side {
                 }
             }
         }
-        let (entered, left) = self.entries.less(&self.carried);
         let mass = |bin: &Bin| Mass { age: bin.low, weight: bin.count as f64 };
         cells.entries = entered.iter().map(mass).collect();
         // Carried over out of the window: open when last seen.

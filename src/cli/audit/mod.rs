@@ -108,7 +108,7 @@ impl Command {
         let (book, report) = reading::counted(sources, &self.reading, &common)?;
         let audit = self.prepare(&book, &report, policy.as_ref(), &common);
         drop(book);
-        let (Held(sums), again) = reading::into(twice.again()?, &self.reading, &common, Held(audit.sums()))?;
+        let (Held(sums), again) = reading::read(twice.again()?, Held(audit.sums()), &self.reading, &common)?;
         if (again.lines, again.waits) != (report.lines, report.waits) {
             reading::note(
                 "the inputs changed between the two readings; the audit is of the second, by the advice of the first",
@@ -167,7 +167,7 @@ impl Command {
 }
 
 fn assumed(policy: Option<&Policy>) -> Vec<String> {
-    Terms { policy, newest: None, seed: 0 }.set(Vec::new(), None).assumed
+    Terms { policy, newest: None, seed: 0 }.assumed()
 }
 
 fn duration(text: &str) -> Result<f64, String> {

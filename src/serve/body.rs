@@ -1,0 +1,129 @@
+//! From the body of a request to a batch for the ledger. No I/O: bytes in, batch out.
+
+use std::num::NonZeroUsize;
+
+use axum::body::Bytes;
+
+use super::config::Limits;
+use crate::intake::{Allowed, Format, Half, IntakeError, Options, Record, Report, Side, Sink, Source, read};
+use crate::ledger::{Batch, Digest, KeyError, Tie};
+use crate::wait::{Age, Ending};
+
+/// What a body holds.
+pub(super) struct Counted {
+    pub(super) batch: Batch,
+    pub(super) report: Report,
+    /// Starts, ends and open waits.
+    pub(super) events: u64,
+    /// Of these, those that the ledger cannot take (an id that is too long).
+    pub(super) refused: u64,
+}
+
+/// How a body is read.
+#[derive(Clone, Copy, Debug)]
+pub(super) struct Reading<'a> {
+    /// The format if the client named one.
+    pub(super) format: Option<Format>,
+    /// A key that makes a repeat harmless.
+    pub(super) key: Option<&'a str>,
+    /// For waits without a time, Unix seconds.
+    pub(super) now: f64,
+    /// Whether any wait is open anywhere, so that a whole wait may close one.
+    pub(super) any_open: bool,
+}
+
+/// Counts a body. Bad lines are counted and told of, not an error, as long as there is something else.
+pub(super) fn count(body: Bytes, reading: Reading<'_>, limits: &Limits) -> Result<Counted, CountError> {
+    let batch = match reading.key {
+        Some(key) => Batch::keyed(key, Digest::of(&body))?,
+        None => Batch::default(),
+    };
+    let options = Options {
+        format: reading.format,
+        bad_lines: Allowed::All,
+        threads: NonZeroUsize::new(1),
+        line_bytes: limits.line_bytes,
+        total_bytes: limits.unpacked_bytes,
+        ..Options::default()
+    };
+    let sink = Counting { batch, now: reading.now, any_open: reading.any_open, events: 0, refused: 0 };
+    let source = Source::reader("body", std::io::Cursor::new(body));
+    let (sink, report) = read(vec![source], &options, sink, &mut |_| ())?;
+    let Counting { mut batch, events, refused, .. } = sink;
+    for bad in &report.bad.by_reason {
+        batch.bad_lines(&format!("{}: {}", bad.field, bad.reason), bad.lines);
+    }
+    Ok(Counted { batch, report, events, refused })
+}
+
+/// Why nothing of a body was counted.
+#[derive(Debug, thiserror::Error)]
+pub(super) enum CountError {
+    #[error(transparent)]
+    Key(#[from] KeyError),
+    #[error(transparent)]
+    Intake(#[from] IntakeError),
+}
+
+struct Counting {
+    batch: Batch,
+    now: f64,
+    any_open: bool,
+    events: u64,
+    refused: u64,
+}
+
+impl Sink for Counting {
+    #[inline]
+    fn take(&mut self, record: &Record<'_>) {
+        let Record { stream, wait, .. } = record;
+        if let Some(id) = record.id {
+            let tie = Tie { stream, id, attempt: wait.attempt() };
+            let at = wait.at().unwrap_or(self.now);
+            match (wait.ending(), wait.age()) {
+                // It is open under its id from when it started; what it comes to is counted once it has ended.
+                (Ending::Waiting, Age::Exact(age)) => {
+                    let filed = self.batch.start(tie, (at - age).max(0.0), wait.entered());
+                    self.any_open = true;
+                    return self.note(filed.is_ok());
+                }
+                _ if self.any_open => {
+                    let _ = self.batch.close(tie, at);
+                }
+                _ => {}
+            }
+        }
+        // The reader has checked the name.
+        let _ = self.batch.add(stream, wait, self.now);
+    }
+
+    fn take_half(&mut self, half: &Half<'_>) -> bool {
+        let tie = Tie { stream: half.stream, id: half.id, attempt: half.attempt };
+        let filed = match half.side {
+            Side::Start => {
+                self.any_open = true;
+                self.batch.start(tie, half.time, half.entered)
+            }
+            Side::End(ending) => self.batch.end(tie, half.time, ending),
+        };
+        self.note(filed.is_ok());
+        true
+    }
+
+    fn fork(&self) -> Counting {
+        Counting { batch: Batch::default(), events: 0, refused: 0, ..*self }
+    }
+
+    fn absorb(&mut self, other: Counting) {
+        self.batch.absorb(other.batch);
+        self.events += other.events;
+        self.refused += other.refused;
+    }
+}
+
+impl Counting {
+    fn note(&mut self, filed: bool) {
+        self.events += 1;
+        self.refused += u64::from(!filed);
+    }
+}

@@ -1,0 +1,98 @@
+//! What every request passes: an id, the token, a limit of time; and what is written down of it.
+
+use std::sync::Arc;
+use std::sync::atomic::{AtomicU64, Ordering};
+use std::time::Instant;
+
+use axum::extract::{MatchedPath, Request, State};
+use axum::http::{HeaderMap, HeaderName, HeaderValue, StatusCode, header};
+use axum::middleware::Next;
+use axum::response::{IntoResponse, Response};
+
+use crate::serve::problem::Problem;
+use crate::serve::shared::Shared;
+
+const ID: HeaderName = HeaderName::from_static("x-request-id");
+/// Longest id that is taken over from a client.
+const LONGEST_ID: usize = 64;
+
+/// Paths that tell nothing of the data and need no token.
+const FREE: [&str; 2] = ["/healthz", "/readyz"];
+
+pub(super) async fn pass(State(shared): State<Arc<Shared>>, request: Request, next: Next) -> Response {
+    let began = Instant::now();
+    let id = request_id(request.headers(), &shared);
+    let path = request.extensions().get::<MatchedPath>().map_or("other", MatchedPath::as_str);
+    // Braces in a label's value confuse some readers of the text format.
+    let path = path.replace("{*", ":").replace('}', "");
+    let method = request.method().clone();
+    let time = shared.config.limits.request + shared.config.limits.body;
+    let mut response = match admit(&shared, &path, request.headers()) {
+        Err(problem) => problem.into_response(),
+        Ok(()) => match tokio::time::timeout(time, next.run(request)).await {
+            Ok(response) => response,
+            Err(_) => Problem::new(
+                StatusCode::SERVICE_UNAVAILABLE,
+                "slow",
+                "It takes too long",
+                format!("no answer within {} s", time.as_secs()),
+                "ask again later",
+            )
+            .retry_after(5)
+            .into_response(),
+        },
+    };
+    let headers = response.headers_mut();
+    headers.insert(ID, id.clone());
+    headers.insert(header::X_CONTENT_TYPE_OPTIONS, HeaderValue::from_static("nosniff"));
+    let status = response.status();
+    shared.metrics.requests.with_label_values(&[path.as_str(), status.as_str()]).inc();
+    let (id, millis) = (id.to_str().unwrap_or_default(), began.elapsed().as_secs_f64() * 1e3);
+    let status = status.as_u16();
+    if status < 400 {
+        tracing::debug!(%method, path, status, millis, request = id, "answered");
+    } else {
+        tracing::info!(%method, path, status, millis, request = id, "refused");
+    }
+    response
+}
+
+/// The client's own id if it is a plain word, else a new one.
+fn request_id(headers: &HeaderMap, shared: &Shared) -> HeaderValue {
+    static NEXT: AtomicU64 = AtomicU64::new(1);
+    let is_plain = |value: &&HeaderValue| {
+        (1..=LONGEST_ID).contains(&value.len())
+            && value.as_bytes().iter().all(|byte| byte.is_ascii_alphanumeric() || b"-_.".contains(byte))
+    };
+    headers.get(ID).filter(is_plain).cloned().unwrap_or_else(|| {
+        let (time, number) = (shared.now() as u64, NEXT.fetch_add(1, Ordering::Relaxed));
+        HeaderValue::from_str(&format!("{time:x}-{number:x}"))
+            .unwrap_or_else(|_| HeaderValue::from_static("none"))
+    })
+}
+
+fn admit(shared: &Shared, path: &str, headers: &HeaderMap) -> Result<(), Problem> {
+    let Some(token) = &shared.config.token else { return Ok(()) };
+    if FREE.contains(&path) {
+        return Ok(());
+    }
+    let shown = headers.get(header::AUTHORIZATION).map(HeaderValue::as_bytes).and_then(|value| {
+        let (scheme, shown) = value.split_at_checked(7)?;
+        scheme.eq_ignore_ascii_case(b"Bearer ").then_some(shown)
+    });
+    match shown {
+        Some(shown) if token.is(shown.trim_ascii()) => Ok(()),
+        Some(_) => Err(unauthorised("the token is not the one that is asked for")),
+        None => Err(unauthorised("no token was shown")),
+    }
+}
+
+fn unauthorised(detail: &str) -> Problem {
+    Problem::new(
+        StatusCode::UNAUTHORIZED,
+        "token",
+        "A token is needed",
+        detail,
+        "send it as `Authorization: Bearer TOKEN`",
+    )
+}

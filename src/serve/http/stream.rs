@@ -1,0 +1,128 @@
+//! `GET /v1/streams/{stream}/curve`, `/curve.svg` and `/whatif`: questions about one stream. Names may hold slashes, so
+//! the question is what comes last.
+
+use std::sync::Arc;
+
+use axum::extract::{Path, State};
+use axum::http::{HeaderMap, HeaderValue, Uri, header};
+use axum::response::{IntoResponse, Response};
+
+use super::advice::unknown;
+use super::{App, away, excerpt, json, parameters, tagged};
+use crate::advise::{Lenders, Study, Terms, WhatIfError};
+use crate::chart::{Frame, Picture};
+use crate::serve::problem::Problem;
+use crate::serve::shared::Shared;
+
+pub(super) async fn ask(
+    State(shared): App,
+    Path(question): Path<String>,
+    uri: Uri,
+    headers: HeaderMap,
+) -> Result<Response, Problem> {
+    let (stream, question) = question.rsplit_once('/').unwrap_or((&question, ""));
+    let stream = stream.to_owned();
+    let fresh = match question {
+        "curve" | "curve.svg" | "whatif" => shared.advice(&stream).ok_or_else(|| unknown(&stream))?,
+        _ => {
+            return Err(Problem::missing(
+                &format!("question {:?} about a stream", excerpt(question)),
+                "ask /v1/streams/{stream}/curve, /curve.svg or /whatif?give_up_after=2s",
+            ));
+        }
+    };
+    // The curve changes when the advice does.
+    let tag = format!("W/\"{:016x}-{:x}\"", fresh.tag, fresh.made_at.to_bits());
+    match question {
+        "whatif" => {
+            let asked = parameters(&uri, &["give_up_after"])?;
+            let text = asked.get("give_up_after").ok_or_else(|| {
+                Problem::parameter(
+                    "give_up_after",
+                    "missing",
+                    "ask ?give_up_after=800ms, a number of seconds, or never",
+                )
+            })?;
+            let after = give_up_after(text)?;
+            let answer = away(move || study(&shared, &stream)?.what_if(after).map_err(unjudged)).await?;
+            json(&answer)
+        }
+        "curve" => {
+            parameters(&uri, &[])?;
+            let curves = away(move || Ok(study(&shared, &stream)?.curves())).await?;
+            tagged(&tag, &headers, || json(&curves))
+        }
+        _ => {
+            let asked = parameters(&uri, &["picture", "width"])?;
+            let picture = asked.get("picture").map_or("waiting", String::as_str);
+            let width = match asked.get("width") {
+                None => 720,
+                Some(text) => text
+                    .parse()
+                    .ok()
+                    .filter(|width| (Frame::NARROWEST..=Frame::WIDEST).contains(width))
+                    .ok_or_else(|| {
+                        Problem::parameter(
+                            "width",
+                            "not a width",
+                            "write a number of pixels from 320 to 1600",
+                        )
+                    })?,
+            };
+            let which = Picture::parse(picture).ok_or_else(|| {
+                Problem::parameter(
+                    "picture",
+                    "not one of them",
+                    "ask for waiting, remaining, rate or holding",
+                )
+            })?;
+            let svg = away(move || {
+                let frame = Frame { width, prefix: "outwait", styled: true };
+                Ok(which.draw(&study(&shared, &stream)?.curves(), &frame).markup)
+            })
+            .await?;
+            tagged(&tag, &headers, || {
+                let mut response = svg.into_response();
+                response
+                    .headers_mut()
+                    .insert(header::CONTENT_TYPE, HeaderValue::from_static("image/svg+xml"));
+                Ok(response)
+            })
+        }
+    }
+}
+
+/// Weighs the stream anew, from what the ledger holds now.
+fn study(shared: &Arc<Shared>, stream: &str) -> Result<Study, Problem> {
+    let policy = shared.policy();
+    let terms = Terms { policy: policy.as_deref(), newest: Some(shared.today()), seed: shared.config.seed };
+    let opening = terms.opening(&terms.entry(stream));
+    let days = shared
+        .ask(|reader| shared.days(reader, stream, opening))
+        .map_err(|error| Problem::ours(format!("{error}; {}", error.remedy())))?;
+    Ok(terms.study_among(stream, &days, None, &Lenders::default()))
+}
+
+fn give_up_after(text: &str) -> Result<f64, Problem> {
+    if text == "never" {
+        return Ok(f64::INFINITY);
+    }
+    let seconds = text.parse::<f64>().ok().or_else(|| crate::say::parse_duration(text).ok());
+    seconds.filter(|seconds| *seconds > 0.0 && !seconds.is_nan()).ok_or_else(|| {
+        Problem::parameter(
+            "give_up_after",
+            format!("{:?} is not a time above 0", excerpt(text)),
+            "write 800ms, 2s, a number of seconds, or never",
+        )
+    })
+}
+
+fn unjudged(error: WhatIfError) -> Problem {
+    Problem::new(
+        axum::http::StatusCode::CONFLICT,
+        "no-curve",
+        "It cannot be judged yet",
+        error.to_string(),
+        "see the stream's advice for what is missing",
+    )
+}

@@ -1,0 +1,12 @@
+//! The daemon: what it takes, what it answers, and what it does when things go wrong. Every server here is started by
+//! the test itself, on loopback and a free port.
+#![allow(clippy::unwrap_used, clippy::expect_used, clippy::panic)] // a test may fail
+
+mod api;
+mod client;
+mod faults;
+mod house;
+mod kills;
+mod metrics;
+mod openapi;
+mod security;

@@ -1,0 +1,167 @@
+//! Parsers that face the network or a disk meet seeded mutations of good input: no panic, and what they take holds.
+//!
+//! `OUTWAIT_MUTATIONS=1000000 cargo test --release --test mutations` for a long run; `fuzz/` holds the same targets for a
+//! coverage-guided fuzzer.
+#![allow(clippy::unwrap_used, clippy::panic)] // a test may fail
+
+use std::io::Write;
+use std::num::NonZeroUsize;
+
+use outwait::intake::{Allowed, Options, Record, Sink, Source, read};
+use outwait::policy;
+use outwait::tally::Tally;
+use outwait::wait::{Age, Ending, Wait, check_stream};
+use rand::{RngExt, SeedableRng};
+use rand_xoshiro::Xoshiro256PlusPlus;
+
+fn rounds() -> u64 {
+    std::env::var("OUTWAIT_MUTATIONS").map_or(4_000, |rounds| rounds.parse().unwrap())
+}
+
+/// One to eight changes: bits, bytes cut, doubled, taken from elsewhere, or words that parsers know.
+fn mutate(bytes: &mut Vec<u8>, words: &[&[u8]], random: &mut Xoshiro256PlusPlus) {
+    for _ in 0..random.random_range(1..9) {
+        let at = random.random_range(0..=bytes.len());
+        let length = random.random_range(0..=(bytes.len() - at).min(24));
+        match random.random_range(0..6) {
+            0 if at < bytes.len() => bytes[at] ^= 1 << random.random_range(0..8),
+            1 if at < bytes.len() => bytes[at] = random.random(),
+            2 => drop(bytes.drain(at..at + length)),
+            3 => {
+                let copy = bytes[at..at + length].to_vec();
+                let to = random.random_range(0..=bytes.len());
+                bytes.splice(to..to, copy);
+            }
+            4 => bytes.truncate(at),
+            _ => {
+                let word = words[random.random_range(0..words.len())];
+                bytes.splice(at..at, word.iter().copied());
+            }
+        }
+    }
+}
+
+struct Checking {
+    waits: u64,
+}
+
+impl Sink for Checking {
+    fn take(&mut self, record: &Record<'_>) {
+        check_stream(record.stream).unwrap();
+        let wait = &record.wait;
+        let (low, high) = match wait.age() {
+            Age::Exact(age) => (age, age),
+            Age::Between { over, upto } => (over, upto),
+        };
+        assert!(low >= 0.0 && high > 0.0 && low <= high && low.is_finite(), "{wait:?}");
+        assert!(wait.count() > 0 && wait.attempt() > 0 && (0.0..=low).contains(&wait.entered()), "{wait:?}");
+        assert!(wait.at().is_none_or(f64::is_finite));
+        self.waits += 1;
+    }
+    fn fork(&self) -> Self {
+        Checking { waits: 0 }
+    }
+    fn absorb(&mut self, other: Self) {
+        self.waits += other.waits;
+    }
+}
+
+#[test]
+fn bodies() {
+    const NDJSON: &str = "{\"stream\":\"catalogue.lookup\",\"at\":\"2026-11-30T10:00:00Z\",\"elapsed\":0.0183,\"ending\":\"done\",\"attempt\":1,\"id\":\"r-8831\",\"entered\":0}\n\
+        {\"stream\":\"a/b:c\",\"elapsed\":\"2d 4h\",\"ending\":\"gave_up\",\"count\":3}\n{\"stream\":\"a\",\"over\":1,\"upto\":\"inf\",\"ending\":\"failed\"}\n\
+        {\"stream\":\"a\",\"id\":\"x\",\"started\":1796040000}\n{\"stream\":\"a\",\"id\":\"x\",\"ended\":1796040009.5,\"ending\":\"done\"}\n";
+    const CSV: &str = "stream,elapsed_ms,ending,at,\"attempt\"\ncatalogue.lookup,18.3,done,2026-11-30T10:00:00Z,1\n\"a,b\",5,failed,,2\n";
+    const SWF: &str = "; UnixStartTime: 1796040000\n1 0 10 100 4 -1 -1 4 -1 -1 1 3 1 1 1 1 -1 -1\n2 5 -1 -1 4 -1 -1 4 -1 -1 5 3 1 1 1 1 -1 -1\n";
+    let mut gzip = flate2::write::GzEncoder::new(Vec::new(), flate2::Compression::fast());
+    gzip.write_all(NDJSON.as_bytes()).unwrap();
+    let corpus = [
+        NDJSON.into(),
+        CSV.into(),
+        SWF.into(),
+        gzip.finish().unwrap(),
+        zstd::encode_all(NDJSON.as_bytes(), 1).unwrap(),
+    ];
+    let words: [&[u8]; 14] = [
+        b"NaN",
+        b"1e999",
+        b"-0",
+        b"null",
+        b"{",
+        b"}}",
+        b"\"",
+        b"\xff\xfe",
+        b"\r\n",
+        b",",
+        b"\"elapsed\":",
+        b"\\u0000",
+        b"9223372036854775808",
+        b"\xef\xbb\xbf",
+    ];
+    let options = Options {
+        bad_lines: Allowed::All,
+        threads: NonZeroUsize::new(1),
+        line_bytes: 4_096,
+        total_bytes: 1 << 20,
+        ..Options::default()
+    };
+    let mut random = Xoshiro256PlusPlus::seed_from_u64(3);
+    let mut taken = 0;
+    for _ in 0..rounds() {
+        let mut body: Vec<u8> = corpus[random.random_range(0..corpus.len())].clone();
+        mutate(&mut body, &words, &mut random);
+        let source = Source::reader("body", std::io::Cursor::new(body));
+        if let Ok((sink, report)) = read(vec![source], &options, Checking { waits: 0 }, &mut |_| ()) {
+            assert_eq!(sink.waits, report.waits);
+            taken += sink.waits;
+        }
+    }
+    assert!(taken > rounds() / 4, "{taken} waits survived: the mutations are too wild to test anything");
+}
+
+#[test]
+fn policies() {
+    let corpus = [
+        include_bytes!("../policies/fernhollow.yaml").to_vec(),
+        include_bytes!("../policies/reference.yaml").to_vec(),
+    ];
+    let words: [&[u8]; 10] = [b"- ", b": ", b"{", b"]", b"&a ", b"*a", b"!!", b"\t", b"never", b"-1s"];
+    let mut random = Xoshiro256PlusPlus::seed_from_u64(5);
+    let (mut sound, mut wrong) = (0, 0);
+    for _ in 0..rounds() / 4 {
+        let mut bytes = corpus[random.random_range(0..corpus.len())].clone();
+        mutate(&mut bytes, &words, &mut random);
+        match policy::parse_bytes(&bytes, "policy.yaml") {
+            Ok(policy) => sound += usize::from(!policy.entries.is_empty()),
+            Err(error) => wrong += usize::from(!error.to_string().is_empty()),
+        }
+    }
+    assert!(sound > 10 && wrong > 10, "{sound} sound, {wrong} wrong");
+}
+
+#[test]
+fn stored_tallies() {
+    let mut tally = Tally::default();
+    for i in 1..6_000u32 {
+        let wait = Wait::new(f64::from(i) * 1.37e-3, Ending::ALL[i as usize % 4]).unwrap();
+        tally.add(&wait.with_attempt(1 + i % 2).unwrap().with_entered(f64::from(i % 3) * 1e-4).unwrap());
+    }
+    tally.add(&Wait::between(1.0, f64::INFINITY, Ending::Done).unwrap().with_at(1_796_040_000.0).unwrap());
+    let mut bytes = Vec::new();
+    tally.encode(&mut bytes);
+    let mut random = Xoshiro256PlusPlus::seed_from_u64(7);
+    let mut refused = 0;
+    for _ in 0..rounds() {
+        let mut changed = bytes.clone();
+        mutate(&mut changed, &[b"\xff\xff\xff\xff\xff\xff\xff\xff\xff\x01", b"\x00"], &mut random);
+        match Tally::decode(&changed) {
+            Ok(read) => {
+                let mut again = Vec::new();
+                read.encode(&mut again);
+                assert_eq!(Tally::decode(&again).unwrap(), read);
+            }
+            Err(_) => refused += 1,
+        }
+    }
+    assert!(refused > 0);
+}
