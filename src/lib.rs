@@ -5,6 +5,7 @@
 
 pub mod advice;
 pub mod advise;
+pub mod audit;
 pub mod chart;
 pub mod cli;
 pub mod client;

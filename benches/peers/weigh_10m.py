@@ -1,5 +1,5 @@
 #!/usr/bin/env python3
-"""`outwait weigh` on ten million NDJSON lines, beside a columnar SQL library (DuckDB) on the same file.
+"""`outwait weigh` and `outwait audit` on ten million NDJSON lines, beside a columnar SQL library (DuckDB) on the same file.
 
     python benches/peers/weigh_10m.py [--lines 10000000] [--runs 3] [--outwait target/release/outwait] [--file PATH]
 
@@ -92,6 +92,8 @@ def main():
 
     sides = {
         "outwait weigh, whole process": [args.outwait, "weigh", "--format", "json", path],
+        # Reads the file twice: to advise, and to hold each wait against the advice.
+        "outwait audit, whole process": [args.outwait, "audit", "--format", "json", path],
         "DuckDB, five quantiles a stream": peer(""),
         # The quantiles need two of the four fields; this reads them all, as we must.
         "DuckDB, and endings and times": peer(", count_if(ending = 'done'), min(\"at\"), max(\"at\")"),

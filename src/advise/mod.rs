@@ -1,6 +1,7 @@
 //! The one place where tally, curve, tail, stopping and policy meet: a tally and a policy entry give an advice.
 //! Pure: no clock, no files; the same seed gives the same numbers. METHODS.md sections 4 to 8, RECIPE.
 
+mod believed;
 mod bounds;
 mod cautions;
 mod curves;
@@ -12,6 +13,7 @@ mod streams;
 mod study;
 mod summary;
 
+pub use believed::Believed;
 pub(crate) use curves::aim_name;
 pub use curves::{CURVE_SCHEMA, CurvePoint, Curves, Mark};
 pub(crate) use judge::prices;

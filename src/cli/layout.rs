@@ -62,6 +62,27 @@ impl Page {
         out.push('\n');
     }
 
+    /// A table: the first column to the left, figures to the right, as far in as `indent` where there is room.
+    pub(super) fn table(self, out: &mut String, rows: &[Vec<String>], indent: usize) {
+        let columns = rows.iter().map(Vec::len).max().unwrap_or(0);
+        let mut widths = vec![0; columns];
+        for row in rows {
+            for (width, cell) in widths.iter_mut().zip(row) {
+                *width = (*width).max(cell.chars().count());
+            }
+        }
+        let whole = widths.iter().sum::<usize>() + 2 * columns.saturating_sub(1);
+        let indent = if indent + whole <= self.columns { indent } else { 2 };
+        for row in rows {
+            let mut line = " ".repeat(indent);
+            for (i, (cell, width)) in row.iter().zip(&widths).enumerate() {
+                let pad = " ".repeat(width - cell.chars().count());
+                let _ = if i == 0 { write!(line, "{cell}{pad}") } else { write!(line, "  {pad}{cell}") };
+            }
+            let _ = writeln!(out, "{}", line.trim_end());
+        }
+    }
+
     /// Text of lines, each wrapped under its own indent.
     pub(super) fn lines(self, text: &str) -> String {
         let mut out = String::with_capacity(text.len());

@@ -1,5 +1,6 @@
 //! The command line: arguments, progress, printing. A file a command.
 
+mod audit;
 mod basis;
 mod demo;
 mod exit;
@@ -15,6 +16,7 @@ mod replay;
 mod serve;
 mod settle;
 mod text;
+mod twice;
 mod vet;
 mod weekly;
 mod weigh;
@@ -41,6 +43,8 @@ const EXIT_CODES: &str = "Exit codes: 0 well, 1 the gate is shut, 2 wrong usage,
 enum Command {
     /// Weigh waits: for each stream, how long to wait before giving up, and why
     Weigh(weigh::Weigh),
+    /// Audit waits: what was over-waited, what was given up too early, which open waits to let go of now
+    Audit(audit::Command),
     /// Replay rival rules on later waits than they learnt from
     Replay(replay::Replay),
     /// Read a policy and say what it means for each stream, or what is wrong with it
@@ -76,6 +80,7 @@ pub fn run(arguments: impl IntoIterator<Item = OsString>) -> ExitCode {
     };
     let outcome = match parsed.command {
         Command::Weigh(weigh) => weigh.run(),
+        Command::Audit(audit) => audit.run(),
         Command::Replay(replay) => replay.run(),
         Command::Vet(vet) => vet.run(),
         Command::Settle(settle) => settle.run(),

@@ -60,15 +60,20 @@ impl Output {
     }
 }
 
+/// The ways in which a command can write its answer; [`Output`] for most.
+pub(super) trait Form: ValueEnum + Default + Send + Sync + 'static {}
+
+impl<F: ValueEnum + Default + Send + Sync + 'static> Form for F {}
+
 /// What every command takes.
 #[derive(Clone, Debug, Args)]
-pub(super) struct Common {
+pub(super) struct Common<F: Form = Output> {
     /// Policy file: what waiting is worth, stream by stream
     #[arg(long, value_name = "FILE")]
     pub(super) policy: Option<PathBuf>,
     /// How to write the answer
     #[arg(long, value_enum, default_value_t)]
-    pub(super) format: Output,
+    pub(super) format: F,
     /// Only waits that ended or were last seen then or later: RFC 3339, a date, or Unix seconds
     #[arg(long, value_name = "TIME", value_parser = moment, allow_negative_numbers = true)]
     pub(super) since: Option<f64>,
@@ -81,6 +86,15 @@ pub(super) struct Common {
     /// Seed of everything drawn: the same seed gives the same bytes
     #[arg(long, value_name = "N", default_value_t = 1, value_parser = seed, allow_negative_numbers = true)]
     pub(super) seed: u64,
+}
+
+impl<F: Form> Common<F> {
+    /// All but the form of the answer.
+    pub(super) fn without_form(&self) -> Common {
+        let Common { policy, since, until, stream, seed, .. } = self;
+        let (policy, stream) = (policy.clone(), stream.clone());
+        Common { policy, format: Output::default(), since: *since, until: *until, stream, seed: *seed }
+    }
 }
 
 impl Common {

@@ -83,6 +83,26 @@ pub(super) fn book(reading: &Reading, common: &Common) -> Result<(Book, Report),
 
 /// The same into any sink.
 pub(super) fn into<S: Sink>(sink: S, reading: &Reading, common: &Common) -> Result<(S, Report), Failure> {
+    once(reading, common)?;
+    let sources = reading.files.iter().map(|file| Source::argument(file)).collect();
+    let (sink, report) = read(sources, sink, reading, common)?;
+    tell(&report);
+    Ok((sink, report))
+}
+
+/// Counts what the sources hold and tells on standard error what was left out.
+pub(super) fn counted(
+    sources: Vec<Source>,
+    reading: &Reading,
+    common: &Common,
+) -> Result<(Book, Report), Failure> {
+    let (counting, report) = read(sources, Counting::default(), reading, common)?;
+    tell(&report);
+    Ok((counting.book(), report))
+}
+
+/// Standard input can be read only once, so it can be named only once.
+pub(super) fn once(reading: &Reading, common: &Common) -> Result<(), Failure> {
     let standard_input = |name: &OsStr| name == "-";
     let named = reading.files.iter().filter(|file| standard_input(file)).count();
     let policy = common.policy_file().is_some_and(|file| standard_input(file.as_os_str()));
@@ -90,19 +110,22 @@ pub(super) fn into<S: Sink>(sink: S, reading: &Reading, common: &Common) -> Resu
         return Err(Failure::new(Exit::Usage, anyhow!("standard input (`-`) is named more than once"))
             .with_remedy("name it once; it can be read only once"));
     }
-    let sources: Vec<Source> = reading.files.iter().map(|file| Source::argument(file)).collect();
+    Ok(())
+}
+
+/// Reads the sources into a sink, under a progress bar. Tells of what was left out only if that is why it fails.
+pub(super) fn read<S: Sink>(
+    sources: Vec<Source>,
+    sink: S,
+    reading: &Reading,
+    common: &Common,
+) -> Result<(S, Report), Failure> {
     let mut bar = Bar::new();
     let outcome = intake::read(sources, &reading.options(common), sink, &mut |progress| {
         bar.show(progress.bytes, progress.total);
     });
     bar.0.finish_and_clear();
-    match outcome {
-        Ok((sink, report)) => {
-            tell(&report);
-            Ok((sink, report))
-        }
-        Err(error) => Err(failure(error)),
-    }
+    outcome.map_err(failure)
 }
 
 fn failure(error: IntakeError) -> Failure {

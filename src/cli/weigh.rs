@@ -71,6 +71,18 @@ pub(super) fn answer(
     Ok(if in_the_dark { Exit::NoEvidence } else { Exit::Well })
 }
 
+/// The newest time of all that was read, asked for or not, so that what is said of a stream does not depend on which others
+/// are asked for; but nothing after `--until`, as if the data ended there. With its day.
+pub(super) fn newest(report: &Report, common: &Common) -> (Option<f64>, Option<i32>) {
+    let newest =
+        report.newest.map(|newest| common.until.map_or(newest, |until| newest.min(until.next_down())));
+    let day = newest.and_then(|newest| match Day::of(Some(newest)) {
+        Day::Number(day) => Some(day),
+        Day::Undated => None,
+    });
+    (newest, day)
+}
+
 /// All waits of a stream.
 fn waits(days: &Days) -> u64 {
     days.days().iter().flat_map(|(_, tally)| tally.counts()).fold(0, u64::saturating_add)
@@ -85,14 +97,7 @@ fn advise(
 ) -> Result<AdviceSet, Failure> {
     let streams = book.streams();
     let album = pictures.open(streams.len())?;
-    // Of all that was read, asked for or not, so that the advice on a stream does not depend on which others are asked
-    // for; but nothing after `--until`, as if the data ended there.
-    let newest =
-        report.newest.map(|newest| common.until.map_or(newest, |until| newest.min(until.next_down())));
-    let day = newest.and_then(|newest| match Day::of(Some(newest)) {
-        Day::Number(day) => Some(day),
-        Day::Undated => None,
-    });
+    let (newest, day) = newest(report, common);
     let terms = Terms { policy, newest: day, seed: common.seed, past: None };
     let suspicions: HashMap<&str, String> =
         report.suspicions.iter().map(|s| (s.stream.as_str(), s.to_string())).collect();
