@@ -51,7 +51,7 @@ fn audit(c: &mut Criterion) {
     };
     let book = counted();
     let newest = BEGIN + WEEKS - 1.0;
-    let terms = Terms { policy: None, newest: Some((newest / 86_400.0) as i32), seed: 1 };
+    let terms = Terms { policy: None, newest: Some((newest / 86_400.0) as i32), seed: 1, past: None };
     let subjects = book
         .streams()
         .par_iter()

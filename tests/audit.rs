@@ -37,7 +37,7 @@ fn audit(waits: &[Wait], policy: &Policy, question: Question) -> AuditSet {
         book.add("s", wait).unwrap();
     }
     let newest = waits.iter().filter_map(Wait::at).reduce(f64::max);
-    let terms = Terms { policy: Some(policy), newest: newest.map(|t| (t / DAY) as i32), seed: 1 };
+    let terms = Terms { policy: Some(policy), newest: newest.map(|t| (t / DAY) as i32), seed: 1, past: None };
     let subject = Subject::new(&terms, "s", book.stream("s").unwrap(), None, &Lenders::default());
     let audit = Audit::new(vec![subject], question, newest);
     let mut sums = audit.sums();
@@ -276,7 +276,7 @@ proptest! {
         let policy = policy(RATE);
         let mut book = Book::default();
         waits.iter().for_each(|w| book.add("s", w).unwrap());
-        let terms = Terms { policy: Some(&policy), newest: None, seed: 1 };
+        let terms = Terms { policy: Some(&policy), newest: None, seed: 1, past: None };
         let subject = Subject::new(&terms, "s", book.stream("s").unwrap(), None, &Lenders::default());
         let audit = Audit::new(vec![subject], Question::default(), None);
         let report = |order: &[usize], parts: usize| {

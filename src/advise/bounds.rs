@@ -3,8 +3,9 @@
 use crate::policy::Entry;
 use crate::stopping::Aim;
 use crate::tally::Cells;
+use crate::wait::MAX_AGE;
 
-/// Without a ceiling in the policy: this many times the longest age seen.
+/// Without a ceiling in the policy: this many times the longest age seen, though no more than [`MAX_AGE`].
 const CEILING: f64 = 10.0;
 /// Without a floor although restarts cost something: this share of the least completion.
 const FLOOR: f64 = 0.5;
@@ -63,7 +64,8 @@ impl Bounds {
         let floor = entry.guard.floor.unwrap_or_else(|| {
             if free_restart { percentile(FREE_RESTART).unwrap_or(first) } else { FLOOR * first }
         });
-        let ceiling = given.unwrap_or_else(|| (CEILING * longest).max(2.0 * floor));
+        // No further than a wait may be long.
+        let ceiling = given.unwrap_or_else(|| (CEILING * longest).max(2.0 * floor).min(MAX_AGE));
         Some(Bounds {
             // A ceiling below all that was seen leaves the floor nowhere to go but under it.
             floor: floor.min(0.5 * ceiling).max(ceiling * 1e-9),

@@ -16,7 +16,7 @@
 //! for age in ages() {
 //!     book.add("courier", &Wait::new(age, Ending::Done)?)?;
 //! }
-//! let terms = Terms { policy: None, newest: None, seed: 1 };
+//! let terms = Terms { policy: None, newest: None, seed: 1, past: None };
 //! let days = book.stream("courier").unwrap();
 //! let subject = Subject::new(&terms, "courier", days, None, &Lenders::default());
 //! let audit = Audit::new(vec![subject], Question::default(), None);

@@ -131,7 +131,7 @@ impl Command {
     fn prepare(&self, book: &Book, report: &Report, policy: Option<&Policy>, common: &Common) -> Audit {
         let streams = book.streams();
         let (newest, day) = weigh::newest(report, common);
-        let terms = Terms { policy, newest: day, seed: common.seed };
+        let terms = Terms { policy, newest: day, seed: common.seed, past: None };
         let suspicions: HashMap<&str, String> =
             report.suspicions.iter().map(|s| (s.stream.as_str(), s.to_string())).collect();
         let lenders = terms.lenders(&streams);
@@ -167,7 +167,7 @@ impl Command {
 }
 
 fn assumed(policy: Option<&Policy>) -> Vec<String> {
-    Terms { policy, newest: None, seed: 0 }.assumed()
+    Terms { policy, newest: None, seed: 0, past: None }.assumed()
 }
 
 fn duration(text: &str) -> Result<f64, String> {
