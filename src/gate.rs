@@ -136,7 +136,11 @@ pub fn judge(
         );
         (Verdict::CostsTooMuch, text)
     } else {
-        let text = format!("it costs {} of the rate, within the slack of {}", say::percent(costs), say::percent(needed));
+        let text = format!(
+            "it costs {} of the rate, within the slack of {}",
+            say::percent(costs),
+            say::percent(needed)
+        );
         (Verdict::Passes, text)
     };
     judged
@@ -164,7 +168,8 @@ impl Gate {
 
     /// The same for a terminal.
     pub fn text(&self) -> String {
-        let shut = self.streams.iter().filter(|j| j.verdict == Verdict::CostsTooMuch).count() + self.chains.len();
+        let shut =
+            self.streams.iter().filter(|j| j.verdict == Verdict::CostsTooMuch).count() + self.chains.len();
         let mut text = match shut {
             0 => "The gate is open.\n".to_owned(),
             1 => "The gate is shut: 1 finding.\n".to_owned(),
@@ -179,7 +184,11 @@ impl Gate {
             let _ = writeln!(text, "{mark}  {}: {}", judged.stream, judged.because);
             if judged.verdict == Verdict::CostsTooMuch {
                 for caution in &judged.cautions {
-                    let _ = writeln!(text, "      ! {}: {}\n        -> {}", caution.code, caution.text, caution.remedy);
+                    let _ = writeln!(
+                        text,
+                        "      ! {}: {}\n        -> {}",
+                        caution.code, caution.text, caution.remedy
+                    );
                 }
             }
         }
@@ -191,7 +200,8 @@ impl Gate {
 
     /// The same as JUnit XML: a test case a stream and a chain; what cannot be judged is skipped.
     pub fn junit(&self) -> String {
-        let failures = self.streams.iter().filter(|j| j.verdict == Verdict::CostsTooMuch).count() + self.chains.len();
+        let failures =
+            self.streams.iter().filter(|j| j.verdict == Verdict::CostsTooMuch).count() + self.chains.len();
         let skipped = self.streams.iter().filter(|j| j.verdict == Verdict::Unjudged).count();
         let counts = format!(
             "tests=\"{}\" failures=\"{failures}\" errors=\"0\" skipped=\"{skipped}\"",
@@ -202,16 +212,21 @@ impl Gate {
              <testsuite name=\"outwait gate\" {counts}>\n"
         );
         for judged in &self.streams {
-            let _ = write!(xml, "    <testcase name=\"{}\" classname=\"outwait.gate\"", escaped(&judged.stream));
+            let _ =
+                write!(xml, "    <testcase name=\"{}\" classname=\"outwait.gate\"", escaped(&judged.stream));
             let because = escaped(&judged.because);
             let _ = match judged.verdict {
                 Verdict::Passes => writeln!(xml, "/>"),
-                Verdict::Unjudged => writeln!(xml, ">\n      <skipped message=\"{because}\"/>\n    </testcase>"),
+                Verdict::Unjudged => {
+                    writeln!(xml, ">\n      <skipped message=\"{because}\"/>\n    </testcase>")
+                }
                 Verdict::CostsTooMuch => {
                     let cautions: String = judged
                         .cautions
                         .iter()
-                        .map(|c| format!("\n{}: {}\n  {}", escaped(&c.code), escaped(&c.text), escaped(&c.remedy)))
+                        .map(|c| {
+                            format!("\n{}: {}\n  {}", escaped(&c.code), escaped(&c.text), escaped(&c.remedy))
+                        })
                         .collect();
                     writeln!(
                         xml,

@@ -76,7 +76,13 @@ pub fn exact_duration(seconds: f64) -> String {
     if all >= 2 * day && all.is_multiple_of(day) {
         return format!("{}d", all / day);
     }
-    let units = [("h", 3_600_000_000_000), ("min", 60_000_000_000), ("s", 1_000_000_000), ("ms", 1_000_000), ("us", 1_000)];
+    let units = [
+        ("h", 3_600_000_000_000),
+        ("min", 60_000_000_000),
+        ("s", 1_000_000_000),
+        ("ms", 1_000_000),
+        ("us", 1_000),
+    ];
     for (unit, length) in units {
         if all >= length && (1_000 * all).is_multiple_of(length) {
             let (whole, part) = (all / length, 1_000 * (all % length) / length);

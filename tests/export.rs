@@ -144,7 +144,10 @@ fn names_that_become_one_are_refused() {
         safety: String::new(),
         streams: vec![stream("a.b"), stream("a-b")],
     };
-    assert_eq!(environment(&export).unwrap_err().to_string(), "the streams a.b and a-b would both be written as A_B");
+    assert_eq!(
+        environment(&export).unwrap_err().to_string(),
+        "the streams a.b and a-b would both be written as A_B"
+    );
     assert!(metrics(&export).contains("a-b"));
 }
 
@@ -164,7 +167,10 @@ fn check_shows_the_difference_and_writing_keeps_the_mode() {
     fs::set_permissions(&path, std::os::unix::fs::PermissionsExt::from_mode(0o600)).unwrap();
     let (code, out, _) = run(folder.path(), &check);
     assert_eq!(code, 1);
-    assert!(out.contains("-CATALOGUE_LOOKUP_GIVE_UP_SECONDS=0.9\n+CATALOGUE_LOOKUP_GIVE_UP_SECONDS=0.4\n"), "{out}");
+    assert!(
+        out.contains("-CATALOGUE_LOOKUP_GIVE_UP_SECONDS=0.9\n+CATALOGUE_LOOKUP_GIVE_UP_SECONDS=0.4\n"),
+        "{out}"
+    );
     assert_eq!(run(folder.path(), write).0, 0);
     assert_eq!(fs::read_to_string(&path).unwrap(), text);
     #[cfg(unix)]
@@ -188,7 +194,11 @@ fn a_template_is_strict_and_stands_alone() {
         ("{% include '/etc/passwd' %}", ":1:", "include"),
         ("{% for s in streams %}", ":1:", ""),
         ("{{ stream('helpdesk.call').give_up_after_s | seconds }}", ":1:", "never"),
-        ("{% for a in range(9999) %}{% for b in range(9999) %}{% endfor %}{% endfor %}", ":1:", "come to an end"),
+        (
+            "{% for a in range(9999) %}{% for b in range(9999) %}{% endfor %}{% endfor %}",
+            ":1:",
+            "come to an end",
+        ),
         ("{{ 1.5 | round_up('often') }}", ":1:", "not a unit"),
     ] {
         fs::write(folder.path().join("t.j2"), template).unwrap();
@@ -229,9 +239,9 @@ fn grpc_service_config() {
     assert_eq!(methods.len(), 3);
     assert_eq!(methods[0]["name"][0], serde_json::json!({"service": "catalogue", "method": "lookup"}));
     // Three attempts of 400 ms, pauses of 10 and 20 ms.
-    assert_eq!(methods[0]["timeout"], "1.23s");
+    assert_eq!(methods[0]["timeout"], "1.230000000s");
     assert_eq!(methods[0]["retryPolicy"]["maxAttempts"], 3);
-    assert_eq!(methods[0]["retryPolicy"]["maxBackoff"], "0.02s");
+    assert_eq!(methods[0]["retryPolicy"]["maxBackoff"], "0.020000000s");
     assert!(methods[1].get("timeout").is_none());
     assert!(methods[2].get("retryPolicy").is_none(), "work that may not be repeated is not retried");
     read_by_its_own_client(&text);
@@ -264,10 +274,14 @@ fn gateway_api_route() {
         .collect();
     assert_eq!(routes.len(), 3);
     for route in &routes {
-        assert_eq!((&route["apiVersion"], &route["kind"]), (&"gateway.networking.k8s.io/v1".into(), &"HTTPRoute".into()));
+        assert_eq!(
+            (&route["apiVersion"], &route["kind"]),
+            (&"gateway.networking.k8s.io/v1".into(), &"HTTPRoute".into())
+        );
         let rule = &route["spec"]["rules"][0];
         let Some(timeouts) = rule.get("timeouts") else { continue };
-        let [request, backend] = ["request", "backendRequest"].map(|key| gep_2257(timeouts[key].as_str().unwrap()));
+        let [request, backend] =
+            ["request", "backendRequest"].map(|key| gep_2257(timeouts[key].as_str().unwrap()));
         assert!(backend <= request, "{timeouts}");
     }
     assert_eq!(routes[0]["spec"]["rules"][0]["timeouts"]["backendRequest"], "400ms");
@@ -301,7 +315,10 @@ fn gep_2257(text: &str) -> f64 {
 fn source_constants() {
     let folder = folder();
     let rust = shipped(folder.path(), "timeouts.rs.j2");
-    assert!(rust.contains("pub const CATALOGUE_LOOKUP: Option<Duration> = Some(Duration::from_millis(400));"), "{rust}");
+    assert!(
+        rust.contains("pub const CATALOGUE_LOOKUP: Option<Duration> = Some(Duration::from_millis(400));"),
+        "{rust}"
+    );
     assert!(rust.contains("pub const HELPDESK_CALL: Option<Duration> = None;"), "{rust}");
     let python = shipped(folder.path(), "timeouts.py.j2");
     fs::write(folder.path().join("timeouts.py"), python).unwrap();

@@ -434,6 +434,9 @@ fn every_key_is_read() {
             Section::Backoff => {
                 format!("version: 1\nstreams: [{{retry: {{backoff: {{{}: '%'}}}}}}]\n", key.name)
             }
+            Section::Weekly => {
+                format!("version: 1\nstreams: [{{match: a}}]\nweekly: {{{}: '%'}}\n", key.name)
+            }
             section => format!("version: 1\nstreams: [{{{}: {{{}: '%'}}}}]\n", section.path(), key.name),
         };
         let error = parse(&text, "p").unwrap_err();
@@ -453,6 +456,10 @@ fn every_example_is_fit() {
         let (name, example) = (key.name, key.example);
         let mut entry = match key.section {
             Section::File => continue,
+            Section::Weekly => {
+                read(&format!("version: 1\nstreams: [{{match: a}}]\nweekly: {{{name}: {example}}}\n"));
+                continue;
+            }
             Section::Entry => format!("{name}: {example}"),
             Section::Backoff => format!("retry: {{backoff: {{{name}: {example}}}}}"),
             section => format!("{}: {{{name}: {example}}}", section.path()),

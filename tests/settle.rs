@@ -29,7 +29,9 @@ fn lookups() -> String {
         let t = 0.05 * (u / (1.0 - u)).powf(1.0 / 1.5);
         let (elapsed, ending) = if t > 2.0 { (2.0, "gave_up") } else { (t, "done") };
         let at = 1_764_547_200.25 + f64::from(i * 149 % 400) * 60.0;
-        format!("{{\"stream\":\"catalogue.lookup\",\"elapsed\":{elapsed:.6},\"ending\":\"{ending}\",\"at\":{at}}}\n")
+        format!(
+            "{{\"stream\":\"catalogue.lookup\",\"elapsed\":{elapsed:.6},\"ending\":\"{ending}\",\"at\":{at}}}\n"
+        )
     };
     (0..400).map(line).collect()
 }
@@ -56,7 +58,8 @@ static ADVICE: LazyLock<String> = LazyLock::new(|| {
     let folder = tempfile::tempdir().unwrap();
     fs::write(folder.path().join("waits.ndjson"), lookups()).unwrap();
     fs::write(folder.path().join("policy.yaml"), POLICY).unwrap();
-    let (code, out, err) = run(folder.path(), &["weigh", "waits.ndjson", "--policy", "policy.yaml", "--format", "json"]);
+    let (code, out, err) =
+        run(folder.path(), &["weigh", "waits.ndjson", "--policy", "policy.yaml", "--format", "json"]);
     assert_eq!(code, 0, "{err}");
     out
 });
@@ -93,10 +96,8 @@ fn what_is_proposed_is_accepted_with_its_evidence_and_cautions() {
     assert_eq!(standing.give_up_after(), Some(GiveUp::After(1.0)));
     let grounds = standing.last.unwrap().grounds.as_ref().unwrap();
     assert_eq!((grounds.waits, grounds.in_force), (400, Some(GiveUp::After(2.0))));
-    let (_, json, _) = run(
-        folder.path(),
-        &["settle", "*", "--history", "--settled", "settled.yaml", "--format", "json"],
-    );
+    let (_, json, _) =
+        run(folder.path(), &["settle", "*", "--history", "--settled", "settled.yaml", "--format", "json"]);
     let json: Value = serde_json::from_str(&json).unwrap();
     assert_eq!(json["settled"][0]["decisions"][0]["state"], "accepted");
     assert_eq!(json["settled"][0]["decisions"][0]["by"], "Ada");
@@ -128,7 +129,9 @@ fn an_undo_is_a_decision_too() {
 #[test]
 fn what_is_against_a_guard_is_refused_by_its_name() {
     let folder = folder();
-    for (pin, guard) in [("30s", "floor: 1min"), ("3h", "ceiling: 2h"), ("40m", "largest_step"), ("never", "ceiling")] {
+    for (pin, guard) in
+        [("30s", "floor: 1min"), ("3h", "ceiling: 2h"), ("40m", "largest_step"), ("never", "ceiling")]
+    {
         let (code, out, err) = settle(folder.path(), &["scan.job", "--pin", pin]);
         assert_eq!((code, out.as_str()), (3, ""));
         assert!(err.contains("guard: ") && err.contains(guard), "{err}");
@@ -141,15 +144,31 @@ fn usage() {
     let folder = folder();
     for (arguments, code, told) in [
         (&["settle", "scan.job", "--settled", "s.yaml"][..], 2, "required"),
-        (&["settle", "scan.job", "--pin", "5", "--settled", "s.yaml", "--by", "A", "--why", "b"], 2, "no unit"),
+        (
+            &["settle", "scan.job", "--pin", "5", "--settled", "s.yaml", "--by", "A", "--why", "b"],
+            2,
+            "no unit",
+        ),
         (&["settle", "scan.job", "--refuse", "--settled", "s.yaml"], 2, "--by"),
         (&["settle", "scan.job", "--refuse", "--by", "A", "--why", "b"], 2, "--settled"),
         (&["settle", "scan.job", "--accept", "--by", "A", "--why", "b", "--settled", "s.yaml"], 2, "waits"),
-        (&["settle", "*.nothing", "--refuse", "--by", "A", "--why", "b", "--settled", "s.yaml"], 3, "no stream"),
+        (
+            &["settle", "*.nothing", "--refuse", "--by", "A", "--why", "b", "--settled", "s.yaml"],
+            3,
+            "no stream",
+        ),
         (&["settle", "a", "--postpone", "soon", "--by", "A", "--why", "b", "--settled", "s.yaml"], 2, "14d"),
-        (&["settle", "a", "--postpone", "2020-01-01", "--by", "A", "--why", "b", "--settled", "s.yaml"], 3, "ahead"),
+        (
+            &["settle", "a", "--postpone", "2020-01-01", "--by", "A", "--why", "b", "--settled", "s.yaml"],
+            3,
+            "ahead",
+        ),
         (&["settle", "a", "--history", "--settled", "none.yaml"], 3, "none.yaml"),
-        (&["settle", "a", "--refuse", "--by", "A", "--why", "b", "--settled", "no/where.yaml"], 5, "no/where.yaml"),
+        (
+            &["settle", "a", "--refuse", "--by", "A", "--why", "b", "--settled", "no/where.yaml"],
+            5,
+            "no/where.yaml",
+        ),
     ] {
         let (ended, _, err) = run(folder.path(), arguments);
         assert_eq!(ended, code, "{arguments:?}: {err}");
@@ -245,7 +264,8 @@ fn two_who_settle_at_once_lose_nothing() {
     let counts: Vec<usize> = settled.streams().map(|(_, history)| history.len()).collect();
     assert_eq!(counts, [4, 4, 4]);
     // Nothing else is left in the folder.
-    let mut names: Vec<_> = fs::read_dir(path).unwrap().map(|e| e.unwrap().file_name().into_string().unwrap()).collect();
+    let mut names: Vec<_> =
+        fs::read_dir(path).unwrap().map(|e| e.unwrap().file_name().into_string().unwrap()).collect();
     names.sort();
     assert_eq!(names, ["advice.json", "policy.yaml", "settled.yaml"]);
 }
@@ -267,7 +287,8 @@ fn mode_and_link_are_kept() {
 }
 
 fn state() -> impl Strategy<Value = State> {
-    let time = prop_oneof![Just(GiveUp::Never), (1u32..5_000_000).prop_map(|ms| GiveUp::After(f64::from(ms) / 1e3))];
+    let time =
+        prop_oneof![Just(GiveUp::Never), (1u32..5_000_000).prop_map(|ms| GiveUp::After(f64::from(ms) / 1e3))];
     prop_oneof![
         time.clone().prop_map(|give_up_after| State::Accepted { give_up_after }),
         time.prop_map(|give_up_after| State::Pinned { give_up_after }),

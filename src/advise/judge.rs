@@ -596,7 +596,8 @@ impl Settled {
     /// all are changed.
     fn proposal(&self, entry: &Entry, bounds: &Bounds, sight: f64) -> Option<Proposal> {
         let (now, regret) = self.now?;
-        let keep = Proposal { change: Change::Keep, to_s: finite(now.seconds()), step_limited: false, then: None };
+        let keep =
+            Proposal { change: Change::Keep, to_s: finite(now.seconds()), step_limited: false, then: None };
         let now = now.seconds();
         // What no wait has shown must promise twice as much.
         let unseen = self.at > sight && now < self.at;
@@ -615,7 +616,8 @@ impl Settled {
         };
         let step = entry.guard.largest_step;
         let proposal = |change, to: f64, step_limited| {
-            let then = self.objective(bounds).map(|objective| outcome(&objective, bounds.ceiling, finite(to)));
+            let then =
+                self.objective(bounds).map(|objective| outcome(&objective, bounds.ceiling, finite(to)));
             Proposal { change, to_s: finite(to), step_limited, then }
         };
         Some(match goal.partial_cmp(&now) {
@@ -624,9 +626,7 @@ impl Settled {
                 proposal(Change::Raise, goal.min(most), goal > most)
             }
             // From never there is no share to step by: the first step is to the time itself.
-            Some(std::cmp::Ordering::Less) if now.is_infinite() => {
-                proposal(Change::Lower, goal, false)
-            }
+            Some(std::cmp::Ordering::Less) if now.is_infinite() => proposal(Change::Lower, goal, false),
             Some(std::cmp::Ordering::Less) => {
                 let least = now * (1.0 - step).max(0.0);
                 proposal(Change::Lower, goal.max(least), goal < least)

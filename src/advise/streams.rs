@@ -211,11 +211,13 @@ impl Terms<'_> {
         let called: Vec<Vec<usize>> =
             entries.iter().map(|entry| entry.calls.iter().filter_map(|name| place(name)).collect()).collect();
         let in_force = |i: usize| entries[i].now.map_or(f64::INFINITY, GiveUp::seconds);
-        let found = early(&entries, &called, &in_force, &in_force).into_iter().filter_map(|(caller, callee, found)| {
-            let ChainFinding::LeavesEarly { leaves, ends, attempts, .. } = found else { return None };
-            let (caller, callee) = (streams[caller].to_owned(), streams[callee].to_owned());
-            Some(EarlyLeave { caution: leaves_first(&callee, leaves, ends, attempts), caller, callee })
-        });
+        let found = early(&entries, &called, &in_force, &in_force).into_iter().filter_map(
+            |(caller, callee, found)| {
+                let ChainFinding::LeavesEarly { leaves, ends, attempts, .. } = found else { return None };
+                let (caller, callee) = (streams[caller].to_owned(), streams[callee].to_owned());
+                Some(EarlyLeave { caution: leaves_first(&callee, leaves, ends, attempts), caller, callee })
+            },
+        );
         found.collect()
     }
 }

@@ -79,7 +79,8 @@ impl Basis {
                 return Err(Failure::new(Exit::Usage, anyhow!("both waits and an advice are named"))
                     .with_remedy("name either"));
             }
-            set.streams.retain(|advice| common.stream.as_ref().is_none_or(|glob| glob.matches(&advice.stream)));
+            set.streams
+                .retain(|advice| common.stream.as_ref().is_none_or(|glob| glob.matches(&advice.stream)));
             return Ok(Weighed { set, told: HashMap::new() });
         }
         if waits.is_empty() {
@@ -100,11 +101,14 @@ impl Basis {
 
     /// A question to the daemon.
     pub(super) fn ask(&self, path: &str) -> Result<Vec<u8>, Failure> {
-        let Some(address) = &self.from else { return Err(Failure::new(Exit::Usage, anyhow!("no daemon is named"))) };
+        let Some(address) = &self.from else {
+            return Err(Failure::new(Exit::Usage, anyhow!("no daemon is named")));
+        };
         let token = self.token_file.as_deref().map(read_token).transpose().or_exit(Exit::BadInput)?;
-        get(address, path, token.as_ref())
-            .with_context(|| format!("{address}{path}"))
-            .map_err(|error| Failure::new(Exit::System, error).with_remedy("see that the daemon runs there and takes the token"))
+        get(address, path, token.as_ref()).with_context(|| format!("{address}{path}")).map_err(|error| {
+            Failure::new(Exit::System, error)
+                .with_remedy("see that the daemon runs there and takes the token")
+        })
     }
 }
 
@@ -118,7 +122,8 @@ fn weigh<T: Send>(
 ) -> Weighed<T> {
     let streams = book.streams();
     // Windows are counted back from the newest wait of all that was read.
-    let newest = report.newest.map(|newest| common.until.map_or(newest, |until| newest.min(until.next_down())));
+    let newest =
+        report.newest.map(|newest| common.until.map_or(newest, |until| newest.min(until.next_down())));
     let day = newest.and_then(|newest| match Day::of(Some(newest)) {
         Day::Number(day) => Some(day),
         Day::Undated => None,

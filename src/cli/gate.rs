@@ -71,7 +71,8 @@ impl GateArguments {
         times.extend(self.exported()?.into_iter().map(|(stream, time)| (stream, (time, "times"))));
         times.extend(self.time.iter().map(|(stream, time)| (stream.clone(), (*time, "--time"))));
         times.iter().for_each(|(stream, (time, _))| past.put_in_force(stream, *time));
-        let terms = Terms { policy: policy.as_ref(), newest: None, seed: self.common.seed, past: Some(&past) };
+        let terms =
+            Terms { policy: policy.as_ref(), newest: None, seed: self.common.seed, past: Some(&past) };
         let weighed = self.basis.weigh(&self.waits, policy.as_ref(), Some(&past), &self.common, |_| ())?;
         let advice = |stream: &str| weighed.set.streams.iter().find(|advice| advice.stream == stream);
         let chosen = |stream: &str| self.common.stream.as_ref().is_none_or(|glob| glob.matches(stream));
@@ -110,16 +111,17 @@ impl GateArguments {
     /// What a time loses: by the advice where that judged it, else by the daemon's word.
     fn regret(&self, advice: &crate::advice::Advice, time: GiveUp) -> Result<Option<f64>, Failure> {
         let seconds = time.seconds();
-        let same = judged_time(advice).is_some_and(|judged| {
-            judged == time || (judged.seconds() - seconds).abs() <= 1e-9 * seconds
-        });
+        let same = judged_time(advice)
+            .is_some_and(|judged| judged == time || (judged.seconds() - seconds).abs() <= 1e-9 * seconds);
         if same || self.basis.from.is_none() || advice.advice.give_up_after_s.is_none() {
             return Ok(advice.advice.regret_now.filter(|_| same));
         }
         let asked = if seconds.is_finite() { seconds.to_string() } else { "never".into() };
-        let answer = self.basis.ask(&format!("/v1/streams/{}/whatif?give_up_after={asked}", advice.stream))?;
-        let answer: WhatIf =
-            serde_json::from_slice(&answer).context("the daemon's answer is no judgement").or_exit(Exit::System)?;
+        let answer =
+            self.basis.ask(&format!("/v1/streams/{}/whatif?give_up_after={asked}", advice.stream))?;
+        let answer: WhatIf = serde_json::from_slice(&answer)
+            .context("the daemon's answer is no judgement")
+            .or_exit(Exit::System)?;
         Ok(Some(answer.expected_regret))
     }
 
@@ -153,7 +155,8 @@ fn judged_time(advice: &crate::advice::Advice) -> Option<GiveUp> {
 }
 
 fn stream_time(text: &str) -> Result<(String, GiveUp), String> {
-    let (stream, time) = text.split_once('=').ok_or("write STREAM=TIME, for instance catalogue.lookup=800ms")?;
+    let (stream, time) =
+        text.split_once('=').ok_or("write STREAM=TIME, for instance catalogue.lookup=800ms")?;
     crate::wait::check_stream(stream).map_err(|error| format!("{error}; {}", error.remedy()))?;
     let time = if say::parse_duration(time).is_err() && time != "never" {
         return Err(format!("{time:?} is no time; write 800ms, 2s or never"));

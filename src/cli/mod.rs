@@ -2,10 +2,10 @@
 
 mod basis;
 mod demo;
-mod export;
-mod gate;
 mod exit;
+mod export;
 mod files;
+mod gate;
 mod layout;
 mod ledger;
 mod options;

@@ -96,8 +96,9 @@ struct Told<'a> {
 impl Settle {
     pub(super) fn run(&self) -> Result<Exit, Failure> {
         let file = self.basis.settled.as_deref().ok_or_else(|| {
-            Failure::new(Exit::Usage, anyhow!("--settled FILE is needed"))
-                .with_remedy("name the file that keeps decisions, for instance settled.yaml; it is made if need be")
+            Failure::new(Exit::Usage, anyhow!("--settled FILE is needed")).with_remedy(
+                "name the file that keeps decisions, for instance settled.yaml; it is made if need be",
+            )
         })?;
         if self.history {
             return self.show(file);
@@ -107,13 +108,15 @@ impl Settle {
         }
         let at = match self.at {
             Some(at) => at,
-            None => Timestamp::from_second(basis::clock() as i64).map_err(|error| Failure::new(Exit::System, error))?,
+            None => Timestamp::from_second(basis::clock() as i64)
+                .map_err(|error| Failure::new(Exit::System, error))?,
         };
         let what = self.decision(at)?;
         let before = basis::settled(&files::read(file)?, file)?;
         let policy = self.common.load_policy()?;
         let past = before.past(at.as_second() as f64);
-        let looks = self.accept || !self.waits.is_empty() || self.basis.advice.is_some() || self.basis.from.is_some();
+        let looks =
+            self.accept || !self.waits.is_empty() || self.basis.advice.is_some() || self.basis.from.is_some();
         let advised = if looks {
             self.basis.weigh(&self.waits, policy.as_ref(), Some(&past), &self.common, |_| ())?.set.streams
         } else {
@@ -155,18 +158,25 @@ impl Settle {
 
     /// The streams that are meant, by name; each pattern must mean one.
     fn matched(&self, advised: &[Advice], settled: &Settled) -> Result<Vec<String>, Failure> {
-        let known: Vec<&str> =
-            advised.iter().map(|a| a.stream.as_str()).chain(settled.streams().map(|(stream, _)| stream)).collect();
+        let known: Vec<&str> = advised
+            .iter()
+            .map(|a| a.stream.as_str())
+            .chain(settled.streams().map(|(stream, _)| stream))
+            .collect();
         let mut streams = Vec::new();
         for glob in &self.streams {
             let before = streams.len();
             match glob.literal().filter(|name| advised.is_empty() || known.contains(name)) {
                 Some(name) => streams.push(name.to_owned()),
-                None => streams.extend(known.iter().filter(|name| glob.matches(name)).map(|name| (*name).to_owned())),
+                None => streams
+                    .extend(known.iter().filter(|name| glob.matches(name)).map(|name| (*name).to_owned())),
             }
             if streams.len() == before {
-                return Err(Failure::new(Exit::BadInput, anyhow!("no stream is called {:?}", glob.to_string()))
-                    .with_remedy("see `outwait weigh` for the streams that have waits"));
+                return Err(Failure::new(
+                    Exit::BadInput,
+                    anyhow!("no stream is called {:?}", glob.to_string()),
+                )
+                .with_remedy("see `outwait weigh` for the streams that have waits"));
             }
         }
         streams.sort_unstable();
@@ -198,10 +208,18 @@ impl Settle {
         Ok(Exit::Well)
     }
 
-    fn say(&self, taken: &[(String, Settlement)], advised: &[Advice], after: &Settled) -> Result<(), Failure> {
+    fn say(
+        &self,
+        taken: &[(String, Settlement)],
+        advised: &[Advice],
+        after: &Settled,
+    ) -> Result<(), Failure> {
         let cautions = |stream: &str, decision: &Settlement| {
             let advice = advised.iter().find(|advice| advice.stream == stream);
-            advice.filter(|_| decision.state.in_force().is_some()).map(|a| a.cautions.as_slice()).unwrap_or_default()
+            advice
+                .filter(|_| decision.state.in_force().is_some())
+                .map(|a| a.cautions.as_slice())
+                .unwrap_or_default()
         };
         let settled = taken.iter().map(|(stream, decision)| Told {
             stream,
@@ -218,7 +236,8 @@ impl Settle {
                 });
                 let _ = writeln!(text, "{stream}: {}; {now}", decisions[0].state.name());
                 for caution in *cautions {
-                    let _ = writeln!(text, "  ! {}: {}\n    -> {}", caution.code, caution.text, caution.remedy);
+                    let _ =
+                        writeln!(text, "  ! {}: {}\n    -> {}", caution.code, caution.text, caution.remedy);
                 }
             }
             text
@@ -238,7 +257,8 @@ fn line(text: &mut String, decision: &Settlement) {
     };
     let _ = writeln!(text, "  {at}  {what}, by {by}: {why}");
     if let Some(Grounds { waits, done, in_force, advised, proposed, loses, .. }) = grounds {
-        let mut parts = vec![format!("{} waits, {} done", say::count(*waits as f64), say::count(*done as f64))];
+        let mut parts =
+            vec![format!("{} waits, {} done", say::count(*waits as f64), say::count(*done as f64))];
         for (name, time) in [("in force", in_force), ("best", advised), ("proposed", proposed)] {
             parts.extend(time.map(|time| format!("{name} {}", say::duration(time.seconds()))));
         }

@@ -66,9 +66,9 @@ impl WeeklyArguments {
         let policy = self.common.load_policy()?;
         let settled = self.basis.settled()?;
         let past = settled.past(basis::clock());
-        let weighed =
-            self.basis.weigh(&self.waits, policy.as_ref(), Some(&past), &self.common, picture)?;
-        let terms = Terms { policy: policy.as_ref(), newest: None, seed: self.common.seed, past: Some(&past) };
+        let weighed = self.basis.weigh(&self.waits, policy.as_ref(), Some(&past), &self.common, picture)?;
+        let terms =
+            Terms { policy: policy.as_ref(), newest: None, seed: self.common.seed, past: Some(&past) };
         let mut week = weekly(&weighed.set, &settled, |stream| terms.entry(stream), None);
         if let Some(glob) = &self.common.stream {
             week.rest.retain(|row| glob.matches(&row.stream));
@@ -107,7 +107,10 @@ fn picture(study: &Study) -> Option<String> {
 }
 
 fn json(week: &Weekly) -> Result<String, Failure> {
-    serde_json::to_string_pretty(week).map(|json| json + "\n").context("cannot write JSON").or_exit(Exit::System)
+    serde_json::to_string_pretty(week)
+        .map(|json| json + "\n")
+        .context("cannot write JSON")
+        .or_exit(Exit::System)
 }
 
 fn all(folder: &Path, week: &Weekly, pictures: &HashMap<String, String>) -> Result<(), Failure> {

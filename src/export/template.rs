@@ -34,7 +34,8 @@ pub struct TemplateError {
 
 /// Renders a template over an export.
 ///
-/// Names: `streams`, `made_at`, `safety`, and `stream("catalogue.lookup")`. Filters: `seconds` (a decimal number),
+/// Names: `streams`, `made_at`, `safety`, and `stream("catalogue.lookup")`. Filters: `seconds` (a decimal number; `seconds(9)` with so many
+/// decimals),
 /// `milliseconds` (whole, rounded up), `round_up("10ms")`, `duration` (`1m30s500ms`, whole milliseconds, rounded up),
 /// `constant` (`CATALOGUE_LOOKUP`), `quoted` (a JSON string); of a stream, `attempts(default)` and `backoff(attempts)`.
 ///
@@ -74,7 +75,9 @@ pub fn render(template: &str, name: &str, export: &Export) -> Result<String, Tem
 
 fn add(environment: &mut Environment<'_>, export: &Export) {
     use minijinja::filters;
-    environment.add_filter("seconds", |value: Value| seconds(&value).map(|s| decimal(s)));
+    environment.add_filter("seconds", |value: Value, decimals: Option<usize>| {
+        seconds(&value).map(|s| decimals.map_or_else(|| decimal(s), |n| format!("{s:.*}", n.min(9))))
+    });
     environment.add_filter("milliseconds", |value: Value| Ok::<_, Error>(whole_ms(seconds(&value)?)));
     environment.add_filter("round_up", round_up);
     environment.add_filter("duration", |value: Value| Ok::<_, Error>(duration(seconds(&value)?)));
@@ -147,7 +150,8 @@ fn whole_ms(seconds: f64) -> u64 {
 
 fn round_up(value: Value, unit: String) -> Result<f64, Error> {
     let length = say::parse_duration(&unit).ok().filter(|length| *length > 0.0);
-    let length = length.ok_or_else(|| refuse(format!("{unit:?} is not a unit to round up to; write round_up(\"10ms\")")))?;
+    let length = length
+        .ok_or_else(|| refuse(format!("{unit:?} is not a unit to round up to; write round_up(\"10ms\")")))?;
     let times = (seconds(&value)? / length - 1e-9).ceil();
     // By division where the unit is a share of a second, so that 0.3 is 3 tenths and not 0.30000000000000004.
     let per_second = (1.0 / length).round();
@@ -160,8 +164,7 @@ fn round_up(value: Value, unit: String) -> Result<f64, Error> {
 fn duration(seconds: f64) -> String {
     let ms = whole_ms(seconds);
     let parts = [(ms / 3_600_000, "h"), (ms / 60_000 % 60, "m"), (ms / 1_000 % 60, "s"), (ms % 1_000, "ms")];
-    let text: String =
-        parts.iter().filter(|(n, _)| *n > 0).map(|(n, unit)| format!("{n}{unit}")).collect();
+    let text: String = parts.iter().filter(|(n, _)| *n > 0).map(|(n, unit)| format!("{n}{unit}")).collect();
     if text.is_empty() { "0s".into() } else { text }
 }
 
@@ -175,7 +178,10 @@ fn one(value: &Value) -> Result<Stream, Error> {
 fn attempts(value: Value, most: Option<u32>) -> Result<u32, Error> {
     let one = one(&value)?;
     one.attempts.or(most).ok_or_else(|| {
-        refuse(format!("{} has no cap on attempts; write `attempts(3)` for one where there is none", one.stream))
+        refuse(format!(
+            "{} has no cap on attempts; write `attempts(3)` for one where there is none",
+            one.stream
+        ))
     })
 }
 
@@ -194,7 +200,10 @@ fn refusal(error: &Error, template: &str, name: &str, export: &Export) -> Templa
         None => 1,
     };
     let detail = error.detail().map(str::to_owned);
-    let names = || "the names are streams, made_at, safety and stream(\"NAME\"); of a stream, those of `outwait export`".into();
+    let names = || {
+        "the names are streams, made_at, safety and stream(\"NAME\"); of a stream, those of `outwait export`"
+            .into()
+    };
     let (what, remedy) = match error.kind() {
         ErrorKind::UndefinedError => {
             let word = error.range().and_then(|range| template.get(range)).unwrap_or("a name");

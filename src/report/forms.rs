@@ -60,7 +60,8 @@ fn title(week: &Weekly) -> String {
 
 /// A row in words.
 fn shown(row: &Row) -> Value {
-    let fields: Vec<[String; 2]> = details(row).into_iter().map(|(name, value)| [name.to_owned(), value]).collect();
+    let fields: Vec<[String; 2]> =
+        details(row).into_iter().map(|(name, value)| [name.to_owned(), value]).collect();
     context! {
         stream => row.stream.clone(),
         kind => row.kind.clone(),
@@ -96,7 +97,10 @@ fn plus(value: f64) -> &'static str {
 /// What is known of a row, a line each.
 fn details(row: &Row) -> Vec<(&'static str, String)> {
     let span = |[low, high]: [f64; 2]| format!("{} to {}", say::duration(low), say::duration(high));
-    let mut lines = vec![("Evidence", format!("{} waits, {} done", say::count(row.waits as f64), say::count(row.done as f64)))];
+    let mut lines = vec![(
+        "Evidence",
+        format!("{} waits, {} done", say::count(row.waits as f64), say::count(row.done as f64)),
+    )];
     if let Some(best) = row.advised_s {
         let best = match best {
             GiveUp::After(seconds) => say::duration(seconds),
@@ -110,7 +114,10 @@ fn details(row: &Row) -> Vec<(&'static str, String)> {
         lines.push(("Time in force loses", say::percent(loses)));
     }
     if let (Some(mean), Some(high)) = (row.expected_regret, row.regret_95) {
-        lines.push(("Expected loss of the best", format!("{} (95%: {})", say::percent(mean), say::percent(high))));
+        lines.push((
+            "Expected loss of the best",
+            format!("{} (95%: {})", say::percent(mean), say::percent(high)),
+        ));
     }
     if let (Some(now), Some(then)) = (row.attempts_now, row.attempts_then) {
         lines.push(("Attempts per request", format!("{} now, {} then", say::number(now), say::number(then))));
@@ -138,7 +145,10 @@ pub fn markdown(week: &Weekly) -> String {
     if !week.rest.is_empty() {
         let _ = write!(text, "\n<details>\n<summary>The other {} streams</summary>\n", week.rest.len());
         table(&mut text, &week.rest);
-        week.rest.iter().filter(|row| !row.cautions.is_empty() || !row.changed.is_empty()).for_each(|row| section(&mut text, row));
+        week.rest
+            .iter()
+            .filter(|row| !row.cautions.is_empty() || !row.changed.is_empty())
+            .for_each(|row| section(&mut text, row));
         text += "\n</details>\n";
     }
     text += "\n## Before you sign\n\n";
@@ -149,7 +159,9 @@ pub fn markdown(week: &Weekly) -> String {
 }
 
 fn table(text: &mut String, rows: &[Row]) {
-    text.push_str("\n| stream | do | from | to | worth | saves | loses now |\n|---|---|---:|---:|---:|---:|---:|\n");
+    text.push_str(
+        "\n| stream | do | from | to | worth | saves | loses now |\n|---|---|---:|---:|---:|---:|---:|\n",
+    );
     for row in rows {
         let loses = row.loses.map_or("-".into(), say::percent);
         let _ = writeln!(
@@ -166,7 +178,8 @@ fn table(text: &mut String, rows: &[Row]) {
 }
 
 fn section(text: &mut String, row: &Row) {
-    let _ = writeln!(text, "\n### {}\n\n{}: {}.", code(&row.stream), row.verdict.words(), plain(&row.because));
+    let _ =
+        writeln!(text, "\n### {}\n\n{}: {}.", code(&row.stream), row.verdict.words(), plain(&row.because));
     text.push('\n');
     for (name, value) in details(row) {
         let _ = writeln!(text, "- {name}: {}", plain(&value));
@@ -174,7 +187,13 @@ fn section(text: &mut String, row: &Row) {
     row.folded.iter().for_each(|why| _ = writeln!(text, "- Not to be signed now: {}", plain(why)));
     row.changed.iter().for_each(|line| _ = writeln!(text, "- Changed: {}", plain(line)));
     for caution in &row.cautions {
-        let _ = writeln!(text, "- **{}**: {}; {}", code(&caution.code), plain(&caution.text), plain(&caution.remedy));
+        let _ = writeln!(
+            text,
+            "- **{}**: {}; {}",
+            code(&caution.code),
+            plain(&caution.text),
+            plain(&caution.remedy)
+        );
     }
 }
 
@@ -206,8 +225,22 @@ fn plain(text: &str) -> String {
 pub fn csv(week: &Weekly) -> Result<String, FormError> {
     let mut table = csv::Writer::from_writer(Vec::new());
     table.write_record([
-        "stream", "kind", "verdict", "sign", "old_s", "new_s", "advised_s", "worth_per_day", "hours_per_day", "loses",
-        "expected_regret", "attempts_now", "attempts_then", "waits", "done", "cautions",
+        "stream",
+        "kind",
+        "verdict",
+        "sign",
+        "old_s",
+        "new_s",
+        "advised_s",
+        "worth_per_day",
+        "hours_per_day",
+        "loses",
+        "expected_regret",
+        "attempts_now",
+        "attempts_then",
+        "waits",
+        "done",
+        "cautions",
     ])?;
     let rows = week.sign.iter().map(|row| (true, row)).chain(week.rest.iter().map(|row| (false, row)));
     for (sign, row) in rows {

@@ -3,12 +3,14 @@
 
 mod forms;
 mod row;
+mod schedule;
 
 use jiff::Timestamp;
 use serde::Serialize;
 
 pub use forms::{FormError, csv, html, markdown};
 pub use row::{Row, Sign, Verdict};
+pub use schedule::{Schedule, ScheduleError};
 
 use crate::advice::AdviceSet;
 use crate::export::{RETRIES, SAFETY};
@@ -41,12 +43,18 @@ pub struct Weekly {
 
 /// Makes the week's recommendations. `entry`: the policy's word on a stream, with the time in force. `now`: when the week is
 /// looked at, which decides what was postponed beyond it; the data's end where the answer shall not depend on the clock.
-pub fn weekly(set: &AdviceSet, settled: &Settled, entry: impl Fn(&str) -> Entry, now: Option<Timestamp>) -> Weekly {
+pub fn weekly(
+    set: &AdviceSet,
+    settled: &Settled,
+    entry: impl Fn(&str) -> Entry,
+    now: Option<Timestamp>,
+) -> Weekly {
     let until = set.made_at.as_deref().and_then(|time| time.parse::<Timestamp>().ok());
     let now = now.or(until);
-    let advised = set.streams.iter().map(|advice| {
-        Row::of(advice, &entry(&advice.stream), settled.standing(&advice.stream), now, until)
-    });
+    let advised = set
+        .streams
+        .iter()
+        .map(|advice| Row::of(advice, &entry(&advice.stream), settled.standing(&advice.stream), now, until));
     let vanished = settled
         .streams()
         .filter(|(stream, _)| set.streams.iter().all(|advice| advice.stream != *stream))
@@ -74,7 +82,8 @@ pub fn weekly(set: &AdviceSet, settled: &Settled, entry: impl Fn(&str) -> Entry,
         rest,
         cautions: [
             format!("Retries make load: {}; {}.", RETRIES.0, RETRIES.1),
-            "Work that must not be done twice: retry only what is idempotent or was cancelled for certain.".into(),
+            "Work that must not be done twice: retry only what is idempotent or was cancelled for certain."
+                .into(),
             SAFETY.into(),
         ],
     }
@@ -96,7 +105,10 @@ impl Weekly {
         }
         let hours: f64 = self.sign.iter().filter_map(|row| row.hours_per_day).sum();
         let sum = match hours > 0.0 {
-            true => format!(" What is ready to sign would save {} of waiting a day.", crate::say::duration(3600.0 * hours)),
+            true => format!(
+                " What is ready to sign would save {} of waiting a day.",
+                crate::say::duration(3600.0 * hours)
+            ),
             false => String::new(),
         };
         format!("{} streams: {}.{sum}", all().count(), parts.join(", "))

@@ -185,7 +185,9 @@ impl Row {
             expected_regret: decision.expected_regret,
             regret_95: decision.regret_95,
             attempts_now: now_does.and_then(|o| o.attempts_per_request),
-            attempts_then: then.map_or(decision.attempts_per_request, |o| o.attempts_per_request).filter(|_| verdict.changes()),
+            attempts_then: then
+                .map_or(decision.attempts_per_request, |o| o.attempts_per_request)
+                .filter(|_| verdict.changes()),
             waits: evidence.waits,
             done: evidence.done,
             changed,
@@ -222,7 +224,9 @@ impl Row {
             attempts_then: None,
             waits: 0,
             done: 0,
-            changed: vec!["the stream has vanished: was it renamed, or does nothing record it any more?".into()],
+            changed: vec![
+                "the stream has vanished: was it renamed, or does nothing record it any more?".into(),
+            ],
             settled: Some(Sign {
                 state: last.state.name(),
                 at: last.at.to_string(),
@@ -288,9 +292,12 @@ fn moved(standing: Standing<'_>, advised: Option<GiveUp>, band: Option<[f64; 2]>
 fn folded(standing: Standing<'_>, advised: Option<GiveUp>, now: Option<Timestamp>) -> Option<String> {
     let last = standing.last?;
     match last.state {
-        State::Pinned { give_up_after } => {
-            Some(format!("{} is pinned by {}: {}", say::exact_duration(give_up_after.seconds()), last.by, last.why))
-        }
+        State::Pinned { give_up_after } => Some(format!(
+            "{} is pinned by {}: {}",
+            say::exact_duration(give_up_after.seconds()),
+            last.by,
+            last.why
+        )),
         State::Postponed { until } if now.is_none_or(|now| now < until) => {
             Some(format!("postponed until {until} by {}: {}", last.by, last.why))
         }

@@ -213,8 +213,12 @@ impl Adviser {
     fn advise(&mut self, stream: &str) -> Result<bool, LedgerError> {
         let shared = Arc::clone(&self.shared);
         let policy = shared.policy();
-        let terms =
-            Terms { policy: policy.as_deref(), newest: Some(shared.today()), seed: shared.config.seed, past: None };
+        let terms = Terms {
+            policy: policy.as_deref(),
+            newest: Some(shared.today()),
+            seed: shared.config.seed,
+            past: None,
+        };
         let entry = terms.entry(stream);
         let days = shared.days(&*self.reader, stream, terms.opening(&entry))?;
         if days.days().is_empty() {

@@ -194,7 +194,12 @@ impl Shared {
     /// Some advice as one document, with the cautions that only the chain of calls shows.
     pub(super) fn set_of(&self, some: &[Arc<Fresh>]) -> AdviceSet {
         let policy = self.policy();
-        let terms = Terms { policy: policy.as_deref(), newest: Some(self.today()), seed: self.config.seed, past: None };
+        let terms = Terms {
+            policy: policy.as_deref(),
+            newest: Some(self.today()),
+            seed: self.config.seed,
+            past: None,
+        };
         let newest = some.iter().map(|fresh| fresh.made_at).reduce(f64::max);
         terms.set(some.iter().map(|fresh| fresh.advice.clone()).collect(), newest.and_then(say::time))
     }

@@ -197,8 +197,7 @@ fn within_guards(stream: &str, time: GiveUp, entry: &Entry, accepted: bool) -> R
         let up = seconds > now * (1.0 + guard.largest_step) * (1.0 + slightly);
         let down = seconds < now * (1.0 - guard.largest_step) * (1.0 - slightly);
         if up || down {
-            let bound =
-                format!("{} from {}", say::percent(guard.largest_step), say::exact_duration(now));
+            let bound = format!("{} from {}", say::percent(guard.largest_step), say::exact_duration(now));
             return against("largest_step", bound);
         }
     }
@@ -212,8 +211,14 @@ mod tests {
     #[test]
     fn up_never_down() {
         let entry = Entry::without_policy();
-        for (seconds, rounded) in [(0.076_512, 0.0766), (0.4, 0.4), (1.0, 1.0), (1234.5, 1240.0), (0.0999, 0.0999)] {
-            assert!((round_up(seconds, &entry) - rounded).abs() < 1e-9, "{seconds} {}", round_up(seconds, &entry));
+        for (seconds, rounded) in
+            [(0.076_512, 0.0766), (0.4, 0.4), (1.0, 1.0), (1234.5, 1240.0), (0.0999, 0.0999)]
+        {
+            assert!(
+                (round_up(seconds, &entry) - rounded).abs() < 1e-9,
+                "{seconds} {}",
+                round_up(seconds, &entry)
+            );
         }
         let mut entry = entry;
         entry.guard.ceiling = Some(0.0765);

@@ -197,7 +197,13 @@ mod tests {
 
     fn settlement(state: State, at: &str) -> Settlement {
         let grounds = Grounds { advised: Some(GiveUp::After(2.0)), ..Grounds::default() };
-        Settlement { state, at: at.parse().unwrap(), by: "Ada".into(), why: "".into(), grounds: Some(grounds) }
+        Settlement {
+            state,
+            at: at.parse().unwrap(),
+            by: "Ada".into(),
+            why: "".into(),
+            grounds: Some(grounds),
+        }
     }
 
     #[test]
@@ -212,7 +218,10 @@ mod tests {
         assert_eq!(settled.standing("desk").give_up_after(), Some(GiveUp::After(4.0)));
         settled.add("desk", settlement(State::Refused, "2026-11-16T10:00:00Z"));
         let standing = settled.standing("desk");
-        assert_eq!((standing.give_up_after(), standing.last.unwrap().state), (Some(GiveUp::After(4.0)), State::Refused));
+        assert_eq!(
+            (standing.give_up_after(), standing.last.unwrap().state),
+            (Some(GiveUp::After(4.0)), State::Refused)
+        );
         let ten_days_later = "2026-11-12T10:00:00Z".parse::<Timestamp>().unwrap().as_second() as f64;
         let before = settled.past(ten_days_later).of("desk");
         assert_eq!(before.history, History { standing: Some(2.0), since_change: Some(864_000.0) });

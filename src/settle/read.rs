@@ -117,7 +117,11 @@ impl Reader {
             Value::Map(streams) => streams.as_slice(),
             _ if streams.value.is_null() => &[],
             _ => {
-                self.told(streams.value.at, "`streams` holds no map", "write a stream's name and its list below it");
+                self.told(
+                    streams.value.at,
+                    "`streams` holds no map",
+                    "write a stream's name and its list below it",
+                );
                 return None;
             }
         };
@@ -126,7 +130,11 @@ impl Reader {
                 self.told(*at, format!("`{}` names no stream: {error}", shown(key)), error.remedy());
             }
             let Value::List(items) = &value.value else {
-                self.told(value.at, format!("`{key}` holds no list of decisions"), "write `- state: accepted` and its keys below it");
+                self.told(
+                    value.at,
+                    format!("`{key}` holds no list of decisions"),
+                    "write `- state: accepted` and its keys below it",
+                );
                 continue;
             };
             let history: Vec<Settlement> = items.iter().filter_map(|item| self.decision(item)).collect();
@@ -141,7 +149,11 @@ impl Reader {
 
     fn map<'t>(&mut self, node: &'t Node, keys: &[&'static str], what: &str) -> Option<&'t [Pair]> {
         let Value::Map(pairs) = &node.value else {
-            self.told(node.at, format!("{what} holds no map of keys"), format!("write keys below it: {}", keys.join(", ")));
+            self.told(
+                node.at,
+                format!("{what} holds no map of keys"),
+                format!("write keys below it: {}", keys.join(", ")),
+            );
             return None;
         };
         for pair in pairs.iter().filter(|pair| !keys.contains(&pair.key.as_str())) {
@@ -173,7 +185,11 @@ impl Reader {
         let (at, text) = self.text(pairs, at, key)?;
         let time = text.parse().ok();
         if time.is_none() {
-            self.told(at, format!("`{}` is not a time", shown(text)), format!("write for instance `{key}: 2026-11-30T10:00:00Z`"));
+            self.told(
+                at,
+                format!("`{}` is not a time", shown(text)),
+                format!("write for instance `{key}: 2026-11-30T10:00:00Z`"),
+            );
         }
         time
     }
@@ -185,7 +201,13 @@ impl Reader {
 
     fn duration(&mut self, at: Place, text: &str, key: &str) -> Option<GiveUp> {
         scalar::give_up(text)
-            .map_err(|flaw| self.told(at, format!("{key}: {flaw}"), format!("write for instance `{key}: 800ms`, or `never`")))
+            .map_err(|flaw| {
+                self.told(
+                    at,
+                    format!("{key}: {flaw}"),
+                    format!("write for instance `{key}: 800ms`, or `never`"),
+                )
+            })
             .ok()
     }
 
@@ -199,7 +221,11 @@ impl Reader {
         let (uses_time, uses_until) = (matches!(state, "accepted" | "pinned"), state == "postponed");
         for (key, used) in [("give_up_after", uses_time), ("until", uses_until)] {
             if let Some(pair) = find(pairs, key).filter(|_| !used) {
-                self.told(pair.at, format!("`{key}` says nothing where the state is {}", shown(state)), "remove it, or correct the state");
+                self.told(
+                    pair.at,
+                    format!("`{key}` says nothing where the state is {}", shown(state)),
+                    "remove it, or correct the state",
+                );
             }
         }
         let state = match state {
@@ -210,7 +236,9 @@ impl Reader {
             "undone" => State::Undone,
             other => {
                 let remedy = nearest(other, STATES.into_iter())
-                    .map_or(format!("the states are {}", STATES.join(", ")), |near| format!("did you mean `{near}`?"));
+                    .map_or(format!("the states are {}", STATES.join(", ")), |near| {
+                        format!("did you mean `{near}`?")
+                    });
                 self.told(place, format!("`{}` is not a state", shown(other)), remedy);
                 return None;
             }
@@ -224,7 +252,11 @@ impl Reader {
             let (at, text) = self.text(pairs, node.at, key)?;
             let number = text.parse().ok();
             if number.is_none() {
-                self.told(at, format!("`{}` is not a number of waits", shown(text)), format!("write `{key}` as a whole number"));
+                self.told(
+                    at,
+                    format!("`{}` is not a number of waits", shown(text)),
+                    format!("write `{key}` as a whole number"),
+                );
             }
             number
         };
@@ -236,13 +268,18 @@ impl Reader {
         let mut time = |key: &str| find(pairs, key).and_then(|_| self.give_up(pairs, node.at, key));
         let (in_force, advised, proposed) = (time("in_force"), time("advised"), time("proposed"));
         let band = find(pairs, "band").and_then(|pair| self.band(&pair.value));
-        let loses = find(pairs, "loses").and_then(|_| self.text(pairs, node.at, "loses")).and_then(|(at, text)| {
-            let share = text.parse::<f64>().ok().filter(|share| share.is_finite());
-            if share.is_none() {
-                self.told(at, format!("`{}` is not a share", shown(text)), "write for instance `loses: 0.05`");
-            }
-            share
-        });
+        let loses =
+            find(pairs, "loses").and_then(|_| self.text(pairs, node.at, "loses")).and_then(|(at, text)| {
+                let share = text.parse::<f64>().ok().filter(|share| share.is_finite());
+                if share.is_none() {
+                    self.told(
+                        at,
+                        format!("`{}` is not a share", shown(text)),
+                        "write for instance `loses: 0.05`",
+                    );
+                }
+                share
+            });
         let (from, to) = (text("from"), text("to"));
         Some(Grounds { waits: waits?, done: done?, from, to, in_force, advised, proposed, band, loses })
     }

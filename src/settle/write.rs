@@ -117,7 +117,10 @@ fn rough(seconds: f64) -> String {
 fn name(stream: &str) -> String {
     let plain = stream.starts_with(|c: char| c.is_ascii_alphabetic())
         && stream.chars().all(|c| c.is_ascii_alphanumeric() || matches!(c, '.' | '_' | '-' | '/'))
-        && !matches!(stream.to_ascii_lowercase().as_str(), "true" | "false" | "null" | "yes" | "no" | "on" | "off" | "y" | "n");
+        && !matches!(
+            stream.to_ascii_lowercase().as_str(),
+            "true" | "false" | "null" | "yes" | "no" | "on" | "off" | "y" | "n"
+        );
     if plain { stream.to_owned() } else { quoted(stream) }
 }
 

@@ -95,7 +95,12 @@ pub(super) async fn ask(
 /// Weighs the stream anew, from what the ledger holds now.
 fn study(shared: &Arc<Shared>, stream: &str) -> Result<Study, Problem> {
     let policy = shared.policy();
-    let terms = Terms { policy: policy.as_deref(), newest: Some(shared.today()), seed: shared.config.seed, past: None };
+    let terms = Terms {
+        policy: policy.as_deref(),
+        newest: Some(shared.today()),
+        seed: shared.config.seed,
+        past: None,
+    };
     let opening = terms.opening(&terms.entry(stream));
     let days = shared
         .ask(|reader| shared.days(reader, stream, opening))
