@@ -334,7 +334,15 @@ fn odd_data_are_told_and_survived() {
         };
         wait.with_at(*at).unwrap()
     });
-    replay(&log(mixed), POLICY);
+    assert!(!replay(&log(mixed), POLICY).rules.is_empty());
+    // Every wait watched only from late on: nobody was seen to begin.
+    let late = data.iter().map(|(at, age)| {
+        Wait::new(5.0 + age, Ending::Done).unwrap().with_entered(4.9).unwrap().with_at(*at).unwrap()
+    });
+    assert!(!replay(&log(late), POLICY).rules.is_empty());
+    // Nothing but failures: nothing to earn.
+    let failed = data.iter().map(|(at, age)| Wait::new(*age, Ending::Failed).unwrap().with_at(*at).unwrap());
+    assert_eq!(replay(&log(failed), POLICY).finding, "no rule earned anything");
 }
 
 #[test]

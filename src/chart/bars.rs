@@ -130,6 +130,7 @@ fn replay_title(unit: &Spoken, bars: &[Bar<'_>]) -> String {
     };
     let name = match other.role {
         Role::InForce => "the time in force".into(),
+        _ if other.name == "never" => "never giving up".into(),
         _ => named(other.name),
     };
     let overlap = ours.interval.zip(other.interval).is_some_and(|(a, b)| a[0] <= b[1] && b[0] <= a[1]);

@@ -5,7 +5,7 @@
 //!
 //! What a rule with one give-up time earns on a week is a function of that week's counts, so nothing but these is kept. Only
 //! RFC 6298 moves with every wait; its timer runs along while the log is filled, and what it makes of each wait is counted
-//! beside. Old timeouts hide ends: see [`earn`](self) and `hidden_share`.
+//! beside. Old timeouts hide ends: see `earn.rs` and [`RuleReplay::hidden_share`].
 
 mod earn;
 mod gather;

@@ -165,7 +165,7 @@ mod tests {
         let day = |from: u32| -> Vec<Wait> { (from..from + 20).map(wait).chain([late]).collect() };
         let days = [day(0), day(20), day(40)];
         let whole: Vec<Wait> = days.iter().flatten().copied().collect();
-        let cells: Vec<Cells> = days.iter().map(|d| Cells::from_waits(d)).collect();
+        let cells: Vec<Cells> = days.iter().map(Cells::from_waits).collect();
         let whole = Cells::from_waits(&whole);
         for by_rule in [false, true] {
             let exact = if by_rule { Steps::of_rule(&whole) } else { Steps::of(&whole) }.unwrap();

@@ -75,14 +75,14 @@ impl Contender {
 /// A period with what every contender did on it.
 struct Fold {
     period: Period,
-    /// Attempts begun in it.
-    begun: f64,
+    /// Attempts that were over in it.
+    over: f64,
     prices: Prices,
     ceiling: f64,
     /// Give-up times, s; infinite for the timer's.
     times: Vec<f64>,
     did: Vec<Did>,
-    /// Attempts begun on each of its days.
+    /// Attempts that were over on each of its days.
     days: Vec<f64>,
     sheet: Sheet,
     timed: Option<Sheet>,
@@ -187,7 +187,7 @@ impl Roll<'_> {
         let learning = days.where_day(|day| matches!(day, Day::Number(n) if opening <= n && n < first));
         let within = |day: Day| calendar.period(day) == Some(period);
         let whole = days.where_day(within).first_attempts().before_gap(ENOUGH);
-        let steps = Steps::of(&whole).ok().filter(|steps| !steps.steps.is_empty())?;
+        let steps = Steps::of(&whole).ok().filter(|steps| !steps.steps.is_empty() && over(&whole) > 0.0)?;
         let lesson = Lesson::of(stream, entry, &learning, self.seed)?;
         let ceiling = lesson.ceiling;
         let prices = lesson.prices;
@@ -236,12 +236,12 @@ impl Roll<'_> {
                 learnt_from: learning.first_attempts().total() as u64,
                 advised: lesson.advice.is_some(),
             },
-            begun: begun(&whole),
+            over: over(&whole),
             prices,
             ceiling,
             times,
             did,
-            days: each.iter().map(begun).collect(),
+            days: each.iter().map(over).collect(),
             sheet: Sheet::of(&each, &whole, steps.last, false),
             timed: timed_steps.map(|steps| Sheet::of(&timed_each, &timed_whole, steps.last, true)),
         })
@@ -250,12 +250,12 @@ impl Roll<'_> {
     /// Adds up the periods, with the doubt of both each rule and the lead of ours.
     fn judge(&self, stream: &str, aim: Aim, contenders: &[Contender], folds: &[Fold]) -> Vec<RuleReplay> {
         let rates: Vec<[f64; 2]> = (0..contenders.len())
-            .map(|c| pooled(folds.iter().map(|fold| (fold.begun, fold.did[c].earned)), aim))
+            .map(|c| pooled(folds.iter().map(|fold| (fold.over, fold.did[c].earned)), aim))
             .collect();
         let known: Vec<Option<f64>> = rates.iter().map(|r| known(*r)).collect();
         let (centres, draws) = redraw(aim, contenders, folds, self.seed ^ name_hash(stream));
-        let begun: f64 = folds.iter().map(|fold| fold.begun).sum();
-        let mean = |read: &dyn Fn(&Fold) -> f64| folds.iter().map(|f| f.begun * read(f)).sum::<f64>() / begun;
+        let over: f64 = folds.iter().map(|fold| fold.over).sum();
+        let mean = |read: &dyn Fn(&Fold) -> f64| folds.iter().map(|f| f.over * read(f)).sum::<f64>() / over;
         contenders
             .iter()
             .enumerate()
@@ -293,9 +293,10 @@ fn never(contender: Contender) -> bool {
     matches!(contender, Contender::Advice | Contender::InForce(_) | Contender::Rule(Rule::Never))
 }
 
-/// Attempts that began in a period: those that ended or were left open in it, less those that came in under way.
-fn begun(cells: &Cells) -> f64 {
-    (cells.total() - cells.entries.iter().map(|m| m.weight).sum::<f64>()).max(0.0)
+/// Attempts that were over in a period. How many began is not known where watching began late; in the long run they are as
+/// many.
+fn over(cells: &Cells) -> f64 {
+    cells.totals()[..3].iter().sum()
 }
 
 fn did(steps: &Steps, time: f64, ceiling: f64, prices: &Prices) -> Did {
@@ -313,15 +314,15 @@ fn in_time(outlook: &dyn Outlook, time: f64, hidden: f64, prices: &Prices) -> Op
 
 /// The rate of all periods together, each weighed by its attempts; at worst and at best.
 fn pooled(folds: impl Iterator<Item = (f64, [Earned; 2])>, aim: Aim) -> [f64; 2] {
-    let (mut begun, mut sums) = (0.0, [Earned::default(); 2]);
+    let (mut over, mut sums) = (0.0, [Earned::default(); 2]);
     for (weight, earned) in folds {
-        begun += weight;
+        over += weight;
         for (sum, earned) in sums.iter_mut().zip(earned) {
             sum.gain += weight * earned.gain;
             sum.time += weight * earned.time;
         }
     }
-    let each = sums.map(|s| Earned { gain: s.gain / begun, time: s.time / begun }.score(aim));
+    let each = sums.map(|s| Earned { gain: s.gain / over, time: s.time / over }.score(aim));
     [each[0].min(each[1]), each[0].max(each[1])]
 }
 
@@ -343,7 +344,7 @@ fn redraw(aim: Aim, contenders: &[Contender], folds: &[Fold], seed: u64) -> (Vec
     let middle = |[worst, best]: [f64; 2]| 0.5 * (worst + best);
     if by_periods(aim, folds) {
         let rates = |times: &[f64]| -> Vec<f64> {
-            let of = |c: usize| folds.iter().zip(times).map(move |(f, n)| (n * f.begun, f.did[c].earned));
+            let of = |c: usize| folds.iter().zip(times).map(move |(f, n)| (n * f.over, f.did[c].earned));
             (0..contenders.len()).map(|c| middle(pooled(of(c), aim))).collect()
         };
         let draws = resamples(folds.len(), seed).map(|times| rates(&times)).collect();
@@ -355,13 +356,13 @@ fn redraw(aim: Aim, contenders: &[Contender], folds: &[Fold], seed: u64) -> (Vec
         for fold in folds {
             let (own, others) = rest.split_at(fold.days.len());
             rest = others;
-            let begun: f64 = own.iter().zip(&fold.days).map(|(n, begun)| n * begun).sum();
-            if let Some(earned) = fold.earned(own, contenders).filter(|_| begun > 0.0) {
-                of_folds.push((begun, earned));
+            let over: f64 = own.iter().zip(&fold.days).map(|(n, over)| n * over).sum();
+            if let Some(earned) = fold.earned(own, contenders).filter(|_| over > 0.0) {
+                of_folds.push((over, earned));
             }
         }
         (0..contenders.len())
-            .map(|c| middle(pooled(of_folds.iter().map(|(begun, earned)| (*begun, earned[c])), aim)))
+            .map(|c| middle(pooled(of_folds.iter().map(|(over, earned)| (*over, earned[c])), aim)))
             .collect()
     };
     let blocks: usize = folds.iter().map(|fold| fold.days.len()).sum();

@@ -40,6 +40,7 @@ pub(super) fn finding(rules: &[RuleReplay]) -> String {
     let chance = |certain: bool| if certain { "" } else { ", which may be chance" };
     let [low, high] = best.advice_ahead_interval_per_s.unwrap_or([f64::NEG_INFINITY, f64::INFINITY]);
     let lead = match (alike(earned, rate), earned < rate) {
+        _ if earned == 0.0 && rate == 0.0 => return format!("no rule earned anything{hidden}"),
         (true, _) => format!("the advice earned as much as the best of the others, {}", name(best)),
         (false, true) => {
             let than = compared(rate, earned);
@@ -72,5 +73,9 @@ fn compared(one: f64, other: f64) -> String {
 }
 
 fn name(rule: &RuleReplay) -> String {
-    if rule.rule == IN_FORCE { "the time in force".to_owned() } else { format!("the rule {}", rule.rule) }
+    match rule.rule.as_str() {
+        IN_FORCE => "the time in force".to_owned(),
+        "never" => "never giving up".to_owned(),
+        other => format!("the rule {other}"),
+    }
 }

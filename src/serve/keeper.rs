@@ -1,7 +1,7 @@
 //! The one thread that writes the ledger: what has come in while the last commit went to disk is the next commit.
 
 use std::collections::HashSet;
-use std::io;
+use std::io::{self, Write};
 use std::sync::Arc;
 use std::sync::atomic::Ordering;
 use std::sync::mpsc::{Receiver, RecvTimeoutError, SyncSender, TrySendError, sync_channel};
@@ -17,6 +17,8 @@ use crate::ledger::{Batch, BatchError, Entry, Ledger, LedgerError, SqliteLedger}
 const GROUP: usize = 256;
 /// How long to wait for a batch before looking after the ledger.
 const PAUSE: Duration = Duration::from_millis(250);
+/// Bytes that must find room before a disk counts as no longer full.
+const PROBE: usize = 1 << 20;
 /// How long upkeep may keep a batch waiting.
 const UPKEEP: Duration = Duration::from_millis(20);
 
@@ -148,6 +150,7 @@ impl Keeper {
             return;
         }
         self.upkeep = now + 4 * PAUSE;
+        self.probe();
         while now.elapsed() < UPKEEP {
             match self.ledger.maintain(self.shared.now()) {
                 Ok(upkeep) if upkeep.more => self.upkeep = now,
@@ -163,6 +166,25 @@ impl Keeper {
             }
         }
         self.measure();
+    }
+
+    /// Whether what kept the ledger from being written is over. Nobody may send a batch to find out while the daemon says
+    /// that it is not ready.
+    fn probe(&self) {
+        let full_or_shut = |error: Arc<LedgerError>| {
+            matches!(*error, LedgerError::Full { .. } | LedgerError::ReadOnly { .. } | LedgerError::Io { .. })
+        };
+        if !self.shared.in_trouble().is_some_and(full_or_shut) {
+            return;
+        }
+        let written = tempfile::tempfile_in(&self.shared.config.data).and_then(|mut file| {
+            file.write_all(&[0; PROBE])?;
+            file.sync_all()
+        });
+        if written.is_ok() {
+            tracing::info!("the ledger can be written again");
+            self.shared.trouble(None);
+        }
     }
 
     fn measure(&self) {

@@ -166,6 +166,17 @@ fn it_ends_gracefully_when_asked() {
         .output()
         .unwrap();
     assert_eq!(String::from_utf8_lossy(&check.stdout), "the ledger is sound\n");
+    // A copy of it is a ledger too.
+    let copy = tempfile::tempdir().unwrap();
+    let target = copy.path().join("ledger.sqlite3");
+    let backup = Command::new(env!("CARGO_BIN_EXE_outwait"))
+        .args(["ledger", "backup", "--data"])
+        .arg(folder.path())
+        .arg(&target)
+        .output()
+        .unwrap();
+    assert!(backup.status.success(), "{}", String::from_utf8_lossy(&backup.stderr));
+    assert_eq!(counted(copy.path()), HashMap::from([(4, 5)]));
 }
 
 /// Two on one folder: the second says who has it, and changes nothing.

@@ -215,6 +215,10 @@ fn a_metrics_server_scrapes_it_and_reads_the_rules() {
     let found = until("a scrape", || {
         std::net::TcpStream::connect(address).ok()?;
         let answer = get(address, "/api/v1/query?query=histogram_quantile(0.5,outwait_wait_seconds_bucket)");
+        // It answers so until it stands.
+        if answer.status != 200 {
+            return None;
+        }
         let value = answer.json()["data"]["result"][0]["value"][1].as_str()?.parse::<f64>().ok()?;
         Some(value)
     });

@@ -22,7 +22,9 @@ const FREE: [&str; 2] = ["/healthz", "/readyz"];
 pub(super) async fn pass(State(shared): State<Arc<Shared>>, request: Request, next: Next) -> Response {
     let began = Instant::now();
     let id = request_id(request.headers(), &shared);
-    let path = request.extensions().get::<MatchedPath>().map_or("other", MatchedPath::as_str).to_owned();
+    let path = request.extensions().get::<MatchedPath>().map_or("other", MatchedPath::as_str);
+    // Braces in a label's value confuse some readers of the text format.
+    let path = path.replace("{*", ":").replace('}', "");
     let method = request.method().clone();
     let time = shared.config.limits.request + shared.config.limits.body;
     let mut response = match admit(&shared, &path, request.headers()) {
