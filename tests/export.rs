@@ -327,7 +327,8 @@ fn source_constants() {
         Ok(output) => assert_eq!(String::from_utf8(output.stdout).unwrap(), "0.4 None 1500\n"),
         Err(_) => println!("skipped: there is no python3"),
     }
-    let unit = shipped(folder.path(), "systemd-job.conf.j2");
+    let template = templates().join("systemd-job.conf.j2");
+    let unit = exported(folder.path(), &["--template", template.to_str().unwrap(), "--stream", "scan.job"]);
     assert!(unit.contains("\nTimeoutStartSec=1500\n") && unit.contains("Restart=no"), "{unit}");
 }
 

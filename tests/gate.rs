@@ -80,7 +80,7 @@ fn shut_by_what_costs_too_much_and_open_at_the_best() {
     // At the advised times nothing costs anything.
     let times: Vec<String> = ["catalogue.lookup", "index.search"]
         .iter()
-        .map(|stream| format!("{stream}={}s", advised(&shut, stream)))
+        .map(|stream| format!("{stream}={:.9}s", advised(&shut, stream)))
         .collect();
     let (code, open) = gate(folder.path(), &["--time", &times[0], "--time", &times[1]]);
     assert_eq!((code, &open["open"]), (0, &Value::Bool(true)), "{open}");

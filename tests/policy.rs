@@ -429,7 +429,7 @@ fn the_reference_names_every_key() {
 fn every_key_is_read() {
     for key in KEYS {
         let text = match key.section {
-            Section::File => format!("{}: {{}}\n", key.name),
+            Section::File => format!("{}: '%'\n", key.name),
             Section::Entry => format!("version: 1\nstreams: [{{{}: '%'}}]\n", key.name),
             Section::Backoff => {
                 format!("version: 1\nstreams: [{{retry: {{backoff: {{{}: '%'}}}}}}]\n", key.name)

@@ -94,7 +94,7 @@ pub(super) struct Serve {
     /// Folder for the week's recommendations (`weekly:` in the policy); beside the ledger unless said
     #[arg(long, value_name = "DIR")]
     weekly_folder: Option<PathBuf>,
-    /// What was settled, for the week's recommendations
+    /// What was settled; its times are in force, whatever the policy says
     #[arg(long, value_name = "FILE")]
     settled: Option<PathBuf>,
     /// Address (plain HTTP) to which the week's recommendations are posted too

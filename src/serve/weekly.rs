@@ -7,7 +7,7 @@ use std::io::{self, Write};
 use std::path::{Path, PathBuf};
 use std::sync::Arc;
 use std::thread::{Builder, JoinHandle};
-use std::time::Duration;
+use std::time::{Duration, SystemTime};
 
 use jiff::Timestamp;
 use jiff::civil::Date;
@@ -19,7 +19,7 @@ use super::shared::Shared;
 use crate::advise::Terms;
 use crate::client::{Address, CallError, post};
 use crate::report::{self, FormError, Schedule, weekly};
-use crate::settle::{self, Settled};
+use crate::settle;
 use crate::stopping::luby;
 
 /// How often the clock is looked at.
@@ -36,7 +36,7 @@ const STATE: &str = "weekly-state.json";
 pub struct Runs {
     /// The folder; `weekly` beside the ledger's unless said.
     pub folder: Option<PathBuf>,
-    /// What was settled; read at each run.
+    /// What was settled; read again when it changes. Its times are in force, whatever the policy says.
     pub settled: Option<PathBuf>,
     /// Who is told, and the secret by which each message is signed.
     pub webhook: Option<(Address, Token)>,
@@ -70,10 +70,10 @@ enum RunError {
 /// Starts the thread that looks after the schedule.
 pub(super) fn start(shared: Arc<Shared>) -> io::Result<JoinHandle<()>> {
     Builder::new().name("weekly".into()).spawn(move || {
-        let mut keeper = Keeper { shared, told: String::new() };
+        let mut keeper = Keeper { shared, seen: None, told: String::new() };
         while !keeper.shared.is_stopping() {
             std::thread::sleep(NAP);
-            if let Err(error) = keeper.look() {
+            if let Err(error) = keeper.read_settled().and_then(|()| keeper.look()) {
                 keeper.complain(error.to_string());
             }
         }
@@ -82,6 +82,8 @@ pub(super) fn start(shared: Arc<Shared>) -> io::Result<JoinHandle<()>> {
 
 struct Keeper {
     shared: Arc<Shared>,
+    /// The state in which the settled times were read last.
+    seen: Option<(SystemTime, u64)>,
     /// The last trouble told, so that it is told once and not twice a second.
     told: String,
 }
@@ -97,6 +99,20 @@ impl Keeper {
     fn folder(&self) -> PathBuf {
         let config = &self.shared.config;
         config.weekly.folder.clone().unwrap_or_else(|| config.data.join("weekly"))
+    }
+
+    /// Reads what was settled where its file has changed. What cannot be read leaves what was read last.
+    fn read_settled(&mut self) -> Result<(), RunError> {
+        let Some(path) = self.shared.config.weekly.settled.clone() else { return Ok(()) };
+        let failed = |source| RunError::File { path: path.clone(), source };
+        let metadata = fs::metadata(&path).map_err(failed)?;
+        let seen = metadata.modified().ok().map(|modified| (modified, metadata.len()));
+        if seen.is_none() || seen != self.seen {
+            let bytes = fs::read(&path).map_err(failed)?;
+            self.seen = seen;
+            self.shared.set_settled(settle::parse(&bytes, &path.display().to_string())?);
+        }
+        Ok(())
     }
 
     fn look(&mut self) -> Result<(), RunError> {
@@ -160,13 +176,7 @@ impl Keeper {
 
     /// Writes the run's files; made again, they are the same files.
     fn run(&self, folder: &Path, due: Date, now: Timestamp) -> Result<(), RunError> {
-        let settled = match &self.shared.config.weekly.settled {
-            Some(path) => {
-                let bytes = fs::read(path).map_err(|source| RunError::File { path: path.clone(), source })?;
-                settle::parse(&bytes, &path.display().to_string())?
-            }
-            None => Settled::default(),
-        };
+        let settled = self.shared.settled().unwrap_or_default();
         let set = self.shared.advice_set();
         let policy = self.shared.policy();
         let past = settled.past(self.shared.now());
