@@ -239,9 +239,9 @@ fn grpc_service_config() {
     assert_eq!(methods.len(), 3);
     assert_eq!(methods[0]["name"][0], serde_json::json!({"service": "catalogue", "method": "lookup"}));
     // Three attempts of 400 ms, pauses of 10 and 20 ms.
-    assert_eq!(methods[0]["timeout"], "1.23s");
+    assert_eq!(methods[0]["timeout"], "1.230000000s");
     assert_eq!(methods[0]["retryPolicy"]["maxAttempts"], 3);
-    assert_eq!(methods[0]["retryPolicy"]["maxBackoff"], "0.02s");
+    assert_eq!(methods[0]["retryPolicy"]["maxBackoff"], "0.020000000s");
     assert!(methods[1].get("timeout").is_none());
     assert!(methods[2].get("retryPolicy").is_none(), "work that may not be repeated is not retried");
     read_by_its_own_client(&text);
@@ -327,7 +327,8 @@ fn source_constants() {
         Ok(output) => assert_eq!(String::from_utf8(output.stdout).unwrap(), "0.4 None 1500\n"),
         Err(_) => println!("skipped: there is no python3"),
     }
-    let unit = shipped(folder.path(), "systemd-job.conf.j2");
+    let template = templates().join("systemd-job.conf.j2");
+    let unit = exported(folder.path(), &["--template", template.to_str().unwrap(), "--stream", "scan.job"]);
     assert!(unit.contains("\nTimeoutStartSec=1500\n") && unit.contains("Restart=no"), "{unit}");
 }
 

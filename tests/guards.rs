@@ -8,6 +8,7 @@ use outwait::advice::{Advice, Change};
 use outwait::advise::Terms;
 use outwait::demo::{self, DemoRecord, Scenario};
 use outwait::policy::{GiveUp, Policy, parse};
+use outwait::settle::{Decide, Settled, decide};
 use outwait::tally::{Day, Days};
 use outwait::wait::{Ending, Wait};
 use rayon::prelude::*;
@@ -58,15 +59,19 @@ impl Step {
 }
 
 /// Every week's advice for one stream, each proposal put in force for the next. `closed`: the time in force cuts off
-/// the waits of its week, as it would in truth; otherwise only the scenario's own timer does.
+/// the waits of its week, as it would in truth; otherwise only the scenario's own timer does. `signed`: each proposal is put
+/// in force by a decision that is kept, and the next week starts from it, with hysteresis and cool-down; otherwise the policy
+/// is changed.
 fn follow(
     policy: &Policy,
     scenario: &Scenario,
     records: &[DemoRecord],
     stream: &str,
     closed: bool,
+    signed: bool,
 ) -> Vec<Step> {
     let mut policy = policy.clone();
+    let mut settled = Settled::default();
     let mut steps: Vec<Step> = Vec::new();
     for week in 1..=WEEKS {
         let end = scenario.begin() + f64::from(week) * WEEK;
@@ -82,13 +87,22 @@ fn follow(
             }
         }
         let Day::Number(newest) = Day::of(Some(end - 1.0)) else { unreachable!() };
-        let terms = Terms { policy: Some(&policy), newest: Some(newest), seed: 1, past: None };
-        let now = terms.entry(stream).now.unwrap();
+        let past = settled.past(end);
+        let terms = Terms { policy: Some(&policy), newest: Some(newest), seed: 1, past: Some(&past) };
+        let entry = terms.entry(stream);
+        let now = entry.now.unwrap();
         let advice = terms.advise(stream, &days, None);
         let step = Step { week, now: now.seconds(), advice };
         let (_, i) = policy.entry_for(stream).unwrap();
-        policy.entries[i].now =
-            Some(if step.next().is_finite() { GiveUp::After(step.next()) } else { GiveUp::Never });
+        let next = if step.next().is_finite() { GiveUp::After(step.next()) } else { GiveUp::Never };
+        if !signed {
+            policy.entries[i].now = Some(next);
+        } else if next != now {
+            let at = jiff::Timestamp::from_second(end as i64).unwrap();
+            let accept =
+                decide(Decide::Accept, stream, Some(&step.advice), &entry, &settled, at, ("Ada", "weekly"));
+            settled.add(stream, accept.unwrap());
+        }
         steps.push(step);
     }
     steps
@@ -147,14 +161,14 @@ fn faults(stream: &demo::Stream, policy: &Policy, steps: &[Step]) -> Vec<String>
     faults
 }
 
-fn replay(seed: u64, closed: bool) {
+fn replay(seed: u64, closed: bool, signed: bool) {
     let policy = parse(include_str!("../policies/fernhollow.yaml"), "fernhollow.yaml").unwrap();
     let scenario = Scenario::spanning(seed, WEEKS, SHIFT, demo::END).unwrap();
     let records: Vec<DemoRecord> = scenario.waits().collect();
     let faults: Vec<String> = demo::truth()
         .par_iter()
         .flat_map(|stream| {
-            let steps = follow(&policy, &scenario, &records, stream.name, closed);
+            let steps = follow(&policy, &scenario, &records, stream.name, closed, signed);
             let times: Vec<String> = steps.iter().map(|s| format!("{:.5}", s.next())).collect();
             println!("{} {}", stream.name, times.join(" "));
             faults(stream, &policy, &steps)
@@ -168,11 +182,17 @@ fn replay(seed: u64, closed: bool) {
 
 #[test]
 fn twelve_weeks_without_flapping() {
-    replay(20, false);
+    replay(20, false, false);
 }
 
 /// The same with the time in force cutting off what is seen, as it would.
 #[test]
 fn twelve_weeks_behind_its_own_timer() {
-    replay(21, true);
+    replay(21, true, false);
+}
+
+/// The same where every change is signed, and the next week starts from what was signed.
+#[test]
+fn twelve_weeks_of_signed_changes() {
+    replay(20, false, true);
 }

@@ -429,10 +429,13 @@ fn the_reference_names_every_key() {
 fn every_key_is_read() {
     for key in KEYS {
         let text = match key.section {
-            Section::File => format!("{}: {{}}\n", key.name),
+            Section::File => format!("{}: '%'\n", key.name),
             Section::Entry => format!("version: 1\nstreams: [{{{}: '%'}}]\n", key.name),
             Section::Backoff => {
                 format!("version: 1\nstreams: [{{retry: {{backoff: {{{}: '%'}}}}}}]\n", key.name)
+            }
+            Section::Weekly => {
+                format!("version: 1\nstreams: [{{match: a}}]\nweekly: {{{}: '%'}}\n", key.name)
             }
             section => format!("version: 1\nstreams: [{{{}: {{{}: '%'}}}}]\n", section.path(), key.name),
         };
@@ -453,6 +456,10 @@ fn every_example_is_fit() {
         let (name, example) = (key.name, key.example);
         let mut entry = match key.section {
             Section::File => continue,
+            Section::Weekly => {
+                read(&format!("version: 1\nstreams: [{{match: a}}]\nweekly: {{{name}: {example}}}\n"));
+                continue;
+            }
             Section::Entry => format!("{name}: {example}"),
             Section::Backoff => format!("retry: {{backoff: {{{name}: {example}}}}}"),
             section => format!("{}: {{{name}: {example}}}", section.path()),

@@ -113,7 +113,7 @@ impl GateArguments {
         let seconds = time.seconds();
         let same = judged_time(advice)
             .is_some_and(|judged| judged == time || (judged.seconds() - seconds).abs() <= 1e-9 * seconds);
-        if same || self.basis.from.is_none() || advice.advice.give_up_after_s.is_none() {
+        if same || self.basis.from.is_none() || advice.advice.expected_regret.is_none() {
             return Ok(advice.advice.regret_now.filter(|_| same));
         }
         let asked = if seconds.is_finite() { seconds.to_string() } else { "never".into() };

@@ -12,10 +12,11 @@ use tracing_subscriber::filter::LevelFilter;
 use super::exit::{Exit, Failure, OrExit, print};
 use super::layout::Page;
 use super::text;
+use crate::client::Address;
 use crate::demo;
 use crate::ledger::LedgerError;
 use crate::say;
-use crate::serve::{Config, Daemon, PolicyFile, ServeError, is_open_to_others, read_tls, read_token};
+use crate::serve::{Config, Daemon, PolicyFile, Runs, ServeError, is_open_to_others, read_tls, read_token};
 
 const EXAMPLES: &str = "\
 Examples:
@@ -90,6 +91,18 @@ pub(super) struct Serve {
     /// Longest body, megabytes as sent; unpacked it may be eight times as long
     #[arg(long, value_name = "MB", default_value_t = 32, value_parser = clap::value_parser!(u16).range(1..=1_024))]
     body_mb: u16,
+    /// Folder for the week's recommendations (`weekly:` in the policy); beside the ledger unless said
+    #[arg(long, value_name = "DIR")]
+    weekly_folder: Option<PathBuf>,
+    /// What was settled; its times are in force, whatever the policy says
+    #[arg(long, value_name = "FILE")]
+    settled: Option<PathBuf>,
+    /// Address (plain HTTP) to which the week's recommendations are posted too
+    #[arg(long, value_name = "URL", requires = "webhook_secret")]
+    webhook: Option<Address>,
+    /// File that holds the secret by which they are signed (HMAC-SHA256)
+    #[arg(long, value_name = "FILE", requires = "webhook")]
+    webhook_secret: Option<PathBuf>,
     /// Seed of everything drawn
     #[arg(long, value_name = "N", default_value_t = 1)]
     seed: u64,
@@ -205,6 +218,11 @@ impl Serve {
         config.limits.unpacked_bytes = 8 * config.limits.body_bytes as u64;
         config.limits.bodies_bytes = config.limits.bodies_bytes.max(4 * config.limits.body_bytes);
         config.token = self.token_file.as_deref().map(read_token).transpose().or_exit(Exit::BadInput)?;
+        config.weekly =
+            Runs { folder: self.weekly_folder.clone(), settled: self.settled.clone(), webhook: None };
+        if let (Some(address), Some(secret)) = (&self.webhook, &self.webhook_secret) {
+            config.weekly.webhook = Some((address.clone(), read_token(secret).or_exit(Exit::BadInput)?));
+        }
         if let (Some(certificate), Some(key)) = (&self.certificate, &self.key) {
             config.tls = Some(read_tls(certificate, key).or_exit(Exit::BadInput)?);
         }

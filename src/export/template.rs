@@ -34,7 +34,8 @@ pub struct TemplateError {
 
 /// Renders a template over an export.
 ///
-/// Names: `streams`, `made_at`, `safety`, and `stream("catalogue.lookup")`. Filters: `seconds` (a decimal number),
+/// Names: `streams`, `made_at`, `safety`, and `stream("catalogue.lookup")`. Filters: `seconds` (a decimal number; `seconds(9)` with so many
+/// decimals),
 /// `milliseconds` (whole, rounded up), `round_up("10ms")`, `duration` (`1m30s500ms`, whole milliseconds, rounded up),
 /// `constant` (`CATALOGUE_LOOKUP`), `quoted` (a JSON string); of a stream, `attempts(default)` and `backoff(attempts)`.
 ///
@@ -74,7 +75,9 @@ pub fn render(template: &str, name: &str, export: &Export) -> Result<String, Tem
 
 fn add(environment: &mut Environment<'_>, export: &Export) {
     use minijinja::filters;
-    environment.add_filter("seconds", |value: Value| seconds(&value).map(|s| decimal(s)));
+    environment.add_filter("seconds", |value: Value, decimals: Option<usize>| {
+        seconds(&value).map(|s| decimals.map_or_else(|| decimal(s), |n| format!("{s:.*}", n.min(9))))
+    });
     environment.add_filter("milliseconds", |value: Value| Ok::<_, Error>(whole_ms(seconds(&value)?)));
     environment.add_filter("round_up", round_up);
     environment.add_filter("duration", |value: Value| Ok::<_, Error>(duration(seconds(&value)?)));

@@ -19,6 +19,8 @@ pub struct Policy {
     pub version: u32,
     /// The entries in the order of the file; never empty.
     pub entries: Vec<Entry>,
+    /// When the daemon makes the week's recommendations; `None`: not by itself.
+    pub weekly: Option<Weekly>,
     /// What its writer may not have meant, in the order of the lines.
     pub warnings: Vec<Warning>,
 }
@@ -29,6 +31,17 @@ impl Policy {
     pub fn entry_for(&self, stream: &str) -> Option<(&Entry, usize)> {
         self.entries.iter().enumerate().find(|(_, e)| e.matches.matches(stream)).map(|(i, e)| (e, i))
     }
+}
+
+/// When the week's recommendations are made: once a week by the clock of a place.
+#[derive(Clone, Debug, PartialEq, Eq)]
+pub struct Weekly {
+    /// Day of the week, 0 for Monday to 6 for Sunday.
+    pub day: u8,
+    /// Hour of the day, 0 to 23.
+    pub hour: u8,
+    /// A name of the tz database.
+    pub time_zone: String,
 }
 
 /// What is asked for the streams of one pattern.

@@ -58,6 +58,8 @@ pub enum Section {
     Backoff,
     /// `guard`.
     Guard,
+    /// `weekly`, of the file.
+    Weekly,
 }
 
 impl Section {
@@ -71,6 +73,7 @@ impl Section {
             Section::Retry => "retry",
             Section::Backoff => "retry.backoff",
             Section::Guard => "guard",
+            Section::Weekly => "weekly",
         }
     }
 
@@ -129,6 +132,15 @@ keys! {
         "Version of this schema.";
     STREAMS: File "streams", "a list of entries, at least one", "[{match: \"*\", aim: rate}]", "none, it must be given",
         "The entries; of those that match a stream the first counts.";
+
+    WEEKLY: File "weekly", "a map of day, hour and time_zone", "{day: monday, hour: 6, time_zone: Europe/Paris}", "none, no run of its own",
+        "When the daemon makes the week's recommendations.";
+    WEEKLY_DAY: Weekly "day", "a day from monday to sunday", "monday", "monday",
+        "On which day.";
+    WEEKLY_HOUR: Weekly "hour", "a whole number from 0 to 23", "6", "6",
+        "At which hour by the clock of the time zone.";
+    TIME_ZONE: Weekly "time_zone", "a name of the tz database", "Europe/Paris", "UTC",
+        "Whose clock, summer time included.";
 
     MATCH: Entry "match", "a stream name, with * for any run of characters and ? for one", "\"catalogue.*\"", "none, it must be given",
         "The streams that this entry speaks for.";

@@ -25,7 +25,9 @@ pub(crate) mod tree;
 
 pub use crate::glob::{Glob, GlobError};
 pub use describe::{Description, Endings, Settings, Subject, describe};
-pub use entry::{Backoff, Entry, GiveUp, Guard, Jitter, Kind, NO_COST_OF_TIME, Policy, Retry, Sticky};
+pub use entry::{
+    Backoff, Entry, GiveUp, Guard, Jitter, Kind, NO_COST_OF_TIME, Policy, Retry, Sticky, Weekly,
+};
 pub(crate) use finding::shown;
 pub use finding::{Concern, Fault, Finding, Flaw, Place, PolicyError, Problem, Remedy, Slip, Warning};
 pub use keys::{

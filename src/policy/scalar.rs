@@ -30,6 +30,13 @@ pub(crate) fn give_up(text: &str) -> Result<GiveUp, Flaw> {
     if text.trim() == "never" { Ok(GiveUp::Never) } else { span(text).map(GiveUp::After) }
 }
 
+/// A name of the tz database, by the copy that is built in.
+pub(super) fn time_zone(text: &str) -> Result<String, Flaw> {
+    let name = text.trim();
+    let known = name == "UTC" || jiff::tz::TimeZoneDatabase::bundled().get(name).is_ok();
+    if known { Ok(name.to_owned()) } else { Err(unreadable(text)) }
+}
+
 /// A number between two bounds, both included.
 pub(super) fn number(text: &str, low: f64, high: f64) -> Result<f64, Flaw> {
     let value = finite(text.trim(), text)?;

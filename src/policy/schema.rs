@@ -1,6 +1,6 @@
 //! What each key of a policy becomes: one line a key, each naming its row in [`super::keys`].
 
-use super::entry::{Backoff, Entry, GiveUp, Guard, Jitter, Kind, Policy, Retry, Sticky, aim_name};
+use super::entry::{Backoff, Entry, GiveUp, Guard, Jitter, Kind, Policy, Retry, Sticky, Weekly, aim_name};
 use super::finding::{Concern, Fault, Flaw, Place, shown};
 use super::keys::{self, MAX_WORTH, Section};
 use super::read::{Fields, Reader};
@@ -54,7 +54,22 @@ impl Reader {
         let file = self.fields(&root, Section::File, &keys::FILE)?;
         let version = self.required(&file, &keys::VERSION, |t| whole(t, 1, 1));
         let entries = self.entries(&file);
-        Some(Policy { version: version?, entries: entries?, warnings: Vec::new() })
+        let weekly = self.weekly(&file);
+        Some(Policy { version: version?, entries: entries?, weekly, warnings: Vec::new() })
+    }
+
+    fn weekly(&mut self, file: &Fields<'_>) -> Option<Weekly> {
+        let map = self.map(file, &keys::WEEKLY, Section::Weekly)?;
+        let names = ["monday", "tuesday", "wednesday", "thursday", "friday", "saturday", "sunday"];
+        let days: Vec<(&'static str, u8)> = names.into_iter().zip(0..).collect();
+        let mut weekly = Weekly { day: 0, hour: 6, time_zone: "UTC".into() };
+        set(&mut weekly.day, self.value(&map, &keys::WEEKLY_DAY, |t| choice(t, &days)));
+        set(
+            &mut weekly.hour,
+            self.value(&map, &keys::WEEKLY_HOUR, |t| whole(t, 0, 23).map(|hour| hour as u8)),
+        );
+        set(&mut weekly.time_zone, self.value(&map, &keys::TIME_ZONE, scalar::time_zone));
+        Some(weekly)
     }
 
     fn entries(&mut self, file: &Fields<'_>) -> Option<Vec<Entry>> {

@@ -3,12 +3,14 @@
 
 mod forms;
 mod row;
+mod schedule;
 
 use jiff::Timestamp;
 use serde::Serialize;
 
 pub use forms::{FormError, csv, html, markdown};
 pub use row::{Row, Sign, Verdict};
+pub use schedule::{Schedule, ScheduleError};
 
 use crate::advice::AdviceSet;
 use crate::export::{RETRIES, SAFETY};

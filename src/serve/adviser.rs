@@ -213,11 +213,12 @@ impl Adviser {
     fn advise(&mut self, stream: &str) -> Result<bool, LedgerError> {
         let shared = Arc::clone(&self.shared);
         let policy = shared.policy();
+        let past = shared.past();
         let terms = Terms {
             policy: policy.as_deref(),
             newest: Some(shared.today()),
             seed: shared.config.seed,
-            past: None,
+            past: past.as_ref(),
         };
         let entry = terms.entry(stream);
         let days = shared.days(&*self.reader, stream, terms.opening(&entry))?;

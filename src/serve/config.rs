@@ -9,6 +9,7 @@ use std::time::{Duration, SystemTime};
 use subtle::ConstantTimeEq;
 
 use super::reload::PolicyFile;
+use super::weekly::Runs;
 use crate::ledger;
 
 /// Unix seconds of now.
@@ -35,6 +36,8 @@ pub struct Config {
     pub refresh: f64,
     /// Most streams that stand in the metrics.
     pub metric_streams: usize,
+    /// Where the weekly runs go.
+    pub weekly: Runs,
     /// Seed of everything drawn.
     pub seed: u64,
     /// What time it is.
@@ -54,6 +57,7 @@ impl Config {
             advice_share: 0.25,
             refresh: 10.0,
             metric_streams: 1_000,
+            weekly: Runs::default(),
             seed: 1,
             clock: Arc::new(system_time),
         }

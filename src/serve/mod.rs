@@ -19,6 +19,7 @@ mod problem;
 mod reload;
 mod shared;
 mod tls;
+mod weekly;
 
 use std::future::Future;
 use std::net::SocketAddr;
@@ -30,6 +31,7 @@ pub use config::{Clock, Config, Limits, SecretError, Token, read_token};
 pub use http::OPENAPI;
 pub use reload::{PolicyFile, ReloadError};
 pub use tls::{TlsError, read_tls};
+pub use weekly::Runs;
 
 use crate::ledger::{Ledger, LedgerError, SqliteLedger};
 use shared::Shared;
@@ -85,6 +87,7 @@ impl Daemon {
             threads.push(adviser.map_err(refused("a thread"))?);
         }
         threads.push(reload::watch(Arc::clone(&shared)).map_err(refused("a thread"))?);
+        threads.push(weekly::start(Arc::clone(&shared)).map_err(refused("a thread"))?);
         shared.desk.all(shared.streams());
         Ok(Daemon { shared, threads, keeper })
     }

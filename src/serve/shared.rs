@@ -10,11 +10,12 @@ use super::keeper::{self, Counter, Queue};
 use super::metrics::Metrics;
 use super::reload::Standing;
 use crate::advice::AdviceSet;
-use crate::advise::Terms;
+use crate::advise::{Past, Terms};
 use crate::intake::BadLine;
 use crate::ledger::{Hour, LedgerError, Reader, SqliteReader};
 use crate::policy::Policy;
 use crate::say;
+use crate::settle::Settled;
 use crate::tally::{Day, Days};
 
 /// Examples of bad lines that are kept, one for each reason.
@@ -30,6 +31,8 @@ pub(super) struct Shared {
     /// Bytes of bodies in memory.
     pub(super) bodies: AtomicUsize,
     policy: RwLock<Standing>,
+    /// What was settled.
+    settled: RwLock<Option<Arc<Settled>>>,
     advice: RwLock<BTreeMap<Arc<str>, Arc<Fresh>>>,
     reader: Mutex<SqliteReader>,
     trouble: RwLock<Option<Arc<LedgerError>>>,
@@ -58,6 +61,7 @@ impl Shared {
             any_open: AtomicBool::new(false),
             bodies: AtomicUsize::new(0),
             policy: RwLock::new(policy),
+            settled: RwLock::default(),
             advice: RwLock::default(),
             reader: Mutex::new(reader),
             trouble: RwLock::default(),
@@ -91,6 +95,25 @@ impl Shared {
     /// The policy in force.
     pub(super) fn policy(&self) -> Option<Arc<Policy>> {
         self.standing().policy
+    }
+
+    /// What was settled, where a file of it was named.
+    pub(super) fn settled(&self) -> Option<Arc<Settled>> {
+        self.settled.read().unwrap_or_else(PoisonError::into_inner).clone()
+    }
+
+    /// The same as an advice takes it.
+    pub(super) fn past(&self) -> Option<Past> {
+        self.settled().map(|settled| settled.past(self.now()))
+    }
+
+    /// Takes what was settled meanwhile; all advice starts from it.
+    pub(super) fn set_settled(&self, settled: Settled) {
+        let old = self.settled();
+        if old.as_deref() != Some(&settled) {
+            *self.settled.write().unwrap_or_else(PoisonError::into_inner) = Some(Arc::new(settled));
+            self.desk.all(self.streams());
+        }
     }
 
     /// Takes another policy, or notes what is wrong with it.
@@ -194,11 +217,12 @@ impl Shared {
     /// Some advice as one document, with the cautions that only the chain of calls shows.
     pub(super) fn set_of(&self, some: &[Arc<Fresh>]) -> AdviceSet {
         let policy = self.policy();
+        let past = self.past();
         let terms = Terms {
             policy: policy.as_deref(),
             newest: Some(self.today()),
             seed: self.config.seed,
-            past: None,
+            past: past.as_ref(),
         };
         let newest = some.iter().map(|fresh| fresh.made_at).reduce(f64::max);
         terms.set(some.iter().map(|fresh| fresh.advice.clone()).collect(), newest.and_then(say::time))

@@ -124,7 +124,16 @@ fn name(stream: &str) -> String {
     if plain { stream.to_owned() } else { quoted(stream) }
 }
 
-/// A text between double quotes: a JSON string is one in YAML too.
+/// A text between double quotes: a JSON string is one in YAML too, once what YAML does not take for printable is escaped.
 fn quoted(text: &str) -> String {
-    serde_json::Value::from(text).to_string()
+    let mut quoted = String::with_capacity(text.len() + 2);
+    for c in serde_json::Value::from(text).to_string().chars() {
+        match c {
+            '\u{7f}'..='\u{9f}' | '\u{2028}' | '\u{2029}' | '\u{feff}' | '\u{fffe}' | '\u{ffff}' => {
+                let _ = write!(quoted, "\\u{:04x}", u32::from(c));
+            }
+            c => quoted.push(c),
+        }
+    }
+    quoted
 }

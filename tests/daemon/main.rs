@@ -10,3 +10,4 @@ mod kills;
 mod metrics;
 mod openapi;
 mod security;
+mod weekly;

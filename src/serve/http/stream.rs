@@ -95,11 +95,12 @@ pub(super) async fn ask(
 /// Weighs the stream anew, from what the ledger holds now.
 fn study(shared: &Arc<Shared>, stream: &str) -> Result<Study, Problem> {
     let policy = shared.policy();
+    let past = shared.past();
     let terms = Terms {
         policy: policy.as_deref(),
         newest: Some(shared.today()),
         seed: shared.config.seed,
-        past: None,
+        past: past.as_ref(),
     };
     let opening = terms.opening(&terms.entry(stream));
     let days = shared
