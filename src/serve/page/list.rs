@@ -16,6 +16,7 @@ use crate::glob::Glob;
 use crate::say;
 use crate::serve::adviser::Fresh;
 use crate::serve::http::{App, parameters};
+use crate::serve::loss::Loss;
 use crate::serve::problem::Problem;
 
 /// Streams on one page.
@@ -168,7 +169,9 @@ struct Row {
     change: &'static str,
     waits: String,
     cautions: usize,
-    lane: String,
+    /// Its lane, for a wide window and for a telephone.
+    wide: String,
+    narrow: String,
 }
 
 pub(in crate::serve) async fn streams(
@@ -237,7 +240,7 @@ fn list(all: Vec<Arc<Fresh>>, asked: &Asked) -> List {
             .map(|(sort, value, words)| Choice { value, words, chosen: asked.sort == sort })
             .into(),
         rows,
-        axis: Axis { wide: milestones(road, 640, 12.0), narrow: milestones(road, 640, 24.0) },
+        axis: Axis { wide: milestones(road, 640, 12.0), narrow: milestones(road, 320, 12.0) },
         host: String::new(),
     }
 }
@@ -287,21 +290,25 @@ pub(super) fn marks(advice: &Advice) -> Marks {
     Marks { advised, in_force: decision.now.map(|now| now.give_up_after_s.unwrap_or(f64::INFINITY)) }
 }
 
+fn words(loss: Loss) -> String {
+    match loss.per_day {
+        0.0 => "nothing".into(),
+        much if much >= 1_000.0 => format!("{} {} a day", say::count(much), loss.unit),
+        some => format!("{} {} a day", say::number(some), loss.unit),
+    }
+}
+
 fn row(fresh: &Fresh, number: usize, road: [f64; 2]) -> Row {
     let (advice, decision) = (&fresh.advice, &fresh.advice.advice);
     let marks = marks(advice);
-    let prefix = format!("s{number}");
-    let drawing = Lane {
-        stream: &advice.stream,
-        road,
-        curve: &fresh.road,
-        marks,
-        ring: None,
-        prefix: &prefix,
-        size: (640, 48),
+    let draw = |name, size| {
+        let prefix = format!("{name}{number}");
+        let (stream, curve) = (advice.stream.as_str(), fresh.road.as_slice());
+        lane(&Lane { stream, road, curve, marks, ring: None, prefix: &prefix, size })
     };
     Row {
-        lane: lane(&drawing),
+        wide: draw("w", (640, 48)),
+        narrow: draw("n", (320, 44)),
         name: advice.stream.clone(),
         href: address(&advice.stream),
         kind: advice.kind.clone(),
@@ -313,9 +320,7 @@ fn row(fresh: &Fresh, number: usize, road: [f64; 2]) -> Row {
             Action::GiveUpAfter => marks.advised.map_or_else(String::new, say::duration),
         },
         in_force: marks.in_force.map_or_else(|| "not known".into(), say::duration),
-        loss: fresh
-            .loss
-            .map_or_else(String::new, |loss| format!("{} {} a day", say::number(loss.per_day), loss.unit)),
+        loss: fresh.loss.map_or_else(String::new, words),
         share: decision.regret_now.map_or_else(String::new, say::percent),
         change: match decision.proposal.map(|proposal| proposal.change) {
             Some(Change::Lower) => "give up sooner",
@@ -338,7 +343,6 @@ mod tests {
     use super::super::text;
     use super::*;
     use crate::policy::Entry;
-    use crate::serve::loss::Loss;
     use crate::tally::Tally;
     use crate::wait::{Ending, Wait};
 
@@ -403,7 +407,7 @@ mod tests {
             text("list.html", context! { shell => Serde(shell), ..Value::from(Serde(shown)) }).unwrap();
         println!("10,000 streams: {} bytes in {:.1} ms", html.len(), began.elapsed().as_secs_f64() * 1e3);
         assert!((50_000..400_000).contains(&html.len()), "{}", html.len());
-        assert_eq!(html.matches("class=\"lane\"").count(), 50);
+        assert_eq!(html.matches("class=\"lane\"").count(), 100);
     }
 
     #[test]

@@ -223,7 +223,18 @@ mod tests {
         for part in all.split("|safe").rev().skip(1) {
             let name = part.rsplit("{{").next().unwrap().trim();
             assert!(
-                ["lane", "wide", "narrow", "axis.wide", "axis.narrow"].iter().any(|n| name.ends_with(n)),
+                [
+                    "row.wide",
+                    "row.narrow",
+                    "road.wide",
+                    "road.narrow",
+                    "axis.wide",
+                    "axis.narrow",
+                    "picture.wide",
+                    "picture.narrow"
+                ]
+                .iter()
+                .any(|n| name.ends_with(n)),
                 "{name}"
             );
         }

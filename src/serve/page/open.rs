@@ -33,6 +33,8 @@ const LISTENERS: usize = 32;
 struct Rows {
     total: usize,
     let_go: usize,
+    total_words: String,
+    let_go_words: String,
     shown: usize,
     made: Option<Moment>,
     rows: Vec<Row>,
@@ -97,6 +99,8 @@ fn rows(shared: &Shared) -> Result<Rows, Problem> {
     Ok(Rows {
         total,
         let_go,
+        total_words: say::count(total as f64),
+        let_go_words: say::count(let_go as f64),
         shown: all.len(),
         made: Moment::of(now),
         rows: all.into_iter().map(|it| worded(it, now)).collect(),

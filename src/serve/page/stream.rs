@@ -75,9 +75,9 @@ struct Fact {
 struct Content<'a> {
     name: &'a str,
     finding: String,
-    because: &'a str,
+    because: String,
     verdict: String,
-    reason: &'a str,
+    reason: String,
     next: String,
     in_path: String,
     made: Option<Moment>,
@@ -124,10 +124,13 @@ fn show(shared: &Arc<Shared>, fresh: &Arc<Fresh>, typed: Option<&str>) -> Result
     let reach = [decision.floor_s, decision.ceiling_s].into_iter().flatten();
     let ends = [fresh.road.first(), fresh.road.last()].into_iter().flatten().map(|point| point[0]);
     let way = road(reach.chain(ends).chain(marks.advised).chain(marks.in_force));
+    let sight = curves.sight_s.unwrap_or(0.0);
+    let in_sight = curves.points.iter().filter(|point| point.age_s > 0.0 && point.age_s <= sight);
+    let seen: Vec<[f64; 2]> = in_sight.map(|point| [point.age_s, point.survival]).collect();
     let judged = matches!(decision.action, Action::GiveUpAfter | Action::WaitItOut);
     let draw = |prefix, size| {
         let ring = judged.then_some(typed.and(asked));
-        lane(&Lane { stream: &advice.stream, road: way, curve: &fresh.road, marks, ring, prefix, size })
+        lane(&Lane { stream: &advice.stream, road: way, curve: &seen, marks, ring, prefix, size })
     };
     let mut untried = String::new();
     let mut trial = None;
@@ -152,9 +155,9 @@ fn show(shared: &Arc<Shared>, fresh: &Arc<Fresh>, typed: Option<&str>) -> Result
     let content = Content {
         name: &advice.stream,
         finding: finding(advice),
-        because: &decision.because,
-        verdict: format!("{}; {}", advice.tail.class.words(), advice.tail.remaining_wait.words()),
-        reason: &advice.tail.reason,
+        because: sentence(&decision.because),
+        verdict: sentence(&format!("{}; {}", advice.tail.class.words(), advice.tail.remaining_wait.words())),
+        reason: sentence(&advice.tail.reason),
         next: next(advice),
         in_path: in_path(&advice.stream),
         made: Moment::of(fresh.made_at),
@@ -173,6 +176,12 @@ fn show(shared: &Arc<Shared>, fresh: &Arc<Fresh>, typed: Option<&str>) -> Result
     };
     let status = if wrong.is_some() { StatusCode::BAD_REQUEST } else { StatusCode::OK };
     page(status, "stream.html", Shell::new(shared, "stream", advice.stream.clone()), content)
+}
+
+/// With a capital letter.
+fn sentence(words: &str) -> String {
+    let mut letters = words.chars();
+    letters.next().map_or_else(String::new, |first| first.to_uppercase().chain(letters).collect())
 }
 
 /// A time as it would be typed.
