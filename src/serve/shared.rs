@@ -121,6 +121,7 @@ impl Shared {
     /// Takes another policy, or notes what is wrong with it.
     pub(super) fn set_standing(&self, standing: Standing) {
         self.metrics.policy_sound.set(i64::from(standing.refused.is_none()));
+        self.studies.forget();
         *self.policy.write().unwrap_or_else(PoisonError::into_inner) = standing;
     }
 

@@ -42,6 +42,11 @@ impl Studies {
         self.find(|kept| kept.stream == stream && kept.made.elapsed() < GOOD_FOR)
     }
 
+    /// Lets go of all: they were made for another policy.
+    pub(super) fn forget(&self) {
+        self.0.lock().unwrap_or_else(PoisonError::into_inner).clear();
+    }
+
     fn find(&self, is_it: impl Fn(&Kept) -> bool) -> Option<Arc<Kept>> {
         let all = self.0.lock().unwrap_or_else(PoisonError::into_inner);
         all.iter().rev().find(|kept| is_it(kept)).cloned()

@@ -77,7 +77,7 @@ fn an_empty_house_tells_what_to_do_first() {
     let house = House::new();
     let streams = shut(&look(&house, "/"));
     assert!(
-        streams.contains("Nothing has come so far") && streams.contains("http:&#x2f;&#x2f;test&#x2f;v1"),
+        streams.contains("Nothing has come so far") && streams.contains("http:&#x2f;&#x2f;test/v1"),
         "{streams}"
     );
     assert!(shut(&look(&house, "/open")).contains("Nobody is known to wait"));

@@ -82,7 +82,7 @@ fn admit(shared: &Shared, path: &str, method: &Method, headers: &HeaderMap) -> R
         let (scheme, shown) = value.split_at_checked(7)?;
         scheme.eq_ignore_ascii_case(b"Bearer ").then_some(shown)
     });
-    let writes = !(method.is_safe());
+    let writes = !method.is_safe();
     let Some(token) = &shared.config.token else {
         return if writes && origin(headers) == Origin::Other { Err(foreign()) } else { Ok(()) };
     };
