@@ -110,6 +110,15 @@ impl TailClass {
             TailClass::Undecided => "undecided",
         }
     }
+
+    /// For a person.
+    pub fn words(self) -> &'static str {
+        match self {
+            TailClass::Heavy => "heavy tail",
+            TailClass::Light => "light tail",
+            TailClass::Undecided => "tail undecided",
+        }
+    }
 }
 
 /// Trend of the mean residual life over the observed ages.
@@ -146,6 +155,17 @@ impl RemainingWait {
             RemainingWait::Flat => "flat",
             RemainingWait::Mixed => "mixed",
             RemainingWait::Undecided => "undecided",
+        }
+    }
+
+    /// For a person.
+    pub fn words(self) -> &'static str {
+        match self {
+            RemainingWait::Growing => "the longer one has waited, the longer there is to wait",
+            RemainingWait::Shrinking => "the longer one has waited, the sooner it ends",
+            RemainingWait::Flat => "what was waited says nothing about the rest",
+            RemainingWait::Mixed => "the remaining wait first falls, then grows, or the reverse",
+            RemainingWait::Undecided => "the data do not tell whether the remaining wait grows or shrinks",
         }
     }
 }

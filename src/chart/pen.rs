@@ -113,6 +113,11 @@ impl Pen {
         );
     }
 
+    /// What was drawn, without an element round it.
+    pub(super) fn into_body(self) -> String {
+        self.body
+    }
+
     /// The whole element: paper, title and description before what was drawn.
     pub(super) fn finish(self, frame: &Frame<'_>, size: At, title: &str, summary: &str) -> String {
         let (width, height) = (px(size.0), px(size.1.ceil()));

@@ -2,7 +2,7 @@
 
 use std::fmt::Write;
 
-use crate::advice::{Action, Advice, AdviceSet, Change, Outcome, RemainingWait, TailClass};
+use crate::advice::{Action, Advice, AdviceSet, Change, Outcome};
 use crate::say;
 
 use super::layout::{Dressed, Page};
@@ -97,19 +97,7 @@ fn styled_field(out: &mut String, page: Page, name: &str, text: Dressed<'_>) {
 }
 
 fn verdict(advice: &Advice) -> String {
-    let tail = match advice.tail.class {
-        TailClass::Heavy => "heavy tail",
-        TailClass::Light => "light tail",
-        TailClass::Undecided => "tail undecided",
-    };
-    let wait = match advice.tail.remaining_wait {
-        RemainingWait::Growing => "the longer one has waited, the longer there is to wait",
-        RemainingWait::Shrinking => "the longer one has waited, the sooner it ends",
-        RemainingWait::Flat => "what was waited says nothing about the rest",
-        RemainingWait::Mixed => "the remaining wait first falls, then grows, or the reverse",
-        RemainingWait::Undecided => "the data do not tell whether the remaining wait grows or shrinks",
-    };
-    format!("{tail}; {wait}")
+    format!("{}; {}", advice.tail.class.words(), advice.tail.remaining_wait.words())
 }
 
 /// What to do, in a line.

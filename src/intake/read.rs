@@ -344,6 +344,7 @@ fn add_flaws(
         file: file.into(),
         line: first_line + line,
         field: flaw.field(),
+        kind: flaw.kind(),
         reason: flaw.to_string(),
         remedy: flaw.remedy().into_owned(),
     }));

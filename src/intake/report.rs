@@ -86,6 +86,9 @@ pub struct BadLine {
     pub line: u64,
     /// The field at fault, or `line`.
     pub field: &'static str,
+    /// What is wrong, without values: the reason of its [`BadCount`].
+    #[serde(skip)]
+    pub kind: &'static str,
     /// What is wrong, with the value.
     pub reason: String,
     /// What to do about it.
@@ -94,7 +97,7 @@ pub struct BadLine {
 
 impl fmt::Display for BadLine {
     fn fmt(&self, f: &mut fmt::Formatter<'_>) -> fmt::Result {
-        let BadLine { file, line, field, reason, remedy } = self;
+        let BadLine { file, line, field, reason, remedy, .. } = self;
         write!(f, "{file}:{line}: {field}: {reason}; {remedy}")
     }
 }

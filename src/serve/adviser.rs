@@ -7,7 +7,9 @@ use std::sync::{Arc, Condvar, Mutex, MutexGuard, PoisonError};
 use std::thread::{Builder, JoinHandle};
 use std::time::{Duration, Instant};
 
+use super::loss::Loss;
 use super::metrics;
+use super::road;
 use super::shared::Shared;
 use crate::advice::Advice;
 use crate::advise::{Lenders, Survival, Terms};
@@ -27,6 +29,10 @@ pub(super) struct Fresh {
     pub(super) advice: Advice,
     /// Who is still waiting, at the ages that matter; nothing while no wait has ended.
     pub(super) survival: Option<Survival>,
+    /// The same at ages close enough to draw, `[age in s, share]`.
+    pub(super) road: Vec<[f64; 2]>,
+    /// What the time in force loses a day, where that can be told.
+    pub(super) loss: Option<Loss>,
     /// When it was made, Unix seconds.
     pub(super) made_at: f64,
     /// When what it says last changed, Unix seconds.
@@ -233,12 +239,14 @@ impl Adviser {
         };
         let study = terms.study_among(stream, &days, None, &lenders);
         let survival = study.survival(&metrics::ladder());
+        let road = study.survival(&road::ages()).map(|fine| road::trimmed(&fine)).unwrap_or_default();
         let advice = study.into_advice();
         let now = shared.now();
         let tag = tag(&advice);
         let before = shared.advice(stream).filter(|before| before.tag == tag);
         let changed_at = before.map_or(now, |before| before.changed_at);
-        shared.advised(Fresh { advice, survival, made_at: now, changed_at, tag });
+        let loss = Loss::of(&advice, entry.worth.map(|worth| worth.aim), entry.now, &road);
+        shared.advised(Fresh { advice, survival, road, loss, made_at: now, changed_at, tag });
         Ok(true)
     }
 

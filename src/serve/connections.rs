@@ -75,6 +75,7 @@ pub(super) async fn accept(
         });
     }
     drop(listener);
+    shared.close();
     tracing::info!("stopping: no more connections are accepted");
     if timeout(LAST, graceful.shutdown()).await.is_err() {
         tracing::warn!("some requests did not end in time");

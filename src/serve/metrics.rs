@@ -120,6 +120,25 @@ impl Metrics {
         self.bad_lines.with_label_values(&[field, reason]).inc_by(lines);
     }
 
+    /// Bad lines so far by field and reason, the commonest first.
+    pub(super) fn bad_counts(&self) -> Vec<(String, String, u64)> {
+        let mut all: Vec<_> = self
+            .bad_lines
+            .collect()
+            .iter()
+            .flat_map(|family| family.get_metric())
+            .map(|metric| {
+                let label = |name: &str| {
+                    let found = metric.get_label().iter().find(|pair| pair.name() == name);
+                    found.map_or_else(String::new, |pair| pair.value().to_owned())
+                };
+                (label("field"), label("reason"), metric.get_counter().get_value() as u64)
+            })
+            .collect();
+        all.sort_by(|a, b| b.2.cmp(&a.2).then_with(|| a.cmp(b)));
+        all
+    }
+
     /// Everything as text.
     pub(super) fn text(&self, shared: &Shared) -> Result<Vec<u8>> {
         let (backlog, oldest) = shared.desk.backlog();

@@ -14,10 +14,15 @@ mod connections;
 mod demo;
 mod http;
 mod keeper;
+mod loss;
 mod metrics;
+mod page;
 mod problem;
 mod reload;
+mod road;
+mod sessions;
 mod shared;
+mod studies;
 mod tls;
 mod weekly;
 

@@ -8,6 +8,15 @@ use serde::Serialize;
 #[derive(Clone, Debug)]
 pub(super) struct Problem(Box<Parts>);
 
+/// What a page says of an error.
+#[derive(Debug, Serialize)]
+pub(super) struct Told<'a> {
+    title: &'static str,
+    status: u16,
+    detail: &'a str,
+    remedy: &'a str,
+}
+
 #[derive(Clone, Debug, Serialize)]
 struct Parts {
     #[serde(rename = "type")]
@@ -65,6 +74,16 @@ impl Problem {
         self
     }
 
+    /// What is wrong and what to do, in a line.
+    pub(super) fn sentence(&self) -> String {
+        format!("{}; {}", self.0.detail, self.0.remedy)
+    }
+
+    /// Its words.
+    pub(super) fn told(&self) -> Told<'_> {
+        Told { title: self.0.title, status: self.0.status, detail: &self.0.detail, remedy: &self.0.remedy }
+    }
+
     /// What is not there.
     pub(super) fn missing(what: &str, remedy: impl Into<String>) -> Problem {
         Problem::new(
@@ -101,12 +120,15 @@ impl Problem {
 
 impl IntoResponse for Problem {
     fn into_response(self) -> Response {
+        let told = self.clone();
         let Problem(parts) = self;
         let status = StatusCode::from_u16(parts.status).unwrap_or(StatusCode::INTERNAL_SERVER_ERROR);
         let (retry_after, allow) = (parts.retry_after, parts.allow);
         let body = serde_json::to_string(&parts).unwrap_or_default();
         let mut response =
             (status, [(header::CONTENT_TYPE, "application/problem+json")], body + "\n").into_response();
+        // Whoever passes it on may word it as a page.
+        response.extensions_mut().insert(told);
         let headers = response.headers_mut();
         if let Some(seconds) = retry_after {
             headers.insert(header::RETRY_AFTER, HeaderValue::from(seconds));

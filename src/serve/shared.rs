@@ -9,6 +9,8 @@ use super::config::Config;
 use super::keeper::{self, Counter, Queue};
 use super::metrics::Metrics;
 use super::reload::Standing;
+use super::sessions::Sessions;
+use super::studies::Studies;
 use crate::advice::AdviceSet;
 use crate::advise::{Past, Terms};
 use crate::intake::BadLine;
@@ -30,13 +32,21 @@ pub(super) struct Shared {
     pub(super) any_open: AtomicBool,
     /// Bytes of bodies in memory.
     pub(super) bodies: AtomicUsize,
+    /// Browsers that have shown the token.
+    pub(super) sessions: Sessions,
+    /// The curves that were asked for last.
+    pub(super) studies: Studies,
+    /// Pages that are kept up to date now.
+    pub(super) live: AtomicUsize,
+    /// Becomes true when no more requests are taken, so that answers without an end find one.
+    closing: tokio::sync::watch::Sender<bool>,
     policy: RwLock<Standing>,
     /// What was settled.
     settled: RwLock<Option<Arc<Settled>>>,
     advice: RwLock<BTreeMap<Arc<str>, Arc<Fresh>>>,
     reader: Mutex<SqliteReader>,
     trouble: RwLock<Option<Arc<LedgerError>>>,
-    examples: Mutex<BTreeMap<String, BadLine>>,
+    examples: Mutex<BTreeMap<(&'static str, &'static str), BadLine>>,
     /// When something was filed last, Unix seconds as bits.
     filed: AtomicU64,
     stopping: AtomicBool,
@@ -60,6 +70,10 @@ impl Shared {
             counter,
             any_open: AtomicBool::new(false),
             bodies: AtomicUsize::new(0),
+            sessions: Sessions::default(),
+            studies: Studies::default(),
+            live: AtomicUsize::new(0),
+            closing: tokio::sync::watch::Sender::new(false),
             policy: RwLock::new(policy),
             settled: RwLock::default(),
             advice: RwLock::default(),
@@ -80,6 +94,17 @@ impl Shared {
 
     pub(super) fn is_stopping(&self) -> bool {
         self.stopping.load(Ordering::SeqCst)
+    }
+
+    /// Ends the answers that would go on for ever.
+    pub(super) fn close(&self) {
+        self.closing.send_replace(true);
+    }
+
+    /// Until [`Shared::close`].
+    pub(super) async fn closed(&self) {
+        // The sender lives as long as this.
+        let _ = self.closing.subscribe().wait_for(|closing| *closing).await;
     }
 
     pub(super) fn stop(&self) {
@@ -119,6 +144,7 @@ impl Shared {
     /// Takes another policy, or notes what is wrong with it.
     pub(super) fn set_standing(&self, standing: Standing) {
         self.metrics.policy_sound.set(i64::from(standing.refused.is_none()));
+        self.studies.forget();
         *self.policy.write().unwrap_or_else(PoisonError::into_inner) = standing;
     }
 
@@ -146,8 +172,9 @@ impl Shared {
     pub(super) fn bad_lines(&self, examples: &[BadLine]) {
         let mut kept = locked(&self.examples);
         for bad in examples {
-            if kept.len() < EXAMPLES || kept.contains_key(&bad.reason) {
-                kept.insert(format!("{}: {}", bad.field, bad.reason), bad.clone());
+            let key = (bad.field, bad.kind);
+            if kept.len() < EXAMPLES || kept.contains_key(&key) {
+                kept.insert(key, bad.clone());
             }
         }
     }

@@ -34,8 +34,31 @@ impl House {
         house
     }
 
+    /// A daemon that feeds itself the demo, as of now.
+    #[allow(dead_code)] // not every binary of tests asks for it
+    pub(crate) fn demo(change: impl FnOnce(&mut Config)) -> House {
+        let folder = tempfile::tempdir().unwrap();
+        let fed = |daemon: &mut Daemon| {
+            daemon.feed_demo(1).unwrap();
+            daemon.settle(300.0);
+        };
+        let clock = Config::new("").clock;
+        let mut house =
+            House::fed(folder.path(), |config| (config.clock = clock, change(config)).1, fed).unwrap();
+        house._folder = Some(folder);
+        house
+    }
+
     /// A daemon on a folder that is there.
     pub(crate) fn on(folder: &Path, change: impl FnOnce(&mut Config)) -> Result<House, ServeError> {
+        House::fed(folder, change, |_| {})
+    }
+
+    fn fed(
+        folder: &Path,
+        change: impl FnOnce(&mut Config),
+        feed: impl FnOnce(&mut Daemon),
+    ) -> Result<House, ServeError> {
         let clock = Arc::new(AtomicU64::new(NOON.to_bits()));
         let mut config = Config::new(folder);
         let hands = Arc::clone(&clock);
@@ -43,7 +66,8 @@ impl House {
         config.advice_share = 1.0;
         config.refresh = 0.05;
         change(&mut config);
-        let daemon = Daemon::start(config)?;
+        let mut daemon = Daemon::start(config)?;
+        feed(&mut daemon);
         let (stop, stopped) = oneshot::channel();
         let (tell, told) = mpsc::channel();
         let thread = std::thread::spawn(move || {

@@ -93,7 +93,7 @@ fn aged<'a>(advice: &'a Advice, fresh: &Fresh, now: f64) -> Aged<'a> {
 }
 
 /// No such stream, or none with advice so far.
-pub(super) fn unknown(stream: &str) -> Problem {
+pub(in crate::serve) fn unknown(stream: &str) -> Problem {
     Problem::missing(
         &format!("advice on the stream {:?}", excerpt(stream)),
         "GET /v1/advice lists those there are; a new stream has its advice within seconds of its first waits",

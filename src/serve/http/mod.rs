@@ -4,7 +4,6 @@ mod advice;
 mod gate;
 mod health;
 mod open;
-mod page;
 mod stream;
 mod waits;
 
@@ -17,13 +16,18 @@ use axum::response::{IntoResponse, Response};
 use axum::routing::{MethodRouter, get, post};
 use axum::{Router, middleware};
 
+use super::page;
 use super::problem::Problem;
 use super::shared::Shared;
+
+pub(super) use advice::unknown;
+pub(super) use open::judge;
+pub(super) use stream::{give_up_after, study};
 
 /// The description of everything below, OpenAPI 3.1.
 pub const OPENAPI: &str = include_str!("openapi.json");
 
-type App = State<Arc<Shared>>;
+pub(super) type App = State<Arc<Shared>>;
 
 /// Path, methods in words, handlers.
 fn routes() -> Vec<(&'static str, &'static str, MethodRouter<Arc<Shared>>)> {
@@ -38,7 +42,14 @@ fn routes() -> Vec<(&'static str, &'static str, MethodRouter<Arc<Shared>>)> {
         ("/v1/health", "GET, HEAD", get(health::whole)),
         ("/healthz", "GET, HEAD", get(health::alive)),
         ("/readyz", "GET, HEAD", get(health::ready)),
-        ("/", "GET, HEAD", get(page::front)),
+        ("/", "GET, HEAD", get(page::streams)),
+        ("/stream/{*name}", "GET, HEAD", get(page::one)),
+        ("/open", "GET, HEAD", get(page::open)),
+        ("/open/live", "GET, HEAD", get(page::live)),
+        ("/how-it-is", "GET, HEAD", get(page::how_it_is)),
+        ("/sign-in", "GET, HEAD, POST", get(page::form).post(page::sign_in)),
+        ("/sign-out", "POST", post(page::sign_out)),
+        ("/page/{*file}", "GET, HEAD", get(page::asset)),
     ]
 }
 
@@ -87,7 +98,7 @@ fn json<T: serde::Serialize>(document: &T) -> Result<Response, Problem> {
 }
 
 /// A document under a tag; nothing but the tag if the client has it already (RFC 9110, section 13).
-fn tagged(
+pub(super) fn tagged(
     tag: &str,
     headers: &axum::http::HeaderMap,
     document: impl FnOnce() -> Result<Response, Problem>,
@@ -107,7 +118,10 @@ fn tagged(
 }
 
 /// Parameters of a request's address by name; the last wins. One that is not known is an error.
-fn parameters(uri: &Uri, known: &[&str]) -> Result<std::collections::HashMap<String, String>, Problem> {
+pub(super) fn parameters(
+    uri: &Uri,
+    known: &[&str],
+) -> Result<std::collections::HashMap<String, String>, Problem> {
     let mut found = std::collections::HashMap::new();
     let axum::extract::Query(pairs) = axum::extract::Query::<Vec<(String, String)>>::try_from_uri(uri)
         .map_err(|error| {
@@ -127,7 +141,7 @@ fn parameters(uri: &Uri, known: &[&str]) -> Result<std::collections::HashMap<Str
 }
 
 /// As much of a client's text as is told back.
-fn excerpt(text: &str) -> String {
+pub(super) fn excerpt(text: &str) -> String {
     let mut short: String = text.chars().take(100).collect();
     if short.len() < text.len() {
         short.push('…');
@@ -136,7 +150,7 @@ fn excerpt(text: &str) -> String {
 }
 
 /// Runs what blocks away from the threads that serve.
-async fn away<T: Send + 'static>(
+pub(super) async fn away<T: Send + 'static>(
     work: impl FnOnce() -> Result<T, Problem> + Send + 'static,
 ) -> Result<T, Problem> {
     tokio::task::spawn_blocking(work).await.map_err(|error| Problem::ours(error.to_string()))?

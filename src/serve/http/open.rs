@@ -86,7 +86,7 @@ pub(super) async fn list(State(shared): App, uri: Uri) -> Result<Response, Probl
 }
 
 /// What an advice says of a wait of this age: the verdict, the worth of holding on, and the age at which it changes.
-fn judge(advice: Option<&Advice>, age: f64) -> (&'static str, Option<f64>, Option<f64>) {
+pub(in crate::serve) fn judge(advice: Option<&Advice>, age: f64) -> (&'static str, Option<f64>, Option<f64>) {
     let Some(decision) = advice.map(|advice| &advice.advice) else { return ("unknown", None, None) };
     let worth = value_at(&decision.holding_on, age);
     match (decision.action, decision.give_up_after_s) {

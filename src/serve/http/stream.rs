@@ -9,10 +9,11 @@ use axum::response::{IntoResponse, Response};
 
 use super::advice::unknown;
 use super::{App, away, excerpt, json, parameters, tagged};
-use crate::advise::{Lenders, Study, Terms, WhatIfError};
+use crate::advise::{Lenders, Terms, WhatIfError};
 use crate::chart::{Frame, Picture};
 use crate::serve::problem::Problem;
 use crate::serve::shared::Shared;
+use crate::serve::studies::Kept;
 
 pub(super) async fn ask(
     State(shared): App,
@@ -44,13 +45,19 @@ pub(super) async fn ask(
                 )
             })?;
             let after = give_up_after(text)?;
-            let answer = away(move || study(&shared, &stream)?.what_if(after).map_err(unjudged)).await?;
+            let answer = away(move || {
+                // A minute's waits do not change it by much, and whoever drags a slider wants it at once.
+                let kept =
+                    shared.studies.recent(&stream).map_or_else(|| study(&shared, &stream, fresh.tag), Ok)?;
+                kept.study.what_if(after).map_err(unjudged)
+            })
+            .await?;
             json(&answer)
         }
         "curve" => {
             parameters(&uri, &[])?;
-            let curves = away(move || Ok(study(&shared, &stream)?.curves())).await?;
-            tagged(&tag, &headers, || json(&curves))
+            let kept = away(move || study(&shared, &stream, fresh.tag)).await?;
+            tagged(&tag, &headers, || json(kept.curves()))
         }
         _ => {
             let asked = parameters(&uri, &["picture", "width"])?;
@@ -78,7 +85,7 @@ pub(super) async fn ask(
             })?;
             let svg = away(move || {
                 let frame = Frame { width, prefix: "outwait", styled: true };
-                Ok(which.draw(&study(&shared, &stream)?.curves(), &frame).markup)
+                Ok(which.draw(study(&shared, &stream, fresh.tag)?.curves(), &frame).markup)
             })
             .await?;
             tagged(&tag, &headers, || {
@@ -92,8 +99,11 @@ pub(super) async fn ask(
     }
 }
 
-/// Weighs the stream anew, from what the ledger holds now.
-fn study(shared: &Arc<Shared>, stream: &str) -> Result<Study, Problem> {
+/// What the advice of this tag rests on: kept from the last question, or weighed anew from what the ledger holds now.
+pub(in crate::serve) fn study(shared: &Arc<Shared>, stream: &str, tag: u64) -> Result<Arc<Kept>, Problem> {
+    if let Some(kept) = shared.studies.exact(stream, tag) {
+        return Ok(kept);
+    }
     let policy = shared.policy();
     let past = shared.past();
     let terms = Terms {
@@ -106,10 +116,10 @@ fn study(shared: &Arc<Shared>, stream: &str) -> Result<Study, Problem> {
     let days = shared
         .ask(|reader| shared.days(reader, stream, opening))
         .map_err(|error| Problem::ours(format!("{error}; {}", error.remedy())))?;
-    Ok(terms.study_among(stream, &days, None, &Lenders::default()))
+    Ok(shared.studies.keep(tag, terms.study_among(stream, &days, None, &Lenders::default())))
 }
 
-fn give_up_after(text: &str) -> Result<f64, Problem> {
+pub(in crate::serve) fn give_up_after(text: &str) -> Result<f64, Problem> {
     if text == "never" {
         return Ok(f64::INFINITY);
     }
