@@ -1,11 +1,9 @@
 //! Special functions in the form survival work needs them: logarithms of tails, never 0 by underflow.
 //!
-//! `erfc` is libm's, true to the last bit: that of statrs 0.19 is off by 1e-10 and jumps by as much at the seams of
+//! `erfc` is true to the last digits: that of statrs 0.19 is off by 1e-10 and jumps by as much at the seams of
 //! its pieces, which the difference of two nearby tails (the mass of a narrow cell) does not forgive.
 
-use std::f64::consts::{FRAC_1_SQRT_2, PI};
-
-use libm::erfc;
+use std::f64::consts::{FRAC_1_SQRT_2, FRAC_2_SQRT_PI, PI};
 
 /// `½ ln 2π`.
 pub const HALF_LN_TWO_PI: f64 = 0.918_938_533_204_672_8;
@@ -61,6 +59,84 @@ fn asymptotic(z: f64, first: f64) -> f64 {
 /// `ln(1 + e^x)` without overflow.
 pub fn softplus(x: f64) -> f64 {
     if x > 0.0 { x + (-x).exp().ln_1p() } else { x.exp().ln_1p() }
+}
+
+/// `2/√π ∫_x^∞ e^(-u²) du`, by the rational approximations of Cody (1969, *Mathematics of Computation* 23:631), each good to
+/// 1e-18; what is left is the rounding of `x²`, `x² 2^-53`. A third of the time that libm takes for the last bit.
+#[allow(clippy::excessive_precision)]
+fn erfc(x: f64) -> f64 {
+    /// The last coefficients lead; that of the denominator is 1.
+    fn ratio<const N: usize>(x: f64, above: [f64; N], below: [f64; N]) -> f64 {
+        let (mut top, mut bottom) = (0.0, 0.0);
+        for (a, b) in above.into_iter().zip(below) {
+            (top, bottom) = (top * x + a, bottom * x + b);
+        }
+        top / bottom
+    }
+    let y = x.abs();
+    if y <= 0.468_75 {
+        let above = [
+            1.857_777_061_846_031_53e-1,
+            3.161_123_743_870_565_60,
+            1.138_641_541_510_501_56e2,
+            3.774_852_376_853_020_21e2,
+            3.209_377_589_138_469_47e3,
+        ];
+        let below = [
+            1.0,
+            2.360_129_095_234_412_09e1,
+            2.440_246_379_344_441_73e2,
+            1.282_616_526_077_372_28e3,
+            2.844_236_833_439_170_62e3,
+        ];
+        return 1.0 - x * ratio(x * x, above, below);
+    }
+    let scaled = if y <= 4.0 {
+        let above = [
+            2.153_115_354_744_038_46e-8,
+            5.641_884_969_886_700_89e-1,
+            8.883_149_794_388_375_94,
+            6.611_919_063_714_162_95e1,
+            2.986_351_381_974_001_31e2,
+            8.819_522_212_417_690_90e2,
+            1.712_047_612_634_070_58e3,
+            2.051_078_377_826_071_47e3,
+            1.230_339_354_797_997_25e3,
+        ];
+        let below = [
+            1.0,
+            1.574_492_611_070_983_47e1,
+            1.176_939_508_913_124_99e2,
+            5.371_811_018_620_098_58e2,
+            1.621_389_574_566_690_19e3,
+            3.290_799_235_733_459_63e3,
+            4.362_619_090_143_247_16e3,
+            3.439_367_674_143_721_64e3,
+            1.230_339_354_803_749_42e3,
+        ];
+        ratio(y, above, below)
+    } else {
+        let above = [
+            1.631_538_713_730_209_78e-2,
+            3.053_266_349_612_323_44e-1,
+            3.603_448_999_498_044_39e-1,
+            1.257_817_261_112_292_46e-1,
+            1.608_378_514_874_227_66e-2,
+            6.587_491_615_298_378_03e-4,
+        ];
+        let below = [
+            1.0,
+            2.568_520_192_289_822_42,
+            1.872_952_849_923_467_25,
+            5.279_051_029_514_284_12e-1,
+            6.051_834_131_244_131_91e-2,
+            2.335_204_976_268_691_85e-3,
+        ];
+        let z = 1.0 / (y * y);
+        (0.5 * FRAC_2_SQRT_PI - z * ratio(z, above, below)) / y
+    };
+    let tail = scaled * (-y * y).exp();
+    if x < 0.0 { 2.0 - tail } else { tail }
 }
 
 /// `P(Z > z)`; 0 past the underflow at about 38.
@@ -129,6 +205,19 @@ mod tests {
                 assert!(same(mills(z).ln() + ln_normal_density(z), ln_tail), "{z}: {}", mills(z));
             }
         }
+    }
+
+    /// libm's is true to the last bit.
+    #[test]
+    fn erfc_against_libm() {
+        for i in -60_000..=270_000 {
+            let x = f64::from(i) * 1e-4 + 1.3e-5;
+            let (ours, theirs) = (erfc(x), libm::erfc(x));
+            let rounding = (4.0 + x.max(0.0) * x) * f64::EPSILON;
+            assert!((ours - theirs).abs() <= rounding * theirs + f64::MIN_POSITIVE, "{x}: {ours} {theirs}");
+        }
+        assert_eq!((erfc(f64::INFINITY), erfc(f64::NEG_INFINITY)), (0.0, 2.0));
+        assert!(erfc(f64::NAN).is_nan());
     }
 
     /// Abramowitz & Stegun table 26.1, from memory.

@@ -181,7 +181,13 @@ pub(in crate::serve) async fn streams(
 ) -> Result<Response, Problem> {
     let asked = Asked::of(&parameters(&uri, &["name", "verdict", "sort", "page"])?)?;
     let policy = shared.policy();
-    let terms = Terms { policy: policy.as_deref(), newest: Some(shared.today()), seed: shared.config.seed };
+    let past = shared.past();
+    let terms = Terms {
+        policy: policy.as_deref(),
+        newest: Some(shared.today()),
+        seed: shared.config.seed,
+        past: past.as_ref(),
+    };
     let host = headers.get(header::HOST).and_then(|host| host.to_str().ok()).unwrap_or("127.0.0.1:7071");
     let scheme = if shared.config.tls.is_some() { "https" } else { "http" };
     let mut list = list(shared.all_advice(), &asked);

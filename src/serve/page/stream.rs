@@ -111,7 +111,13 @@ fn show(shared: &Arc<Shared>, fresh: &Arc<Fresh>, typed: Option<&str>) -> Result
     let advice = &fresh.advice;
     let decision = &advice.advice;
     let policy = shared.policy();
-    let terms = Terms { policy: policy.as_deref(), newest: Some(shared.today()), seed: shared.config.seed };
+    let past = shared.past();
+    let terms = Terms {
+        policy: policy.as_deref(),
+        newest: Some(shared.today()),
+        seed: shared.config.seed,
+        past: past.as_ref(),
+    };
     let entry = terms.entry(&advice.stream);
     let kept = study(shared, &advice.stream, fresh.tag)?;
     let curves = kept.curves();
