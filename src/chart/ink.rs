@@ -107,6 +107,8 @@ inks! {
     EDGE = "ow-edge", None, Some(&CURVE_), " stroke-width=\"0.8\"";
     /// Edges of a band past the edge of sight.
     EDGE_OPEN = "ow-edge-open", None, Some(&CURVE_), " stroke-width=\"0.8\" stroke-dasharray=\"2 3\"";
+    /// A lane: a band whose outline says what its ground does.
+    LANE = "ow-lane", Some(&CURVE_TINT), Some(&CURVE_), " stroke-width=\"0.8\"";
     /// Post of the advised time.
     ADVISED = "ow-advised", None, Some(&ADVISED_), " stroke-width=\"2\"";
     /// Its shape.

@@ -65,13 +65,11 @@ pub fn lane(input: &Lane<'_>) -> String {
     let last = trace.points().last().copied().filter(|_| !input.curve.is_empty());
     if let Some(last) = last {
         let seen = last.age.min(scale.to);
-        let inner = trace.cut(scale.from, seen);
+        let inner = trace.cut(scale.from, seen).thinned(|age| (x(age) / 2.0) as i64);
         let upper: Vec<_> = inner.points().iter().map(|p| (x(p.age), middle - half(p.value))).collect();
         let lower: Vec<_> = inner.points().iter().map(|p| (x(p.age), middle + half(p.value))).collect();
         let outline: Vec<_> = upper.iter().chain(lower.iter().rev()).copied().collect();
-        pen.polygon(&ink::BAND, &outline);
-        pen.polyline(&ink::EDGE, &upper);
-        pen.polyline(&ink::EDGE, &lower);
+        pen.polygon(&ink::LANE, &outline);
         if last.value > 0.0 && last.age < scale.to {
             // Past the edge of sight: how many are left is known, when they leave is not.
             pen.line(

@@ -405,13 +405,25 @@ mod tests {
         }
         // Past the end is the end.
         assert_eq!(list(all.clone(), &asked(&[("page", "999")]).unwrap()).page, 200);
-        let began = Instant::now();
-        let shown = list(all, &Asked { page: 1, ..Asked::default() });
+        // Once to read the templates; then as a page is made, with the advice staying where it is.
         let shell =
             serde_json::json!({"page": "streams", "title": "Streams", "guarded": false, "version": "0"});
-        let html =
-            text("list.html", context! { shell => Serde(shell), ..Value::from(Serde(shown)) }).unwrap();
-        println!("10,000 streams: {} bytes in {:.1} ms", html.len(), began.elapsed().as_secs_f64() * 1e3);
+        let make = || {
+            let began = Instant::now();
+            let shown = list(all.clone(), &Asked { page: 1, ..Asked::default() });
+            let sorted = began.elapsed().as_secs_f64();
+            let html =
+                text("list.html", context! { shell => Serde(&shell), ..Value::from(Serde(shown)) }).unwrap();
+            println!(
+                "10,000 streams: {} bytes, sorted and drawn in {:.1} ms, worded in {:.1} ms",
+                html.len(),
+                1e3 * sorted,
+                1e3 * (began.elapsed().as_secs_f64() - sorted)
+            );
+            html
+        };
+        make();
+        let html = make();
         assert!((50_000..400_000).contains(&html.len()), "{}", html.len());
         assert_eq!(html.matches("class=\"lane\"").count(), 100);
     }
@@ -419,8 +431,8 @@ mod tests {
     #[test]
     fn the_list_is_asked_by_its_address() {
         let all = many(200);
-        let shown = list(all.clone(), &asked(&[("name", "0001"), ("sort", "name")]).unwrap());
-        assert_eq!(shown.rows[0].name, "branch.00010");
+        let shown = list(all.clone(), &asked(&[("name", "001"), ("sort", "name")]).unwrap());
+        assert_eq!((shown.rows[0].name.as_str(), shown.matching), ("branch.00001", 111));
         assert_eq!(list(all.clone(), &asked(&[("name", "*.00012")]).unwrap()).matching, 1);
         let none = list(all.clone(), &asked(&[("name", "x"), ("page", "2")]).unwrap());
         assert_eq!((none.matching, none.first, none.last, none.pages), (0, 0, 0, 1));
