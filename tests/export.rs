@@ -75,7 +75,7 @@ fn shipped(folder: &Path, name: &str) -> String {
 fn only_what_was_settled_in_every_form() {
     let folder = folder();
     let json: Export = serde_json::from_str(&exported(folder.path(), &[])).unwrap();
-    let yaml: Export = serde_yaml::from_str(&exported(folder.path(), &["--form", "yaml"])).unwrap();
+    let yaml: Export = serde_yaml::from_str(&exported(folder.path(), &["--format", "yaml"])).unwrap();
     assert_eq!(json, yaml);
     let told: Vec<(&str, Option<f64>, &str)> =
         json.streams.iter().map(|s| (s.stream.as_str(), s.give_up_after_s, s.status.as_str())).collect();
@@ -94,7 +94,7 @@ fn only_what_was_settled_in_every_form() {
 #[test]
 fn metrics_text_is_read_by_another_parser() {
     let folder = folder();
-    let text = exported(folder.path(), &["--form", "metrics"]);
+    let text = exported(folder.path(), &["--format", "metrics"]);
     let lines = text.lines().map(|line| Ok(line.to_owned()));
     let scrape = prometheus_parse::Scrape::parse(lines).unwrap();
     let value = |stream: &str| {
@@ -115,7 +115,7 @@ fn metrics_text_is_read_by_another_parser() {
 #[test]
 fn a_shell_reads_the_environment_file() {
     let folder = folder();
-    fs::write(folder.path().join("env"), exported(folder.path(), &["--form", "env"])).unwrap();
+    fs::write(folder.path().join("env"), exported(folder.path(), &["--format", "env"])).unwrap();
     let script = ". ./env; echo $CATALOGUE_LOOKUP_GIVE_UP_SECONDS $CATALOGUE_LOOKUP_ATTEMPTS $HELPDESK_CALL_GIVE_UP_SECONDS";
     let output = Command::new("sh").args(["-euc", script]).current_dir(folder.path()).output().unwrap();
     assert_eq!(String::from_utf8(output.stdout).unwrap(), "0.4 3 never\n");
@@ -154,7 +154,7 @@ fn names_that_become_one_are_refused() {
 #[test]
 fn check_shows_the_difference_and_writing_keeps_the_mode() {
     let folder = folder();
-    let check = [&EXPORT[..], &["--form", "env", "--output", "out.env", "--check"]].concat();
+    let check = [&EXPORT[..], &["--format", "env", "--output", "out.env", "--check"]].concat();
     let write = &check[..check.len() - 1];
     assert_eq!(run(folder.path(), &check).0, 1);
     assert!(!folder.path().join("out.env").exists());

@@ -115,7 +115,7 @@ fn times_as_exported() {
             "settled.yaml",
             "--policy",
             "policy.yaml",
-            "--form",
+            "--format",
             form,
             "--output",
             file,

@@ -84,7 +84,11 @@ fn every_form_says_the_same() {
         );
     }
     self_contained(&html);
-    assert_eq!(weekly(folder.path(), &["--as", "json"]), read("json"), "the same data give the same bytes");
+    assert_eq!(
+        weekly(folder.path(), &["--format", "json"]),
+        read("json"),
+        "the same data give the same bytes"
+    );
 }
 
 /// No script, nothing fetched, every element closed, ids distinct; whole pictures inside.
@@ -113,7 +117,7 @@ fn self_contained(html: &str) {
 #[test]
 fn worth_is_rate_times_time() {
     let folder = folder();
-    let week: Value = serde_json::from_str(&weekly(folder.path(), &["--as", "json"])).unwrap();
+    let week: Value = serde_json::from_str(&weekly(folder.path(), &["--format", "json"])).unwrap();
     let weigh = ["weigh", "waits.ndjson", "--policy", "policy.yaml", "--format", "json"];
     let advice: Value = serde_json::from_str(&run(folder.path(), &weigh).1).unwrap();
     let stream =
@@ -150,8 +154,11 @@ fn what_was_settled_counts() {
     let folder = folder();
     let path = folder.path();
     let week = |more: &[&str]| -> Value {
-        serde_json::from_str(&weekly(path, &[&["--settled", "settled.yaml", "--as", "json"], more].concat()))
-            .unwrap()
+        serde_json::from_str(&weekly(
+            path,
+            &[&["--settled", "settled.yaml", "--format", "json"], more].concat(),
+        ))
+        .unwrap()
     };
     settled(path, "courier.slot", "state: pinned, give_up_after: 6h");
     let pinned = week(&[]);
@@ -164,7 +171,7 @@ fn what_was_settled_counts() {
     let over = week(&[]);
     assert!(row(&over, "courier.slot").0, "what was postponed comes back");
     // Markup in what people write stays text.
-    let html = weekly(path, &["--settled", "settled.yaml", "--as", "html"]);
+    let html = weekly(path, &["--settled", "settled.yaml", "--format", "html"]);
     assert!(html.contains("&lt;b&gt;") && !html.contains("<b>"));
     settled(path, "gone.desk", "state: accepted, give_up_after: 5s");
     let vanished = week(&[]);
@@ -190,7 +197,8 @@ fn a_week_without_data_and_bad_input() {
         .filter(|line| !line.contains("courier.slot") || time(line) < newest - 10.0 * 86_400.0)
         .collect();
     fs::write(path.join("silent.ndjson"), kept.join("\n")).unwrap();
-    let (code, out, err) = run(path, &["weekly", "silent.ndjson", "--policy", "policy.yaml", "--as", "json"]);
+    let (code, out, err) =
+        run(path, &["weekly", "silent.ndjson", "--policy", "policy.yaml", "--format", "json"]);
     assert_eq!(code, 0, "{err}");
     let week: Value = serde_json::from_str(&out).unwrap();
     let (_, courier) = row(&week, "courier.slot");

@@ -14,7 +14,7 @@ use crate::tally::Cells;
 /// Version of the JSON form of [`WhatIf`].
 pub const WHAT_IF_SCHEMA: &str = "outwait/whatif/1";
 
-/// A stream's advice with everything it was worked out from ([`super::study`]). It holds every curve that the data leave
+/// A stream's advice with everything it was worked out from ([`super::study()`]). It holds every curve that the data leave
 /// open, a few megabytes: ask it and let it go.
 pub struct Study {
     pub(super) advice: Advice,

@@ -18,9 +18,9 @@ use crate::glob::Glob;
 
 const EXAMPLES: &str = "\
 Examples:
-  outwait export --settled settled.yaml --policy policy.yaml --form env --output timeouts.env
+  outwait export --settled settled.yaml --policy policy.yaml --format env --output timeouts.env
   outwait export --settled settled.yaml --template grpc.json.j2 --output service_config.json --check
-  outwait export --proposed --waits waits.ndjson --policy policy.yaml --form json
+  outwait export --proposed --waits waits.ndjson --policy policy.yaml --format json
 
 Only what was settled is exported; --proposed adds what is proposed for the rest. examples/templates has templates.
 Exit codes: 0 well, 1 --check found a difference, 2 wrong usage, 3 bad input, 5 the system failed.";
@@ -34,6 +34,7 @@ enum Form {
     /// The same document as YAML
     Yaml,
     /// Lines of NAME=value
+    #[value(alias = "text")]
     Env,
     /// Metrics text
     Metrics,
@@ -45,9 +46,9 @@ enum Form {
 pub(super) struct ExportArguments {
     /// In which form
     #[arg(long, value_enum, default_value_t)]
-    form: Form,
+    format: Form,
     /// A template of your own instead (Jinja; see the README for its names and filters)
-    #[arg(long, value_name = "FILE", conflicts_with = "form")]
+    #[arg(long, value_name = "FILE", conflicts_with = "format")]
     template: Option<PathBuf>,
     /// Where to write it; standard output unless said
     #[arg(long, value_name = "FILE")]
@@ -127,7 +128,7 @@ impl ExportArguments {
                 Failure::new(Exit::BadInput, error).with_remedy(remedy)
             });
         }
-        match self.form {
+        match self.format {
             Form::Json => serde_json::to_string_pretty(export)
                 .map(|json| json + "\n")
                 .context("cannot write JSON")

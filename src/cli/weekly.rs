@@ -18,8 +18,8 @@ use crate::report::{self, Weekly, weekly};
 
 const EXAMPLES: &str = "\
 Examples:
-  outwait weekly waits.ndjson --policy policy.yaml --settled settled.yaml --as html --output weekly.html
-  outwait weekly waits.ndjson --policy policy.yaml --as markdown
+  outwait weekly waits.ndjson --policy policy.yaml --settled settled.yaml --format html --output weekly.html
+  outwait weekly waits.ndjson --policy policy.yaml --format markdown
   outwait weekly --from http://127.0.0.1:7071 --policy policy.yaml --folder reports
 
 What is ready to be signed stands on top, worth the most first; sign it with `outwait settle`.
@@ -30,6 +30,7 @@ Exit codes: 0 well, 2 wrong usage, 3 bad input, 4 not enough evidence anywhere, 
 enum Form {
     /// For a merge request, or a terminal
     #[default]
+    #[value(alias = "text")]
     Markdown,
     /// One self-contained page
     Html,
@@ -41,32 +42,30 @@ enum Form {
 
 /// Arguments of `weekly`.
 #[derive(Debug, Args)]
-#[command(after_help = EXAMPLES, mut_arg("format", |option| option.hide(true)))]
+#[command(after_help = EXAMPLES)]
 pub(super) struct WeeklyArguments {
     /// Files of waits (NDJSON, CSV, SWF; plain, gzip or zstd); `-` is standard input
     #[arg(value_name = "FILE", conflicts_with_all = ["advice", "from"])]
     waits: Vec<OsString>,
-    /// In which form
-    #[arg(long = "as", value_enum, default_value_t)]
-    form: Form,
     /// Where to write it; standard output unless said
     #[arg(long, value_name = "FILE")]
     output: Option<PathBuf>,
     /// Write all forms into this folder (made if need be)
-    #[arg(long, value_name = "DIR", conflicts_with_all = ["output", "form"])]
+    #[arg(long, value_name = "DIR", conflicts_with_all = ["output", "format"])]
     folder: Option<PathBuf>,
     #[command(flatten)]
     basis: Basis,
     #[command(flatten)]
-    common: Common,
+    common: Common<Form>,
 }
 
 impl WeeklyArguments {
     pub(super) fn run(&self) -> Result<Exit, Failure> {
-        let policy = self.common.load_policy()?;
+        let common = self.common.without_form();
+        let policy = common.load_policy()?;
         let settled = self.basis.settled()?;
         let past = settled.past(basis::clock());
-        let weighed = self.basis.weigh(&self.waits, policy.as_ref(), Some(&past), &self.common, picture)?;
+        let weighed = self.basis.weigh(&self.waits, policy.as_ref(), Some(&past), &common, picture)?;
         let terms =
             Terms { policy: policy.as_ref(), newest: None, seed: self.common.seed, past: Some(&past) };
         let mut week = weekly(&weighed.set, &settled, |stream| terms.entry(stream), None);
@@ -78,7 +77,7 @@ impl WeeklyArguments {
         match &self.folder {
             Some(folder) => all(folder, &week, &pictures)?,
             None => {
-                let text = match self.form {
+                let text = match self.common.format {
                     Form::Markdown => report::markdown(&week),
                     Form::Html => report::html(&week, &pictures).or_exit(Exit::System)?,
                     Form::Json => json(&week)?,

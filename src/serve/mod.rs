@@ -1,8 +1,8 @@
 //! The daemon: waits in over HTTP, advice and survival histograms out, nothing lost.
 //!
 //! Three kinds of thread, one task each. The runtime's threads speak HTTP and never touch the disk or a fit. The *keeper*
-//! ([`keeper`]) owns the ledger: it files whatever has come in meanwhile in one commit and only then lets the answers
-//! go. The *advisers* ([`adviser`]) read the ledger beside it and keep the advice fresh, on a bounded share of the
+//! (`keeper`) owns the ledger: it files whatever has come in meanwhile in one commit and only then lets the answers
+//! go. The *advisers* (`adviser`) read the ledger beside it and keep the advice fresh, on a bounded share of the
 //! processors.
 //!
 //! Listener, clock and shutdown are passed in, so that a test binds port 0 and turns its own clock.
