@@ -219,7 +219,7 @@ fn streams(all: &[Arc<Fresh>], shared: &Shared) -> Vec<MetricFamily> {
     );
     let mut give_up = Gauges::new(
         "outwait_give_up_seconds",
-        "Give-up time: advised, present (in force by the policy); +Inf for never.",
+        "Give-up time: advised, settled (signed by somebody), present (in force by the policy); +Inf for never.",
     );
     let mut rate = Gauges::new("outwait_reward_rate", "What a give-up time earns, in the unit of the aim.");
     let mut regret = Gauges::new(
@@ -236,7 +236,7 @@ fn streams(all: &[Arc<Fresh>], shared: &Shared) -> Vec<MetricFamily> {
     let mut evidence = Gauges::new("outwait_evidence_waits", "Waits in the window, by how they ended.");
     let mut age = Gauges::new("outwait_advice_age_seconds", "Age of the advice that is served.");
     let mut cautions = Gauges::new("outwait_cautions", "Cautions that stand beside the advice.");
-    let (policy, now) = (shared.policy(), shared.now());
+    let (policy, now, settled) = (shared.policy(), shared.now(), shared.settled());
     for fresh in all {
         let (name, advice) = (fresh.advice.stream.as_str(), &fresh.advice.advice);
         waits.mut_metric().extend(fresh.survival.as_ref().map(|survival| histogram(name, survival)));
@@ -254,6 +254,8 @@ fn streams(all: &[Arc<Fresh>], shared: &Shared) -> Vec<MetricFamily> {
             rate.set(name, Some(("at", at)), earns);
             regret.set(name, Some(("at", at)), loses);
         }
+        let signed = settled.as_ref().and_then(|settled| settled.standing(name).give_up_after());
+        give_up.set(name, Some(("at", "settled")), signed.map(GiveUp::seconds));
         rate.set(name, Some(("at", "never")), advice.rate_never_per_s);
         attempts.set(name, Some(("at", "advised")), advice.attempts_per_request);
         attempts.set(name, Some(("at", "present")), advice.now.and_then(|now| now.attempts_per_request));

@@ -87,6 +87,8 @@ fn the_survival_histogram_is_the_curve() {
         all.iter().filter(|(n, ..)| n == "outwait_wait_seconds_bucket").map(|s| s.2).collect();
     assert!(buckets.len() > 8 && buckets.windows(2).all(|w| w[0] <= w[1]));
     assert_eq!(value("outwait_give_up_seconds", &[("at", "present")]), 60.0);
+    // Nobody has settled anything here.
+    assert!(!all.iter().any(|(_, labels, _)| labels.get("at").is_some_and(|at| at == "settled")));
     let advised = value("outwait_give_up_seconds", &[("at", "advised")]);
     assert!((19.0..23.0).contains(&advised));
     // Half done at 60 s, by hand: (0.5 * 10 + 0.5 * 62) s for half a completion.
