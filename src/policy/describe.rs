@@ -2,6 +2,7 @@
 
 use super::entry::{Entry, GiveUp, Guard, Jitter, Kind, NO_COST_OF_TIME, Policy, Retry, Sticky, aim_name};
 use super::finding::Warning;
+use super::telemetry;
 use crate::say;
 use crate::stopping::{Aim, Fade, Worth};
 use serde::Serialize;
@@ -119,7 +120,7 @@ pub fn describe(policy: &Policy, streams: &[&str]) -> Description {
 }
 
 fn notes(policy: &Policy, streams: &[&str], subjects: &[Subject]) -> Vec<String> {
-    let mut notes = Vec::new();
+    let mut notes = telemetry::sentences(&policy.telemetry, "spans and histograms");
     if !streams.is_empty() {
         let used: HashSet<usize> = subjects.iter().filter_map(|s| s.entry).collect();
         for entry in policy.entries.iter().filter(|e| !used.contains(&e.number)) {

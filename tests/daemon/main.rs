@@ -9,5 +9,6 @@ mod house;
 mod kills;
 mod metrics;
 mod openapi;
+mod otlp;
 mod security;
 mod weekly;

@@ -9,7 +9,7 @@ use super::fault;
 use crate::ledger::LedgerError;
 
 /// Version of the tables that this program writes and the highest that it reads.
-pub const LAYOUT_VERSION: i64 = 1;
+pub const LAYOUT_VERSION: i64 = 2;
 
 /// How long to wait for another connection.
 pub(super) const PATIENCE: Duration = Duration::from_secs(5);
@@ -43,6 +43,12 @@ CREATE TABLE bad_lines (
 ) WITHOUT ROWID;
 ";
 
+/// What layout 2 has beyond layout 1.
+const MARKS: &str = "
+CREATE TABLE marks (key BLOB PRIMARY KEY, since REAL NOT NULL, seal INTEGER NOT NULL, mark BLOB NOT NULL) WITHOUT ROWID;
+CREATE INDEX marks_by_age ON marks (since);
+";
+
 /// Opens the file for writing, makes it if there is none, and brings it to the present layout.
 pub(super) fn open_for_writing(path: &Path) -> Result<Connection, LedgerError> {
     let named = |error| fault(path, error);
@@ -50,8 +56,9 @@ pub(super) fn open_for_writing(path: &Path) -> Result<Connection, LedgerError> {
     let db = open(path, flags).map_err(named)?;
     if is_empty(&db).map_err(named)? {
         create(&db).map_err(named)?;
-    } else {
-        check_layout(&db, path)?;
+    } else if check_layout(&db, path)? < 2 {
+        let step = format!("BEGIN IMMEDIATE; {MARKS} {}", stamp());
+        db.execute_batch(&step).map_err(named)?;
     }
     let durable = || -> Result<bool> {
         let mode: String = db.query_row("PRAGMA journal_mode = WAL", [], |row| row.get(0))?;
@@ -145,18 +152,24 @@ fn create(db: &Connection) -> Result<()> {
     db.execute_batch(
         "PRAGMA auto_vacuum = INCREMENTAL; PRAGMA journal_mode = WAL; PRAGMA synchronous = FULL;",
     )?;
-    let program = concat!("outwait ", env!("CARGO_PKG_VERSION"));
     db.execute_batch(&format!(
-        "BEGIN IMMEDIATE;
-         {TABLES}
-         INSERT INTO layout VALUES ({LAYOUT_VERSION}, '{program}');
-         PRAGMA application_id = {APPLICATION};
-         PRAGMA user_version = {LAYOUT_VERSION};
-         COMMIT;"
+        "BEGIN IMMEDIATE; {TABLES} {MARKS} PRAGMA application_id = {APPLICATION}; {}",
+        stamp()
     ))
 }
 
-fn check_layout(db: &Connection, path: &Path) -> Result<(), LedgerError> {
+/// Notes the present layout and ends the transaction.
+fn stamp() -> String {
+    let program = concat!("outwait ", env!("CARGO_PKG_VERSION"));
+    format!(
+        "INSERT INTO layout VALUES ({LAYOUT_VERSION}, '{program}');
+         PRAGMA user_version = {LAYOUT_VERSION};
+         COMMIT;"
+    )
+}
+
+/// The layout that a file has.
+fn check_layout(db: &Connection, path: &Path) -> Result<i64, LedgerError> {
     let pragma = |name: &str| -> Result<i64, LedgerError> {
         db.query_row(&format!("PRAGMA {name}"), [], |row| row.get(0)).map_err(|error| fault(path, error))
     };
@@ -167,9 +180,9 @@ fn check_layout(db: &Connection, path: &Path) -> Result<(), LedgerError> {
     if found > LAYOUT_VERSION {
         return Err(LedgerError::Newer { path: path.to_owned(), found, known: LAYOUT_VERSION });
     }
-    // Layout 1 is the first. A later version changes older tables here, in one transaction a step.
+    // Layout 1 is the first. What is older than the present one is brought there when it is opened for writing.
     if found < 1 {
         return Err(LedgerError::Foreign { path: path.to_owned() });
     }
-    Ok(())
+    Ok(found)
 }
