@@ -3,22 +3,17 @@
 // A test may fail.
 #![allow(clippy::unwrap_used, clippy::panic)]
 
+#[path = "support/command.rs"]
+mod command;
+
 use std::fs;
 use std::path::{Path, PathBuf};
 use std::process::Command;
 
+use command::run;
 use outwait::export::{Export, Stream, environment, metrics, render};
 use serde_json::Value;
 use tempfile::TempDir;
-
-const BINARY: &str = env!("CARGO_BIN_EXE_outwait");
-
-fn run(folder: &Path, arguments: &[&str]) -> (i32, String, String) {
-    let mut command = assert_cmd::Command::new(BINARY);
-    let output = command.current_dir(folder).args(arguments).env_remove("OUTWAIT_POLICY").output().unwrap();
-    let text = |bytes| String::from_utf8(bytes).unwrap();
-    (output.status.code().unwrap_or(-1), text(output.stdout), text(output.stderr))
-}
 
 const POLICY: &str = "\
 version: 1
