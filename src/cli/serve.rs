@@ -16,7 +16,9 @@ use crate::client::Address;
 use crate::demo;
 use crate::ledger::LedgerError;
 use crate::say;
-use crate::serve::{Config, Daemon, PolicyFile, Runs, ServeError, is_open_to_others, read_tls, read_token};
+use crate::serve::{
+    Config, Daemon, PolicyFile, Runs, ServeError, Webhook, is_open_to_others, read_tls, read_token,
+};
 
 const EXAMPLES: &str = "\
 Examples:
@@ -97,12 +99,15 @@ pub(super) struct Serve {
     /// What was settled; its times are in force, whatever the policy says
     #[arg(long, value_name = "FILE")]
     settled: Option<PathBuf>,
-    /// Address (plain HTTP) to which the week's recommendations are posted too
+    /// Address to which the week's recommendations are posted too
     #[arg(long, value_name = "URL", requires = "webhook_secret")]
     webhook: Option<Address>,
     /// File that holds the secret by which they are signed (HMAC-SHA256)
     #[arg(long, value_name = "FILE", requires = "webhook")]
     webhook_secret: Option<PathBuf>,
+    /// Certificates (PEM) to trust at an https webhook, instead of the system's
+    #[arg(long, value_name = "FILE", requires = "webhook")]
+    webhook_trust: Option<PathBuf>,
     /// Seed of everything drawn
     #[arg(long, value_name = "N", default_value_t = 1)]
     seed: u64,
@@ -221,7 +226,9 @@ impl Serve {
         config.weekly =
             Runs { folder: self.weekly_folder.clone(), settled: self.settled.clone(), webhook: None };
         if let (Some(address), Some(secret)) = (&self.webhook, &self.webhook_secret) {
-            config.weekly.webhook = Some((address.clone(), read_token(secret).or_exit(Exit::BadInput)?));
+            let secret = read_token(secret).or_exit(Exit::BadInput)?;
+            let webhook = Webhook::new(address.clone(), secret, self.webhook_trust.as_deref());
+            config.weekly.webhook = Some(webhook.or_exit(Exit::BadInput)?);
         }
         if let (Some(certificate), Some(key)) = (&self.certificate, &self.key) {
             config.tls = Some(read_tls(certificate, key).or_exit(Exit::BadInput)?);

@@ -13,7 +13,7 @@ use super::files::Folder;
 use super::options::Common;
 use crate::advice::{Action, Change};
 use crate::advise::{Study, Terms, name_hash};
-use crate::chart::{Frame, Picture};
+use crate::chart::{Picture, at_both_widths};
 use crate::report::{self, Weekly, weekly};
 
 const EXAMPLES: &str = "\
@@ -101,7 +101,7 @@ fn picture(study: &Study) -> Option<String> {
     changes.then(|| {
         let curves = study.curves();
         let prefix = format!("w{:016x}", name_hash(&curves.stream));
-        Picture::Rate.draw(&curves, &Frame { width: 720, prefix: &prefix, styled: false }).markup
+        at_both_widths(720, &prefix, |frame| Picture::Rate.draw(&curves, frame)).markup
     })
 }
 

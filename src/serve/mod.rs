@@ -35,8 +35,8 @@ use tokio::net::TcpListener;
 pub use config::{Clock, Config, Limits, SecretError, Token, read_token};
 pub use http::OPENAPI;
 pub use reload::{PolicyFile, ReloadError};
-pub use tls::{TlsError, read_tls};
-pub use weekly::Runs;
+pub use tls::{TlsError, read_certificates, read_tls};
+pub use weekly::{Runs, Webhook};
 
 use crate::ledger::{Ledger, LedgerError, SqliteLedger};
 use shared::Shared;

@@ -10,5 +10,7 @@ mod kills;
 mod metrics;
 mod openapi;
 mod otlp;
+#[path = "../support/process.rs"]
+mod process;
 mod security;
 mod weekly;
