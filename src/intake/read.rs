@@ -16,7 +16,7 @@ use super::record::Record;
 use super::report::{BadCount, BadLine, COMMENTS, Comment, EXAMPLES, FileReport, LeftOut, Report};
 use super::source::Source;
 use super::streams::Streams;
-use super::{Allowed, Format, Options, Sink, csv, ndjson, otlp, swf};
+use super::{Allowed, Format, Options, Sink, csv, exposition, ndjson, otlp, swf};
 use crate::running::{Histogram, Mark, Running, SeriesKey};
 
 /// How far a reading is.
@@ -71,6 +71,7 @@ fn parse<S: Sink>(task: &Task, options: &Options, sink: &mut S, streams: &mut St
             Layout::Otlp { signal, lines: true } => {
                 otlp::harvest_lines(&task.bytes, *signal, &mut collector);
             }
+            Layout::MetricsText => exposition::harvest(&task.bytes, &mut collector),
             Layout::Otlp { signal, lines: false } => otlp::harvest(&task.bytes, *signal, &mut collector),
         },
         Found::Long => {

@@ -2,7 +2,8 @@
 
 use super::entry::{Entry, GiveUp, Guard, Jitter, Kind, NO_COST_OF_TIME, Policy, Retry, Sticky, aim_name};
 use super::finding::Warning;
-use super::telemetry;
+use super::{scrape, telemetry};
+use crate::intake::Rules;
 use crate::say;
 use crate::stopping::{Aim, Fade, Worth};
 use serde::Serialize;
@@ -120,7 +121,8 @@ pub fn describe(policy: &Policy, streams: &[&str]) -> Description {
 }
 
 fn notes(policy: &Policy, streams: &[&str], subjects: &[Subject]) -> Vec<String> {
-    let mut notes = telemetry::sentences(&policy.telemetry, "spans and histograms");
+    let mut notes = telemetry::sentences(&policy.telemetry, &Rules::default(), "spans and histograms");
+    notes.extend(policy.scrapes.iter().map(scrape::sentence));
     if !streams.is_empty() {
         let used: HashSet<usize> = subjects.iter().filter_map(|s| s.entry).collect();
         for entry in policy.entries.iter().filter(|e| !used.contains(&e.number)) {

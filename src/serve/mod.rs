@@ -20,6 +20,7 @@ mod page;
 mod problem;
 mod reload;
 mod road;
+mod scrape;
 mod sessions;
 mod shared;
 mod studies;
@@ -92,6 +93,7 @@ impl Daemon {
             threads.push(adviser.map_err(refused("a thread"))?);
         }
         threads.push(reload::watch(Arc::clone(&shared)).map_err(refused("a thread"))?);
+        threads.push(scrape::start(Arc::clone(&shared)).map_err(refused("a thread"))?);
         threads.push(weekly::start(Arc::clone(&shared)).map_err(refused("a thread"))?);
         shared.desk.all(shared.streams());
         Ok(Daemon { shared, threads, keeper })
