@@ -318,7 +318,7 @@ mod tests {
     /// Half of the waits at the quantiles of a fast exponential law, half of a slow one.
     fn ages(n: u32) -> Vec<f64> {
         let age = |i: u32| {
-            let mean = if i % 2 == 0 { 0.1 } else { 5.0 };
+            let mean = if i.is_multiple_of(2) { 0.1 } else { 5.0 };
             -mean * (1.0 - (f64::from(i) + 0.5) / f64::from(n)).ln()
         };
         (0..n).map(age).collect()

@@ -104,7 +104,7 @@ fn read_here<S: Sink>(
 
 /// What comes back to the thread that settles.
 enum Message {
-    Parsed(u64, Task, Outcome),
+    Parsed(u64, Box<(Task, Outcome)>),
     Failed(IntakeError),
     /// A parsing thread panicked; its block will never come.
     Lost,
@@ -190,7 +190,7 @@ fn parse_tasks<S: Sink>(
         // The lock is held while waiting, and nothing can panic under it.
         let Ok(Ok((number, task))) = tasks.lock().map(|tasks| tasks.recv()) else { break };
         let outcome = parse(&task, options, &mut sink, &mut streams);
-        if report.send(Message::Parsed(number, task, outcome)).is_err() {
+        if report.send(Message::Parsed(number, Box::new((task, outcome)))).is_err() {
             break;
         }
     }
@@ -207,8 +207,8 @@ fn settle_in_order<S: Sink>(
     let mut next = 0;
     for message in messages {
         match message {
-            Message::Parsed(number, task, outcome) => {
-                early.insert(number, (task, outcome));
+            Message::Parsed(number, parsed) => {
+                early.insert(number, *parsed);
             }
             Message::Failed(error) => return Err(error),
             Message::Lost => return Ok(()),
