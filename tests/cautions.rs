@@ -413,3 +413,40 @@ fn deadline_retries() {
     entry.worth.as_mut().unwrap().aim = Aim::Deadline { by: 8.0, attempts: 1 };
     does_not("deadline_retries", &ask(&waits, &entry));
 }
+
+/// Draws of a law as a histogram with these bounds sees them.
+fn histogram(ages: &[f64], bounds: &[f64]) -> Tally {
+    let mut tally = Tally::default();
+    for age in ages {
+        let place = bounds.partition_point(|bound| bound < age);
+        let over = place.checked_sub(1).map_or(0.0, |before| bounds[before]);
+        let upto = bounds.get(place).copied().unwrap_or(f64::INFINITY);
+        tally.add(&Wait::between(over, upto, Ending::Done).unwrap());
+    }
+    tally
+}
+
+#[test]
+fn wide_buckets() {
+    let ages = Draws(lognormal(0.1, 1.5), 1).take(5_000);
+    let fine: Vec<f64> = (0..700).map(|i| 1e-4 * 1.02f64.powi(i)).collect();
+    let entry = entry(0.05);
+    does_not("wide_buckets", &ask(&histogram(&ages, &fine), &entry));
+    let advice = ask(&histogram(&ages, &[0.01, 0.1, 1.0, 10.0]), &entry);
+    appears("wide_buckets", &advice);
+    assert!(!advice.advice.buckets.unwrap().add_bounds_s.is_empty());
+    does_not("wide_buckets", &ask(&tally(&ages, f64::INFINITY), &entry));
+}
+
+#[test]
+fn buckets_cannot_tell() {
+    let ages = Draws(lognormal(0.1, 0.5), 1).take(2_000);
+    let entry = entry(0.05);
+    does_not("buckets_cannot_tell", &ask(&histogram(&ages, &[0.05, 0.1, 0.2]), &entry));
+    for bounds in [[5.0, 10.0], [1e-4, 1e-3]] {
+        let advice = ask(&histogram(&ages, &bounds), &entry);
+        appears("buckets_cannot_tell", &advice);
+        assert_eq!(advice.advice.action, Action::GatherEvidence);
+        assert!(advice.advice.buckets.unwrap().add_bounds_s.len() > 3);
+    }
+}

@@ -7,6 +7,7 @@ use outwait::ledger::{
     Batch, BatchError, Digest, Entry, Hour, Ledger, MAX_ID_BYTES, MAX_KEY_BYTES, MemoryLedger, Options,
     Period, SqliteLedger, Tie, export,
 };
+use outwait::running::{Histogram, Running, SeriesKey};
 use outwait::tally::Tally;
 use outwait::wait::{Ending, Wait};
 use tempfile::TempDir;
@@ -556,4 +557,84 @@ fn long_waits_are_at_risk_in_every_day_they_span() {
         export(&*reader, &mut text).unwrap();
         assert!(String::from_utf8(text).unwrap().lines().count() >= 3);
     }
+}
+
+/// A reading of a histogram with one bound of 1 s: so many up to it, so many above.
+fn reading(key: u8, at: f64, counts: [u64; 2]) -> Running {
+    Running {
+        stream: "a".into(),
+        ending: Ending::Done,
+        attempt: 1,
+        key: SeriesKey([key; 16]),
+        at: Some(at),
+        started: None,
+        counts_at_first: true,
+        histogram: Histogram::from_buckets(&[1.0], counts).unwrap(),
+    }
+}
+
+fn readings(all: impl IntoIterator<Item = Running>) -> Batch {
+    let mut batch = Batch::default();
+    all.into_iter().for_each(|running| batch.running(running).unwrap());
+    batch
+}
+
+#[test]
+fn histograms_that_only_grow_are_counted_once() {
+    let options = Options { most_series: 2, series_for: 10.0 * HOUR, ..Options::default() };
+    for mut house in House::both(&options) {
+        let first = house.commit(readings([reading(1, NOON, [3, 1])]), NOON).unwrap();
+        assert_eq!((first.grown, first.resets), (4, 0));
+        house.reopen();
+        // Two in one batch, the second after the first; a late one; and one that has begun anew.
+        let two = readings([reading(1, NOON + 1.0, [4, 1]), reading(1, NOON + 2.0, [4, 2])]);
+        assert_eq!(house.commit(two, NOON + 2.0).unwrap().grown, 2);
+        assert_eq!(house.commit(readings([reading(1, NOON + 1.0, [9, 9])]), NOON + 3.0).unwrap().grown, 0);
+        let group = [readings([reading(1, NOON + 4.0, [5, 2])]), readings([reading(1, NOON + 5.0, [1, 0])])];
+        let receipt = house.ledger().commit(&group, NOON + 5.0).unwrap();
+        let grown: Vec<(u64, u64)> =
+            receipt.batches.iter().flatten().map(|entry| (entry.grown, entry.resets)).collect();
+        assert_eq!(grown, [(1, 0), (1, 1)]);
+        assert_eq!(house.count("a"), 8);
+        // Beyond the limit nothing of the batch is counted, and no mark is left.
+        let above = readings([
+            reading(1, NOON + 6.0, [7, 0]),
+            reading(2, NOON + 6.0, [1, 0]),
+            reading(3, NOON, [1, 0]),
+        ]);
+        let refused = house.commit(above, NOON + 6.0);
+        assert_eq!(refused, Err(BatchError::TooManySeries { limit: 2 }));
+        assert_eq!(house.count("a"), 8);
+        house.reopen();
+        let both = readings([reading(1, NOON + 7.0, [7, 0]), reading(2, NOON + 7.0, [1, 0])]);
+        assert_eq!(house.commit(both, NOON + 7.0).unwrap().grown, 7);
+        assert!(house.commit(readings([reading(3, NOON + 8.0, [1, 0])]), NOON + 8.0).is_err());
+        // What was not read for its time is forgotten, and makes room.
+        house.run(NOON + 8.0, NOON + 12.0 * HOUR);
+        assert_eq!(
+            house
+                .commit(readings([reading(3, NOON + 12.0 * HOUR, [1, 0])]), NOON + 12.0 * HOUR)
+                .unwrap()
+                .grown,
+            1
+        );
+        assert_eq!(house.count("a"), 16);
+    }
+}
+
+/// A mark that cannot be read makes the next reading a base: what it stood for is not counted again.
+#[test]
+fn a_broken_mark_counts_nothing_twice() {
+    let mut house = House::disk(Options::default());
+    house.commit(readings([reading(1, NOON, [3, 1])]), NOON).unwrap();
+    let file = house.folder().join("ledger.sqlite3");
+    let House::Disk { ledger, .. } = &mut house else { unreachable!() };
+    drop(ledger.take());
+    let db = rusqlite::Connection::open(file).unwrap();
+    db.execute("UPDATE marks SET seal = seal + 1", []).unwrap();
+    drop(db);
+    house.reopen();
+    assert_eq!(house.commit(readings([reading(1, NOON + 1.0, [5, 1])]), NOON + 1.0).unwrap().grown, 0);
+    assert_eq!(house.commit(readings([reading(1, NOON + 2.0, [6, 1])]), NOON + 2.0).unwrap().grown, 1);
+    assert_eq!(house.count("a"), 5);
 }
