@@ -289,16 +289,17 @@ impl Reader for MemoryLedger {
 
     fn records(&self, shelf: Shelf, subject: Option<&str>) -> Result<Records, LedgerError> {
         let held = self.read();
-        let all = held.records.iter().filter(|((on, about, _), _)| {
-            *on == shelf && subject.is_none_or(|subject| **about == *subject)
-        });
-        let record = |((shelf, subject, number), text): (&(Shelf, Box<str>, i64), &Box<str>)| Record {
+        let all = held
+            .records
+            .iter()
+            .filter(|((on, about, _), _)| *on == shelf && subject.is_none_or(|subject| **about == *subject));
+        let records = all.map(|((shelf, subject, number), text)| Record {
             shelf: *shelf,
             subject: subject.clone(),
             number: *number,
             text: text.clone(),
-        };
-        Ok(Records { records: all.map(record).collect(), damage: Vec::new() })
+        });
+        Ok(Records { records: records.collect(), damage: Vec::new() })
     }
 
     fn extent(&self) -> Result<Extent, LedgerError> {

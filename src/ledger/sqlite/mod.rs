@@ -26,8 +26,8 @@ pub use self::read::SqliteReader;
 pub use self::schema::LAYOUT_VERSION;
 use super::clock::Clock;
 use super::{
-    Batch, Damage, Extent, Hour, Ledger, LedgerError, OpenWait, Options, Period, Reader, Receipt, Records, Shelf,
-    Upkeep,
+    Batch, Damage, Extent, Hour, Ledger, LedgerError, OpenWait, Options, Period, Reader, Receipt, Records,
+    Shelf, Upkeep,
 };
 use crate::tally::Tally;
 

@@ -11,9 +11,7 @@ use rusqlite::{Connection, OptionalExtension, Result, Row, Transaction, Transact
 use super::live::{Live, Slot};
 use super::seal::{checksum, record_seal, unseal};
 use super::{Queued, entry, fault, file_in, is_damage, read_lock, schema};
-use crate::ledger::{
-    Damage, Extent, Hour, LedgerError, OpenWait, Period, Reader, Record, Records, Shelf,
-};
+use crate::ledger::{Damage, Extent, Hour, LedgerError, OpenWait, Period, Reader, Record, Records, Shelf};
 use crate::tally::Tally;
 
 /// Reads a ledger on disk: beside its writer, or without one.
