@@ -4,7 +4,7 @@ use std::collections::HashMap;
 use std::ffi::OsString;
 use std::fs;
 use std::path::{Path, PathBuf};
-use std::time::SystemTime;
+use std::time::{Duration, SystemTime};
 
 use anyhow::{Context, anyhow};
 use clap::Args;
@@ -15,7 +15,7 @@ use super::options::{Common, JobTime, Reading};
 use super::{files, ledger, reading};
 use crate::advice::{AdviceSet, SCHEMA};
 use crate::advise::{Past, Study, Terms};
-use crate::client::{Address, get};
+use crate::client::{Address, Client};
 use crate::intake::Allowed;
 use crate::ledger::{Hour, Reader, Shelf, SqliteReader};
 use crate::policy::Policy;
@@ -23,6 +23,9 @@ use crate::say;
 use crate::serve::read_token;
 use crate::settle::{self, Settled};
 use crate::tally::{Book, Day};
+
+/// Patience with a daemon, over each step.
+const PATIENCE: Duration = Duration::from_secs(60);
 
 /// Where the advice comes from besides waits, and what was settled.
 #[derive(Clone, Debug, Default, Args)]
@@ -33,12 +36,15 @@ pub(super) struct Basis {
     /// Advice that was made before (`weigh --format json`), instead of waits
     #[arg(long, value_name = "FILE", conflicts_with = "from")]
     pub(super) advice: Option<PathBuf>,
-    /// Address of a daemon, as http://host:port, instead of waits
+    /// Address of a daemon, as https://host:port, instead of waits
     #[arg(long, value_name = "URL")]
     pub(super) from: Option<Address>,
     /// File that holds the daemon's token
     #[arg(long, value_name = "FILE", requires = "from")]
     pub(super) token_file: Option<PathBuf>,
+    /// Certificates (PEM) to trust at an https address, instead of the system's
+    #[arg(long, value_name = "FILE", requires = "from")]
+    pub(super) trust: Option<PathBuf>,
     /// What was settled before; its times are in force, whatever the policy says
     #[arg(long, value_name = "FILE")]
     pub(super) settled: Option<PathBuf>,
@@ -151,10 +157,13 @@ impl Basis {
             return Err(Failure::new(Exit::Usage, anyhow!("no daemon is named")));
         };
         let token = self.token_file.as_deref().map(read_token).transpose().or_exit(Exit::BadInput)?;
-        get(address, path, token.as_ref()).with_context(|| format!("{address}{path}")).map_err(|error| {
-            Failure::new(Exit::System, error)
-                .with_remedy("see that the daemon runs there and takes the token")
-        })
+        let client = Client::new(self.trust.as_deref(), PATIENCE).or_exit(Exit::BadInput)?;
+        client.get(address, path, token.as_ref()).with_context(|| format!("{address}{path}")).map_err(
+            |error| {
+                Failure::new(Exit::System, error)
+                    .with_remedy("see that the daemon runs there and takes the token")
+            },
+        )
     }
 }
 

@@ -17,7 +17,7 @@ use crate::demo;
 use crate::ledger::LedgerError;
 use crate::say;
 use crate::serve::{
-    Config, Daemon, PolicyFile, Runs, ServeError, Signing, is_open_to_others, read_tls, read_token,
+    Config, Daemon, PolicyFile, Runs, ServeError, Signing, Webhook, is_open_to_others, read_tls, read_token,
 };
 
 const EXAMPLES: &str = "\
@@ -102,12 +102,15 @@ pub(super) struct Serve {
     /// File of what was settled, kept in step with the ledger; settled.yaml beside it unless said
     #[arg(long, value_name = "FILE")]
     settled: Option<PathBuf>,
-    /// Address (plain HTTP) to which the week's recommendations are posted too
+    /// Address to which the week's recommendations are posted too
     #[arg(long, value_name = "URL", requires = "webhook_secret")]
     webhook: Option<Address>,
     /// File that holds the secret by which they are signed (HMAC-SHA256)
     #[arg(long, value_name = "FILE", requires = "webhook")]
     webhook_secret: Option<PathBuf>,
+    /// Certificates (PEM) to trust at an https webhook, instead of the system's
+    #[arg(long, value_name = "FILE", requires = "webhook")]
+    webhook_trust: Option<PathBuf>,
     /// Seed of everything drawn
     #[arg(long, value_name = "N", default_value_t = 1)]
     seed: u64,
@@ -232,7 +235,9 @@ impl Serve {
         config.weekly =
             Runs { folder: self.weekly_folder.clone(), settled: self.settled.clone(), webhook: None };
         if let (Some(address), Some(secret)) = (&self.webhook, &self.webhook_secret) {
-            config.weekly.webhook = Some((address.clone(), read_token(secret).or_exit(Exit::BadInput)?));
+            let secret = read_token(secret).or_exit(Exit::BadInput)?;
+            let webhook = Webhook::new(address.clone(), secret, self.webhook_trust.as_deref());
+            config.weekly.webhook = Some(webhook.or_exit(Exit::BadInput)?);
         }
         if let (Some(certificate), Some(key)) = (&self.certificate, &self.key) {
             config.tls = Some(read_tls(certificate, key).or_exit(Exit::BadInput)?);

@@ -39,8 +39,8 @@ use tokio::net::TcpListener;
 pub use config::{Clock, Config, Limits, SecretError, Signing, Token, read_token};
 pub use http::OPENAPI;
 pub use reload::{PolicyFile, ReloadError};
-pub use tls::{TlsError, read_tls};
-pub use weekly::Runs;
+pub use tls::{TlsError, read_certificates, read_tls};
+pub use weekly::{Runs, Webhook};
 
 use crate::ledger::{Ledger, LedgerError, SqliteLedger};
 use settling::Settling;

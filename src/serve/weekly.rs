@@ -13,10 +13,10 @@ use jiff::civil::Date;
 use ring::hmac;
 use serde::{Deserialize, Serialize};
 
-use super::Token;
 use super::shared::Shared;
 use super::week;
-use crate::client::{Address, CallError, post};
+use super::{TlsError, Token};
+use crate::client::{Address, CallError, Client};
 use crate::report::{self, FormError, Schedule};
 use crate::stopping::luby;
 
@@ -37,8 +37,27 @@ pub struct Runs {
     /// The file of what was settled; `settled.yaml` beside the ledger's unless said. Its times are in force, whatever the
     /// policy says.
     pub settled: Option<PathBuf>,
-    /// Who is told, and the secret by which each message is signed.
-    pub webhook: Option<(Address, Token)>,
+    /// Who is told.
+    pub webhook: Option<Webhook>,
+}
+
+/// Who is told of the week's recommendations.
+#[derive(Clone, Debug)]
+pub struct Webhook {
+    address: Address,
+    /// By which each message is signed.
+    secret: Token,
+    client: Client,
+}
+
+impl Webhook {
+    /// `trust` holds the certificates to trust at an https address, PEM; the system's without.
+    ///
+    /// # Errors
+    /// [`TlsError`] where the file holds none.
+    pub fn new(address: Address, secret: Token, trust: Option<&Path>) -> Result<Webhook, TlsError> {
+        Ok(Webhook { address, secret, client: Client::new(trust, PATIENCE)? })
+    }
 }
 
 /// What was done, as it is kept.
@@ -179,12 +198,12 @@ impl Keeper {
 
     /// Sends a run to the webhook; what fails for now is tried again by the universal schedule.
     fn deliver(&self, folder: &Path, run: &str, state: State, now: f64) -> Result<(), RunError> {
-        let Some((address, secret)) = &self.shared.config.weekly.webhook else {
+        let Some(Webhook { address, secret, client }) = &self.shared.config.weekly.webhook else {
             return keep(folder, &State { pending: None, ..state });
         };
         let path = folder.join(format!("weekly-{run}.json"));
         let body = fs::read(&path).map_err(|source| RunError::File { path, source })?;
-        let sent = post(address, &headers(secret, run, now, &body), &body, PATIENCE);
+        let sent = client.post(address, &headers(secret, run, now, &body), &body);
         let tries = state.tries + 1;
         let pause = (FIRST_PAUSE * luby(tries) as f64).min(LONGEST_PAUSE);
         match sent {
@@ -258,6 +277,6 @@ mod tests {
         let status = |status| is_final(&CallError::Status { status });
         assert!(status(301) && status(307) && status(404) && status(410));
         assert!(!status(500) && !status(503) && !status(429) && !status(408));
-        assert!(!is_final(&io::Error::from(io::ErrorKind::TimedOut).into()));
+        assert!(!is_final(&CallError::from(ureq::Error::ConnectionFailed)));
     }
 }

@@ -9,5 +9,7 @@ mod house;
 mod kills;
 mod metrics;
 mod openapi;
+#[path = "../support/process.rs"]
+mod process;
 mod security;
 mod weekly;
