@@ -1,9 +1,9 @@
-//! What is brought to a ledger at once: counted waits, starts and ends of open waits, counts of bad lines.
+//! What is brought to a ledger at once: counted waits, starts and ends of open waits, counts of bad lines, records.
 
 use std::collections::{BTreeMap, HashMap};
 use std::fmt;
 
-use super::Hour;
+use super::{Hour, MAX_RECORD_BYTES, MAX_SUBJECT_BYTES, Record, RecordError};
 use crate::tally::{self, Periods, Tally};
 use crate::wait::{Ending, StreamError, Wait, check_stream};
 
@@ -23,6 +23,7 @@ pub struct Batch {
     pub(super) streams: HashMap<Box<str>, Hours>,
     pub(super) events: Vec<Event>,
     pub(super) bad_lines: BTreeMap<Box<str>, u64>,
+    pub(super) records: Vec<Record>,
 }
 
 /// The tallies of one stream by hour.
@@ -78,6 +79,7 @@ impl Batch {
         for (reason, lines) in other.bad_lines {
             self.bad_lines(&reason, lines);
         }
+        self.records.extend(other.records);
     }
 
     #[inline]
@@ -143,6 +145,23 @@ impl Batch {
         *sum = sum.saturating_add(lines);
     }
 
+    /// Keeps a record. One whose number is taken for good by another refuses the batch ([`super::BatchError::Taken`]); the
+    /// same brought again changes nothing.
+    ///
+    /// # Errors
+    /// [`RecordError`] for one that is too long; nothing is kept then.
+    pub fn note(&mut self, record: Record) -> Result<(), RecordError> {
+        let (subject, bytes) = (record.subject.len(), record.text.len());
+        if subject > MAX_SUBJECT_BYTES {
+            return Err(RecordError::Subject { bytes: subject });
+        }
+        if bytes > MAX_RECORD_BYTES {
+            return Err(RecordError::Long { bytes });
+        }
+        self.records.push(record);
+        Ok(())
+    }
+
     /// The streams it names, some more than once: those that change with it.
     pub fn streams(&self) -> impl Iterator<Item = &str> {
         self.streams.keys().map(|name| &**name).chain(self.events.iter().map(|event| &*event.key.stream))
@@ -159,7 +178,10 @@ impl Batch {
 
     /// Whether there is nothing in it.
     pub fn is_empty(&self) -> bool {
-        self.streams.is_empty() && self.events.is_empty() && self.bad_lines.is_empty()
+        self.streams.is_empty()
+            && self.events.is_empty()
+            && self.bad_lines.is_empty()
+            && self.records.is_empty()
     }
 }
 
