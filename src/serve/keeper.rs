@@ -119,7 +119,10 @@ impl Keeper {
         match outcome {
             Ok(receipt) => {
                 shared.trouble(None);
-                shared.filed(now);
+                // What is only noted is no sign that waits come in.
+                if batches.iter().any(|batch| batch.streams().next().is_some()) {
+                    shared.filed(now);
+                }
                 let changed: HashSet<&str> = batches
                     .iter()
                     .zip(&receipt.batches)
