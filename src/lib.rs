@@ -22,6 +22,7 @@ pub mod outlook;
 pub mod policy;
 pub mod replay;
 pub mod report;
+pub mod running;
 pub mod say;
 pub mod serve;
 pub mod settle;

@@ -123,7 +123,7 @@ impl Common {
 /// What commands that read waits take besides.
 #[derive(Clone, Debug, Args)]
 pub(super) struct Reading {
-    /// Files of waits (NDJSON, CSV, SWF; plain, gzip or zstd); `-` is standard input
+    /// Files of waits (NDJSON, CSV, SWF, OTLP; plain, gzip or zstd); `-` is standard input
     #[arg(required = true, value_name = "FILE")]
     pub(super) files: Vec<std::ffi::OsString>,
     /// One stream for all waits, whatever their records call theirs
@@ -141,7 +141,7 @@ pub(super) struct Reading {
     /// Which time of a job log is the wait
     #[arg(long, value_name = "wait|run", value_enum, default_value_t)]
     pub(super) measure: JobTime,
-    /// Format of every file (ndjson, csv, swf), instead of finding it out
+    /// Format of every file (ndjson, csv, swf, otlp_traces, otlp_metrics), instead of finding it out
     #[arg(long, value_name = "FORMAT", value_parser = format)]
     pub(super) input: Option<Format>,
     /// Threads that read; as many as there are cores unless said

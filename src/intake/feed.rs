@@ -7,8 +7,9 @@ use std::vec;
 use super::blocks::{Blocks, Found, Records, count_lines};
 use super::csv::Columns;
 use super::error::{HeaderError, IntakeError};
+use super::otlp::Signal;
 use super::source::{Packing, Source, Unpacked};
-use super::{Format, Options, csv, swf};
+use super::{Format, Options, csv, otlp, swf};
 use crate::glob::Glob;
 
 /// One block of one input.
@@ -29,7 +30,14 @@ pub(super) struct Task {
 pub(super) enum Layout {
     Ndjson,
     Csv(Columns),
-    Swf { unix_start: Option<f64> },
+    Swf {
+        unix_start: Option<f64>,
+    },
+    /// `lines`: each line is a document of its own. Otherwise the input is one.
+    Otlp {
+        signal: Signal,
+        lines: bool,
+    },
 }
 
 impl Layout {
@@ -38,7 +46,14 @@ impl Layout {
             Layout::Ndjson => Format::Ndjson,
             Layout::Csv(_) => Format::Csv,
             Layout::Swf { .. } => Format::Swf,
+            Layout::Otlp { signal: Signal::Traces, .. } => Format::OtlpTraces,
+            Layout::Otlp { signal: Signal::Metrics, .. } => Format::OtlpMetrics,
         }
+    }
+
+    /// Whether the input must be read as a whole.
+    fn is_whole(&self) -> bool {
+        matches!(self, Layout::Otlp { lines: false, .. })
     }
 
     fn records(&self) -> Records {
@@ -48,6 +63,9 @@ impl Layout {
         }
     }
 }
+
+/// Most bytes of an input that must be read as a whole.
+const LONGEST_WHOLE: u64 = 1 << 30;
 
 pub(super) struct Feed<'o> {
     options: &'o Options,
@@ -88,10 +106,26 @@ impl<'o> Feed<'o> {
                 self.open = open(number, source, self.options, &self.bytes_read, self.allowance)?;
                 continue;
             };
-            let found = open
-                .blocks
-                .next(&mut buffer, open.layout.records())
-                .map_err(|error| Unpacked::error(&open.file, open.packing, error))?;
+            let damaged = |error| Unpacked::error(&open.file, open.packing, error);
+            let found = if open.layout.is_whole() {
+                let limit = self.allowance.saturating_add(open.paid).min(LONGEST_WHOLE);
+                buffer.clear();
+                loop {
+                    let part = open.blocks.peek().map_err(damaged)?;
+                    let length = part.len();
+                    if length == 0 {
+                        break;
+                    }
+                    buffer.extend_from_slice(part);
+                    open.blocks.skip(length);
+                    if buffer.len() as u64 > limit {
+                        return Err(IntakeError::TooMuch { file: open.file.clone(), limit });
+                    }
+                }
+                (!buffer.is_empty()).then_some(Found::Records)
+            } else {
+                open.blocks.next(&mut buffer, open.layout.records()).map_err(damaged)?
+            };
             let unpaid = open.blocks.read - std::mem::replace(&mut open.paid, open.blocks.read);
             if open.packing.is_none() {
                 // Not counted one by one: in between, a file is read into a block without clearing the block first.
@@ -136,13 +170,15 @@ fn open(
         blocks.skip(3);
     }
     let (mut lines_before, mut blank) = (0, 0);
+    let is_binary = matches!(options.format, Some(Format::OtlpTraces | Format::OtlpMetrics));
     let head = loop {
         let head = blocks.peek().map_err(damaged)?;
         let (length, lines) = (head.len(), count_lines(head));
         if length == 0 {
             return Ok(None);
         }
-        if !head.trim_ascii().is_empty() {
+        // A message may begin, and even end, with bytes that would be blanks in a text.
+        if is_binary || !head.trim_ascii().is_empty() {
             break blocks.peek().map_err(damaged)?;
         }
         blocks.skip(length);
@@ -162,6 +198,10 @@ fn open(
     let layout = match format {
         Format::Ndjson => Layout::Ndjson,
         Format::Swf => Layout::Swf { unix_start: swf::unix_start(head) },
+        Format::OtlpTraces | Format::OtlpMetrics => {
+            let signal = if format == Format::OtlpTraces { Signal::Traces } else { Signal::Metrics };
+            Layout::Otlp { signal, lines: otlp::is_lines(head) }
+        }
         Format::Csv => {
             // Blank lines before the header count as lines all the same.
             let blank = head.iter().take_while(|byte| byte.is_ascii_whitespace()).count();

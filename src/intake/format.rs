@@ -4,6 +4,7 @@ use std::path::Path;
 
 use serde::Serialize;
 
+use super::otlp::{self, Signal};
 use super::record::Field;
 
 /// A format of waits.
@@ -17,18 +18,25 @@ pub enum Format {
     Csv,
     /// The Standard Workload Format, version 2.2, of job logs.
     Swf,
+    /// Spans by OTLP: a request as protocol buffers or JSON, or lines of which each is one in JSON.
+    OtlpTraces,
+    /// Metrics by OTLP, likewise.
+    OtlpMetrics,
 }
 
 impl Format {
     /// Every format.
-    pub const ALL: [Format; 3] = [Format::Ndjson, Format::Csv, Format::Swf];
+    pub const ALL: [Format; 5] =
+        [Format::Ndjson, Format::Csv, Format::Swf, Format::OtlpTraces, Format::OtlpMetrics];
 
-    /// The name: `ndjson`, `csv`, `swf`.
+    /// The name: `ndjson`, `csv`, `swf`, `otlp_traces`, `otlp_metrics`.
     pub fn name(self) -> &'static str {
         match self {
             Format::Ndjson => "ndjson",
             Format::Csv => "csv",
             Format::Swf => "swf",
+            Format::OtlpTraces => "otlp_traces",
+            Format::OtlpMetrics => "otlp_metrics",
         }
     }
 
@@ -43,6 +51,11 @@ impl Format {
         let mut lines =
             head.split(|&byte| byte == b'\n').map(<[u8]>::trim_ascii).filter(|line| !line.is_empty());
         let first = lines.next().unwrap_or_default();
+        match otlp::detect(head) {
+            Some(Signal::Traces) => return Ok(Format::OtlpTraces),
+            Some(Signal::Metrics) => return Ok(Format::OtlpMetrics),
+            None => {}
+        }
         match first.first() {
             Some(b'{') => return Ok(Format::Ndjson),
             Some(b';') => return Ok(Format::Swf),

@@ -41,27 +41,37 @@ mod flaw;
 mod format;
 mod lines;
 mod ndjson;
+mod otlp;
 mod pairs;
 mod read;
 mod record;
 mod report;
+mod rules;
 mod source;
 mod streams;
 mod swf;
+mod telemetry;
 
 use std::num::NonZeroUsize;
 
 use crate::glob::Glob;
+use crate::running::Running;
 
 pub use error::{HeaderError, IntakeError};
 pub use format::Format;
+pub use otlp::{Answer, Encoding};
 pub use read::{Progress, read};
 pub use record::{Half, Record, Side};
 pub use report::{
     BadCount, BadLine, BadLines, Because, COMMENTS, Comment, EXAMPLES, FileReport, LeftOut, PairsReport,
     Report, Suspicion,
 };
+pub use rules::{Condition, Facts, MAX_CONDITIONS, MAX_RULE_BYTES, RuleError, Rules, Template};
+pub(crate) use source::Packing;
 pub use source::Source;
+
+/// The reason under which a body counts that cannot be decoded as a whole ([`BadCount::reason`]).
+pub const UNDECODABLE: &str = "not to be decoded";
 
 /// What takes the waits.
 ///
@@ -76,6 +86,13 @@ pub trait Sink: Send + Sized {
     /// comes as a wait. Unless said, nothing is taken.
     fn take_half(&mut self, half: &Half<'_>) -> bool {
         let _ = half;
+        false
+    }
+
+    /// Takes a reading of a histogram that only grows, and says so; of what is left the reader keeps the state, and the
+    /// differences come as waits. Unless said, nothing is taken.
+    fn take_running(&mut self, running: &Running) -> bool {
+        let _ = running;
         false
     }
 
@@ -97,6 +114,8 @@ pub struct Options {
     pub one_stream: Option<String>,
     /// Which time of a job log is the wait.
     pub measure: Measure,
+    /// How telemetry becomes waits.
+    pub rules: Rules,
     /// How many bad lines are put up with.
     pub bad_lines: Allowed,
     /// Only waits that ended or were last seen then or later, Unix seconds.
@@ -118,6 +137,7 @@ impl Default for Options {
             streams: None,
             one_stream: None,
             measure: Measure::default(),
+            rules: Rules::default(),
             bad_lines: Allowed::default(),
             since: None,
             until: None,

@@ -4,6 +4,7 @@ use std::collections::{BTreeMap, HashMap};
 use std::fmt;
 
 use super::{Hour, MAX_RECORD_BYTES, MAX_SUBJECT_BYTES, Record, RecordError};
+use crate::running::Running;
 use crate::tally::{self, Periods, Tally};
 use crate::wait::{Ending, StreamError, Wait, check_stream};
 
@@ -22,6 +23,7 @@ pub struct Batch {
     pub(super) key: Option<(Box<str>, Digest)>,
     pub(super) streams: HashMap<Box<str>, Hours>,
     pub(super) events: Vec<Event>,
+    pub(super) running: Vec<Running>,
     pub(super) bad_lines: BTreeMap<Box<str>, u64>,
     pub(super) records: Vec<Record>,
 }
@@ -76,6 +78,7 @@ impl Batch {
             hours.0.iter().for_each(|(hour, tally)| mine.at(*hour).merge(tally));
         }
         self.events.extend(other.events);
+        self.running.extend(other.running);
         for (reason, lines) in other.bad_lines {
             self.bad_lines(&reason, lines);
         }
@@ -91,6 +94,16 @@ impl Batch {
                 count(self.streams.entry(stream.into()).or_default());
             }
         }
+        Ok(())
+    }
+
+    /// Files a reading of a histogram that only grows: what it has grown by since the last one is counted.
+    ///
+    /// # Errors
+    /// [`StreamError`] if the stream's name is not allowed; nothing is filed then.
+    pub fn running(&mut self, running: Running) -> Result<(), StreamError> {
+        check_stream(&running.stream)?;
+        self.running.push(running);
         Ok(())
     }
 
@@ -164,10 +177,12 @@ impl Batch {
 
     /// The streams it names, some more than once: those that change with it.
     pub fn streams(&self) -> impl Iterator<Item = &str> {
-        self.streams.keys().map(|name| &**name).chain(self.events.iter().map(|event| &*event.key.stream))
+        let awaited = self.events.iter().map(|event| &*event.key.stream);
+        let running = self.running.iter().map(|running| &*running.stream);
+        self.streams.keys().map(|name| &**name).chain(awaited).chain(running)
     }
 
-    /// How many waits it counts, not those that its events may make.
+    /// How many waits it counts, not those that its events and readings may make.
     pub fn waits(&self) -> u64 {
         self.streams
             .values()
@@ -182,6 +197,7 @@ impl Batch {
             && self.events.is_empty()
             && self.bad_lines.is_empty()
             && self.records.is_empty()
+            && self.running.is_empty()
     }
 }
 

@@ -143,6 +143,12 @@ pub enum BatchError {
         /// How many may be open.
         limit: usize,
     },
+    /// Too many histograms would be remembered.
+    #[error("{limit} histograms that only grow are read, no more are kept")]
+    TooManySeries {
+        /// How many may be read.
+        limit: usize,
+    },
     /// Too many streams would be counted.
     #[error("{limit} streams are counted, no more are kept")]
     TooManyStreams {
@@ -160,6 +166,9 @@ impl BatchError {
             }
             BatchError::Taken { .. } => "see what was written meanwhile, and write after it",
             BatchError::TooManyOpen { .. } => "send the ends of waits, send fewer starts, or raise the limit",
+            BatchError::TooManySeries { .. } => {
+                "send the counts since the last point (delta temporality), use fewer attributes, or raise the limit"
+            }
             BatchError::TooManyStreams { .. } => {
                 "put what varies without bound elsewhere than in the stream's name, or raise the limit"
             }

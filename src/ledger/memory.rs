@@ -7,11 +7,13 @@ use std::sync::{Arc, PoisonError, RwLock, RwLockReadGuard, RwLockWriteGuard};
 
 use super::batch::{EventKey, Hours};
 use super::clock::Clock;
+use super::grow::{self, Known};
 use super::open::{self, Filed, State};
 use super::{
     Batch, BatchError, Damage, Digest, Entry, Extent, Hour, Ledger, LedgerError, OpenWait, Options, Period,
     Reader, Receipt, Record, Records, Shelf, Upkeep,
 };
+use crate::running::{Mark, SeriesKey};
 use crate::tally::{self, Tally};
 
 /// A ledger in memory. Cloning gives another handle on the same one.
@@ -30,6 +32,8 @@ struct Held {
     key_order: VecDeque<(f64, Box<str>)>,
     events: HashMap<EventKey, Filed>,
     joined_order: VecDeque<(f64, EventKey)>,
+    /// With the time of filing.
+    marks: HashMap<SeriesKey, (Mark, f64)>,
     singles: usize,
     joined: usize,
     bad_lines: BTreeMap<Hour, BTreeMap<Box<str>, u64>>,
@@ -104,6 +108,13 @@ impl Held {
         if outcome.singles > 0 && self.singles + outcome.singles as usize > self.options.most_open {
             return Err(BatchError::TooManyOpen { limit: self.options.most_open });
         }
+        let find = |key: &SeriesKey| {
+            Ok::<_, Infallible>(self.marks.get(key).map(|(mark, _)| Known::Mark(mark.clone())))
+        };
+        let Ok(grown) = grow::settle(&batch.running, now, find);
+        if grown.new > 0 && self.marks.len() + grown.new > self.options.most_series {
+            return Err(BatchError::TooManySeries { limit: self.options.most_series });
+        }
         // Accepted; nothing below can fail.
         for name in new {
             self.streams.insert(name.into(), Stream::default());
@@ -114,6 +125,13 @@ impl Held {
                 stream.at(Period::Hour(*hour)).merge(tally);
             }
         }
+        for (name, hours) in &grown.streams {
+            let stream = self.streams.entry((*name).into()).or_default();
+            for (hour, tally) in &hours.0 {
+                stream.at(Period::Hour(*hour)).merge(tally);
+            }
+        }
+        self.marks.extend(grown.marks.into_iter().map(|(key, mark)| (key, (mark, time))));
         for (name, wait) in &outcome.waits {
             let mut hours = Hours::default();
             tally::file(wait, wait.at().unwrap_or(now), &mut hours);
@@ -144,7 +162,7 @@ impl Held {
         }
         while self.keys.len() > self.options.most_keys && self.forget_key(f64::INFINITY) {}
         let (joined, again, refused) = (outcome.waits.len() as u64, outcome.again, outcome.refused);
-        Ok(Entry { repeated: false, joined, again, refused })
+        Ok(Entry { repeated: false, joined, again, refused, grown: grown.waits, resets: grown.resets })
     }
 
     /// Forgets the oldest key if it was filed by then; whether there was one to look at.
@@ -176,6 +194,7 @@ impl Held {
             keep
         });
         self.singles = self.singles.saturating_sub(upkeep.expired as usize);
+        self.marks.retain(|_, (_, since)| *since > time - self.options.series_for);
         self.bad_lines = self.bad_lines.split_off(&Hour::of(time - keep_for));
         let oldest = i64::from(Hour::of(time - keep_for).day());
         self.records.retain(|(shelf, _, number), _| shelf.is_final() || *number >= oldest);

@@ -1,8 +1,8 @@
 //! Where tallies live and survive.
 //!
-//! In: [`Batch`]es of counted waits, of starts and ends of open waits, of counts of bad lines, of [`Record`]s. Out: the
-//! tally of any stream and window of UTC hours ([`Reader::window`]), the waits that are open now, the records, what is
-//! broken.
+//! In: [`Batch`]es of counted waits, of starts and ends of open waits, of readings of histograms that only grow, of counts
+//! of bad lines, of [`Record`]s. Out: the tally of any stream and window of UTC hours ([`Reader::window`]), the waits that
+//! are open now, the records, what is broken.
 //!
 //! # The promise
 //!
@@ -49,6 +49,7 @@ mod batch;
 mod clock;
 mod error;
 mod export;
+mod grow;
 mod memory;
 mod open;
 mod options;
@@ -193,6 +194,10 @@ pub struct Entry {
     pub again: u64,
     /// Starts and ends of which no wait can be made, such as an end before its start.
     pub refused: u64,
+    /// Waits by which histograms have grown since they were read last.
+    pub grown: u64,
+    /// Histograms that have begun anew since.
+    pub resets: u64,
 }
 
 /// What one [`Ledger::maintain`] did.

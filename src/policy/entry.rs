@@ -5,6 +5,7 @@ use super::keys::{
     DEFAULT_LARGEST_STEP, DEFAULT_SLACK, DEFAULT_WINDOW,
 };
 use super::{Glob, Warning};
+use crate::intake::Rules;
 use crate::stopping::{Aim, Worth};
 use serde::de::Error as _;
 use serde::{Deserialize, Deserializer, Serialize, Serializer};
@@ -22,6 +23,8 @@ pub struct Policy {
     pub entries: Vec<Entry>,
     /// When the daemon makes the week's recommendations; `None`: not by itself.
     pub weekly: Option<Weekly>,
+    /// How spans and histograms of telemetry become waits.
+    pub telemetry: Rules,
     /// What its writer may not have meant, in the order of the lines.
     pub warnings: Vec<Warning>,
 }

@@ -88,7 +88,7 @@ fn worth(row: &Row) -> String {
 }
 
 fn hours(row: &Row) -> String {
-    row.hours_per_day.map_or("-".into(), |hours| format!("{} h a day", say::number(hours)))
+    row.hours_per_day.map_or("-".into(), |hours| format!("{} a day", say::duration(3600.0 * hours)))
 }
 
 fn plus(value: f64) -> &'static str {

@@ -2,9 +2,9 @@
 
 use crate::advice::{Advice, Change};
 use crate::advise::{Curves, name_hash};
-use crate::chart::{Frame, Picture};
+use crate::chart::{Picture, at_both_widths};
 
-/// What each give-up time earns, as an `<svg>` element, where a change is proposed; its curves are asked for only then.
+/// What each give-up time earns, at both widths, where a change is proposed; its curves are asked for only then.
 pub fn picture(advice: &Advice, curves: impl FnOnce() -> Curves) -> Option<String> {
     let decision = &advice.advice;
     let changes = match decision.proposal {
@@ -13,7 +13,7 @@ pub fn picture(advice: &Advice, curves: impl FnOnce() -> Curves) -> Option<Strin
     };
     changes.then(|| {
         let prefix = format!("w{:016x}", name_hash(&advice.stream));
-        let frame = Frame { width: 720, prefix: &prefix, styled: false };
-        Picture::Rate.draw(&curves(), &frame).markup
+        let curves = curves();
+        at_both_widths(720, &prefix, |frame| Picture::Rate.draw(&curves, frame)).markup
     })
 }

@@ -9,6 +9,7 @@ mod house;
 mod kills;
 mod metrics;
 mod openapi;
+mod otlp;
 #[path = "../support/process.rs"]
 mod process;
 mod security;

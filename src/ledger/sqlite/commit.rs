@@ -10,8 +10,10 @@ use super::read::key_count;
 use super::seal::{checksum, record_seal};
 use super::{Queued, SqliteLedger, entry, read_lock, write_lock};
 use crate::ledger::batch::{EventKey, Hours};
+use crate::ledger::grow::{self, Known};
 use crate::ledger::open::{self, Filed, State};
 use crate::ledger::{Batch, BatchError, Digest, Entry, Hour, Options, Receipt, Record, Shelf};
+use crate::running::{Mark, SeriesKey};
 use crate::tally::{self, Tally};
 use crate::wait::Ending;
 
@@ -26,6 +28,9 @@ struct Plan<'b> {
     singles: usize,
     joined: usize,
     bad_lines: BTreeMap<&'b str, u64>,
+    marks: HashMap<SeriesKey, Mark>,
+    /// Of these, those of series that had none.
+    new_marks: usize,
     keys: HashMap<&'b str, Digest>,
     key_order: Vec<&'b str>,
     records: HashMap<(Shelf, &'b str, i64), &'b str>,
@@ -38,6 +43,14 @@ struct Target {
     place: Option<Place>,
 }
 
+/// What the ledger holds before a group is filed.
+#[derive(Clone, Copy)]
+struct Held<'l> {
+    live: &'l Live,
+    next_stream: i64,
+    marks: usize,
+}
+
 impl SqliteLedger {
     pub(super) fn file(&mut self, batches: &[Batch], now: f64) -> Result<Receipt> {
         let time = self.clock.follow(now);
@@ -46,7 +59,8 @@ impl SqliteLedger {
             let live = read_lock(&self.live);
             let mut plan = Plan { singles: live.singles, joined: live.joined, ..Plan::default() };
             for batch in batches {
-                let outcome = plan.admit(&tx, &live, batch, &self.options, self.next_stream, time)?;
+                let held = Held { live: &live, next_stream: self.next_stream, marks: self.marks };
+                let outcome = plan.admit(&tx, held, batch, &self.options, time, now)?;
                 plan.outcomes.push(outcome);
             }
             plan
@@ -57,6 +71,7 @@ impl SqliteLedger {
         plan.write_events(&tx, &read_lock(&self.live), self.options.most_open)?;
         plan.write_bad_lines(&tx, Hour::of(now))?;
         plan.write_records(&tx)?;
+        plan.write_marks(&tx, time)?;
         let (mut due, mut credit, mut appended) = (0, self.credit, None);
         let mut entry = entry::Writer::new();
         plan.tallies.iter().for_each(|(target, hour, tally)| entry.add(target.id, *hour, tally));
@@ -85,6 +100,7 @@ impl SqliteLedger {
         live.log_bytes += appended.map_or(0, |(_, length)| length);
         (live.singles, live.joined) = (plan.singles, plan.joined);
         self.next_stream = self.next_stream.saturating_add(plan.names.len() as i64);
+        self.marks += plan.new_marks;
         for (name, id) in plan.names {
             live.insert(name.into(), id);
         }
@@ -104,12 +120,13 @@ impl<'b> Plan<'b> {
     fn admit(
         &mut self,
         db: &Connection,
-        live: &Live,
+        held: Held<'_>,
         batch: &'b Batch,
         options: &Options,
-        next_stream: i64,
         time: f64,
+        now: f64,
     ) -> Result<Result<Entry, BatchError>> {
+        let Held { live, next_stream, marks } = held;
         if let Some((key, digest)) = &batch.key {
             let known = match self.keys.get(&**key) {
                 Some(known) => Some(*known),
@@ -142,6 +159,7 @@ impl<'b> Plan<'b> {
             batch.streams.iter().map(|(name, hours)| (name, hours, live.find(name))).collect();
         let unknown = known.iter().filter(|(_, _, found)| found.is_none()).map(|(name, _, _)| &***name);
         let awaited = batch.events.iter().map(|event| &*event.key.stream);
+        let awaited = awaited.chain(batch.running.iter().map(|running| &*running.stream));
         let new: HashSet<&str> = unknown
             .chain(awaited.filter(|name| live.find(name).is_none()))
             .filter(|name| !self.names.contains_key(name))
@@ -156,6 +174,13 @@ impl<'b> Plan<'b> {
         if outcome.singles > 0 && self.singles + outcome.singles as usize > options.most_open {
             return Ok(Err(BatchError::TooManyOpen { limit: options.most_open }));
         }
+        let grown = grow::settle(&batch.running, now, |key| match self.marks.get(key) {
+            Some(mark) => Ok(Some(Known::Mark(mark.clone()))),
+            None => find_mark(db, key),
+        })?;
+        if grown.new > 0 && marks + self.new_marks + grown.new > options.most_series {
+            return Ok(Err(BatchError::TooManySeries { limit: options.most_series }));
+        }
         let first = self.names.len() as i64;
         let ids = (first..).map(|i| next_stream.saturating_add(i));
         self.names.extend(new.into_iter().zip(ids));
@@ -169,6 +194,12 @@ impl<'b> Plan<'b> {
                 tally::file(wait, at, joined.entry(target).or_default());
             }
         }
+        for (name, hours) in grown.streams {
+            let Some(target) = self.target(live.find(name), name) else { continue };
+            self.tallies.extend(hours.0.into_iter().map(|(hour, tally)| (target, hour, Cow::Owned(tally))));
+        }
+        self.marks.extend(grown.marks);
+        self.new_marks += grown.new;
         for (target, hours) in joined {
             self.tallies.extend(hours.0.into_iter().map(|(hour, tally)| (target, hour, Cow::Owned(tally))));
         }
@@ -185,7 +216,8 @@ impl<'b> Plan<'b> {
             self.key_order.push(key);
         }
         let joined = outcome.waits.len() as u64;
-        Ok(Ok(Entry { repeated: false, joined, again: outcome.again, refused: outcome.refused }))
+        let (again, refused) = (outcome.again, outcome.refused);
+        Ok(Ok(Entry { repeated: false, joined, again, refused, grown: grown.waits, resets: grown.resets }))
     }
 
     /// Puts the tallies in the order of their streams, in which memory is walked through fastest, now and when the
@@ -283,6 +315,18 @@ impl<'b> Plan<'b> {
         Ok(())
     }
 
+    fn write_marks(&self, db: &Connection, time: f64) -> Result<()> {
+        if self.marks.is_empty() {
+            return Ok(());
+        }
+        let mut insert = db.prepare_cached("INSERT OR REPLACE INTO marks VALUES (?1, ?2, ?3, ?4)")?;
+        for (key, mark) in &self.marks {
+            let bytes = mark.encode();
+            insert.execute(params![key.0, time, checksum(&place(key), &bytes), bytes])?;
+        }
+        Ok(())
+    }
+
     fn write_bad_lines(&self, db: &Connection, hour: Hour) -> Result<()> {
         let mut insert = db.prepare_cached(
             "INSERT INTO bad_lines VALUES (?1, ?2, ?3) ON CONFLICT (hour, reason) DO UPDATE SET lines =
@@ -308,6 +352,23 @@ fn is_taken(db: &Connection, record: &Record) -> Result<bool> {
 fn find_key(db: &Connection, key: &str, since: f64) -> Result<Option<Digest>> {
     db.prepare_cached("SELECT digest FROM keys WHERE key = ?1 AND since > ?2")?
         .query_row(params![key, since], |row| row.get(0).map(Digest))
+        .optional()
+}
+
+/// A series' key as the numbers of its place.
+fn place(key: &SeriesKey) -> [i64; 2] {
+    let bits = u128::from_le_bytes(key.0);
+    [bits as i64, (bits >> 64) as i64]
+}
+
+/// What is remembered of a series.
+fn find_mark(db: &Connection, key: &SeriesKey) -> Result<Option<Known>> {
+    db.prepare_cached("SELECT seal, mark FROM marks WHERE key = ?1")?
+        .query_row([key.0], |row| {
+            let (seal, bytes): (i64, Vec<u8>) = (row.get(0)?, row.get(1)?);
+            let sound = i64::from(checksum(&place(key), &bytes)) == seal;
+            Ok(Mark::decode(&bytes).filter(|_| sound).map_or(Known::Broken, Known::Mark))
+        })
         .optional()
 }
 

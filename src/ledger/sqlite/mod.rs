@@ -45,6 +45,8 @@ pub struct SqliteLedger {
     /// The last entry's number.
     sequence: i64,
     next_stream: i64,
+    /// Histograms that are remembered.
+    marks: usize,
     /// Slots that the log's growth has paid for to be merged, below 1.
     credit: f64,
     clock: Clock,
@@ -88,7 +90,11 @@ impl SqliteLedger {
             .query_row("SELECT value FROM meta WHERE name = 'clock'", [], |row| row.get(0))
             .optional()
             .map_err(|error| fault(&path, error))?;
+        let marks: i64 = db
+            .query_row("SELECT count(*) FROM marks", [], |row| row.get(0))
+            .map_err(|error| fault(&path, error))?;
         let mut ledger = SqliteLedger {
+            marks: usize::try_from(marks).unwrap_or(0),
             reader: SqliteReader::beside(&path, Arc::clone(&live))?,
             db,
             live,

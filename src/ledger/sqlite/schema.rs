@@ -47,11 +47,13 @@ CREATE TABLE bad_lines (
 ";
 
 /// What layout 2 has more than layout 1.
-const RECORDS: &str = "
+const SECOND: &str = "
 CREATE TABLE records (
   shelf INTEGER NOT NULL, subject TEXT NOT NULL, number INTEGER NOT NULL, seal INTEGER NOT NULL, text TEXT NOT NULL,
   PRIMARY KEY (shelf, subject, number)
 );
+CREATE TABLE marks (key BLOB PRIMARY KEY, since REAL NOT NULL, seal INTEGER NOT NULL, mark BLOB NOT NULL) WITHOUT ROWID;
+CREATE INDEX marks_by_age ON marks (since);
 ";
 
 /// Opens the file for writing, makes it if there is none, and brings it to the present layout.
@@ -160,7 +162,7 @@ fn create(db: &Connection) -> Result<()> {
     db.execute_batch(&format!(
         "BEGIN IMMEDIATE;
          {TABLES}
-         {RECORDS}
+         {SECOND}
          INSERT INTO layout VALUES ({LAYOUT_VERSION}, '{PROGRAM}');
          PRAGMA application_id = {APPLICATION};
          PRAGMA user_version = {LAYOUT_VERSION};
@@ -173,7 +175,7 @@ fn upgrade(db: &Connection, found: i64) -> Result<()> {
     if found < 2 {
         db.execute_batch(&format!(
             "BEGIN IMMEDIATE;
-             {RECORDS}
+             {SECOND}
              INSERT INTO layout VALUES (2, '{PROGRAM}');
              PRAGMA user_version = 2;
              COMMIT;"
@@ -187,7 +189,7 @@ pub(super) fn has_records(db: &Connection) -> Result<bool> {
     db.query_row("PRAGMA user_version", [], |row| row.get::<_, i64>(0)).map(|version| version >= 2)
 }
 
-/// Gives the version, if it is one that can be read.
+/// The layout that a file has. What is older than the present one is brought there when it is opened for writing.
 fn check_layout(db: &Connection, path: &Path) -> Result<i64, LedgerError> {
     let pragma = |name: &str| -> Result<i64, LedgerError> {
         db.query_row(&format!("PRAGMA {name}"), [], |row| row.get(0)).map_err(|error| fault(path, error))

@@ -83,6 +83,11 @@ impl SqliteLedger {
         let keys = tx
             .prepare_cached("DELETE FROM keys WHERE since <= ?1 AND id < (SELECT min(id) FROM keys) + ?2")?
             .execute(params![keys_by, FORGETS as i64])?;
+        let marks = tx
+            .prepare_cached(
+                "DELETE FROM marks WHERE key IN (SELECT key FROM marks WHERE since <= ?1 ORDER BY since LIMIT ?2)",
+            )?
+            .execute(params![time - self.options.series_for, FORGETS as i64])?;
         let joined = forget(&tx, true, keys_by, FORGETS)?;
         let expired = forget(&tx, false, time - self.options.open_for, FORGETS)?;
         let (singles, all_joined) = {
@@ -94,7 +99,7 @@ impl SqliteLedger {
             write_count(&tx, "joined", all_joined)?;
         }
         upkeep.expired = expired as u64;
-        upkeep.more |= [keys, joined, expired].contains(&FORGETS);
+        upkeep.more |= [keys, marks, joined, expired].contains(&FORGETS);
         tx.prepare_cached("DELETE FROM bad_lines WHERE hour < ?1")?
             .execute([Hour::of(time - self.options.keep_for).0])?;
         tx.prepare_cached("DELETE FROM records WHERE shelf = ?1 AND subject = '' AND number < ?2")?
@@ -115,6 +120,7 @@ impl SqliteLedger {
         tx.commit()?;
 
         self.rounds = rounds;
+        self.marks = self.marks.saturating_sub(marks);
         let mut live = write_lock(&self.live);
         (live.singles, live.joined) = (singles, all_joined);
         live.forget(&gone);

@@ -4,6 +4,7 @@ mod advice;
 mod gate;
 mod health;
 mod open;
+mod otlp;
 mod settle;
 mod stream;
 mod waits;
@@ -35,6 +36,8 @@ pub(super) type App = State<Arc<Shared>>;
 fn routes() -> Vec<(&'static str, &'static str, MethodRouter<Arc<Shared>>)> {
     vec![
         ("/v1/waits", "POST", post(waits::take)),
+        ("/v1/traces", "POST", post(otlp::traces)),
+        ("/v1/metrics", "POST", post(otlp::metrics)),
         ("/v1/advice", "GET, HEAD", get(advice::all)),
         ("/v1/advice/{*stream}", "GET, HEAD", get(advice::one)),
         ("/v1/streams/{*question}", "GET, HEAD", get(stream::ask)),

@@ -184,9 +184,13 @@ pub(super) fn show(
     let content = Content {
         name: &advice.stream,
         finding: finding(advice),
-        because: sentence(&decision.because),
-        verdict: sentence(&format!("{}; {}", advice.tail.class.words(), advice.tail.remaining_wait.words())),
-        reason: sentence(&advice.tail.reason),
+        because: say::capital(&decision.because),
+        verdict: say::capital(&format!(
+            "{}; {}",
+            advice.tail.class.words(),
+            advice.tail.remaining_wait.words()
+        )),
+        reason: say::capital(&advice.tail.reason),
         next: next(advice),
         in_path: in_path(&advice.stream),
         made: Moment::of(fresh.made_at),
@@ -207,12 +211,6 @@ pub(super) fn show(
     };
     let status = if wrong.is_some() { StatusCode::BAD_REQUEST } else { tried.unwrap_or(StatusCode::OK) };
     page(status, "stream.html", Shell::new(shared, "stream", advice.stream.clone()), content)
-}
-
-/// With a capital letter.
-fn sentence(words: &str) -> String {
-    let mut letters = words.chars();
-    letters.next().map_or_else(String::new, |first| first.to_uppercase().chain(letters).collect())
 }
 
 /// A time as it would be typed.
