@@ -62,7 +62,7 @@ fn once_a_week_over_restarts() {
     assert_eq!((&week["schema"], &week["due"]), (&"outwait/weekly/1".into(), &"2026-12-07".into()));
     assert!(week["since"].is_null());
     let html = fs::read_to_string(path.join("runs/weekly-2026-12-07.html")).unwrap();
-    assert!(html.contains("<figure><svg"), "the change to sign has its picture");
+    assert!(html.contains("<figure><div class=\"ow-wide\"><svg"), "the change to sign has its picture");
     for form in ["md", "html", "csv"] {
         assert!(path.join(format!("runs/weekly-2026-12-07.{form}")).exists());
     }
