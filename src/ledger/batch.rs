@@ -182,6 +182,11 @@ impl Batch {
         self.streams.keys().map(|name| &**name).chain(awaited).chain(running)
     }
 
+    /// Whether a wait may be open because of it.
+    pub fn ties(&self) -> bool {
+        !self.events.is_empty()
+    }
+
     /// How many waits it counts, not those that its events and readings may make.
     pub fn waits(&self) -> u64 {
         self.streams

@@ -424,3 +424,17 @@ impl fmt::Display for Subject {
         self.says.iter().try_for_each(|sentence| writeln!(f, "  {sentence}"))
     }
 }
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    #[test]
+    fn the_schedule_is_told() {
+        let text =
+            "version: 1\nweekly: {day: sunday, hour: 2, time_zone: Europe/Paris}\nstreams:\n  - match: a\n";
+        let policy = crate::policy::parse(text, "policy.yaml").unwrap();
+        let told = describe(&policy, &[]).to_string();
+        assert!(told.contains("every Sunday at 02:00 by the clock of Europe/Paris, once"), "{told}");
+    }
+}

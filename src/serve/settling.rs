@@ -233,9 +233,14 @@ fn keep(shared: &Shared, turn: &mut Turn, new: &[(&str, &Settlement)]) -> Result
     }
     let answer = shared.counter.hand_in(batch, shared)?;
     match answer.blocking_recv().map_err(|_| Refusal::Stopping)? {
-        // Nobody else writes this ledger, so what is taken there is this, with an answer that was lost.
-        Err(Refusal::Batch(BatchError::Taken { .. })) | Ok(_) => {}
-        Err(other) => return Err(other),
+        Ok(_) => {}
+        Err(refusal) => {
+            // Nobody else writes this ledger; were it so, the next try goes on after what stands there.
+            if let Refusal::Batch(BatchError::Taken { subject, number }) = &refusal {
+                turn.next.insert(subject.clone(), number + 1);
+            }
+            return Err(refusal);
+        }
     }
     let streams: Vec<String> = next.keys().map(|stream| (*stream).to_owned()).collect();
     next.into_iter().for_each(|(stream, number)| _ = turn.next.insert(stream.to_owned(), number));

@@ -212,10 +212,18 @@ impl Settled {
         self.history(stream).iter().any(|known| known.is(settlement))
     }
 
-    /// What another has and this has not, streams by name, the oldest first.
+    /// What another has and this has not, streams by name, the oldest first; what it has twice once.
     pub fn missing<'a>(&self, other: &'a Settled) -> Vec<(&'a str, &'a Settlement)> {
-        let all = other.streams().flat_map(|(stream, history)| history.iter().map(move |one| (stream, one)));
-        all.filter(|(stream, one)| !self.knows(stream, one)).collect()
+        let mut missing: Vec<(&str, &Settlement)> = Vec::new();
+        for (stream, history) in other.streams() {
+            let first = missing.len();
+            for one in history {
+                if !self.knows(stream, one) && missing[first..].iter().all(|(_, known)| !known.is(one)) {
+                    missing.push((stream, one));
+                }
+            }
+        }
+        missing
     }
 
     /// What had been decided by then.
@@ -302,5 +310,29 @@ mod tests {
         settled.add("desk", settlement(State::Undone, "2026-11-17T10:00:02Z"));
         assert_eq!(settled.standing("desk"), Standing::default());
         assert_eq!(settled.history("desk").len(), 7);
+    }
+
+    /// Brought together in any order, two histories become the same one, and nothing is in it twice.
+    #[test]
+    fn histories_are_joined() {
+        let one = |time: f64, at: &str| settlement(State::Pinned { give_up_after: GiveUp::After(time) }, at);
+        let (mut ours, mut theirs) = (Settled::default(), Settled::default());
+        ours.add("desk", one(3.0, "2026-11-03T10:00:00Z"));
+        ours.add("desk", one(1.0, "2026-11-01T10:00:00Z"));
+        theirs.add("desk", one(2.0, "2026-11-02T10:00:00Z"));
+        theirs.add("desk", Settlement { why: "other words".into(), ..one(1.0, "2026-11-01T10:00:00Z") });
+        theirs.add("desk", one(2.0, "2026-11-02T10:00:00Z"));
+        let join = |to: &Settled, from: &Settled| {
+            let mut joined = to.clone();
+            to.missing(from).into_iter().for_each(|(stream, one)| joined.add(stream, one.clone()));
+            joined
+        };
+        let times = |settled: &Settled| -> Vec<f64> {
+            let history = settled.history("desk").iter();
+            history.map(|one| one.state.in_force().unwrap().seconds()).collect()
+        };
+        assert_eq!(times(&join(&ours, &theirs)), [1.0, 2.0, 3.0]);
+        assert!(join(&ours, &theirs).missing(&theirs).is_empty());
+        assert_eq!(times(&ours.by("2026-11-02T10:00:00Z".parse().unwrap())), [1.0]);
     }
 }

@@ -29,6 +29,16 @@ async function watched(options, what) {
   return page;
 }
 
+// By axe's rules (WCAG 2.2 A and AA among them).
+async function judged(page, what) {
+  // The policy keeps a script out that is put into the page; this way in is the driver's own.
+  await page.evaluate(axe);
+  const { violations } = await page.evaluate(() => globalThis.axe.run());
+  for (const { id, help, nodes } of violations) {
+    fault(`${what}: ${id}: ${help}: ${nodes.slice(0, 3).map((node) => node.html.slice(0, 160)).join(" | ")}`);
+  }
+}
+
 const pages = [
   ["streams", "/"],
   ["none", "/?name=nothing-like-it"],
@@ -40,7 +50,7 @@ const pages = [
   ["problem", "/stream/nobody"],
 ];
 
-// Looked at, light and dark, at three widths; axe's rules (WCAG 2.2 A and AA among them) on each.
+// Looked at, light and dark, at three widths, and judged.
 for (const colorScheme of ["light", "dark"]) {
   for (const width of [320, 1024, 1920]) {
     const page = await watched({ colorScheme, viewport: { width, height: width === 320 ? 640 : 1080 } }, `${colorScheme} ${width}`);
@@ -52,12 +62,7 @@ for (const colorScheme of ["light", "dark"]) {
       await page.screenshot({ path: join(shots, `${name}-${colorScheme}-${width}.png`), fullPage: true });
       const over = await page.evaluate(() => document.documentElement.scrollWidth - document.documentElement.clientWidth);
       if (over > 0) fault(`${path} at ${width}: ${over} px wider than the window`);
-      // The policy keeps a script out that is put into the page; this way in is the driver's own.
-      await page.evaluate(axe);
-      const { violations } = await page.evaluate(() => globalThis.axe.run());
-      for (const { id, help, nodes } of violations) {
-        fault(`${path} ${colorScheme} ${width}: ${id}: ${help}: ${nodes.slice(0, 3).map((node) => node.html.slice(0, 160)).join(" | ")}`);
-      }
+      await judged(page, `${path} ${colorScheme} ${width}`);
     }
     await page.context().close();
   }
@@ -178,6 +183,8 @@ for (const colorScheme of ["light", "dark"]) {
   await page.fill("#why", "agreed on Monday");
   await page.press("#why", "Enter");
   assert.match(await page.locator("[role=alert]").innerText(), /Nothing is ticked/);
+  await judged(page, "a week that was not signed");
+  await page.screenshot({ path: join(shots, "unticked-light-1024.png"), fullPage: true });
   await page.check("ol.road li:nth-child(2) input[type=checkbox]");
   await page.click("text=Sign those ticked");
   assert.match(await page.locator("[role=status]").innerText(), /One is signed/);
@@ -186,6 +193,17 @@ for (const colorScheme of ["light", "dark"]) {
   await page.click("text=/Sign all/");
   await page.screenshot({ path: join(shots, "signed-light-1024.png"), fullPage: true });
   assert.match(await page.locator("[role=status]").innerText(), /signed and in force/);
+  await judged(page, "a week that was signed");
+  // With its decision between the lanes, and a form that was not taken.
+  await page.goto(`${origin}/stream/index.rebuild`);
+  assert.equal(await page.locator(".past .word").count(), 1);
+  await page.check("input[name=decision][value=pin]");
+  await page.fill("#by", "Ada");
+  await page.fill("#why", "no time");
+  await page.click("text=Sign it");
+  assert.match(await page.locator(".settle .wrong").innerText(), /give_up_after: missing/);
+  await judged(page, "a form that was not taken");
+  await page.goto(`${origin}/week`);
   page.expected = false;
   const [download] = await Promise.all([page.waitForEvent("download"), page.click("a[href='/v1/weekly?form=html']")]);
   const document = readFileSync(await download.path(), "utf8");

@@ -3,6 +3,7 @@
 use std::sync::Arc;
 
 use axum::body::Bytes;
+use axum::extract::rejection::BytesRejection;
 use axum::extract::{Path, State};
 use axum::http::{HeaderValue, StatusCode, Uri, header};
 use axum::response::{IntoResponse, Response};
@@ -146,12 +147,12 @@ pub(super) async fn post(
     State(shared): App,
     Path(stream): Path<String>,
     uri: Uri,
-    body: Bytes,
+    body: Result<Bytes, BytesRejection>,
 ) -> Result<Response, Problem> {
     parameters(&uri, &[])?;
-    if body.len() > MOST {
-        return Err(Problem::parameter("body", "too long", format!("send at most {MOST} bytes")));
-    }
+    let body = body.ok().filter(|body| body.len() <= MOST).ok_or_else(|| {
+        Problem::parameter("body", "too long, or broken off", format!("send at most {MOST} bytes"))
+    })?;
     let wish: Wish = serde_json::from_slice(&body).map_err(|error| {
         Problem::parameter(
             "body",

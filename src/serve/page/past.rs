@@ -99,8 +99,7 @@ impl Past {
 fn chosen(days: &[(i32, Day)]) -> Vec<(i32, &Day)> {
     let Some((newest, _)) = days.first() else { return Vec::new() };
     let mut weeks = std::collections::HashSet::new();
-    let keep = |day: i32| newest - day < EACH || weeks.insert((newest - day) / 7);
-    let mut keep = keep;
+    let mut keep = |day: i32| newest - day < EACH || weeks.insert((newest - day) / 7);
     days.iter().filter(|(day, _)| keep(*day)).map(|(day, what)| (*day, what)).collect()
 }
 
