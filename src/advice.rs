@@ -294,6 +294,44 @@ pub struct Decision {
     pub schedule_s: Vec<f64>,
     /// A stop-gap while evidence is gathered, s per attempt in turn; labelled as one.
     pub stop_gap_s: Vec<f64>,
+    /// What it costs that endings are known by buckets only; absent where hardly any is.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub buckets: Option<BucketCost>,
+}
+
+/// What the width of buckets leaves open: all endings at their lower ends and all at their upper ends are the two readings
+/// between which the truth lies.
+#[derive(Clone, Debug, PartialEq, Serialize, Deserialize)]
+pub struct BucketCost {
+    /// Share of endings that are known by a bucket only.
+    pub share: f64,
+    /// Share of the best rate that the advised time loses under the reading that is worse for it; absent without an advised
+    /// time.
+    pub cost: Option<f64>,
+    /// Between which ages the best give-up time of these waits lies, wherever in their buckets they ended, s.
+    pub best_between_s: Option<[f64; 2]>,
+    /// Between which rates the best one lies, per second.
+    pub rate_between_per_s: Option<[f64; 2]>,
+    /// Bounds to add to the layout, those that help most, s; with `blind` a whole layout.
+    pub add_bounds_s: Vec<f64>,
+    /// Why the layout cannot answer at all, if it cannot.
+    pub blind: Option<Blind>,
+}
+
+/// A bucket that holds nearly all endings and of which nothing more is known.
+#[derive(Clone, Copy, Debug, PartialEq, Serialize, Deserialize)]
+#[serde(rename_all = "snake_case")]
+pub enum Blind {
+    /// The first one: wider than the whole law.
+    First {
+        /// Its bound, s.
+        upto_s: f64,
+    },
+    /// The last one: above all bounds.
+    Last {
+        /// The last bound, s.
+        over_s: f64,
+    },
 }
 
 /// Which way to move the time in force.

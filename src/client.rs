@@ -127,6 +127,20 @@ impl Client {
         Ok(answer.body_mut().with_config().limit(MOST).read_to_vec()?)
     }
 
+    /// What is at an address, at most so many bytes of it, asked for with these headers.
+    ///
+    /// # Errors
+    /// [`CallError`].
+    pub fn fetch(&self, url: &str, headers: &[(&str, &str)], most: u64) -> Result<Vec<u8>, CallError> {
+        let mut request = self.0.get(url);
+        for (name, value) in headers {
+            request = request.header(*name, *value);
+        }
+        let mut answer = request.call()?;
+        succeeded(answer.status().as_u16())?;
+        Ok(answer.body_mut().with_config().limit(most).read_to_vec()?)
+    }
+
     /// Posts a body and takes any successful answer.
     ///
     /// # Errors

@@ -4,10 +4,13 @@
 //! coverage-guided fuzzer.
 #![allow(clippy::unwrap_used, clippy::panic)] // a test may fail
 
+#[path = "support/otlp.rs"]
+mod telemetry_of;
+
 use std::io::Write;
 use std::num::NonZeroUsize;
 
-use outwait::intake::{Allowed, Options, Record, Sink, Source, read};
+use outwait::intake::{Allowed, Format, Options, Record, Sink, Source, read};
 use outwait::policy;
 use outwait::tally::Tally;
 use outwait::wait::{Age, Ending, Wait, check_stream};
@@ -117,6 +120,88 @@ fn bodies() {
         }
     }
     assert!(taken > rounds() / 4, "{taken} waits survived: the mutations are too wild to test anything");
+}
+
+/// Telemetry in each of its forms.
+#[test]
+fn telemetry() {
+    let spans = telemetry_of::traces(
+        "desk",
+        vec![
+            telemetry_of::span("loan", 5_000_000, vec![telemetry_of::attribute("error.type", "timeout")], 2),
+            telemetry_of::span("loan", 0, vec![telemetry_of::attribute("http.request.resend_count", 2)], 0),
+        ],
+    );
+    let points = telemetry_of::metrics(
+        "desk",
+        vec![
+            telemetry_of::histogram("wait", 1, telemetry_of::point(0, &[0.0, 5.0, 10.0], &[1, 2, 3, 4])),
+            telemetry_of::histogram("wait", 2, telemetry_of::point(0, &[5.0], &[1, 2])),
+            telemetry_of::Metric {
+                unit: "s".into(),
+                data: Some(telemetry_of::Data::Exponential(telemetry_of::Exponential {
+                    aggregation_temporality: 1,
+                    data_points: vec![telemetry_of::ExponentialPoint {
+                        time_unix_nano: telemetry_of::NOON_NANO,
+                        count: 6,
+                        scale: 3,
+                        zero_count: 1,
+                        positive: Some(telemetry_of::Buckets { offset: -4, bucket_counts: vec![1, 0, 4] }),
+                        ..Default::default()
+                    }],
+                })),
+                ..Default::default()
+            },
+        ],
+    );
+    const JSON: &str = r#"{"resourceSpans":[{"resource":{"attributes":[{"key":"service.name","value":{"stringValue":"desk"}}]},
+        "scopeSpans":[{"spans":[{"name":"loan","kind":3,"startTimeUnixNano":"1796039999000000000","endTimeUnixNano":1796040000000000000,
+        "attributes":[{"key":"n","value":{"intValue":"5"}},{"key":"d","value":{"doubleValue":1.5}}],"status":{"code":2}}]}]}]}"#;
+    const METRICS_JSON: &str = r#"{"resourceMetrics":[{"scopeMetrics":[{"metrics":[{"name":"w","unit":"ms","exponentialHistogram":{
+        "aggregationTemporality":1,"dataPoints":[{"timeUnixNano":"1796040000000000000","count":"3","scale":2,"zeroCount":1,
+        "positive":{"offset":-1,"bucketCounts":["1","1"]},"zeroThreshold":0.5}]}}]}]}]}"#;
+    const TEXT: &str = "# TYPE w_seconds histogram\nw_seconds_bucket{r=\"a\\n\",le=\"0.1\"} 3\nw_seconds_bucket{r=\"a\\n\",le=\"+Inf\"} 5 # {} 0.7\n\
+        w_seconds_count{r=\"a\\n\"} 5\nw_seconds_sum{r=\"a\\n\"} NaN\n# EOF\n";
+    let corpus = [
+        (Format::OtlpTraces, prost::Message::encode_to_vec(&spans)),
+        (Format::OtlpMetrics, prost::Message::encode_to_vec(&points)),
+        (Format::OtlpTraces, JSON.into()),
+        (Format::OtlpMetrics, METRICS_JSON.into()),
+        (Format::MetricsText, TEXT.into()),
+    ];
+    let words: [&[u8]; 12] = [
+        b"\xff\xff\xff\xff\xff\xff\xff\xff\xff\x01",
+        b"\x0a\x00",
+        b"\x00\x00\x00\x00\x00\x00\xf8\x7f",
+        b"null",
+        b"[[[[",
+        b"{}",
+        b"\"NaN\"",
+        b"9223372036854775808",
+        b"-1",
+        b"le=\"+Inf\"",
+        b"\n# EOF",
+        b"1e999",
+    ];
+    let mut random = Xoshiro256PlusPlus::seed_from_u64(11);
+    let mut taken = 0;
+    for _ in 0..rounds() {
+        let (format, mut body) = corpus[random.random_range(0..corpus.len())].clone();
+        mutate(&mut body, &words, &mut random);
+        let options = Options {
+            format: Some(format),
+            bad_lines: Allowed::All,
+            threads: NonZeroUsize::new(1),
+            total_bytes: 1 << 20,
+            ..Options::default()
+        };
+        let source = Source::reader("body", std::io::Cursor::new(body));
+        if let Ok((sink, report)) = read(vec![source], &options, Checking { waits: 0 }, &mut |_| ()) {
+            assert_eq!(sink.waits, report.waits);
+            taken += sink.waits;
+        }
+    }
+    assert!(taken > rounds() / 10, "{taken} waits survived: the mutations are too wild to test anything");
 }
 
 #[test]

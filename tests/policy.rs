@@ -434,6 +434,10 @@ fn every_key_is_read() {
             Section::Backoff => {
                 format!("version: 1\nstreams: [{{retry: {{backoff: {{{}: '%'}}}}}}]\n", key.name)
             }
+            Section::Scrape => {
+                let url = if key.name == "url" { "" } else { "url: 'http://a/', " };
+                format!("version: 1\nstreams: [{{match: a}}]\nscrape: [{{{url}{}: '%'}}]\n", key.name)
+            }
             section @ (Section::Weekly | Section::Telemetry) => {
                 let path = section.path();
                 format!("version: 1\nstreams: [{{match: a}}]\n{path}: {{{}: '%'}}\n", key.name)
@@ -457,6 +461,11 @@ fn every_example_is_fit() {
         let (name, example) = (key.name, key.example);
         let mut entry = match key.section {
             Section::File => continue,
+            Section::Scrape => {
+                let url = if name == "url" { "" } else { "url: 'http://a/', " };
+                read(&format!("version: 1\nstreams: [{{match: a}}]\nscrape: [{{{url}{name}: {example}}}]\n"));
+                continue;
+            }
             section @ (Section::Weekly | Section::Telemetry) => {
                 let path = section.path();
                 read(&format!("version: 1\nstreams: [{{match: a}}]\n{path}: {{{name}: {example}}}\n"));

@@ -451,3 +451,176 @@ fn lines_of_documents() {
         assert_eq!(report.bad.count, 1);
     }
 }
+
+/// The histogram of the text format's own documentation (prometheus.io/docs/instrumenting/exposition_formats), with what
+/// stands around it there.
+const TEXT: &str = r#"# HELP http_requests_total The total number of HTTP requests.
+# TYPE http_requests_total counter
+http_requests_total{method="post",code="200"} 1027 1395066363000
+# Minimalistic line:
+metric_without_timestamp_and_labels 12.47
+
+# A histogram, which has a pretty complex representation in the text format:
+# HELP http_request_duration_seconds A histogram of the request duration.
+# TYPE http_request_duration_seconds histogram
+http_request_duration_seconds_bucket{le="0.05"} 24054
+http_request_duration_seconds_bucket{le="0.1"} 33444
+http_request_duration_seconds_bucket{le="0.2"} 100392
+http_request_duration_seconds_bucket{le="0.5"} 129389
+http_request_duration_seconds_bucket{le="1"} 133988
+http_request_duration_seconds_bucket{le="+Inf"} 144320
+http_request_duration_seconds_sum 53423
+http_request_duration_seconds_count 144320
+
+# TYPE rpc_duration_seconds summary
+rpc_duration_seconds{quantile="0.01"} 3102
+rpc_duration_seconds_sum 1.7560473e+07
+rpc_duration_seconds_count 2693
+"#;
+
+fn scraped(texts: &[&str]) -> (Vec<(String, Wait)>, Report) {
+    let bodies = texts.iter().map(|text| text.as_bytes().to_vec()).collect();
+    took(bodies, &options(Some(Format::MetricsText)))
+}
+
+#[test]
+fn the_text_formats_own_histogram() {
+    let (waits, report) = took(vec![TEXT.into()], &options(None));
+    assert_eq!((report.files[0].format, report.bad.count, report.lines), (Some(Format::MetricsText), 0, 22));
+    let inf = f64::INFINITY;
+    let expected = [
+        (0.0, 0.05, 24_054),
+        (0.05, 0.1, 9_390),
+        (0.1, 0.2, 66_948),
+        (0.2, 0.5, 28_997),
+        (0.5, 1.0, 4_599),
+        (1.0, inf, 10_332),
+    ];
+    assert_eq!(buckets(&waits), expected);
+    assert!(
+        waits.iter().all(|(stream, wait)| stream == "http_request_duration_seconds" && wait.at().is_none())
+    );
+    // The parser prometheus-parse 0.2 reads the same counts.
+    let scrape = prometheus_parse::Scrape::parse(TEXT.lines().map(|line| Ok(line.to_owned()))).unwrap();
+    let histogram = scrape.samples.iter().find_map(|sample| match &sample.value {
+        prometheus_parse::Value::Histogram(counts) => Some(counts),
+        _ => None,
+    });
+    let mut sum = 0;
+    for (count, (_, upto, more)) in histogram.unwrap().iter().zip(expected) {
+        sum += more;
+        assert_eq!((count.less_than, count.count), (upto, sum as f64));
+    }
+}
+
+/// The histogram of the OpenMetrics specification ("Histogram" and "Exemplars"): times in seconds, a start, exemplars.
+#[test]
+fn the_histogram_of_open_metrics() {
+    let text = "# TYPE foo_seconds histogram\n# UNIT foo_seconds seconds\n\
+        foo_seconds_bucket{le=\"0.0\"} 0 1520879607.5\nfoo_seconds_bucket{le=\"1e-05\"} 0 1520879607.5\n\
+        foo_seconds_bucket{le=\"0.01\"} 0 1520879607.5\n\
+        foo_seconds_bucket{le=\"0.1\"} 8 1520879607.5 # {} 0.054\n\
+        foo_seconds_bucket{le=\"1.0\"} 11 1520879607.5 # {trace_id=\"KOO5S4vxi0o\"} 0.67\n\
+        foo_seconds_bucket{le=\"10.0\"} 17 1520879607.5 # {trace_id=\"oHg5SJYRHA0\"} 9.8 1520879607.789\n\
+        foo_seconds_bucket{le=\"+Inf\"} 17 1520879607.5\nfoo_seconds_count 17 1520879607.5\n\
+        foo_seconds_sum 324789.3 1520879607.5\nfoo_seconds_created 1520430000.123 1520879607.5\n# EOF\n";
+    let (waits, report) = took(vec![text.into()], &options(None));
+    assert_eq!(report.bad.count, 0, "{:?}", report.bad);
+    assert_eq!(buckets(&waits), [(0.01, 0.1, 8), (0.1, 1.0, 3), (1.0, 10.0, 6)]);
+    assert!(waits.iter().all(|(_, wait)| wait.at() == Some(1_520_879_607.5)));
+}
+
+#[test]
+fn two_scrapes_are_their_difference() {
+    let page = |counts: [u64; 4], more: &str| {
+        let [a, b, inf, count] = counts;
+        format!(
+            "# TYPE w_seconds histogram\nw_seconds_bucket{{route=\"a\",le=\"1\"}} {a}\n\
+             w_seconds_bucket{{le=\"2\",route=\"a\"}} {b}\nw_seconds_bucket{{route=\"a\",le=\"+Inf\"}} {inf}\n\
+             w_seconds_count{{route=\"a\"}} {count}\n{more}"
+        )
+    };
+    let inf = f64::INFINITY;
+    let (one, _) = scraped(&[&page([5, 8, 9, 9], "")]);
+    assert_eq!(buckets(&one), [(0.0, 1.0, 5), (1.0, 2.0, 3), (2.0, inf, 1)], "alone: since the start");
+    let (two, _) = scraped(&[&page([5, 8, 9, 9], ""), &page([6, 9, 12, 12], "")]);
+    assert_eq!(buckets(&two), [(0.0, 1.0, 1), (2.0, inf, 2)]);
+    let (reset, _) = scraped(&[&page([5, 8, 9, 9], ""), &page([1, 1, 1, 1], "")]);
+    assert_eq!(buckets(&reset), [(0.0, 1.0, 1)]);
+    // A layout that has changed: what both can tell.
+    let finer = "# TYPE w_seconds histogram\nw_seconds_bucket{route=\"a\",le=\"1\"} 6\n\
+                 w_seconds_bucket{route=\"a\",le=\"1.5\"} 8\nw_seconds_bucket{route=\"a\",le=\"2\"} 10\n\
+                 w_seconds_bucket{route=\"a\",le=\"+Inf\"} 12\n";
+    let (changed, _) = scraped(&[&page([5, 8, 9, 9], ""), finer]);
+    assert_eq!(buckets(&changed), [(0.0, 1.0, 1), (1.0, 2.0, 1), (2.0, inf, 1)]);
+    // Another series is another, and one that only the later page has is counted since its start.
+    let other = "w_seconds_bucket{route=\"b\",le=\"1\"} 4\nw_seconds_bucket{route=\"b\",le=\"+Inf\"} 4\n";
+    let (more, _) = scraped(&[&page([5, 8, 9, 9], ""), &page([5, 8, 9, 9], other)]);
+    assert_eq!(buckets(&more), [(0.0, 1.0, 4)]);
+    // A bucket up to +Inf is missing, but not the count.
+    let text = "# TYPE w_ms histogram\nw_ms_bucket{le=\"1\"} 5\nw_ms_count 9\n";
+    assert_eq!(buckets(&scraped(&[text]).0), [(0.0, 0.001, 5), (0.001, inf, 4)]);
+}
+
+#[test]
+fn bad_pages_are_told_and_the_rest_is_read() {
+    let told = |text: &str| reasons(&scraped(&[text]).1).first().copied();
+    let of = |lines: &str| format!("# TYPE w_seconds histogram\n{lines}\n");
+    assert_eq!(told(&of("w_seconds_bucket{le=\"1\"} 5")), Some(("buckets", "without a total")));
+    assert_eq!(told(&of("w_seconds_bucket{le=\"x\"} 5")), Some(("le", "not a number")));
+    assert_eq!(told(&of("w_seconds_bucket 5")), Some(("le", "not a number")));
+    for count in ["NaN", "-1", "0.5", "9223372036854775808", "+Inf"] {
+        assert_eq!(
+            told(&of(&format!("w_seconds_bucket{{le=\"+Inf\"}} {count}"))),
+            Some(("count", "not a whole number"))
+        );
+    }
+    let sinks = "w_seconds_bucket{le=\"1\"} 5\nw_seconds_bucket{le=\"2\"} 3\nw_seconds_bucket{le=\"+Inf\"} 9";
+    assert_eq!(told(&of(sinks)), Some(("buckets", "sinking")));
+    let twice =
+        "w_seconds_bucket{le=\"1\"} 5\nw_seconds_bucket{le=\"1.0\"} 5\nw_seconds_bucket{le=\"+Inf\"} 9";
+    assert_eq!(told(&of(twice)), Some(("bounds", "not increasing")));
+    let differs = "w_seconds_bucket{le=\"+Inf\"} 9\nw_seconds_count 8";
+    assert_eq!(told(&of(differs)), Some(("count", "not the sum of the buckets")));
+    assert_eq!(told("w_seconds_bucket{le=\"1} 5"), Some(("line", "not a sample")));
+    assert_eq!(told("\u{0}"), Some(("line", "not a sample")));
+    // A sum that is none does no harm, and a bad line costs itself.
+    let text = of(
+        "w_seconds_bucket{le=\"1\"} 5\n!\nw_seconds_bucket{le=\"+Inf\"} 9\nw_seconds_sum NaN\nw_seconds_count 9",
+    );
+    let (waits, report) = scraped(&[&text]);
+    assert_eq!((waits.len(), report.bad.examples[0].line, report.bad.count), (2, 3, 1));
+    // Histograms of bytes, gauges of histograms and summaries are none of ours.
+    let text = "# TYPE size_bytes histogram\nsize_bytes_bucket{le=\"+Inf\"} 9\n# TYPE g_seconds gaugehistogram\n\
+                g_seconds_bucket{le=\"+Inf\"} 9\n# TYPE s_seconds summary\ns_seconds_count 9\n";
+    assert_eq!((scraped(&[text]).0.len(), scraped(&[text]).1.bad.count), (0, 0));
+    let buckets: String = (0..20_000).map(|i| format!("w_seconds_bucket{{le=\"{i}\"}} 1\n")).collect();
+    assert_eq!(told(&of(&buckets)), Some(("bounds", "too many bounds")));
+}
+
+proptest! {
+    /// Any text is read without a panic, and every histogram that another library writes is read whole.
+    #[test]
+    fn pages_of_a_library(waits in prop::collection::vec(0.0..100.0f64, 0..50), noise in "\\PC{0,40}") {
+        use prometheus::Encoder;
+        let opts = prometheus::HistogramOpts::new("w_seconds", "Waits.\nIn two lines.").const_label("route", "a\"b\\c\n");
+        let histogram = prometheus::Histogram::with_opts(opts).unwrap();
+        waits.iter().for_each(|wait| histogram.observe(*wait));
+        let registry = prometheus::Registry::new();
+        registry.register(Box::new(histogram)).unwrap();
+        let mut text = Vec::new();
+        prometheus::TextEncoder::new().encode(&registry.gather(), &mut text).unwrap();
+        let (read, report) = took(vec![text.clone()], &options(None));
+        prop_assert_eq!(report.bad.count, 0);
+        prop_assert_eq!(read.iter().map(|(_, wait)| wait.count()).sum::<u64>(), waits.len() as u64);
+        for wait in &waits {
+            let holds = |(_, one): &(String, Wait)| match one.age() {
+                Age::Between { over, upto } => over < *wait && *wait <= upto,
+                Age::Exact(_) => false,
+            };
+            prop_assert!(*wait == 0.0 || read.iter().any(holds), "{} is in no bucket", wait);
+        }
+        text.extend_from_slice(noise.as_bytes());
+        let _ = took(vec![text], &options(Some(Format::MetricsText)));
+    }
+}

@@ -3,6 +3,7 @@
 
 mod believed;
 mod bounds;
+mod buckets;
 mod cautions;
 mod curves;
 mod judge;
@@ -24,7 +25,7 @@ pub use streams::{EarlyLeave, Lenders, Terms};
 pub use study::{Study, Survival, WHAT_IF_SCHEMA, WhatIf, WhatIfError};
 pub(crate) use summary::cost_of_time;
 
-use crate::advice::{Action, Advice, Caution, Decision, Evidence, RemainingWait, Tail, TailClass};
+use crate::advice::{Action, Advice, Blind, Caution, Decision, Evidence, RemainingWait, Tail, TailClass};
 use crate::curve::ENOUGH;
 use crate::policy::Entry;
 use crate::say;
@@ -140,7 +141,13 @@ pub fn study(case: &Case<'_>, entry: &Entry, seed: u64) -> Study {
         advice.tail = summary::tail(&judgement.verdict);
         advice.fits = summary::fits(&judgement.ensemble);
     }
-    advice.advice = decide(&cells, entry, bounds.as_ref(), judgement.as_ref());
+    let blind = buckets::blind(&cells);
+    advice.advice = decide(&cells, entry, bounds.as_ref(), judgement.as_ref(), blind);
+    let prices = match judgement.as_ref().and_then(|j| j.outcome.as_ref().ok()) {
+        Some(settled) => Some((settled.worth, settled.retry)),
+        None => judge::prices(entry),
+    };
+    advice.advice.buckets = buckets::read(&cells, entry, prices, advice.advice.give_up_after_s);
     let shift = case.periods.and_then(|(earlier, latest)| {
         let bounds = bounds.as_ref()?;
         // Most windows have one period only.
@@ -151,6 +158,9 @@ pub fn study(case: &Case<'_>, entry: &Entry, seed: u64) -> Study {
     });
     advice.cautions =
         cautions::all(case, entry, bounds.as_ref(), judgement.as_ref(), shift.as_ref(), &advice);
+    advice
+        .cautions
+        .extend(advice.advice.buckets.as_ref().and_then(|cost| buckets::cautions(cost, entry.guard.slack)));
     if let Some(pooled) = &pooled {
         advice.cautions.push(cautions::borrowed(pooled));
     }
@@ -158,7 +168,13 @@ pub fn study(case: &Case<'_>, entry: &Entry, seed: u64) -> Study {
 }
 
 /// The action, and everything that goes with it.
-fn decide(cells: &Cells, entry: &Entry, bounds: Option<&Bounds>, judgement: Option<&Judgement>) -> Decision {
+fn decide(
+    cells: &Cells,
+    entry: &Entry,
+    bounds: Option<&Bounds>,
+    judgement: Option<&Judgement>,
+    blind: Option<Blind>,
+) -> Decision {
     let mut decision = nothing_yet();
     if let Some(bounds) = bounds {
         (decision.floor_s, decision.ceiling_s) = (Some(bounds.floor), Some(bounds.ceiling));
@@ -170,12 +186,15 @@ fn decide(cells: &Cells, entry: &Entry, bounds: Option<&Bounds>, judgement: Opti
     }
     let done = cells.totals()[0];
     let needed = f64::from(entry.guard.evidence);
-    let Some(judgement) = judgement.filter(|_| done >= needed) else {
+    // A time that no wait has shown would be an invention.
+    let Some(judgement) = judgement.filter(|_| done >= needed && blind.is_none()) else {
         decision.because = if done < LEAST_COMPLETIONS {
             format!(
                 "{} completions; no law can be read from fewer than {LEAST_COMPLETIONS}",
                 say::count(done)
             )
+        } else if let Some(blind) = blind {
+            buckets::because(blind)
         } else if done >= needed {
             "the completions all have the same age or cannot be told apart, so no tail can be read".into()
         } else {
@@ -262,6 +281,7 @@ fn nothing_yet() -> Decision {
         second_copy: None,
         schedule_s: Vec::new(),
         stop_gap_s: Vec::new(),
+        buckets: None,
     }
 }
 

@@ -33,7 +33,7 @@ Exit codes: 0 open, 1 shut, 2 wrong usage, 3 bad input, 4 nothing could be judge
 #[derive(Debug, Args)]
 #[command(after_help = EXAMPLES)]
 pub(super) struct GateArguments {
-    /// Files of waits (NDJSON, CSV, SWF, OTLP; plain, gzip or zstd); `-` is standard input
+    /// Files of waits (NDJSON, CSV, SWF, OTLP, metrics as text; plain, gzip or zstd); `-` is standard input
     #[arg(value_name = "FILE", conflicts_with_all = ["advice", "from", "data"])]
     waits: Vec<OsString>,
     /// A time in force

@@ -4,6 +4,7 @@ use std::fs::File;
 use std::io::{self, Read};
 use std::num::NonZeroUsize;
 use std::path::{Path, PathBuf};
+use std::sync::OnceLock;
 
 use anyhow::Context;
 use clap::builder::{PossibleValue, PossibleValuesParser, TypedValueParser};
@@ -11,7 +12,7 @@ use clap::{Args, ValueEnum};
 
 use super::exit::{Exit, Failure, OrExit};
 use crate::glob::Glob;
-use crate::intake::{Allowed, Format, Measure, Options};
+use crate::intake::{Allowed, Format, Measure, Options, Rules};
 use crate::policy::{self, Policy};
 
 /// How output is written.
@@ -86,21 +87,26 @@ pub(super) struct Common<F: Form = Output> {
     /// Seed of everything drawn: the same seed gives the same bytes
     #[arg(long, value_name = "N", default_value_t = 1, value_parser = seed, allow_negative_numbers = true)]
     pub(super) seed: u64,
+    /// How telemetry becomes waits, by the policy that was loaded.
+    #[arg(skip)]
+    pub(super) telemetry: OnceLock<Rules>,
 }
 
 impl<F: Form> Common<F> {
     /// All but the form of the answer.
     pub(super) fn without_form(&self) -> Common {
         let Common { policy, since, until, stream, seed, .. } = self;
-        let (policy, stream) = (policy.clone(), stream.clone());
-        Common { policy, format: Output::default(), since: *since, until: *until, stream, seed: *seed }
+        let (policy, stream, telemetry) = (policy.clone(), stream.clone(), self.telemetry.clone());
+        let (since, until, seed) = (*since, *until, *seed);
+        Common { policy, format: Output::default(), since, until, stream, seed, telemetry }
     }
 }
 
 impl Common {
     /// With a policy and a choice of streams, all else as it is unless said.
     pub(super) fn of(policy: Option<PathBuf>, stream: Option<Glob>) -> Common {
-        Common { policy, format: Output::Text, since: None, until: None, stream, seed: 1 }
+        let telemetry = OnceLock::new();
+        Common { policy, format: Output::Text, since: None, until: None, stream, seed: 1, telemetry }
     }
 
     /// The policy file that was named here or in the environment.
@@ -116,14 +122,19 @@ impl Common {
 
     /// Reads the policy, if one was named.
     pub(super) fn load_policy(&self) -> Result<Option<Policy>, Failure> {
-        self.policy_file().as_deref().map(load_policy).transpose()
+        let policy = self.policy_file().as_deref().map(load_policy).transpose()?;
+        if let Some(policy) = &policy {
+            // A policy that is loaded again is the same.
+            let _ = self.telemetry.set(policy.telemetry.clone());
+        }
+        Ok(policy)
     }
 }
 
 /// What commands that read waits take besides.
 #[derive(Clone, Debug, Args)]
 pub(super) struct Reading {
-    /// Files of waits (NDJSON, CSV, SWF, OTLP; plain, gzip or zstd); `-` is standard input
+    /// Files of waits (NDJSON, CSV, SWF, OTLP, metrics as text; plain, gzip or zstd); `-` is standard input
     #[arg(required = true, value_name = "FILE")]
     pub(super) files: Vec<std::ffi::OsString>,
     /// One stream for all waits, whatever their records call theirs
@@ -141,7 +152,7 @@ pub(super) struct Reading {
     /// Which time of a job log is the wait
     #[arg(long, value_name = "wait|run", value_enum, default_value_t)]
     pub(super) measure: JobTime,
-    /// Format of every file (ndjson, csv, swf, otlp_traces, otlp_metrics), instead of finding it out
+    /// Format of every file (ndjson, csv, swf, otlp_traces, otlp_metrics, metrics_text), instead of finding it out
     #[arg(long, value_name = "FORMAT", value_parser = format)]
     pub(super) input: Option<Format>,
     /// Threads that read; as many as there are cores unless said
@@ -174,6 +185,7 @@ impl Reading {
             since: common.since,
             until: common.until,
             threads: self.threads,
+            rules: common.telemetry.get().cloned().unwrap_or_default(),
             ..Options::default()
         }
     }

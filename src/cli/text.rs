@@ -246,6 +246,14 @@ fn doubt(out: &mut String, advice: &Advice, page: Page) {
     if let Some(regret) = d.regret_now {
         parts.push(format!("the time in force loses {}", say::percent(regret)));
     }
+    if let Some((cost, [low, high])) = d.buckets.as_ref().and_then(|b| b.cost.zip(b.best_between_s)) {
+        parts.push(format!(
+            "the buckets' width may cost {}, and leaves the best time between {} and {}",
+            say::percent(cost),
+            say::duration(low),
+            say::duration(high)
+        ));
+    }
     if !parts.is_empty() {
         field(out, page, "Doubt", &parts.join("; "));
     }

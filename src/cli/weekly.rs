@@ -44,7 +44,7 @@ enum Form {
 #[derive(Debug, Args)]
 #[command(after_help = EXAMPLES)]
 pub(super) struct WeeklyArguments {
-    /// Files of waits (NDJSON, CSV, SWF, OTLP; plain, gzip or zstd); `-` is standard input
+    /// Files of waits (NDJSON, CSV, SWF, OTLP, metrics as text; plain, gzip or zstd); `-` is standard input
     #[arg(value_name = "FILE", conflicts_with_all = ["advice", "from", "data"])]
     waits: Vec<OsString>,
     /// Where to write it; standard output unless said

@@ -2,6 +2,7 @@
 
 use std::collections::BTreeMap;
 
+use super::exposition::Exposition;
 use super::flaw::Flaw;
 use super::pairs::Halves;
 use super::record::{Fields, Made, Record, make};
@@ -131,6 +132,11 @@ impl<'w, S: Sink> Collector<'w, S> {
     /// How telemetry becomes waits.
     pub(super) fn rules(&self) -> &'w Rules {
         &self.options.rules
+    }
+
+    /// How metrics as text become waits.
+    pub(super) fn exposition(&self) -> &'w Exposition {
+        &self.options.exposition
     }
 
     /// A reading of a histogram that only grows.

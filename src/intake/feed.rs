@@ -38,6 +38,8 @@ pub(super) enum Layout {
         signal: Signal,
         lines: bool,
     },
+    /// One text.
+    MetricsText,
 }
 
 impl Layout {
@@ -48,12 +50,13 @@ impl Layout {
             Layout::Swf { .. } => Format::Swf,
             Layout::Otlp { signal: Signal::Traces, .. } => Format::OtlpTraces,
             Layout::Otlp { signal: Signal::Metrics, .. } => Format::OtlpMetrics,
+            Layout::MetricsText => Format::MetricsText,
         }
     }
 
     /// Whether the input must be read as a whole.
     fn is_whole(&self) -> bool {
-        matches!(self, Layout::Otlp { lines: false, .. })
+        matches!(self, Layout::Otlp { lines: false, .. } | Layout::MetricsText)
     }
 
     fn records(&self) -> Records {
@@ -198,6 +201,7 @@ fn open(
     let layout = match format {
         Format::Ndjson => Layout::Ndjson,
         Format::Swf => Layout::Swf { unix_start: swf::unix_start(head) },
+        Format::MetricsText => Layout::MetricsText,
         Format::OtlpTraces | Format::OtlpMetrics => {
             let signal = if format == Format::OtlpTraces { Signal::Traces } else { Signal::Metrics };
             Layout::Otlp { signal, lines: otlp::is_lines(head) }

@@ -4,6 +4,7 @@ use std::path::Path;
 
 use serde::Serialize;
 
+use super::exposition;
 use super::otlp::{self, Signal};
 use super::record::Field;
 
@@ -22,14 +23,22 @@ pub enum Format {
     OtlpTraces,
     /// Metrics by OTLP, likewise.
     OtlpMetrics,
+    /// Metrics as text: the Prometheus text format 0.0.4 or OpenMetrics 1.0.
+    MetricsText,
 }
 
 impl Format {
     /// Every format.
-    pub const ALL: [Format; 5] =
-        [Format::Ndjson, Format::Csv, Format::Swf, Format::OtlpTraces, Format::OtlpMetrics];
+    pub const ALL: [Format; 6] = [
+        Format::Ndjson,
+        Format::Csv,
+        Format::Swf,
+        Format::OtlpTraces,
+        Format::OtlpMetrics,
+        Format::MetricsText,
+    ];
 
-    /// The name: `ndjson`, `csv`, `swf`, `otlp_traces`, `otlp_metrics`.
+    /// The name: `ndjson`, `csv`, `swf`, `otlp_traces`, `otlp_metrics`, `metrics_text`.
     pub fn name(self) -> &'static str {
         match self {
             Format::Ndjson => "ndjson",
@@ -37,6 +46,7 @@ impl Format {
             Format::Swf => "swf",
             Format::OtlpTraces => "otlp_traces",
             Format::OtlpMetrics => "otlp_metrics",
+            Format::MetricsText => "metrics_text",
         }
     }
 
@@ -55,6 +65,9 @@ impl Format {
             Some(Signal::Traces) => return Ok(Format::OtlpTraces),
             Some(Signal::Metrics) => return Ok(Format::OtlpMetrics),
             None => {}
+        }
+        if exposition::detect(head) {
+            return Ok(Format::MetricsText);
         }
         match first.first() {
             Some(b'{') => return Ok(Format::Ndjson),

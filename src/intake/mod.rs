@@ -36,6 +36,7 @@ mod collect;
 mod csv;
 mod decimal;
 mod error;
+mod exposition;
 mod feed;
 mod flaw;
 mod format;
@@ -58,6 +59,7 @@ use crate::glob::Glob;
 use crate::running::Running;
 
 pub use error::{HeaderError, IntakeError};
+pub use exposition::Exposition;
 pub use format::Format;
 pub use otlp::{Answer, Encoding};
 pub use read::{Progress, read};
@@ -116,6 +118,8 @@ pub struct Options {
     pub measure: Measure,
     /// How telemetry becomes waits.
     pub rules: Rules,
+    /// How metrics as text become waits.
+    pub exposition: Exposition,
     /// How many bad lines are put up with.
     pub bad_lines: Allowed,
     /// Only waits that ended or were last seen then or later, Unix seconds.
@@ -138,6 +142,7 @@ impl Default for Options {
             one_stream: None,
             measure: Measure::default(),
             rules: Rules::default(),
+            exposition: Exposition::default(),
             bad_lines: Allowed::default(),
             since: None,
             until: None,

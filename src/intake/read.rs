@@ -16,7 +16,7 @@ use super::record::Record;
 use super::report::{BadCount, BadLine, COMMENTS, Comment, EXAMPLES, FileReport, LeftOut, Report};
 use super::source::Source;
 use super::streams::Streams;
-use super::{Allowed, Format, Options, Sink, csv, ndjson, otlp, swf};
+use super::{Allowed, Format, Options, Sink, csv, exposition, ndjson, otlp, swf};
 use crate::running::{Histogram, Mark, Running, SeriesKey};
 
 /// How far a reading is.
@@ -71,6 +71,7 @@ fn parse<S: Sink>(task: &Task, options: &Options, sink: &mut S, streams: &mut St
             Layout::Otlp { signal, lines: true } => {
                 otlp::harvest_lines(&task.bytes, *signal, &mut collector);
             }
+            Layout::MetricsText => exposition::harvest(&task.bytes, &mut collector),
             Layout::Otlp { signal, lines: false } => otlp::harvest(&task.bytes, *signal, &mut collector),
         },
         Found::Long => {
@@ -103,7 +104,7 @@ fn read_here<S: Sink>(
 
 /// What comes back to the thread that settles.
 enum Message {
-    Parsed(u64, Task, Outcome),
+    Parsed(u64, Box<(Task, Outcome)>),
     Failed(IntakeError),
     /// A parsing thread panicked; its block will never come.
     Lost,
@@ -189,7 +190,7 @@ fn parse_tasks<S: Sink>(
         // The lock is held while waiting, and nothing can panic under it.
         let Ok(Ok((number, task))) = tasks.lock().map(|tasks| tasks.recv()) else { break };
         let outcome = parse(&task, options, &mut sink, &mut streams);
-        if report.send(Message::Parsed(number, task, outcome)).is_err() {
+        if report.send(Message::Parsed(number, Box::new((task, outcome)))).is_err() {
             break;
         }
     }
@@ -206,8 +207,8 @@ fn settle_in_order<S: Sink>(
     let mut next = 0;
     for message in messages {
         match message {
-            Message::Parsed(number, task, outcome) => {
-                early.insert(number, (task, outcome));
+            Message::Parsed(number, parsed) => {
+                early.insert(number, *parsed);
             }
             Message::Failed(error) => return Err(error),
             Message::Lost => return Ok(()),

@@ -92,6 +92,11 @@ pub enum RuleError {
 }
 
 impl Template {
+    /// The value of one attribute and nothing else.
+    pub(super) fn slot(name: &str) -> Template {
+        Template(vec![Part::slot(&[name])])
+    }
+
     /// Reads a template.
     ///
     /// # Errors

@@ -18,6 +18,14 @@ pub(super) enum TelemetryFlaw {
     Sum { buckets: u64, count: u64 },
     #[error("{found} is neither 1 (since the last point) nor 2 (since the start)")]
     Temporality { found: i32 },
+    #[error("{what}")]
+    Sample { what: &'static str },
+    #[error("{found:?} is not a bound")]
+    NoBound { found: String },
+    #[error("{value} is not a whole number from 0 to 1e15")]
+    NoCount { value: f64 },
+    #[error("there is neither a bucket up to +Inf nor a count")]
+    NoTotal,
     #[error("the scale {scale} is out of range")]
     Scale { scale: i32 },
     #[error("{zero_upto} is not an age")]
@@ -34,6 +42,10 @@ impl TelemetryFlaw {
             TelemetryFlaw::Resends { .. } => "attempt",
             TelemetryFlaw::Buckets { .. } | TelemetryFlaw::Sum { .. } => "count",
             TelemetryFlaw::Temporality { .. } => "aggregationTemporality",
+            TelemetryFlaw::Sample { .. } => "line",
+            TelemetryFlaw::NoBound { .. } => "le",
+            TelemetryFlaw::NoCount { .. } => "count",
+            TelemetryFlaw::NoTotal => "buckets",
             TelemetryFlaw::Scale { .. } => "scale",
             TelemetryFlaw::ZeroThreshold { .. } => "zeroThreshold",
             TelemetryFlaw::Histogram(HistogramError::Order { .. } | HistogramError::Bounds { .. }) => {
@@ -52,6 +64,10 @@ impl TelemetryFlaw {
             TelemetryFlaw::Buckets { .. } => "not as many buckets as bounds",
             TelemetryFlaw::Sum { .. } => "not the sum of the buckets",
             TelemetryFlaw::Temporality { .. } => "not known",
+            TelemetryFlaw::Sample { .. } => "not a sample",
+            TelemetryFlaw::NoBound { .. } => "not a number",
+            TelemetryFlaw::NoCount { .. } => "not a whole number",
+            TelemetryFlaw::NoTotal => "without a total",
             TelemetryFlaw::Scale { .. } => "out of range",
             TelemetryFlaw::ZeroThreshold { .. } => "not an age",
             TelemetryFlaw::Histogram(error) => match error {
@@ -75,6 +91,12 @@ impl TelemetryFlaw {
             TelemetryFlaw::Buckets { .. } => "count one bucket more than there are bounds",
             TelemetryFlaw::Sum { .. } => "look for an exporter that reads while it is written to",
             TelemetryFlaw::Temporality { .. } => "set the metric's temporality",
+            TelemetryFlaw::Sample { .. } => "write name{label=\"value\"} and a number",
+            TelemetryFlaw::NoBound { .. } => "give the bucket's bound in the label `le`",
+            TelemetryFlaw::NoCount { .. } => {
+                "look for a counter that has run over, or a series that has gone stale"
+            }
+            TelemetryFlaw::NoTotal => "expose the bucket with le=\"+Inf\", or the `_count`",
             TelemetryFlaw::Scale { .. } => "use a scale from -11 to 52",
             TelemetryFlaw::ZeroThreshold { .. } => "give a number from 0",
             TelemetryFlaw::Histogram(HistogramError::Count) => "look for a counter that has run over",

@@ -4,7 +4,8 @@ use super::entry::{
     Entry, GiveUp, Guard, Jitter, Kind, NO_COST_OF_TIME, Policy, Retry, Sticky, Weekly, aim_name,
 };
 use super::finding::Warning;
-use super::telemetry;
+use super::{scrape, telemetry};
+use crate::intake::Rules;
 use crate::say;
 use crate::stopping::{Aim, Fade, Worth};
 use serde::Serialize;
@@ -123,7 +124,8 @@ pub fn describe(policy: &Policy, streams: &[&str]) -> Description {
 
 fn notes(policy: &Policy, streams: &[&str], subjects: &[Subject]) -> Vec<String> {
     let mut notes: Vec<String> = policy.weekly.iter().map(Weekly::words).collect();
-    notes.extend(telemetry::sentences(&policy.telemetry, "spans and histograms"));
+    notes.extend(telemetry::sentences(&policy.telemetry, &Rules::default(), "spans and histograms"));
+    notes.extend(policy.scrapes.iter().map(scrape::sentence));
     if !streams.is_empty() {
         let used: HashSet<usize> = subjects.iter().filter_map(|s| s.entry).collect();
         for entry in policy.entries.iter().filter(|e| !used.contains(&e.number)) {

@@ -9,6 +9,7 @@ use crate::intake::Rules;
 use crate::stopping::{Aim, Worth};
 use serde::de::Error as _;
 use serde::{Deserialize, Deserializer, Serialize, Serializer};
+use std::path::PathBuf;
 
 /// Why an entry without an aim gets no give-up time (METHODS.md section 5, "No cost of time").
 pub const NO_COST_OF_TIME: &str = "nothing says what the waiting time costs (no other use for it, no carrying \
@@ -25,6 +26,8 @@ pub struct Policy {
     pub weekly: Option<Weekly>,
     /// How spans and histograms of telemetry become waits.
     pub telemetry: Rules,
+    /// Pages of metrics that the daemon reads.
+    pub scrapes: Vec<Scrape>,
     /// What its writer may not have meant, in the order of the lines.
     pub warnings: Vec<Warning>,
 }
@@ -35,6 +38,25 @@ impl Policy {
     pub fn entry_for(&self, stream: &str) -> Option<(&Entry, usize)> {
         self.entries.iter().enumerate().find(|(_, e)| e.matches.matches(stream)).map(|(i, e)| (e, i))
     }
+}
+
+/// A page of metrics that the daemon reads on a schedule.
+#[derive(Clone, Debug, PartialEq)]
+pub struct Scrape {
+    /// Where it is.
+    pub url: String,
+    /// How often it is read, s; from 1 to a day.
+    pub every: f64,
+    /// Patience with each step, s; above 0 to 300.
+    pub timeout: f64,
+    /// The certificates to trust; the system's unless named.
+    pub trust: Option<PathBuf>,
+    /// A file with a header to show.
+    pub header_file: Option<PathBuf>,
+    /// The unit of histograms whose names end in none, s.
+    pub unit: Option<f64>,
+    /// Which stream and which ending.
+    pub rules: Rules,
 }
 
 /// When the week's recommendations are made: once a week by the clock of a place.

@@ -335,6 +335,12 @@ pub enum Flaw {
         /// The nearest choice.
         nearest: Option<&'static str>,
     },
+    /// What stands there already.
+    #[error("`{value}` stands there already")]
+    Again {
+        /// The value, cut to 60 characters.
+        value: String,
+    },
     /// A rule that cannot be read.
     #[error("`{value}` {error}")]
     Rule {

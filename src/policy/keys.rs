@@ -13,6 +13,12 @@ pub const MAX_DEPTH: usize = 16;
 pub const MAX_ENTRIES: usize = 20_000;
 /// Most streams that one entry may say it calls.
 pub const MAX_CALLS: usize = 100;
+/// Most pages that the daemon may be told to read.
+pub const MAX_SCRAPES: usize = 1_000;
+/// How often a page is read unless said; s, 1 to a day.
+pub const DEFAULT_EVERY: f64 = 60.0;
+/// How long each step of a reading may take unless said; s, above 0 to 300.
+pub const DEFAULT_TIMEOUT: f64 = 10.0;
 /// Most findings that one [`super::PolicyError`] lists.
 pub const MAX_PROBLEMS: usize = 50;
 /// Most attempts of one request that a policy may allow.
@@ -62,6 +68,8 @@ pub enum Section {
     Weekly,
     /// `telemetry`, of the file.
     Telemetry,
+    /// One entry under `scrape`.
+    Scrape,
 }
 
 impl Section {
@@ -77,6 +85,7 @@ impl Section {
             Section::Guard => "guard",
             Section::Weekly => "weekly",
             Section::Telemetry => "telemetry",
+            Section::Scrape => "scrape",
         }
     }
 
@@ -234,6 +243,31 @@ keys! {
         "When it has failed.";
     TELEMETRY_DONE: Telemetry "done", "a list of attribute=pattern, with * for any run of characters and ? for one", "[\"error.type=404\"]", "none; all else is taken so",
         "When it is done, although it looks otherwise.";
+
+    SCRAPE: File "scrape", "a list of entries, at most 1000", "[{url: \"http://127.0.0.1:9100/metrics\"}]", "none",
+        "Pages of metrics that the daemon reads on a schedule: the Prometheus text format or OpenMetrics.";
+    SCRAPE_URL: Scrape "url", "an address that begins http:// or https://", "\"http://127.0.0.1:9100/metrics\"", "none, it must be given",
+        "Where the page is. What it answers is not followed elsewhere.";
+    EVERY: Scrape "every", "a duration with its unit, from 1s to 1d", "30s", "60s",
+        "How often it is read.";
+    TIMEOUT: Scrape "timeout", "a duration with its unit, above 0 and at most 5min", "10s", "10s",
+        "How long each step of a reading may take.";
+    TRUST: Scrape "trust", "a name of a PEM file", "/etc/outwait/ca.pem", "the system's certificates",
+        "The certificates to trust.";
+    HEADER_FILE: Scrape "header_file", "a name of a file with one line, `Name: value`, that others may not read", "/etc/outwait/scrape-header", "none",
+        "A header to show, such as one with a token.";
+    SCRAPE_UNIT: Scrape "unit", "s, ms, us or ns", "ms", "none; histograms whose names end in no unit of time are left out",
+        "The unit of histograms whose names end in none.";
+    SCRAPE_STREAM: Scrape "stream", "a text with names of labels in braces, {a|b} for the first that is there; name is the metric's own", "\"{name}.{route}\"", "\"{name}\"",
+        "What their streams are called; what a name cannot hold becomes _.";
+    SCRAPE_LEFT_OUT: Scrape "left_out", "a list of label=pattern, with * for any run of characters and ? for one", "[\"name=go_*\"]", "none",
+        "What is no wait of interest.";
+    SCRAPE_GAVE_UP: Scrape "gave_up", "a list of label=pattern, with * for any run of characters and ? for one", "[\"code=499\"]", "none; an error_type that speaks of a timeout or a cancellation is taken so",
+        "When the waiter has left.";
+    SCRAPE_FAILED: Scrape "failed", "a list of label=pattern, with * for any run of characters and ? for one", "[\"code=5??\"]", "none; an error_type is taken so",
+        "When it has failed.";
+    SCRAPE_DONE: Scrape "done", "a list of label=pattern, with * for any run of characters and ? for one", "[\"code=404\"]", "none; all else is taken so",
+        "When it is done, although it looks otherwise.";
 }
 
 /// Stands for the file where its keys should be and are not.
@@ -244,6 +278,16 @@ pub(super) static FILE: Key = Key {
     example: "1",
     default: "none, it must be given",
     about: "The policy itself.",
+};
+
+/// Stands for a page where its keys should be and are not.
+pub(super) static PAGE: Key = Key {
+    section: Section::File,
+    name: "scrape",
+    takes: "a map of keys, `url` among them",
+    example: "[{url: \"http://127.0.0.1:9100/metrics\"}]",
+    default: "none",
+    about: "A page of metrics.",
 };
 
 /// Stands for an entry where its keys should be and are not.

@@ -98,7 +98,11 @@ impl Reader {
         let what = Fault::UnknownKey {
             key: shown(&pair.key),
             section,
-            home: KEYS.iter().find(|key| key.name == pair.key).map(|key| key.section),
+            // Keys of a page of metrics have common names; who writes one elsewhere does not mean a page.
+            home: KEYS
+                .iter()
+                .find(|key| key.name == pair.key && key.section != Section::Scrape)
+                .map(|key| key.section),
             nearest: searched.then(|| nearest(&pair.key, section.keys().map(|key| key.name))).flatten(),
         };
         self.fault(pair.at, section.path(), what);

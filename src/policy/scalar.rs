@@ -126,7 +126,7 @@ fn finite(digits: &str, text: &str) -> Result<f64, Flaw> {
     digits.parse::<f64>().ok().filter(|v| v.is_finite()).map(|v| v + 0.0).ok_or_else(|| unreadable(text))
 }
 
-fn within<T>(value: T, inside: bool, text: &str) -> Result<T, Flaw> {
+pub(super) fn within<T>(value: T, inside: bool, text: &str) -> Result<T, Flaw> {
     if inside { Ok(value) } else { Err(Flaw::Range { value: shown(text) }) }
 }
 

@@ -56,7 +56,9 @@ impl Reader {
         let entries = self.entries(&file);
         let weekly = self.weekly(&file);
         let telemetry = self.telemetry(&file);
-        Some(Policy { version: version?, entries: entries?, weekly, telemetry, warnings: Vec::new() })
+        let scrapes = self.scrapes(&file);
+        let (version, entries) = (version?, entries?);
+        Some(Policy { version, entries, weekly, telemetry, scrapes, warnings: Vec::new() })
     }
 
     fn weekly(&mut self, file: &Fields<'_>) -> Option<Weekly> {

@@ -50,8 +50,7 @@ fn unfit<T>(text: &str, read: Result<T, RuleError>) -> Result<T, Flaw> {
 }
 
 /// The rules as sentences, for one kind of thing (`spans and histograms`); nothing of what is as it is unless said.
-pub(super) fn sentences(rules: &Rules, of: &str) -> Vec<String> {
-    let usual = Rules::default();
+pub(super) fn sentences(rules: &Rules, usual: &Rules, of: &str) -> Vec<String> {
     let mut says = Vec::new();
     if rules.stream != usual.stream {
         says.push(format!("The streams of {of} are called `{}`.", rules.stream));

@@ -25,40 +25,43 @@ pub(super) struct Counted {
 }
 
 /// How a body is read.
-#[derive(Clone, Debug)]
+#[derive(Clone, Copy, Debug)]
 pub(super) struct Reading<'a> {
-    /// The format if the client named one.
-    pub(super) format: Option<Format>,
     /// A key that makes a repeat harmless.
     pub(super) key: Option<&'a str>,
     /// For waits without a time, Unix seconds.
     pub(super) now: f64,
     /// Whether any wait is open anywhere, so that a whole wait may close one.
     pub(super) any_open: bool,
-    /// How telemetry becomes waits.
-    pub(super) rules: Rules,
 }
 
 /// Counts a body of telemetry. It is counted whole or not at all if it cannot be decoded, and its own bytes, unpacked,
 /// are its key unless the client gives one.
-pub(super) fn count_whole(body: Bytes, reading: Reading<'_>, limits: &Limits) -> Result<Counted, CountError> {
+pub(super) fn count_whole(
+    body: Bytes,
+    format: Format,
+    rules: Rules,
+    reading: Reading<'_>,
+    limits: &Limits,
+) -> Result<Counted, CountError> {
     let body = unpack(body, limits.unpacked_bytes)?;
     let Digest(digest) = Digest::of(&body);
     let own: String = digest.iter().map(|byte| format!("{byte:02x}")).collect();
     let own = format!("content:{own}");
     let reading = Reading { key: Some(reading.key.unwrap_or(&own)), ..reading };
-    let counted = match count(body, reading, limits) {
+    let counted = match count_with(body, reading, Options { rules, ..options(Some(format), limits) }) {
         // An empty request is a sound one.
         Err(CountError::Intake(IntakeError::NoWaits { report })) => {
             Counted { batch: Batch::default(), report: *report, events: 0, refused: 0 }
         }
         counted => counted?,
     };
-    let undecodable = |bad: &&BadLine| bad.kind == UNDECODABLE;
-    match counted.report.bad.examples.iter().find(undecodable) {
-        Some(bad) => Err(CountError::Undecodable { reason: bad.reason.clone() }),
-        None => Ok(counted),
+    if !counted.report.bad.by_reason.iter().any(|bad| bad.reason == UNDECODABLE) {
+        return Ok(counted);
     }
+    let undecodable = |bad: &&BadLine| bad.kind == UNDECODABLE;
+    let told = counted.report.bad.examples.iter().find(undecodable).map(|bad| bad.reason.clone());
+    Err(CountError::Undecodable { reason: told.unwrap_or_else(|| UNDECODABLE.to_owned()) })
 }
 
 /// A body as it was before it was packed.
@@ -82,20 +85,33 @@ fn unpack(body: Bytes, limit: u64) -> Result<Bytes, CountError> {
     }
 }
 
-/// Counts a body. Bad lines are counted and told of, not an error, as long as there is something else.
-pub(super) fn count(body: Bytes, reading: Reading<'_>, limits: &Limits) -> Result<Counted, CountError> {
-    let batch = match reading.key {
-        Some(key) => Batch::keyed(key, Digest::of(&body))?,
-        None => Batch::default(),
-    };
-    let options = Options {
-        format: reading.format,
+/// Counts a body. Bad lines are counted and told of, not an error, as long as there is something else. `format`: if the client
+/// named one.
+pub(super) fn count(
+    body: Bytes,
+    format: Option<Format>,
+    reading: Reading<'_>,
+    limits: &Limits,
+) -> Result<Counted, CountError> {
+    count_with(body, reading, options(format, limits))
+}
+
+fn options(format: Option<Format>, limits: &Limits) -> Options {
+    Options {
+        format,
         bad_lines: Allowed::All,
         threads: NonZeroUsize::new(1),
         line_bytes: limits.line_bytes,
         total_bytes: limits.unpacked_bytes,
-        rules: reading.rules,
         ..Options::default()
+    }
+}
+
+/// The same with all said of how it is to be read.
+pub(super) fn count_with(body: Bytes, reading: Reading<'_>, options: Options) -> Result<Counted, CountError> {
+    let batch = match reading.key {
+        Some(key) => Batch::keyed(key, Digest::of(&body))?,
+        None => Batch::default(),
     };
     let sink = Counting { batch, now: reading.now, any_open: reading.any_open, events: 0, refused: 0 };
     let source = Source::reader("body", std::io::Cursor::new(body));

@@ -41,6 +41,7 @@ pub(super) struct Metrics {
     pub(super) last_filed: Gauge,
     pub(super) left_out_of_telemetry: Counter,
     resets: Counter,
+    pub(super) scrapes: Counters,
     ledger_bytes: IntGauge,
     ledger_streams: IntGauge,
     open_waits: IntGauge,
@@ -89,6 +90,7 @@ impl Metrics {
                 "outwait_telemetry_left_out_total",
                 "Spans and data points that are no waits: not of time, without buckets, or left out by a rule.",
             ))?,
+            scrapes: made.counters("outwait_scrapes_total", "Readings of pages of metrics.", &["outcome"])?,
             resets: made.add(Counter::new(
                 "outwait_series_resets_total",
                 "Histograms that have begun anew since they were read last.",

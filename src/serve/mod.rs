@@ -22,6 +22,7 @@ mod page;
 mod problem;
 mod reload;
 mod road;
+mod scrape;
 mod sessions;
 mod settling;
 mod shared;
@@ -99,6 +100,7 @@ impl Daemon {
         }
         threads.push(reload::watch(Arc::clone(&shared)).map_err(refused("a thread"))?);
         threads.push(clerk::start(Arc::clone(&shared)).map_err(refused("a thread"))?);
+        threads.push(scrape::start(Arc::clone(&shared)).map_err(refused("a thread"))?);
         threads.push(weekly::start(Arc::clone(&shared)).map_err(refused("a thread"))?);
         shared.desk.at_once(shared.streams());
         Ok(Daemon { shared, threads, keeper })

@@ -12,5 +12,6 @@ mod openapi;
 mod otlp;
 #[path = "../support/process.rs"]
 mod process;
+mod scrape;
 mod security;
 mod weekly;

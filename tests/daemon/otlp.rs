@@ -34,7 +34,7 @@ fn evidence(house: &House, stream: &str) -> Option<[u64; 3]> {
     Some(["done", "failed", "gave_up"].map(|ending| json["evidence"][ending].as_u64().unwrap()))
 }
 
-fn counted(house: &House, stream: &str, wanted: [u64; 3]) {
+pub(crate) fn counted(house: &House, stream: &str, wanted: [u64; 3]) {
     until(&format!("{wanted:?} in {stream}"), || evidence(house, stream).filter(|found| *found == wanted));
 }
 
@@ -218,7 +218,7 @@ fn the_policys_rules() {
 }
 
 /// A Python with the clients in it, made by the checks that run everything.
-fn python() -> Option<std::path::PathBuf> {
+pub(crate) fn python() -> Option<std::path::PathBuf> {
     let python = Path::new(env!("CARGO_MANIFEST_DIR")).join("target/clients/bin/python");
     if !python.exists() {
         println!("skipped: target/clients has no Python with the clients");

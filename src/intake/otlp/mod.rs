@@ -275,7 +275,7 @@ fn histogram(point: &Point<'_>, unit: f64) -> Result<Histogram, TelemetryFlaw> {
 }
 
 /// A bound in seconds. Units are whole powers of ten of each other, and a quotient is rounded once: 5 ms is 0.005 s.
-fn scaled(bound: f64, unit: f64) -> f64 {
+pub(super) fn scaled(bound: f64, unit: f64) -> f64 {
     if unit < 1.0 { bound / (1.0 / unit).round() } else { bound * unit }
 }
 

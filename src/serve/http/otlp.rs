@@ -11,7 +11,7 @@ use axum::extract::State;
 use axum::http::{HeaderMap, HeaderValue, StatusCode, Uri, header};
 use axum::response::{IntoResponse, Response};
 
-use super::waits::{encoding, gather, key, note, refusal, uncounted};
+use super::waits::{encoding, gather, key, refusal, uncounted};
 use super::{App, away, parameters};
 use crate::intake::{Answer, Encoding, Format, Report};
 use crate::serve::body::{Reading, count_whole};
@@ -82,11 +82,11 @@ async fn try_take(
         let _held = held;
         let rules = app.policy().map(|policy| policy.telemetry.clone()).unwrap_or_default();
         let any_open = app.any_open.load(Ordering::Relaxed);
-        let reading = Reading { format: Some(format), key: key.as_deref(), now: app.now(), any_open, rules };
-        count_whole(bytes, reading, &app.config.limits).map_err(|error| uncounted(&app, error))
+        let reading = Reading { key: key.as_deref(), now: app.now(), any_open };
+        count_whole(bytes, format, rules, reading, &app.config.limits).map_err(|error| uncounted(&app, error))
     })
     .await?;
-    note(shared, &counted.report);
+    shared.note(&counted.report);
     let answer = answer(&counted.report, format);
     let mut repeated = false;
     if !counted.batch.is_empty() {

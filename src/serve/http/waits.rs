@@ -12,7 +12,7 @@ use serde::Serialize;
 use tokio::time::timeout;
 
 use super::{App, away, excerpt, json, parameters};
-use crate::intake::{BadCount, BadLine, Format, IntakeError, Report, Rules};
+use crate::intake::{BadCount, BadLine, Format, IntakeError};
 use crate::ledger::{Entry, LedgerError, MAX_KEY_BYTES};
 use crate::serve::body::{CountError, Reading, count};
 use crate::serve::keeper::Refusal;
@@ -73,11 +73,11 @@ async fn try_take(
         let _held = held;
         let now = app.now();
         let any_open = app.any_open.load(Ordering::Relaxed);
-        let reading = Reading { format, key: key.as_deref(), now, any_open, rules: Rules::default() };
-        count(bytes, reading, &app.config.limits).map_err(|error| uncounted(&app, error))
+        let reading = Reading { key: key.as_deref(), now, any_open };
+        count(bytes, format, reading, &app.config.limits).map_err(|error| uncounted(&app, error))
     })
     .await?;
-    note(shared, &counted.report);
+    shared.note(&counted.report);
     if counted.events > 0 {
         shared.any_open.store(true, Ordering::Relaxed);
     }
@@ -241,16 +241,6 @@ pub(super) fn key(headers: &HeaderMap) -> Result<Option<String>, Problem> {
     }
 }
 
-/// Counts what a body held, whatever became of it.
-pub(super) fn note(shared: &Shared, report: &Report) {
-    shared.metrics.left_out_of_telemetry.inc_by(report.left_out.not_waits);
-    shared.metrics.lines.inc_by(report.lines);
-    for bad in &report.bad.by_reason {
-        shared.metrics.bad(bad.field, bad.reason, bad.lines);
-    }
-    shared.bad_lines(&report.bad.examples);
-}
-
 pub(super) fn uncounted(shared: &Shared, error: CountError) -> Problem {
     let bad = |code, title, remedy: &str, detail: String| {
         Problem::new(StatusCode::BAD_REQUEST, code, title, detail, remedy)
@@ -263,7 +253,7 @@ pub(super) fn uncounted(shared: &Shared, error: CountError) -> Problem {
             bad("body", "The body cannot be decoded", "send the standard's own request message", reason)
         }
         CountError::Intake(IntakeError::NoWaits { report } | IntakeError::BadLines { report, .. }) => {
-            note(shared, &report);
+            shared.note(&report);
             bad(
                 "no-waits",
                 "There is no wait in the body",
