@@ -206,15 +206,21 @@ proptest! {
             let mut values = vec![f64::NAN; ages.len()];
             let mut rows = vec![f64::NAN; ages.len() * x.len()];
             law.log_survival_gradient_on(&ages, &logs, &mut values, &mut rows);
+            let (mut shares, mut slopes) = (values.clone(), rows.clone());
+            law.survival_gradient_on(&ages, &logs, &mut shares, &mut slopes);
             let mut row = vec![0.0; x.len()];
             for (i, &t) in ages.iter().enumerate() {
                 let s = law.survival(t);
+                prop_assert!(close(shares[i], s, 1e-9, 1e-300), "{said} at {t}: {} and {s}", shares[i]);
                 prop_assert!(close(out[i], s, 1e-9, 1e-300), "{said} at {t}: {} and {s}", out[i]);
                 prop_assert!(i == 0 || out[i] <= out[i - 1] * (1.0 + 1e-11), "{said} at {t}: S rises");
                 let value = law.log_survival_gradient(t, &mut row);
                 prop_assert!(close(values[i], value, 1e-9, 1e-9), "{said} at {t}: {} and {value}", values[i]);
                 for (a, b) in rows[i * x.len()..].iter().zip(&row) {
                     prop_assert!(close(*a, *b, 1e-7, 1e-7), "{said} at {t}: {a} and {b}");
+                }
+                for (a, b) in slopes[i * x.len()..].iter().zip(&row).filter(|_| s > 0.0) {
+                    prop_assert!(close(*a, s * b, 1e-7, 1e-9), "{said} at {t}: dS {a} and {}", s * b);
                 }
             }
         }

@@ -326,3 +326,98 @@ proptest! {
         let _ = parse(&text, "");
     }
 }
+
+/// A daemon's folder, while none runs: the waits of its ledger, a decision that only the ledger knows, and the file.
+#[test]
+fn a_daemons_folder_is_settled_weighed_exported_and_gated() {
+    use outwait::ledger::{Batch, Ledger, Options, Record, Shelf, SqliteLedger};
+    use outwait::wait::{Ending, Wait};
+
+    let folder = folder();
+    let path = folder.path();
+    let mut ledger = SqliteLedger::open(&path.join("data"), Options::default()).unwrap();
+    let mut batch = Batch::default();
+    for line in lookups().lines() {
+        let wait: Value = serde_json::from_str(line).unwrap();
+        let ending = if wait["ending"] == "done" { Ending::Done } else { Ending::GaveUp };
+        let made = Wait::new(wait["elapsed"].as_f64().unwrap(), ending).unwrap();
+        let made = made.with_at(wait["at"].as_f64().unwrap()).unwrap();
+        batch.add("catalogue.lookup", &made, 0.0).unwrap();
+    }
+    let pinned = Settlement {
+        state: State::Pinned { give_up_after: GiveUp::After(1500.0) },
+        at: "2026-11-02T10:00:00Z".parse().unwrap(),
+        by: "Bob".into(),
+        why: "the night shift".into(),
+        grounds: None,
+    };
+    let text = outwait::settle::one("scan.job", &pinned).into();
+    batch.note(Record { shelf: Shelf::Decisions, subject: "scan.job".into(), number: 0, text }).unwrap();
+    ledger.commit(&[batch], 1_764_600_000.0).unwrap();
+    // The daemon runs; nobody is kept from reading, and a decision goes into the file.
+    let data = ["--data", "data", "--policy", "policy.yaml"];
+    let word = ["--by", "Ada", "--why", "agreed", "--at", "2026-11-30T10:00:00Z"];
+    let (code, out, err) =
+        run(path, &[&["settle", "catalogue.lookup", "--accept"], &word[..], &data[..]].concat());
+    assert_eq!(code, 0, "{err}");
+    assert!(out.starts_with("catalogue.lookup: accepted; 1s is in force"), "{out}");
+    let file = parse(&fs::read(path.join("data/settled.yaml")).unwrap(), "").unwrap();
+    assert_eq!(file.standing("catalogue.lookup").give_up_after(), Some(GiveUp::After(1.0)));
+    assert!(file.history("scan.job").is_empty());
+    // Both are in force for all who ask.
+    let (code, out, err) = run(path, &["settle", "*", "--history", "--data", "data"]);
+    assert_eq!(code, 0, "{err}");
+    assert!(out.contains("scan.job: 25min is in force") && out.contains("catalogue.lookup: 1s"), "{out}");
+    let (code, out, err) = run(path, &[&["export", "--format", "env"], &data[..]].concat());
+    assert_eq!(code, 0, "{err}");
+    assert!(out.contains("CATALOGUE_LOOKUP") && out.contains("SCAN_JOB"), "{out}");
+    let (code, out, err) = run(path, &[&["weekly", "--format", "json"], &data[..]].concat());
+    assert_eq!(code, 0, "{err}");
+    let week: Value = serde_json::from_str(&out).unwrap();
+    let all = week["sign"].as_array().unwrap().iter().chain(week["rest"].as_array().unwrap());
+    let row = all.clone().find(|row| row["stream"] == "catalogue.lookup").unwrap();
+    assert_eq!((&row["old_s"], &row["settled"]["by"]), (&1.0.into(), &"Ada".into()));
+    assert!(all.clone().any(|row| row["stream"] == "scan.job" && row["old_s"] == 1500.0));
+    let (code, out, err) = run(path, &[&["gate", "--format", "json"], &data[..]].concat());
+    assert_eq!(code, 1, "{err}");
+    let gate: Value = serde_json::from_str(&out).unwrap();
+    assert_eq!(
+        (&gate["streams"][0]["source"], &gate["streams"][0]["in_force_s"]),
+        (&"settled".into(), &1.0.into())
+    );
+    // An undo of what only the ledger knows.
+    let undo = ["settle", "scan.job", "--undo", "--by", "Ada", "--why", "agreed", "--policy", "policy.yaml"];
+    let (code, out, err) = run(path, &[&undo[..], &["--data", "data"]].concat());
+    assert_eq!(code, 0, "{err}");
+    assert!(out.contains("undone; the policy's time is in force"), "{out}");
+    for (arguments, code) in [
+        (&["weekly", "--data", "none"][..], 3),
+        (&["weekly", "--data", "data", "--advice", "advice.json"], 2),
+        (&["weekly", "--data", "data", "--since", "2026-11-01"], 2),
+    ] {
+        assert_eq!(run(path, arguments).0, code, "{arguments:?}");
+    }
+}
+
+/// Before those that are younger, with every line that somebody wrote where it was.
+#[test]
+fn an_older_decision_finds_its_place() {
+    let there = parse(EDITED.as_bytes(), "").unwrap();
+    let older = Settlement {
+        state: State::Refused,
+        at: "2026-10-02T10:00:00Z".parse().unwrap(),
+        by: "Ada".into(),
+        why: "not yet".into(),
+        grounds: None,
+    };
+    for stream in ["scan.job", "zebra/desk"] {
+        let text = insert(EDITED, &there, stream, &older);
+        let read = parse(text.as_bytes(), "").unwrap();
+        assert_eq!(read.history(stream)[0], older);
+        assert_eq!(read.history(stream).len(), 2);
+        let mut lines = text.lines();
+        for line in EDITED.lines() {
+            assert!(lines.any(|kept| kept == line), "{line:?} is lost or moved:\n{text}");
+        }
+    }
+}

@@ -211,3 +211,56 @@ fn a_week_without_data_and_bad_input() {
         assert_eq!(ended, code, "{arguments:?}: {err}");
     }
 }
+
+/// Two sets in a row: what changed is told stream by stream, also of streams that came and went; the same data again say the
+/// same.
+#[test]
+fn what_changed_since_last_week_is_told() {
+    let folder = folder();
+    let path = folder.path();
+    let time = |line: &str| -> f64 {
+        let at = serde_json::from_str::<Value>(line).unwrap()["at"].as_str().unwrap().to_owned();
+        at.parse::<jiff::Timestamp>().unwrap().as_second() as f64
+    };
+    let waits = fs::read_to_string(path.join("waits.ndjson")).unwrap();
+    let newest = waits.lines().map(time).fold(0.0, f64::max);
+    let before: Vec<String> = waits
+        .lines()
+        .filter(|line| time(line) <= newest - 7.0 * 86_400.0 && !line.contains("scan.job"))
+        .map(|line| line.replace("\"courier.slot\"", "\"courier.gone\""))
+        .collect();
+    fs::write(path.join("before.ndjson"), before.join("\n")).unwrap();
+    let (code, _, err) =
+        run(path, &["weekly", "before.ndjson", "--policy", "policy.yaml", "--folder", "week"]);
+    assert_eq!(code, 0, "{err}");
+    let read = |name: &str| fs::read_to_string(path.join("week").join(name)).unwrap();
+    let first: Value = serde_json::from_str(&read("weekly.json")).unwrap();
+    assert!(first["since"].is_null());
+    let old = read("weekly.json");
+    weekly(path, &["--folder", "week"]);
+    let second = read("weekly.json");
+    let week: Value = serde_json::from_str(&second).unwrap();
+    assert_eq!(week["since"], first["made_at"].as_str().unwrap()[..10]);
+    assert_eq!(read("weekly-before.json"), old);
+    let changed = |stream: &str| row(&week, stream).1["changed"].to_string();
+    assert!(changed("scan.job").contains("it was not in last week's set"), "{}", changed("scan.job"));
+    assert!(changed("courier.gone").contains("has vanished"), "{}", changed("courier.gone"));
+    // The law of look-ups shifts in the last week of the scenario: the best time moves out of its band.
+    let lookup = changed("catalogue.lookup");
+    assert!(lookup.contains("the best time went from"), "{lookup}");
+    assert!(
+        read("weekly.md").contains("told against the set of") && read("weekly.html").contains("told against")
+    );
+    // Again, and by name: the same.
+    weekly(path, &["--folder", "week"]);
+    assert_eq!(read("weekly.json"), second);
+    fs::write(path.join("last.json"), &old).unwrap();
+    assert_eq!(weekly(path, &["--last-week", "last.json", "--format", "json"]), second);
+    for (text, told) in [("{}", "holds no weekly set"), (r#"{"schema":"x","sign":[],"rest":[]}"#, "schema")] {
+        fs::write(path.join("bad.json"), text).unwrap();
+        let (code, _, err) = run(path, &[&WEEKLY[..], &["--last-week", "bad.json"]].concat());
+        assert_eq!(code, 3);
+        assert!(err.contains(told), "{err}");
+    }
+    assert_eq!(run(path, &[&WEEKLY[..], &["--last-week", "none.json"]].concat()).0, 3);
+}

@@ -17,7 +17,7 @@ use crate::demo;
 use crate::ledger::LedgerError;
 use crate::say;
 use crate::serve::{
-    Config, Daemon, PolicyFile, Runs, ServeError, Webhook, is_open_to_others, read_tls, read_token,
+    Config, Daemon, PolicyFile, Runs, ServeError, Signing, Webhook, is_open_to_others, read_tls, read_token,
 };
 
 const EXAMPLES: &str = "\
@@ -54,6 +54,9 @@ pub(super) struct Serve {
     /// File that holds the token which clients must show
     #[arg(long, value_name = "FILE")]
     token_file: Option<PathBuf>,
+    /// Let nobody settle over HTTP: pages without forms. Without a token that is so anyway, but for the demo
+    #[arg(long)]
+    read_only: bool,
     /// Certificate chain (PEM), for HTTPS
     #[arg(long, value_name = "FILE", requires = "key")]
     certificate: Option<PathBuf>,
@@ -96,7 +99,7 @@ pub(super) struct Serve {
     /// Folder for the week's recommendations (`weekly:` in the policy); beside the ledger unless said
     #[arg(long, value_name = "DIR")]
     weekly_folder: Option<PathBuf>,
-    /// What was settled; its times are in force, whatever the policy says
+    /// File of what was settled, kept in step with the ledger; settled.yaml beside it unless said
     #[arg(long, value_name = "FILE")]
     settled: Option<PathBuf>,
     /// Address to which the week's recommendations are posted too
@@ -223,6 +226,12 @@ impl Serve {
         config.limits.unpacked_bytes = 8 * config.limits.body_bytes as u64;
         config.limits.bodies_bytes = config.limits.bodies_bytes.max(4 * config.limits.body_bytes);
         config.token = self.token_file.as_deref().map(read_token).transpose().or_exit(Exit::BadInput)?;
+        config.signing = match (self.read_only, self.demo) {
+            (true, _) => Signing::Nobody,
+            // Its folder is removed at the end.
+            (false, true) => Signing::Anyone,
+            (false, false) => Signing::WithToken,
+        };
         config.weekly =
             Runs { folder: self.weekly_folder.clone(), settled: self.settled.clone(), webhook: None };
         if let (Some(address), Some(secret)) = (&self.webhook, &self.webhook_secret) {

@@ -1,9 +1,9 @@
-//! What is brought to a ledger at once: counted waits, starts and ends of open waits, counts of bad lines.
+//! What is brought to a ledger at once: counted waits, starts and ends of open waits, counts of bad lines, records.
 
 use std::collections::{BTreeMap, HashMap};
 use std::fmt;
 
-use super::Hour;
+use super::{Hour, MAX_RECORD_BYTES, MAX_SUBJECT_BYTES, Record, RecordError};
 use crate::running::Running;
 use crate::tally::{self, Periods, Tally};
 use crate::wait::{Ending, StreamError, Wait, check_stream};
@@ -25,6 +25,7 @@ pub struct Batch {
     pub(super) events: Vec<Event>,
     pub(super) running: Vec<Running>,
     pub(super) bad_lines: BTreeMap<Box<str>, u64>,
+    pub(super) records: Vec<Record>,
 }
 
 /// The tallies of one stream by hour.
@@ -81,6 +82,7 @@ impl Batch {
         for (reason, lines) in other.bad_lines {
             self.bad_lines(&reason, lines);
         }
+        self.records.extend(other.records);
     }
 
     #[inline]
@@ -156,11 +158,33 @@ impl Batch {
         *sum = sum.saturating_add(lines);
     }
 
+    /// Keeps a record. One whose number is taken for good by another refuses the batch ([`super::BatchError::Taken`]); the
+    /// same brought again changes nothing.
+    ///
+    /// # Errors
+    /// [`RecordError`] for one that is too long; nothing is kept then.
+    pub fn note(&mut self, record: Record) -> Result<(), RecordError> {
+        let (subject, bytes) = (record.subject.len(), record.text.len());
+        if subject > MAX_SUBJECT_BYTES {
+            return Err(RecordError::Subject { bytes: subject });
+        }
+        if bytes > MAX_RECORD_BYTES {
+            return Err(RecordError::Long { bytes });
+        }
+        self.records.push(record);
+        Ok(())
+    }
+
     /// The streams it names, some more than once: those that change with it.
     pub fn streams(&self) -> impl Iterator<Item = &str> {
         let awaited = self.events.iter().map(|event| &*event.key.stream);
         let running = self.running.iter().map(|running| &*running.stream);
         self.streams.keys().map(|name| &**name).chain(awaited).chain(running)
+    }
+
+    /// Whether a wait may be open because of it.
+    pub fn ties(&self) -> bool {
+        !self.events.is_empty()
     }
 
     /// How many waits it counts, not those that its events and readings may make.
@@ -176,8 +200,9 @@ impl Batch {
     pub fn is_empty(&self) -> bool {
         self.streams.is_empty()
             && self.events.is_empty()
-            && self.running.is_empty()
             && self.bad_lines.is_empty()
+            && self.records.is_empty()
+            && self.running.is_empty()
     }
 }
 

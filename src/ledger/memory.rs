@@ -11,7 +11,7 @@ use super::grow::{self, Known};
 use super::open::{self, Filed, State};
 use super::{
     Batch, BatchError, Damage, Digest, Entry, Extent, Hour, Ledger, LedgerError, OpenWait, Options, Period,
-    Reader, Receipt, Upkeep,
+    Reader, Receipt, Record, Records, Shelf, Upkeep,
 };
 use crate::running::{Mark, SeriesKey};
 use crate::tally::{self, Tally};
@@ -37,6 +37,7 @@ struct Held {
     singles: usize,
     joined: usize,
     bad_lines: BTreeMap<Hour, BTreeMap<Box<str>, u64>>,
+    records: BTreeMap<(Shelf, Box<str>, i64), Box<str>>,
 }
 
 /// Tallies by their first hour and period.
@@ -88,6 +89,15 @@ impl Held {
             } else {
                 Err(BatchError::KeyReused { key: key.to_string() })
             };
+        }
+        let mut noted: HashMap<(Shelf, &str, i64), &str> = HashMap::new();
+        for record in &batch.records {
+            let (shelf, subject, number) = record.place();
+            let held = self.records.get(&(shelf, subject.into(), number)).map(|text| &**text);
+            let known = noted.insert(record.place(), &record.text).or(held);
+            if shelf.is_final() && known.is_some_and(|known| *known != *record.text) {
+                return Err(BatchError::Taken { subject: subject.to_owned(), number });
+            }
         }
         let new: HashSet<&str> = batch.streams().filter(|name| !self.streams.contains_key(*name)).collect();
         if !new.is_empty() && self.streams.len() + new.len() > self.options.most_streams {
@@ -143,6 +153,9 @@ impl Held {
             let sum = self.bad_lines.entry(Hour::of(now)).or_default().entry(reason.clone()).or_default();
             *sum = sum.saturating_add(*lines);
         }
+        for Record { shelf, subject, number, text } in &batch.records {
+            self.records.insert((*shelf, subject.clone(), *number), text.clone());
+        }
         if let Some((key, digest)) = &batch.key {
             self.keys.insert(key.clone(), (*digest, time));
             self.key_order.push_back((time, key.clone()));
@@ -183,6 +196,8 @@ impl Held {
         self.singles = self.singles.saturating_sub(upkeep.expired as usize);
         self.marks.retain(|_, (_, since)| *since > time - self.options.series_for);
         self.bad_lines = self.bad_lines.split_off(&Hour::of(time - keep_for));
+        let oldest = i64::from(Hour::of(time - keep_for).day());
+        self.records.retain(|(shelf, _, number), _| shelf.is_final() || *number >= oldest);
         for stream in self.streams.values_mut() {
             upkeep.dropped += stream.drop_before(Hour::of(time - keep_for));
             upkeep.rolled += stream.roll(Hour::of(time - hours_for));
@@ -289,6 +304,21 @@ impl Reader for MemoryLedger {
             *sum = sum.saturating_add(*lines);
         }
         Ok(sums)
+    }
+
+    fn records(&self, shelf: Shelf, subject: Option<&str>) -> Result<Records, LedgerError> {
+        let held = self.read();
+        let all = held
+            .records
+            .iter()
+            .filter(|((on, about, _), _)| *on == shelf && subject.is_none_or(|subject| **about == *subject));
+        let records = all.map(|((shelf, subject, number), text)| Record {
+            shelf: *shelf,
+            subject: subject.clone(),
+            number: *number,
+            text: text.clone(),
+        });
+        Ok(Records { records: records.collect(), damage: Vec::new() })
     }
 
     fn extent(&self) -> Result<Extent, LedgerError> {

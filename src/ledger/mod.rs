@@ -1,8 +1,8 @@
 //! Where tallies live and survive.
 //!
 //! In: [`Batch`]es of counted waits, of starts and ends of open waits, of readings of histograms that only grow, of counts
-//! of bad lines. Out: the tally of any
-//! stream and window of UTC hours ([`Reader::window`]), the waits that are open now, what is broken.
+//! of bad lines, of [`Record`]s. Out: the tally of any stream and window of UTC hours ([`Reader::window`]), the waits that
+//! are open now, the records, what is broken.
 //!
 //! # The promise
 //!
@@ -54,6 +54,7 @@ mod memory;
 mod open;
 mod options;
 mod period;
+mod record;
 pub mod sqlite;
 
 use std::collections::BTreeMap;
@@ -65,6 +66,7 @@ pub use export::{ExportError, Exported, export};
 pub use memory::MemoryLedger;
 pub use options::Options;
 pub use period::{Hour, Period};
+pub use record::{MAX_RECORD_BYTES, MAX_SUBJECT_BYTES, Record, RecordError, Records, Shelf};
 pub use sqlite::{LAYOUT_VERSION, SqliteLedger, SqliteReader};
 
 use crate::tally::Tally;
@@ -125,6 +127,12 @@ pub trait Reader: Send {
     /// # Errors
     /// [`LedgerError`] of the store.
     fn bad_lines(&self, hours: Range<Hour>) -> Result<BTreeMap<String, u64>, LedgerError>;
+
+    /// The records on a shelf, of one subject or of all.
+    ///
+    /// # Errors
+    /// [`LedgerError`] of the store; a broken record is no error.
+    fn records(&self, shelf: Shelf, subject: Option<&str>) -> Result<Records, LedgerError>;
 
     /// How large it is.
     ///

@@ -1,6 +1,8 @@
 //! What a policy means, in sentences for people and as data for programs.
 
-use super::entry::{Entry, GiveUp, Guard, Jitter, Kind, NO_COST_OF_TIME, Policy, Retry, Sticky, aim_name};
+use super::entry::{
+    Entry, GiveUp, Guard, Jitter, Kind, NO_COST_OF_TIME, Policy, Retry, Sticky, Weekly, aim_name,
+};
 use super::finding::Warning;
 use super::{scrape, telemetry};
 use crate::intake::Rules;
@@ -121,7 +123,8 @@ pub fn describe(policy: &Policy, streams: &[&str]) -> Description {
 }
 
 fn notes(policy: &Policy, streams: &[&str], subjects: &[Subject]) -> Vec<String> {
-    let mut notes = telemetry::sentences(&policy.telemetry, &Rules::default(), "spans and histograms");
+    let mut notes: Vec<String> = policy.weekly.iter().map(Weekly::words).collect();
+    notes.extend(telemetry::sentences(&policy.telemetry, &Rules::default(), "spans and histograms"));
     notes.extend(policy.scrapes.iter().map(scrape::sentence));
     if !streams.is_empty() {
         let used: HashSet<usize> = subjects.iter().filter_map(|s| s.entry).collect();
@@ -141,6 +144,19 @@ fn notes(policy: &Policy, streams: &[&str], subjects: &[Subject]) -> Vec<String>
         notes.push(DUTY.into());
     }
     notes
+}
+
+impl Weekly {
+    /// What it means, in a sentence.
+    fn words(&self) -> String {
+        let days = ["Monday", "Tuesday", "Wednesday", "Thursday", "Friday", "Saturday", "Sunday"];
+        let day = days[usize::from(self.day.min(6))];
+        format!(
+            "A daemon makes the week's recommendations every {day} at {:02}:00 by the clock of {}, once; an hour that summer \
+             time skips is taken an hour later, one that comes twice the first time.",
+            self.hour, self.time_zone
+        )
+    }
 }
 
 impl Subject {
@@ -408,5 +424,19 @@ impl fmt::Display for Subject {
             None => writeln!(f)?,
         }
         self.says.iter().try_for_each(|sentence| writeln!(f, "  {sentence}"))
+    }
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    #[test]
+    fn the_schedule_is_told() {
+        let text =
+            "version: 1\nweekly: {day: sunday, hour: 2, time_zone: Europe/Paris}\nstreams:\n  - match: a\n";
+        let policy = crate::policy::parse(text, "policy.yaml").unwrap();
+        let told = describe(&policy, &[]).to_string();
+        assert!(told.contains("every Sunday at 02:00 by the clock of Europe/Paris, once"), "{told}");
     }
 }

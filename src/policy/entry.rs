@@ -7,7 +7,8 @@ use super::keys::{
 use super::{Glob, Warning};
 use crate::intake::Rules;
 use crate::stopping::{Aim, Worth};
-use serde::{Serialize, Serializer};
+use serde::de::Error as _;
+use serde::{Deserialize, Deserializer, Serialize, Serializer};
 use std::path::PathBuf;
 
 /// Why an entry without an aim gets no give-up time (METHODS.md section 5, "No cost of time").
@@ -186,6 +187,23 @@ impl Serialize for GiveUp {
         match self {
             GiveUp::After(seconds) => serializer.serialize_f64(*seconds),
             GiveUp::Never => serializer.serialize_str("never"),
+        }
+    }
+}
+
+impl<'de> Deserialize<'de> for GiveUp {
+    /// The same back.
+    fn deserialize<D: Deserializer<'de>>(deserializer: D) -> Result<GiveUp, D::Error> {
+        #[derive(Deserialize)]
+        #[serde(untagged)]
+        enum Written {
+            Seconds(f64),
+            Word(String),
+        }
+        match Written::deserialize(deserializer)? {
+            Written::Seconds(seconds) if seconds > 0.0 && seconds.is_finite() => Ok(GiveUp::After(seconds)),
+            Written::Word(word) if word == "never" => Ok(GiveUp::Never),
+            _ => Err(D::Error::custom("a give-up time is a number of seconds above 0, or \"never\"")),
         }
     }
 }

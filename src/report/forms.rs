@@ -43,6 +43,7 @@ pub fn html(week: &Weekly, pictures: &HashMap<String, String>) -> Result<String,
             title => title(week),
             summary => week.summary(),
             made_at => week.made_at.clone(),
+            since => week.since.clone(),
             assumed => Value::from(Serde(&week.assumed)),
             cautions => Value::from(Serde(&week.cautions)),
             sign => rows(&week.sign),
@@ -132,6 +133,9 @@ fn details(row: &Row) -> Vec<(&'static str, String)> {
 /// For a merge request.
 pub fn markdown(week: &Weekly) -> String {
     let mut text = format!("# {}\n\n{}\n", title(week), week.summary());
+    if let Some(day) = &week.since {
+        let _ = writeln!(text, "\nWhat changed is told against the set of {}.", plain(day));
+    }
     for line in &week.assumed {
         let _ = writeln!(text, "\nAssumed: {}", plain(line));
     }

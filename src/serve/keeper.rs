@@ -119,7 +119,14 @@ impl Keeper {
         match outcome {
             Ok(receipt) => {
                 shared.trouble(None);
-                shared.filed(now);
+                // Whoever is answered may end at once what he has started.
+                if batches.iter().any(Batch::ties) {
+                    shared.any_open.store(true, Ordering::Relaxed);
+                }
+                // What is only noted is no sign that waits come in.
+                if batches.iter().any(|batch| batch.streams().next().is_some()) {
+                    shared.filed(now);
+                }
                 let changed: HashSet<&str> = batches
                     .iter()
                     .zip(&receipt.batches)

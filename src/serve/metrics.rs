@@ -272,7 +272,7 @@ fn streams(all: &[Arc<Fresh>], shared: &Shared) -> Vec<MetricFamily> {
             rate.set(name, Some(("at", at)), earns);
             regret.set(name, Some(("at", at)), loses);
         }
-        let signed = settled.as_ref().and_then(|settled| settled.standing(name).give_up_after());
+        let signed = settled.standing(name).give_up_after();
         give_up.set(name, Some(("at", "settled")), signed.map(GiveUp::seconds));
         rate.set(name, Some(("at", "never")), advice.rate_never_per_s);
         attempts.set(name, Some(("at", "advised")), advice.attempts_per_request);

@@ -289,7 +289,7 @@ impl Evidence {
 
     /// The likelihood as a function of scaled coordinates.
     pub(crate) fn climb<'a>(&'a mut self, family: &'a dyn Family, frame: &'a Frame) -> Climb<'a> {
-        Climb { family, frame, likelihood: &mut self.likelihood }
+        Climb { family, frame, likelihood: &mut self.likelihood, quick: self.gain >= COARSE }
     }
 
     /// Log-likelihood of any law, to the accuracy that weighing it needs.
@@ -344,6 +344,8 @@ pub(crate) struct Climb<'a> {
     family: &'a dyn Family,
     frame: &'a Frame,
     likelihood: &'a mut Likelihood,
+    /// Whether a likelihood right to the seventh digit of a nat will do.
+    quick: bool,
 }
 
 impl Objective for Climb<'_> {
@@ -353,7 +355,11 @@ impl Objective for Climb<'_> {
             free[i] = self.frame.free_at(i, x);
         }
         let Some(law) = self.family.law(&free[..at.len()]) else { return f64::NEG_INFINITY };
-        let value = self.likelihood.gradient(law.as_ref(), gradient);
+        let value = if self.quick {
+            self.likelihood.quick_gradient(law.as_ref(), gradient)
+        } else {
+            self.likelihood.gradient(law.as_ref(), gradient)
+        };
         gradient.iter_mut().zip(&self.frame.slope).for_each(|(g, slope)| *g *= slope);
         value
     }

@@ -229,15 +229,16 @@ fn decode_exact(form: u8, bytes: &mut Bytes<'_>, mut take: impl FnMut(f64, u64))
     if length == 0 || length > EXACT_AGES {
         return Err(DecodeError::Impossible { what: "number of ages" });
     }
-    let mut code = 0u64;
+    let (mut code, mut last) = (0u64, 0.0);
     for _ in 0..length {
-        let gap = bytes.varint()?;
-        code = code.checked_add(gap).ok_or(DecodeError::Impossible { what: "age" })?;
+        code = code.checked_add(bytes.varint()?).ok_or(DecodeError::Impossible { what: "age" })?;
         let age = age_of(form, code);
         let count = if all_one { 1 } else { bytes.varint()? };
-        if gap == 0 || count == 0 || !(age > 0.0 && age <= MAX_AGE) {
+        // Large codes may differ and yet be one age.
+        if count == 0 || !(age > last && age <= MAX_AGE) {
             return Err(DecodeError::Impossible { what: "age" });
         }
+        last = age;
         take(age, count);
     }
     Ok(())
@@ -383,6 +384,9 @@ fn decode_buckets(bytes: &mut Bytes<'_>, coarse: bool) -> Result<Buckets, Decode
             if mask & 1 << ending as u8 != 0 {
                 counts[ending as usize] = bytes.varint()?;
             }
+        }
+        if (0..4).any(|i| (counts[i] == 0) == (mask & 1 << i != 0)) {
+            return Err(BAD);
         }
         buckets.counts.insert((over, upto), counts);
     }

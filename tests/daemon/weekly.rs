@@ -60,6 +60,9 @@ fn once_a_week_over_restarts() {
     let week: serde_json::Value =
         serde_json::from_slice(&fs::read(path.join("runs/weekly-2026-12-07.json")).unwrap()).unwrap();
     assert_eq!((&week["schema"], &week["due"]), (&"outwait/weekly/1".into(), &"2026-12-07".into()));
+    assert!(week["since"].is_null());
+    let html = fs::read_to_string(path.join("runs/weekly-2026-12-07.html")).unwrap();
+    assert!(html.contains("<figure><div class=\"ow-wide\"><svg"), "the change to sign has its picture");
     for form in ["md", "html", "csv"] {
         assert!(path.join(format!("runs/weekly-2026-12-07.{form}")).exists());
     }
@@ -78,6 +81,11 @@ fn once_a_week_over_restarts() {
     // Away for three weeks: the newest, once.
     house.set_clock(due + 22.0 * DAY);
     until("the run", || (runs(path) == ["weekly-2026-12-28.json"]).then_some(()));
+    // What changed is told against the set that the ledger has kept, although its file was removed.
+    let week: serde_json::Value =
+        serde_json::from_slice(&fs::read(path.join("runs/weekly-2026-12-28.json")).unwrap()).unwrap();
+    assert_eq!(week["since"], "2026-12-07");
+    assert_eq!(get(house.address, "/v1/weekly").json()["since"], "2026-12-28");
 }
 
 #[test]

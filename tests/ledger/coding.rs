@@ -154,3 +154,15 @@ fn a_later_version_is_named() {
     long.push(0);
     assert_eq!(Tally::decode(&long), Err(DecodeError::Trailing));
 }
+
+/// What nothing writes is not read: a bucket that names an ending of which it holds none, two numbers for one age.
+#[test]
+fn what_nothing_writes_is_refused() {
+    let bytes = [1, 0, 32, 1, 1, 255, 255, 255, 255, 255, 255, 255, 255, 32, 1, 0];
+    assert_eq!(Tally::decode(&bytes), Err(DecodeError::Impossible { what: "bucket" }));
+    let bytes = [
+        1, 0, 4, 1, 5, 10, 180, 10, 1, 255, 1, 255, 255, 255, 255, 255, 255, 255, 255, 10, 128, 16, 48, 255,
+        16, 126, 66,
+    ];
+    assert_eq!(Tally::decode(&bytes), Err(DecodeError::Impossible { what: "age" }));
+}

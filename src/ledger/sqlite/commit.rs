@@ -7,12 +7,12 @@ use rusqlite::{Connection, OptionalExtension, Result, Row, Transaction, Transact
 
 use super::live::{Live, Place};
 use super::read::key_count;
-use super::seal::checksum;
+use super::seal::{checksum, record_seal};
 use super::{Queued, SqliteLedger, entry, read_lock, write_lock};
 use crate::ledger::batch::{EventKey, Hours};
 use crate::ledger::grow::{self, Known};
 use crate::ledger::open::{self, Filed, State};
-use crate::ledger::{Batch, BatchError, Digest, Entry, Hour, Options, Receipt};
+use crate::ledger::{Batch, BatchError, Digest, Entry, Hour, Options, Receipt, Record, Shelf};
 use crate::running::{Mark, SeriesKey};
 use crate::tally::{self, Tally};
 use crate::wait::Ending;
@@ -33,6 +33,7 @@ struct Plan<'b> {
     new_marks: usize,
     keys: HashMap<&'b str, Digest>,
     key_order: Vec<&'b str>,
+    records: HashMap<(Shelf, &'b str, i64), &'b str>,
 }
 
 /// A stream that waits go to: its id, and its place if it has one already.
@@ -69,6 +70,7 @@ impl SqliteLedger {
         plan.write_keys(&tx, time, self.options.most_keys)?;
         plan.write_events(&tx, &read_lock(&self.live), self.options.most_open)?;
         plan.write_bad_lines(&tx, Hour::of(now))?;
+        plan.write_records(&tx)?;
         plan.write_marks(&tx, time)?;
         let (mut due, mut credit, mut appended) = (0, self.credit, None);
         let mut entry = entry::Writer::new();
@@ -138,6 +140,20 @@ impl<'b> Plan<'b> {
                 Some(_) => return Ok(Err(BatchError::KeyReused { key: key.to_string() })),
             }
         }
+        let mut noted: HashMap<_, &str> = HashMap::new();
+        for record in &batch.records {
+            let (shelf, subject, number) = record.place();
+            let earlier = noted.get(&record.place()).or(self.records.get(&record.place())).copied();
+            let is_taken = shelf.is_final()
+                && match earlier {
+                    Some(text) => *text != *record.text,
+                    None => is_taken(db, record)?,
+                };
+            if is_taken {
+                return Ok(Err(BatchError::Taken { subject: subject.to_owned(), number }));
+            }
+            noted.insert(record.place(), &record.text);
+        }
         // One look-up for each stream: with many streams each is a walk through cold memory.
         let known: Vec<_> =
             batch.streams.iter().map(|(name, hours)| (name, hours, live.find(name))).collect();
@@ -190,6 +206,7 @@ impl<'b> Plan<'b> {
         self.singles = self.singles.saturating_add_signed(outcome.singles as isize);
         self.joined = self.joined.saturating_add_signed(outcome.joined as isize);
         self.events.extend(outcome.changed);
+        self.records.extend(noted);
         for (reason, lines) in &batch.bad_lines {
             let sum = self.bad_lines.entry(reason).or_default();
             *sum = sum.saturating_add(*lines);
@@ -286,6 +303,18 @@ impl<'b> Plan<'b> {
         write_count(db, "joined", self.joined)
     }
 
+    fn write_records(&self, db: &Connection) -> Result<()> {
+        let mut insert = db.prepare_cached(
+            "INSERT INTO records (shelf, subject, number, seal, text) VALUES (?1, ?2, ?3, ?4, ?5)
+             ON CONFLICT (shelf, subject, number) DO UPDATE SET seal = excluded.seal, text = excluded.text",
+        )?;
+        for ((shelf, subject, number), text) in &self.records {
+            let seal = record_seal(shelf.code(), subject, *number, text.as_bytes());
+            insert.execute(params![shelf.code(), subject, number, seal, text])?;
+        }
+        Ok(())
+    }
+
     fn write_marks(&self, db: &Connection, time: f64) -> Result<()> {
         if self.marks.is_empty() {
             return Ok(());
@@ -308,6 +337,15 @@ impl<'b> Plan<'b> {
         }
         Ok(())
     }
+}
+
+/// Whether another record stands there.
+fn is_taken(db: &Connection, record: &Record) -> Result<bool> {
+    let (shelf, subject, number) = record.place();
+    db.prepare_cached(
+        "SELECT EXISTS (SELECT 1 FROM records WHERE shelf = ?1 AND subject = ?2 AND number = ?3 AND text != ?4)",
+    )?
+    .query_row(params![shelf.code(), subject, number, record.text], |row| row.get(0))
 }
 
 /// The digest of a key that was filed after `since`.

@@ -26,7 +26,8 @@ pub use self::read::SqliteReader;
 pub use self::schema::LAYOUT_VERSION;
 use super::clock::Clock;
 use super::{
-    Batch, Damage, Extent, Hour, Ledger, LedgerError, OpenWait, Options, Period, Reader, Receipt, Upkeep,
+    Batch, Damage, Extent, Hour, Ledger, LedgerError, OpenWait, Options, Period, Reader, Receipt, Records,
+    Shelf, Upkeep,
 };
 use crate::tally::Tally;
 
@@ -163,6 +164,10 @@ impl Reader for SqliteLedger {
 
     fn bad_lines(&self, hours: Range<Hour>) -> Result<BTreeMap<String, u64>, LedgerError> {
         self.reader.bad_lines(hours)
+    }
+
+    fn records(&self, shelf: Shelf, subject: Option<&str>) -> Result<Records, LedgerError> {
+        self.reader.records(shelf, subject)
     }
 
     fn extent(&self) -> Result<Extent, LedgerError> {

@@ -17,6 +17,9 @@ pub(super) const PATIENCE: Duration = Duration::from_secs(5);
 /// "outw": marks the file as a ledger among SQLite files.
 const APPLICATION: i64 = 0x6f75_7477;
 
+/// Who makes or changes a file.
+const PROGRAM: &str = concat!("outwait ", env!("CARGO_PKG_VERSION"));
+
 const TABLES: &str = "
 CREATE TABLE layout (version INTEGER PRIMARY KEY, program TEXT NOT NULL);
 CREATE TABLE meta (name TEXT PRIMARY KEY, value) WITHOUT ROWID;
@@ -43,8 +46,12 @@ CREATE TABLE bad_lines (
 ) WITHOUT ROWID;
 ";
 
-/// What layout 2 has beyond layout 1.
-const MARKS: &str = "
+/// What layout 2 has more than layout 1.
+const SECOND: &str = "
+CREATE TABLE records (
+  shelf INTEGER NOT NULL, subject TEXT NOT NULL, number INTEGER NOT NULL, seal INTEGER NOT NULL, text TEXT NOT NULL,
+  PRIMARY KEY (shelf, subject, number)
+);
 CREATE TABLE marks (key BLOB PRIMARY KEY, since REAL NOT NULL, seal INTEGER NOT NULL, mark BLOB NOT NULL) WITHOUT ROWID;
 CREATE INDEX marks_by_age ON marks (since);
 ";
@@ -56,9 +63,9 @@ pub(super) fn open_for_writing(path: &Path) -> Result<Connection, LedgerError> {
     let db = open(path, flags).map_err(named)?;
     if is_empty(&db).map_err(named)? {
         create(&db).map_err(named)?;
-    } else if check_layout(&db, path)? < 2 {
-        let step = format!("BEGIN IMMEDIATE; {MARKS} {}", stamp());
-        db.execute_batch(&step).map_err(named)?;
+    } else {
+        let found = check_layout(&db, path)?;
+        upgrade(&db, found).map_err(named)?;
     }
     let durable = || -> Result<bool> {
         let mode: String = db.query_row("PRAGMA journal_mode = WAL", [], |row| row.get(0))?;
@@ -153,22 +160,36 @@ fn create(db: &Connection) -> Result<()> {
         "PRAGMA auto_vacuum = INCREMENTAL; PRAGMA journal_mode = WAL; PRAGMA synchronous = FULL;",
     )?;
     db.execute_batch(&format!(
-        "BEGIN IMMEDIATE; {TABLES} {MARKS} PRAGMA application_id = {APPLICATION}; {}",
-        stamp()
+        "BEGIN IMMEDIATE;
+         {TABLES}
+         {SECOND}
+         INSERT INTO layout VALUES ({LAYOUT_VERSION}, '{PROGRAM}');
+         PRAGMA application_id = {APPLICATION};
+         PRAGMA user_version = {LAYOUT_VERSION};
+         COMMIT;"
     ))
 }
 
-/// Notes the present layout and ends the transaction.
-fn stamp() -> String {
-    let program = concat!("outwait ", env!("CARGO_PKG_VERSION"));
-    format!(
-        "INSERT INTO layout VALUES ({LAYOUT_VERSION}, '{program}');
-         PRAGMA user_version = {LAYOUT_VERSION};
-         COMMIT;"
-    )
+/// Brings an older file to the present layout, one transaction a step; what it holds stays as it is.
+fn upgrade(db: &Connection, found: i64) -> Result<()> {
+    if found < 2 {
+        db.execute_batch(&format!(
+            "BEGIN IMMEDIATE;
+             {SECOND}
+             INSERT INTO layout VALUES (2, '{PROGRAM}');
+             PRAGMA user_version = 2;
+             COMMIT;"
+        ))?;
+    }
+    Ok(())
 }
 
-/// The layout that a file has.
+/// Whether the file has a table for records: one of layout 1 that is only read has none.
+pub(super) fn has_records(db: &Connection) -> Result<bool> {
+    db.query_row("PRAGMA user_version", [], |row| row.get::<_, i64>(0)).map(|version| version >= 2)
+}
+
+/// The layout that a file has. What is older than the present one is brought there when it is opened for writing.
 fn check_layout(db: &Connection, path: &Path) -> Result<i64, LedgerError> {
     let pragma = |name: &str| -> Result<i64, LedgerError> {
         db.query_row(&format!("PRAGMA {name}"), [], |row| row.get(0)).map_err(|error| fault(path, error))
@@ -180,7 +201,7 @@ fn check_layout(db: &Connection, path: &Path) -> Result<i64, LedgerError> {
     if found > LAYOUT_VERSION {
         return Err(LedgerError::Newer { path: path.to_owned(), found, known: LAYOUT_VERSION });
     }
-    // Layout 1 is the first. What is older than the present one is brought there when it is opened for writing.
+    // Layout 1 is the first.
     if found < 1 {
         return Err(LedgerError::Foreign { path: path.to_owned() });
     }

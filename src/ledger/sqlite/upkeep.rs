@@ -9,7 +9,7 @@ use super::fold::put;
 use super::live::Live;
 use super::read::{open_tally, period};
 use super::{SqliteLedger, read_lock, schema, write_lock};
-use crate::ledger::{Hour, Period, Upkeep};
+use crate::ledger::{Hour, Period, Shelf, Upkeep};
 use crate::tally::Tally;
 
 /// The rounds through all streams, a few at a time.
@@ -102,6 +102,8 @@ impl SqliteLedger {
         upkeep.more |= [keys, marks, joined, expired].contains(&FORGETS);
         tx.prepare_cached("DELETE FROM bad_lines WHERE hour < ?1")?
             .execute([Hour::of(time - self.options.keep_for).0])?;
+        tx.prepare_cached("DELETE FROM records WHERE shelf = ?1 AND subject = '' AND number < ?2")?
+            .execute(params![Shelf::Weeks.code(), Hour::of(time - self.options.keep_for).day()])?;
 
         let mut rounds = self.rounds;
         let file_clock = rounds.clock_filed.is_none_or(|filed| (time - filed).abs() >= CLOCK_STEP);
@@ -157,6 +159,7 @@ impl SqliteLedger {
         let (mut finished, mut work) = (streams.len() < STREAMS, 0);
         for stream in streams {
             let dropped = drop_before(db, stream, aim.drop, needed)?;
+            drop_days(db, stream, aim.drop)?;
             let (rolled, complete) = roll(db, stream, aim.roll, needed, ROLLS.saturating_sub(work))?;
             upkeep.dropped += dropped;
             upkeep.rolled += rolled;
@@ -203,6 +206,15 @@ fn drop_before(db: &Connection, stream: i64, hour: Hour, needed: i64) -> Result<
     db.prepare_cached("DELETE FROM damaged WHERE stream = ?1 AND start + hours <= ?2")?
         .execute(params![stream, hour.0])?;
     Ok(dropped as u64)
+}
+
+/// Drops what was advised on a stream on days before that hour's.
+fn drop_days(db: &Connection, stream: i64, hour: Hour) -> Result<()> {
+    db.prepare_cached(
+        "DELETE FROM records WHERE shelf = ?1 AND subject = (SELECT name FROM streams WHERE id = ?2) AND number < ?3",
+    )?
+    .execute(params![Shelf::Days.code(), stream, hour.day()])?;
+    Ok(())
 }
 
 /// Merges the hours of a stream's days that ended by then into those days, about `most` hours; how many, and whether

@@ -288,7 +288,7 @@ fn chain(error: &dyn std::error::Error) -> String {
     text
 }
 
-pub(super) fn refusal(refusal: Refusal) -> Problem {
+pub(in crate::serve) fn refusal(refusal: Refusal) -> Problem {
     let detail = refusal.to_string();
     match refusal {
         Refusal::Batch(error) => {
@@ -296,6 +296,7 @@ pub(super) fn refusal(refusal: Refusal) -> Problem {
                 crate::ledger::BatchError::KeyReused { .. } => {
                     (StatusCode::UNPROCESSABLE_ENTITY, "key-reused")
                 }
+                crate::ledger::BatchError::Taken { .. } => (StatusCode::CONFLICT, "taken"),
                 _ => (StatusCode::INSUFFICIENT_STORAGE, "limit"),
             };
             Problem::new(status, code, "The batch was not counted", detail, error.remedy())

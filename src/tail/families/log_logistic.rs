@@ -93,4 +93,16 @@ impl Law for LogLogisticLaw {
             *s = 1.0 / (1.0 + self.0.w(u).exp());
         }
     }
+
+    fn survival_gradient_on(&self, _: &[f64], logs: &[f64], values: &mut [f64], gradients: &mut [f64]) {
+        let shape = self.0.parameters()[0];
+        for ((value, row), &u) in values.iter_mut().zip(gradients.chunks_exact_mut(2)).zip(logs) {
+            let w = self.0.w(u);
+            let s = 1.0 / (1.0 + w.exp());
+            let slope = s * (1.0 - s);
+            row[0] = -times(slope, w);
+            row[1] = slope * shape;
+            *value = s;
+        }
+    }
 }

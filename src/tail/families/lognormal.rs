@@ -137,4 +137,14 @@ impl Law for LognormalLaw {
             *value = self.tail_gradient(self.z(u), row);
         }
     }
+
+    fn survival_gradient_on(&self, _: &[f64], logs: &[f64], values: &mut [f64], gradients: &mut [f64]) {
+        for ((value, row), &u) in values.iter_mut().zip(gradients.chunks_exact_mut(2)).zip(logs) {
+            let z = self.z(u);
+            let density = ln_normal_density(z).exp();
+            row[0] = density * self.inverse_sigma;
+            row[1] = times(density, z);
+            *value = normal_tail(z);
+        }
+    }
 }

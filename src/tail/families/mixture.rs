@@ -153,6 +153,34 @@ impl<L: Law, const N: usize> Law for Mixture<L, N> {
             *value = self.combine(logs, row).min(0.0);
         }
     }
+
+    fn survival_gradient_on(&self, ages: &[f64], logs: &[f64], values: &mut [f64], gradients: &mut [f64]) {
+        let count = ages.len();
+        let width = gradients.len() / count.max(1);
+        let own = (width - (N - 1)) / N;
+        let (mut part_values, mut part_rows) = (vec![0.0; count], vec![0.0; count * own]);
+        values.fill(0.0);
+        for (i, (part, share)) in self.parts.iter().zip(self.shares).enumerate() {
+            part.survival_gradient_on(ages, logs, &mut part_values, &mut part_rows);
+            let rows = gradients.chunks_exact_mut(width).zip(part_rows.chunks_exact(own));
+            for ((value, s), (row, part_row)) in values.iter_mut().zip(&part_values).zip(rows) {
+                *value += share * s;
+                if i < N - 1 {
+                    row[i] = share * s;
+                }
+                for (g, own) in row[N - 1 + i * own..].iter_mut().zip(part_row) {
+                    *g = share * own;
+                }
+            }
+        }
+        for (value, row) in values.iter_mut().zip(gradients.chunks_exact_mut(width)) {
+            // The shares add up to 1 but for rounding.
+            *value = value.min(1.0);
+            for (g, share) in row.iter_mut().zip(self.shares).take(N - 1) {
+                *g -= share * *value;
+            }
+        }
+    }
 }
 
 /// Free coordinates of natural ones, for `N` parts: shares `p_1 … p_{N-1}` above 0 that leave something to the

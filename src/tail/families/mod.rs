@@ -115,7 +115,7 @@ fn both(shift: f64) -> Vec<Box<dyn Family>> {
 
 /// What a family's file needs.
 mod prelude {
-    pub(super) use super::super::law::{AREA_TOLERANCE, residual_by_quadrature};
+    pub(super) use super::super::law::{AREA_TOLERANCE, residual_by_quadrature, times};
     pub(super) use super::super::{About, Coordinate, Family, Kind, Law, TailWeight};
 
     /// A law made is a law boxed.
@@ -132,11 +132,6 @@ mod prelude {
         } else {
             inverse((-p).ln_1p())
         }
-    }
-
-    /// `a·b`, where 0 beats infinity: a limit in which a factor vanishes exponentially.
-    pub(super) fn times(a: f64, b: f64) -> f64 {
-        if a == 0.0 { 0.0 } else { a * b }
     }
 
     /// `(e^x - 1)/x`, 1 at 0.

@@ -198,4 +198,18 @@ impl Law for NeverLaw {
             *value = self.mix_gradient(*value, row);
         }
     }
+
+    fn survival_gradient_on(&self, ages: &[f64], logs: &[f64], values: &mut [f64], gradients: &mut [f64]) {
+        let width = gradients.len() / ages.len().max(1);
+        let mut inner = vec![0.0; ages.len() * (width - 1)];
+        self.inner.survival_gradient_on(ages, logs, values, &mut inner);
+        let rows = gradients.chunks_exact_mut(width).zip(inner.chunks_exact((width - 1).max(1)));
+        for (value, (row, inner)) in values.iter_mut().zip(rows) {
+            for (g, inner) in row.iter_mut().zip(inner) {
+                *g = self.ending * inner;
+            }
+            row[width - 1] = self.slope * self.never * self.ending * (1.0 - *value);
+            *value = self.never + self.ending * *value;
+        }
+    }
 }

@@ -156,4 +156,13 @@ impl Law for ShiftedLaw {
             &mut gradients[first * width..],
         );
     }
+
+    fn survival_gradient_on(&self, ages: &[f64], _: &[f64], values: &mut [f64], gradients: &mut [f64]) {
+        let width = gradients.len() / ages.len().max(1);
+        let (first, ages, logs) = self.beyond(ages);
+        values[..first].fill(1.0);
+        gradients[..first * width].fill(0.0);
+        let (values, gradients) = (&mut values[first..], &mut gradients[first * width..]);
+        self.inner.survival_gradient_on(&ages, &logs, values, gradients);
+    }
 }
