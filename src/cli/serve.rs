@@ -11,17 +11,22 @@ use tracing_subscriber::filter::LevelFilter;
 
 use super::exit::{Exit, Failure, OrExit, print};
 use super::layout::Page;
-use super::text;
+use super::options::Foreign;
+use super::{options, text};
 use crate::client::Address;
 use crate::demo;
+use crate::intake::{Format, Options};
 use crate::ledger::LedgerError;
 use crate::say;
-use crate::serve::{Config, Daemon, PolicyFile, Runs, ServeError, is_open_to_others, read_tls, read_token};
+use crate::serve::{
+    Config, Daemon, Followed, PolicyFile, Runs, ServeError, is_open_to_others, read_tls, read_token,
+};
 
 const EXAMPLES: &str = "\
 Examples:
   outwait serve --demo
   outwait serve --data /var/lib/outwait --policy policy.yaml
+  outwait serve --data data --follow /var/log/waits.ndjson
   outwait serve --data data --listen 0.0.0.0:7071 --token-file token --certificate tls.crt --key tls.key
 
 Send waits with
@@ -103,6 +108,17 @@ pub(super) struct Serve {
     /// File that holds the secret by which they are signed (HMAC-SHA256)
     #[arg(long, value_name = "FILE", requires = "webhook")]
     webhook_secret: Option<PathBuf>,
+    /// A log to follow over rotations and restarts; may be given more than once
+    #[arg(long, value_name = "FILE")]
+    follow: Vec<PathBuf>,
+    #[command(flatten)]
+    foreign: Foreign,
+    /// Format of the followed files (ndjson, csv, journal), instead of finding it out
+    #[arg(long, value_name = "FORMAT", value_parser = options::format, requires = "follow")]
+    input: Option<Format>,
+    /// One stream for all waits of the followed files, whatever their records call theirs
+    #[arg(long = "as", value_name = "NAME", value_parser = options::stream_name, requires = "follow")]
+    one_stream: Option<String>,
     /// Seed of everything drawn
     #[arg(long, value_name = "N", default_value_t = 1)]
     seed: u64,
@@ -223,6 +239,11 @@ impl Serve {
         if let (Some(address), Some(secret)) = (&self.webhook, &self.webhook_secret) {
             config.weekly.webhook = Some((address.clone(), read_token(secret).or_exit(Exit::BadInput)?));
         }
+        let mut options =
+            Options { format: self.input, one_stream: self.one_stream.clone(), ..Options::default() };
+        self.foreign.apply(&mut options);
+        let followed = |path: &PathBuf| Followed { path: path.clone(), options: options.clone() };
+        config.follow = self.follow.iter().map(followed).collect();
         if let (Some(certificate), Some(key)) = (&self.certificate, &self.key) {
             config.tls = Some(read_tls(certificate, key).or_exit(Exit::BadInput)?);
         }

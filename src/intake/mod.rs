@@ -33,28 +33,42 @@
 
 mod blocks;
 mod collect;
+#[cfg(feature = "columnar")]
+mod columnar;
 mod csv;
 mod decimal;
 mod error;
 mod feed;
 mod flaw;
 mod format;
+mod header;
+mod journal;
 mod lines;
+mod mapping;
 mod ndjson;
+mod outline;
+mod pace;
 mod pairs;
+mod pattern;
 mod read;
 mod record;
 mod report;
 mod source;
+mod sql;
 mod streams;
 mod swf;
 
 use std::num::NonZeroUsize;
+use std::sync::Arc;
 
 use crate::glob::Glob;
 
-pub use error::{HeaderError, IntakeError};
+pub use error::{ColumnsError, HeaderError, IntakeError};
 pub use format::Format;
+pub use mapping::{Mapping, MappingError};
+pub(crate) use outline::Outline;
+pub use pace::ClosedLoop;
+pub use pattern::{Pattern, PatternError};
 pub use read::{Progress, read};
 pub use record::{Half, Record, Side};
 pub use report::{
@@ -62,6 +76,7 @@ pub use report::{
     Report, Suspicion,
 };
 pub use source::Source;
+pub use sql::{Access, Database, QueryError};
 
 /// What takes the waits.
 ///
@@ -91,6 +106,10 @@ pub trait Sink: Send + Sized {
 pub struct Options {
     /// The format of every input; `None`: found out for each.
     pub format: Option<Format>,
+    /// How the lines of a log, or the messages of a journal, become records; `None`: they are records.
+    pub pattern: Option<Arc<Pattern>>,
+    /// What stands for what, where names, endings or times are not ours.
+    pub mapping: Option<Arc<Mapping>>,
     /// The streams wanted, and the name of records that have none; `None`: all, and each must have one.
     pub streams: Option<Glob>,
     /// One stream for all records, whatever they call theirs; a name there is then not even looked at.
@@ -109,12 +128,17 @@ pub struct Options {
     pub line_bytes: usize,
     /// Most bytes of all inputs together, unpacked. Default: no limit.
     pub total_bytes: u64,
+    /// Most halves of waits that miss the other at once. Above it the oldest end without a start is dropped; without
+    /// such an end the oldest start becomes a wait still open. Both are counted. Default: 1,000,000.
+    pub most_open: usize,
 }
 
 impl Default for Options {
     fn default() -> Options {
         Options {
             format: None,
+            pattern: None,
+            mapping: None,
             streams: None,
             one_stream: None,
             measure: Measure::default(),
@@ -124,6 +148,7 @@ impl Default for Options {
             threads: None,
             line_bytes: 1 << 20,
             total_bytes: u64::MAX,
+            most_open: 1_000_000,
         }
     }
 }

@@ -9,14 +9,14 @@ use std::thread;
 use super::blocks::Found;
 use super::collect::{Collector, Flaws, Outcome};
 use super::error::IntakeError;
-use super::feed::{Feed, Layout, Task};
+use super::feed::{Feed, Layout, Part, Task};
 use super::flaw::Flaw;
 use super::pairs::Pairs;
 use super::record::Record;
 use super::report::{BadCount, BadLine, COMMENTS, Comment, EXAMPLES, FileReport, Report};
 use super::source::Source;
 use super::streams::Streams;
-use super::{Allowed, Options, Sink, csv, ndjson, swf};
+use super::{Allowed, Options, Sink, csv, journal, ndjson, pattern, sql, swf};
 
 /// How far a reading is.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
@@ -67,6 +67,21 @@ fn parse<S: Sink>(task: &Task, options: &Options, sink: &mut S, streams: &mut St
             Layout::Swf { unix_start } => {
                 swf::harvest(&task.bytes, *unix_start, options.measure, &mut collector);
             }
+            Layout::Journal(pattern) => journal::harvest(&task.bytes, pattern.as_deref(), &mut collector),
+            Layout::Pattern(lines) => pattern::harvest(&task.bytes, lines, &mut collector),
+            #[cfg(feature = "columnar")]
+            Layout::Columns(_, plan) => {
+                if let Some(Part::Columns(part)) = &task.part
+                    && let Err(error) = super::columnar::harvest(part, plan, &mut collector)
+                {
+                    collector.fail(error);
+                }
+            }
+            Layout::Rows(used) => {
+                if let Some(Part::Rows(rows)) = &task.part {
+                    sql::harvest(rows, used, &mut collector);
+                }
+            }
         },
         Found::Long => {
             collector.refuse(0, Flaw::Long { limit: options.line_bytes });
@@ -89,7 +104,7 @@ fn read_here<S: Sink>(
     let mut buffer = Vec::new();
     while let Some(task) = feed.next(buffer)? {
         let outcome = parse(&task, options, &mut settler.sink, &mut settler.streams);
-        settler.settle(&task, outcome);
+        settler.settle(&task, outcome)?;
         tell(task.bytes_read, settler.report.lines);
         buffer = task.bytes;
     }
@@ -208,7 +223,7 @@ fn settle_in_order<S: Sink>(
             Message::Lost => return Ok(()),
         }
         while let Some((task, outcome)) = early.remove(&next) {
-            settler.settle(&task, outcome);
+            settler.settle(&task, outcome)?;
             tell(task.bytes_read, settler.report.lines);
             // The reader may have finished.
             let _ = free.send(task.bytes);
@@ -238,15 +253,26 @@ impl<'o, S: Sink> Settler<'o, S> {
             options,
             sink,
             streams: Streams::default(),
-            pairs: Pairs::default(),
+            pairs: Pairs::new(options.most_open),
             counts: BTreeMap::new(),
             report: Report { files, ..Report::default() },
         }
     }
 
-    fn settle(&mut self, task: &Task, outcome: Outcome) {
+    fn settle(&mut self, task: &Task, outcome: Outcome) -> Result<(), IntakeError> {
         let Settler { options, sink, streams, report, .. } = self;
-        let Some(file) = report.files.get_mut(task.file) else { return };
+        let Some(file) = report.files.get_mut(task.file) else { return Ok(()) };
+        if let Some(source) = outcome.failure {
+            return Err(IntakeError::Columns { file: file.name.clone(), source });
+        }
+        if let Some((oldest, newest)) = task.passed {
+            report.oldest = Some(report.oldest.map_or(oldest, |time| time.min(oldest)));
+            report.newest = Some(report.newest.map_or(newest, |time| time.max(newest)));
+        }
+        if task.layout.format().is_columnar() {
+            // Only rows outside the window are passed over.
+            report.left_out.outside_window += task.lines_before;
+        }
         file.format = Some(task.layout.format());
         let mut flaws = outcome.flaws;
         let (waits, left_out) = (&mut report.waits, &mut report.left_out);
@@ -271,6 +297,7 @@ impl<'o, S: Sink> Settler<'o, S> {
         report.left_out.outside_window += outcome.outside_window;
         report.left_out.unmeasured += outcome.unmeasured;
         report.left_out.partial += outcome.partial;
+        report.left_out.other_messages += outcome.other_messages;
         let room = COMMENTS.saturating_sub(report.comments.len());
         let comments = outcome.comments.into_iter().take(room);
         report.comments.extend(comments.map(|text| Comment { file: file.name.clone(), text }));
@@ -280,15 +307,19 @@ impl<'o, S: Sink> Settler<'o, S> {
         report.lines += task.lines_before + outcome.lines;
         file.bad += flaws.counts.values().sum::<u64>();
         add_flaws(&mut self.counts, &mut report.bad.examples, flaws, &file.name, first);
+        Ok(())
     }
 
     fn finish(self) -> Result<(S, Report), IntakeError> {
         let Settler { options, mut sink, mut streams, pairs, counts, mut report } = self;
         if let Some((oldest, newest)) = streams.span() {
-            report.oldest = Some(oldest);
-            report.newest = Some(newest);
+            report.oldest = Some(report.oldest.map_or(oldest, |time| time.min(oldest)));
+            report.newest = Some(report.newest.map_or(newest, |time| time.max(newest)));
         }
         report.pairs.joined = pairs.joined;
+        (report.pairs.dropped, report.pairs.let_go) = (pairs.dropped, pairs.let_go);
+        report.pairs.ends_alone += pairs.dropped;
+        report.pairs.open_unseen += pairs.unseen;
         // No half is without a time, so where there are any there is a newest.
         let seen = report.newest.unwrap_or_default();
         pairs.leave(
@@ -311,6 +342,7 @@ impl<'o, S: Sink> Settler<'o, S> {
         );
         report.pairs.seen = (report.pairs.open > 0).then_some(seen);
         report.suspicions = streams.suspicions();
+        report.closed_loops = streams.closed_loops();
         report.bad.count = counts.values().sum();
         report.bad.by_reason =
             counts.into_iter().map(|((field, reason), lines)| BadCount { field, reason, lines }).collect();

@@ -3,7 +3,7 @@
 use std::collections::{BTreeMap, HashMap};
 use std::fmt;
 
-use super::Hour;
+use super::{Hour, Position};
 use crate::tally::{self, Periods, Tally};
 use crate::wait::{Ending, StreamError, Wait, check_stream};
 
@@ -23,6 +23,7 @@ pub struct Batch {
     pub(super) streams: HashMap<Box<str>, Hours>,
     pub(super) events: Vec<Event>,
     pub(super) bad_lines: BTreeMap<Box<str>, u64>,
+    pub(super) positions: BTreeMap<Box<str>, Position>,
 }
 
 /// The tallies of one stream by hour.
@@ -78,6 +79,12 @@ impl Batch {
         for (reason, lines) in other.bad_lines {
             self.bad_lines(&reason, lines);
         }
+        self.positions.extend(other.positions);
+    }
+
+    /// Files how far a followed file was read, if and only if the rest of the batch is filed.
+    pub fn reached(&mut self, name: &str, position: Position) {
+        self.positions.insert(name.into(), position);
     }
 
     #[inline]
@@ -159,7 +166,8 @@ impl Batch {
 
     /// Whether there is nothing in it.
     pub fn is_empty(&self) -> bool {
-        self.streams.is_empty() && self.events.is_empty() && self.bad_lines.is_empty()
+        let Batch { key: _, streams, events, bad_lines, positions } = self;
+        streams.is_empty() && events.is_empty() && bad_lines.is_empty() && positions.is_empty()
     }
 }
 

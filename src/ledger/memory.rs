@@ -10,7 +10,7 @@ use super::clock::Clock;
 use super::open::{self, Filed, State};
 use super::{
     Batch, BatchError, Damage, Digest, Entry, Extent, Hour, Ledger, LedgerError, OpenWait, Options, Period,
-    Reader, Receipt, Upkeep,
+    Position, Reader, Receipt, Upkeep,
 };
 use crate::tally::{self, Tally};
 
@@ -33,6 +33,7 @@ struct Held {
     singles: usize,
     joined: usize,
     bad_lines: BTreeMap<Hour, BTreeMap<Box<str>, u64>>,
+    positions: BTreeMap<Box<str>, Position>,
 }
 
 /// Tallies by their first hour and period.
@@ -125,6 +126,7 @@ impl Held {
             let sum = self.bad_lines.entry(Hour::of(now)).or_default().entry(reason.clone()).or_default();
             *sum = sum.saturating_add(*lines);
         }
+        self.positions.extend(batch.positions.iter().map(|(name, position)| (name.clone(), *position)));
         if let Some((key, digest)) = &batch.key {
             self.keys.insert(key.clone(), (*digest, time));
             self.key_order.push_back((time, key.clone()));
@@ -270,6 +272,10 @@ impl Reader for MemoryLedger {
             *sum = sum.saturating_add(*lines);
         }
         Ok(sums)
+    }
+
+    fn position(&self, name: &str) -> Result<Option<Position>, LedgerError> {
+        Ok(self.read().positions.get(name).copied())
     }
 
     fn extent(&self) -> Result<Extent, LedgerError> {

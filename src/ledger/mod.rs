@@ -52,6 +52,7 @@ mod memory;
 mod open;
 mod options;
 mod period;
+mod position;
 pub mod sqlite;
 
 use std::collections::BTreeMap;
@@ -63,6 +64,7 @@ pub use export::{ExportError, Exported, export};
 pub use memory::MemoryLedger;
 pub use options::Options;
 pub use period::{Hour, Period};
+pub use position::Position;
 pub use sqlite::{LAYOUT_VERSION, SqliteLedger, SqliteReader};
 
 use crate::tally::Tally;
@@ -123,6 +125,12 @@ pub trait Reader: Send {
     /// # Errors
     /// [`LedgerError`] of the store.
     fn bad_lines(&self, hours: Range<Hour>) -> Result<BTreeMap<String, u64>, LedgerError>;
+
+    /// How far the file followed under a name was read; `None` if nothing of it was counted yet.
+    ///
+    /// # Errors
+    /// [`LedgerError`] of the store.
+    fn position(&self, name: &str) -> Result<Option<Position>, LedgerError>;
 
     /// How large it is.
     ///

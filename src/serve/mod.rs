@@ -12,6 +12,7 @@ mod body;
 mod config;
 mod connections;
 mod demo;
+mod follow;
 mod http;
 mod keeper;
 mod loss;
@@ -33,6 +34,7 @@ use std::sync::Arc;
 use tokio::net::TcpListener;
 
 pub use config::{Clock, Config, Limits, SecretError, Token, read_token};
+pub use follow::Followed;
 pub use http::OPENAPI;
 pub use reload::{PolicyFile, ReloadError};
 pub use tls::{TlsError, read_tls};
@@ -93,6 +95,10 @@ impl Daemon {
         }
         threads.push(reload::watch(Arc::clone(&shared)).map_err(refused("a thread"))?);
         threads.push(weekly::start(Arc::clone(&shared)).map_err(refused("a thread"))?);
+        for followed in &shared.config.follow {
+            let follower = follow::start(followed.clone(), Arc::clone(&shared));
+            threads.push(follower.map_err(refused("a thread"))?);
+        }
         shared.desk.all(shared.streams());
         Ok(Daemon { shared, threads, keeper })
     }

@@ -13,7 +13,7 @@ use super::sessions::Sessions;
 use super::studies::Studies;
 use crate::advice::AdviceSet;
 use crate::advise::{Past, Terms};
-use crate::intake::BadLine;
+use crate::intake::{BadLine, Report};
 use crate::ledger::{Hour, LedgerError, Reader, SqliteReader};
 use crate::policy::Policy;
 use crate::say;
@@ -168,8 +168,17 @@ impl Shared {
         Some(f64::from_bits(self.filed.load(Ordering::Relaxed))).filter(|at| *at > 0.0)
     }
 
+    /// Counts what was read, whatever becomes of it.
+    pub(super) fn note(&self, report: &Report) {
+        self.metrics.lines.inc_by(report.lines);
+        for bad in &report.bad.by_reason {
+            self.metrics.bad(bad.field, bad.reason, bad.lines);
+        }
+        self.bad_lines(&report.bad.examples);
+    }
+
     /// Keeps one example for each reason.
-    pub(super) fn bad_lines(&self, examples: &[BadLine]) {
+    fn bad_lines(&self, examples: &[BadLine]) {
         let mut kept = locked(&self.examples);
         for bad in examples {
             let key = (bad.field, bad.kind);

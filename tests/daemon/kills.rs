@@ -14,16 +14,21 @@ use rand_xoshiro::Xoshiro256PlusPlus;
 use crate::client::{get, read_answer, write_request};
 
 /// A daemon in a process of its own, on a free port.
-struct Process {
+pub(crate) struct Process {
     child: Child,
     address: SocketAddr,
 }
 
 impl Process {
     fn start(folder: &Path) -> Process {
+        Process::with(folder, &[])
+    }
+
+    pub(crate) fn with(folder: &Path, arguments: &[&str]) -> Process {
         let mut child = Command::new(env!("CARGO_BIN_EXE_outwait"))
             .args(["serve", "--listen", "127.0.0.1:0", "--log", "json", "--data"])
             .arg(folder)
+            .args(arguments)
             .env_remove("OUTWAIT_POLICY")
             .stderr(Stdio::piped())
             .stdout(Stdio::null())
@@ -43,7 +48,7 @@ impl Process {
         Process { child, address }
     }
 
-    fn kill(mut self) {
+    pub(crate) fn kill(mut self) {
         self.child.kill().unwrap();
         self.child.wait().unwrap();
     }
@@ -57,7 +62,7 @@ fn batch(number: u64) -> (String, u64) {
     (line.repeat(waits as usize), waits)
 }
 
-fn age(number: u64) -> f64 {
+pub(crate) fn age(number: u64) -> f64 {
     (number + 1) as f64 * 1e-3
 }
 
@@ -72,7 +77,7 @@ fn send(to: SocketAddr, number: u64) -> Option<u64> {
 }
 
 /// How often each age was counted, by the program's own export.
-fn counted(folder: &Path) -> HashMap<u64, u64> {
+pub(crate) fn counted(folder: &Path) -> HashMap<u64, u64> {
     let output = Command::new(env!("CARGO_BIN_EXE_outwait"))
         .args(["ledger", "export", "--data"])
         .arg(folder)

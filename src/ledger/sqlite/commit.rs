@@ -8,10 +8,10 @@ use rusqlite::{Connection, OptionalExtension, Result, Row, Transaction, Transact
 use super::live::{Live, Place};
 use super::read::key_count;
 use super::seal::checksum;
-use super::{Queued, SqliteLedger, entry, read_lock, write_lock};
+use super::{Queued, SqliteLedger, entry, positions, read_lock, write_lock};
 use crate::ledger::batch::{EventKey, Hours};
 use crate::ledger::open::{self, Filed, State};
-use crate::ledger::{Batch, BatchError, Digest, Entry, Hour, Options, Receipt};
+use crate::ledger::{Batch, BatchError, Digest, Entry, Hour, Options, Position, Receipt};
 use crate::tally::{self, Tally};
 use crate::wait::Ending;
 
@@ -26,6 +26,7 @@ struct Plan<'b> {
     singles: usize,
     joined: usize,
     bad_lines: BTreeMap<&'b str, u64>,
+    positions: BTreeMap<&'b str, Position>,
     keys: HashMap<&'b str, Digest>,
     key_order: Vec<&'b str>,
 }
@@ -55,6 +56,7 @@ impl SqliteLedger {
         plan.write_keys(&tx, time, self.options.most_keys)?;
         plan.write_events(&tx, &read_lock(&self.live), self.options.most_open)?;
         plan.write_bad_lines(&tx, Hour::of(now))?;
+        positions::write(&tx, &plan.positions)?;
         let (mut due, mut credit, mut appended) = (0, self.credit, None);
         let mut entry = entry::Writer::new();
         plan.tallies.iter().for_each(|(target, hour, tally)| entry.add(target.id, *hour, tally));
@@ -163,6 +165,7 @@ impl<'b> Plan<'b> {
             let sum = self.bad_lines.entry(reason).or_default();
             *sum = sum.saturating_add(*lines);
         }
+        self.positions.extend(batch.positions.iter().map(|(name, position)| (&**name, *position)));
         if let Some((key, digest)) = &batch.key {
             self.keys.insert(key, *digest);
             self.key_order.push(key);

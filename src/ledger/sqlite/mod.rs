@@ -6,6 +6,7 @@ mod entry;
 mod fold;
 mod live;
 mod lock;
+mod positions;
 mod read;
 mod schema;
 mod seal;
@@ -26,7 +27,8 @@ pub use self::read::SqliteReader;
 pub use self::schema::LAYOUT_VERSION;
 use super::clock::Clock;
 use super::{
-    Batch, Damage, Extent, Hour, Ledger, LedgerError, OpenWait, Options, Period, Reader, Receipt, Upkeep,
+    Batch, Damage, Extent, Hour, Ledger, LedgerError, OpenWait, Options, Period, Position, Reader, Receipt,
+    Upkeep,
 };
 use crate::tally::Tally;
 
@@ -157,6 +159,10 @@ impl Reader for SqliteLedger {
 
     fn bad_lines(&self, hours: Range<Hour>) -> Result<BTreeMap<String, u64>, LedgerError> {
         self.reader.bad_lines(hours)
+    }
+
+    fn position(&self, name: &str) -> Result<Option<Position>, LedgerError> {
+        self.reader.position(name)
     }
 
     fn extent(&self) -> Result<Extent, LedgerError> {

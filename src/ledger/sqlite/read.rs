@@ -11,7 +11,7 @@ use rusqlite::{Connection, OptionalExtension, Result, Row, Transaction, Transact
 use super::live::{Live, Slot};
 use super::seal::{checksum, unseal};
 use super::{Queued, entry, fault, file_in, is_damage, read_lock, schema};
-use crate::ledger::{Damage, Extent, Hour, LedgerError, OpenWait, Period, Reader};
+use crate::ledger::{Damage, Extent, Hour, LedgerError, OpenWait, Period, Position, Reader};
 use crate::tally::Tally;
 
 /// Reads a ledger on disk: beside its writer, or without one.
@@ -173,6 +173,10 @@ impl Reader for SqliteReader {
             Ok(sums)
         };
         read().map_err(|error| self.fault(error))
+    }
+
+    fn position(&self, name: &str) -> Result<Option<Position>, LedgerError> {
+        super::positions::read(&self.db, name).map_err(|error| self.fault(error))
     }
 
     fn extent(&self) -> Result<Extent, LedgerError> {

@@ -62,6 +62,7 @@ pub(super) fn open_for_writing(path: &Path) -> Result<Connection, LedgerError> {
         )?;
         Ok(mode.eq_ignore_ascii_case("wal"))
     };
+    db.execute_batch(super::positions::TABLE).map_err(named)?;
     if !durable().map_err(named)? {
         let flaw = "the file system has no write-ahead log for it".to_owned();
         return Err(LedgerError::Damaged { path: path.to_owned(), flaw });

@@ -12,7 +12,7 @@ use serde::Serialize;
 use tokio::time::timeout;
 
 use super::{App, away, excerpt, json, parameters};
-use crate::intake::{BadCount, BadLine, Format, IntakeError, Report};
+use crate::intake::{BadCount, BadLine, Format, IntakeError};
 use crate::ledger::{Entry, LedgerError, MAX_KEY_BYTES};
 use crate::serve::body::{CountError, Reading, count};
 use crate::serve::keeper::Refusal;
@@ -92,7 +92,7 @@ async fn try_take(
         count(bytes, reading, &app.config.limits).map_err(|error| uncounted(&app, error))
     })
     .await?;
-    note(shared, &counted.report);
+    shared.note(&counted.report);
     if counted.events > 0 {
         shared.any_open.store(true, Ordering::Relaxed);
     }
@@ -234,15 +234,6 @@ fn key(headers: &HeaderMap) -> Result<Option<String>, Problem> {
     }
 }
 
-/// Counts what a body held, whatever became of it.
-fn note(shared: &Shared, report: &Report) {
-    shared.metrics.lines.inc_by(report.lines);
-    for bad in &report.bad.by_reason {
-        shared.metrics.bad(bad.field, bad.reason, bad.lines);
-    }
-    shared.bad_lines(&report.bad.examples);
-}
-
 fn uncounted(shared: &Shared, error: CountError) -> Problem {
     let bad = |code, title, remedy: &str, detail: String| {
         Problem::new(StatusCode::BAD_REQUEST, code, title, detail, remedy)
@@ -252,7 +243,7 @@ fn uncounted(shared: &Shared, error: CountError) -> Problem {
             bad("key", "The key is not one", "use 1 to 255 letters, digits and signs", error.to_string())
         }
         CountError::Intake(IntakeError::NoWaits { report } | IntakeError::BadLines { report, .. }) => {
-            note(shared, &report);
+            shared.note(&report);
             bad(
                 "no-waits",
                 "There is no wait in the body",
