@@ -10,8 +10,8 @@ use serde::Serialize;
 
 use crate::wait::{Age, Ending, Wait};
 
-/// Neighbours looked at in one block, so that a long log costs no more than a short one.
-const NEIGHBOURS: u32 = 64;
+/// Steady steps that are measured in one block; a logarithm for each record of a long log would say no more.
+const MEASURED: u32 = 64;
 /// Fewest steady steps, and fewest slow answers, to found a finding on.
 const STEADY: u64 = 100;
 const SLOW: u64 = 3;
@@ -23,9 +23,9 @@ const PARTS: f64 = 1_048_576.0;
 /// What is remembered of one stream. Merging is exact and commutative.
 #[derive(Clone, Copy, Debug, Default)]
 pub(super) struct Pace {
-    /// The block that the last record was in, and how many neighbours were seen in it.
+    /// The block that the last record was in, and how many steps were measured in it.
     block: u64,
-    seen: u32,
+    measured: u32,
     started: f64,
     ended: f64,
     overlaps: u64,
@@ -54,23 +54,26 @@ impl Pace {
     /// Notes a record of the stream; `block` numbers the block that it is in.
     #[inline]
     pub(super) fn note(&mut self, wait: &Wait, block: u64) {
-        let fresh = self.block != block;
-        if !fresh && self.seen >= NEIGHBOURS {
+        // One overlap decides, and most streams have one soon.
+        if self.overlaps > 0 {
             return;
         }
+        let fresh = self.block != block;
         let (Some(ended), Age::Exact(age)) = (wait.at(), wait.age()) else { return };
         self.follow(ended - age, ended, wait.ending() == Ending::Waiting, fresh);
         self.block = block;
     }
 
     fn follow(&mut self, started: f64, ended: f64, open: bool, fresh: bool) {
-        self.seen = if fresh { 0 } else { self.seen + 1 };
-        if !fresh {
+        if fresh {
+            self.measured = 0;
+        } else {
             let (age, step) = (self.ended - self.started, started - self.started);
             // A millisecond is what clocks and roundings of logs differ by.
             if started < self.ended - 1e-3 || open {
                 self.overlaps += 1;
-            } else if step > 2.0 * age {
+            } else if step > 2.0 * age && self.measured < MEASURED {
+                self.measured += 1;
                 let parts = (step.ln() * PARTS) as i64;
                 self.steady += 1;
                 self.sum += parts;

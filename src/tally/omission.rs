@@ -11,8 +11,11 @@
 
 use super::{Cells, EventCell, Mass};
 
-/// Most groups that are added; more are joined into intervals of ages, which says a little less and nothing false.
+/// Most groups that are added; beyond, neighbours are joined, and stand at the middle of their ages.
 const MOST: usize = 32_768;
+
+/// Bins no wider than this share of their age are taken as ages: a histogram's are.
+const NARROW: f64 = 0.002;
 
 impl Cells {
     /// With the samples that a closed loop with this interval (s, above 0) left out. All weights are then brought down so
@@ -20,28 +23,38 @@ impl Cells {
     /// stall made them all.
     pub(crate) fn with_omitted(&self, every: f64) -> Cells {
         // How many questions were left out during a wait of so long.
-        let left_out = |age: f64| match (age / every).floor() {
+        // A timeout is often a whole number of intervals, and neither is a double to the last bit.
+        let left_out = |age: f64| match (age / every + 1e-3).floor() {
             times if times >= 2.0 && times.is_finite() => times - 1.0,
             _ => 0.0,
         };
+        // A narrow bin stands at its middle: shifted bins would overlap others by a part, and say no more.
+        let event = |event: &EventCell| match event.upto - event.over <= NARROW * event.upto {
+            true => {
+                let middle = 0.5 * (event.over + event.upto);
+                EventCell { over: middle, upto: middle, ..*event }
+            }
+            false => *event,
+        };
         let known = |event: &EventCell| if event.upto.is_finite() { event.upto } else { event.over };
-        let stalls =
-            self.events.iter().map(known).chain(self.gave_up.iter().chain(&self.waiting).map(|m| m.age));
+        let events: Vec<EventCell> = self.events.iter().map(event).collect();
+        let stalls = events.iter().map(known).chain(self.gave_up.iter().chain(&self.waiting).map(|m| m.age));
         let stalled = stalls.filter(|&age| left_out(age) > 0.0).count();
         if stalled == 0 {
             return self.clone();
         }
         let most = (MOST / stalled).max(8) as f64;
-        let mut whole = self.clone();
-        for event in &self.events {
-            for (first, last) in runs(left_out(known(event)), most) {
-                let weight = last - first + 1.0;
-                whole.events.push(EventCell {
-                    over: (event.over - last * every).max(0.0),
-                    upto: event.upto - first * every,
-                    done: event.done * weight,
-                    failed: event.failed * weight,
-                });
+        let mut whole = Cells { events, ..self.clone() };
+        for place in 0..whole.events.len() {
+            let event = whole.events[place];
+            for (first, last) in runs(left_out(known(&event)), most) {
+                let (weight, back) = (last - first + 1.0, 0.5 * (first + last) * every);
+                let (over, upto) = match event.over == event.upto {
+                    true => (event.over - back, event.upto - back),
+                    false => ((event.over - last * every).max(0.0), event.upto - first * every),
+                };
+                let (done, failed) = (event.done * weight, event.failed * weight);
+                whole.events.push(EventCell { over, upto, done, failed });
             }
         }
         for mass in self.gave_up.iter().chain(&self.waiting) {

@@ -117,8 +117,9 @@ pub(super) fn harvest<S: Sink>(
         Part::Batch(batch) => take(batch, &plan.used, 0, collector).map(|_| ()),
         Part::Group(group) => {
             let mut rows = 0;
-            for batch in guarded(|| parquet::batches(plan, *group))? {
-                rows = take(&guarded(|| batch.map_err(ColumnsError::arrow))?, &plan.used, rows, collector)?;
+            let mut batches = guarded(|| parquet::batches(plan, *group))?;
+            while let Some(batch) = guarded(|| batches.next().transpose().map_err(ColumnsError::arrow))? {
+                rows = take(&batch, &plan.used, rows, collector)?;
             }
             Ok(())
         }
