@@ -1,18 +1,22 @@
 //! The daemon under load over loopback: how many waits a second it makes durable, how long an acknowledgement takes at half
 //! that, and what memory it takes. Beside it the same bytes parsed and counted in memory with no server.
 //!
-//! `cargo bench --bench load` (a minute); `-- SECONDS` for another length of each part, `-- 3600` for an hour's worth.
+//! `cargo bench --bench load` (a minute); `-- SECONDS` for another length of each part. `-- soak MINUTES RATE` sends so many
+//! waits a second, each stamped with its own minute, and reads the daemon's memory every minute.
 #![allow(clippy::unwrap_used, clippy::expect_used)] // a benchmark may fail
 
-use std::io::{BufRead, BufReader, Read, Write};
+use std::io::{Read, Write};
 use std::net::{SocketAddr, TcpStream};
 use std::num::NonZeroUsize;
-use std::process::{Child, Command, Stdio};
 use std::sync::atomic::{AtomicU64, Ordering};
-use std::time::{Duration, Instant};
+use std::time::{Duration, Instant, SystemTime, UNIX_EPOCH};
+
+#[path = "../tests/support/process.rs"]
+mod process;
 
 use outwait::intake::{Options, Record, Sink, Source, read};
 use outwait::tally::Book;
+use process::Process;
 
 /// Lines in one batch.
 const LINES: usize = 20_000;
@@ -23,10 +27,13 @@ const SENDERS: usize = 4;
 const STREAMS: usize = 100;
 
 fn main() {
-    let seconds = std::env::args().skip(1).find_map(|argument| argument.parse().ok()).unwrap_or(10.0);
-    let now =
-        std::time::SystemTime::now().duration_since(std::time::UNIX_EPOCH).map_or(0.0, |t| t.as_secs_f64());
-    let bodies: Vec<Vec<u8>> = (0..BODIES).map(|i| body(i, now, STREAMS)).collect();
+    let arguments: Vec<String> = std::env::args().skip(1).collect();
+    let number = |i: usize| arguments.iter().filter_map(|argument| argument.parse::<f64>().ok()).nth(i);
+    if arguments.iter().any(|argument| argument == "soak") {
+        return soak(number(0).unwrap_or(60.0) as usize, number(1).unwrap_or(250_000.0));
+    }
+    let (seconds, now) = (number(0).unwrap_or(10.0), now());
+    let bodies = bodies(now);
     let bytes: usize = bodies.iter().map(Vec::len).sum();
     println!(
         "{} lines, {:.0} bytes each, {STREAMS} streams",
@@ -37,7 +44,7 @@ fn main() {
         println!("in memory, no server, {threads} thread(s): {:.0} waits/s", in_memory(&bodies, threads));
     }
     let folder = tempfile::tempdir().expect("a folder");
-    let daemon = Daemon::start(folder.path());
+    let daemon = Process::start(folder.path());
     let before = daemon.memory();
     let whole = load(daemon.address, &bodies, seconds, None);
     println!(
@@ -49,10 +56,10 @@ fn main() {
     println!("at {:.0} waits/s: acknowledged after {}", half.rate, half.times());
     println!("memory: {before:.0} MiB at the start, {:.0} MiB after", daemon.memory());
     let sent = whole.acknowledged + half.acknowledged;
-    println!("{sent} waits acknowledged, {} in the daemon's own count", daemon.counted());
+    println!("{sent} waits acknowledged, {} in the daemon's own count", counted(daemon.address));
     drop(daemon);
     let began = Instant::now();
-    let daemon = Daemon::start(folder.path());
+    let daemon = Process::start(folder.path());
     println!("started again on it after {:.2} s", began.elapsed().as_secs_f64());
     drop(daemon);
     many_streams(now);
@@ -61,7 +68,7 @@ fn main() {
 /// Ten thousand streams over fourteen days, live; then a start on what they left.
 fn many_streams(now: f64) {
     let folder = tempfile::tempdir().expect("a folder");
-    let daemon = Daemon::start(folder.path());
+    let daemon = Process::start(folder.path());
     for day in 0..14 {
         for lot in 0..10 {
             let mut text = String::new();
@@ -80,8 +87,33 @@ fn many_streams(now: f64) {
     println!("10,000 streams x 14 days: {:.0} MiB of memory while advice is made", daemon.memory());
     drop(daemon);
     let began = Instant::now();
-    let _daemon = Daemon::start(folder.path());
+    let _daemon = Process::start(folder.path());
     println!("started on them after {:.2} s", began.elapsed().as_secs_f64());
+}
+
+/// A minute's waits after the other; memory after each.
+fn soak(minutes: usize, rate: f64) {
+    let folder = tempfile::tempdir().expect("a folder");
+    let daemon = Process::start(folder.path());
+    let mut memory = vec![daemon.memory()];
+    let mut acknowledged = 0;
+    for minute in 1..=minutes {
+        acknowledged += load(daemon.address, &bodies(now()), 60.0, Some(rate)).acknowledged;
+        memory.push(daemon.memory());
+        println!("minute {minute}: {acknowledged} waits acknowledged, {:.0} MiB", daemon.memory());
+    }
+    println!("{acknowledged} waits acknowledged, {} in the daemon's own count", counted(daemon.address));
+    for (part, chunk) in memory.chunks(memory.len().div_ceil(6)).enumerate() {
+        println!("memory, sixth {}: up to {:.0} MiB", part + 1, chunk.iter().copied().fold(0.0, f64::max));
+    }
+}
+
+fn now() -> f64 {
+    SystemTime::now().duration_since(UNIX_EPOCH).map_or(0.0, |t| t.as_secs_f64())
+}
+
+fn bodies(now: f64) -> Vec<Vec<u8>> {
+    (0..BODIES).map(|i| body(i, now, STREAMS)).collect()
 }
 
 fn body(number: usize, now: f64, streams: usize) -> Vec<u8> {
@@ -128,56 +160,14 @@ fn in_memory(bodies: &[Vec<u8>], threads: usize) -> f64 {
     (BODIES * LINES) as f64 / (began.elapsed() - copied).as_secs_f64()
 }
 
-struct Daemon {
-    child: Child,
-    address: SocketAddr,
-}
-
-impl Daemon {
-    fn start(folder: &std::path::Path) -> Daemon {
-        let mut child = Command::new(env!("CARGO_BIN_EXE_outwait"))
-            .args(["serve", "--listen", "127.0.0.1:0", "--log", "json", "--data"])
-            .arg(folder)
-            .stderr(Stdio::piped())
-            .spawn()
-            .expect("the program");
-        let mut lines = BufReader::new(child.stderr.take().expect("a log")).lines();
-        let address = lines
-            .by_ref()
-            .map_while(Result::ok)
-            .find_map(|line| {
-                let log: serde_json::Value = serde_json::from_str(&line).ok()?;
-                log["address"].as_str()?.strip_prefix("http://")?.parse().ok()
-            })
-            .expect("it says where it listens");
-        std::thread::spawn(move || lines.for_each(drop));
-        Daemon { child, address }
-    }
-
-    /// Resident, MiB.
-    fn memory(&self) -> f64 {
-        let status = std::fs::read_to_string(format!("/proc/{}/status", self.child.id())).unwrap_or_default();
-        let line = status.lines().find(|line| line.starts_with("VmRSS"));
-        line.and_then(|line| line.split_whitespace().nth(1)?.parse::<f64>().ok()).unwrap_or(0.0) / 1024.0
-    }
-
-    fn counted(&self) -> String {
-        let mut stream = TcpStream::connect(self.address).expect("a connection");
-        stream
-            .write_all(b"GET /metrics HTTP/1.1\r\nHost: l\r\nConnection: close\r\n\r\n")
-            .expect("a request");
-        let mut text = String::new();
-        stream.read_to_string(&mut text).expect("an answer");
-        let line = text.lines().find_map(|line| line.strip_prefix("outwait_waits_total "));
-        line.unwrap_or("none").to_owned()
-    }
-}
-
-impl Drop for Daemon {
-    fn drop(&mut self) {
-        let _ = Command::new("kill").args(["-TERM", &self.child.id().to_string()]).status();
-        let _ = self.child.wait();
-    }
+/// The waits that the daemon says it has taken.
+fn counted(to: SocketAddr) -> String {
+    let mut stream = TcpStream::connect(to).expect("a connection");
+    stream.write_all(b"GET /metrics HTTP/1.1\r\nHost: l\r\nConnection: close\r\n\r\n").expect("a request");
+    let mut text = String::new();
+    stream.read_to_string(&mut text).expect("an answer");
+    let line = text.lines().find_map(|line| line.strip_prefix("outwait_waits_total "));
+    line.unwrap_or("none").to_owned()
 }
 
 /// Sends a batch; whether it was acknowledged. Keeps the connection.

@@ -1,40 +1,42 @@
-//! The little HTTP that is needed towards others: one question, one answer, over plain TCP. Redirects are not followed, and
+//! The little HTTP that is needed towards others: one question, one answer. Redirects are not followed, no proxy is asked, and
 //! an answer has limits of time and size.
 
 use std::fmt;
-use std::io::{self, Read, Write};
-use std::net::{TcpStream, ToSocketAddrs};
+use std::path::Path;
 use std::str::FromStr;
+use std::sync::Arc;
 use std::time::Duration;
 
-use crate::serve::Token;
+use tokio_rustls::rustls::crypto;
+use ureq::Agent;
+use ureq::http::Uri;
+use ureq::http::header::{ACCEPT, AUTHORIZATION};
+use ureq::http::uri::Scheme;
+use ureq::tls::{Certificate, RootCerts, TlsConfig};
+
+use crate::serve::{TlsError, Token, read_certificates};
 
 /// Longest answer, bytes.
 const MOST: u64 = 256 << 20;
 
-/// `http://host:port` and what may follow.
+/// `http://host:port` or `https://host:port`, and the path that may follow.
 #[derive(Clone, Debug, PartialEq, Eq)]
 pub struct Address {
-    /// Host and port as they were written.
-    authority: String,
     /// Without a slash at its end.
-    path: String,
+    base: String,
 }
 
 /// Why a text is no address.
 #[derive(Clone, Debug, PartialEq, Eq, thiserror::Error)]
-#[error("{0:?} is not an address of plain HTTP; write http://host:port (for HTTPS, put a relay beside it)")]
+#[error("{0:?} is not an address; write http://host:port or https://host:port")]
 pub struct AddressError(String);
 
 /// Why there is no answer.
 #[derive(Debug, thiserror::Error)]
 pub enum CallError {
-    /// Nothing was reached, or the connection broke.
+    /// Nothing was reached, it is not trusted, the connection broke, or what answered speaks something else.
     #[error(transparent)]
-    Io(#[from] io::Error),
-    /// What answered speaks something else.
-    #[error("the answer is not HTTP")]
-    Garbled,
+    Call(Box<ureq::Error>),
     /// An answer with another status than success.
     #[error("it answers {status}")]
     Status {
@@ -43,115 +45,103 @@ pub enum CallError {
     },
 }
 
+impl From<ureq::Error> for CallError {
+    fn from(error: ureq::Error) -> CallError {
+        CallError::Call(Box::new(error))
+    }
+}
+
 impl FromStr for Address {
     type Err = AddressError;
 
     fn from_str(text: &str) -> Result<Address, AddressError> {
         let refuse = || AddressError(text.chars().take(100).collect());
-        let rest = text.strip_prefix("http://").ok_or_else(refuse)?;
-        let (authority, path) = rest.split_at(rest.find('/').unwrap_or(rest.len()));
-        // Nothing that could begin another line of the request.
-        let sound = |part: &str| part.bytes().all(|byte| byte.is_ascii_graphic());
-        if authority.is_empty() || authority.contains('@') || !sound(rest) {
+        let uri: Uri = text.parse().map_err(|_| refuse())?;
+        let web = uri.scheme().is_some_and(|scheme| *scheme == Scheme::HTTP || *scheme == Scheme::HTTPS);
+        let host = uri.authority().is_some_and(|authority| !authority.as_str().contains('@'));
+        if !web || !host || uri.query().is_some() || text.contains('#') {
             return Err(refuse());
         }
-        Ok(Address { authority: authority.to_owned(), path: path.trim_end_matches('/').to_owned() })
+        Ok(Address { base: text.trim_end_matches('/').to_owned() })
     }
 }
 
 impl fmt::Display for Address {
     fn fmt(&self, f: &mut fmt::Formatter<'_>) -> fmt::Result {
-        write!(f, "http://{}{}", self.authority, self.path)
+        f.write_str(&self.base)
     }
 }
 
-/// The body of a successful answer to `GET`; `path` begins with a slash.
-///
-/// # Errors
-/// [`CallError`].
-pub fn get(address: &Address, path: &str, token: Option<&Token>) -> Result<Vec<u8>, CallError> {
-    let mut headers = vec![("Accept", "application/json".to_owned())];
-    headers.extend(token.map(|token| ("Authorization", token.bearer())));
-    call(address, "GET", path, &headers, b"", Duration::from_secs(60))
-}
+/// One who asks. Whom it trusts is decided once.
+#[derive(Clone, Debug)]
+pub struct Client(Agent);
 
-/// Posts a body and takes any successful answer; `patience` over every step.
-///
-/// # Errors
-/// [`CallError`]; a redirect is a status that is not success.
-pub fn post(
-    address: &Address,
-    headers: &[(&str, String)],
-    body: &[u8],
-    patience: Duration,
-) -> Result<(), CallError> {
-    call(address, "POST", "", headers, body, patience).map(drop)
-}
-
-fn call(
-    address: &Address,
-    method: &str,
-    path: &str,
-    headers: &[(&str, String)],
-    body: &[u8],
-    patience: Duration,
-) -> Result<Vec<u8>, CallError> {
-    let mut stream = connect(&address.authority, patience)?;
-    let mut target = format!("{}{path}", address.path);
-    if target.is_empty() {
-        target.push('/');
-    }
-    // 1.0, so that the answer is neither kept open nor sent in chunks (RFC 1945).
-    let mut request = format!(
-        "{method} {target} HTTP/1.0\r\nHost: {}\r\nUser-Agent: outwait/{}\r\nContent-Length: {}\r\n",
-        address.authority,
-        env!("CARGO_PKG_VERSION"),
-        body.len()
-    );
-    for (name, value) in headers {
-        request += &format!("{name}: {value}\r\n");
-    }
-    request += "\r\n";
-    stream.write_all(request.as_bytes())?;
-    stream.write_all(body)?;
-    let mut answer = Vec::new();
-    stream.take(MOST).read_to_end(&mut answer)?;
-    let split = answer.windows(4).position(|four| four == b"\r\n\r\n").ok_or(CallError::Garbled)?;
-    let head = std::str::from_utf8(&answer[..split]).map_err(|_| CallError::Garbled)?;
-    let status = head.strip_prefix("HTTP/1.").and_then(|rest| rest.get(2..5)?.parse().ok());
-    match status.ok_or(CallError::Garbled)? {
-        200..300 => {}
-        status => return Err(CallError::Status { status }),
-    }
-    let length = head.lines().find_map(|line| {
-        let (name, value) = line.split_once(':')?;
-        name.eq_ignore_ascii_case("content-length").then(|| value.trim().parse::<usize>().ok())?
-    });
-    answer.drain(..split + 4);
-    if length.is_some_and(|length| length != answer.len()) {
-        return Err(io::Error::new(io::ErrorKind::UnexpectedEof, "the answer broke off").into());
-    }
-    Ok(answer)
-}
-
-fn connect(authority: &str, patience: Duration) -> io::Result<TcpStream> {
-    let named = if authority.rsplit_once(':').is_some_and(|(_, port)| port.parse::<u16>().is_ok()) {
-        authority.to_owned()
-    } else {
-        format!("{authority}:80")
-    };
-    let mut last = io::Error::new(io::ErrorKind::NotFound, "the name has no address");
-    for address in named.to_socket_addrs()? {
-        match TcpStream::connect_timeout(&address, patience) {
-            Ok(stream) => {
-                stream.set_read_timeout(Some(patience))?;
-                stream.set_write_timeout(Some(patience))?;
-                return Ok(stream);
+impl Client {
+    /// Trusts the certificates in a PEM file, or without one those of the system (or of `SSL_CERT_FILE`). `patience` is had
+    /// with every step: the name, the connection, the question, the head of the answer, its body.
+    ///
+    /// # Errors
+    /// [`TlsError`] where the file holds no certificate.
+    pub fn new(trust: Option<&Path>, patience: Duration) -> Result<Client, TlsError> {
+        let roots = match trust {
+            None => RootCerts::PlatformVerifier,
+            Some(path) => {
+                let chain = read_certificates(path)?;
+                RootCerts::from(chain.iter().map(|one| Certificate::from_der(one).to_owned()))
             }
-            Err(error) => last = error,
-        }
+        };
+        let tls = TlsConfig::builder()
+            .root_certs(roots)
+            .unversioned_rustls_crypto_provider(Arc::new(crypto::ring::default_provider()))
+            .build();
+        let patience = Some(patience);
+        let agent = Agent::config_builder()
+            .tls_config(tls)
+            .http_status_as_error(false)
+            .max_redirects(0)
+            .max_redirects_will_error(false)
+            .proxy(None)
+            .user_agent(concat!("outwait/", env!("CARGO_PKG_VERSION")))
+            .max_idle_connections(0)
+            .timeout_resolve(patience)
+            .timeout_connect(patience)
+            .timeout_send_request(patience)
+            .timeout_send_body(patience)
+            .timeout_recv_response(patience)
+            .timeout_recv_body(patience)
+            .build();
+        Ok(Client(agent.into()))
     }
-    Err(last)
+
+    /// The body of a successful answer to `GET`; `path` begins with a slash.
+    ///
+    /// # Errors
+    /// [`CallError`].
+    pub fn get(&self, address: &Address, path: &str, token: Option<&Token>) -> Result<Vec<u8>, CallError> {
+        let mut request = self.0.get(format!("{address}{path}")).header(ACCEPT, "application/json");
+        if let Some(token) = token {
+            request = request.header(AUTHORIZATION, token.bearer());
+        }
+        let mut answer = request.call()?;
+        succeeded(answer.status().as_u16())?;
+        Ok(answer.body_mut().with_config().limit(MOST).read_to_vec()?)
+    }
+
+    /// Posts a body and takes any successful answer.
+    ///
+    /// # Errors
+    /// [`CallError`]; a redirect is a status that is not success.
+    pub fn post(&self, address: &Address, headers: &[(&str, String)], body: &[u8]) -> Result<(), CallError> {
+        let mut request = self.0.post(address.to_string());
+        for (name, value) in headers {
+            request = request.header(*name, value);
+        }
+        succeeded(request.send(body)?.status().as_u16())
+    }
+}
+
+fn succeeded(status: u16) -> Result<(), CallError> {
+    if (200..300).contains(&status) { Ok(()) } else { Err(CallError::Status { status }) }
 }
 
 #[cfg(test)]
@@ -160,9 +150,22 @@ mod tests {
 
     #[test]
     fn addresses() {
-        let address: Address = "http://127.0.0.1:7071/".parse().unwrap();
-        assert_eq!(address.to_string(), "http://127.0.0.1:7071");
-        for bad in ["127.0.0.1:7071", "https://a", "http://", "http://a/\r\nX: y", "http://a:b@c/"] {
+        for (text, shown) in [
+            ("http://127.0.0.1:7071/", "http://127.0.0.1:7071"),
+            ("https://waits.fernhollow.example/outwait", "https://waits.fernhollow.example/outwait"),
+        ] {
+            assert_eq!(text.parse::<Address>().unwrap().to_string(), shown);
+        }
+        for bad in [
+            "127.0.0.1:7071",
+            "ftp://a",
+            "http://",
+            "http://a/\r\nX: y",
+            "http://a:b@c/",
+            "/v1",
+            "http://a?b",
+            "http://a/#b",
+        ] {
             assert!(bad.parse::<Address>().is_err(), "{bad}");
         }
     }

@@ -81,7 +81,7 @@ impl fmt::Display for Glob {
 
 /// Greedy match that only ever goes back to the last `*`: what an earlier one took need not be reconsidered,
 /// since the last can take any run that follows.
-fn fits(pattern: &str, name: &str) -> bool {
+pub(crate) fn fits(pattern: &str, name: &str) -> bool {
     let (mut pattern, mut name) = (pattern.chars(), name.chars());
     // What follows the last `*`, and the rest of the name at which it was last tried.
     let mut last = None;

@@ -49,6 +49,12 @@ const UNITS: [(&str, f64, f64); 6] = [
     ("µs", 1e-6, 0.0),
 ];
 
+/// Words with their first letter capital.
+pub fn capital(words: &str) -> String {
+    let mut letters = words.chars();
+    letters.next().map_or_else(String::new, |first| first.to_uppercase().chain(letters).collect())
+}
+
 /// A duration for people, three significant digits: `"18.3 ms"`, `"2.50 s"`, `"3.2 h"`; `"never"` if infinite.
 pub fn duration(seconds: f64) -> String {
     if seconds.is_infinite() {

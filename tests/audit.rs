@@ -3,6 +3,9 @@
 
 #![allow(clippy::unwrap_used, clippy::panic)] // a test may fail
 
+#[path = "support/command.rs"]
+mod command;
+
 use std::fmt::Write;
 use std::fs;
 use std::path::Path;
@@ -299,17 +302,11 @@ proptest! {
 // ---- the command ----
 
 fn run(folder: &Path, arguments: &[&str], input: Option<&str>) -> (i32, String, String) {
-    let mut command = assert_cmd::Command::new(env!("CARGO_BIN_EXE_outwait"));
-    command.current_dir(folder).arg("audit").args(arguments);
-    for name in ["OUTWAIT_POLICY", "NO_COLOR", "COLUMNS", "CLICOLOR_FORCE"] {
-        command.env_remove(name);
+    let arguments = [&["audit"], arguments].concat();
+    match input {
+        Some(input) => command::fed(folder, &arguments, input),
+        None => command::run(folder, &arguments),
     }
-    if let Some(input) = input {
-        command.write_stdin(input);
-    }
-    let output = command.output().unwrap();
-    let text = |bytes| String::from_utf8(bytes).unwrap();
-    (output.status.code().unwrap_or(-1), text(output.stdout), text(output.stderr))
 }
 
 /// Courier waits as lines, an hour apart or so, with some open.

@@ -9,7 +9,7 @@ mod house;
 use std::path::{Path, PathBuf};
 use std::process::Command;
 
-use outwait::serve::PolicyFile;
+use outwait::serve::{PolicyFile, Signing};
 
 fn found(program: &str) -> Option<PathBuf> {
     std::env::split_paths(&std::env::var_os("PATH")?)
@@ -32,7 +32,10 @@ fn every_page_in_a_browser() {
     }
     let policy = tempfile::NamedTempFile::new().unwrap();
     std::fs::write(policy.path(), outwait::demo::POLICY).unwrap();
-    let house = house::House::demo(|config| config.policy = PolicyFile::at(policy.path()));
+    let house = house::House::demo(|config| {
+        config.policy = PolicyFile::at(policy.path());
+        config.signing = Signing::Anyone;
+    });
     let shots = home.join("target/browser/shots");
     let seen = Command::new(node)
         .arg(home.join("tests/browser/look.mjs"))

@@ -3,51 +3,21 @@
 // Reading aids outside `#[test]` functions may fail too.
 #![allow(clippy::unwrap_used, clippy::panic)]
 
+#[path = "support/command.rs"]
+mod command;
+
 use std::fs;
 use std::io::Write;
 use std::path::{Path, PathBuf};
-use std::process::{Output, Stdio};
+use std::process::Stdio;
 use std::sync::LazyLock;
 
+use command::{BINARY, ended, fed, folder, outwait, run};
 use outwait::advice::{AdviceSet, SCHEMA};
 use serde_json::Value;
 use tempfile::TempDir;
 
 // ---- aids ----
-
-const BINARY: &str = env!("CARGO_BIN_EXE_outwait");
-
-/// `outwait` in a folder, with nothing of the caller's environment that changes what it prints.
-fn outwait(folder: &Path, arguments: &[&str]) -> assert_cmd::Command {
-    let mut command = assert_cmd::Command::new(BINARY);
-    command.current_dir(folder).args(arguments);
-    for name in ["OUTWAIT_POLICY", "NO_COLOR", "COLUMNS", "CLICOLOR_FORCE"] {
-        command.env_remove(name);
-    }
-    command
-}
-
-/// Exit code, standard output, standard error.
-fn ended(output: Output) -> (i32, String, String) {
-    let text = |bytes| String::from_utf8(bytes).unwrap();
-    (output.status.code().unwrap_or(-1), text(output.stdout), text(output.stderr))
-}
-
-fn run(folder: &Path, arguments: &[&str]) -> (i32, String, String) {
-    ended(outwait(folder, arguments).output().unwrap())
-}
-
-fn fed(folder: &Path, arguments: &[&str], input: impl Into<Vec<u8>>) -> (i32, String, String) {
-    ended(outwait(folder, arguments).write_stdin(input).output().unwrap())
-}
-
-fn folder(files: &[(&str, &[u8])]) -> TempDir {
-    let folder = tempfile::tempdir().unwrap();
-    for (name, bytes) in files {
-        fs::write(folder.path().join(name), bytes).unwrap();
-    }
-    folder
-}
 
 /// Ages of a law at equal steps of probability: fixed, and smooth enough for every family.
 fn ages(n: u32, quantile: impl Fn(f64) -> f64) -> impl Iterator<Item = f64> {

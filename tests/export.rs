@@ -3,22 +3,19 @@
 // A test may fail.
 #![allow(clippy::unwrap_used, clippy::panic)]
 
+#[path = "support/command.rs"]
+mod command;
+#[path = "support/node.rs"]
+mod node;
+
 use std::fs;
 use std::path::{Path, PathBuf};
 use std::process::Command;
 
+use command::run;
 use outwait::export::{Export, Stream, environment, metrics, render};
 use serde_json::Value;
 use tempfile::TempDir;
-
-const BINARY: &str = env!("CARGO_BIN_EXE_outwait");
-
-fn run(folder: &Path, arguments: &[&str]) -> (i32, String, String) {
-    let mut command = assert_cmd::Command::new(BINARY);
-    let output = command.current_dir(folder).args(arguments).env_remove("OUTWAIT_POLICY").output().unwrap();
-    let text = |bytes| String::from_utf8(bytes).unwrap();
-    (output.status.code().unwrap_or(-1), text(output.stdout), text(output.stderr))
-}
 
 const POLICY: &str = "\
 version: 1
@@ -247,24 +244,21 @@ fn grpc_service_config() {
     read_by_its_own_client(&text);
 }
 
-/// The standard's JavaScript client refuses what it does not understand. Installed by the caller; skipped where absent.
+/// The standard's JavaScript client refuses what it does not understand.
 fn read_by_its_own_client(config: &str) {
-    let Some(modules) = std::env::var_os("OUTWAIT_NODE_MODULES") else {
-        println!("skipped: OUTWAIT_NODE_MODULES names no folder with @grpc/grpc-js");
-        return;
-    };
-    let script = "const {validateServiceConfig: v} = require(process.argv[1] + '/@grpc/grpc-js/build/src/service-config.js');\
-                  const c = v(JSON.parse(process.argv[2])); if (c.methodConfig.length !== 3) throw new Error('lost');\
-                  console.log(JSON.stringify(c.methodConfig[0].timeout));";
-    let output = Command::new("node").args(["-e", script]).arg(modules).arg(config).output().unwrap();
-    let (out, err) = (String::from_utf8_lossy(&output.stdout), String::from_utf8_lossy(&output.stderr));
-    assert!(output.status.success(), "{err}");
-    // google.protobuf.Duration: 1 s and 230 million ns.
-    assert_eq!(out.trim(), "{\"seconds\":1,\"nanos\":230000000}");
+    let script = "const {validateServiceConfig} = require('@grpc/grpc-js/build/src/service-config.js');\
+                  const config = validateServiceConfig(JSON.parse(input));\
+                  if (config.methodConfig.length !== 3) throw new Error('lost');\
+                  console.log(JSON.stringify(config.methodConfig[0].timeout));";
+    if let Some(out) = node::asked("node_modules/@grpc/grpc-js", script, config) {
+        // google.protobuf.Duration: 1 s and 230 million ns.
+        assert_eq!(out.trim(), "{\"seconds\":1,\"nanos\":230000000}");
+    }
 }
 
 /// Times of the Gateway API are GEP-2257 durations, `^([0-9]{1,5}(h|m|s|ms)){1,4}$`, and `backendRequest` is no longer than
-/// `request` (GEP-1742); both from memory of the published documents, since no registry at hand carries the schema.
+/// `request` (GEP-1742); both from memory of the published documents. Its published schema, as npm's
+/// `@kubernetes-models/gateway-api` carries it, judges each route too.
 #[test]
 fn gateway_api_route() {
     let folder = folder();
@@ -288,6 +282,14 @@ fn gateway_api_route() {
     assert_eq!(routes[0]["spec"]["rules"][0]["retry"]["attempts"], 2);
     assert!(routes[1]["spec"]["rules"][0].get("timeouts").is_none());
     assert!(routes[2]["spec"]["rules"][0].get("retry").is_none());
+    let script = "const models = folder + '/node_modules/@kubernetes-models/gateway-api/gateway.networking.k8s.io/v1';\
+                  const {HTTPRoute} = await import('file://' + models + '/HTTPRoute.js');\
+                  const routes = JSON.parse(input); routes.forEach(route => new HTTPRoute(route).validate());\
+                  routes[0].spec.rules[0].timeouts.request = '1.5s';\
+                  try { new HTTPRoute(routes[0]).validate(); console.log('sleeps'); } catch { console.log('sound'); }";
+    let judged =
+        node::asked("node_modules/@kubernetes-models/gateway-api", script, &Value::from(routes).to_string());
+    assert!(judged.is_none_or(|said| said.trim() == "sound"));
 }
 
 /// Seconds of a duration of that form.

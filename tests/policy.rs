@@ -434,8 +434,9 @@ fn every_key_is_read() {
             Section::Backoff => {
                 format!("version: 1\nstreams: [{{retry: {{backoff: {{{}: '%'}}}}}}]\n", key.name)
             }
-            Section::Weekly => {
-                format!("version: 1\nstreams: [{{match: a}}]\nweekly: {{{}: '%'}}\n", key.name)
+            section @ (Section::Weekly | Section::Telemetry) => {
+                let path = section.path();
+                format!("version: 1\nstreams: [{{match: a}}]\n{path}: {{{}: '%'}}\n", key.name)
             }
             section => format!("version: 1\nstreams: [{{{}: {{{}: '%'}}}}]\n", section.path(), key.name),
         };
@@ -456,8 +457,9 @@ fn every_example_is_fit() {
         let (name, example) = (key.name, key.example);
         let mut entry = match key.section {
             Section::File => continue,
-            Section::Weekly => {
-                read(&format!("version: 1\nstreams: [{{match: a}}]\nweekly: {{{name}: {example}}}\n"));
+            section @ (Section::Weekly | Section::Telemetry) => {
+                let path = section.path();
+                read(&format!("version: 1\nstreams: [{{match: a}}]\n{path}: {{{name}: {example}}}\n"));
                 continue;
             }
             Section::Entry => format!("{name}: {example}"),

@@ -5,6 +5,9 @@
 
 mod support;
 
+#[path = "support/command.rs"]
+mod command;
+
 use std::collections::VecDeque;
 use std::path::Path;
 
@@ -65,15 +68,7 @@ fn offered_wait_and_patience_of_a_banks_calls() {
 }
 
 fn run(folder: &Path, arguments: &[&str]) -> (i32, String, String) {
-    let output = assert_cmd::Command::new(env!("CARGO_BIN_EXE_outwait"))
-        .current_dir(folder)
-        .env_remove("OUTWAIT_POLICY")
-        .arg("audit")
-        .args(arguments)
-        .output()
-        .unwrap();
-    let text = |bytes| String::from_utf8(bytes).unwrap();
-    (output.status.code().unwrap(), text(output.stdout), text(output.stderr))
+    command::run(folder, &[&["audit"], arguments].concat())
 }
 
 #[test]

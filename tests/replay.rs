@@ -2,10 +2,13 @@
 
 #![allow(clippy::unwrap_used, clippy::panic)] // a test may fail
 
+#[path = "support/command.rs"]
+mod command;
+
 use std::fmt::Write;
 use std::fs;
-use std::path::Path;
 
+use command::run;
 use outwait::policy::{self, Policy};
 use outwait::replay::{ADVICE, IN_FORCE, Log, ReplaySet, Roll, RuleReplay, SCHEMA, StreamReplay};
 use outwait::stopping::RetransmissionTimer;
@@ -354,21 +357,13 @@ fn the_same_seed_gives_the_same_numbers() {
     assert_ne!(with(1), with(2));
 }
 
-fn outwait(folder: &Path, arguments: &[&str]) -> (i32, String, String) {
-    let mut command = assert_cmd::Command::new(env!("CARGO_BIN_EXE_outwait"));
-    command.env_remove("OUTWAIT_POLICY").current_dir(folder).args(arguments);
-    let output = command.output().unwrap();
-    let text = |bytes| String::from_utf8(bytes).unwrap();
-    (output.status.code().unwrap(), text(output.stdout), text(output.stderr))
-}
-
 #[test]
 fn the_demo_on_the_command_line() {
     let folder = TempDir::new().unwrap();
-    assert_eq!(outwait(folder.path(), &["demo", "demo"]).0, 0);
+    assert_eq!(run(folder.path(), &["demo", "demo"]).0, 0);
     let replay = |more: &[&str]| {
         let first = ["replay", "demo/waits.ndjson", "--policy", "demo/policy.yaml"];
-        outwait(folder.path(), &[&first[..], more].concat())
+        run(folder.path(), &[&first[..], more].concat())
     };
     let (code, text, told) = replay(&["--pictures", "pictures"]);
     assert_eq!((code, told.as_str()), (0, ""));
@@ -405,15 +400,15 @@ fn usage_and_bad_input() {
     fs::write(folder.path().join("bad.ndjson"), lines.clone() + "{\"stream\":\"desk\"}\n").unwrap();
     let first: String = lines.lines().take(50).map(|line| format!("{line}\n")).collect();
     fs::write(folder.path().join("short.ndjson"), first).unwrap();
-    let (code, text, _) = outwait(folder.path(), &["replay", "good.ndjson"]);
+    let (code, text, _) = run(folder.path(), &["replay", "good.ndjson"]);
     assert!(code == 0 && text.contains("assumed:"), "{text}");
-    assert_eq!(outwait(folder.path(), &["replay", "bad.ndjson"]).0, 3);
-    assert_eq!(outwait(folder.path(), &["replay", "bad.ndjson", "--bad-lines", "1"]).0, 0);
-    let (code, text, _) = outwait(folder.path(), &["replay", "short.ndjson", "--format", "json"]);
+    assert_eq!(run(folder.path(), &["replay", "bad.ndjson"]).0, 3);
+    assert_eq!(run(folder.path(), &["replay", "bad.ndjson", "--bad-lines", "1"]).0, 0);
+    let (code, text, _) = run(folder.path(), &["replay", "short.ndjson", "--format", "json"]);
     let set: Value = serde_json::from_str(&text).unwrap();
     assert!(code == 4 && set["streams"][0]["rules"] == Value::Array(vec![]), "{text}");
-    let (code, _, told) = outwait(folder.path(), &["replay", "good.ndjson", "--threads", "2"]);
+    let (code, _, told) = run(folder.path(), &["replay", "good.ndjson", "--threads", "2"]);
     assert!(code == 2 && told.contains("order"), "{told}");
     // Only replay has a table.
-    assert_eq!(outwait(folder.path(), &["weigh", "good.ndjson", "--format", "csv"]).0, 2);
+    assert_eq!(run(folder.path(), &["weigh", "good.ndjson", "--format", "csv"]).0, 2);
 }

@@ -3,24 +3,19 @@
 // A test may fail.
 #![allow(clippy::unwrap_used, clippy::panic)]
 
+#[path = "support/command.rs"]
+mod command;
+
 use std::fs;
 use std::path::Path;
 use std::sync::LazyLock;
 
+use command::run;
 use outwait::policy::GiveUp;
 use outwait::settle::{Grounds, Settled, Settlement, State, insert, parse};
 use proptest::prelude::*;
 use serde_json::Value;
 use tempfile::TempDir;
-
-const BINARY: &str = env!("CARGO_BIN_EXE_outwait");
-
-fn run(folder: &Path, arguments: &[&str]) -> (i32, String, String) {
-    let mut command = assert_cmd::Command::new(BINARY);
-    let output = command.current_dir(folder).args(arguments).env_remove("OUTWAIT_POLICY").output().unwrap();
-    let text = |bytes| String::from_utf8(bytes).unwrap();
-    (output.status.code().unwrap_or(-1), text(output.stdout), text(output.stderr))
-}
 
 /// 400 look-ups, log-logistic of scale 50 ms and shape 1.5, cut off at 2 s: the best time is far below the one in force.
 fn lookups() -> String {

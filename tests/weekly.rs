@@ -3,20 +3,15 @@
 // A test may fail.
 #![allow(clippy::unwrap_used, clippy::panic)]
 
+#[path = "support/command.rs"]
+mod command;
+
 use std::fs;
 use std::path::Path;
 
+use command::run;
 use serde_json::Value;
 use tempfile::TempDir;
-
-const BINARY: &str = env!("CARGO_BIN_EXE_outwait");
-
-fn run(folder: &Path, arguments: &[&str]) -> (i32, String, String) {
-    let mut command = assert_cmd::Command::new(BINARY);
-    let output = command.current_dir(folder).args(arguments).env_remove("OUTWAIT_POLICY").output().unwrap();
-    let text = |bytes| String::from_utf8(bytes).unwrap();
-    (output.status.code().unwrap_or(-1), text(output.stdout), text(output.stderr))
-}
 
 /// The demo scenario.
 fn folder() -> TempDir {

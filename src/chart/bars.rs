@@ -7,6 +7,7 @@ use super::sheet::{MARGIN, Sample, Sheet, advised_shape, in_force_shape, nothing
 use super::text::{self, named};
 use super::words::{Quantity, Spoken, brackets_hold, in_brackets, percent, range, roughly, sentences};
 use super::{Frame, Svg, Table};
+use crate::say;
 
 /// Below this width a bar's name stands above it, px.
 const BESIDE_FROM: f64 = 560.0;
@@ -120,7 +121,7 @@ fn replay_title(unit: &Spoken, bars: &[Bar<'_>]) -> String {
         if bars.iter().any(|b| b.role == Role::Ours) {
             return "What the advice would have earned was not seen".into();
         }
-        return format!("{} earned most, {}", capital(&named(bars[0].name)), unit.long(bars[0].value));
+        return format!("{} earned most, {}", say::capital(&named(bars[0].name)), unit.long(bars[0].value));
     };
     let gap = |other: &Bar<'_>| (ours.value - other.value) / ours.value.abs().max(other.value.abs());
     let better = bars.iter().find(|b| b.role != Role::Ours && b.value.is_finite() && gap(b) < -SLIGHT);
@@ -136,7 +137,7 @@ fn replay_title(unit: &Spoken, bars: &[Bar<'_>]) -> String {
     let overlap = ours.interval.zip(other.interval).is_some_and(|(a, b)| a[0] <= b[1] && b[0] <= a[1]);
     let doubt = if overlap { "; their intervals overlap" } else { "" };
     let (best, rest, name, than) = match better {
-        Some(better) => (better, ours, capital(&name), "the advice".into()),
+        Some(better) => (better, ours, say::capital(&name), "the advice".into()),
         None => (ours, other, "The advice".into(), name),
     };
     match gap(other) {
@@ -267,9 +268,4 @@ fn draw(mut sheet: Sheet<'_>, rows: Rows<'_>) -> Svg {
     }
     sheet.key(&key);
     sheet.finish(&rows.summary(), rows.table())
-}
-
-fn capital(text: &str) -> String {
-    let mut chars = text.chars();
-    chars.next().map_or(String::new(), |first| first.to_uppercase().chain(chars).collect())
 }

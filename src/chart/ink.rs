@@ -37,8 +37,11 @@ impl Ink {
 ///
 /// It is the same text each time, without `<`, `&` or quotes. Paper stays light.
 pub fn style() -> String {
-    let mut sheet =
-        String::from(".ow{max-width:100%;height:auto}@media screen and (prefers-color-scheme:dark){");
+    let mut sheet = String::from(
+        ".ow{max-width:100%;height:auto}.ow-wide{display:none}\
+         @media print,(min-width:40rem){.ow-wide{display:block}.ow-narrow{display:none}}\
+         @media screen and (prefers-color-scheme:dark){",
+    );
     for ink in ALL {
         let _ = write!(sheet, ".{}{{", ink.class);
         for (property, colour) in [("fill", ink.fill), ("stroke", ink.stroke)] {

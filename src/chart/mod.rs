@@ -59,6 +59,17 @@ pub use waiting::{Waiting, waiting};
 pub use week::{Week, week};
 pub use words::Quantity;
 
+/// One picture at two widths for a page that is read on phones too: [`style`] shows the one that there is room for, and
+/// print the wide one. Title, summary and table are those of the wide one.
+pub fn at_both_widths(wide: u32, prefix: &str, draw: impl Fn(&Frame<'_>) -> Svg) -> Svg {
+    let wide = draw(&Frame { width: wide, prefix, styled: false });
+    let narrow =
+        draw(&Frame { width: Frame::NARROWEST, prefix: &format!("{prefix}-narrow"), styled: false }).markup;
+    let markup =
+        format!("<div class=\"ow-wide\">{}</div><div class=\"ow-narrow\">{narrow}</div>", wide.markup);
+    Svg { markup, ..wide }
+}
+
 /// Where a picture goes.
 #[derive(Clone, Copy, Debug, PartialEq)]
 pub struct Frame<'a> {

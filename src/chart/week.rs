@@ -6,6 +6,7 @@ use super::sheet::{MARGIN, Sample, Sheet, nothing, worst};
 use super::text::{self, named};
 use super::words::{Quantity, Spoken, sentences};
 use super::{Frame, Svg, Table};
+use crate::say;
 
 const DAYS: [&str; 7] = ["Mon", "Tue", "Wed", "Thu", "Fri", "Sat", "Sun"];
 /// From this width on, days have their sums beside them, px.
@@ -179,7 +180,11 @@ impl<'a> Facts<'a> {
         let days = (0..7).map(|d| format!("{} {}", DAYS[d], self.unit.short(self.day(d))));
         let days: Vec<String> = days.collect();
         sentences([
-            format!("{} by hour of the week, {}", capital(&named(self.input.what)), named(self.input.zone)),
+            format!(
+                "{} by hour of the week, {}",
+                say::capital(&named(self.input.what)),
+                named(self.input.zone)
+            ),
             format!("Most: {}", self.named_most()),
         ]) + " "
             + &self.words()
@@ -197,9 +202,4 @@ impl<'a> Facts<'a> {
 
 fn clock(d: usize, hour: usize) -> String {
     format!("{} {hour:02}:00 to {:02}:00", DAYS[d], hour + 1)
-}
-
-fn capital(text: &str) -> String {
-    let mut chars = text.chars();
-    chars.next().map_or(String::new(), |first| first.to_uppercase().chain(chars).collect())
 }

@@ -60,7 +60,7 @@ pub(super) struct ExportArguments {
     #[arg(long)]
     proposed: bool,
     /// Files of waits, for what is proposed and for its cautions
-    #[arg(long, value_name = "FILE", num_args = 1.., conflicts_with_all = ["advice", "from"])]
+    #[arg(long, value_name = "FILE", num_args = 1.., conflicts_with_all = ["advice", "from", "data"])]
     waits: Vec<OsString>,
     #[command(flatten)]
     basis: Basis,
@@ -92,14 +92,16 @@ impl ExportArguments {
     }
 
     fn export(&self) -> Result<Export, Failure> {
-        let looks = !self.waits.is_empty() || self.basis.advice.is_some() || self.basis.from.is_some();
-        if self.basis.settled.is_none() && !self.proposed {
+        // Of a daemon's folder what was settled is wanted first; its waits only for what is proposed.
+        let looks =
+            !self.waits.is_empty() || self.basis.advises() && (self.basis.data.is_none() || self.proposed);
+        if self.basis.settled_file().is_none() && !self.proposed {
             return Err(Failure::new(Exit::Usage, anyhow!("nothing says what was settled"))
-                .with_remedy("name `--settled FILE`, or ask for what is `--proposed`"));
+                .with_remedy("name `--settled FILE` or `--data DIR`, or ask for what is `--proposed`"));
         }
         if self.proposed && !looks {
             return Err(Failure::new(Exit::Usage, anyhow!("nothing says what is proposed"))
-                .with_remedy("name `--waits FILE`, `--advice FILE` or `--from URL`"));
+                .with_remedy("name `--waits FILE`, `--data DIR`, `--advice FILE` or `--from URL`"));
         }
         let common = Common::of(self.policy.clone(), self.stream.clone());
         let policy = common.load_policy()?;

@@ -7,6 +7,7 @@ use std::path::{Path, PathBuf};
 use anyhow::Context;
 
 use super::exit::{Exit, Failure};
+use crate::whole::{self, FileError};
 
 /// Longest name of a stream in a file's name, bytes: with what follows it, within the 255 that file systems have.
 const LONGEST: usize = 200;
@@ -37,67 +38,17 @@ impl Folder {
 
 /// Writes one file whole or not at all, through a link to what it names; one that is there keeps its mode.
 pub(super) fn replace(path: &Path, text: &str) -> Result<(), Failure> {
-    let written = fs::canonicalize(path).or_else(|_| Ok(path.to_owned())).and_then(|target: PathBuf| {
-        let (folder, name) = (parent(&target), target.file_name().unwrap_or_default().to_string_lossy());
-        let prefix = format!(".{name}.");
-        let mut partial = tempfile::Builder::new();
-        partial.prefix(&prefix).suffix(".partial");
-        // As others make files there; a temporary one would be its owner's alone.
-        #[cfg(unix)]
-        partial.permissions(std::os::unix::fs::PermissionsExt::from_mode(0o666));
-        let mut partial = partial.tempfile_in(folder)?;
-        partial.write_all(text.as_bytes())?;
-        if let Ok(there) = fs::metadata(&target) {
-            partial.as_file().set_permissions(there.permissions())?;
-        }
-        partial.as_file().sync_all()?;
-        partial.persist(&target).map(drop).map_err(|error| error.error)
-    });
-    written.map_err(|error| failure(error, "write", path))
+    Ok(whole::replace(path, text.as_bytes())?)
 }
-
-/// The folder in which a file lies.
-fn parent(path: &Path) -> &Path {
-    path.parent().filter(|folder| !folder.as_os_str().is_empty()).unwrap_or(Path::new("."))
-}
-
-/// Changes a file that others may be changing too: one at a time, each from what the one before left. `change` makes the new
-/// text of the one that is there (empty where none is), or says that there is nothing to write.
-pub(super) fn change<T>(
-    path: &Path,
-    change: impl Fn(&[u8]) -> Result<(T, Option<String>), Failure>,
-) -> Result<T, Failure> {
-    let target = fs::canonicalize(path).unwrap_or_else(|_| path.to_owned());
-    // The folder itself is locked, so that no other file is left in it.
-    #[cfg(unix)]
-    let lock = File::open(parent(&target));
-    #[cfg(not(unix))]
-    let lock = File::create(target.with_extension("lock"));
-    let lock = lock.and_then(|lock| lock.lock().map(|()| lock));
-    let lock = lock.map_err(|error| failure(error, "lock the folder of", path))?;
-    for _ in 0..TRIES {
-        let old = read(path)?;
-        let (value, new) = change(&old)?;
-        let Some(new) = new else { return Ok(value) };
-        // An editor takes no lock.
-        if read(path)? == old {
-            replace(path, &new)?;
-            drop(lock);
-            return Ok(value);
-        }
-    }
-    let busy = anyhow::anyhow!("{} is being changed all the time", path.display());
-    Err(Failure::new(Exit::System, busy).with_remedy("close what edits it, and start again"))
-}
-
-/// How often a file is read anew because somebody wrote it meanwhile.
-const TRIES: usize = 5;
 
 /// A file's bytes; none where there is no file.
 pub(super) fn read(path: &Path) -> Result<Vec<u8>, Failure> {
-    match fs::read(path) {
-        Err(error) if error.kind() == ErrorKind::NotFound => Ok(Vec::new()),
-        read => read.map_err(|error| failure(error, "read", path)),
+    Ok(whole::read(path)?)
+}
+
+impl From<FileError> for Failure {
+    fn from(FileError { doing, path, source }: FileError) -> Failure {
+        failure(source, doing, &path)
     }
 }
 
@@ -115,6 +66,7 @@ fn failure(error: io::Error, doing: &str, path: &Path) -> Failure {
         ErrorKind::StorageFull | ErrorKind::QuotaExceeded => {
             (Exit::System, "free some room there, or name a folder on another disk")
         }
+        ErrorKind::ResourceBusy => (Exit::System, "close what edits it, and start again"),
         ErrorKind::NotADirectory | ErrorKind::AlreadyExists | ErrorKind::IsADirectory => {
             (Exit::BadInput, "name another folder; something else of that name is in the way")
         }

@@ -33,8 +33,8 @@ Exit codes: 0 open, 1 shut, 2 wrong usage, 3 bad input, 4 nothing could be judge
 #[derive(Debug, Args)]
 #[command(after_help = EXAMPLES)]
 pub(super) struct GateArguments {
-    /// Files of waits (NDJSON, CSV, SWF; plain, gzip or zstd); `-` is standard input
-    #[arg(value_name = "FILE", conflicts_with_all = ["advice", "from"])]
+    /// Files of waits (NDJSON, CSV, SWF, OTLP; plain, gzip or zstd); `-` is standard input
+    #[arg(value_name = "FILE", conflicts_with_all = ["advice", "from", "data"])]
     waits: Vec<OsString>,
     /// A time in force
     #[arg(long = "time", value_name = "STREAM=TIME", value_parser = stream_time)]

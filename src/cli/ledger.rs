@@ -104,7 +104,7 @@ fn open(folder: &Folder) -> Result<SqliteReader, Failure> {
     SqliteReader::attach(&folder.data).map_err(failure)
 }
 
-fn failure(error: LedgerError) -> Failure {
+pub(super) fn failure(error: LedgerError) -> Failure {
     let exit = match error {
         LedgerError::Missing { .. }
         | LedgerError::Foreign { .. }

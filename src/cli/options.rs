@@ -126,7 +126,7 @@ impl Common {
 /// What commands that read waits take besides.
 #[derive(Clone, Debug, Args)]
 pub(super) struct Reading {
-    /// Files of waits (NDJSON, CSV, SWF, journal; plain, gzip or zstd); `-` is standard input
+    /// Files of waits (NDJSON, CSV, SWF, OTLP, journal; plain, gzip or zstd); `-` is standard input
     #[arg(required_unless_present = "from", value_name = "FILE")]
     pub(super) files: Vec<std::ffi::OsString>,
     #[command(flatten)]
@@ -148,7 +148,7 @@ pub(super) struct Reading {
     pub(super) measure: JobTime,
     #[command(flatten)]
     pub(super) foreign: Foreign,
-    /// Format of every file (ndjson, csv, swf, journal), instead of finding it out
+    /// Format of every file (ndjson, csv, swf, journal, parquet, arrow, otlp_traces, otlp_metrics), instead of finding it out
     #[arg(long, value_name = "FORMAT", value_parser = format)]
     pub(super) input: Option<Format>,
     /// Threads that read; as many as there are cores unless said

@@ -7,7 +7,7 @@ use clap::Args;
 use super::exit::Failure;
 use super::files::{Folder, file_name};
 use crate::advise::Curves;
-use crate::chart::{Figure, Frame, Picture, Section, Svg, page};
+use crate::chart::{Figure, Frame, Picture, Section, Svg, at_both_widths, page};
 
 /// Width of a picture unless said, px: a column of text.
 const WIDTH: u32 = 800;
@@ -71,7 +71,7 @@ impl Album {
         let file = format!("{}-{name}.svg", file_name(stream, number));
         self.folder.put(&file, &alone.markup)?;
         let prefix = format!("s{number}-{name}");
-        let svg = self.shown.then(|| draw(&Frame { width: self.width, prefix: &prefix, styled: false }));
+        let svg = self.shown.then(|| at_both_widths(self.width, &prefix, draw));
         Ok(Figure { file, title: alone.title, svg })
     }
 

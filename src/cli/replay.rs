@@ -98,7 +98,11 @@ fn draw(album: &Album, set: &ReplaySet) -> Result<(), Failure> {
     let sections = set.streams.par_iter().enumerate().map(|(number, stream)| {
         let picture = |frame: &chart::Frame<'_>| picture(stream, set.level, frame);
         let figure = album.figure(&stream.stream, "replay", number, &picture)?;
-        Ok(Section { heading: stream.stream.clone(), note: stream.finding.clone(), figures: vec![figure] })
+        Ok(Section {
+            heading: stream.stream.clone(),
+            note: say::capital(&stream.finding) + ".",
+            figures: vec![figure],
+        })
     });
     let sections = sections.collect::<Result<Vec<Section>, Failure>>()?;
     album.page("What each rule earned on waits that it had not seen", &summary(set), &sections)
@@ -174,7 +178,7 @@ fn text(set: &ReplaySet, page: Page) -> String {
         };
         let name = format!("{}  ", stream.stream);
         page.paragraph(&mut out, Dressed(&name, Page::strong), Dressed(&head, Page::faint), 2);
-        let finding = text::capital(&stream.finding);
+        let finding = say::capital(&stream.finding);
         page.paragraph(&mut out, Dressed("  ", Page::plain), Dressed(&finding, Page::plain), 2);
         table(&mut out, stream, set.level);
         for note in &stream.notes {

@@ -19,7 +19,8 @@ use crate::intake::{Format, Options};
 use crate::ledger::LedgerError;
 use crate::say;
 use crate::serve::{
-    Config, Daemon, Followed, PolicyFile, Runs, ServeError, is_open_to_others, read_tls, read_token,
+    Config, Daemon, Followed, PolicyFile, Runs, ServeError, Signing, Webhook, is_open_to_others, read_tls,
+    read_token,
 };
 
 const EXAMPLES: &str = "\
@@ -57,6 +58,9 @@ pub(super) struct Serve {
     /// File that holds the token which clients must show
     #[arg(long, value_name = "FILE")]
     token_file: Option<PathBuf>,
+    /// Let nobody settle over HTTP: pages without forms. Without a token that is so anyway, but for the demo
+    #[arg(long)]
+    read_only: bool,
     /// Certificate chain (PEM), for HTTPS
     #[arg(long, value_name = "FILE", requires = "key")]
     certificate: Option<PathBuf>,
@@ -99,10 +103,10 @@ pub(super) struct Serve {
     /// Folder for the week's recommendations (`weekly:` in the policy); beside the ledger unless said
     #[arg(long, value_name = "DIR")]
     weekly_folder: Option<PathBuf>,
-    /// What was settled; its times are in force, whatever the policy says
+    /// File of what was settled, kept in step with the ledger; settled.yaml beside it unless said
     #[arg(long, value_name = "FILE")]
     settled: Option<PathBuf>,
-    /// Address (plain HTTP) to which the week's recommendations are posted too
+    /// Address to which the week's recommendations are posted too
     #[arg(long, value_name = "URL", requires = "webhook_secret")]
     webhook: Option<Address>,
     /// File that holds the secret by which they are signed (HMAC-SHA256)
@@ -119,6 +123,9 @@ pub(super) struct Serve {
     /// One stream for all waits of the followed files, whatever their records call theirs
     #[arg(long = "as", value_name = "NAME", value_parser = options::stream_name, requires = "follow")]
     one_stream: Option<String>,
+    /// Certificates (PEM) to trust at an https webhook, instead of the system's
+    #[arg(long, value_name = "FILE", requires = "webhook")]
+    webhook_trust: Option<PathBuf>,
     /// Seed of everything drawn
     #[arg(long, value_name = "N", default_value_t = 1)]
     seed: u64,
@@ -234,10 +241,18 @@ impl Serve {
         config.limits.unpacked_bytes = 8 * config.limits.body_bytes as u64;
         config.limits.bodies_bytes = config.limits.bodies_bytes.max(4 * config.limits.body_bytes);
         config.token = self.token_file.as_deref().map(read_token).transpose().or_exit(Exit::BadInput)?;
+        config.signing = match (self.read_only, self.demo) {
+            (true, _) => Signing::Nobody,
+            // Its folder is removed at the end.
+            (false, true) => Signing::Anyone,
+            (false, false) => Signing::WithToken,
+        };
         config.weekly =
             Runs { folder: self.weekly_folder.clone(), settled: self.settled.clone(), webhook: None };
         if let (Some(address), Some(secret)) = (&self.webhook, &self.webhook_secret) {
-            config.weekly.webhook = Some((address.clone(), read_token(secret).or_exit(Exit::BadInput)?));
+            let secret = read_token(secret).or_exit(Exit::BadInput)?;
+            let webhook = Webhook::new(address.clone(), secret, self.webhook_trust.as_deref());
+            config.weekly.webhook = Some(webhook.or_exit(Exit::BadInput)?);
         }
         let mut options =
             Options { format: self.input, one_stream: self.one_stream.clone(), ..Options::default() };

@@ -2,23 +2,23 @@
 
 use std::ffi::OsString;
 use std::fmt::Write;
-use std::path::Path;
 
 use anyhow::anyhow;
 use clap::{ArgGroup, Args};
 use jiff::Timestamp;
-use serde::Serialize;
 
 use super::basis::{self, Basis};
 use super::exit::{Exit, Failure, print};
 use super::files;
 use super::options::Common;
-use crate::advice::{Advice, Caution};
+use super::reading;
+use crate::advice::Advice;
 use crate::advise::Terms;
 use crate::glob::Glob;
 use crate::policy::GiveUp;
 use crate::say;
-use crate::settle::{Decide, Grounds, Refused, Settled, Settlement, State, decide, insert};
+use crate::settle::{self, Decide, Document, Grounds, Refused, Settled, Settlement, Told, decide, insert};
+use crate::whole;
 
 const EXAMPLES: &str = "\
 Examples:
@@ -28,6 +28,10 @@ Examples:
   outwait settle catalogue.lookup --postpone 14d --by Ada --why 'freeze' --settled settled.yaml
   outwait settle catalogue.lookup --undo --by Ada --why 'too many retries' --settled settled.yaml
   outwait settle 'catalogue.*' --history --settled settled.yaml
+  outwait settle catalogue.lookup --accept --by Ada --why agreed --data /var/lib/outwait --policy policy.yaml
+
+With --data the decision goes into the settled.yaml of that folder; a daemon that runs there takes it in at once, one that
+does not when it starts.
 
 A decision that is against a guard of the policy is refused, and then none of the run is taken.
 Exit codes: 0 well, 2 wrong usage, 3 bad input or a decision refused, 5 the system failed.";
@@ -70,7 +74,7 @@ pub(super) struct Settle {
     #[arg(long, value_name = "TIME")]
     at: Option<Timestamp>,
     /// Files of waits, which are weighed first
-    #[arg(long, value_name = "FILE", num_args = 1.., conflicts_with_all = ["advice", "from"])]
+    #[arg(long, value_name = "FILE", num_args = 1.., conflicts_with_all = ["advice", "from", "data"])]
     waits: Vec<OsString>,
     #[command(flatten)]
     basis: Basis,
@@ -78,30 +82,17 @@ pub(super) struct Settle {
     common: Common,
 }
 
-#[derive(Debug, Serialize)]
-struct Document<'a> {
-    schema: &'static str,
-    settled: Vec<Told<'a>>,
-}
-
-/// A stream with what was decided.
-#[derive(Debug, Serialize)]
-struct Told<'a> {
-    stream: &'a str,
-    decisions: &'a [Settlement],
-    /// What to mind about what was put in force.
-    cautions: &'a [Caution],
-}
-
 impl Settle {
     pub(super) fn run(&self) -> Result<Exit, Failure> {
-        let file = self.basis.settled.as_deref().ok_or_else(|| {
-            Failure::new(Exit::Usage, anyhow!("--settled FILE is needed")).with_remedy(
-                "name the file that keeps decisions, for instance settled.yaml; it is made if need be",
+        let file = self.basis.settled_file().ok_or_else(|| {
+            Failure::new(Exit::Usage, anyhow!("--settled FILE or --data DIR is needed")).with_remedy(
+                "name the file that keeps decisions, for instance settled.yaml (it is made if need be), or the folder of \
+                 a daemon",
             )
         })?;
+        let file = file.as_path();
         if self.history {
-            return self.show(file);
+            return self.show();
         }
         if self.by.trim().is_empty() || self.why.trim().is_empty() {
             return Err(Failure::new(Exit::Usage, anyhow!("a decision needs --by WHO and --why WHY")));
@@ -112,20 +103,30 @@ impl Settle {
                 .map_err(|error| Failure::new(Exit::System, error))?,
         };
         let what = self.decision(at)?;
-        let before = basis::settled(&files::read(file)?, file)?;
+        let mut before = basis::settled(&files::read(file)?, file)?;
+        // What only the ledger knows is the past of this as well.
+        self.basis.add_kept(&mut before)?;
         let policy = self.common.load_policy()?;
         let past = before.past(at.as_second() as f64);
-        let looks =
-            self.accept || !self.waits.is_empty() || self.basis.advice.is_some() || self.basis.from.is_some();
+        let looks = self.accept || !self.waits.is_empty() || self.basis.advises();
         let advised = if looks {
             self.basis.weigh(&self.waits, policy.as_ref(), Some(&past), &self.common, |_| ())?.set.streams
         } else {
             Vec::new()
         };
         let streams = self.matched(&advised, &before)?;
-        let taken = files::change(file, |bytes| {
+        let taken = whole::change(file, |bytes| {
             // Perhaps others have settled meanwhile: what they decided is the past of this.
-            let mut settled = basis::settled(bytes, file)?;
+            let mut there = basis::settled(bytes, file)?;
+            let mut settled = there.clone();
+            let lacking: Vec<_> =
+                settled.missing(&before).into_iter().map(|(s, one)| (s.to_owned(), one.clone())).collect();
+            lacking.into_iter().for_each(|(stream, one)| settled.add(&stream, one));
+            for (stream, other) in before.missing(&settled) {
+                if streams.iter().any(|own| own == stream) {
+                    reading::note(&format!("{stream} was decided on meanwhile: {}", other.words()));
+                }
+            }
             let mut text = String::from_utf8_lossy(bytes).into_owned();
             let mut taken = Vec::new();
             for stream in &streams {
@@ -135,13 +136,15 @@ impl Settle {
                 let entry = terms.entry(stream);
                 let settlement = decide(what, stream, advice, &entry, &settled, at, (&self.by, &self.why))
                     .map_err(|refused| told(&refused))?;
-                text = insert(&text, &settled, stream, &settlement);
+                text = insert(&text, &there, stream, &settlement);
+                there.add(stream, settlement.clone());
                 settled.add(stream, settlement.clone());
                 taken.push((stream.clone(), settlement));
             }
-            Ok((taken, Some(text)))
+            Ok::<_, Failure>((taken, Some(text)))
         })?;
-        let after = basis::settled(&files::read(file)?, file)?;
+        let mut after = basis::settled(&files::read(file)?, file)?;
+        self.basis.add_kept(&mut after)?;
         self.say(&taken, &advised, &after)?;
         Ok(Exit::Well)
     }
@@ -184,14 +187,14 @@ impl Settle {
         Ok(streams)
     }
 
-    fn show(&self, file: &Path) -> Result<Exit, Failure> {
-        let settled = basis::read_settled(file)?;
+    fn show(&self) -> Result<Exit, Failure> {
+        let settled = self.basis.settled()?;
         let told: Vec<Told<'_>> = settled
             .streams()
             .filter(|(stream, _)| self.streams.iter().any(|glob| glob.matches(stream)))
             .map(|(stream, decisions)| Told { stream, decisions, cautions: &[] })
             .collect();
-        let document = Document { schema: "outwait/settle/1", settled: told };
+        let document = Document::of(told);
         let text = || {
             let mut text = String::new();
             for Told { stream, decisions, .. } in &document.settled {
@@ -226,7 +229,7 @@ impl Settle {
             decisions: std::slice::from_ref(decision),
             cautions: cautions(stream, decision),
         });
-        let document = Document { schema: "outwait/settle/1", settled: settled.collect() };
+        let document = Document::of(settled.collect());
         let text = || {
             let mut text = String::new();
             for Told { stream, decisions, cautions } in &document.settled {
@@ -247,16 +250,8 @@ impl Settle {
 }
 
 fn line(text: &mut String, decision: &Settlement) {
-    let Settlement { state, at, by, why, grounds } = decision;
-    let what = match state {
-        State::Accepted { give_up_after } | State::Pinned { give_up_after } => {
-            format!("{} {}", state.name(), say::exact_duration(give_up_after.seconds()))
-        }
-        State::Postponed { until } => format!("postponed until {until}"),
-        state => state.name().to_owned(),
-    };
-    let _ = writeln!(text, "  {at}  {what}, by {by}: {why}");
-    if let Some(Grounds { waits, done, in_force, advised, proposed, loses, .. }) = grounds {
+    let _ = writeln!(text, "  {}", decision.words());
+    if let Some(Grounds { waits, done, in_force, advised, proposed, loses, .. }) = &decision.grounds {
         let mut parts =
             vec![format!("{} waits, {} done", say::count(*waits as f64), say::count(*done as f64))];
         for (name, time) in [("in force", in_force), ("best", advised), ("proposed", proposed)] {
@@ -282,15 +277,7 @@ pub(super) fn give_up(text: &str) -> Result<GiveUp, String> {
 
 /// A time, a date, or a duration from now.
 fn ahead(text: &str, now: Timestamp) -> Result<Timestamp, Failure> {
-    let span = || {
-        let seconds = say::parse_duration(text).ok().filter(|s| text.parse::<f64>().is_err() && *s > 0.0)?;
-        now.checked_add(jiff::SignedDuration::try_from_secs_f64(seconds).ok()?).ok()
-    };
-    let date = || {
-        let date: jiff::civil::Date = text.parse().ok()?;
-        jiff::tz::Offset::UTC.to_timestamp(date.to_datetime(jiff::civil::Time::midnight())).ok()
-    };
-    text.parse().ok().or_else(span).or_else(date).ok_or_else(|| {
+    settle::ahead(text, now).ok_or_else(|| {
         Failure::new(Exit::Usage, anyhow!("{text:?} is no time to look again"))
             .with_remedy("write 2026-12-14, 2026-12-14T10:00:00Z or 14d")
     })

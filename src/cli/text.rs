@@ -210,12 +210,6 @@ pub(super) fn period(rate: f64) -> (f64, &'static str) {
     }
 }
 
-/// A sentence's first letter.
-pub(super) fn capital(text: &str) -> String {
-    let mut chars = text.chars();
-    chars.next().map_or(String::new(), |first| first.to_uppercase().chain(chars).collect())
-}
-
 /// The next change of the time in force.
 fn change(out: &mut String, advice: &Advice, page: Page) {
     let d = &advice.advice;

@@ -4,22 +4,22 @@ use std::collections::HashMap;
 use std::ffi::OsString;
 use std::path::{Path, PathBuf};
 
-use anyhow::Context;
+use anyhow::{Context, anyhow};
 use clap::{Args, ValueEnum};
 
 use super::basis::{self, Basis};
 use super::exit::{Exit, Failure, OrExit};
-use super::files::Folder;
+use super::files::{self, Folder};
 use super::options::Common;
-use crate::advice::{Action, Change};
-use crate::advise::{Study, Terms, name_hash};
-use crate::chart::{Frame, Picture};
-use crate::report::{self, Weekly, weekly};
+use crate::advice::Action;
+use crate::advise::{Study, Terms};
+use crate::report::{self, LastWeek, Weekly, weekly};
 
 const EXAMPLES: &str = "\
 Examples:
   outwait weekly waits.ndjson --policy policy.yaml --settled settled.yaml --format html --output weekly.html
   outwait weekly waits.ndjson --policy policy.yaml --format markdown
+  outwait weekly --data /var/lib/outwait --policy policy.yaml --last-week last.json --format html
   outwait weekly --from http://127.0.0.1:7071 --policy policy.yaml --folder reports
 
 What is ready to be signed stands on top, worth the most first; sign it with `outwait settle`.
@@ -44,8 +44,8 @@ enum Form {
 #[derive(Debug, Args)]
 #[command(after_help = EXAMPLES)]
 pub(super) struct WeeklyArguments {
-    /// Files of waits (NDJSON, CSV, SWF; plain, gzip or zstd); `-` is standard input
-    #[arg(value_name = "FILE", conflicts_with_all = ["advice", "from"])]
+    /// Files of waits (NDJSON, CSV, SWF, OTLP; plain, gzip or zstd); `-` is standard input
+    #[arg(value_name = "FILE", conflicts_with_all = ["advice", "from", "data"])]
     waits: Vec<OsString>,
     /// Where to write it; standard output unless said
     #[arg(long, value_name = "FILE")]
@@ -53,11 +53,18 @@ pub(super) struct WeeklyArguments {
     /// Write all forms into this folder (made if need be)
     #[arg(long, value_name = "DIR", conflicts_with_all = ["output", "format"])]
     folder: Option<PathBuf>,
+    /// The last weekly set (JSON), to say what changed since; the one in --folder unless said
+    #[arg(long, value_name = "FILE")]
+    last_week: Option<PathBuf>,
     #[command(flatten)]
     basis: Basis,
     #[command(flatten)]
     common: Common<Form>,
 }
+
+/// The present set and the one before it, in a folder.
+const PRESENT: &str = "weekly.json";
+const BEFORE: &str = "weekly-before.json";
 
 impl WeeklyArguments {
     pub(super) fn run(&self) -> Result<Exit, Failure> {
@@ -65,17 +72,28 @@ impl WeeklyArguments {
         let policy = common.load_policy()?;
         let settled = self.basis.settled()?;
         let past = settled.past(basis::clock());
+        let picture = |study: &Study| report::picture(study.advice(), || study.curves());
         let weighed = self.basis.weigh(&self.waits, policy.as_ref(), Some(&past), &common, picture)?;
         let terms =
             Terms { policy: policy.as_ref(), newest: None, seed: self.common.seed, past: Some(&past) };
-        let mut week = weekly(&weighed.set, &settled, |stream| terms.entry(stream), None);
+        let last = self.last(weighed.set.made_at.as_deref())?;
+        let mut week = weekly(&weighed.set, &settled, |stream| terms.entry(stream), None, last.as_ref());
         if let Some(glob) = &self.common.stream {
             week.rest.retain(|row| glob.matches(&row.stream));
         }
         let pictures: HashMap<String, String> =
             weighed.told.into_iter().filter_map(|(stream, svg)| Some((stream, svg?))).collect();
         match &self.folder {
-            Some(folder) => all(folder, &week, &pictures)?,
+            Some(folder) => {
+                // The same data again are the same week.
+                if let Some(last) = &last
+                    && kept(&folder.join(PRESENT))?.is_some_and(|present| present == *last)
+                {
+                    let text = files::read(&folder.join(PRESENT))?;
+                    Folder::open(folder)?.put(BEFORE, &String::from_utf8_lossy(&text))?;
+                }
+                all(folder, &week, &pictures)?;
+            }
             None => {
                 let text = match self.common.format {
                     Form::Markdown => report::markdown(&week),
@@ -89,20 +107,42 @@ impl WeeklyArguments {
         let dark = weighed.set.streams.iter().all(|advice| advice.advice.action == Action::GatherEvidence);
         Ok(if dark { Exit::NoEvidence } else { Exit::Well })
     }
+
+    /// The set that this one is held against: named, or in the folder and of older data.
+    fn last(&self, made_at: Option<&str>) -> Result<Option<LastWeek>, Failure> {
+        if let Some(file) = &self.last_week {
+            let missing = || {
+                let error = anyhow!("there is no {}", file.display());
+                Failure::new(Exit::BadInput, error).with_remedy(REMEDY)
+            };
+            return kept(file)?.ok_or_else(missing).map(Some);
+        }
+        let Some(folder) = &self.folder else { return Ok(None) };
+        let older = |last: &LastWeek| last.made_at.as_deref() < made_at;
+        match kept(&folder.join(PRESENT))?.filter(older) {
+            None => Ok(kept(&folder.join(BEFORE))?.filter(older)),
+            last => Ok(last),
+        }
+    }
 }
 
-/// What is drawn of a stream: what each give-up time earns, where a change is proposed.
-fn picture(study: &Study) -> Option<String> {
-    let decision = &study.advice().advice;
-    let changes = match decision.proposal {
-        Some(proposal) => proposal.change != Change::Keep,
-        None => decision.give_up_after_s.is_some(),
-    };
-    changes.then(|| {
-        let curves = study.curves();
-        let prefix = format!("w{:016x}", name_hash(&curves.stream));
-        Picture::Rate.draw(&curves, &Frame { width: 720, prefix: &prefix, styled: false }).markup
-    })
+const REMEDY: &str = "name what `outwait weekly --format json` wrote, or remove it from the folder";
+
+/// A weekly set from its file, if there is one.
+fn kept(file: &Path) -> Result<Option<LastWeek>, Failure> {
+    let bytes = files::read(file)?;
+    if bytes.is_empty() {
+        return Ok(None);
+    }
+    let read: LastWeek = serde_json::from_slice(&bytes)
+        .with_context(|| format!("{} holds no weekly set", file.display()))
+        .map_err(|error| Failure::new(Exit::BadInput, error).with_remedy(REMEDY))?;
+    if read.schema != report::SCHEMA {
+        let error =
+            anyhow!("{} is of the schema {:?}, not {:?}", file.display(), read.schema, report::SCHEMA);
+        return Err(Failure::new(Exit::BadInput, error).with_remedy(REMEDY));
+    }
+    Ok(Some(read))
 }
 
 fn json(week: &Weekly) -> Result<String, Failure> {
@@ -117,5 +157,5 @@ fn all(folder: &Path, week: &Weekly, pictures: &HashMap<String, String>) -> Resu
     folder.put("weekly.md", &report::markdown(week))?;
     folder.put("weekly.html", &report::html(week, pictures).or_exit(Exit::System)?)?;
     folder.put("weekly.csv", &report::csv(week).or_exit(Exit::System)?)?;
-    folder.put("weekly.json", &json(week)?)
+    folder.put(PRESENT, &json(week)?)
 }

@@ -8,9 +8,11 @@ use super::mapping::Mapping;
 use super::pairs::Halves;
 use super::record::{Fields, Made, Record, make};
 use super::report::EXAMPLES;
+use super::rules::Rules;
 use super::streams::Streams;
 use super::{Options, Sink};
 use crate::glob::Glob;
+use crate::running::Running;
 
 /// What a block leaves behind once its waits are in the sink.
 #[derive(Debug)]
@@ -18,6 +20,9 @@ pub(super) struct Outcome {
     pub(super) lines: u64,
     pub(super) waits: u64,
     pub(super) halves_taken: u64,
+    pub(super) running: Vec<(u64, Running)>,
+    pub(super) running_taken: u64,
+    pub(super) not_waits: u64,
     pub(super) other_streams: u64,
     pub(super) outside_window: u64,
     pub(super) unmeasured: u64,
@@ -63,6 +68,9 @@ impl<'w, S: Sink> Collector<'w, S> {
             lines: 0,
             waits: 0,
             halves_taken: 0,
+            running: Vec::new(),
+            running_taken: 0,
+            not_waits: 0,
             other_streams: 0,
             outside_window: 0,
             unmeasured: 0,
@@ -96,6 +104,11 @@ impl<'w, S: Sink> Collector<'w, S> {
 
     pub(super) fn count_lines(&mut self, lines: u64) {
         self.outcome.lines += lines;
+    }
+
+    /// Lines counted so far, those before the block not among them.
+    pub(super) fn lines(&self) -> u64 {
+        self.outcome.lines
     }
 
     pub(super) fn refuse(&mut self, line: u64, flaw: Flaw) {
@@ -132,6 +145,34 @@ impl<'w, S: Sink> Collector<'w, S> {
     /// What stands for what, where the input's words are not ours.
     pub(super) fn mapping(&self) -> Option<&'w Mapping> {
         self.options.mapping.as_deref()
+    }
+
+    /// Spans and data points that are no waits.
+    pub(super) fn not_waits(&mut self, number: u64) {
+        self.outcome.not_waits += number;
+    }
+
+    /// How telemetry becomes waits.
+    pub(super) fn rules(&self) -> &'w Rules {
+        &self.options.rules
+    }
+
+    /// A reading of a histogram that only grows.
+    pub(super) fn running(&mut self, line: u64, running: Running) -> Result<(), Flaw> {
+        let (_, stream) = self.streams.enter(&running.stream, self.options.streams.as_ref())?;
+        if let Some(at) = running.at {
+            stream.note_time(at);
+        }
+        // Without a time it cannot be told whether it lies in the window; that it does is looked at when it is counted.
+        self.options.is_in_window(running.at)?;
+        if !stream.wanted {
+            self.outcome.other_streams += 1;
+        } else if self.sink.take_running(&running) {
+            self.outcome.running_taken += 1;
+        } else {
+            self.outcome.running.push((line, running));
+        }
+        Ok(())
     }
 
     #[inline]

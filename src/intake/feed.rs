@@ -11,8 +11,9 @@ use super::columnar;
 use super::csv::Columns;
 use super::error::{HeaderError, IntakeError};
 use super::header::{self, Used};
+use super::otlp::Signal;
 use super::source::{Packing, Source, Unpacked};
-use super::{Format, Options, Pattern, csv, journal, sql, swf};
+use super::{Format, Options, Pattern, csv, journal, otlp, sql, swf};
 use crate::glob::Glob;
 
 /// One block of one input.
@@ -40,6 +41,11 @@ pub(super) enum Layout {
     Swf {
         unix_start: Option<f64>,
     },
+    /// `lines`: each line is a document of its own. Otherwise the input is one.
+    Otlp {
+        signal: Signal,
+        lines: bool,
+    },
     Journal(Option<Arc<Pattern>>),
     Pattern(Arc<Pattern>),
     #[cfg(feature = "columnar")]
@@ -65,7 +71,14 @@ impl Layout {
             #[cfg(feature = "columnar")]
             Layout::Columns(format, _) => *format,
             Layout::Rows(_) => Format::Sql,
+            Layout::Otlp { signal: Signal::Traces, .. } => Format::OtlpTraces,
+            Layout::Otlp { signal: Signal::Metrics, .. } => Format::OtlpMetrics,
         }
+    }
+
+    /// Whether the input must be read as a whole.
+    fn is_whole(&self) -> bool {
+        matches!(self, Layout::Otlp { lines: false, .. })
     }
 
     fn records(&self) -> Records {
@@ -75,6 +88,9 @@ impl Layout {
         }
     }
 }
+
+/// Most bytes of an input that must be read as a whole.
+const LONGEST_WHOLE: u64 = 1 << 30;
 
 pub(super) struct Feed<'o> {
     options: &'o Options,
@@ -195,10 +211,26 @@ impl<'o> Feed<'o> {
                     }
                 }
             }
-            let found = open
-                .blocks
-                .next(&mut buffer, open.layout.records())
-                .map_err(|error| Unpacked::error(&open.file, open.packing, error))?;
+            let damaged = |error| Unpacked::error(&open.file, open.packing, error);
+            let found = if open.layout.is_whole() {
+                let limit = self.allowance.saturating_add(open.paid).min(LONGEST_WHOLE);
+                buffer.clear();
+                loop {
+                    let part = open.blocks.peek().map_err(damaged)?;
+                    let length = part.len();
+                    if length == 0 {
+                        break;
+                    }
+                    buffer.extend_from_slice(part);
+                    open.blocks.skip(length);
+                    if buffer.len() as u64 > limit {
+                        return Err(IntakeError::TooMuch { file: open.file.clone(), limit });
+                    }
+                }
+                (!buffer.is_empty()).then_some(Found::Records)
+            } else {
+                open.blocks.next(&mut buffer, open.layout.records()).map_err(damaged)?
+            };
             let unpaid = open.blocks.read - std::mem::replace(&mut open.paid, open.blocks.read);
             if open.packing.is_none() {
                 // Not counted one by one: in between, a file is read into a block without clearing the block first.
@@ -263,13 +295,15 @@ fn open(
         blocks.skip(3);
     }
     let (mut lines_before, mut blank) = (0, 0);
+    let is_binary = matches!(options.format, Some(Format::OtlpTraces | Format::OtlpMetrics));
     let head = loop {
         let head = blocks.peek().map_err(damaged)?;
         let (length, lines) = (head.len(), count_lines(head));
         if length == 0 {
             return Ok(None);
         }
-        if !head.trim_ascii().is_empty() {
+        // A message may begin, and even end, with bytes that would be blanks in a text.
+        if is_binary || !head.trim_ascii().is_empty() {
             break blocks.peek().map_err(damaged)?;
         }
         blocks.skip(length);
@@ -294,6 +328,10 @@ fn open(
         // Opened above.
         Format::Parquet | Format::Arrow | Format::Sql => return Ok(None),
         Format::Swf => Layout::Swf { unix_start: swf::unix_start(head) },
+        Format::OtlpTraces | Format::OtlpMetrics => {
+            let signal = if format == Format::OtlpTraces { Signal::Traces } else { Signal::Metrics };
+            Layout::Otlp { signal, lines: otlp::is_lines(head) }
+        }
         Format::Csv => {
             // Blank lines before the header count as lines all the same.
             let blank = head.iter().take_while(|byte| byte.is_ascii_whitespace()).count();

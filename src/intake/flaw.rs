@@ -3,6 +3,7 @@
 use std::borrow::Cow;
 
 use super::record::Field;
+use super::telemetry::TelemetryFlaw;
 use crate::say;
 use crate::wait::{StreamError, WaitError};
 
@@ -52,6 +53,8 @@ pub(super) enum Flaw {
     Wait(#[from] WaitError),
     #[error("{0}")]
     Stream(#[from] StreamError),
+    #[error("{0}")]
+    Telemetry(#[from] TelemetryFlaw),
 }
 
 impl Flaw {
@@ -76,6 +79,7 @@ impl Flaw {
             Flaw::Undated => Field::At.name(),
             Flaw::Wait(error) => error.field(),
             Flaw::Stream(_) => Field::Stream.name(),
+            Flaw::Telemetry(flaw) => flaw.field(),
         }
     }
 
@@ -112,6 +116,7 @@ impl Flaw {
             Flaw::Stream(StreamError::Empty) => "empty",
             Flaw::Stream(StreamError::Long { .. }) => "too long",
             Flaw::Stream(StreamError::Letter { .. }) => "a character that a name cannot have",
+            Flaw::Telemetry(flaw) => flaw.kind(),
         }
     }
 
@@ -169,6 +174,7 @@ impl Flaw {
             }
             Flaw::Wait(error) => error.remedy(),
             Flaw::Stream(error) => error.remedy(),
+            Flaw::Telemetry(flaw) => flaw.remedy(),
         })
     }
 }

@@ -5,6 +5,7 @@ use std::path::Path;
 use serde::Serialize;
 
 use super::journal;
+use super::otlp::{self, Signal};
 use super::record::Field;
 
 /// A format of waits.
@@ -28,14 +29,26 @@ pub enum Format {
     Arrow,
     /// Rows that a database answers to a query.
     Sql,
+    /// Spans by OTLP: a request as protocol buffers or JSON, or lines of which each is one in JSON.
+    OtlpTraces,
+    /// Metrics by OTLP, likewise.
+    OtlpMetrics,
 }
 
 impl Format {
     /// Every format that can be asked for by its name alone.
-    pub const ALL: [Format; 6] =
-        [Format::Ndjson, Format::Csv, Format::Swf, Format::Journal, Format::Parquet, Format::Arrow];
+    pub const ALL: [Format; 8] = [
+        Format::Ndjson,
+        Format::Csv,
+        Format::Swf,
+        Format::Journal,
+        Format::Parquet,
+        Format::Arrow,
+        Format::OtlpTraces,
+        Format::OtlpMetrics,
+    ];
 
-    /// The name: `ndjson`, `csv`, `swf`, `journal`, `parquet`, `arrow`, `pattern`, `sql`.
+    /// The name: `ndjson`, `csv`, `swf`, `journal`, `parquet`, `arrow`, `pattern`, `sql`, `otlp_traces`, `otlp_metrics`.
     pub fn name(self) -> &'static str {
         match self {
             Format::Ndjson => "ndjson",
@@ -46,6 +59,8 @@ impl Format {
             Format::Parquet => "parquet",
             Format::Arrow => "arrow",
             Format::Sql => "sql",
+            Format::OtlpTraces => "otlp_traces",
+            Format::OtlpMetrics => "otlp_metrics",
         }
     }
 
@@ -72,6 +87,11 @@ impl Format {
         let mut lines =
             head.split(|&byte| byte == b'\n').map(<[u8]>::trim_ascii).filter(|line| !line.is_empty());
         let first = lines.next().unwrap_or_default();
+        match otlp::detect(head) {
+            Some(Signal::Traces) => return Ok(Format::OtlpTraces),
+            Some(Signal::Metrics) => return Ok(Format::OtlpMetrics),
+            None => {}
+        }
         match first.first() {
             Some(b'{') if journal::is_entry(first) => return Ok(Format::Journal),
             Some(b'{') => return Ok(Format::Ndjson),

@@ -46,6 +46,7 @@ mod journal;
 mod lines;
 mod mapping;
 mod ndjson;
+mod otlp;
 mod outline;
 mod pace;
 mod pairs;
@@ -53,19 +54,23 @@ mod pattern;
 mod read;
 mod record;
 mod report;
+mod rules;
 mod source;
 mod sql;
 mod streams;
 mod swf;
+mod telemetry;
 
 use std::num::NonZeroUsize;
 use std::sync::Arc;
 
 use crate::glob::Glob;
+use crate::running::Running;
 
 pub use error::{ColumnsError, HeaderError, IntakeError};
 pub use format::Format;
 pub use mapping::{Mapping, MappingError};
+pub use otlp::{Answer, Encoding};
 pub(crate) use outline::Outline;
 pub use pace::ClosedLoop;
 pub use pattern::{Pattern, PatternError};
@@ -75,8 +80,13 @@ pub use report::{
     BadCount, BadLine, BadLines, Because, COMMENTS, Comment, EXAMPLES, FileReport, LeftOut, PairsReport,
     Report, Suspicion,
 };
+pub use rules::{Condition, Facts, MAX_CONDITIONS, MAX_RULE_BYTES, RuleError, Rules, Template};
+pub(crate) use source::Packing;
 pub use source::Source;
 pub use sql::{Access, Database, QueryError};
+
+/// The reason under which a body counts that cannot be decoded as a whole ([`BadCount::reason`]).
+pub const UNDECODABLE: &str = "not to be decoded";
 
 /// What takes the waits.
 ///
@@ -91,6 +101,13 @@ pub trait Sink: Send + Sized {
     /// comes as a wait. Unless said, nothing is taken.
     fn take_half(&mut self, half: &Half<'_>) -> bool {
         let _ = half;
+        false
+    }
+
+    /// Takes a reading of a histogram that only grows, and says so; of what is left the reader keeps the state, and the
+    /// differences come as waits. Unless said, nothing is taken.
+    fn take_running(&mut self, running: &Running) -> bool {
+        let _ = running;
         false
     }
 
@@ -116,6 +133,8 @@ pub struct Options {
     pub one_stream: Option<String>,
     /// Which time of a job log is the wait.
     pub measure: Measure,
+    /// How telemetry becomes waits.
+    pub rules: Rules,
     /// How many bad lines are put up with.
     pub bad_lines: Allowed,
     /// Only waits that ended or were last seen then or later, Unix seconds.
@@ -142,6 +161,7 @@ impl Default for Options {
             streams: None,
             one_stream: None,
             measure: Measure::default(),
+            rules: Rules::default(),
             bad_lines: Allowed::default(),
             since: None,
             until: None,

@@ -13,10 +13,11 @@ use super::feed::{Feed, Layout, Part, Task};
 use super::flaw::Flaw;
 use super::pairs::Pairs;
 use super::record::Record;
-use super::report::{BadCount, BadLine, COMMENTS, Comment, EXAMPLES, FileReport, Report};
+use super::report::{BadCount, BadLine, COMMENTS, Comment, EXAMPLES, FileReport, LeftOut, Report};
 use super::source::Source;
 use super::streams::Streams;
-use super::{Allowed, Options, Sink, csv, journal, ndjson, pattern, sql, swf};
+use super::{Allowed, Format, Options, Sink, csv, journal, ndjson, otlp, pattern, sql, swf};
+use crate::running::{Histogram, Mark, Running, SeriesKey};
 
 /// How far a reading is.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
@@ -82,6 +83,10 @@ fn parse<S: Sink>(task: &Task, options: &Options, sink: &mut S, streams: &mut St
                     sql::harvest(rows, used, &mut collector);
                 }
             }
+            Layout::Otlp { signal, lines: true } => {
+                otlp::harvest_lines(&task.bytes, *signal, &mut collector);
+            }
+            Layout::Otlp { signal, lines: false } => otlp::harvest(&task.bytes, *signal, &mut collector),
         },
         Found::Long => {
             collector.refuse(0, Flaw::Long { limit: options.line_bytes });
@@ -233,12 +238,21 @@ fn settle_in_order<S: Sink>(
     Ok(())
 }
 
+/// A histogram that only grows, as far as it was read.
+enum Series {
+    /// Read once, and nothing of it counted.
+    Once(Box<Running>),
+    /// Counted up to here.
+    Upto(Mark),
+}
+
 /// Puts the outcomes of blocks together, in the order of the input.
 struct Settler<'o, S> {
     options: &'o Options,
     sink: S,
     streams: Streams,
     pairs: Pairs,
+    series: BTreeMap<SeriesKey, Series>,
     counts: BTreeMap<(&'static str, &'static str), u64>,
     report: Report,
 }
@@ -254,6 +268,7 @@ impl<'o, S: Sink> Settler<'o, S> {
             sink,
             streams: Streams::default(),
             pairs: Pairs::new(options.most_open),
+            series: BTreeMap::new(),
             counts: BTreeMap::new(),
             report: Report { files, ..Report::default() },
         }
@@ -291,7 +306,30 @@ impl<'o, S: Sink> Settler<'o, S> {
                 flaws.add(line, flaw);
             }
         });
+        for (line, running) in outcome.running {
+            // A series whose start is known stands in the file with all that it ever counted. Without it the first
+            // reading is what the later ones are compared with.
+            let whole = file.format == Some(Format::OtlpMetrics) && running.started.is_some();
+            let mark = Series::Upto(running.mark());
+            let growth = match self.series.get(&running.key) {
+                None if !whole => {
+                    self.series.insert(running.key, Series::Once(Box::new(running)));
+                    continue;
+                }
+                None => Running { counts_at_first: true, ..running.clone() }.growth(None),
+                Some(Series::Once(first)) => running.growth(Some(&first.mark())),
+                Some(Series::Upto(last)) => running.growth(Some(last)),
+            };
+            let Some(counts) = growth.counts else { continue };
+            self.series.insert(running.key, mark);
+            let place = streams.place(&running.stream);
+            if let Err(flaw) = grown(&running, &counts, options, sink, place, waits, left_out) {
+                flaws.add(line, flaw);
+            }
+        }
         report.waits += outcome.waits;
+        report.running_handed_on += outcome.running_taken;
+        report.left_out.not_waits += outcome.not_waits;
         report.pairs.handed_on += outcome.halves_taken;
         report.left_out.other_streams += outcome.other_streams;
         report.left_out.outside_window += outcome.outside_window;
@@ -311,7 +349,7 @@ impl<'o, S: Sink> Settler<'o, S> {
     }
 
     fn finish(self) -> Result<(S, Report), IntakeError> {
-        let Settler { options, mut sink, mut streams, pairs, counts, mut report } = self;
+        let Settler { options, mut sink, mut streams, pairs, series, counts, mut report } = self;
         if let Some((oldest, newest)) = streams.span() {
             report.oldest = Some(report.oldest.map_or(oldest, |time| time.min(oldest)));
             report.newest = Some(report.newest.map_or(newest, |time| time.max(newest)));
@@ -320,6 +358,13 @@ impl<'o, S: Sink> Settler<'o, S> {
         (report.pairs.dropped, report.pairs.let_go) = (pairs.dropped, pairs.let_go);
         report.pairs.ends_alone += pairs.dropped;
         report.pairs.open_unseen += pairs.unseen;
+        for series in series.into_values() {
+            let Series::Once(running) = series else { continue };
+            let place = streams.place(&running.stream);
+            let (waits, left_out) = (&mut report.waits, &mut report.left_out);
+            // What could be wrong with it was looked for when it was read.
+            let _ = grown(&running, &running.histogram, options, &mut sink, place, waits, left_out);
+        }
         // No half is without a time, so where there are any there is a newest.
         let seen = report.newest.unwrap_or_default();
         pairs.leave(
@@ -353,6 +398,7 @@ impl<'o, S: Sink> Settler<'o, S> {
             }
             _ if report.waits
                 + report.pairs.handed_on
+                + report.running_handed_on
                 + report.left_out.other_streams
                 + report.left_out.outside_window
                 == 0 =>
@@ -362,6 +408,27 @@ impl<'o, S: Sink> Settler<'o, S> {
             _ => Ok((sink, report)),
         }
     }
+}
+
+/// Hands on what a series has grown by.
+fn grown<S: Sink>(
+    running: &Running,
+    counts: &Histogram,
+    options: &Options,
+    sink: &mut S,
+    place: usize,
+    waits: &mut u64,
+    left_out: &mut LeftOut,
+) -> Result<(), Flaw> {
+    if !options.is_in_window(running.at)? {
+        left_out.outside_window += counts.total();
+        return Ok(());
+    }
+    for wait in running.waits(counts) {
+        sink.take(&Record { stream: &running.stream, place, id: None, wait: wait? });
+        *waits += 1;
+    }
+    Ok(())
 }
 
 fn add_flaws(

@@ -29,6 +29,9 @@ pub struct Report {
     pub left_out: LeftOut,
     /// Starts and ends that came in lines of their own.
     pub pairs: PairsReport,
+    /// Readings of histograms that only grow which the sink took as they were ([`super::Sink::take_running`]).
+    #[serde(skip)]
+    pub running_handed_on: u64,
     /// Oldest time in any record, Unix seconds.
     pub oldest: Option<f64>,
     /// Newest time in any record, Unix seconds.
@@ -119,6 +122,13 @@ pub struct LeftOut {
     pub partial: u64,
     /// Messages of a journal that are no records.
     pub other_messages: u64,
+    /// Spans and data points that are no waits: of another unit than time, without buckets, or left out by a rule.
+    #[serde(skip_serializing_if = "is_zero")]
+    pub not_waits: u64,
+}
+
+fn is_zero(number: &u64) -> bool {
+    *number == 0
 }
 
 /// Starts and ends in lines of their own.

@@ -154,13 +154,13 @@ impl Unpacked {
 
 /// A compression, known by its first bytes (RFC 1952; RFC 8878).
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
-pub(super) enum Packing {
+pub(crate) enum Packing {
     Gzip,
     Zstd,
 }
 
 impl Packing {
-    fn of(head: &[u8]) -> Option<Packing> {
+    pub(crate) fn of(head: &[u8]) -> Option<Packing> {
         match head {
             [0x1f, 0x8b, ..] => Some(Packing::Gzip),
             [0x28, 0xb5, 0x2f, 0xfd, ..] => Some(Packing::Zstd),
@@ -170,7 +170,7 @@ impl Packing {
         }
     }
 
-    fn name(self) -> &'static str {
+    pub(crate) fn name(self) -> &'static str {
         match self {
             Packing::Gzip => "gzip",
             Packing::Zstd => "zstd",

@@ -1,9 +1,10 @@
-//! What is brought to a ledger at once: counted waits, starts and ends of open waits, counts of bad lines.
+//! What is brought to a ledger at once: counted waits, starts and ends of open waits, counts of bad lines, records.
 
 use std::collections::{BTreeMap, HashMap};
 use std::fmt;
 
-use super::{Hour, Position};
+use super::{Hour, MAX_RECORD_BYTES, MAX_SUBJECT_BYTES, Position, Record, RecordError};
+use crate::running::Running;
 use crate::tally::{self, Periods, Tally};
 use crate::wait::{Ending, StreamError, Wait, check_stream};
 
@@ -22,8 +23,10 @@ pub struct Batch {
     pub(super) key: Option<(Box<str>, Digest)>,
     pub(super) streams: HashMap<Box<str>, Hours>,
     pub(super) events: Vec<Event>,
+    pub(super) running: Vec<Running>,
     pub(super) bad_lines: BTreeMap<Box<str>, u64>,
     pub(super) positions: BTreeMap<Box<str>, Position>,
+    pub(super) records: Vec<Record>,
 }
 
 /// The tallies of one stream by hour.
@@ -76,9 +79,11 @@ impl Batch {
             hours.0.iter().for_each(|(hour, tally)| mine.at(*hour).merge(tally));
         }
         self.events.extend(other.events);
+        self.running.extend(other.running);
         for (reason, lines) in other.bad_lines {
             self.bad_lines(&reason, lines);
         }
+        self.records.extend(other.records);
         self.positions.extend(other.positions);
     }
 
@@ -96,6 +101,16 @@ impl Batch {
                 count(self.streams.entry(stream.into()).or_default());
             }
         }
+        Ok(())
+    }
+
+    /// Files a reading of a histogram that only grows: what it has grown by since the last one is counted.
+    ///
+    /// # Errors
+    /// [`StreamError`] if the stream's name is not allowed; nothing is filed then.
+    pub fn running(&mut self, running: Running) -> Result<(), StreamError> {
+        check_stream(&running.stream)?;
+        self.running.push(running);
         Ok(())
     }
 
@@ -150,12 +165,31 @@ impl Batch {
         *sum = sum.saturating_add(lines);
     }
 
-    /// The streams it names, some more than once: those that change with it.
-    pub fn streams(&self) -> impl Iterator<Item = &str> {
-        self.streams.keys().map(|name| &**name).chain(self.events.iter().map(|event| &*event.key.stream))
+    /// Keeps a record. One whose number is taken for good by another refuses the batch ([`super::BatchError::Taken`]); the
+    /// same brought again changes nothing.
+    ///
+    /// # Errors
+    /// [`RecordError`] for one that is too long; nothing is kept then.
+    pub fn note(&mut self, record: Record) -> Result<(), RecordError> {
+        let (subject, bytes) = (record.subject.len(), record.text.len());
+        if subject > MAX_SUBJECT_BYTES {
+            return Err(RecordError::Subject { bytes: subject });
+        }
+        if bytes > MAX_RECORD_BYTES {
+            return Err(RecordError::Long { bytes });
+        }
+        self.records.push(record);
+        Ok(())
     }
 
-    /// How many waits it counts, not those that its events may make.
+    /// The streams it names, some more than once: those that change with it.
+    pub fn streams(&self) -> impl Iterator<Item = &str> {
+        let awaited = self.events.iter().map(|event| &*event.key.stream);
+        let running = self.running.iter().map(|running| &*running.stream);
+        self.streams.keys().map(|name| &**name).chain(awaited).chain(running)
+    }
+
+    /// How many waits it counts, not those that its events and readings may make.
     pub fn waits(&self) -> u64 {
         self.streams
             .values()
@@ -166,8 +200,12 @@ impl Batch {
 
     /// Whether there is nothing in it.
     pub fn is_empty(&self) -> bool {
-        let Batch { key: _, streams, events, bad_lines, positions } = self;
-        streams.is_empty() && events.is_empty() && bad_lines.is_empty() && positions.is_empty()
+        self.streams.is_empty()
+            && self.events.is_empty()
+            && self.bad_lines.is_empty()
+            && self.records.is_empty()
+            && self.running.is_empty()
+            && self.positions.is_empty()
     }
 }
 

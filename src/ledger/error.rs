@@ -3,7 +3,7 @@
 use std::io;
 use std::path::{Path, PathBuf};
 
-use super::Period;
+use super::{Period, Record, Shelf};
 
 /// Why a ledger did not do as it was asked. Nothing of the call was counted, and nothing counted before is lost;
 /// after a remedy the same ledger goes on.
@@ -129,10 +129,24 @@ pub enum BatchError {
         /// The key.
         key: String,
     },
+    /// A record's number is taken for good by another: somebody else was first.
+    #[error("{subject}: number {number} of its records is taken")]
+    Taken {
+        /// What the record is about.
+        subject: String,
+        /// Its number.
+        number: i64,
+    },
     /// Too many waits would be open.
     #[error("{limit} waits are open, no more are kept")]
     TooManyOpen {
         /// How many may be open.
+        limit: usize,
+    },
+    /// Too many histograms would be remembered.
+    #[error("{limit} histograms that only grow are read, no more are kept")]
+    TooManySeries {
+        /// How many may be read.
         limit: usize,
     },
     /// Too many streams would be counted.
@@ -150,7 +164,11 @@ impl BatchError {
             BatchError::KeyReused { .. } => {
                 "use a fresh key for each batch; repeat one only to send the same again"
             }
+            BatchError::Taken { .. } => "see what was written meanwhile, and write after it",
             BatchError::TooManyOpen { .. } => "send the ends of waits, send fewer starts, or raise the limit",
+            BatchError::TooManySeries { .. } => {
+                "send the counts since the last point (delta temporality), use fewer attributes, or raise the limit"
+            }
             BatchError::TooManyStreams { .. } => {
                 "put what varies without bound elsewhere than in the stream's name, or raise the limit"
             }
@@ -184,6 +202,18 @@ pub enum Damage {
     Entry {
         /// Its number.
         sequence: i64,
+        /// What was found.
+        flaw: String,
+    },
+    /// One record.
+    #[error("{}: {flaw}", Record::name(*shelf, subject, *number))]
+    Record {
+        /// Where it stands.
+        shelf: Shelf,
+        /// What it is about.
+        subject: String,
+        /// Its number.
+        number: i64,
         /// What was found.
         flaw: String,
     },

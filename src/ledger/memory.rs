@@ -7,11 +7,13 @@ use std::sync::{Arc, PoisonError, RwLock, RwLockReadGuard, RwLockWriteGuard};
 
 use super::batch::{EventKey, Hours};
 use super::clock::Clock;
+use super::grow::{self, Known};
 use super::open::{self, Filed, State};
 use super::{
     Batch, BatchError, Damage, Digest, Entry, Extent, Hour, Ledger, LedgerError, OpenWait, Options, Period,
-    Position, Reader, Receipt, Upkeep,
+    Position, Reader, Receipt, Record, Records, Shelf, Upkeep,
 };
+use crate::running::{Mark, SeriesKey};
 use crate::tally::{self, Tally};
 
 /// A ledger in memory. Cloning gives another handle on the same one.
@@ -30,10 +32,13 @@ struct Held {
     key_order: VecDeque<(f64, Box<str>)>,
     events: HashMap<EventKey, Filed>,
     joined_order: VecDeque<(f64, EventKey)>,
+    /// With the time of filing.
+    marks: HashMap<SeriesKey, (Mark, f64)>,
     singles: usize,
     joined: usize,
     bad_lines: BTreeMap<Hour, BTreeMap<Box<str>, u64>>,
     positions: BTreeMap<Box<str>, Position>,
+    records: BTreeMap<(Shelf, Box<str>, i64), Box<str>>,
 }
 
 /// Tallies by their first hour and period.
@@ -86,6 +91,15 @@ impl Held {
                 Err(BatchError::KeyReused { key: key.to_string() })
             };
         }
+        let mut noted: HashMap<(Shelf, &str, i64), &str> = HashMap::new();
+        for record in &batch.records {
+            let (shelf, subject, number) = record.place();
+            let held = self.records.get(&(shelf, subject.into(), number)).map(|text| &**text);
+            let known = noted.insert(record.place(), &record.text).or(held);
+            if shelf.is_final() && known.is_some_and(|known| *known != *record.text) {
+                return Err(BatchError::Taken { subject: subject.to_owned(), number });
+            }
+        }
         let new: HashSet<&str> = batch.streams().filter(|name| !self.streams.contains_key(*name)).collect();
         if !new.is_empty() && self.streams.len() + new.len() > self.options.most_streams {
             return Err(BatchError::TooManyStreams { limit: self.options.most_streams });
@@ -94,6 +108,13 @@ impl Held {
         let Ok(outcome) = open::settle(&batch.events, time, find);
         if outcome.singles > 0 && self.singles + outcome.singles as usize > self.options.most_open {
             return Err(BatchError::TooManyOpen { limit: self.options.most_open });
+        }
+        let find = |key: &SeriesKey| {
+            Ok::<_, Infallible>(self.marks.get(key).map(|(mark, _)| Known::Mark(mark.clone())))
+        };
+        let Ok(grown) = grow::settle(&batch.running, now, find);
+        if grown.new > 0 && self.marks.len() + grown.new > self.options.most_series {
+            return Err(BatchError::TooManySeries { limit: self.options.most_series });
         }
         // Accepted; nothing below can fail.
         for name in new {
@@ -105,6 +126,13 @@ impl Held {
                 stream.at(Period::Hour(*hour)).merge(tally);
             }
         }
+        for (name, hours) in &grown.streams {
+            let stream = self.streams.entry((*name).into()).or_default();
+            for (hour, tally) in &hours.0 {
+                stream.at(Period::Hour(*hour)).merge(tally);
+            }
+        }
+        self.marks.extend(grown.marks.into_iter().map(|(key, mark)| (key, (mark, time))));
         for (name, wait) in &outcome.waits {
             let mut hours = Hours::default();
             tally::file(wait, wait.at().unwrap_or(now), &mut hours);
@@ -127,13 +155,16 @@ impl Held {
             *sum = sum.saturating_add(*lines);
         }
         self.positions.extend(batch.positions.iter().map(|(name, position)| (name.clone(), *position)));
+        for Record { shelf, subject, number, text } in &batch.records {
+            self.records.insert((*shelf, subject.clone(), *number), text.clone());
+        }
         if let Some((key, digest)) = &batch.key {
             self.keys.insert(key.clone(), (*digest, time));
             self.key_order.push_back((time, key.clone()));
         }
         while self.keys.len() > self.options.most_keys && self.forget_key(f64::INFINITY) {}
         let (joined, again, refused) = (outcome.waits.len() as u64, outcome.again, outcome.refused);
-        Ok(Entry { repeated: false, joined, again, refused })
+        Ok(Entry { repeated: false, joined, again, refused, grown: grown.waits, resets: grown.resets })
     }
 
     /// Forgets the oldest key if it was filed by then; whether there was one to look at.
@@ -165,7 +196,10 @@ impl Held {
             keep
         });
         self.singles = self.singles.saturating_sub(upkeep.expired as usize);
+        self.marks.retain(|_, (_, since)| *since > time - self.options.series_for);
         self.bad_lines = self.bad_lines.split_off(&Hour::of(time - keep_for));
+        let oldest = i64::from(Hour::of(time - keep_for).day());
+        self.records.retain(|(shelf, _, number), _| shelf.is_final() || *number >= oldest);
         for stream in self.streams.values_mut() {
             upkeep.dropped += stream.drop_before(Hour::of(time - keep_for));
             upkeep.rolled += stream.roll(Hour::of(time - hours_for));
@@ -276,6 +310,21 @@ impl Reader for MemoryLedger {
 
     fn position(&self, name: &str) -> Result<Option<Position>, LedgerError> {
         Ok(self.read().positions.get(name).copied())
+    }
+
+    fn records(&self, shelf: Shelf, subject: Option<&str>) -> Result<Records, LedgerError> {
+        let held = self.read();
+        let all = held
+            .records
+            .iter()
+            .filter(|((on, about, _), _)| *on == shelf && subject.is_none_or(|subject| **about == *subject));
+        let records = all.map(|((shelf, subject, number), text)| Record {
+            shelf: *shelf,
+            subject: subject.clone(),
+            number: *number,
+            text: text.clone(),
+        });
+        Ok(Records { records: records.collect(), damage: Vec::new() })
     }
 
     fn extent(&self) -> Result<Extent, LedgerError> {

@@ -1,7 +1,8 @@
 //! Where tallies live and survive.
 //!
-//! In: [`Batch`]es of counted waits, of starts and ends of open waits, of counts of bad lines. Out: the tally of any
-//! stream and window of UTC hours ([`Reader::window`]), the waits that are open now, what is broken.
+//! In: [`Batch`]es of counted waits, of starts and ends of open waits, of readings of histograms that only grow, of counts
+//! of bad lines, of [`Record`]s. Out: the tally of any stream and window of UTC hours ([`Reader::window`]), the waits that
+//! are open now, the records, what is broken.
 //!
 //! # The promise
 //!
@@ -48,11 +49,13 @@ mod batch;
 mod clock;
 mod error;
 mod export;
+mod grow;
 mod memory;
 mod open;
 mod options;
 mod period;
 mod position;
+mod record;
 pub mod sqlite;
 
 use std::collections::BTreeMap;
@@ -65,6 +68,7 @@ pub use memory::MemoryLedger;
 pub use options::Options;
 pub use period::{Hour, Period};
 pub use position::Position;
+pub use record::{MAX_RECORD_BYTES, MAX_SUBJECT_BYTES, Record, RecordError, Records, Shelf};
 pub use sqlite::{LAYOUT_VERSION, SqliteLedger, SqliteReader};
 
 use crate::tally::Tally;
@@ -132,6 +136,12 @@ pub trait Reader: Send {
     /// [`LedgerError`] of the store.
     fn position(&self, name: &str) -> Result<Option<Position>, LedgerError>;
 
+    /// The records on a shelf, of one subject or of all.
+    ///
+    /// # Errors
+    /// [`LedgerError`] of the store; a broken record is no error.
+    fn records(&self, shelf: Shelf, subject: Option<&str>) -> Result<Records, LedgerError>;
+
     /// How large it is.
     ///
     /// # Errors
@@ -192,6 +202,10 @@ pub struct Entry {
     pub again: u64,
     /// Starts and ends of which no wait can be made, such as an end before its start.
     pub refused: u64,
+    /// Waits by which histograms have grown since they were read last.
+    pub grown: u64,
+    /// Histograms that have begun anew since.
+    pub resets: u64,
 }
 
 /// What one [`Ledger::maintain`] did.

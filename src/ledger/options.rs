@@ -21,6 +21,11 @@ pub struct Options {
     pub open_for: f64,
     /// Most waits open at once; as many again that have ended are remembered. Default one million.
     pub most_open: usize,
+    /// A histogram that only grows is forgotten if it has not been read for this time, s; > 0, and well above the longest
+    /// pause between two readings. Default 2 days.
+    pub series_for: f64,
+    /// Most such histograms at once. Default a hundred thousand.
+    pub most_series: usize,
     /// Most streams. Default a hundred thousand.
     pub most_streams: usize,
     /// Most bytes in the log of batches that are not yet merged into their hours: bounds the time to open. Default
@@ -40,6 +45,8 @@ impl Default for Options {
             most_keys: 2_000_000,
             open_for: 30.0 * DAY,
             most_open: 1_000_000,
+            series_for: 2.0 * DAY,
+            most_series: 100_000,
             most_streams: 100_000,
             log_bytes: 64 << 20,
             live_bytes: 128 << 20,

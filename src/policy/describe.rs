@@ -1,7 +1,10 @@
 //! What a policy means, in sentences for people and as data for programs.
 
-use super::entry::{Entry, GiveUp, Guard, Jitter, Kind, NO_COST_OF_TIME, Policy, Retry, Sticky, aim_name};
+use super::entry::{
+    Entry, GiveUp, Guard, Jitter, Kind, NO_COST_OF_TIME, Policy, Retry, Sticky, Weekly, aim_name,
+};
 use super::finding::Warning;
+use super::telemetry;
 use crate::say;
 use crate::stopping::{Aim, Fade, Worth};
 use serde::Serialize;
@@ -122,7 +125,8 @@ pub fn describe(policy: &Policy, streams: &[&str]) -> Description {
 }
 
 fn notes(policy: &Policy, streams: &[&str], subjects: &[Subject]) -> Vec<String> {
-    let mut notes = Vec::new();
+    let mut notes: Vec<String> = policy.weekly.iter().map(Weekly::words).collect();
+    notes.extend(telemetry::sentences(&policy.telemetry, "spans and histograms"));
     if !streams.is_empty() {
         let used: HashSet<usize> = subjects.iter().filter_map(|s| s.entry).collect();
         for entry in policy.entries.iter().filter(|e| !used.contains(&e.number)) {
@@ -141,6 +145,19 @@ fn notes(policy: &Policy, streams: &[&str], subjects: &[Subject]) -> Vec<String>
         notes.push(DUTY.into());
     }
     notes
+}
+
+impl Weekly {
+    /// What it means, in a sentence.
+    fn words(&self) -> String {
+        let days = ["Monday", "Tuesday", "Wednesday", "Thursday", "Friday", "Saturday", "Sunday"];
+        let day = days[usize::from(self.day.min(6))];
+        format!(
+            "A daemon makes the week's recommendations every {day} at {:02}:00 by the clock of {}, once; an hour that summer \
+             time skips is taken an hour later, one that comes twice the first time.",
+            self.hour, self.time_zone
+        )
+    }
 }
 
 impl Subject {

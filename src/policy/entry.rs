@@ -5,8 +5,10 @@ use super::keys::{
     DEFAULT_LARGEST_STEP, DEFAULT_SLACK, DEFAULT_WINDOW,
 };
 use super::{Glob, Warning};
+use crate::intake::Rules;
 use crate::stopping::{Aim, Worth};
-use serde::{Serialize, Serializer};
+use serde::de::Error as _;
+use serde::{Deserialize, Deserializer, Serialize, Serializer};
 
 /// Why an entry without an aim gets no give-up time (METHODS.md section 5, "No cost of time").
 pub const NO_COST_OF_TIME: &str = "nothing says what the waiting time costs (no other use for it, no carrying \
@@ -21,6 +23,8 @@ pub struct Policy {
     pub entries: Vec<Entry>,
     /// When the daemon makes the week's recommendations; `None`: not by itself.
     pub weekly: Option<Weekly>,
+    /// How spans and histograms of telemetry become waits.
+    pub telemetry: Rules,
     /// What its writer may not have meant, in the order of the lines.
     pub warnings: Vec<Warning>,
 }
@@ -164,6 +168,23 @@ impl Serialize for GiveUp {
         match self {
             GiveUp::After(seconds) => serializer.serialize_f64(*seconds),
             GiveUp::Never => serializer.serialize_str("never"),
+        }
+    }
+}
+
+impl<'de> Deserialize<'de> for GiveUp {
+    /// The same back.
+    fn deserialize<D: Deserializer<'de>>(deserializer: D) -> Result<GiveUp, D::Error> {
+        #[derive(Deserialize)]
+        #[serde(untagged)]
+        enum Written {
+            Seconds(f64),
+            Word(String),
+        }
+        match Written::deserialize(deserializer)? {
+            Written::Seconds(seconds) if seconds > 0.0 && seconds.is_finite() => Ok(GiveUp::After(seconds)),
+            Written::Word(word) if word == "never" => Ok(GiveUp::Never),
+            _ => Err(D::Error::custom("a give-up time is a number of seconds above 0, or \"never\"")),
         }
     }
 }

@@ -2,6 +2,7 @@
 
 use super::keys::{Key, MAX_BYTES, MAX_DEPTH, MAX_ENTRIES, MAX_VALUES, Section};
 use super::{GlobError, Kind};
+use crate::intake::RuleError;
 use crate::say;
 use crate::wait::StreamError;
 use serde::ser::{Serialize, SerializeStruct, Serializer};
@@ -333,6 +334,14 @@ pub enum Flaw {
         value: String,
         /// The nearest choice.
         nearest: Option<&'static str>,
+    },
+    /// A rule that cannot be read.
+    #[error("`{value}` {error}")]
+    Rule {
+        /// The rule, cut to 60 characters.
+        value: String,
+        /// Why.
+        error: RuleError,
     },
     /// Out of range.
     #[error("`{value}` is out of range")]

@@ -60,6 +60,8 @@ pub enum Section {
     Guard,
     /// `weekly`, of the file.
     Weekly,
+    /// `telemetry`, of the file.
+    Telemetry,
 }
 
 impl Section {
@@ -74,6 +76,7 @@ impl Section {
             Section::Backoff => "retry.backoff",
             Section::Guard => "guard",
             Section::Weekly => "weekly",
+            Section::Telemetry => "telemetry",
         }
     }
 
@@ -218,6 +221,21 @@ keys! {
         "How often a sampler that waits for each answer means to ask; what it did not ask during slow answers is put back.";
     CALLS: Entry "calls", "a list of stream names, at most 100", "[index.search]", "none",
         "The streams that this one waits for in its turn.";
+
+    TELEMETRY: File "telemetry", "a map of stream, resends, left_out, gave_up, failed and done", "{stream: \"{service.name}.{name}\"}", "its keys' defaults",
+        "How spans and histograms that come by OTLP become waits.";
+    TELEMETRY_STREAM: Telemetry "stream", "a text with names of attributes in braces, {a|b} for the first that is there; name, kind, status and scope are the thing's own", "\"{service.name}.{name}\"", "\"{service.name}.{name}\"",
+        "What their streams are called; what a name cannot hold becomes _.";
+    RESENDS: Telemetry "resends", "a name of an attribute", "http.request.resend_count", "http.request.resend_count",
+        "The attribute that counts how often a request had been sent before.";
+    LEFT_OUT: Telemetry "left_out", "a list of attribute=pattern, with * for any run of characters and ? for one", "[\"kind=internal\"]", "none",
+        "What is no wait of interest.";
+    TELEMETRY_GAVE_UP: Telemetry "gave_up", "a list of attribute=pattern, with * for any run of characters and ? for one", "[\"error.type=*Abandoned*\"]", "none; timeouts and cancellations on the side that waits are taken so",
+        "When the waiter has left.";
+    TELEMETRY_FAILED: Telemetry "failed", "a list of attribute=pattern, with * for any run of characters and ? for one", "[\"http.response.status_code=5??\"]", "none; a status of error and an error.type are taken so",
+        "When it has failed.";
+    TELEMETRY_DONE: Telemetry "done", "a list of attribute=pattern, with * for any run of characters and ? for one", "[\"error.type=404\"]", "none; all else is taken so",
+        "When it is done, although it looks otherwise.";
 }
 
 /// Stands for the file where its keys should be and are not.

@@ -21,6 +21,7 @@ mod keys;
 mod read;
 pub(crate) mod scalar;
 mod schema;
+mod telemetry;
 pub(crate) mod tree;
 
 pub use crate::glob::{Glob, GlobError};

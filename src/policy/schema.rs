@@ -55,7 +55,8 @@ impl Reader {
         let version = self.required(&file, &keys::VERSION, |t| whole(t, 1, 1));
         let entries = self.entries(&file);
         let weekly = self.weekly(&file);
-        Some(Policy { version: version?, entries: entries?, weekly, warnings: Vec::new() })
+        let telemetry = self.telemetry(&file);
+        Some(Policy { version: version?, entries: entries?, weekly, telemetry, warnings: Vec::new() })
     }
 
     fn weekly(&mut self, file: &Fields<'_>) -> Option<Weekly> {
@@ -284,7 +285,7 @@ impl Reader {
 }
 
 /// Replaces a default by what was read, if anything was.
-fn set<T>(field: &mut T, read: Option<T>) {
+pub(super) fn set<T>(field: &mut T, read: Option<T>) {
     if let Some(value) = read {
         *field = value;
     }

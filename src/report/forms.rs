@@ -43,6 +43,7 @@ pub fn html(week: &Weekly, pictures: &HashMap<String, String>) -> Result<String,
             title => title(week),
             summary => week.summary(),
             made_at => week.made_at.clone(),
+            since => week.since.clone(),
             assumed => Value::from(Serde(&week.assumed)),
             cautions => Value::from(Serde(&week.cautions)),
             sign => rows(&week.sign),
@@ -87,7 +88,7 @@ fn worth(row: &Row) -> String {
 }
 
 fn hours(row: &Row) -> String {
-    row.hours_per_day.map_or("-".into(), |hours| format!("{} h a day", say::number(hours)))
+    row.hours_per_day.map_or("-".into(), |hours| format!("{} a day", say::duration(3600.0 * hours)))
 }
 
 fn plus(value: f64) -> &'static str {
@@ -132,6 +133,9 @@ fn details(row: &Row) -> Vec<(&'static str, String)> {
 /// For a merge request.
 pub fn markdown(week: &Weekly) -> String {
     let mut text = format!("# {}\n\n{}\n", title(week), week.summary());
+    if let Some(day) = &week.since {
+        let _ = writeln!(text, "\nWhat changed is told against the set of {}.", plain(day));
+    }
     for line in &week.assumed {
         let _ = writeln!(text, "\nAssumed: {}", plain(line));
     }

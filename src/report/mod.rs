@@ -1,14 +1,20 @@
 //! The week's recommendations: what to keep, raise or lower, where to look further, ranked by what it is worth, so that a
 //! person can sign the most of it in ten minutes. A view of advice and of what was settled; it estimates nothing of its own.
 
+mod changes;
 mod forms;
+mod picture;
 mod row;
 mod schedule;
+
+use std::collections::{HashMap, HashSet};
 
 use jiff::Timestamp;
 use serde::Serialize;
 
+pub use changes::{LastWeek, Was};
 pub use forms::{FormError, csv, html, markdown};
+pub use picture::picture;
 pub use row::{Row, Sign, Verdict};
 pub use schedule::{Schedule, ScheduleError};
 
@@ -29,6 +35,8 @@ pub struct Weekly {
     pub schema: &'static str,
     /// Up to when the data reach, RFC 3339.
     pub made_at: Option<String>,
+    /// The day of the set that this one was held against, for what changed.
+    pub since: Option<String>,
     /// The week's run, where a schedule made it: the day on which it was due.
     pub due: Option<String>,
     /// What was assumed for want of a policy.
@@ -43,11 +51,13 @@ pub struct Weekly {
 
 /// Makes the week's recommendations. `entry`: the policy's word on a stream, with the time in force. `now`: when the week is
 /// looked at, which decides what was postponed beyond it; the data's end where the answer shall not depend on the clock.
+/// `last`: the set before it.
 pub fn weekly(
     set: &AdviceSet,
     settled: &Settled,
     entry: impl Fn(&str) -> Entry,
     now: Option<Timestamp>,
+    last: Option<&LastWeek>,
 ) -> Weekly {
     let until = set.made_at.as_deref().and_then(|time| time.parse::<Timestamp>().ok());
     let now = now.or(until);
@@ -60,6 +70,18 @@ pub fn weekly(
         .filter(|(stream, _)| set.streams.iter().all(|advice| advice.stream != *stream))
         .filter_map(|(stream, _)| Row::vanished(stream, &entry(stream), settled.standing(stream)));
     let mut rows: Vec<Row> = advised.chain(vanished).collect();
+    if let Some(last) = last {
+        let before: HashMap<&str, &Was> = last.rows().map(|was| (was.stream.as_str(), was)).collect();
+        for row in &mut rows {
+            match before.get(row.stream.as_str()) {
+                Some(was) => row.changed.extend(changes::since(row, was)),
+                None => row.changed.push("it was not in last week's set".into()),
+            }
+        }
+        let known: HashSet<String> = rows.iter().map(|row| row.stream.clone()).collect();
+        let gone = last.rows().filter(|was| !known.contains(&was.stream));
+        rows.extend(gone.map(|was| Row::gone(was, &entry(&was.stream))));
+    }
     rows.sort_by(|a, b| {
         let worth = |row: &Row| row.worth_per_day.unwrap_or(0.0).max(0.0);
         let kind = |row: &Row| (!row.verdict.changes() || row.folded.is_some(), row.verdict);
@@ -76,6 +98,7 @@ pub fn weekly(
     Weekly {
         schema: SCHEMA,
         made_at: set.made_at.clone(),
+        since: last.and_then(LastWeek::day),
         due: None,
         assumed: set.assumed.clone(),
         sign: rows,

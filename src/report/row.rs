@@ -1,19 +1,20 @@
 //! One stream of the week.
 
 use jiff::Timestamp;
-use serde::Serialize;
+use serde::{Deserialize, Serialize};
 
-use crate::advice::{Action, Advice, Caution, Change, Outcome};
+use super::Was;
+use crate::advice::{Action, Advice, Caution, Change, Outcome, RemainingWait, TailClass};
 use crate::policy::{Entry, GiveUp};
 use crate::say;
-use crate::settle::{Standing, State};
+use crate::settle::{Settlement, Standing, State};
 use crate::stopping::Aim;
 
 const DAY: f64 = 86_400.0;
 const WEEK: f64 = 7.0 * DAY;
 
 /// What to do about a stream.
-#[derive(Clone, Copy, Debug, PartialEq, Eq, PartialOrd, Ord, Serialize)]
+#[derive(Clone, Copy, Debug, PartialEq, Eq, PartialOrd, Ord, Serialize, Deserialize)]
 #[serde(rename_all = "snake_case")]
 pub enum Verdict {
     /// Hold on longer.
@@ -76,6 +77,12 @@ pub struct Sign {
     pub why: String,
 }
 
+impl Sign {
+    fn of(last: &Settlement) -> Sign {
+        Sign { state: last.state.name(), at: last.at.to_string(), by: last.by.clone(), why: last.why.clone() }
+    }
+}
+
 /// One stream's week. Times in s; absent where they cannot be told, `never` where nobody gives up.
 #[derive(Clone, Debug, PartialEq, Serialize)]
 pub struct Row {
@@ -116,6 +123,10 @@ pub struct Row {
     pub waits: u64,
     /// Of these, completed.
     pub done: u64,
+    /// Heavy or light; absent for a stream without waits.
+    pub tail: Option<TailClass>,
+    /// Whether the remaining wait grows or shrinks.
+    pub remaining_wait: Option<RemainingWait>,
     /// What changed since last week, in sentences.
     pub changed: Vec<String>,
     /// What somebody settled before.
@@ -191,12 +202,9 @@ impl Row {
             waits: evidence.waits,
             done: evidence.done,
             changed,
-            settled: standing.last.map(|last| Sign {
-                state: last.state.name(),
-                at: last.at.to_string(),
-                by: last.by.clone(),
-                why: last.why.clone(),
-            }),
+            tail: Some(advice.tail.class),
+            remaining_wait: Some(advice.tail.remaining_wait),
+            settled: standing.last.map(Sign::of),
             folded: if verdict.changes() { folded(standing, advised, now) } else { None },
             cautions: advice.cautions.clone(),
         }
@@ -206,11 +214,34 @@ impl Row {
     pub(super) fn vanished(stream: &str, entry: &Entry, standing: Standing<'_>) -> Option<Row> {
         let last = standing.last?;
         Some(Row {
+            because: "a time was settled for it, and there are no waits of it any more".into(),
+            old_s: standing.give_up_after(),
+            changed: vec![
+                "the stream has vanished: was it renamed, or does nothing record it any more?".into(),
+            ],
+            settled: Some(Sign::of(last)),
+            ..Row::empty(stream, entry)
+        })
+    }
+
+    /// A stream that was there last week.
+    pub(super) fn gone(was: &Was, entry: &Entry) -> Row {
+        Row {
+            because: "there are no waits of it any more".into(),
+            old_s: entry.now.or(was.old_s),
+            changed: vec!["it was in last week's set, and has vanished".into()],
+            ..Row::empty(&was.stream, entry)
+        }
+    }
+
+    /// A stream of which nothing is known.
+    fn empty(stream: &str, entry: &Entry) -> Row {
+        Row {
             stream: stream.to_owned(),
             kind: entry.kind.name().to_owned(),
             verdict: Verdict::NotEnoughEvidence,
-            because: "a time was settled for it, and there are no waits of it any more".into(),
-            old_s: standing.give_up_after(),
+            because: String::new(),
+            old_s: None,
             new_s: None,
             advised_s: None,
             interval_s: None,
@@ -224,18 +255,13 @@ impl Row {
             attempts_then: None,
             waits: 0,
             done: 0,
-            changed: vec![
-                "the stream has vanished: was it renamed, or does nothing record it any more?".into(),
-            ],
-            settled: Some(Sign {
-                state: last.state.name(),
-                at: last.at.to_string(),
-                by: last.by.clone(),
-                why: last.why.clone(),
-            }),
+            tail: None,
+            remaining_wait: None,
+            changed: Vec::new(),
+            settled: None,
             folded: None,
             cautions: Vec::new(),
-        })
+        }
     }
 }
 

@@ -88,12 +88,13 @@ impl Desk {
         self.woken.notify_one();
     }
 
-    /// All streams need advice at once: at the start, and under another policy.
-    pub(super) fn all(&self, streams: Vec<String>) {
+    /// These streams need advice at once, whenever they had it last: all at the start and under another policy, one when
+    /// somebody has decided on it.
+    pub(super) fn at_once(&self, streams: Vec<String>) {
         let now = Instant::now();
         let mut waiting = self.lock();
-        waiting.advised.clear();
         for stream in streams {
+            waiting.advised.remove(stream.as_str());
             waiting.changed.entry(stream.into()).or_insert(now);
         }
         drop(waiting);
@@ -153,13 +154,23 @@ impl Desk {
         !waiting.stopped
     }
 
+    /// Waits until a stream has its advice, or until the time (s) is over.
+    pub(super) fn wait_for(&self, stream: &str, at_most: f64) {
+        self.wait(at_most, |waiting| waiting.changed.contains_key(stream));
+    }
+
     /// Waits until nothing that is due is left, or until the time (s) is over.
     pub(super) fn wait_until_idle(&self, at_most: f64) {
+        self.wait(at_most, |waiting| {
+            waiting.changed.keys().any(|stream| !waiting.advised.contains_key(stream))
+        });
+    }
+
+    fn wait(&self, at_most: f64, is_due: impl Fn(&Waiting) -> bool) {
         let end = Instant::now() + Duration::from_secs_f64(at_most);
         loop {
             let waiting = self.lock();
-            let never = waiting.changed.keys().any(|stream| !waiting.advised.contains_key(stream));
-            if !(never || self.at_work.load(Ordering::SeqCst) > 0) || Instant::now() >= end {
+            if !(is_due(&waiting) || self.at_work.load(Ordering::SeqCst) > 0) || Instant::now() >= end {
                 return;
             }
             let _ = self.woken.wait_timeout(waiting, NAP);

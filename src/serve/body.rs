@@ -1,12 +1,17 @@
 //! From the body of a request to a batch for the ledger. No I/O: bytes in, batch out.
 
+use std::io::Read;
 use std::num::NonZeroUsize;
 
 use axum::body::Bytes;
 
 use super::config::Limits;
-use crate::intake::{Allowed, Format, Half, IntakeError, Options, Record, Report, Side, Sink, Source, read};
+use crate::intake::{
+    Allowed, BadLine, Format, Half, IntakeError, Options, Packing, Record, Report, Rules, Side, Sink, Source,
+    UNDECODABLE, read,
+};
 use crate::ledger::{Batch, Digest, KeyError, Tie};
+use crate::running::Running;
 use crate::wait::{Age, Ending};
 
 /// What a body holds.
@@ -20,7 +25,7 @@ pub(super) struct Counted {
 }
 
 /// How a body is read.
-#[derive(Clone, Copy, Debug)]
+#[derive(Clone, Debug)]
 pub(super) struct Reading<'a> {
     /// The format if the client named one.
     pub(super) format: Option<Format>,
@@ -30,6 +35,51 @@ pub(super) struct Reading<'a> {
     pub(super) now: f64,
     /// Whether any wait is open anywhere, so that a whole wait may close one.
     pub(super) any_open: bool,
+    /// How telemetry becomes waits.
+    pub(super) rules: Rules,
+}
+
+/// Counts a body of telemetry. It is counted whole or not at all if it cannot be decoded, and its own bytes, unpacked,
+/// are its key unless the client gives one.
+pub(super) fn count_whole(body: Bytes, reading: Reading<'_>, limits: &Limits) -> Result<Counted, CountError> {
+    let body = unpack(body, limits.unpacked_bytes)?;
+    let Digest(digest) = Digest::of(&body);
+    let own: String = digest.iter().map(|byte| format!("{byte:02x}")).collect();
+    let own = format!("content:{own}");
+    let reading = Reading { key: Some(reading.key.unwrap_or(&own)), ..reading };
+    let counted = match count(body, reading, limits) {
+        // An empty request is a sound one.
+        Err(CountError::Intake(IntakeError::NoWaits { report })) => {
+            Counted { batch: Batch::default(), report: *report, events: 0, refused: 0 }
+        }
+        counted => counted?,
+    };
+    let undecodable = |bad: &&BadLine| bad.kind == UNDECODABLE;
+    match counted.report.bad.examples.iter().find(undecodable) {
+        Some(bad) => Err(CountError::Undecodable { reason: bad.reason.clone() }),
+        None => Ok(counted),
+    }
+}
+
+/// A body as it was before it was packed.
+fn unpack(body: Bytes, limit: u64) -> Result<Bytes, CountError> {
+    let mut unpacked = Vec::new();
+    let read = match Packing::of(&body) {
+        None => return Ok(body),
+        Some(Packing::Gzip) => flate2::bufread::MultiGzDecoder::new(&body[..])
+            .take(limit.saturating_add(1))
+            .read_to_end(&mut unpacked),
+        Some(Packing::Zstd) => zstd::Decoder::new(&body[..])
+            .and_then(|decoder| decoder.take(limit.saturating_add(1)).read_to_end(&mut unpacked)),
+    };
+    let file = "body".to_owned();
+    match (Packing::of(&body), read) {
+        (_, Ok(_)) if unpacked.len() as u64 > limit => Err(IntakeError::TooMuch { file, limit }.into()),
+        (Some(packing), Err(source)) => {
+            Err(IntakeError::Damaged { file, compression: packing.name(), source }.into())
+        }
+        _ => Ok(unpacked.into()),
+    }
 }
 
 /// Counts a body. Bad lines are counted and told of, not an error, as long as there is something else.
@@ -44,6 +94,7 @@ pub(super) fn count(body: Bytes, reading: Reading<'_>, limits: &Limits) -> Resul
         threads: NonZeroUsize::new(1),
         line_bytes: limits.line_bytes,
         total_bytes: limits.unpacked_bytes,
+        rules: reading.rules,
         ..Options::default()
     };
     let source = Source::reader("body", std::io::Cursor::new(body));
@@ -96,6 +147,8 @@ pub(super) enum CountError {
     Key(#[from] KeyError),
     #[error(transparent)]
     Intake(#[from] IntakeError),
+    #[error("{reason}")]
+    Undecodable { reason: String },
 }
 
 struct Counting {
@@ -141,6 +194,11 @@ impl Sink for Counting {
         };
         self.note(filed.is_ok());
         true
+    }
+
+    fn take_running(&mut self, running: &Running) -> bool {
+        // The reader has checked the name.
+        self.batch.running(running.clone()).is_ok()
     }
 
     fn fork(&self) -> Counting {

@@ -29,6 +29,8 @@ pub struct Config {
     pub limits: Limits,
     /// Who may ask; anyone who reaches it without.
     pub token: Option<Token>,
+    /// Who may settle over HTTP.
+    pub signing: Signing,
     /// The certificate and key; plain HTTP without.
     pub tls: Option<Arc<tokio_rustls::rustls::ServerConfig>>,
     /// Share of all processors that advice may take, in (0, 1].
@@ -56,6 +58,7 @@ impl Config {
             ledger: ledger::Options::default(),
             limits: Limits::default(),
             token: None,
+            signing: Signing::default(),
             tls: None,
             advice_share: 0.25,
             refresh: 10.0,
@@ -64,6 +67,15 @@ impl Config {
             follow: Vec::new(),
             seed: 1,
             clock: Arc::new(system_time),
+        }
+    }
+
+    /// Whether somebody who got as far as this may settle.
+    pub(super) fn may_settle(&self) -> bool {
+        match self.signing {
+            Signing::Nobody => false,
+            Signing::WithToken => self.token.is_some(),
+            Signing::Anyone => true,
         }
     }
 
@@ -84,6 +96,18 @@ fn cores() -> f64 {
 
 fn system_time() -> f64 {
     SystemTime::now().duration_since(SystemTime::UNIX_EPOCH).map_or(0.0, |since| since.as_secs_f64())
+}
+
+/// Who may settle over HTTP: on the pages, or by `/v1/settle`. The file of decisions is not concerned.
+#[derive(Clone, Copy, Debug, Default, PartialEq, Eq)]
+pub enum Signing {
+    /// Nobody: it is read only.
+    Nobody,
+    /// Whoever shows the token; nobody where there is none.
+    #[default]
+    WithToken,
+    /// Whoever reaches it.
+    Anyone,
 }
 
 /// What is taken from clients, and how long they may take over it.

@@ -13,7 +13,7 @@ use super::adviser::Fresh;
 use super::shared::Shared;
 use crate::advice::{Action, RemainingWait, TailClass};
 use crate::advise::Survival;
-use crate::ledger::Extent;
+use crate::ledger::{Entry, Extent};
 use crate::policy::GiveUp;
 
 type Counter = GenericCounter<AtomicU64>;
@@ -39,6 +39,8 @@ pub(super) struct Metrics {
     pub(super) refused_connections: Counter,
     pub(super) policy_sound: IntGauge,
     pub(super) last_filed: Gauge,
+    pub(super) left_out_of_telemetry: Counter,
+    resets: Counter,
     ledger_bytes: IntGauge,
     ledger_streams: IntGauge,
     open_waits: IntGauge,
@@ -83,6 +85,14 @@ impl Metrics {
                 "outwait_last_filed_timestamp_seconds",
                 "When waits were filed last; 0 before the first.",
             ))?,
+            left_out_of_telemetry: made.add(Counter::new(
+                "outwait_telemetry_left_out_total",
+                "Spans and data points that are no waits: not of time, without buckets, or left out by a rule.",
+            ))?,
+            resets: made.add(Counter::new(
+                "outwait_series_resets_total",
+                "Histograms that have begun anew since they were read last.",
+            ))?,
             ledger_bytes: made.add(IntGauge::new("outwait_ledger_bytes", "Size of the ledger on disk."))?,
             ledger_streams: made.add(IntGauge::new("outwait_ledger_streams", "Streams in the ledger."))?,
             open_waits: made
@@ -113,6 +123,12 @@ impl Metrics {
         self.ledger_bytes.set(extent.bytes as i64);
         self.ledger_streams.set(extent.streams as i64);
         self.open_waits.set(extent.open as i64);
+    }
+
+    /// Counts what histograms have grown by.
+    pub(super) fn grown(&self, entry: &Entry) {
+        self.waits.inc_by(entry.grown);
+        self.resets.inc_by(entry.resets);
     }
 
     /// Counts bad lines. Field and reason come from a small set of the program's own, never from a client.
@@ -254,7 +270,7 @@ fn streams(all: &[Arc<Fresh>], shared: &Shared) -> Vec<MetricFamily> {
             rate.set(name, Some(("at", at)), earns);
             regret.set(name, Some(("at", at)), loses);
         }
-        let signed = settled.as_ref().and_then(|settled| settled.standing(name).give_up_after());
+        let signed = settled.standing(name).give_up_after();
         give_up.set(name, Some(("at", "settled")), signed.map(GiveUp::seconds));
         rate.set(name, Some(("at", "never")), advice.rate_never_per_s);
         attempts.set(name, Some(("at", "advised")), advice.attempts_per_request);

@@ -9,9 +9,11 @@
 
 mod adviser;
 mod body;
+mod clerk;
 mod config;
 mod connections;
 mod demo;
+mod diary;
 mod follow;
 mod http;
 mod keeper;
@@ -22,9 +24,11 @@ mod problem;
 mod reload;
 mod road;
 mod sessions;
+mod settling;
 mod shared;
 mod studies;
 mod tls;
+mod week;
 mod weekly;
 
 use std::future::Future;
@@ -33,14 +37,15 @@ use std::sync::Arc;
 
 use tokio::net::TcpListener;
 
-pub use config::{Clock, Config, Limits, SecretError, Token, read_token};
+pub use config::{Clock, Config, Limits, SecretError, Signing, Token, read_token};
 pub use follow::Followed;
 pub use http::OPENAPI;
 pub use reload::{PolicyFile, ReloadError};
-pub use tls::{TlsError, read_tls};
-pub use weekly::Runs;
+pub use tls::{TlsError, read_certificates, read_tls};
+pub use weekly::{Runs, Webhook};
 
 use crate::ledger::{Ledger, LedgerError, SqliteLedger};
+use settling::Settling;
 use shared::Shared;
 
 /// Why the daemon could not start, or had to end.
@@ -85,7 +90,8 @@ impl Daemon {
             tracing::error!(%damage, "part of the ledger is broken; the rest is served");
         }
         let readers = (0..config.advisers()).map(|_| ledger.reader()).collect::<Result<Vec<_>, _>>()?;
-        let (shared, queue) = Shared::new(config, policy, ledger.sqlite_reader()?)?;
+        let settling = Settling::open(&ledger)?;
+        let (shared, queue) = Shared::new(config, policy, ledger.sqlite_reader()?, settling)?;
         let refused = |what| move |source| ServeError::System { what, source };
         let keeper = keeper::start(ledger, queue, Arc::clone(&shared)).map_err(refused("a thread"))?;
         let mut threads = Vec::new();
@@ -94,12 +100,13 @@ impl Daemon {
             threads.push(adviser.map_err(refused("a thread"))?);
         }
         threads.push(reload::watch(Arc::clone(&shared)).map_err(refused("a thread"))?);
+        threads.push(clerk::start(Arc::clone(&shared)).map_err(refused("a thread"))?);
         threads.push(weekly::start(Arc::clone(&shared)).map_err(refused("a thread"))?);
         for followed in &shared.config.follow {
             let follower = follow::start(followed.clone(), Arc::clone(&shared));
             threads.push(follower.map_err(refused("a thread"))?);
         }
-        shared.desk.all(shared.streams());
+        shared.desk.at_once(shared.streams());
         Ok(Daemon { shared, threads, keeper })
     }
 
@@ -117,7 +124,7 @@ impl Daemon {
         let (fed, thread) = demo::feed(&self.shared, seed)?;
         self.threads.push(thread);
         // What was advised on the way rests on a part of it.
-        self.shared.desk.all(self.shared.streams());
+        self.shared.desk.at_once(self.shared.streams());
         Ok(fed)
     }
 

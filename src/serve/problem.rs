@@ -74,6 +74,11 @@ impl Problem {
         self
     }
 
+    /// Its status.
+    pub(super) fn status(&self) -> StatusCode {
+        StatusCode::from_u16(self.0.status).unwrap_or(StatusCode::INTERNAL_SERVER_ERROR)
+    }
+
     /// What is wrong and what to do, in a line.
     pub(super) fn sentence(&self) -> String {
         format!("{}; {}", self.0.detail, self.0.remedy)

@@ -90,7 +90,7 @@ pub(super) fn again(shared: &Shared) {
         Ok(policy) => {
             tracing::info!(file = %path.display(), "the policy has changed; all advice is made anew");
             shared.set_standing(Standing { policy: Some(Arc::new(policy)), refused: None, seen });
-            shared.desk.all(shared.streams());
+            shared.desk.at_once(shared.streams());
         }
         Err(error) => {
             tracing::error!(%error, "the policy is refused; the last sound one stays in force");

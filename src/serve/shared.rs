@@ -10,6 +10,7 @@ use super::keeper::{self, Counter, Queue};
 use super::metrics::Metrics;
 use super::reload::Standing;
 use super::sessions::Sessions;
+use super::settling::Settling;
 use super::studies::Studies;
 use crate::advice::AdviceSet;
 use crate::advise::{Past, Terms};
@@ -42,7 +43,7 @@ pub(super) struct Shared {
     closing: tokio::sync::watch::Sender<bool>,
     policy: RwLock<Standing>,
     /// What was settled.
-    settled: RwLock<Option<Arc<Settled>>>,
+    pub(super) settling: Settling,
     advice: RwLock<BTreeMap<Arc<str>, Arc<Fresh>>>,
     reader: Mutex<SqliteReader>,
     trouble: RwLock<Option<Arc<LedgerError>>>,
@@ -62,6 +63,7 @@ impl Shared {
         config: Config,
         policy: Standing,
         reader: SqliteReader,
+        settling: Settling,
     ) -> Result<(Arc<Shared>, Queue), prometheus::Error> {
         let (counter, queue) = keeper::queue(config.limits.queue);
         let shared = Shared {
@@ -75,7 +77,7 @@ impl Shared {
             live: AtomicUsize::new(0),
             closing: tokio::sync::watch::Sender::new(false),
             policy: RwLock::new(policy),
-            settled: RwLock::default(),
+            settling,
             advice: RwLock::default(),
             reader: Mutex::new(reader),
             trouble: RwLock::default(),
@@ -122,23 +124,14 @@ impl Shared {
         self.standing().policy
     }
 
-    /// What was settled, where a file of it was named.
-    pub(super) fn settled(&self) -> Option<Arc<Settled>> {
-        self.settled.read().unwrap_or_else(PoisonError::into_inner).clone()
+    /// What was settled.
+    pub(super) fn settled(&self) -> Arc<Settled> {
+        self.settling.book().settled
     }
 
-    /// The same as an advice takes it.
+    /// The same as an advice takes it; all advice starts from it.
     pub(super) fn past(&self) -> Option<Past> {
-        self.settled().map(|settled| settled.past(self.now()))
-    }
-
-    /// Takes what was settled meanwhile; all advice starts from it.
-    pub(super) fn set_settled(&self, settled: Settled) {
-        let old = self.settled();
-        if old.as_deref() != Some(&settled) {
-            *self.settled.write().unwrap_or_else(PoisonError::into_inner) = Some(Arc::new(settled));
-            self.desk.all(self.streams());
-        }
+        Some(self.settled().past(self.now()))
     }
 
     /// Takes another policy, or notes what is wrong with it.
@@ -170,6 +163,7 @@ impl Shared {
 
     /// Counts what was read, whatever becomes of it.
     pub(super) fn note(&self, report: &Report) {
+        self.metrics.left_out_of_telemetry.inc_by(report.left_out.not_waits);
         self.metrics.lines.inc_by(report.lines);
         for bad in &report.bad.by_reason {
             self.metrics.bad(bad.field, bad.reason, bad.lines);

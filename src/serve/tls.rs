@@ -31,14 +31,7 @@ pub enum TlsError {
 /// # Errors
 /// [`TlsError`].
 pub fn read_tls(certificate: &Path, key: &Path) -> Result<Arc<ServerConfig>, TlsError> {
-    let unread = |what, path: &Path| {
-        let path = path.to_owned();
-        move |source| TlsError::Pem { what, path, source }
-    };
-    let chain = CertificateDer::pem_file_iter(certificate)
-        .and_then(Iterator::collect::<Result<Vec<_>, _>>)
-        .and_then(|chain| if chain.is_empty() { Err(pem::Error::NoItemsFound) } else { Ok(chain) })
-        .map_err(unread("a certificate", certificate))?;
+    let chain = read_certificates(certificate)?;
     let key = PrivateKeyDer::from_pem_file(key).map_err(unread("a private key", key))?;
     let mut config = ServerConfig::builder_with_provider(Arc::new(crypto::ring::default_provider()))
         .with_safe_default_protocol_versions()?
@@ -46,4 +39,20 @@ pub fn read_tls(certificate: &Path, key: &Path) -> Result<Arc<ServerConfig>, Tls
         .with_single_cert(chain, key)?;
     config.alpn_protocols = vec![b"http/1.1".to_vec()];
     Ok(Arc::new(config))
+}
+
+/// Reads the certificates in a PEM file, one at the least.
+///
+/// # Errors
+/// [`TlsError::Pem`].
+pub fn read_certificates(path: &Path) -> Result<Vec<CertificateDer<'static>>, TlsError> {
+    CertificateDer::pem_file_iter(path)
+        .and_then(Iterator::collect::<Result<Vec<_>, _>>)
+        .and_then(|chain| if chain.is_empty() { Err(pem::Error::NoItemsFound) } else { Ok(chain) })
+        .map_err(unread("a certificate", path))
+}
+
+fn unread(what: &'static str, path: &Path) -> impl FnOnce(pem::Error) -> TlsError {
+    let path = path.to_owned();
+    move |source| TlsError::Pem { what, path, source }
 }

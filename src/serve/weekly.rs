@@ -1,25 +1,23 @@
 //! The week's recommendations on a schedule: into a folder, then to a webhook. What was done is kept in a small file, so that
 //! no run is lost or made twice over restarts and changes of the clock.
 
-use std::collections::HashMap;
 use std::fs;
 use std::io::{self, Write};
 use std::path::{Path, PathBuf};
 use std::sync::Arc;
 use std::thread::{Builder, JoinHandle};
-use std::time::{Duration, SystemTime};
+use std::time::Duration;
 
 use jiff::Timestamp;
 use jiff::civil::Date;
 use ring::hmac;
 use serde::{Deserialize, Serialize};
 
-use super::Token;
 use super::shared::Shared;
-use crate::advise::Terms;
-use crate::client::{Address, CallError, post};
-use crate::report::{self, FormError, Schedule, weekly};
-use crate::settle;
+use super::week;
+use super::{TlsError, Token};
+use crate::client::{Address, CallError, Client};
+use crate::report::{self, FormError, Schedule};
 use crate::stopping::luby;
 
 /// How often the clock is looked at.
@@ -36,10 +34,30 @@ const STATE: &str = "weekly-state.json";
 pub struct Runs {
     /// The folder; `weekly` beside the ledger's unless said.
     pub folder: Option<PathBuf>,
-    /// What was settled; read again when it changes. Its times are in force, whatever the policy says.
+    /// The file of what was settled; `settled.yaml` beside the ledger's unless said. Its times are in force, whatever the
+    /// policy says.
     pub settled: Option<PathBuf>,
-    /// Who is told, and the secret by which each message is signed.
-    pub webhook: Option<(Address, Token)>,
+    /// Who is told.
+    pub webhook: Option<Webhook>,
+}
+
+/// Who is told of the week's recommendations.
+#[derive(Clone, Debug)]
+pub struct Webhook {
+    address: Address,
+    /// By which each message is signed.
+    secret: Token,
+    client: Client,
+}
+
+impl Webhook {
+    /// `trust` holds the certificates to trust at an https address, PEM; the system's without.
+    ///
+    /// # Errors
+    /// [`TlsError`] where the file holds none.
+    pub fn new(address: Address, secret: Token, trust: Option<&Path>) -> Result<Webhook, TlsError> {
+        Ok(Webhook { address, secret, client: Client::new(trust, PATIENCE)? })
+    }
 }
 
 /// What was done, as it is kept.
@@ -60,8 +78,6 @@ enum RunError {
     #[error("{}: {source}", path.display())]
     File { path: PathBuf, source: io::Error },
     #[error(transparent)]
-    Settled(#[from] settle::SettledError),
-    #[error(transparent)]
     Form(#[from] FormError),
     #[error("the run cannot be written: {0}")]
     Json(#[from] serde_json::Error),
@@ -70,10 +86,10 @@ enum RunError {
 /// Starts the thread that looks after the schedule.
 pub(super) fn start(shared: Arc<Shared>) -> io::Result<JoinHandle<()>> {
     Builder::new().name("weekly".into()).spawn(move || {
-        let mut keeper = Keeper { shared, seen: None, told: String::new() };
+        let mut keeper = Keeper { shared, told: String::new() };
         while !keeper.shared.is_stopping() {
             std::thread::sleep(NAP);
-            if let Err(error) = keeper.read_settled().and_then(|()| keeper.look()) {
+            if let Err(error) = keeper.look() {
                 keeper.complain(error.to_string());
             }
         }
@@ -82,8 +98,6 @@ pub(super) fn start(shared: Arc<Shared>) -> io::Result<JoinHandle<()>> {
 
 struct Keeper {
     shared: Arc<Shared>,
-    /// The state in which the settled times were read last.
-    seen: Option<(SystemTime, u64)>,
     /// The last trouble told, so that it is told once and not twice a second.
     told: String,
 }
@@ -99,20 +113,6 @@ impl Keeper {
     fn folder(&self) -> PathBuf {
         let config = &self.shared.config;
         config.weekly.folder.clone().unwrap_or_else(|| config.data.join("weekly"))
-    }
-
-    /// Reads what was settled where its file has changed. What cannot be read leaves what was read last.
-    fn read_settled(&mut self) -> Result<(), RunError> {
-        let Some(path) = self.shared.config.weekly.settled.clone() else { return Ok(()) };
-        let failed = |source| RunError::File { path: path.clone(), source };
-        let metadata = fs::metadata(&path).map_err(failed)?;
-        let seen = metadata.modified().ok().map(|modified| (modified, metadata.len()));
-        if seen.is_none() || seen != self.seen {
-            let bytes = fs::read(&path).map_err(failed)?;
-            self.seen = seen;
-            self.shared.set_settled(settle::parse(&bytes, &path.display().to_string())?);
-        }
-        Ok(())
     }
 
     fn look(&mut self) -> Result<(), RunError> {
@@ -174,35 +174,36 @@ impl Keeper {
         }
     }
 
-    /// Writes the run's files; made again, they are the same files.
+    /// Writes the run's files; made again, they are the same files. Its rows go into the ledger, for the next to be held
+    /// against.
     fn run(&self, folder: &Path, due: Date, now: Timestamp) -> Result<(), RunError> {
-        let settled = self.shared.settled().unwrap_or_default();
-        let set = self.shared.advice_set();
-        let policy = self.shared.policy();
-        let past = settled.past(self.shared.now());
-        let terms = Terms { policy: policy.as_deref(), newest: None, seed: 0, past: Some(&past) };
-        let mut week = weekly(&set, &settled, |stream| terms.entry(stream), Some(now));
+        let shared = &self.shared;
+        let mut week = week::at(shared, now, Some(due));
         week.due = Some(due.to_string());
         let json = serde_json::to_string_pretty(&week)? + "\n";
+        let pictures = week::pictures(shared, &week);
         for (form, text) in [
             ("md", report::markdown(&week)),
-            ("html", report::html(&week, &HashMap::new())?),
+            ("html", report::html(&week, &pictures)?),
             ("csv", report::csv(&week)?),
             ("json", json),
         ] {
             put(folder, &format!("weekly-{due}.{form}"), text.as_bytes())?;
         }
+        week::keep(shared, due, &week).unwrap_or_else(
+            |error| tracing::error!(%error, "the week cannot be kept for the next to be held against"),
+        );
         Ok(())
     }
 
     /// Sends a run to the webhook; what fails for now is tried again by the universal schedule.
     fn deliver(&self, folder: &Path, run: &str, state: State, now: f64) -> Result<(), RunError> {
-        let Some((address, secret)) = &self.shared.config.weekly.webhook else {
+        let Some(Webhook { address, secret, client }) = &self.shared.config.weekly.webhook else {
             return keep(folder, &State { pending: None, ..state });
         };
         let path = folder.join(format!("weekly-{run}.json"));
         let body = fs::read(&path).map_err(|source| RunError::File { path, source })?;
-        let sent = post(address, &headers(secret, run, now, &body), &body, PATIENCE);
+        let sent = client.post(address, &headers(secret, run, now, &body), &body);
         let tries = state.tries + 1;
         let pause = (FIRST_PAUSE * luby(tries) as f64).min(LONGEST_PAUSE);
         match sent {
@@ -276,6 +277,6 @@ mod tests {
         let status = |status| is_final(&CallError::Status { status });
         assert!(status(301) && status(307) && status(404) && status(410));
         assert!(!status(500) && !status(503) && !status(429) && !status(408));
-        assert!(!is_final(&io::Error::from(io::ErrorKind::TimedOut).into()));
+        assert!(!is_final(&CallError::from(ureq::Error::ConnectionFailed)));
     }
 }

@@ -12,6 +12,9 @@ use crate::say;
 pub enum Decide {
     /// Put the proposal in force.
     Accept,
+    /// Put in force what was shown as the proposal. It is still one if the proposal has moved by less than a hundredth, or
+    /// the best time's band holds it.
+    AcceptShown(GiveUp),
     /// Put this time in force, whatever is proposed.
     Pin(GiveUp),
     /// Look again then.
@@ -47,6 +50,16 @@ pub enum Refused {
         /// Where the policy says so; may be empty.
         at: String,
     },
+    /// What was shown is no longer what is proposed.
+    #[error("{stream}: {} was shown, and {} is proposed by now", say::exact_duration(*shown), say::exact_duration(*proposed))]
+    Moved {
+        /// The stream.
+        stream: String,
+        /// The time shown, s.
+        shown: f64,
+        /// The time proposed, s.
+        proposed: f64,
+    },
     /// Nothing has been decided yet.
     #[error("{stream}: there is no decision to undo")]
     NothingToUndo {
@@ -74,6 +87,7 @@ impl Refused {
                 "take a step within it and another later, or widen the guard in the policy"
             }
             Refused::Guard { .. } => "choose a time within it, or widen the guard in the policy",
+            Refused::Moved { .. } => "look at what is proposed now, and decide on that",
             Refused::NothingToUndo { .. } => "see `outwait settle STREAM --history`",
             Refused::Past { .. } => "name a later time, or a duration from now (`14d`)",
         }
@@ -98,12 +112,25 @@ pub fn decide(
 ) -> Result<Settlement, Refused> {
     let grounds = advice.map(|advice| grounds(advice, entry));
     let state = match what {
-        Decide::Accept => {
+        Decide::Accept | Decide::AcceptShown(_) => {
             let time = proposed(stream, advice)?;
-            let time = match time {
+            let mut time = match time {
                 GiveUp::After(seconds) => GiveUp::After(round_up(seconds, entry)),
                 GiveUp::Never => GiveUp::Never,
             };
+            if let Decide::AcceptShown(shown) = what {
+                let (shown, proposed) = (shown.seconds(), time.seconds());
+                let band = advice.and_then(|advice| advice.advice.band_s);
+                let good = shown == proposed
+                    || (shown / proposed - 1.0).abs() < 0.01
+                    || band.is_some_and(|[low, high]| (low..=high).contains(&shown));
+                if !good {
+                    return Err(Refused::Moved { stream: stream.to_owned(), shown, proposed });
+                }
+                if shown.is_finite() {
+                    time = GiveUp::After(shown);
+                }
+            }
             within_guards(stream, time, entry, true)?;
             State::Accepted { give_up_after: time }
         }
@@ -124,6 +151,19 @@ pub fn decide(
         }
     };
     Ok(Settlement { state, at, by: by.to_owned(), why: why.to_owned(), grounds })
+}
+
+/// A time to look again at: a time, a date (its beginning, UTC), or a duration from now.
+pub fn ahead(text: &str, now: Timestamp) -> Option<Timestamp> {
+    let span = || {
+        let seconds = say::parse_duration(text).ok().filter(|s| text.parse::<f64>().is_err() && *s > 0.0)?;
+        now.checked_add(jiff::SignedDuration::try_from_secs_f64(seconds).ok()?).ok()
+    };
+    let date = || {
+        let date: jiff::civil::Date = text.parse().ok()?;
+        jiff::tz::Offset::UTC.to_timestamp(date.to_datetime(jiff::civil::Time::midnight())).ok()
+    };
+    text.parse().ok().or_else(span).or_else(date)
 }
 
 /// What an advice puts forward: the next step, or the advised time where none is in force.

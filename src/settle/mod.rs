@@ -14,14 +14,18 @@ use std::collections::BTreeMap;
 use jiff::Timestamp;
 use serde::{Serialize, Serializer};
 
-pub use decide::{Decide, Refused, decide};
+pub use decide::{Decide, Refused, ahead, decide};
 pub(crate) use decide::{proposal, round_up};
 pub use read::{MAX_BYTES, Mistake, SettledError, parse};
-pub use write::insert;
+pub use write::{insert, one};
 
+use crate::advice::Caution;
 use crate::advise::{Before, History, Past};
 use crate::policy::GiveUp;
+use crate::say;
 
+/// Name of the file in a daemon's data folder.
+pub const FILE: &str = "settled.yaml";
 /// Version of the file's form.
 pub const SCHEMA: &str = "outwait/settled/1";
 
@@ -116,6 +120,53 @@ pub struct Settlement {
     pub grounds: Option<Grounds>,
 }
 
+impl Settlement {
+    /// Whether it is the same decision: of the same person, moment and content.
+    pub fn is(&self, other: &Settlement) -> bool {
+        (self.at, self.state, &self.by) == (other.at, other.state, &other.by)
+    }
+
+    /// In words: what, by whom, when and why.
+    pub fn words(&self) -> String {
+        let what = match self.state {
+            State::Accepted { give_up_after } | State::Pinned { give_up_after } => {
+                format!("{} {}", self.state.name(), say::exact_duration(give_up_after.seconds()))
+            }
+            State::Postponed { until } => format!("postponed until {until}"),
+            state => state.name().to_owned(),
+        };
+        let why = if self.why.trim().is_empty() { String::new() } else { format!(": {}", self.why) };
+        format!("{what}, by {} at {}{why}", self.by, self.at)
+    }
+}
+
+/// What was decided, as a command or the daemon tells it.
+#[derive(Clone, Debug, Serialize)]
+pub struct Document<'a> {
+    /// `outwait/settle/1`.
+    pub schema: &'static str,
+    /// A stream each.
+    pub settled: Vec<Told<'a>>,
+}
+
+/// A stream with what was decided.
+#[derive(Clone, Debug, Serialize)]
+pub struct Told<'a> {
+    /// Which waiting process.
+    pub stream: &'a str,
+    /// The decisions, the oldest first.
+    pub decisions: &'a [Settlement],
+    /// What to mind about what was put in force.
+    pub cautions: &'a [Caution],
+}
+
+impl<'a> Document<'a> {
+    /// With its schema.
+    pub fn of(settled: Vec<Told<'a>>) -> Document<'a> {
+        Document { schema: "outwait/settle/1", settled }
+    }
+}
+
 /// What stands for a stream.
 #[derive(Clone, Copy, Debug, Default, PartialEq)]
 pub struct Standing<'a> {
@@ -149,9 +200,29 @@ impl Settled {
         self.streams.get(stream).map(Vec::as_slice).unwrap_or_default()
     }
 
-    /// Adds a decision.
+    /// Adds a decision, after those that are not younger.
     pub fn add(&mut self, stream: &str, settlement: Settlement) {
-        self.streams.entry(stream.to_owned()).or_default().push(settlement);
+        let history = self.streams.entry(stream.to_owned()).or_default();
+        let place = history.partition_point(|known| known.at <= settlement.at);
+        history.insert(place, settlement);
+    }
+
+    /// Whether a decision is in it: of the same person, moment and content. Other words for why make no other decision.
+    pub fn knows(&self, stream: &str, settlement: &Settlement) -> bool {
+        self.history(stream).iter().any(|known| known.is(settlement))
+    }
+
+    /// What another has and this has not, streams by name, the oldest first.
+    pub fn missing<'a>(&self, other: &'a Settled) -> Vec<(&'a str, &'a Settlement)> {
+        let all = other.streams().flat_map(|(stream, history)| history.iter().map(move |one| (stream, one)));
+        all.filter(|(stream, one)| !self.knows(stream, one)).collect()
+    }
+
+    /// What had been decided by then.
+    pub fn by(&self, then: Timestamp) -> Settled {
+        let mut before = self.clone();
+        before.streams.values_mut().for_each(|history| history.retain(|one| one.at <= then));
+        before
     }
 
     /// What stands for a stream.

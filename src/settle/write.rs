@@ -27,6 +27,11 @@ impl Settled {
     }
 }
 
+/// One decision as a file of its own.
+pub fn one(stream: &str, settlement: &Settlement) -> String {
+    format!("schema: {SCHEMA}\nstreams:\n  {}:\n{}", name(stream), item(settlement))
+}
+
 /// A file's text with one more decision. What stands there stays as it is, comments and order included, where it has the
 /// usual shape; else it is written anew, with the same decisions.
 pub fn insert(text: &str, settled: &Settled, stream: &str, settlement: &Settlement) -> String {
@@ -35,12 +40,12 @@ pub fn insert(text: &str, settled: &Settled, stream: &str, settlement: &Settleme
     let anew = whole.text();
     // Only what reads back as meant is kept.
     let meant = parse(anew.as_bytes(), "");
-    let put = put_in(text, settled, stream, &item(settlement));
+    let put = put_in(text, settled, stream, settlement);
     put.filter(|put| parse(put.as_bytes(), "") == meant).unwrap_or(anew)
 }
 
 /// Where the file has one key a line, two spaces in.
-fn put_in(text: &str, settled: &Settled, stream: &str, item: &str) -> Option<String> {
+fn put_in(text: &str, settled: &Settled, stream: &str, settlement: &Settlement) -> Option<String> {
     let lines: Vec<&str> = text.split_inclusive('\n').collect();
     let key = |line: &str| {
         let rest = line.strip_prefix("  ").filter(|rest| !rest.starts_with([' ', '#', '-']))?;
@@ -55,6 +60,14 @@ fn put_in(text: &str, settled: &Settled, stream: &str, item: &str) -> Option<Str
         true => keys.iter().position(|(_, name)| name.as_str() > stream).unwrap_or(keys.len()),
     };
     let mut at = keys.get(after).map_or(lines.len(), |(line, _)| *line);
+    // One that is older than others of its stream goes before them.
+    let younger = settled.history(stream).iter().filter(|known| known.at > settlement.at).count();
+    if younger > 0 {
+        let own = keys.get(after.checked_sub(1)?)?.0;
+        let items = (own..at).filter(|&line| lines[line].starts_with("    - "));
+        at = items.rev().nth(younger - 1)?;
+        return Some(lines[..at].concat() + &item(settlement) + &lines[at..].concat());
+    }
     // Comments and empty lines above a stream are its own.
     while at > 0 && matches!(lines[at - 1].trim_start().chars().next(), None | Some('#')) && at > 2 {
         at -= 1;
@@ -66,7 +79,7 @@ fn put_in(text: &str, settled: &Settled, stream: &str, item: &str) -> Option<Str
     if settled.history(stream).is_empty() {
         let _ = writeln!(put, "  {}:", name(stream));
     }
-    Some(put + item + &lines[at..].concat())
+    Some(put + &item(settlement) + &lines[at..].concat())
 }
 
 /// One decision.

@@ -71,6 +71,18 @@ impl Book {
         }
     }
 
+    /// Files what was counted of a stream on a day.
+    ///
+    /// # Errors
+    /// [`StreamError`] if the name is new and not allowed; nothing is filed then.
+    pub fn merge_day(&mut self, stream: &str, day: Day, tally: &Tally) -> Result<(), StreamError> {
+        if !self.streams.contains_key(stream) {
+            check_stream(stream)?;
+        }
+        self.streams.entry(stream.to_owned()).or_default().merge_day(day, tally);
+        Ok(())
+    }
+
     /// Streams in the order of their names.
     pub fn streams(&self) -> Vec<(&str, &Days)> {
         let mut all: Vec<_> = self.streams.iter().map(|(name, days)| (name.as_str(), days)).collect();

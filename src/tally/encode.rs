@@ -384,6 +384,9 @@ fn decode_buckets(bytes: &mut Bytes<'_>, coarse: bool) -> Result<Buckets, Decode
                 counts[ending as usize] = bytes.varint()?;
             }
         }
+        if (0..4).any(|i| (counts[i] == 0) == (mask & 1 << i != 0)) {
+            return Err(BAD);
+        }
         buckets.counts.insert((over, upto), counts);
     }
     Ok(buckets)

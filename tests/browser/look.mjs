@@ -34,6 +34,7 @@ const pages = [
   ["none", "/?name=nothing-like-it"],
   ["stream", "/stream/catalogue.lookup?give_up_after=200ms"],
   ["long", "/stream/lender.reply"],
+  ["week", "/week"],
   ["open", "/open"],
   ["health", "/how-it-is"],
   ["problem", "/stream/nobody"],
@@ -131,6 +132,64 @@ for (const colorScheme of ["light", "dark"]) {
   assert.equal(await page.locator("#slide").isVisible(), false);
   await page.goto(`${origin}/open`);
   assert.equal(await page.locator("#pause").isVisible(), false);
+  await page.context().close();
+}
+
+// A decision without a script: what is missing is told, what is against a guard is told, what is well is taken, and whoever
+// comes too late is told what was decided meanwhile. Looked at with its history.
+{
+  const page = await watched({ javaScriptEnabled: false, viewport: { width: 1024, height: 800 } }, "decide");
+  const late = await watched({ javaScriptEnabled: false, viewport: { width: 1024, height: 800 } }, "late");
+  await page.goto(`${origin}/stream/catalogue.lookup`);
+  await late.goto(`${origin}/stream/catalogue.lookup`);
+  const decide = async (who, kind, why) => {
+    await who.check(`input[name=decision][value=${kind}]`);
+    await who.fill("#by", "Ada");
+    await who.fill("#why", why);
+    await who.click("text=Sign it");
+  };
+  page.expected = late.expected = true;
+  await page.fill("#pin", "1ms");
+  await decide(page, "pin", "too short");
+  assert.match(await page.locator(".settle .wrong").innerText(), /guard: floor/);
+  assert.equal(await page.inputValue("#pin"), "1ms");
+  await page.screenshot({ path: join(shots, "refused-light-1024.png"), fullPage: true });
+  await decide(page, "accept", "agreed on Monday");
+  assert.match(page.url(), /\/stream\/catalogue\.lookup#settle-it$/);
+  assert.match(await page.locator("section.settle").innerText(), /In force: 400 ms\. Ada accepted 400 ms: agreed on Monday/);
+  await decide(late, "refuse", "not now");
+  assert.match(await late.locator(".settle .wrong").innerText(), /was decided on meanwhile: accepted 400ms, by Ada/);
+  assert.equal(await page.locator(".past .word").count(), 1);
+  await page.screenshot({ path: join(shots, "decided-light-1024.png"), fullPage: true });
+  await decide(page, "undo", "too many retries");
+  assert.match(await page.locator("section.settle").innerText(), /In force by the policy: 800 ms/);
+  await page.context().close();
+  await late.context().close();
+}
+
+// The week, signed in one go.
+{
+  const page = await watched({ viewport: { width: 1024, height: 800 } }, "sign the week");
+  await page.goto(`${origin}/week`);
+  const rows = await page.locator("ol.road > li").count();
+  assert.ok(rows > 1);
+  page.expected = true;
+  await page.fill("#by", "Ada");
+  await page.fill("#why", "agreed on Monday");
+  await page.press("#why", "Enter");
+  assert.match(await page.locator("[role=alert]").innerText(), /Nothing is ticked/);
+  await page.check("ol.road li:nth-child(2) input[type=checkbox]");
+  await page.click("text=Sign those ticked");
+  assert.match(await page.locator("[role=status]").innerText(), /One is signed/);
+  await page.fill("#by", "Ada");
+  await page.fill("#why", "agreed on Monday");
+  await page.click("text=/Sign all/");
+  await page.screenshot({ path: join(shots, "signed-light-1024.png"), fullPage: true });
+  assert.match(await page.locator("[role=status]").innerText(), /signed and in force/);
+  page.expected = false;
+  const [download] = await Promise.all([page.waitForEvent("download"), page.click("a[href='/v1/weekly?form=html']")]);
+  const document = readFileSync(await download.path(), "utf8");
+  assert.ok(document.startsWith("<!DOCTYPE html>") && document.includes("Give-up times"));
   await page.context().close();
 }
 

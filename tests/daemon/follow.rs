@@ -13,7 +13,8 @@ use rand_xoshiro::Xoshiro256PlusPlus;
 
 use crate::client::get;
 use crate::house::{House, until};
-use crate::kills::{Process, age, counted};
+use crate::kills::{age, counted};
+use crate::process::Process;
 
 /// A log that is written to and rotated, a line a wait of its own age.
 struct Log {

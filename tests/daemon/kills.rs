@@ -1,10 +1,9 @@
 //! The process killed at any moment under load: what it acknowledged is there, once.
 
 use std::collections::HashMap;
-use std::io::{BufRead, BufReader};
 use std::net::{SocketAddr, TcpStream};
 use std::path::Path;
-use std::process::{Child, Command, Stdio};
+use std::process::Command;
 use std::sync::atomic::{AtomicBool, AtomicU64, Ordering};
 use std::time::Duration;
 
@@ -12,47 +11,7 @@ use rand::{RngExt, SeedableRng};
 use rand_xoshiro::Xoshiro256PlusPlus;
 
 use crate::client::{get, read_answer, write_request};
-
-/// A daemon in a process of its own, on a free port.
-pub(crate) struct Process {
-    child: Child,
-    address: SocketAddr,
-}
-
-impl Process {
-    fn start(folder: &Path) -> Process {
-        Process::with(folder, &[])
-    }
-
-    pub(crate) fn with(folder: &Path, arguments: &[&str]) -> Process {
-        let mut child = Command::new(env!("CARGO_BIN_EXE_outwait"))
-            .args(["serve", "--listen", "127.0.0.1:0", "--log", "json", "--data"])
-            .arg(folder)
-            .args(arguments)
-            .env_remove("OUTWAIT_POLICY")
-            .stderr(Stdio::piped())
-            .stdout(Stdio::null())
-            .spawn()
-            .unwrap();
-        let mut lines = BufReader::new(child.stderr.take().unwrap()).lines();
-        let address = lines
-            .by_ref()
-            .map_while(Result::ok)
-            .find_map(|line| {
-                let log: serde_json::Value = serde_json::from_str(&line).ok()?;
-                log["address"].as_str()?.strip_prefix("http://")?.parse().ok()
-            })
-            .expect("the daemon says where it listens");
-        // Nobody must wait for a reader of the log.
-        std::thread::spawn(move || lines.for_each(drop));
-        Process { child, address }
-    }
-
-    pub(crate) fn kill(mut self) {
-        self.child.kill().unwrap();
-        self.child.wait().unwrap();
-    }
-}
+use crate::process::Process;
 
 /// Batch `number` holds 1 to 20 waits of one age of its own, so that it is known again among all others; a thousand of
 /// them go to one stream, few enough for its tally to keep every age exactly.
@@ -157,14 +116,9 @@ fn killed_at_any_moment_under_load_it_counts_once() {
 #[test]
 fn it_ends_gracefully_when_asked() {
     let folder = tempfile::tempdir().unwrap();
-    let mut process = Process::start(folder.path());
+    let process = Process::start(folder.path());
     assert_eq!(send(process.address, 4), Some(5));
-    // By its own process id.
-    assert!(
-        Command::new("kill").args(["-TERM", &process.child.id().to_string()]).status().unwrap().success()
-    );
-    let status = process.child.wait().unwrap();
-    assert_eq!(status.code(), Some(0));
+    assert_eq!(process.stop().code(), Some(0));
     assert_eq!(counted(folder.path()), HashMap::from([(4, 5)]));
     let check = Command::new(env!("CARGO_BIN_EXE_outwait"))
         .args(["ledger", "check", "--data"])
@@ -197,7 +151,7 @@ fn a_second_one_on_the_same_folder_refuses() {
         .unwrap();
     assert_eq!(second.status.code(), Some(5));
     let error = String::from_utf8_lossy(&second.stderr);
-    assert!(error.contains(&first.child.id().to_string()) && error.contains("in use"), "{error}");
+    assert!(error.contains(&first.id().to_string()) && error.contains("in use"), "{error}");
     assert_eq!(send(first.address, 1), Some(2));
     first.kill();
 }

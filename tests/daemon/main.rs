@@ -10,5 +10,8 @@ mod house;
 mod kills;
 mod metrics;
 mod openapi;
+mod otlp;
+#[path = "../support/process.rs"]
+mod process;
 mod security;
 mod weekly;

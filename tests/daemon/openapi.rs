@@ -1,5 +1,6 @@
 //! The description of the interface is true of the handlers: OpenAPI 3.1 (spec.openapis.org/oas/v3.1.0).
 
+use outwait::serve::Signing;
 use serde_json::Value;
 
 use crate::client::{ask, get, post};
@@ -62,7 +63,7 @@ fn check(document: &Value, schema: &Value, value: &Value, at: &str) {
 
 #[test]
 fn every_described_path_answers_as_described() {
-    let house = House::new();
+    let house = House::with(|config| config.signing = Signing::Anyone);
     post(house.address, courier("courier.slot", 2_000).as_bytes());
     post(house.address, b"{\"stream\":\"courier.slot\",\"id\":\"a\",\"started\":1796039990}\n");
     until("advice", || Some(()).filter(|()| get(house.address, "/v1/advice/courier.slot").status == 200));
@@ -70,9 +71,13 @@ fn every_described_path_answers_as_described() {
     assert_eq!(document["openapi"], "3.1.0");
     for (path, operations) in document["paths"].as_object().unwrap() {
         for (method, operation) in operations.as_object().unwrap() {
+            // A body of the description's own, else a wait.
+            let example =
+                operation.pointer("/requestBody/content/application~1json/example").map(Value::to_string);
+            let body = example.as_deref().unwrap_or(r#"{"stream":"desk.loan","elapsed":1.5}"#).as_bytes();
             let (method, body): (_, &[u8]) = match method.as_str() {
                 "get" => ("GET", b""),
-                "post" => ("POST", br#"{"stream":"desk.loan","elapsed":1.5}"#),
+                "post" => ("POST", body),
                 other => panic!("{other}"),
             };
             let mut target = path.replace("{stream}", "courier.slot");
@@ -81,7 +86,17 @@ fn every_described_path_answers_as_described() {
                     target += &format!("?{}=20s", parameter["name"].as_str().unwrap());
                 }
             }
-            let answer = ask(house.address, method, &target, &[], body);
+            if path == "/open/live" {
+                // It has no end: tests/page reads its first event.
+                let wrong = get(house.address, "/open/live?nonsense=1");
+                assert_eq!(wrong.status, 400);
+                continue;
+            }
+            // Requests of OTLP have a form of their own, and so have their errors.
+            let telemetry = matches!(path.as_str(), "/v1/traces" | "/v1/metrics");
+            let (headers, body): (&[(&str, &str)], &[u8]) =
+                if telemetry { (&[("Content-Type", "application/json")], b"{}") } else { (&[], body) };
+            let answer = ask(house.address, method, &target, headers, body);
             assert_eq!(answer.status, 200, "{target}: {}", answer.text());
             let content = operation["responses"]["200"]["content"].as_object().unwrap();
             let kind = answer.header("content-type").unwrap().split(';').next().unwrap();
@@ -94,11 +109,12 @@ fn every_described_path_answers_as_described() {
                 house.address,
                 method,
                 &format!("{target}{}nonsense=1", if target.contains('?') { '&' } else { '?' }),
-                &[],
+                headers,
                 body,
             );
             if wrong.status >= 400 {
-                let problem = &document["components"]["schemas"]["Problem"];
+                let problem =
+                    &document["components"]["schemas"][if telemetry { "RpcStatus" } else { "Problem" }];
                 check(&document, problem, &wrong.json(), &target);
                 assert!(
                     operation["responses"][wrong.status.to_string()].is_object(),

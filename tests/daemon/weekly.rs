@@ -5,7 +5,7 @@ use std::io::Write;
 use std::net::{SocketAddr, TcpListener};
 use std::path::Path;
 
-use outwait::serve::{Config, PolicyFile, read_token};
+use outwait::serve::{Config, PolicyFile, Webhook, read_token};
 
 use crate::client::{get, post};
 use crate::house::{House, NOON, courier, until};
@@ -24,8 +24,10 @@ fn setting(folder: &Path, webhook: Option<SocketAddr>) -> impl FnOnce(&mut Confi
     move |config| {
         config.policy = PolicyFile::at(policy);
         config.weekly.folder = Some(runs);
-        let address = |to: SocketAddr| format!("http://{to}/hook").parse().unwrap();
-        config.weekly.webhook = webhook.map(|to| (address(to), read_token(&secret).unwrap()));
+        config.weekly.webhook = webhook.map(|to| {
+            let address = format!("http://{to}/hook").parse().unwrap();
+            Webhook::new(address, read_token(&secret).unwrap(), None).unwrap()
+        });
     }
 }
 
@@ -95,19 +97,24 @@ fn a_webhook_that_is_down_is_told_later_and_a_redirect_is_not_followed() {
             request.push(byte[0]);
         }
         let head = String::from_utf8(request).unwrap();
-        let field = |name: &str| head.lines().find_map(|l| l.strip_prefix(name)).unwrap().trim().to_owned();
-        let mut body = vec![0; field("Content-Length:").parse().unwrap()];
+        let field = |name: &str| {
+            let named = |line: &str| {
+                line.split_once(": ").filter(|(n, _)| n.eq_ignore_ascii_case(name)).map(|(_, v)| v.to_owned())
+            };
+            head.lines().find_map(named).unwrap()
+        };
+        let mut body = vec![0; field("Content-Length").parse().unwrap()];
         std::io::Read::read_exact(&mut stream, &mut body).unwrap();
         write!(stream, "HTTP/1.1 {status}\r\nContent-Length: 0\r\nLocation: http://{to}/other\r\n\r\n")
             .unwrap();
-        assert!(head.starts_with("POST /hook HTTP/1.0\r\n"), "{head}");
+        assert!(head.starts_with("POST /hook HTTP/1.1\r\n"), "{head}");
         let key = ring::hmac::Key::new(ring::hmac::HMAC_SHA256, b"correct-horse-battery");
-        let signed = [field("Outwait-Time:").as_bytes(), b".", &body].concat();
+        let signed = [field("Outwait-Time").as_bytes(), b".", &body].concat();
         let tag: String =
             ring::hmac::sign(&key, &signed).as_ref().iter().map(|b| format!("{b:02x}")).collect();
-        assert_eq!(field("Outwait-Signature:"), format!("sha256={tag}"));
+        assert_eq!(field("Outwait-Signature"), format!("sha256={tag}"));
         assert!(body.starts_with(b"{"));
-        field("Outwait-Delivery:")
+        field("Outwait-Delivery")
     };
     house.set_clock(NOON + 7.0 * DAY);
     assert_eq!(answer("503 Service Unavailable"), "weekly-2026-12-07");

@@ -154,3 +154,10 @@ fn a_later_version_is_named() {
     long.push(0);
     assert_eq!(Tally::decode(&long), Err(DecodeError::Trailing));
 }
+
+/// A bucket that names an ending of which it holds none: nothing writes it, so nothing reads it.
+#[test]
+fn a_bucket_of_none_is_refused() {
+    let bytes = [1, 0, 32, 1, 1, 255, 255, 255, 255, 255, 255, 255, 255, 32, 1, 0];
+    assert_eq!(Tally::decode(&bytes), Err(DecodeError::Impossible { what: "bucket" }));
+}

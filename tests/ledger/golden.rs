@@ -6,7 +6,8 @@
 use std::path::{Path, PathBuf};
 
 use outwait::ledger::{
-    Batch, Digest, Hour, Ledger, Options, Period, Reader, SqliteLedger, SqliteReader, Tie,
+    Batch, Digest, Hour, Ledger, Options, Period, Reader, Record, Records, Shelf, SqliteLedger, SqliteReader,
+    Tie,
 };
 use outwait::tally::Tally;
 use outwait::wait::{Ending, Wait};
@@ -135,6 +136,8 @@ fn a_ledger_of_version_1() {
     let reader = SqliteReader::attach(folder.path()).unwrap();
     assert_same(&reader);
     assert_eq!(reader.check().unwrap(), []);
+    // It knows of no records, until it is opened for writing.
+    assert_eq!(reader.records(Shelf::Decisions, None).unwrap(), Records::default());
     drop(reader);
     let mut ledger = SqliteLedger::open(folder.path(), options).unwrap();
     assert_same(&ledger);
@@ -147,4 +150,13 @@ fn a_ledger_of_version_1() {
     let receipt = ledger.commit(&again, NOON + 2.5 * DAY).unwrap();
     assert!(receipt.batches.iter().all(|batch| batch.as_ref().unwrap().repeated));
     assert_same(&ledger);
+    let mut batch = Batch::default();
+    let record = Record { shelf: Shelf::Decisions, subject: "desk.loan".into(), number: 0, text: "x".into() };
+    batch.note(record.clone()).unwrap();
+    assert!(ledger.commit(&[batch], NOON + 2.5 * DAY).unwrap().batches[0].is_ok());
+    drop(ledger);
+    let reader = SqliteReader::attach(folder.path()).unwrap();
+    assert_same(&reader);
+    assert_eq!(reader.records(Shelf::Decisions, None).unwrap().records, [record]);
+    assert_eq!(reader.check().unwrap(), []);
 }

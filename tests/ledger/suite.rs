@@ -5,7 +5,7 @@ use std::path::Path;
 
 use outwait::ledger::{
     Batch, BatchError, Digest, Entry, Hour, Ledger, MAX_ID_BYTES, MAX_KEY_BYTES, MemoryLedger, Options,
-    Period, SqliteLedger, Tie, export,
+    Period, Record, Shelf, SqliteLedger, Tie, export,
 };
 use outwait::tally::Tally;
 use outwait::wait::{Ending, Wait};
@@ -556,4 +556,86 @@ fn long_waits_are_at_risk_in_every_day_they_span() {
         export(&*reader, &mut text).unwrap();
         assert!(String::from_utf8(text).unwrap().lines().count() >= 3);
     }
+}
+
+fn record(shelf: Shelf, subject: &str, number: i64, text: &str) -> Record {
+    Record { shelf, subject: subject.into(), number, text: text.into() }
+}
+
+fn noted(records: &[Record]) -> Batch {
+    let mut batch = Batch::default();
+    records.iter().for_each(|record| batch.note(record.clone()).unwrap());
+    batch
+}
+
+#[test]
+fn records_are_kept_word_for_word_and_decisions_for_good() {
+    for mut house in House::both(&Options::default()) {
+        let first = record(Shelf::Decisions, "desk", 0, "accepted\n\u{1f512}");
+        let other = record(Shelf::Decisions, "desk", 1, "pinned");
+        let elsewhere = record(Shelf::Decisions, "desk/b", 0, "");
+        house.commit(noted(&[first.clone(), elsewhere.clone()]), NOON).unwrap();
+        // The same again is the same; another in its place is refused, and all that came with it.
+        house.commit(noted(std::slice::from_ref(&first)), NOON).unwrap();
+        let mut taken = noted(&[other.clone(), record(Shelf::Decisions, "desk", 0, "refused")]);
+        taken.merge("desk", Hour::of(NOON), &Tally::default()).unwrap();
+        let refused = house.commit(taken, NOON);
+        assert_eq!(refused, Err(BatchError::Taken { subject: "desk".into(), number: 0 }));
+        // Of two in one group the first is taken.
+        let rival = record(Shelf::Decisions, "desk", 1, "refused");
+        let group = [noted(std::slice::from_ref(&other)), noted(&[rival])];
+        let outcome = house.ledger().commit(&group, NOON).unwrap().batches;
+        assert_eq!((outcome[0].is_ok(), outcome[1].is_ok()), (true, false));
+        // Days and weeks give way to later ones.
+        let day = Hour::of(NOON).day();
+        house.commit(noted(&[record(Shelf::Days, "desk", day.into(), "a")]), NOON).unwrap();
+        let later = record(Shelf::Days, "desk", day.into(), "b");
+        house.commit(noted(&[later.clone(), record(Shelf::Weeks, "", day.into(), "w")]), NOON).unwrap();
+        for _ in 0..2 {
+            let ledger = house.ledger();
+            let read = |shelf, subject| ledger.records(shelf, subject).unwrap();
+            assert_eq!(read(Shelf::Decisions, Some("desk")).records, [first.clone(), other.clone()]);
+            assert_eq!(
+                read(Shelf::Decisions, None).records,
+                [first.clone(), other.clone(), elsewhere.clone()]
+            );
+            assert_eq!(read(Shelf::Days, None).records, [later.clone()]);
+            assert_eq!(read(Shelf::Weeks, Some("")).records.len(), 1);
+            assert_eq!(read(Shelf::Days, Some("none")), Default::default());
+            house.reopen();
+        }
+    }
+}
+
+#[test]
+fn days_and_weeks_go_with_the_waits_and_decisions_stay() {
+    for mut house in House::both(&Options { keep_for: 3.0 * DAY, ..Options::default() }) {
+        let day = i64::from(Hour::of(NOON).day());
+        let mut batch = one("desk", 1.0, NOON);
+        for (shelf, subject) in [(Shelf::Decisions, "desk"), (Shelf::Days, "desk"), (Shelf::Weeks, "")] {
+            for number in [day, day + 3] {
+                batch.note(record(shelf, subject, number, "x")).unwrap();
+            }
+        }
+        house.commit(batch, NOON).unwrap();
+        house.commit(one("desk", 1.0, NOON + 3.0 * DAY), NOON).unwrap();
+        house.run(NOON, NOON + 4.5 * DAY);
+        let ledger = house.ledger();
+        let numbers = |shelf| {
+            let read = ledger.records(shelf, None).unwrap();
+            read.records.iter().map(|record| record.number - day).collect::<Vec<_>>()
+        };
+        assert_eq!(numbers(Shelf::Decisions), [0, 3]);
+        assert_eq!((numbers(Shelf::Days), numbers(Shelf::Weeks)), (vec![3], vec![3]));
+    }
+}
+
+#[test]
+fn records_have_limits() {
+    let long = "x".repeat(outwait::ledger::MAX_SUBJECT_BYTES + 1);
+    assert!(Batch::default().note(record(Shelf::Days, &long, 0, "")).is_err());
+    let text = "x".repeat(outwait::ledger::MAX_RECORD_BYTES + 1);
+    let mut batch = Batch::default();
+    assert!(batch.note(record(Shelf::Days, "a", 0, &text)).is_err());
+    assert!(batch.is_empty());
 }

@@ -7,5 +7,6 @@ mod client;
 #[path = "../daemon/house.rs"]
 mod house;
 
+mod deciding;
 mod pages;
 mod signing;

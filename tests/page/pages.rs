@@ -98,7 +98,7 @@ fn one_stream_from_finding_to_evidence() {
     assert!(stream.contains("not after 60.0 s: that loses"), "{stream}");
     // Four pictures, each for two widths, with its words and its numbers.
     assert_eq!(stream.matches("class=\"ow\"").count(), 8);
-    assert_eq!(stream.matches("<details>").count(), 4);
+    assert_eq!(stream.matches("<details>").count(), 5);
     for word in ["advised", "in force", "never", "Families of laws", "What to mind", "Retries among them"] {
         assert!(stream.contains(word), "{word}");
     }

@@ -45,7 +45,7 @@ fn one_signs_in_and_out() {
     assert!(!cookie.contains(SECRET));
     let cookie = cookie.split(';').next().unwrap().to_owned();
     let with = |path: &str, cookie: &str| ask(house.address, "GET", path, &[("Cookie", cookie)], b"").status;
-    for path in ["/", "/open", "/how-it-is", "/v1/advice", "/metrics"] {
+    for path in ["/", "/week", "/open", "/how-it-is", "/v1/advice", "/metrics"] {
         assert_eq!(
             (with(path, &cookie), with(path, "outwait="), with(path, "a=b")),
             (200, 401, 401),

@@ -8,7 +8,7 @@ use super::text;
 use crate::advice::Caution;
 use crate::audit::queue::CurveSummary;
 use crate::audit::{AuditSet, DAYS, Lost, StreamAudit, Unit};
-use crate::chart::{self, Ages, Frame, Marks, Point, Quantity, Svg};
+use crate::chart::{self, Ages, Marks, Point, Quantity, Svg};
 
 const PAGE: &str = include_str!("page.html");
 /// Streams that get pictures: those with the most time waited past the advice. A picture weighs some ten kilobytes.
@@ -150,7 +150,7 @@ fn pictures(s: &StreamAudit, number: usize) -> Vec<Picture> {
     let week = |what: &str, quantity: Quantity<'_>, prefix: &str, of: &dyn Fn(&Lost) -> f64| {
         let hours = by_hour(s, of);
         let input = chart::Week { stream: &s.stream, what, quantity, hours: &hours, zone: "UTC" };
-        chart::week(&input, &Frame { width: WIDTH, prefix, styled: false })
+        chart::at_both_widths(WIDTH, prefix, |frame| chart::week(&input, frame))
     };
     // Fewer hours than a day has show no rhythm.
     if s.closed.by_hour.len() >= 12 {
@@ -198,7 +198,7 @@ fn survival(title: &str, waits: u64, curve: &CurveSummary, prefix: &str) -> Svg 
         level: 0.9,
         marks: Marks::default(),
     };
-    chart::waiting(&input, &Frame { width: WIDTH, prefix, styled: false })
+    chart::at_both_widths(WIDTH, prefix, |frame| chart::waiting(&input, frame))
 }
 
 /// Monday first; NaN where no wait ended.

@@ -8,7 +8,7 @@ use rusqlite::{Connection, Result};
 
 use super::read::{name_flaw, open_tally, period, set_aside};
 use super::{entry, fault, is_damage, read_lock};
-use crate::ledger::{Damage, Hour, LedgerError, Reader, SqliteReader};
+use crate::ledger::{Damage, Hour, LedgerError, Reader, Shelf, SqliteReader};
 use crate::tally::Tally;
 
 impl SqliteReader {
@@ -32,6 +32,9 @@ impl SqliteReader {
         };
         if let Err(error) = log.and_then(|()| entries_set_aside(&self.db, &mut damage)) {
             damage.push(Damage::File { flaw: kept(error)? });
+        }
+        for shelf in Shelf::ALL {
+            damage.extend(self.records(shelf, None)?.damage);
         }
         for stream in self.streams()? {
             let id = read_lock(&self.live).id(&stream);

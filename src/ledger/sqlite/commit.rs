@@ -7,11 +7,13 @@ use rusqlite::{Connection, OptionalExtension, Result, Row, Transaction, Transact
 
 use super::live::{Live, Place};
 use super::read::key_count;
-use super::seal::checksum;
+use super::seal::{checksum, record_seal};
 use super::{Queued, SqliteLedger, entry, positions, read_lock, write_lock};
 use crate::ledger::batch::{EventKey, Hours};
+use crate::ledger::grow::{self, Known};
 use crate::ledger::open::{self, Filed, State};
-use crate::ledger::{Batch, BatchError, Digest, Entry, Hour, Options, Position, Receipt};
+use crate::ledger::{Batch, BatchError, Digest, Entry, Hour, Options, Position, Receipt, Record, Shelf};
+use crate::running::{Mark, SeriesKey};
 use crate::tally::{self, Tally};
 use crate::wait::Ending;
 
@@ -27,8 +29,12 @@ struct Plan<'b> {
     joined: usize,
     bad_lines: BTreeMap<&'b str, u64>,
     positions: BTreeMap<&'b str, Position>,
+    marks: HashMap<SeriesKey, Mark>,
+    /// Of these, those of series that had none.
+    new_marks: usize,
     keys: HashMap<&'b str, Digest>,
     key_order: Vec<&'b str>,
+    records: HashMap<(Shelf, &'b str, i64), &'b str>,
 }
 
 /// A stream that waits go to: its id, and its place if it has one already.
@@ -36,6 +42,14 @@ struct Plan<'b> {
 struct Target {
     id: i64,
     place: Option<Place>,
+}
+
+/// What the ledger holds before a group is filed.
+#[derive(Clone, Copy)]
+struct Held<'l> {
+    live: &'l Live,
+    next_stream: i64,
+    marks: usize,
 }
 
 impl SqliteLedger {
@@ -46,7 +60,8 @@ impl SqliteLedger {
             let live = read_lock(&self.live);
             let mut plan = Plan { singles: live.singles, joined: live.joined, ..Plan::default() };
             for batch in batches {
-                let outcome = plan.admit(&tx, &live, batch, &self.options, self.next_stream, time)?;
+                let held = Held { live: &live, next_stream: self.next_stream, marks: self.marks };
+                let outcome = plan.admit(&tx, held, batch, &self.options, time, now)?;
                 plan.outcomes.push(outcome);
             }
             plan
@@ -57,6 +72,8 @@ impl SqliteLedger {
         plan.write_events(&tx, &read_lock(&self.live), self.options.most_open)?;
         plan.write_bad_lines(&tx, Hour::of(now))?;
         positions::write(&tx, &plan.positions)?;
+        plan.write_records(&tx)?;
+        plan.write_marks(&tx, time)?;
         let (mut due, mut credit, mut appended) = (0, self.credit, None);
         let mut entry = entry::Writer::new();
         plan.tallies.iter().for_each(|(target, hour, tally)| entry.add(target.id, *hour, tally));
@@ -85,6 +102,7 @@ impl SqliteLedger {
         live.log_bytes += appended.map_or(0, |(_, length)| length);
         (live.singles, live.joined) = (plan.singles, plan.joined);
         self.next_stream = self.next_stream.saturating_add(plan.names.len() as i64);
+        self.marks += plan.new_marks;
         for (name, id) in plan.names {
             live.insert(name.into(), id);
         }
@@ -104,12 +122,13 @@ impl<'b> Plan<'b> {
     fn admit(
         &mut self,
         db: &Connection,
-        live: &Live,
+        held: Held<'_>,
         batch: &'b Batch,
         options: &Options,
-        next_stream: i64,
         time: f64,
+        now: f64,
     ) -> Result<Result<Entry, BatchError>> {
+        let Held { live, next_stream, marks } = held;
         if let Some((key, digest)) = &batch.key {
             let known = match self.keys.get(&**key) {
                 Some(known) => Some(*known),
@@ -123,11 +142,26 @@ impl<'b> Plan<'b> {
                 Some(_) => return Ok(Err(BatchError::KeyReused { key: key.to_string() })),
             }
         }
+        let mut noted: HashMap<_, &str> = HashMap::new();
+        for record in &batch.records {
+            let (shelf, subject, number) = record.place();
+            let earlier = noted.get(&record.place()).or(self.records.get(&record.place())).copied();
+            let is_taken = shelf.is_final()
+                && match earlier {
+                    Some(text) => *text != *record.text,
+                    None => is_taken(db, record)?,
+                };
+            if is_taken {
+                return Ok(Err(BatchError::Taken { subject: subject.to_owned(), number }));
+            }
+            noted.insert(record.place(), &record.text);
+        }
         // One look-up for each stream: with many streams each is a walk through cold memory.
         let known: Vec<_> =
             batch.streams.iter().map(|(name, hours)| (name, hours, live.find(name))).collect();
         let unknown = known.iter().filter(|(_, _, found)| found.is_none()).map(|(name, _, _)| &***name);
         let awaited = batch.events.iter().map(|event| &*event.key.stream);
+        let awaited = awaited.chain(batch.running.iter().map(|running| &*running.stream));
         let new: HashSet<&str> = unknown
             .chain(awaited.filter(|name| live.find(name).is_none()))
             .filter(|name| !self.names.contains_key(name))
@@ -142,6 +176,13 @@ impl<'b> Plan<'b> {
         if outcome.singles > 0 && self.singles + outcome.singles as usize > options.most_open {
             return Ok(Err(BatchError::TooManyOpen { limit: options.most_open }));
         }
+        let grown = grow::settle(&batch.running, now, |key| match self.marks.get(key) {
+            Some(mark) => Ok(Some(Known::Mark(mark.clone()))),
+            None => find_mark(db, key),
+        })?;
+        if grown.new > 0 && marks + self.new_marks + grown.new > options.most_series {
+            return Ok(Err(BatchError::TooManySeries { limit: options.most_series }));
+        }
         let first = self.names.len() as i64;
         let ids = (first..).map(|i| next_stream.saturating_add(i));
         self.names.extend(new.into_iter().zip(ids));
@@ -155,12 +196,19 @@ impl<'b> Plan<'b> {
                 tally::file(wait, at, joined.entry(target).or_default());
             }
         }
+        for (name, hours) in grown.streams {
+            let Some(target) = self.target(live.find(name), name) else { continue };
+            self.tallies.extend(hours.0.into_iter().map(|(hour, tally)| (target, hour, Cow::Owned(tally))));
+        }
+        self.marks.extend(grown.marks);
+        self.new_marks += grown.new;
         for (target, hours) in joined {
             self.tallies.extend(hours.0.into_iter().map(|(hour, tally)| (target, hour, Cow::Owned(tally))));
         }
         self.singles = self.singles.saturating_add_signed(outcome.singles as isize);
         self.joined = self.joined.saturating_add_signed(outcome.joined as isize);
         self.events.extend(outcome.changed);
+        self.records.extend(noted);
         for (reason, lines) in &batch.bad_lines {
             let sum = self.bad_lines.entry(reason).or_default();
             *sum = sum.saturating_add(*lines);
@@ -171,7 +219,8 @@ impl<'b> Plan<'b> {
             self.key_order.push(key);
         }
         let joined = outcome.waits.len() as u64;
-        Ok(Ok(Entry { repeated: false, joined, again: outcome.again, refused: outcome.refused }))
+        let (again, refused) = (outcome.again, outcome.refused);
+        Ok(Ok(Entry { repeated: false, joined, again, refused, grown: grown.waits, resets: grown.resets }))
     }
 
     /// Puts the tallies in the order of their streams, in which memory is walked through fastest, now and when the
@@ -257,6 +306,30 @@ impl<'b> Plan<'b> {
         write_count(db, "joined", self.joined)
     }
 
+    fn write_records(&self, db: &Connection) -> Result<()> {
+        let mut insert = db.prepare_cached(
+            "INSERT INTO records (shelf, subject, number, seal, text) VALUES (?1, ?2, ?3, ?4, ?5)
+             ON CONFLICT (shelf, subject, number) DO UPDATE SET seal = excluded.seal, text = excluded.text",
+        )?;
+        for ((shelf, subject, number), text) in &self.records {
+            let seal = record_seal(shelf.code(), subject, *number, text.as_bytes());
+            insert.execute(params![shelf.code(), subject, number, seal, text])?;
+        }
+        Ok(())
+    }
+
+    fn write_marks(&self, db: &Connection, time: f64) -> Result<()> {
+        if self.marks.is_empty() {
+            return Ok(());
+        }
+        let mut insert = db.prepare_cached("INSERT OR REPLACE INTO marks VALUES (?1, ?2, ?3, ?4)")?;
+        for (key, mark) in &self.marks {
+            let bytes = mark.encode();
+            insert.execute(params![key.0, time, checksum(&place(key), &bytes), bytes])?;
+        }
+        Ok(())
+    }
+
     fn write_bad_lines(&self, db: &Connection, hour: Hour) -> Result<()> {
         let mut insert = db.prepare_cached(
             "INSERT INTO bad_lines VALUES (?1, ?2, ?3) ON CONFLICT (hour, reason) DO UPDATE SET lines =
@@ -269,10 +342,36 @@ impl<'b> Plan<'b> {
     }
 }
 
+/// Whether another record stands there.
+fn is_taken(db: &Connection, record: &Record) -> Result<bool> {
+    let (shelf, subject, number) = record.place();
+    db.prepare_cached(
+        "SELECT EXISTS (SELECT 1 FROM records WHERE shelf = ?1 AND subject = ?2 AND number = ?3 AND text != ?4)",
+    )?
+    .query_row(params![shelf.code(), subject, number, record.text], |row| row.get(0))
+}
+
 /// The digest of a key that was filed after `since`.
 fn find_key(db: &Connection, key: &str, since: f64) -> Result<Option<Digest>> {
     db.prepare_cached("SELECT digest FROM keys WHERE key = ?1 AND since > ?2")?
         .query_row(params![key, since], |row| row.get(0).map(Digest))
+        .optional()
+}
+
+/// A series' key as the numbers of its place.
+fn place(key: &SeriesKey) -> [i64; 2] {
+    let bits = u128::from_le_bytes(key.0);
+    [bits as i64, (bits >> 64) as i64]
+}
+
+/// What is remembered of a series.
+fn find_mark(db: &Connection, key: &SeriesKey) -> Result<Option<Known>> {
+    db.prepare_cached("SELECT seal, mark FROM marks WHERE key = ?1")?
+        .query_row([key.0], |row| {
+            let (seal, bytes): (i64, Vec<u8>) = (row.get(0)?, row.get(1)?);
+            let sound = i64::from(checksum(&place(key), &bytes)) == seal;
+            Ok(Mark::decode(&bytes).filter(|_| sound).map_or(Known::Broken, Known::Mark))
+        })
         .optional()
 }
 

@@ -28,7 +28,7 @@ pub use self::schema::LAYOUT_VERSION;
 use super::clock::Clock;
 use super::{
     Batch, Damage, Extent, Hour, Ledger, LedgerError, OpenWait, Options, Period, Position, Reader, Receipt,
-    Upkeep,
+    Records, Shelf, Upkeep,
 };
 use crate::tally::Tally;
 
@@ -46,6 +46,8 @@ pub struct SqliteLedger {
     /// The last entry's number.
     sequence: i64,
     next_stream: i64,
+    /// Histograms that are remembered.
+    marks: usize,
     /// Slots that the log's growth has paid for to be merged, below 1.
     credit: f64,
     clock: Clock,
@@ -89,7 +91,11 @@ impl SqliteLedger {
             .query_row("SELECT value FROM meta WHERE name = 'clock'", [], |row| row.get(0))
             .optional()
             .map_err(|error| fault(&path, error))?;
+        let marks: i64 = db
+            .query_row("SELECT count(*) FROM marks", [], |row| row.get(0))
+            .map_err(|error| fault(&path, error))?;
         let mut ledger = SqliteLedger {
+            marks: usize::try_from(marks).unwrap_or(0),
             reader: SqliteReader::beside(&path, Arc::clone(&live))?,
             db,
             live,
@@ -163,6 +169,10 @@ impl Reader for SqliteLedger {
 
     fn position(&self, name: &str) -> Result<Option<Position>, LedgerError> {
         self.reader.position(name)
+    }
+
+    fn records(&self, shelf: Shelf, subject: Option<&str>) -> Result<Records, LedgerError> {
+        self.reader.records(shelf, subject)
     }
 
     fn extent(&self) -> Result<Extent, LedgerError> {

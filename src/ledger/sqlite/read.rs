@@ -9,9 +9,11 @@ use rusqlite::types::ValueRef;
 use rusqlite::{Connection, OptionalExtension, Result, Row, Transaction, TransactionBehavior, params};
 
 use super::live::{Live, Slot};
-use super::seal::{checksum, unseal};
+use super::seal::{checksum, record_seal, unseal};
 use super::{Queued, entry, fault, file_in, is_damage, read_lock, schema};
-use crate::ledger::{Damage, Extent, Hour, LedgerError, OpenWait, Period, Position, Reader};
+use crate::ledger::{
+    Damage, Extent, Hour, LedgerError, OpenWait, Period, Position, Reader, Record, Records, Shelf,
+};
 use crate::tally::Tally;
 
 /// Reads a ledger on disk: beside its writer, or without one.
@@ -179,6 +181,18 @@ impl Reader for SqliteReader {
         super::positions::read(&self.db, name).map_err(|error| self.fault(error))
     }
 
+    fn records(&self, shelf: Shelf, subject: Option<&str>) -> Result<Records, LedgerError> {
+        let mut found = Records::default();
+        match records(&self.db, shelf, subject, &mut found) {
+            Ok(()) => {}
+            Err(error) if is_damage(&error) => {
+                found.damage.push(Damage::File { flaw: format!("its records: {error}") });
+            }
+            Err(error) => return Err(self.fault(error)),
+        }
+        Ok(found)
+    }
+
     fn extent(&self) -> Result<Extent, LedgerError> {
         let file = std::fs::metadata(&self.path).map_or(0, |file| file.len());
         let keys = key_count(&self.db).map_err(|error| self.fault(error))?;
@@ -192,6 +206,43 @@ impl Reader for SqliteReader {
             live_bytes: live.bytes,
         })
     }
+}
+
+/// Adds the records on a shelf to those that are found.
+pub(super) fn records(
+    db: &Connection,
+    shelf: Shelf,
+    subject: Option<&str>,
+    found: &mut Records,
+) -> Result<()> {
+    if !schema::has_records(db)? {
+        return Ok(());
+    }
+    let mut statement = db.prepare_cached(match subject {
+        Some(_) => {
+            "SELECT subject, number, seal, text FROM records WHERE shelf = ?1 AND subject = ?2 ORDER BY number"
+        }
+        None => {
+            "SELECT subject, number, seal, text FROM records WHERE shelf = ?1 AND ?2 IS NULL ORDER BY subject, number"
+        }
+    })?;
+    let mut rows = statement.query(params![shelf.code(), subject])?;
+    while let Some(row) = rows.next()? {
+        let bytes = |i: usize| Ok::<_, rusqlite::Error>(row.get_ref(i)?.as_bytes().unwrap_or_default());
+        let subject = String::from_utf8_lossy(bytes(0)?).into_owned();
+        let (number, seal, text): (i64, i64, &[u8]) = (row.get(1)?, row.get(2)?, bytes(3)?);
+        let sound = i64::from(record_seal(shelf.code(), &subject, number, text)) == seal;
+        match std::str::from_utf8(text) {
+            Ok(text) if sound => {
+                found.records.push(Record { shelf, subject: subject.into(), number, text: text.into() });
+            }
+            _ => {
+                let flaw = "its checksum does not match".to_owned();
+                found.damage.push(Damage::Record { shelf, subject, number, flaw });
+            }
+        }
+    }
+    Ok(())
 }
 
 /// How many keys are kept, from the first and last number: a key used again after its time leaves a gap.

@@ -9,13 +9,16 @@ use super::fault;
 use crate::ledger::LedgerError;
 
 /// Version of the tables that this program writes and the highest that it reads.
-pub const LAYOUT_VERSION: i64 = 1;
+pub const LAYOUT_VERSION: i64 = 2;
 
 /// How long to wait for another connection.
 pub(super) const PATIENCE: Duration = Duration::from_secs(5);
 
 /// "outw": marks the file as a ledger among SQLite files.
 const APPLICATION: i64 = 0x6f75_7477;
+
+/// Who makes or changes a file.
+const PROGRAM: &str = concat!("outwait ", env!("CARGO_PKG_VERSION"));
 
 const TABLES: &str = "
 CREATE TABLE layout (version INTEGER PRIMARY KEY, program TEXT NOT NULL);
@@ -43,6 +46,16 @@ CREATE TABLE bad_lines (
 ) WITHOUT ROWID;
 ";
 
+/// What layout 2 has more than layout 1.
+const SECOND: &str = "
+CREATE TABLE records (
+  shelf INTEGER NOT NULL, subject TEXT NOT NULL, number INTEGER NOT NULL, seal INTEGER NOT NULL, text TEXT NOT NULL,
+  PRIMARY KEY (shelf, subject, number)
+);
+CREATE TABLE marks (key BLOB PRIMARY KEY, since REAL NOT NULL, seal INTEGER NOT NULL, mark BLOB NOT NULL) WITHOUT ROWID;
+CREATE INDEX marks_by_age ON marks (since);
+";
+
 /// Opens the file for writing, makes it if there is none, and brings it to the present layout.
 pub(super) fn open_for_writing(path: &Path) -> Result<Connection, LedgerError> {
     let named = |error| fault(path, error);
@@ -51,7 +64,8 @@ pub(super) fn open_for_writing(path: &Path) -> Result<Connection, LedgerError> {
     if is_empty(&db).map_err(named)? {
         create(&db).map_err(named)?;
     } else {
-        check_layout(&db, path)?;
+        let found = check_layout(&db, path)?;
+        upgrade(&db, found).map_err(named)?;
     }
     let durable = || -> Result<bool> {
         let mode: String = db.query_row("PRAGMA journal_mode = WAL", [], |row| row.get(0))?;
@@ -146,18 +160,38 @@ fn create(db: &Connection) -> Result<()> {
     db.execute_batch(
         "PRAGMA auto_vacuum = INCREMENTAL; PRAGMA journal_mode = WAL; PRAGMA synchronous = FULL;",
     )?;
-    let program = concat!("outwait ", env!("CARGO_PKG_VERSION"));
     db.execute_batch(&format!(
         "BEGIN IMMEDIATE;
          {TABLES}
-         INSERT INTO layout VALUES ({LAYOUT_VERSION}, '{program}');
+         {SECOND}
+         INSERT INTO layout VALUES ({LAYOUT_VERSION}, '{PROGRAM}');
          PRAGMA application_id = {APPLICATION};
          PRAGMA user_version = {LAYOUT_VERSION};
          COMMIT;"
     ))
 }
 
-fn check_layout(db: &Connection, path: &Path) -> Result<(), LedgerError> {
+/// Brings an older file to the present layout, one transaction a step; what it holds stays as it is.
+fn upgrade(db: &Connection, found: i64) -> Result<()> {
+    if found < 2 {
+        db.execute_batch(&format!(
+            "BEGIN IMMEDIATE;
+             {SECOND}
+             INSERT INTO layout VALUES (2, '{PROGRAM}');
+             PRAGMA user_version = 2;
+             COMMIT;"
+        ))?;
+    }
+    Ok(())
+}
+
+/// Whether the file has a table for records: one of layout 1 that is only read has none.
+pub(super) fn has_records(db: &Connection) -> Result<bool> {
+    db.query_row("PRAGMA user_version", [], |row| row.get::<_, i64>(0)).map(|version| version >= 2)
+}
+
+/// The layout that a file has. What is older than the present one is brought there when it is opened for writing.
+fn check_layout(db: &Connection, path: &Path) -> Result<i64, LedgerError> {
     let pragma = |name: &str| -> Result<i64, LedgerError> {
         db.query_row(&format!("PRAGMA {name}"), [], |row| row.get(0)).map_err(|error| fault(path, error))
     };
@@ -168,9 +202,9 @@ fn check_layout(db: &Connection, path: &Path) -> Result<(), LedgerError> {
     if found > LAYOUT_VERSION {
         return Err(LedgerError::Newer { path: path.to_owned(), found, known: LAYOUT_VERSION });
     }
-    // Layout 1 is the first. A later version changes older tables here, in one transaction a step.
+    // Layout 1 is the first.
     if found < 1 {
         return Err(LedgerError::Foreign { path: path.to_owned() });
     }
-    Ok(())
+    Ok(found)
 }

@@ -19,6 +19,12 @@ pub(super) fn unseal<'a>(place: &[i64], sealed: &'a [u8]) -> Option<&'a [u8]> {
     (checksum(place, bytes) == u32::from_le_bytes(*crc)).then_some(bytes)
 }
 
+/// The checksum of a record: over its place, the subject's length among it, then subject and text.
+pub(super) fn record_seal(shelf: i64, subject: &str, number: i64, text: &[u8]) -> u32 {
+    let place = [shelf, number, subject.len() as i64];
+    checksum(&place, &[subject.as_bytes(), text].concat())
+}
+
 #[cfg(test)]
 mod tests {
     use super::*;

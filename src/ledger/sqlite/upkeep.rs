@@ -9,7 +9,7 @@ use super::fold::put;
 use super::live::Live;
 use super::read::{open_tally, period};
 use super::{SqliteLedger, read_lock, schema, write_lock};
-use crate::ledger::{Hour, Period, Upkeep};
+use crate::ledger::{Hour, Period, Shelf, Upkeep};
 use crate::tally::Tally;
 
 /// The rounds through all streams, a few at a time.
@@ -83,6 +83,11 @@ impl SqliteLedger {
         let keys = tx
             .prepare_cached("DELETE FROM keys WHERE since <= ?1 AND id < (SELECT min(id) FROM keys) + ?2")?
             .execute(params![keys_by, FORGETS as i64])?;
+        let marks = tx
+            .prepare_cached(
+                "DELETE FROM marks WHERE key IN (SELECT key FROM marks WHERE since <= ?1 ORDER BY since LIMIT ?2)",
+            )?
+            .execute(params![time - self.options.series_for, FORGETS as i64])?;
         let joined = forget(&tx, true, keys_by, FORGETS)?;
         let expired = forget(&tx, false, time - self.options.open_for, FORGETS)?;
         let (singles, all_joined) = {
@@ -94,9 +99,11 @@ impl SqliteLedger {
             write_count(&tx, "joined", all_joined)?;
         }
         upkeep.expired = expired as u64;
-        upkeep.more |= [keys, joined, expired].contains(&FORGETS);
+        upkeep.more |= [keys, marks, joined, expired].contains(&FORGETS);
         tx.prepare_cached("DELETE FROM bad_lines WHERE hour < ?1")?
             .execute([Hour::of(time - self.options.keep_for).0])?;
+        tx.prepare_cached("DELETE FROM records WHERE shelf = ?1 AND subject = '' AND number < ?2")?
+            .execute(params![Shelf::Weeks.code(), Hour::of(time - self.options.keep_for).day()])?;
 
         let mut rounds = self.rounds;
         let file_clock = rounds.clock_filed.is_none_or(|filed| (time - filed).abs() >= CLOCK_STEP);
@@ -113,6 +120,7 @@ impl SqliteLedger {
         tx.commit()?;
 
         self.rounds = rounds;
+        self.marks = self.marks.saturating_sub(marks);
         let mut live = write_lock(&self.live);
         (live.singles, live.joined) = (singles, all_joined);
         live.forget(&gone);
@@ -151,6 +159,7 @@ impl SqliteLedger {
         let (mut finished, mut work) = (streams.len() < STREAMS, 0);
         for stream in streams {
             let dropped = drop_before(db, stream, aim.drop, needed)?;
+            drop_days(db, stream, aim.drop)?;
             let (rolled, complete) = roll(db, stream, aim.roll, needed, ROLLS.saturating_sub(work))?;
             upkeep.dropped += dropped;
             upkeep.rolled += rolled;
@@ -197,6 +206,15 @@ fn drop_before(db: &Connection, stream: i64, hour: Hour, needed: i64) -> Result<
     db.prepare_cached("DELETE FROM damaged WHERE stream = ?1 AND start + hours <= ?2")?
         .execute(params![stream, hour.0])?;
     Ok(dropped as u64)
+}
+
+/// Drops what was advised on a stream on days before that hour's.
+fn drop_days(db: &Connection, stream: i64, hour: Hour) -> Result<()> {
+    db.prepare_cached(
+        "DELETE FROM records WHERE shelf = ?1 AND subject = (SELECT name FROM streams WHERE id = ?2) AND number < ?3",
+    )?
+    .execute(params![Shelf::Days.code(), stream, hour.day()])?;
+    Ok(())
 }
 
 /// Merges the hours of a stream's days that ended by then into those days, about `most` hours; how many, and whether

@@ -9,6 +9,7 @@ use axum::http::{HeaderMap, HeaderName, HeaderValue, Method, StatusCode, header}
 use axum::middleware::Next;
 use axum::response::{IntoResponse, Response};
 
+use super::otlp;
 use crate::serve::page;
 use crate::serve::problem::Problem;
 use crate::serve::shared::Shared;
@@ -30,6 +31,9 @@ pub(super) async fn pass(State(shared): State<Arc<Shared>>, request: Request, ne
     let time = shared.config.limits.request + shared.config.limits.body;
     let browser = page::is_browser(request.headers());
     let target = request.uri().path_and_query().map_or("/", |target| target.as_str()).to_owned();
+    // What an answer's form is chosen by, where the request is gone by then.
+    let speech = request.headers().get(header::CONTENT_TYPE).cloned();
+    let speech = speech.into_iter().map(|kind| (header::CONTENT_TYPE, kind)).collect::<HeaderMap>();
     let mut response = match admit(&shared, &path, &method, request.headers()) {
         Err(problem) => problem.into_response(),
         Ok(()) => match tokio::time::timeout(time, next.run(request)).await {
@@ -45,7 +49,9 @@ pub(super) async fn pass(State(shared): State<Arc<Shared>>, request: Request, ne
             .into_response(),
         },
     };
-    if browser {
+    if otlp::PATHS.contains(&path.as_str()) {
+        response = otlp::worded(response, &speech);
+    } else if browser {
         response = page::worded(&shared, response, &target);
     }
     let headers = response.headers_mut();

@@ -41,6 +41,8 @@ struct Health {
     ledger_trouble: Option<String>,
     /// Why the policy file as it lies there is not in force; the last sound one is.
     policy_refused: Option<String>,
+    /// Why the file of decisions is not in step with the ledger's, which stand.
+    settled_refused: Option<String>,
     /// When waits were filed last.
     last_filed: Option<String>,
     streams: usize,
@@ -69,6 +71,7 @@ pub(super) async fn whole(State(shared): App) -> Result<Response, Problem> {
             ready: trouble.is_none() && !shared.is_stopping(),
             ledger_trouble: trouble,
             policy_refused: shared.standing().refused.map(|why| why.to_string()),
+            settled_refused: shared.settling.book().trouble.map(|(what, remedy)| format!("{what}; {remedy}")),
             last_filed: shared.last_filed().and_then(crate::say::time),
             streams: shared.all_advice().len(),
             advice_backlog: shared.desk.backlog(),

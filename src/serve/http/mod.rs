@@ -4,6 +4,8 @@ mod advice;
 mod gate;
 mod health;
 mod open;
+mod otlp;
+mod settle;
 mod stream;
 mod waits;
 
@@ -22,6 +24,7 @@ use super::shared::Shared;
 
 pub(super) use advice::unknown;
 pub(super) use open::judge;
+pub(super) use settle::{READ_ONLY, Wish, shown, take, week_now};
 pub(super) use stream::{give_up_after, study};
 
 /// The description of everything below, OpenAPI 3.1.
@@ -33,9 +36,13 @@ pub(super) type App = State<Arc<Shared>>;
 fn routes() -> Vec<(&'static str, &'static str, MethodRouter<Arc<Shared>>)> {
     vec![
         ("/v1/waits", "POST", post(waits::take)),
+        ("/v1/traces", "POST", post(otlp::traces)),
+        ("/v1/metrics", "POST", post(otlp::metrics)),
         ("/v1/advice", "GET, HEAD", get(advice::all)),
         ("/v1/advice/{*stream}", "GET, HEAD", get(advice::one)),
         ("/v1/streams/{*question}", "GET, HEAD", get(stream::ask)),
+        ("/v1/settle/{*stream}", "POST", post(settle::post)),
+        ("/v1/weekly", "GET, HEAD", get(settle::weekly)),
         ("/v1/open", "GET, HEAD", get(open::list)),
         ("/v1/openapi.json", "GET, HEAD", get(openapi)),
         ("/metrics", "GET, HEAD", get(health::metrics)),
@@ -43,7 +50,8 @@ fn routes() -> Vec<(&'static str, &'static str, MethodRouter<Arc<Shared>>)> {
         ("/healthz", "GET, HEAD", get(health::alive)),
         ("/readyz", "GET, HEAD", get(health::ready)),
         ("/", "GET, HEAD", get(page::streams)),
-        ("/stream/{*name}", "GET, HEAD", get(page::one)),
+        ("/stream/{*name}", "GET, HEAD, POST", get(page::one).post(page::settle)),
+        ("/week", "GET, HEAD, POST", get(page::week).post(page::sign_week)),
         ("/open", "GET, HEAD", get(page::open)),
         ("/open/live", "GET, HEAD", get(page::live)),
         ("/how-it-is", "GET, HEAD", get(page::how_it_is)),

@@ -1,4 +1,4 @@
-//! `GET /v1/streams/{stream}/curve`, `/curve.svg` and `/whatif`: questions about one stream. Names may hold slashes, so
+//! `GET /v1/streams/{stream}/curve`, `/curve.svg`, `/whatif` and `/history`: questions about one stream. Names may hold slashes, so
 //! the question is what comes last.
 
 use std::sync::Arc;
@@ -11,9 +11,13 @@ use super::advice::unknown;
 use super::{App, away, excerpt, json, parameters, tagged};
 use crate::advise::{Lenders, Terms, WhatIfError};
 use crate::chart::{Frame, Picture};
+use crate::diary::Day;
+use crate::serve::diary;
 use crate::serve::problem::Problem;
 use crate::serve::shared::Shared;
 use crate::serve::studies::Kept;
+use crate::settle::Settlement;
+use serde::Serialize;
 
 pub(super) async fn ask(
     State(shared): App,
@@ -24,11 +28,15 @@ pub(super) async fn ask(
     let (stream, question) = question.rsplit_once('/').unwrap_or((&question, ""));
     let stream = stream.to_owned();
     let fresh = match question {
+        "history" => {
+            parameters(&uri, &[])?;
+            return history(shared, stream).await;
+        }
         "curve" | "curve.svg" | "whatif" => shared.advice(&stream).ok_or_else(|| unknown(&stream))?,
         _ => {
             return Err(Problem::missing(
                 &format!("question {:?} about a stream", excerpt(question)),
-                "ask /v1/streams/{stream}/curve, /curve.svg or /whatif?give_up_after=2s",
+                "ask /v1/streams/{stream}/curve, /curve.svg, /history or /whatif?give_up_after=2s",
             ));
         }
     };
@@ -97,6 +105,41 @@ pub(super) async fn ask(
             })
         }
     }
+}
+
+/// What was decided of a stream and what was advised day by day.
+#[derive(Serialize)]
+struct History<'a> {
+    schema: &'static str,
+    stream: &'a str,
+    /// The oldest first.
+    decisions: &'a [Settlement],
+    /// The newest first.
+    days: Vec<Dated>,
+}
+
+#[derive(Serialize)]
+struct Dated {
+    /// The UTC day.
+    day: String,
+    #[serde(flatten)]
+    what: Day,
+}
+
+async fn history(shared: Arc<Shared>, stream: String) -> Result<Response, Problem> {
+    away(move || {
+        let (settled, fresh) = (shared.settled(), shared.advice(&stream));
+        let decisions = settled.history(&stream);
+        let days = match &fresh {
+            Some(fresh) => diary::days(&shared, fresh)
+                .map_err(|error| Problem::ours(format!("{error}; {}", error.remedy())))?,
+            None if decisions.is_empty() => return Err(unknown(&stream)),
+            None => Vec::new(),
+        };
+        let days = days.into_iter().map(|(day, what)| Dated { day: diary::date(day), what }).collect();
+        json(&History { schema: "outwait/history/1", stream: &stream, decisions, days })
+    })
+    .await
 }
 
 /// What the advice of this tag rests on: kept from the last question, or weighed anew from what the ledger holds now.

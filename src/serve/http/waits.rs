@@ -12,7 +12,7 @@ use serde::Serialize;
 use tokio::time::timeout;
 
 use super::{App, away, excerpt, json, parameters};
-use crate::intake::{BadCount, BadLine, Format, IntakeError};
+use crate::intake::{BadCount, BadLine, Format, IntakeError, Rules};
 use crate::ledger::{Entry, LedgerError, MAX_KEY_BYTES};
 use crate::serve::body::{CountError, Reading, count};
 use crate::serve::keeper::Refusal;
@@ -67,28 +67,13 @@ async fn try_take(
     let format = format(headers)?;
     encoding(headers)?;
     let key = key(headers)?;
-    let limits = shared.config.limits;
-    let length =
-        headers.get(header::CONTENT_LENGTH).and_then(|value| value.to_str().ok()?.parse::<usize>().ok());
-    if length.is_some_and(|length| length > limits.body_bytes) {
-        return Err(too_long(limits.body_bytes));
-    }
-    let read = timeout(limits.body, gather(body, length.unwrap_or(0), shared)).await;
-    let (bytes, held) = read.map_err(|_| {
-        Problem::new(
-            StatusCode::REQUEST_TIMEOUT,
-            "slow-body",
-            "The body takes too long",
-            format!("it was not complete within {} s", limits.body.as_secs()),
-            "send smaller batches, or over a faster line",
-        )
-    })??;
+    let (bytes, held) = gather(body, headers, shared).await?;
     let app = Arc::clone(shared);
     let counted = away(move || {
         let _held = held;
         let now = app.now();
         let any_open = app.any_open.load(Ordering::Relaxed);
-        let reading = Reading { format, key: key.as_deref(), now, any_open };
+        let reading = Reading { format, key: key.as_deref(), now, any_open, rules: Rules::default() };
         count(bytes, reading, &app.config.limits).map_err(|error| uncounted(&app, error))
     })
     .await?;
@@ -101,7 +86,7 @@ async fn try_take(
     if !entry.repeated {
         shared.metrics.waits.inc_by(counted.report.waits + entry.joined);
     }
-    let Entry { repeated, joined, again, refused } = entry;
+    let Entry { repeated, joined, again, refused, .. } = entry;
     let report = &counted.report;
     let receipt = Receipt {
         schema: "outwait/receipt/1",
@@ -120,7 +105,7 @@ async fn try_take(
 }
 
 /// Bytes of a body that count against the limit of all bodies, until this is dropped.
-struct Held {
+pub(super) struct Held {
     shared: Arc<Shared>,
     bytes: usize,
 }
@@ -151,7 +136,29 @@ impl Drop for Held {
 }
 
 /// The whole body, as long as it is within the limits.
-async fn gather(mut body: Body, expected: usize, shared: &Arc<Shared>) -> Result<(Bytes, Held), Problem> {
+pub(super) async fn gather(
+    body: Body,
+    headers: &HeaderMap,
+    shared: &Arc<Shared>,
+) -> Result<(Bytes, Held), Problem> {
+    let limits = shared.config.limits;
+    let length =
+        headers.get(header::CONTENT_LENGTH).and_then(|value| value.to_str().ok()?.parse::<usize>().ok());
+    if length.is_some_and(|length| length > limits.body_bytes) {
+        return Err(too_long(limits.body_bytes));
+    }
+    timeout(limits.body, read_whole(body, length.unwrap_or(0), shared)).await.map_err(|_| {
+        Problem::new(
+            StatusCode::REQUEST_TIMEOUT,
+            "slow-body",
+            "The body takes too long",
+            format!("it was not complete within {} s", limits.body.as_secs()),
+            "send smaller batches, or over a faster line",
+        )
+    })?
+}
+
+async fn read_whole(mut body: Body, expected: usize, shared: &Arc<Shared>) -> Result<(Bytes, Held), Problem> {
     let most = shared.config.limits.body_bytes;
     let mut held = Held { shared: Arc::clone(shared), bytes: 0 };
     held.more(expected)?;
@@ -207,7 +214,7 @@ fn format(headers: &HeaderMap) -> Result<Option<Format>, Problem> {
 }
 
 /// Packed bodies are known by their content; the header only must not name something else.
-fn encoding(headers: &HeaderMap) -> Result<(), Problem> {
+pub(super) fn encoding(headers: &HeaderMap) -> Result<(), Problem> {
     let Some(named) = headers.get(header::CONTENT_ENCODING) else { return Ok(()) };
     let named = named.to_str().unwrap_or_default().trim().to_ascii_lowercase();
     match named.as_str() {
@@ -222,7 +229,7 @@ fn encoding(headers: &HeaderMap) -> Result<(), Problem> {
     }
 }
 
-fn key(headers: &HeaderMap) -> Result<Option<String>, Problem> {
+pub(super) fn key(headers: &HeaderMap) -> Result<Option<String>, Problem> {
     let Some(key) = headers.get("idempotency-key") else { return Ok(None) };
     match key.to_str() {
         Ok(key) => Ok(Some(key.to_owned())),
@@ -234,13 +241,16 @@ fn key(headers: &HeaderMap) -> Result<Option<String>, Problem> {
     }
 }
 
-fn uncounted(shared: &Shared, error: CountError) -> Problem {
+pub(super) fn uncounted(shared: &Shared, error: CountError) -> Problem {
     let bad = |code, title, remedy: &str, detail: String| {
         Problem::new(StatusCode::BAD_REQUEST, code, title, detail, remedy)
     };
     match error {
         CountError::Key(error) => {
             bad("key", "The key is not one", "use 1 to 255 letters, digits and signs", error.to_string())
+        }
+        CountError::Undecodable { reason } => {
+            bad("body", "The body cannot be decoded", "send the standard's own request message", reason)
         }
         CountError::Intake(IntakeError::NoWaits { report } | IntakeError::BadLines { report, .. }) => {
             shared.note(&report);
@@ -278,7 +288,7 @@ fn chain(error: &dyn std::error::Error) -> String {
     text
 }
 
-fn refusal(refusal: Refusal) -> Problem {
+pub(in crate::serve) fn refusal(refusal: Refusal) -> Problem {
     let detail = refusal.to_string();
     match refusal {
         Refusal::Batch(error) => {
@@ -286,6 +296,7 @@ fn refusal(refusal: Refusal) -> Problem {
                 crate::ledger::BatchError::KeyReused { .. } => {
                     (StatusCode::UNPROCESSABLE_ENTITY, "key-reused")
                 }
+                crate::ledger::BatchError::Taken { .. } => (StatusCode::CONFLICT, "taken"),
                 _ => (StatusCode::INSUFFICIENT_STORAGE, "limit"),
             };
             Problem::new(status, code, "The batch was not counted", detail, error.remedy())

@@ -11,6 +11,7 @@ use crate::ledger::Reader;
 use crate::say;
 use crate::serve::http::{App, away, parameters};
 use crate::serve::problem::Problem;
+use crate::serve::settling;
 use crate::serve::shared::Shared;
 
 #[derive(Serialize)]
@@ -95,6 +96,29 @@ fn content(shared: &Shared) -> Content {
     }
 }
 
+/// Whether the file of decisions and the ledger say the same.
+fn settled(shared: &Shared) -> Check {
+    let book = shared.settling.book();
+    let file = settling::path(shared).display().to_string();
+    match book.trouble {
+        None => {
+            let streams = book.settled.streams().count();
+            let says = match streams {
+                0 => "nothing so far".into(),
+                1 => format!("one stream; {file} says the same"),
+                n => format!("{} streams; {file} says the same", say::count(n as f64)),
+            };
+            Check { name: "Decisions", sound: true, says, remedy: String::new() }
+        }
+        Some((what, remedy)) => Check {
+            name: "Decisions",
+            sound: false,
+            says: format!("the ledger's stand, and the file is not in step with them: {what}"),
+            remedy: remedy.into(),
+        },
+    }
+}
+
 fn checks(shared: &Shared) -> Vec<Check> {
     let sound = |name, says: String| Check { name, sound: true, says, remedy: String::new() };
     let ledger = match shared.in_trouble() {
@@ -154,5 +178,5 @@ fn checks(shared: &Shared) -> Vec<Check> {
             remedy: "give it a larger --advice-share, or advise less often by --refresh".into(),
         },
     };
-    vec![intake, ledger, advice, policy]
+    vec![intake, ledger, advice, policy, settled(shared)]
 }

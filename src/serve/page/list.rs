@@ -125,9 +125,9 @@ struct Choice {
 }
 
 #[derive(Serialize)]
-struct Axis {
-    wide: String,
-    narrow: String,
+pub(super) struct Axis {
+    pub(super) wide: String,
+    pub(super) narrow: String,
 }
 
 /// What the page shows.

@@ -1,11 +1,14 @@
 //! The pages: look instead of read. Written on the server, whole without a script; nothing is fetched from elsewhere and
 //! nothing in a page can run. Every text is escaped by the templates; only pictures of our own go in as they are.
 
+mod decide;
 mod health;
 mod list;
 mod open;
+mod past;
 mod sign;
 mod stream;
+mod week;
 mod what_if;
 
 use std::sync::LazyLock;
@@ -22,11 +25,13 @@ use super::problem::Problem;
 use super::shared::Shared;
 use crate::{chart, say};
 
+pub(super) use decide::settle;
 pub(super) use health::how_it_is;
 pub(super) use list::streams;
 pub(super) use open::{live, open};
 pub(super) use sign::{form, session, sign_in, sign_out};
 pub(super) use stream::one;
+pub(super) use week::{sign_week, week};
 
 /// Nothing from elsewhere, nothing inline, nothing round it.
 const POLICY: &str = "default-src 'none'; style-src 'self'; script-src 'self'; img-src 'self' data:; connect-src 'self'; \
@@ -42,6 +47,7 @@ static TEMPLATES: LazyLock<Environment<'static>> = LazyLock::new(|| {
         ("base.html", include_str!("templates/base.html")),
         ("list.html", include_str!("templates/list.html")),
         ("stream.html", include_str!("templates/stream.html")),
+        ("week.html", include_str!("templates/week.html")),
         ("open.html", include_str!("templates/open.html")),
         ("rows.html", include_str!("templates/rows.html")),
         ("health.html", include_str!("templates/health.html")),
@@ -175,6 +181,12 @@ pub(super) fn worded(shared: &Shared, response: Response, path: &str) -> Respons
     shown
 }
 
+/// To a page of ours, by GET.
+fn go(to: &str) -> Response {
+    let to = HeaderValue::from_str(to).unwrap_or_else(|_| HeaderValue::from_static("/"));
+    (StatusCode::SEE_OTHER, [(header::LOCATION, to)]).into_response()
+}
+
 /// Text for a part of an address: letters, digits and `- . _ ~ :` stay, and so do the signs in `keep`.
 fn encoded(text: &str, keep: &str) -> String {
     use std::fmt::Write;
@@ -213,7 +225,7 @@ mod tests {
 
     #[test]
     fn every_template_holds() {
-        for name in ["base", "list", "stream", "open", "rows", "health", "sign", "problem"] {
+        for name in ["base", "list", "stream", "week", "open", "rows", "health", "sign", "problem"] {
             TEMPLATES.get_template(&format!("{name}.html")).unwrap();
         }
         let all = TEMPLATES.templates().map(|(_, template)| template.source().to_owned()).collect::<String>();
@@ -230,6 +242,10 @@ mod tests {
                     "road.narrow",
                     "axis.wide",
                     "axis.narrow",
+                    "past.wide",
+                    "past.narrow",
+                    "day.wide",
+                    "day.narrow",
                     "picture.wide",
                     "picture.narrow"
                 ]

@@ -4,11 +4,11 @@ use axum::Form;
 use axum::extract::State;
 use axum::extract::rejection::FormRejection;
 use axum::http::{HeaderMap, HeaderValue, StatusCode, Uri, header};
-use axum::response::{IntoResponse, Response};
+use axum::response::Response;
 use minijinja::context;
 use serde::Deserialize;
 
-use super::{Shell, page};
+use super::{Shell, go, page};
 use crate::serve::http::{App, parameters};
 use crate::serve::problem::Problem;
 use crate::serve::sessions;
@@ -42,11 +42,6 @@ fn within(next: &str) -> &str {
         && !next.starts_with("//")
         && next.bytes().all(|byte| byte.is_ascii_graphic() && byte != b'\\');
     if is_ours && !next.starts_with("/sign-") { next } else { "/" }
-}
-
-fn go(to: &str) -> Response {
-    let to = HeaderValue::from_str(to).unwrap_or_else(|_| HeaderValue::from_static("/"));
-    (StatusCode::SEE_OTHER, [(header::LOCATION, to)]).into_response()
 }
 
 pub(in crate::serve) async fn form(State(shared): App, uri: Uri) -> Result<Response, Problem> {

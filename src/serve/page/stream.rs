@@ -7,17 +7,22 @@ use axum::http::{StatusCode, Uri};
 use axum::response::Response;
 use serde::Serialize;
 
+use super::decide::{Desk, Filled};
 use super::list::marks;
+use super::past::Past;
 use super::what_if::{Earnings, Row, rows};
 use super::{Moment, Shell, ago, in_path, page};
 use crate::advice::{Action, Advice, Caution, Change};
 use crate::advise::{Curves, Terms};
 use crate::chart::{Frame, Lane, Picture, Svg, Table, lane, milestones, road};
+use crate::policy::GiveUp;
 use crate::say;
 use crate::serve::adviser::Fresh;
+use crate::serve::diary;
 use crate::serve::http::{App, away, give_up_after, parameters, study, unknown};
 use crate::serve::problem::Problem;
 use crate::serve::shared::Shared;
+use crate::settle::{proposal, round_up};
 
 /// Widths of a picture, px: on a wide window, and on a telephone.
 const WIDE: u32 = 760;
@@ -87,6 +92,8 @@ struct Content<'a> {
     trial: Option<Trial>,
     /// Why nothing can be tried.
     untried: String,
+    desk: Desk,
+    past: Past,
     pictures: Vec<Drawn>,
     facts: Vec<Fact>,
     from: Option<Moment>,
@@ -104,10 +111,16 @@ pub(in crate::serve) async fn one(
     let asked = parameters(&uri, &["give_up_after"])?;
     let typed = asked.get("give_up_after").map(|text| text.trim().to_owned()).filter(|text| !text.is_empty());
     let fresh = shared.advice(&stream).ok_or_else(|| unknown(&stream))?;
-    away(move || show(&shared, &fresh, typed.as_deref())).await
+    away(move || show(&shared, &fresh, typed.as_deref(), None)).await
 }
 
-fn show(shared: &Arc<Shared>, fresh: &Arc<Fresh>, typed: Option<&str>) -> Result<Response, Problem> {
+/// `refused`: the form by which somebody tried to decide, why it was not taken, and the status that says so.
+pub(super) fn show(
+    shared: &Arc<Shared>,
+    fresh: &Arc<Fresh>,
+    typed: Option<&str>,
+    refused: Option<(Filled, String, StatusCode)>,
+) -> Result<Response, Problem> {
     let advice = &fresh.advice;
     let decision = &advice.advice;
     let policy = shared.policy();
@@ -158,12 +171,26 @@ fn show(shared: &Arc<Shared>, fresh: &Arc<Fresh>, typed: Option<&str>) -> Result
         }
     }
     let evidence = &advice.evidence;
+    let days =
+        diary::days(shared, fresh).map_err(|error| Problem::ours(format!("{error}; {}", error.remedy())))?;
+    let (tried, refused) = match refused {
+        Some((filled, why, status)) => (Some(status), Some((filled, why))),
+        None => (None, None),
+    };
+    let proposed = proposal(advice).map(|to| match to {
+        GiveUp::After(seconds) => GiveUp::After(round_up(seconds, &entry)),
+        GiveUp::Never => GiveUp::Never,
+    });
     let content = Content {
         name: &advice.stream,
         finding: finding(advice),
-        because: sentence(&decision.because),
-        verdict: sentence(&format!("{}; {}", advice.tail.class.words(), advice.tail.remaining_wait.words())),
-        reason: sentence(&advice.tail.reason),
+        because: say::capital(&decision.because),
+        verdict: say::capital(&format!(
+            "{}; {}",
+            advice.tail.class.words(),
+            advice.tail.remaining_wait.words()
+        )),
+        reason: say::capital(&advice.tail.reason),
         next: next(advice),
         in_path: in_path(&advice.stream),
         made: Moment::of(fresh.made_at),
@@ -172,6 +199,8 @@ fn show(shared: &Arc<Shared>, fresh: &Arc<Fresh>, typed: Option<&str>) -> Result
         axis: Road { wide: milestones(way, 1_200, 15.0), narrow: milestones(way, NARROW, 12.0) },
         trial,
         untried,
+        desk: Desk::of(shared, fresh, entry.now, proposed, refused),
+        past: Past::of(&days, &shared.settled(), &advice.stream),
         pictures: Picture::ALL.map(|picture| drawn(picture, curves)).into(),
         facts: facts(advice),
         from: evidence.from.clone().map(Moment::from_iso),
@@ -180,14 +209,8 @@ fn show(shared: &Arc<Shared>, fresh: &Arc<Fresh>, typed: Option<&str>) -> Result
         empirical: say::percent((1.0 - advice.fits.iter().map(|fit| fit.weight).sum::<f64>()).max(0.0)),
         cautions: &advice.cautions,
     };
-    let status = if wrong.is_some() { StatusCode::BAD_REQUEST } else { StatusCode::OK };
+    let status = if wrong.is_some() { StatusCode::BAD_REQUEST } else { tried.unwrap_or(StatusCode::OK) };
     page(status, "stream.html", Shell::new(shared, "stream", advice.stream.clone()), content)
-}
-
-/// With a capital letter.
-fn sentence(words: &str) -> String {
-    let mut letters = words.chars();
-    letters.next().map_or_else(String::new, |first| first.to_uppercase().chain(letters).collect())
 }
 
 /// A time as it would be typed.
