@@ -118,7 +118,7 @@ fn read_here<S: Sink>(
 
 /// What comes back to the thread that settles.
 enum Message {
-    Parsed(u64, Task, Outcome),
+    Parsed(u64, Box<(Task, Outcome)>),
     Failed(IntakeError),
     /// A parsing thread panicked; its block will never come.
     Lost,
@@ -204,7 +204,7 @@ fn parse_tasks<S: Sink>(
         // The lock is held while waiting, and nothing can panic under it.
         let Ok(Ok((number, task))) = tasks.lock().map(|tasks| tasks.recv()) else { break };
         let outcome = parse(&task, options, &mut sink, &mut streams);
-        if report.send(Message::Parsed(number, task, outcome)).is_err() {
+        if report.send(Message::Parsed(number, Box::new((task, outcome)))).is_err() {
             break;
         }
     }
@@ -221,13 +221,14 @@ fn settle_in_order<S: Sink>(
     let mut next = 0;
     for message in messages {
         match message {
-            Message::Parsed(number, task, outcome) => {
-                early.insert(number, (task, outcome));
+            Message::Parsed(number, parsed) => {
+                early.insert(number, parsed);
             }
             Message::Failed(error) => return Err(error),
             Message::Lost => return Ok(()),
         }
-        while let Some((task, outcome)) = early.remove(&next) {
+        while let Some(parsed) = early.remove(&next) {
+            let (task, outcome) = *parsed;
             settler.settle(&task, outcome)?;
             tell(task.bytes_read, settler.report.lines);
             // The reader may have finished.

@@ -44,7 +44,7 @@ impl Log {
 
     /// Makes room for a new `.1`.
     fn shift(&self) {
-        for number in (1..20).rev() {
+        for number in (1..400).rev() {
             let next = self.old(number + 1);
             let _ = fs::rename(self.old(number), &next);
             let _ = fs::rename(gz(&self.old(number)), gz(&next));

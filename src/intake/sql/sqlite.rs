@@ -22,7 +22,7 @@ pub(super) fn ask(path: &Path, query: &str, rows: &Rows) -> Result<(), QueryErro
     db.execute_batch("PRAGMA trusted_schema = OFF; PRAGMA query_only = ON; PRAGMA cell_size_check = ON;")
         .map_err(reach)?;
     let mut statement = db.prepare(query).map_err(refused)?;
-    let columns: Vec<String> = statement.column_names().into_iter().map(String::from).collect();
+    let columns: Vec<String> = statement.column_names().map(String::from).collect();
     let width = columns.len();
     if width == 0 || !statement.readonly() {
         return Err(QueryError::Refused { reason: "it must be a SELECT, and change nothing".into() });

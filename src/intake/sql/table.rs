@@ -24,6 +24,7 @@ enum Cell {
     Number(f64),
     Whole(i64),
     /// A time or an interval by the column's own type: Unix seconds, or seconds.
+    #[cfg_attr(not(feature = "postgres"), allow(dead_code))] // only a typed database has them
     Seconds(f64),
     /// Up to where in the text it reaches; it begins where the one before ends.
     Text(usize, usize),
@@ -46,6 +47,7 @@ impl Table {
         self.cells.push(Cell::Whole(number));
     }
 
+    #[cfg(feature = "postgres")]
     pub(super) fn seconds(&mut self, seconds: f64) {
         self.cells.push(Cell::Seconds(seconds));
     }

@@ -198,7 +198,8 @@ impl Follower {
                 Err(_) => return Ok(false),
             }
         }
-        if open.last.elapsed() < QUIET && !open.file.is_packed() {
+        // By its own time as well, so that one that is long done with keeps nobody waiting after a restart.
+        if open.last.elapsed().max(open.file.untouched()) < QUIET && !open.file.is_packed() {
             return Ok(false);
         }
         // The last line may have no newline; there will be no more of it.

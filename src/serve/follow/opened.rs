@@ -3,6 +3,7 @@
 use std::fs::File;
 use std::io::{self, BufReader, Read, Seek, SeekFrom};
 use std::path::{Path, PathBuf};
+use std::time::Duration;
 
 use crate::ledger::{Digest, Position};
 
@@ -103,6 +104,13 @@ impl Opened {
 
     pub(super) fn is_packed(&self) -> bool {
         matches!(self.bytes, Bytes::Packed(_))
+    }
+
+    /// For how long nobody has written to it, by the system's clock; no time where that cannot be told.
+    pub(super) fn untouched(&self) -> Duration {
+        let Bytes::Plain(file) = &self.bytes else { return Duration::ZERO };
+        let written = file.metadata().and_then(|metadata| metadata.modified());
+        written.ok().and_then(|written| written.elapsed().ok()).unwrap_or_default()
     }
 
     /// The file's first bytes.
