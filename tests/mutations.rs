@@ -10,7 +10,7 @@ mod telemetry_of;
 use std::io::Write;
 use std::num::NonZeroUsize;
 
-use outwait::intake::{Allowed, Format, Options, Record, Sink, Source, read};
+use outwait::intake::{Allowed, Format, Mapping, Options, Pattern, Record, Sink, Source, read};
 use outwait::policy;
 use outwait::tally::Tally;
 use outwait::wait::{Age, Ending, Wait, check_stream};
@@ -76,6 +76,9 @@ fn bodies() {
         {\"stream\":\"a\",\"id\":\"x\",\"started\":1796040000}\n{\"stream\":\"a\",\"id\":\"x\",\"ended\":1796040009.5,\"ending\":\"done\"}\n";
     const CSV: &str = "stream,elapsed_ms,ending,at,\"attempt\"\ncatalogue.lookup,18.3,done,2026-11-30T10:00:00Z,1\n\"a,b\",5,failed,,2\n";
     const SWF: &str = "; UnixStartTime: 1796040000\n1 0 10 100 4 -1 -1 4 -1 -1 1 3 1 1 1 1 -1 -1\n2 5 -1 -1 4 -1 -1 4 -1 -1 5 3 1 1 1 1 -1 -1\n";
+    const JOURNAL: &str = "{\"__REALTIME_TIMESTAMP\":\"1796040000000000\",\"_SYSTEMD_UNIT\":\"courier@2.service\",\"MESSAGE\":\"{\\\"elapsed\\\":0.25,\\\"ending\\\":\\\"failed\\\"}\"}\n\
+        {\"__REALTIME_TIMESTAMP\":\"1796040001000000\",\"_SYSTEMD_UNIT\":[\"a.service\",\"b\"],\"MESSAGE\":[99,97,108,108,32,97,32,53,48,48,32,49,53,32,91,48,57,47,79,99,116,47,50,48,50,54,93]}\n";
+    const ACCESS: &str = "call catalogue.lookup 200 18 [30/Nov/2026:10:00:00 +0000]\ncall a/b:c 499 2500 [30/Nov/2026:10:00:01 +0100]\ncall a - - [-]\n";
     let mut gzip = flate2::write::GzEncoder::new(Vec::new(), flate2::Compression::fast());
     gzip.write_all(NDJSON.as_bytes()).unwrap();
     let corpus = [
@@ -84,8 +87,11 @@ fn bodies() {
         SWF.into(),
         gzip.finish().unwrap(),
         zstd::encode_all(NDJSON.as_bytes(), 1).unwrap(),
+        JOURNAL.into(),
+        ACCESS.into(),
     ];
-    let words: [&[u8]; 14] = [
+    let words: [&[u8]; 15] = [
+        b"__REALTIME_TIMESTAMP",
         b"NaN",
         b"1e999",
         b"-0",
@@ -108,18 +114,94 @@ fn bodies() {
         total_bytes: 1 << 20,
         ..Options::default()
     };
+    let pattern =
+        Pattern::new(r"call (?<stream>\S+) (?<ending>\S+) (?<elapsed_ms>\S+) \[(?<at>[^\]]*)\]").unwrap();
+    let mapping = Mapping::default().with_endings("499=gave_up,5??=failed,2??=done").unwrap();
+    let mapping = mapping.with_time_format("%d/%b/%Y:%H:%M:%S %z").unwrap();
+    let by_pattern =
+        Options { pattern: Some(pattern.into()), mapping: Some(mapping.into()), ..options.clone() };
+    let columns = Mapping::default().with_columns("elapsed=elapsed_ms:ms,at=stream,stream=at").unwrap();
+    let renamed = Options { mapping: Some(columns.into()), most_open: 1, ..options.clone() };
     let mut random = Xoshiro256PlusPlus::seed_from_u64(3);
     let mut taken = 0;
     for _ in 0..rounds() {
-        let mut body: Vec<u8> = corpus[random.random_range(0..corpus.len())].clone();
+        let number = random.random_range(0..corpus.len());
+        let mut body: Vec<u8> = corpus[number].clone();
         mutate(&mut body, &words, &mut random);
+        // The last two are for a pattern; any of them may meet other options than its own.
+        let options = match random.random_range(0..24) {
+            0 => &renamed,
+            1 => &by_pattern,
+            _ if number + 2 >= corpus.len() => &by_pattern,
+            _ => &options,
+        };
         let source = Source::reader("body", std::io::Cursor::new(body));
-        if let Ok((sink, report)) = read(vec![source], &options, Checking { waits: 0 }, &mut |_| ()) {
+        if let Ok((sink, report)) = read(vec![source], options, Checking { waits: 0 }, &mut |_| ()) {
             assert_eq!(sink.waits, report.waits);
             taken += sink.waits;
         }
     }
-    assert!(taken > rounds() / 4, "{taken} waits survived: the mutations are too wild to test anything");
+    assert!(taken > rounds() / 8, "{taken} waits survived: the mutations are too wild to test anything");
+}
+
+/// Tables in columns, by other people's decoders: an error, or waits that hold.
+#[cfg(feature = "columnar")]
+#[test]
+fn tables() {
+    let corpus = [
+        include_bytes!("reference/columns/waits-snappy.parquet").to_vec(),
+        include_bytes!("reference/columns/bad-rows.parquet").to_vec(),
+        include_bytes!("reference/columns/types.parquet").to_vec(),
+        include_bytes!("reference/columns/waits.arrow").to_vec(),
+        include_bytes!("reference/columns/waits.arrows").to_vec(),
+    ];
+    let words: [&[u8]; 5] =
+        [b"\xff\xff\xff\xff", b"\x00\x00\x00\x00", b"PAR1", b"\xff\xff\xff\x7f", b"\x15\xfe"];
+    let options = Options {
+        bad_lines: Allowed::All,
+        threads: NonZeroUsize::new(1),
+        total_bytes: 1 << 20,
+        ..Options::default()
+    };
+    let mut random = Xoshiro256PlusPlus::seed_from_u64(11);
+    let (mut sound, mut refused) = (0, 0);
+    for _ in 0..rounds() / 8 {
+        let mut bytes = corpus[random.random_range(0..corpus.len())].clone();
+        mutate(&mut bytes, &words, &mut random);
+        let source = Source::reader("table", std::io::Cursor::new(bytes));
+        match read(vec![source], &options, Checking { waits: 0 }, &mut |_| ()) {
+            Ok((sink, report)) => {
+                assert_eq!(sink.waits, report.waits);
+                sound += 1;
+            }
+            Err(error) => refused += usize::from(!error.to_string().is_empty()),
+        }
+    }
+    assert!(refused > 10, "{sound} sound, {refused} refused");
+}
+
+/// Expressions for lines, and what stands for what.
+#[test]
+fn patterns_and_mappings() {
+    let corpus: [&[u8]; 3] = [
+        br#"\[(?<at>[^\]]+)\] "[^"]*" (?<ending>\d{3}) \d+ (?<elapsed_us>\S+)$"#,
+        b"elapsed=duration_ms:ms,at=ts:us,stream=service",
+        b"499=gave_up,5??=failed,*=done",
+    ];
+    let words: [&[u8]; 8] =
+        [b"(?<elapsed>", b"{9999}", b"((a{1000}){1000})", b"(?x)", b"%d%H%", b"=", b":ms", b"\\p{L}"];
+    let mut random = Xoshiro256PlusPlus::seed_from_u64(13);
+    let mut sound = 0;
+    for _ in 0..rounds() / 4 {
+        let mut bytes = corpus[random.random_range(0..corpus.len())].to_vec();
+        mutate(&mut bytes, &words, &mut random);
+        let text = String::from_utf8_lossy(&bytes);
+        sound += usize::from(Pattern::new(&text).is_ok());
+        sound += usize::from(Mapping::default().with_columns(&text).is_ok());
+        sound += usize::from(Mapping::default().with_endings(&text).is_ok());
+        let _ = Mapping::default().with_time_format(&text);
+    }
+    assert!(sound > 10, "{sound}");
 }
 
 /// Telemetry in each of its forms.

@@ -7,6 +7,7 @@ mod buckets;
 mod cautions;
 mod curves;
 mod judge;
+mod omission;
 mod past;
 mod pool;
 mod shift;
@@ -113,16 +114,18 @@ pub fn what_if(case: &Case<'_>, entry: &Entry, seed: u64, give_up_after: f64) ->
 
 /// The advice on one stream with what it rests on, for more than one question about it.
 pub fn study(case: &Case<'_>, entry: &Entry, seed: u64) -> Study {
-    let own = case.tally.first_attempts();
+    let taken = case.tally.first_attempts();
     // Before the data are cut where nobody is watched: what hangs is older than that.
-    let open = own.waiting.clone();
-    let thin = own.totals()[0] < f64::from(entry.guard.evidence);
-    let pooled = if thin { pool(&own, case.siblings) } else { None };
-    let cells = pooled.as_ref().map_or(&own, |p| &p.cells).clone().before_gap(ENOUGH);
+    let open = taken.waiting.clone();
+    let whole = entry.whole(&taken);
+    let own: &Cells = &whole;
+    let thin = taken.totals()[0] < f64::from(entry.guard.evidence);
+    let pooled = if thin { pool(own, case.siblings) } else { None };
+    let cells = pooled.as_ref().map_or(own, |p| &p.cells).clone().before_gap(ENOUGH);
     let mut advice = Advice {
         stream: case.stream.to_owned(),
         kind: entry.kind.name().to_owned(),
-        evidence: evidence(case.tally, &own),
+        evidence: evidence(case.tally, &taken),
         tail: unread("too few waits have ended to say"),
         fits: Vec::new(),
         advice: nothing_yet(),
@@ -154,7 +157,8 @@ pub fn study(case: &Case<'_>, entry: &Entry, seed: u64) -> Study {
         if earlier.counts()[0] == 0 || latest.counts()[0] == 0 {
             return None;
         }
-        Shift::between(&earlier.first_attempts(), &latest.first_attempts(), entry, bounds)
+        let whole = |tally: &Tally| entry.whole(&tally.first_attempts()).into_owned();
+        Shift::between(&whole(earlier), &whole(latest), entry, bounds)
     });
     advice.cautions =
         cautions::all(case, entry, bounds.as_ref(), judgement.as_ref(), shift.as_ref(), &advice);

@@ -128,7 +128,10 @@ impl Terms<'_> {
             let opening = self.opening(entry);
             let cells = of_entry.iter().take(MOST_SIBLINGS + 1).map(|&(_, i)| {
                 let (stream, days) = streams[i];
-                (stream.to_owned(), days.since(opening).first_attempts().coarsened(SIBLING_CELLS))
+                (
+                    stream.to_owned(),
+                    entry.whole(&days.since(opening).first_attempts()).coarsened(SIBLING_CELLS),
+                )
             });
             lenders.by_entry.insert(entry.number, cells.collect());
         }

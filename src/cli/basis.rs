@@ -11,7 +11,7 @@ use clap::Args;
 use rayon::prelude::*;
 
 use super::exit::{Exit, Failure, OrExit};
-use super::options::{Common, JobTime, Reading};
+use super::options::{Asked, Common, Foreign, JobTime, Reading};
 use super::{files, ledger, reading};
 use crate::advice::{AdviceSet, SCHEMA};
 use crate::advise::{Past, Study, Terms};
@@ -143,6 +143,8 @@ impl Basis {
             one_stream: None,
             bad_lines: Allowed::AtMost(self.bad_lines),
             measure: JobTime::Wait,
+            asked: Asked::default(),
+            foreign: Foreign::default(),
             input: None,
             threads: None,
         };

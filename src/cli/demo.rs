@@ -8,7 +8,7 @@ use clap::Args;
 use serde::Serialize;
 
 use super::exit::{Exit, Failure, print};
-use super::options::{Common, JobTime, Output, Reading};
+use super::options::{Asked, Common, Foreign, JobTime, Output, Reading};
 use super::pictures::Pictures;
 use super::{reading, weigh};
 use crate::demo::{self, DemoError};
@@ -66,6 +66,8 @@ impl Demo {
             one_stream: None,
             bad_lines: Allowed::AtMost(0),
             measure: JobTime::Wait,
+            asked: Asked::default(),
+            foreign: Foreign::default(),
             input: None,
             threads: None,
         };

@@ -4,7 +4,7 @@ use std::fs::File;
 use std::io::{self, Read};
 use std::num::NonZeroUsize;
 use std::path::{Path, PathBuf};
-use std::sync::OnceLock;
+use std::sync::{Arc, OnceLock};
 
 use anyhow::Context;
 use clap::builder::{PossibleValue, PossibleValuesParser, TypedValueParser};
@@ -12,7 +12,9 @@ use clap::{Args, ValueEnum};
 
 use super::exit::{Exit, Failure, OrExit};
 use crate::glob::Glob;
-use crate::intake::{Allowed, Format, Measure, Options, Rules};
+use crate::intake::{
+    Access, Allowed, Database, Format, Mapping, MappingError, Measure, Options, Pattern, Rules, Source,
+};
 use crate::policy::{self, Policy};
 
 /// How output is written.
@@ -134,9 +136,11 @@ impl Common {
 /// What commands that read waits take besides.
 #[derive(Clone, Debug, Args)]
 pub(super) struct Reading {
-    /// Files of waits (NDJSON, CSV, SWF, OTLP, metrics as text; plain, gzip or zstd); `-` is standard input
-    #[arg(required = true, value_name = "FILE")]
+    /// Files of waits (NDJSON, CSV, SWF, OTLP, metrics as text, journal, Parquet, Arrow; plain, gzip or zstd); `-` is standard input
+    #[arg(required_unless_present = "from", value_name = "FILE")]
     pub(super) files: Vec<std::ffi::OsString>,
+    #[command(flatten)]
+    pub(super) asked: Asked,
     /// One stream for all waits, whatever their records call theirs
     #[arg(long = "as", value_name = "NAME", value_parser = stream_name)]
     pub(super) one_stream: Option<String>,
@@ -152,12 +156,87 @@ pub(super) struct Reading {
     /// Which time of a job log is the wait
     #[arg(long, value_name = "wait|run", value_enum, default_value_t)]
     pub(super) measure: JobTime,
-    /// Format of every file (ndjson, csv, swf, otlp_traces, otlp_metrics, metrics_text), instead of finding it out
+    #[command(flatten)]
+    pub(super) foreign: Foreign,
+    /// Format of every file (ndjson, csv, swf, journal, parquet, arrow, otlp_traces, otlp_metrics, metrics_text), instead of finding it out
     #[arg(long, value_name = "FORMAT", value_parser = format)]
     pub(super) input: Option<Format>,
     /// Threads that read; as many as there are cores unless said
     #[arg(long, value_name = "N", value_parser = threads, allow_negative_numbers = true)]
     pub(super) threads: Option<NonZeroUsize>,
+}
+
+/// Waits by a query to a database.
+#[derive(Clone, Debug, Default, Args)]
+pub(super) struct Asked {
+    /// Database to ask: postgres://USER@HOST/DATABASE, sqlite:FILE, or a SQLite file
+    #[arg(long, value_name = "DATABASE", requires = "sql")]
+    from: Option<String>,
+    /// The query; its columns are called like fields, or mapped by --columns
+    #[arg(long, value_name = "SELECT", requires = "from")]
+    sql: Option<String>,
+    /// File that holds the password for the database (else PGPASSWORD)
+    #[arg(long, value_name = "FILE", requires = "from")]
+    password_file: Option<PathBuf>,
+    /// Certificates (PEM) by which a PostgreSQL server is known; with them nothing but TLS is spoken
+    #[arg(long, value_name = "FILE", requires = "from")]
+    authorities: Option<PathBuf>,
+}
+
+impl Asked {
+    /// The database's answer as a source, if one is to be asked.
+    pub(super) fn source(&self) -> Result<Option<Source>, Failure> {
+        let Asked { from: Some(address), sql: Some(query), password_file, authorities } = self else {
+            return Ok(None);
+        };
+        let password = match password_file {
+            None => None,
+            Some(file) => {
+                let text = std::fs::read_to_string(file)
+                    .with_context(|| format!("cannot read the password in {}", file.display()))
+                    .or_exit(Exit::BadInput)?;
+                Some(text.lines().next().unwrap_or_default().to_owned())
+            }
+        };
+        let access = Access { password, authorities: authorities.clone() };
+        let database = Database::at(address, access).or_exit(Exit::BadInput)?;
+        Ok(Some(Source::query(database, query)))
+    }
+}
+
+/// How inputs that were not written for this program are read.
+#[derive(Clone, Debug, Default, Args)]
+pub(super) struct Foreign {
+    /// Regular expression for the lines of a log, with captures named after fields: (?<elapsed_ms>\d+)
+    #[arg(long, value_name = "REGEX", value_parser = pattern)]
+    pattern: Option<Arc<Pattern>>,
+    /// Which column or key holds which field: elapsed=duration_ms:ms,at=ts,stream=service
+    #[arg(long, value_name = "FIELD=COLUMN,..", value_parser = |text: &str| mapped(Mapping::default().with_columns(text)))]
+    columns: Option<Mapping>,
+    /// Which ending a status stands for, the first that matches: 499=gave_up,5??=failed,*=done
+    #[arg(long, value_name = "GLOB=ENDING,..", value_parser = |text: &str| mapped(Mapping::default().with_endings(text)))]
+    ending_of: Option<Mapping>,
+    /// How times in words are written, in the letters of strftime: %d/%b/%Y:%H:%M:%S %z
+    #[arg(long, value_name = "FORMAT", value_parser = |text: &str| mapped(Mapping::default().with_time_format(text)))]
+    time_format: Option<Mapping>,
+}
+
+impl Foreign {
+    /// The same for the reader's options.
+    pub(super) fn apply(&self, options: &mut Options) {
+        let Foreign { pattern, columns, ending_of, time_format } = self;
+        let mapping = [columns, ending_of, time_format].into_iter().flatten().cloned().reduce(Mapping::and);
+        options.mapping = mapping.map(Arc::new);
+        options.pattern = pattern.clone();
+    }
+}
+
+fn pattern(text: &str) -> Result<Arc<Pattern>, String> {
+    Pattern::new(text).map(Arc::new).map_err(|error| error.to_string())
+}
+
+fn mapped(mapping: Result<Mapping, MappingError>) -> Result<Mapping, String> {
+    mapping.map_err(|error| error.to_string())
 }
 
 /// A time of a job log.
@@ -173,7 +252,7 @@ pub(super) enum JobTime {
 impl Reading {
     /// The same as the reader takes it.
     pub(super) fn options(&self, common: &Common) -> Options {
-        Options {
+        let mut options = Options {
             format: self.input,
             streams: common.stream.clone(),
             one_stream: self.one_stream.clone(),
@@ -187,7 +266,9 @@ impl Reading {
             threads: self.threads,
             rules: common.telemetry.get().cloned().unwrap_or_default(),
             ..Options::default()
-        }
+        };
+        self.foreign.apply(&mut options);
+        options
     }
 }
 
@@ -231,7 +312,7 @@ fn moment(text: &str) -> Result<f64, String> {
     Ok(time.as_second() as f64)
 }
 
-fn stream_name(text: &str) -> Result<String, String> {
+pub(super) fn stream_name(text: &str) -> Result<String, String> {
     match crate::wait::check_stream(text) {
         Ok(()) => Ok(text.to_owned()),
         Err(error) => Err(format!("{error}; {}", error.remedy())),
@@ -257,7 +338,7 @@ fn threads(text: &str) -> Result<NonZeroUsize, String> {
     text.parse().map_err(|_| "write a whole number from 1".into())
 }
 
-fn format(text: &str) -> Result<Format, String> {
+pub(super) fn format(text: &str) -> Result<Format, String> {
     Format::parse(text).ok_or_else(|| {
         let names: Vec<&str> = Format::ALL.iter().map(|f| f.name()).collect();
         format!("the formats are {}", names.join(", "))

@@ -84,7 +84,7 @@ pub(super) fn book(reading: &Reading, common: &Common) -> Result<(Book, Report),
 /// The same into any sink.
 pub(super) fn into<S: Sink>(sink: S, reading: &Reading, common: &Common) -> Result<(S, Report), Failure> {
     once(reading, common)?;
-    let sources = reading.files.iter().map(|file| Source::argument(file)).collect();
+    let sources = sources(reading)?;
     let (sink, report) = read(sources, sink, reading, common)?;
     tell(&report);
     Ok((sink, report))
@@ -99,6 +99,12 @@ pub(super) fn counted(
     let (counting, report) = read(sources, Counting::default(), reading, common)?;
     tell(&report);
     Ok((counting.book(), report))
+}
+
+/// The files that are named, and what a database answers.
+pub(super) fn sources(reading: &Reading) -> Result<Vec<Source>, Failure> {
+    let files = reading.files.iter().map(|file| Source::argument(file));
+    Ok(files.chain(reading.asked.source()?).collect())
 }
 
 /// Standard input can be read only once, so it can be named only once.
@@ -206,6 +212,17 @@ fn tell(report: &Report) {
         (left.outside_window, "wait", "outside the asked time left out"),
         (left.unmeasured, "job", "without the asked time left out"),
         (left.partial, "record", "of parts of a job left out"),
+        (left.other_messages, "message", "that are no records left out"),
+        (
+            report.pairs.dropped,
+            "end",
+            "without a start dropped early: too many halves of waits were open at once",
+        ),
+        (
+            report.pairs.let_go,
+            "start",
+            "taken as still waiting early: too many halves of waits were open at once",
+        ),
         (report.pairs.ends_alone, "end", "without a start left out: how long they waited is not known"),
         (report.pairs.open_unseen, "start", "at the newest time left out: they say nothing yet"),
     ] {

@@ -11,19 +11,23 @@ use tracing_subscriber::filter::LevelFilter;
 
 use super::exit::{Exit, Failure, OrExit, print};
 use super::layout::Page;
-use super::text;
+use super::options::Foreign;
+use super::{options, text};
 use crate::client::Address;
 use crate::demo;
+use crate::intake::{Format, Options};
 use crate::ledger::LedgerError;
 use crate::say;
 use crate::serve::{
-    Config, Daemon, PolicyFile, Runs, ServeError, Signing, Webhook, is_open_to_others, read_tls, read_token,
+    Config, Daemon, Followed, PolicyFile, Runs, ServeError, Signing, Webhook, is_open_to_others, read_tls,
+    read_token,
 };
 
 const EXAMPLES: &str = "\
 Examples:
   outwait serve --demo
   outwait serve --data /var/lib/outwait --policy policy.yaml
+  outwait serve --data data --follow /var/log/waits.ndjson
   outwait serve --data data --listen 0.0.0.0:7071 --token-file token --certificate tls.crt --key tls.key
 
 Send waits with
@@ -108,6 +112,17 @@ pub(super) struct Serve {
     /// File that holds the secret by which they are signed (HMAC-SHA256)
     #[arg(long, value_name = "FILE", requires = "webhook")]
     webhook_secret: Option<PathBuf>,
+    /// A log to follow over rotations and restarts; may be given more than once
+    #[arg(long, value_name = "FILE")]
+    follow: Vec<PathBuf>,
+    #[command(flatten)]
+    foreign: Foreign,
+    /// Format of the followed files (ndjson, csv, journal), instead of finding it out
+    #[arg(long, value_name = "FORMAT", value_parser = options::format, requires = "follow")]
+    input: Option<Format>,
+    /// One stream for all waits of the followed files, whatever their records call theirs
+    #[arg(long = "as", value_name = "NAME", value_parser = options::stream_name, requires = "follow")]
+    one_stream: Option<String>,
     /// Certificates (PEM) to trust at an https webhook, instead of the system's
     #[arg(long, value_name = "FILE", requires = "webhook")]
     webhook_trust: Option<PathBuf>,
@@ -239,6 +254,11 @@ impl Serve {
             let webhook = Webhook::new(address.clone(), secret, self.webhook_trust.as_deref());
             config.weekly.webhook = Some(webhook.or_exit(Exit::BadInput)?);
         }
+        let mut options =
+            Options { format: self.input, one_stream: self.one_stream.clone(), ..Options::default() };
+        self.foreign.apply(&mut options);
+        let followed = |path: &PathBuf| Followed { path: path.clone(), options: options.clone() };
+        config.follow = self.follow.iter().map(followed).collect();
         if let (Some(certificate), Some(key)) = (&self.certificate, &self.key) {
             config.tls = Some(read_tls(certificate, key).or_exit(Exit::BadInput)?);
         }

@@ -8,7 +8,7 @@ use std::path::PathBuf;
 use anyhow::Context;
 
 use super::exit::{Exit, Failure, OrExit};
-use super::options::Reading;
+use super::options::{Asked, Reading};
 use crate::intake::Source;
 
 /// The named files, for two passes.
@@ -18,6 +18,8 @@ enum Input {
     File(PathBuf),
     /// Its name in messages, and the copy.
     Copied(String, File),
+    /// Asked again; rows that came in between are in the second answer only.
+    Asked(Box<Asked>),
 }
 
 impl Twice {
@@ -56,19 +58,24 @@ impl Twice {
             sources.push(Source::reader(&name, Tee { reader, copy }));
             inputs.push(Input::Copied(name, kept));
         }
+        if let Some(source) = reading.asked.source()? {
+            sources.push(source);
+            inputs.push(Input::Asked(Box::new(reading.asked.clone())));
+        }
         Ok((Twice(inputs), sources))
     }
 
     /// The sources of the second pass.
     pub(super) fn again(self) -> Result<Vec<Source>, Failure> {
         let source = |input| match input {
-            Input::File(path) => Ok(Source::path(path)),
+            Input::File(path) => Ok(Some(Source::path(path))),
             Input::Copied(name, mut copy) => {
                 copy.rewind().with_context(|| format!("cannot read {name} again")).or_exit(Exit::System)?;
-                Ok(Source::reader(name, copy))
+                Ok(Some(Source::reader(name, copy)))
             }
+            Input::Asked(asked) => asked.source(),
         };
-        self.0.into_iter().map(source).collect()
+        self.0.into_iter().filter_map(|input| source(input).transpose()).collect()
     }
 }
 

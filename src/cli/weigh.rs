@@ -110,7 +110,11 @@ fn advise(
             let study = terms.study_among(stream, days, suspicion, &lenders);
             let draw = |album: &Album| album.stream(&study.curves(), number, text::headline(study.advice()));
             let section = album.as_ref().map(draw).transpose()?;
-            Ok((study.into_advice(), section))
+            let mut advice = study.into_advice();
+            if let Some(found) = report.closed_loops.iter().find(|found| found.stream == **stream) {
+                terms.warn_of_closed_loop(&mut advice, found.every, found.longest);
+            }
+            Ok((advice, section))
         })
         .collect::<Result<_, Failure>>()?;
     let (advice, sections): (Vec<Advice>, Vec<Option<Section>>) = weighed.into_iter().unzip();

@@ -59,6 +59,12 @@ impl<'r> Blocks<'r> {
         Ok(&self.rest)
     }
 
+    /// All that is left as it comes. For use in place of [`Blocks::next`].
+    #[cfg(feature = "columnar")]
+    pub(super) fn into_reader(self) -> impl Read + Send + use<'r> {
+        io::Cursor::new(self.rest).chain(self.reader)
+    }
+
     /// Drops the first bytes of what [`Blocks::peek`] showed.
     pub(super) fn skip(&mut self, bytes: usize) {
         self.rest.drain(..bytes.min(self.rest.len()));
@@ -154,7 +160,7 @@ impl<'r> Blocks<'r> {
 
 impl Records {
     /// Where the first record of `bytes` ends, if it does.
-    fn first_end(self, bytes: &[u8]) -> Option<usize> {
+    pub(super) fn first_end(self, bytes: &[u8]) -> Option<usize> {
         match self {
             Records::Lines => memchr::memchr(b'\n', bytes).map(|at| at + 1),
             Records::Rows { delimiter } => row_ends(bytes, delimiter).next(),
@@ -162,7 +168,7 @@ impl Records {
     }
 
     /// Where the last record of `bytes` that has an end has it.
-    fn last_end(self, bytes: &[u8]) -> Option<usize> {
+    pub(super) fn last_end(self, bytes: &[u8]) -> Option<usize> {
         match self {
             Records::Rows { delimiter } if memchr::memchr(b'"', bytes).is_some() => {
                 row_ends(bytes, delimiter).last()

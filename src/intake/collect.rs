@@ -2,8 +2,10 @@
 
 use std::collections::BTreeMap;
 
+use super::error::ColumnsError;
 use super::exposition::Exposition;
 use super::flaw::Flaw;
+use super::mapping::Mapping;
 use super::pairs::Halves;
 use super::record::{Fields, Made, Record, make};
 use super::report::EXAMPLES;
@@ -26,9 +28,12 @@ pub(super) struct Outcome {
     pub(super) outside_window: u64,
     pub(super) unmeasured: u64,
     pub(super) partial: u64,
+    pub(super) other_messages: u64,
     pub(super) flaws: Flaws,
     pub(super) halves: Halves,
     pub(super) comments: Vec<String>,
+    /// Why the rest of the part cannot be read, if it cannot.
+    pub(super) failure: Option<ColumnsError>,
 }
 
 /// Refused lines: counted by field and reason, the first few kept.
@@ -71,10 +76,13 @@ impl<'w, S: Sink> Collector<'w, S> {
             outside_window: 0,
             unmeasured: 0,
             partial: 0,
+            other_messages: 0,
             flaws: Flaws::default(),
             halves: Halves::default(),
             comments: Vec::new(),
+            failure: None,
         };
+        streams.begin_block();
         Collector { options, sink, streams, outcome }
     }
 
@@ -124,6 +132,22 @@ impl<'w, S: Sink> Collector<'w, S> {
         self.outcome.partial += 1;
     }
 
+    /// The rest of the part cannot be read.
+    #[cfg(feature = "columnar")]
+    pub(super) fn fail(&mut self, error: ColumnsError) {
+        self.outcome.failure = Some(error);
+    }
+
+    /// A message of a log that is no record.
+    pub(super) fn other_message(&mut self) {
+        self.outcome.other_messages += 1;
+    }
+
+    /// What stands for what, where the input's words are not ours.
+    pub(super) fn mapping(&self) -> Option<&'w Mapping> {
+        self.options.mapping.as_deref()
+    }
+
     /// Spans and data points that are no waits.
     pub(super) fn not_waits(&mut self, number: u64) {
         self.outcome.not_waits += number;
@@ -159,6 +183,18 @@ impl<'w, S: Sink> Collector<'w, S> {
 
     #[inline]
     pub(super) fn record(&mut self, line: u64, fields: &Fields<'_>) -> Result<(), Flaw> {
+        match self.mapping() {
+            None => self.made(line, fields),
+            Some(mapping) => {
+                let mut own = fields.clone();
+                mapping.settle(&mut own)?;
+                self.made(line, &own)
+            }
+        }
+    }
+
+    #[inline(always)]
+    fn made(&mut self, line: u64, fields: &Fields<'_>) -> Result<(), Flaw> {
         match make(fields, self.nameless(), self.one_stream().is_some())? {
             Made::Whole(record) => self.whole(record, fields.is_bare()),
             Made::Half(half) => {
@@ -179,6 +215,7 @@ impl<'w, S: Sink> Collector<'w, S> {
     /// Takes a wait. `bare`: its age came as a number without a unit.
     #[inline(always)]
     pub(super) fn whole(&mut self, record: Record<'_>, bare: bool) -> Result<(), Flaw> {
+        let block = self.streams.block();
         let (place, stream) = self.streams.enter(record.stream, self.options.streams.as_ref())?;
         if let Some(at) = record.wait.at() {
             stream.note_time(at);
@@ -191,6 +228,7 @@ impl<'w, S: Sink> Collector<'w, S> {
             self.outcome.outside_window += 1;
             return Ok(());
         }
+        stream.pace.note(&record.wait, block);
         if bare {
             stream.note_age(&record.wait);
         }

@@ -5,7 +5,9 @@ use super::collect::Collector;
 use super::error::HeaderError;
 use super::flaw::Flaw;
 use super::format::DELIMITERS;
-use super::record::{Field, Fields, excerpt};
+use super::header::{self, Used};
+use super::mapping::Mapping;
+use super::record::Fields;
 use super::{blocks, decimal};
 
 /// Where each field stands in a row.
@@ -14,59 +16,23 @@ pub(super) struct Columns {
     pub(super) delimiter: u8,
     width: usize,
     /// Column, field, and how many of its units make a second if the header says.
-    used: Vec<(usize, Field, Option<f64>)>,
+    used: Vec<Used>,
 }
 
 impl Columns {
     /// Understands a header. `named` says whether records without a stream have a name all the same.
-    pub(super) fn from_header(header: &[u8], delimiter: u8, named: bool) -> Result<Columns, HeaderError> {
+    pub(super) fn from_header(
+        header: &[u8],
+        delimiter: u8,
+        named: bool,
+        mapping: Option<&Mapping>,
+    ) -> Result<Columns, HeaderError> {
         let mut names = ::csv::ByteRecord::new();
         let mut reader = reader(header, delimiter);
         reader.read_byte_record(&mut names).map_err(|_| HeaderError::NotText)?;
         let names = ::csv::StringRecord::from_byte_record(names).map_err(|_| HeaderError::NotText)?;
-        let mut columns = Columns { delimiter, width: names.len(), used: Vec::new() };
-        for (index, name) in names.iter().enumerate() {
-            let Some((field, unit)) = Field::with_unit(&name.trim().to_ascii_lowercase()) else { continue };
-            if columns.has(field) {
-                return Err(HeaderError::Twice { field: field.name() });
-            }
-            columns.used.push((index, field, unit));
-        }
-        let needed = match [Field::Over, Field::Upto].map(|field| columns.has(field)) {
-            _ if [Field::Elapsed, Field::Started, Field::Ended]
-                .into_iter()
-                .any(|field| columns.has(field)) =>
-            {
-                None
-            }
-            [true, true] => None,
-            [true, false] => Some(Field::Upto),
-            [false, true] => Some(Field::Over),
-            [false, false] => Some(Field::Elapsed),
-        };
-        let stream = (!named && !columns.has(Field::Stream)).then_some(Field::Stream);
-        match needed.or(stream) {
-            Some(field) => Err(columns.missing(field, &names)),
-            None => Ok(columns),
-        }
-    }
-
-    fn has(&self, field: Field) -> bool {
-        self.used.iter().any(|&(_, used, _)| used == field)
-    }
-
-    /// Names the column most like the missing one, of those that mean nothing else.
-    fn missing(&self, field: Field, names: &::csv::StringRecord) -> HeaderError {
-        let likeness = |name: &str| strsim::jaro_winkler(field.name(), &name.trim().to_ascii_lowercase());
-        let nearest = names
-            .iter()
-            .enumerate()
-            .filter(|&(index, _)| self.used.iter().all(|&(used, ..)| used != index))
-            .map(|(_, name)| (likeness(name), name))
-            .max_by(|a, b| a.0.total_cmp(&b.0))
-            .filter(|&(likeness, _)| likeness > 0.0)
-            .map(|(_, name)| excerpt(name.trim()));
-        HeaderError::Missing { field: field.name(), nearest }
+        let used = header::find(names.iter(), named, mapping)?;
+        Ok(Columns { delimiter, width: names.len(), used })
     }
 }
 

@@ -42,14 +42,36 @@ pub enum IntakeError {
     },
     /// Neither content nor name tells the format.
     #[error(
-        "{file} is {looks}; waits are read from NDJSON (one object a line), CSV or SWF text, plain or packed by \
-         gzip or zstd"
+        "{file} is {looks}; waits are read from NDJSON (one object a line), CSV, SWF or journal text, plain or \
+         packed by gzip or zstd, and from the lines of a log by a pattern"
     )]
     Unrecognised {
         /// The input.
         file: String,
         /// What it looks like.
         looks: String,
+    },
+    /// Lines are to be read by a pattern, and there is none.
+    #[error("{file} is to be read by a pattern, and none is given")]
+    NoPattern {
+        /// The input.
+        file: String,
+    },
+    /// A database cannot be asked.
+    #[error("{file}: {source}")]
+    Query {
+        /// The database, without a password.
+        file: String,
+        /// Why.
+        source: super::QueryError,
+    },
+    /// A table in columns cannot be read.
+    #[error("{file}: {source}")]
+    Columns {
+        /// The input.
+        file: String,
+        /// What is wrong with it.
+        source: ColumnsError,
     },
     /// The header of a CSV file cannot be used.
     #[error("the header of {file}: {source}")]
@@ -83,7 +105,50 @@ pub enum IntakeError {
     },
 }
 
-/// What is wrong with the header of a CSV file.
+/// Why a table in columns cannot be read.
+#[derive(Debug, thiserror::Error)]
+#[non_exhaustive]
+pub enum ColumnsError {
+    /// Its columns do not hold what is needed.
+    #[error("the columns: {0}")]
+    Header(#[from] HeaderError),
+    /// It is cut off or damaged.
+    #[error("it is cut off or damaged ({reason}); write it again")]
+    Damaged {
+        /// What the decoder says.
+        reason: String,
+    },
+    /// The decoder gave up in a way that it should not.
+    #[error("it is damaged in a way that its decoder does not name; write it again")]
+    Panic,
+    /// It cannot be opened again.
+    #[error("it cannot be read: {0}")]
+    Read(#[source] io::Error),
+    /// What came from standard input or packed cannot be put aside to be read in any order.
+    #[error(
+        "it cannot be put aside to be read in any order ({0}); make room for temporary files, or name the file itself"
+    )]
+    Spool(#[source] io::Error),
+    /// Above the limit of all inputs.
+    #[error("it takes the data beyond their limit; split it")]
+    TooMuch,
+    /// This program was built without the formats.
+    #[error("this program was built without Parquet and Arrow; build it with the feature `columnar`")]
+    Absent,
+}
+
+#[cfg(feature = "columnar")]
+impl ColumnsError {
+    pub(super) fn arrow(error: arrow_schema::ArrowError) -> ColumnsError {
+        ColumnsError::Damaged { reason: super::record::excerpt(&error.to_string()) }
+    }
+
+    pub(super) fn parquet(error: parquet::errors::ParquetError) -> ColumnsError {
+        ColumnsError::Damaged { reason: super::record::excerpt(&error.to_string()) }
+    }
+}
+
+/// What is wrong with the header of a CSV file, or with the columns of another table.
 #[derive(Clone, Debug, PartialEq, Eq, thiserror::Error)]
 #[non_exhaustive]
 pub enum HeaderError {
@@ -95,11 +160,29 @@ pub enum HeaderError {
         /// The column whose name is most like it.
         nearest: Option<String>,
     },
+    /// A column that a mapping names is not there.
+    #[error("there is no column {column:?}{}, and a field was to be read from it", but(.nearest))]
+    Unmapped {
+        /// The column.
+        column: String,
+        /// The column whose name is most like it.
+        nearest: Option<String>,
+    },
     /// Two columns for one field.
     #[error("the field `{field}` has two columns; keep one of them")]
     Twice {
         /// The field.
         field: &'static str,
+    },
+    /// A column of a type that its field cannot have.
+    #[error("the column {column:?} is {found}, which is no `{field}`")]
+    Type {
+        /// The column.
+        column: String,
+        /// The field.
+        field: &'static str,
+        /// Its type.
+        found: String,
     },
     /// The header is not UTF-8 text.
     #[error("it is not UTF-8 text")]
@@ -140,6 +223,9 @@ fn no_waits(report: &Report) -> String {
     let left_out = &report.left_out;
     if report.bad.count > 0 {
         format!("all {} lines with a record are bad{}", report.bad.count, first(report))
+    } else if left_out.other_messages > 0 {
+        "none of its messages is a record; write waits as NDJSON, or give a pattern for the messages that tell of one"
+            .into()
     } else if left_out.unmeasured + left_out.partial > 0 {
         "its jobs lack the time that was asked for; ask for the other with --measure wait or --measure run"
             .into()

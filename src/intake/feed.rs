@@ -1,15 +1,19 @@
 //! The inputs, one after the other, as blocks that can be read on their own.
 
+use std::path::PathBuf;
 use std::sync::Arc;
 use std::sync::atomic::{AtomicU64, Ordering};
 use std::vec;
 
 use super::blocks::{Blocks, Found, Records, count_lines};
+#[cfg(feature = "columnar")]
+use super::columnar;
 use super::csv::Columns;
 use super::error::{HeaderError, IntakeError};
+use super::header::{self, Used};
 use super::otlp::Signal;
 use super::source::{Packing, Source, Unpacked};
-use super::{Format, Options, csv, otlp, swf};
+use super::{Format, Options, Pattern, csv, journal, otlp, sql, swf};
 use crate::glob::Glob;
 
 /// One block of one input.
@@ -23,6 +27,10 @@ pub(super) struct Task {
     pub(super) lines_before: u64,
     /// Bytes read so far of all inputs, as they lie there.
     pub(super) bytes_read: u64,
+    /// In place of bytes, a part of a table.
+    pub(super) part: Option<Part>,
+    /// The oldest and the newest time of what was passed over unread.
+    pub(super) passed: Option<(f64, f64)>,
 }
 
 /// How to read the blocks of one input.
@@ -40,6 +48,18 @@ pub(super) enum Layout {
     },
     /// One text.
     MetricsText,
+    Journal(Option<Arc<Pattern>>),
+    Pattern(Arc<Pattern>),
+    #[cfg(feature = "columnar")]
+    Columns(Format, Arc<columnar::Plan>),
+    Rows(Vec<Used>),
+}
+
+/// A part of a table.
+pub(super) enum Part {
+    #[cfg(feature = "columnar")]
+    Columns(columnar::Part),
+    Rows(sql::Table),
 }
 
 impl Layout {
@@ -48,6 +68,11 @@ impl Layout {
             Layout::Ndjson => Format::Ndjson,
             Layout::Csv(_) => Format::Csv,
             Layout::Swf { .. } => Format::Swf,
+            Layout::Journal(_) => Format::Journal,
+            Layout::Pattern(_) => Format::Pattern,
+            #[cfg(feature = "columnar")]
+            Layout::Columns(format, _) => *format,
+            Layout::Rows(_) => Format::Sql,
             Layout::Otlp { signal: Signal::Traces, .. } => Format::OtlpTraces,
             Layout::Otlp { signal: Signal::Metrics, .. } => Format::OtlpMetrics,
             Layout::MetricsText => Format::MetricsText,
@@ -88,6 +113,77 @@ struct Open {
     lines_before: u64,
     /// Unpacked bytes that the allowance has paid for.
     paid: u64,
+    table: Option<Table>,
+}
+
+/// An input that comes in parts.
+enum Table {
+    #[cfg(feature = "columnar")]
+    Columns(columnar::Table),
+    Rows(sql::Answer),
+}
+
+impl Open {
+    fn parts(number: usize, file: String, layout: Layout, table: Table, options: &Options) -> Open {
+        Open {
+            number,
+            file,
+            packing: None,
+            blocks: Blocks::new(std::io::empty(), options.line_bytes),
+            layout: Arc::new(layout),
+            lines_before: 0,
+            paid: 0,
+            table: Some(table),
+        }
+    }
+
+    /// The next part of a table, or what was passed over at its end; `None` when all is told.
+    fn next_part(
+        &mut self,
+        bytes_read: &AtomicU64,
+        options: &Options,
+        allowance: &mut u64,
+    ) -> Result<Option<Task>, IntakeError> {
+        let Some(table) = &mut self.table else { return Ok(None) };
+        let file = &self.file;
+        let (part, lines_before, passed) = match table {
+            Table::Rows(answer) => match answer.next().map_err(|error| error.of(file))? {
+                Some(rows) => (Some((rows.bytes(), Part::Rows(rows))), 0, None),
+                None => return Ok(None),
+            },
+            #[cfg(feature = "columnar")]
+            Table::Columns(table) => {
+                let next = table.next();
+                match next.map_err(|source| IntakeError::Columns { file: file.clone(), source })? {
+                    Some(next) => (Some((next.bytes, Part::Columns(next.part))), next.passed, None),
+                    None => match table.passed() {
+                        (0, None) => return Ok(None),
+                        (rows, span) => (None, rows, span),
+                    },
+                }
+            }
+        };
+        let part = match part {
+            None => None,
+            Some((bytes, part)) => {
+                bytes_read.fetch_add(bytes, Ordering::Relaxed);
+                *allowance = allowance
+                    .checked_sub(bytes)
+                    .ok_or_else(|| IntakeError::TooMuch { file: file.clone(), limit: options.total_bytes })?;
+                Some(part)
+            }
+        };
+        Ok(Some(Task {
+            file: self.number,
+            layout: Arc::clone(&self.layout),
+            found: Found::Records,
+            bytes: Vec::new(),
+            lines_before,
+            bytes_read: bytes_read.load(Ordering::Relaxed),
+            part,
+            passed,
+        }))
+    }
 }
 
 impl<'o> Feed<'o> {
@@ -109,6 +205,15 @@ impl<'o> Feed<'o> {
                 self.open = open(number, source, self.options, &self.bytes_read, self.allowance)?;
                 continue;
             };
+            if open.table.is_some() {
+                match open.next_part(&self.bytes_read, self.options, &mut self.allowance)? {
+                    Some(task) => return Ok(Some(task)),
+                    None => {
+                        self.open = None;
+                        continue;
+                    }
+                }
+            }
             let damaged = |error| Unpacked::error(&open.file, open.packing, error);
             let found = if open.layout.is_whole() {
                 let limit = self.allowance.saturating_add(open.paid).min(LONGEST_WHOLE);
@@ -150,9 +255,25 @@ impl<'o> Feed<'o> {
                         bytes: buffer,
                         lines_before: std::mem::take(&mut open.lines_before),
                         bytes_read: self.bytes_read.load(Ordering::Relaxed),
+                        part: None,
+                        passed: None,
                     }));
                 }
             }
+        }
+    }
+}
+
+/// The format that was asked for, or that the first bytes of an input (without a byte order mark) and its name tell.
+pub(super) fn find_format(head: &[u8], file: &str, options: &Options) -> Result<Format, IntakeError> {
+    match options.format {
+        Some(format) => Ok(format),
+        // A journal's entries hold the lines that the pattern is for.
+        None if options.pattern.is_some() && !journal::is_entry(head.trim_ascii_start()) => {
+            Ok(Format::Pattern)
+        }
+        None => {
+            Format::detect(head, file).map_err(|looks| IntakeError::Unrecognised { file: file.into(), looks })
         }
     }
 }
@@ -165,6 +286,10 @@ fn open(
     bytes_read: &Arc<AtomicU64>,
     allowance: u64,
 ) -> Result<Option<Open>, IntakeError> {
+    if let Some((database, query)) = source.as_query() {
+        return open_answer(number, source.name().into(), database, query, options).map(Some);
+    }
+    let path = source.as_path();
     let unpacked = source.open(Arc::clone(bytes_read))?;
     let (packing, file) = (unpacked.packing(), unpacked.file);
     let mut blocks = Blocks::new(unpacked.reader, options.line_bytes);
@@ -191,15 +316,20 @@ fn open(
             return Err(IntakeError::TooMuch { file, limit: options.total_bytes });
         }
     };
-    let format = match options.format {
-        Some(format) => format,
-        None => match Format::detect(head, &file) {
-            Ok(format) => format,
-            Err(looks) => return Err(IntakeError::Unrecognised { file, looks }),
-        },
-    };
+    let format = find_format(head, &file, options)?;
+    if format.is_columnar() {
+        let path = path.filter(|_| packing.is_none());
+        return open_table(number, file, path, blocks, format, options, allowance).map(Some);
+    }
     let layout = match format {
         Format::Ndjson => Layout::Ndjson,
+        Format::Journal => Layout::Journal(options.pattern.clone()),
+        Format::Pattern => match &options.pattern {
+            Some(pattern) => Layout::Pattern(Arc::clone(pattern)),
+            None => return Err(IntakeError::NoPattern { file }),
+        },
+        // Opened above.
+        Format::Parquet | Format::Arrow | Format::Sql => return Ok(None),
         Format::Swf => Layout::Swf { unix_start: swf::unix_start(head) },
         Format::MetricsText => Layout::MetricsText,
         Format::OtlpTraces | Format::OtlpMetrics => {
@@ -217,7 +347,7 @@ fn open(
             let columns = if (1..=options.line_bytes).contains(&length) {
                 let named = options.one_stream.is_some()
                     || options.streams.as_ref().and_then(Glob::literal).is_some();
-                Columns::from_header(header, delimiter, named)
+                Columns::from_header(header, delimiter, named, options.mapping.as_deref())
             } else {
                 Err(HeaderError::Long { limit: options.line_bytes })
             };
@@ -230,5 +360,64 @@ fn open(
             Layout::Csv(columns)
         }
     };
-    Ok(Some(Open { number, file, packing, blocks, layout: Arc::new(layout), lines_before, paid: 0 }))
+    Ok(Some(Open {
+        number,
+        file,
+        packing,
+        blocks,
+        layout: Arc::new(layout),
+        lines_before,
+        paid: 0,
+        table: None,
+    }))
+}
+
+/// Asks a database.
+fn open_answer(
+    number: usize,
+    file: String,
+    database: &sql::Database,
+    query: &str,
+    options: &Options,
+) -> Result<Open, IntakeError> {
+    let answer = database.ask(query).map_err(|error| error.of(&file))?;
+    let named = options.one_stream.is_some() || options.streams.as_ref().and_then(Glob::literal).is_some();
+    let names = answer.columns.iter().map(String::as_str);
+    match header::find(names, named, options.mapping.as_deref()) {
+        Ok(used) => Ok(Open::parts(number, file, Layout::Rows(used), Table::Rows(answer), options)),
+        Err(source) => Err(IntakeError::Header { file, source }),
+    }
+}
+
+/// Opens a table in columns: the file itself where it lies there as it is.
+#[cfg(feature = "columnar")]
+fn open_table(
+    number: usize,
+    file: String,
+    path: Option<PathBuf>,
+    mut blocks: Blocks<'static>,
+    format: Format,
+    options: &Options,
+    allowance: u64,
+) -> Result<Open, IntakeError> {
+    let damaged = |source| IntakeError::Read { file: file.clone(), source };
+    let head = blocks.peek().map_err(damaged)?.to_vec();
+    let opened =
+        columnar::Table::open(format, path, Box::new(blocks.into_reader()), &head, options, allowance);
+    let (table, plan) = opened.map_err(|source| IntakeError::Columns { file: file.clone(), source })?;
+    let layout = Layout::Columns(format, plan);
+    Ok(Open::parts(number, file, layout, Table::Columns(table), options))
+}
+
+#[cfg(not(feature = "columnar"))]
+fn open_table(
+    _: usize,
+    file: String,
+    _: Option<PathBuf>,
+    _: Blocks<'static>,
+    _: Format,
+    _: &Options,
+    _: u64,
+) -> Result<Open, IntakeError> {
+    Err(IntakeError::Columns { file, source: super::error::ColumnsError::Absent })
 }

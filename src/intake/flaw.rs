@@ -19,6 +19,8 @@ pub(super) enum Flaw {
     NotJson { field: Option<Field>, reason: String },
     #[error("the row has {found} cells, the header {expected}")]
     Cells { found: usize, expected: usize },
+    #[error("the pattern does not match {text:?}")]
+    Unlike { text: String },
     #[error("the line has {found} fields, not 18")]
     SwfFields { found: usize },
     #[error("{text:?} is not a number")]
@@ -60,7 +62,7 @@ impl Flaw {
     pub(super) fn field(&self) -> &'static str {
         match self {
             Flaw::NotText | Flaw::Long { .. } | Flaw::OpenQuote => "line",
-            Flaw::Cells { .. } | Flaw::SwfFields { .. } => "line",
+            Flaw::Cells { .. } | Flaw::Unlike { .. } | Flaw::SwfFields { .. } => "line",
             Flaw::NotJson { field, .. } => field.map_or("line", Field::name),
             Flaw::SwfNumber { field, .. } => field,
             Flaw::Missing { field }
@@ -89,6 +91,7 @@ impl Flaw {
             Flaw::OpenQuote => "a quotation mark never closed",
             Flaw::NotJson { .. } => "not JSON",
             Flaw::Cells { .. } => "not as many cells as the header",
+            Flaw::Unlike { .. } => "not like the pattern",
             Flaw::SwfFields { .. } => "not 18 fields",
             Flaw::SwfNumber { .. } => "not a number",
             Flaw::Missing { .. } => "missing",
@@ -129,6 +132,9 @@ impl Flaw {
             Flaw::Cells { .. } => {
                 "give every row as many cells as the header; quote a cell that holds a comma"
             }
+            Flaw::Unlike { .. } => {
+                "widen the pattern, or put up with such lines by `--bad-lines`; lines of waits that it misses bend the advice"
+            }
             Flaw::SwfFields { .. } => {
                 "a line of the Standard Workload Format has 18 numbers, -1 where one is missing"
             }
@@ -151,7 +157,9 @@ impl Flaw {
                 "write seconds (0.25) or units of a fixed length (\"250ms\", \"2d 4h\")"
             }
             Flaw::Time { .. } => WaitError::At { at: 0.0 }.remedy(),
-            Flaw::Ending { .. } => "write done, failed, gave_up or waiting",
+            Flaw::Ending { .. } => {
+                "write done, failed, gave_up or waiting, or say what it stands for by `--ending-of`"
+            }
             Flaw::NotWhole { .. } => "write a whole number, or leave it out",
             Flaw::Clash { field: Field::Count, .. } => "write a start and an end for each wait",
             Flaw::Clash { .. } => "give either `elapsed`, or `over` and `upto`",

@@ -5,6 +5,7 @@ use std::path::Path;
 use serde::Serialize;
 
 use super::exposition;
+use super::journal;
 use super::otlp::{self, Signal};
 use super::record::Field;
 
@@ -19,6 +20,16 @@ pub enum Format {
     Csv,
     /// The Standard Workload Format, version 2.2, of job logs.
     Swf,
+    /// A journal's JSON export, an entry a line.
+    Journal,
+    /// Lines of a log, read by a [`super::Pattern`].
+    Pattern,
+    /// Apache Parquet.
+    Parquet,
+    /// Apache Arrow IPC, a file or a stream.
+    Arrow,
+    /// Rows that a database answers to a query.
+    Sql,
     /// Spans by OTLP: a request as protocol buffers or JSON, or lines of which each is one in JSON.
     OtlpTraces,
     /// Metrics by OTLP, likewise.
@@ -28,22 +39,30 @@ pub enum Format {
 }
 
 impl Format {
-    /// Every format.
-    pub const ALL: [Format; 6] = [
+    /// Every format that can be asked for by its name alone.
+    pub const ALL: [Format; 9] = [
         Format::Ndjson,
         Format::Csv,
         Format::Swf,
+        Format::Journal,
+        Format::Parquet,
+        Format::Arrow,
         Format::OtlpTraces,
         Format::OtlpMetrics,
         Format::MetricsText,
     ];
 
-    /// The name: `ndjson`, `csv`, `swf`, `otlp_traces`, `otlp_metrics`, `metrics_text`.
+    /// The name: `ndjson`, `csv`, `swf`, `journal`, `parquet`, `arrow`, `pattern`, `sql`, `otlp_traces`, `otlp_metrics`, `metrics_text`.
     pub fn name(self) -> &'static str {
         match self {
             Format::Ndjson => "ndjson",
             Format::Csv => "csv",
             Format::Swf => "swf",
+            Format::Journal => "journal",
+            Format::Pattern => "pattern",
+            Format::Parquet => "parquet",
+            Format::Arrow => "arrow",
+            Format::Sql => "sql",
             Format::OtlpTraces => "otlp_traces",
             Format::OtlpMetrics => "otlp_metrics",
             Format::MetricsText => "metrics_text",
@@ -55,9 +74,21 @@ impl Format {
         Format::ALL.into_iter().find(|format| format.name() == name)
     }
 
+    /// Whether it is a table in columns.
+    pub(super) fn is_columnar(self) -> bool {
+        matches!(self, Format::Parquet | Format::Arrow)
+    }
+
     /// The format of an input that begins with `head` (decompressed, without a byte order mark) and is called
     /// `name`; otherwise what it looks like.
     pub(super) fn detect(head: &[u8], name: &str) -> Result<Format, String> {
+        match head {
+            [b'P', b'A', b'R', b'1', ..] => return Ok(Format::Parquet),
+            [b'A', b'R', b'R', b'O', b'W', b'1', ..] => return Ok(Format::Arrow),
+            // The continuation mark of a stream's first message, whose length is not negative.
+            [0xff, 0xff, 0xff, 0xff, _, _, _, 0..=0x7f, ..] => return Ok(Format::Arrow),
+            _ => {}
+        }
         let mut lines =
             head.split(|&byte| byte == b'\n').map(<[u8]>::trim_ascii).filter(|line| !line.is_empty());
         let first = lines.next().unwrap_or_default();
@@ -70,6 +101,7 @@ impl Format {
             return Ok(Format::MetricsText);
         }
         match first.first() {
+            Some(b'{') if journal::is_entry(first) => return Ok(Format::Journal),
             Some(b'{') => return Ok(Format::Ndjson),
             Some(b';') => return Ok(Format::Swf),
             _ => {}
@@ -113,15 +145,13 @@ impl Format {
 pub(super) const DELIMITERS: [u8; 3] = [b',', b';', b'\t'];
 
 /// Things that are often at hand in place of a file of waits.
-const FOREIGN: [(&[u8], &str); 9] = [
+const FOREIGN: [(&[u8], &str); 7] = [
     (b"[", "a JSON array"),
     (b"\xff\xfe", "UTF-16 text"),
     (b"\xfe\xff", "UTF-16 text"),
     (b"PK\x03\x04", "a zip archive"),
     (b"BZh", "bzip2"),
     (b"\xfd7zXZ\0", "xz"),
-    (b"PAR1", "Parquet"),
-    (b"ARROW1", "Arrow"),
     (b"SQLite format 3\0", "a SQLite database"),
 ];
 
@@ -143,6 +173,7 @@ mod tests {
         assert_eq!(detect("[{\"elapsed\":1}]", "waits.ndjson"), Err("a JSON array".into()));
         assert_eq!(detect("\u{1}\0\u{2}", "waits.ndjson"), Err("binary data".into()));
         assert_eq!(detect("\u{1}\0\n{\u{2}", "waits"), Err("binary data".into()));
+        assert_eq!(detect("{\"__REALTIME_TIMESTAMP\":\"1\"}\n", "-"), Ok(Format::Journal));
         assert_eq!(detect("hello", "-"), Err("a text that begins \"hello\"".into()));
     }
 }

@@ -33,6 +33,8 @@
 
 mod blocks;
 mod collect;
+#[cfg(feature = "columnar")]
+mod columnar;
 mod csv;
 mod decimal;
 mod error;
@@ -40,28 +42,40 @@ mod exposition;
 mod feed;
 mod flaw;
 mod format;
+mod header;
+mod journal;
 mod lines;
+mod mapping;
 mod ndjson;
 mod otlp;
+mod outline;
+mod pace;
 mod pairs;
+mod pattern;
 mod read;
 mod record;
 mod report;
 mod rules;
 mod source;
+mod sql;
 mod streams;
 mod swf;
 mod telemetry;
 
 use std::num::NonZeroUsize;
+use std::sync::Arc;
 
 use crate::glob::Glob;
 use crate::running::Running;
 
-pub use error::{HeaderError, IntakeError};
+pub use error::{ColumnsError, HeaderError, IntakeError};
 pub use exposition::Exposition;
 pub use format::Format;
+pub use mapping::{Mapping, MappingError};
 pub use otlp::{Answer, Encoding};
+pub(crate) use outline::Outline;
+pub use pace::ClosedLoop;
+pub use pattern::{Pattern, PatternError};
 pub use read::{Progress, read};
 pub use record::{Half, Record, Side};
 pub use report::{
@@ -71,6 +85,7 @@ pub use report::{
 pub use rules::{Condition, Facts, MAX_CONDITIONS, MAX_RULE_BYTES, RuleError, Rules, Template};
 pub(crate) use source::Packing;
 pub use source::Source;
+pub use sql::{Access, Database, QueryError};
 
 /// The reason under which a body counts that cannot be decoded as a whole ([`BadCount::reason`]).
 pub const UNDECODABLE: &str = "not to be decoded";
@@ -110,6 +125,10 @@ pub trait Sink: Send + Sized {
 pub struct Options {
     /// The format of every input; `None`: found out for each.
     pub format: Option<Format>,
+    /// How the lines of a log, or the messages of a journal, become records; `None`: they are records.
+    pub pattern: Option<Arc<Pattern>>,
+    /// What stands for what, where names, endings or times are not ours.
+    pub mapping: Option<Arc<Mapping>>,
     /// The streams wanted, and the name of records that have none; `None`: all, and each must have one.
     pub streams: Option<Glob>,
     /// One stream for all records, whatever they call theirs; a name there is then not even looked at.
@@ -132,12 +151,17 @@ pub struct Options {
     pub line_bytes: usize,
     /// Most bytes of all inputs together, unpacked. Default: no limit.
     pub total_bytes: u64,
+    /// Most halves of waits that miss the other at once. Above it the oldest end without a start is dropped; without
+    /// such an end the oldest start becomes a wait still open. Both are counted. Default: 1,000,000.
+    pub most_open: usize,
 }
 
 impl Default for Options {
     fn default() -> Options {
         Options {
             format: None,
+            pattern: None,
+            mapping: None,
             streams: None,
             one_stream: None,
             measure: Measure::default(),
@@ -149,6 +173,7 @@ impl Default for Options {
             threads: None,
             line_bytes: 1 << 20,
             total_bytes: u64::MAX,
+            most_open: 1_000_000,
         }
     }
 }

@@ -15,6 +15,7 @@ use super::collect::Collector;
 use super::decimal;
 use super::flaw::Flaw;
 use super::lines::Lines;
+use super::mapping::Mapping;
 use super::record::{Field, Fields};
 
 /// Reads a block of whole lines.
@@ -22,9 +23,13 @@ pub(super) fn harvest<S: Sink>(block: &[u8], collector: &mut Collector<'_, S>) {
     let mut fields = Fields::new();
     let mut shapes = Shapes::default();
     let mut lines = Lines::new(block, collector.line_limit());
+    let mapping = collector.mapping();
+    // Shapes know our names only.
+    let ours = mapping.is_none_or(|mapping| mapping.columns().next().is_none());
     loop {
         // Most lines need not be searched for their end before they are read.
-        if let Some(text) = lines.rest()
+        if ours
+            && let Some(text) = lines.rest()
             && let Some(length) = shapes.read(text, &mut fields)
             && let Some(number) = lines.pass(length)
         {
@@ -34,7 +39,7 @@ pub(super) fn harvest<S: Sink>(block: &[u8], collector: &mut Collector<'_, S>) {
             continue;
         }
         let Some((number, line)) = lines.next() else { break };
-        let outcome = line.and_then(|line| collector.record(number, &gather(&careful(line)?)?));
+        let outcome = line.and_then(|line| collector.record(number, &gather(&careful(line, mapping)?)?));
         if let Err(flaw) = outcome {
             collector.refuse(number, flaw);
         }
@@ -235,11 +240,11 @@ fn stops(word: u64) -> u64 {
 }
 
 /// A known field of an object, how many of its units make a second if its name says, and its value.
-type Entry<'a> = (Field, Option<f64>, Seen<'a>);
+pub(super) type Entry<'a> = (Field, Option<f64>, Seen<'a>);
 
 /// Reads any line, and says what is wrong with its syntax.
-fn careful(line: &str) -> Result<Vec<Entry<'_>>, Flaw> {
-    let mut scan = Scan { entries: Vec::new(), present: None };
+pub(super) fn careful<'a>(line: &'a str, mapping: Option<&Mapping>) -> Result<Vec<Entry<'a>>, Flaw> {
+    let mut scan = Scan { entries: Vec::new(), present: None, mapping };
     let mut json = serde_json::Deserializer::from_str(line);
     match json.deserialize_map(&mut scan).and_then(|()| json.end()) {
         Ok(()) => Ok(scan.entries),
@@ -248,7 +253,7 @@ fn careful(line: &str) -> Result<Vec<Entry<'_>>, Flaw> {
 }
 
 /// The fields of an object, or what is wrong with one.
-fn gather<'e>(entries: &'e [Entry<'_>]) -> Result<Fields<'e>, Flaw> {
+pub(super) fn gather<'e>(entries: &'e [Entry<'_>]) -> Result<Fields<'e>, Flaw> {
     let mut fields = Fields::new();
     for (field, per_second, seen) in entries {
         let field = *field;
@@ -268,19 +273,20 @@ fn gather<'e>(entries: &'e [Entry<'_>]) -> Result<Fields<'e>, Flaw> {
 }
 
 /// The message without "at line 1", which would contradict the line number beside it.
-fn reason(error: &serde_json::Error) -> String {
+pub(super) fn reason(error: &serde_json::Error) -> String {
     let text = error.to_string();
     let what = text.split(" at line ").next().unwrap_or(&text);
     format!("{what} at column {}", error.column())
 }
 
-struct Scan<'a> {
+struct Scan<'a, 'm> {
     entries: Vec<Entry<'a>>,
     /// The field being read, for an error of syntax.
     present: Option<Field>,
+    mapping: Option<&'m Mapping>,
 }
 
-impl<'a> Visitor<'a> for &mut Scan<'a> {
+impl<'a> Visitor<'a> for &mut Scan<'a, '_> {
     type Value = ();
 
     fn expecting(&self, f: &mut fmt::Formatter<'_>) -> fmt::Result {
@@ -289,7 +295,11 @@ impl<'a> Visitor<'a> for &mut Scan<'a> {
 
     fn visit_map<A: MapAccess<'a>>(self, mut map: A) -> Result<(), A::Error> {
         while let Some(Text(key)) = map.next_key()? {
-            match Field::with_unit(&key) {
+            let found = match self.mapping {
+                Some(mapping) => mapping.field(&key),
+                None => Field::with_unit(&key),
+            };
+            match found {
                 None => {
                     map.next_value::<IgnoredAny>()?;
                 }
@@ -328,7 +338,7 @@ impl<'a> serde::Deserialize<'a> for Text<'a> {
 }
 
 /// Any JSON value.
-enum Seen<'a> {
+pub(super) enum Seen<'a> {
     /// `null`: as good as absent.
     Nothing,
     Number(f64),
@@ -410,7 +420,7 @@ mod tests {
 
     /// What serde_json makes of a line.
     fn by_serde(line: &str) -> Option<Vec<(Field, String)>> {
-        Some(gather(&careful(line).ok()?).ok()?.told())
+        Some(gather(&careful(line, None).ok()?).ok()?.told())
     }
 
     fn by_shape(shape: &Shape, text: &str) -> Option<(usize, Vec<(Field, String)>)> {

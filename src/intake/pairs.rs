@@ -1,13 +1,16 @@
 //! Starts and ends of waits that come in lines of their own, tied by stream, `id` and `attempt`.
 //!
-//! Either half may come first. Only halves that miss the other are kept, so memory grows with the waits that are
-//! open at once, not with the file.
+//! Either half may come first, and the other as late as it likes. Only halves that miss the other are kept, so memory
+//! grows with the waits that are open at once, not with the file; and of these there are at most so many. Above that
+//! the oldest end without a start goes first, since it says nothing by itself; without one the oldest start becomes
+//! what it is so far, a wait still open. Both are counted.
 
-use std::collections::HashMap;
+use std::collections::{HashMap, VecDeque};
+use std::rc::Rc;
 
 use super::flaw::Flaw;
 use super::record::{Field, Half, Record, Side, between_times, excerpt};
-use crate::wait::Ending;
+use crate::wait::{Ending, Wait};
 
 /// The halves of one block, in order. Names lie end to end in one text: a vector of owned texts would cost two
 /// allocations a line.
@@ -52,14 +55,28 @@ impl Halves {
 }
 
 /// Halves that still miss the other, over all files.
-#[derive(Debug, Default)]
+#[derive(Debug)]
 pub(super) struct Pairs {
-    open: HashMap<Box<str>, Open>,
+    open: HashMap<Rc<str>, Open>,
+    /// The same in the order of their arrival, starts and ends apart; those that have met the other half since stand
+    /// here until they come to the front, or until there are as many as of those that have not.
+    starts: Order,
+    ends: Order,
     key: String,
     arrived: u64,
+    most: usize,
+    /// The newest time of any half so far, Unix seconds.
+    newest: f64,
     /// Pairs that became one wait.
     pub(super) joined: u64,
+    /// Ends dropped for want of room, and starts that became waits still open.
+    pub(super) dropped: u64,
+    pub(super) let_go: u64,
+    /// Starts that had to go when they were the newest time of all, and so say nothing.
+    pub(super) unseen: u64,
 }
+
+type Order = VecDeque<(u64, Rc<str>)>;
 
 #[derive(Clone, Copy, Debug)]
 struct Open {
@@ -71,15 +88,40 @@ struct Open {
 }
 
 impl Pairs {
+    /// With room for so many halves that miss the other.
+    pub(super) fn new(most: usize) -> Pairs {
+        Pairs {
+            open: HashMap::new(),
+            starts: Order::new(),
+            ends: Order::new(),
+            key: String::new(),
+            arrived: 0,
+            most,
+            newest: f64::NEG_INFINITY,
+            joined: 0,
+            dropped: 0,
+            let_go: 0,
+            unseen: 0,
+        }
+    }
+
     /// Joins the halves of a block with what is open, and hands on each wait that became whole, or why it is none.
     pub(super) fn settle(&mut self, halves: &Halves, mut take: impl FnMut(u64, Result<Record<'_>, Flaw>)) {
         for (line, half) in halves.iter() {
             write_key(&mut self.key, &half);
+            self.newest = self.newest.max(half.time);
             let Some(other) = self.open.get(self.key.as_str()).copied() else {
                 let open =
                     Open { side: half.side, time: half.time, entered: half.entered, arrived: self.arrived };
-                self.open.insert(self.key.as_str().into(), open);
+                let key: Rc<str> = self.key.as_str().into();
+                let place = (self.arrived, Rc::clone(&key));
+                self.order(half.side).push_back(place);
+                self.open.insert(key, open);
                 self.arrived += 1;
+                if self.open.len() > self.most {
+                    self.make_room(&mut |record| take(line, Ok(record)));
+                }
+                self.sweep();
                 continue;
             };
             let (started, ended, ending) = match (half.side, other.side) {
@@ -100,6 +142,40 @@ impl Pairs {
         }
     }
 
+    fn order(&mut self, side: Side) -> &mut Order {
+        match side {
+            Side::Start => &mut self.starts,
+            Side::End(_) => &mut self.ends,
+        }
+    }
+
+    /// Parts with one half: the oldest end, or else the oldest start.
+    fn make_room(&mut self, take: &mut dyn FnMut(Record<'_>)) {
+        if let Some((key, _)) = oldest(&mut self.ends, &self.open) {
+            self.open.remove(&key);
+            self.dropped += 1;
+        } else if let Some((key, open)) = oldest(&mut self.starts, &self.open) {
+            self.open.remove(&key);
+            let (stream, attempt, id) = read_key(&key);
+            if let Some(wait) = open.still_waiting(self.newest, attempt) {
+                self.let_go += 1;
+                take(Record { stream, place: 0, id: Some(id), wait });
+            } else {
+                self.unseen += 1;
+            }
+        }
+    }
+
+    /// Forgets the places of halves that have met the other, before they outnumber the rest.
+    fn sweep(&mut self) {
+        if self.starts.len() + self.ends.len() > 2 * self.open.len() + 1024 {
+            let open = &self.open;
+            for order in [&mut self.starts, &mut self.ends] {
+                order.retain(|(arrived, key)| stands(open, *arrived, key));
+            }
+        }
+    }
+
     /// What is left at the end, in the order of arrival: each start as a wait still open at `seen` (Unix seconds),
     /// `None` where that is not after its start; and the ids of ends that never had one.
     pub(super) fn leave(
@@ -115,13 +191,35 @@ impl Pairs {
             match open.side {
                 Side::End(_) => end(id),
                 Side::Start => {
-                    let wait = between_times(open.time, seen, Ending::Waiting)
-                        .and_then(|wait| Ok(wait.with_attempt(attempt)?.with_entered(open.entered)?));
-                    start(wait.ok().map(|wait| Record { stream, place: 0, id: Some(id), wait }));
+                    let wait = open.still_waiting(seen, attempt);
+                    start(wait.map(|wait| Record { stream, place: 0, id: Some(id), wait }));
                 }
             }
         }
     }
+}
+
+impl Open {
+    /// A start as a wait still open at `seen`, Unix seconds; `None` where that is not after its start.
+    fn still_waiting(&self, seen: f64, attempt: u32) -> Option<Wait> {
+        let wait = between_times(self.time, seen, Ending::Waiting).ok()?;
+        wait.with_attempt(attempt).ok()?.with_entered(self.entered).ok()
+    }
+}
+
+/// Takes from the front of an order until there is a half that has not met the other.
+fn oldest(order: &mut Order, open: &HashMap<Rc<str>, Open>) -> Option<(Rc<str>, Open)> {
+    loop {
+        let (arrived, key) = order.pop_front()?;
+        if stands(open, arrived, &key) {
+            return open.get(&key).map(|open| (key, *open));
+        }
+    }
+}
+
+/// Whether the half that arrived then still misses the other.
+fn stands(open: &HashMap<Rc<str>, Open>, arrived: u64, key: &Rc<str>) -> bool {
+    open.get(key).is_some_and(|open| open.arrived == arrived)
 }
 
 /// Stream, attempt and id as one text: a look-up then needs no allocation. No stream's name holds a zero byte.

@@ -9,14 +9,14 @@ use std::thread;
 use super::blocks::Found;
 use super::collect::{Collector, Flaws, Outcome};
 use super::error::IntakeError;
-use super::feed::{Feed, Layout, Task};
+use super::feed::{Feed, Layout, Part, Task};
 use super::flaw::Flaw;
 use super::pairs::Pairs;
 use super::record::Record;
 use super::report::{BadCount, BadLine, COMMENTS, Comment, EXAMPLES, FileReport, LeftOut, Report};
 use super::source::Source;
 use super::streams::Streams;
-use super::{Allowed, Format, Options, Sink, csv, exposition, ndjson, otlp, swf};
+use super::{Allowed, Format, Options, Sink, csv, exposition, journal, ndjson, otlp, pattern, sql, swf};
 use crate::running::{Histogram, Mark, Running, SeriesKey};
 
 /// How far a reading is.
@@ -68,6 +68,21 @@ fn parse<S: Sink>(task: &Task, options: &Options, sink: &mut S, streams: &mut St
             Layout::Swf { unix_start } => {
                 swf::harvest(&task.bytes, *unix_start, options.measure, &mut collector);
             }
+            Layout::Journal(pattern) => journal::harvest(&task.bytes, pattern.as_deref(), &mut collector),
+            Layout::Pattern(lines) => pattern::harvest(&task.bytes, lines, &mut collector),
+            #[cfg(feature = "columnar")]
+            Layout::Columns(_, plan) => {
+                if let Some(Part::Columns(part)) = &task.part
+                    && let Err(error) = super::columnar::harvest(part, plan, &mut collector)
+                {
+                    collector.fail(error);
+                }
+            }
+            Layout::Rows(used) => {
+                if let Some(Part::Rows(rows)) = &task.part {
+                    sql::harvest(rows, used, &mut collector);
+                }
+            }
             Layout::Otlp { signal, lines: true } => {
                 otlp::harvest_lines(&task.bytes, *signal, &mut collector);
             }
@@ -95,7 +110,7 @@ fn read_here<S: Sink>(
     let mut buffer = Vec::new();
     while let Some(task) = feed.next(buffer)? {
         let outcome = parse(&task, options, &mut settler.sink, &mut settler.streams);
-        settler.settle(&task, outcome);
+        settler.settle(&task, outcome)?;
         tell(task.bytes_read, settler.report.lines);
         buffer = task.bytes;
     }
@@ -213,8 +228,9 @@ fn settle_in_order<S: Sink>(
             Message::Failed(error) => return Err(error),
             Message::Lost => return Ok(()),
         }
-        while let Some((task, outcome)) = early.remove(&next) {
-            settler.settle(&task, outcome);
+        while let Some(parsed) = early.remove(&next) {
+            let (task, outcome) = parsed;
+            settler.settle(&task, outcome)?;
             tell(task.bytes_read, settler.report.lines);
             // The reader may have finished.
             let _ = free.send(task.bytes);
@@ -253,16 +269,27 @@ impl<'o, S: Sink> Settler<'o, S> {
             options,
             sink,
             streams: Streams::default(),
-            pairs: Pairs::default(),
+            pairs: Pairs::new(options.most_open),
             series: BTreeMap::new(),
             counts: BTreeMap::new(),
             report: Report { files, ..Report::default() },
         }
     }
 
-    fn settle(&mut self, task: &Task, outcome: Outcome) {
+    fn settle(&mut self, task: &Task, outcome: Outcome) -> Result<(), IntakeError> {
         let Settler { options, sink, streams, report, .. } = self;
-        let Some(file) = report.files.get_mut(task.file) else { return };
+        let Some(file) = report.files.get_mut(task.file) else { return Ok(()) };
+        if let Some(source) = outcome.failure {
+            return Err(IntakeError::Columns { file: file.name.clone(), source });
+        }
+        if let Some((oldest, newest)) = task.passed {
+            report.oldest = Some(report.oldest.map_or(oldest, |time| time.min(oldest)));
+            report.newest = Some(report.newest.map_or(newest, |time| time.max(newest)));
+        }
+        if task.layout.format().is_columnar() {
+            // Only rows outside the window are passed over.
+            report.left_out.outside_window += task.lines_before;
+        }
         file.format = Some(task.layout.format());
         let mut flaws = outcome.flaws;
         let (waits, left_out) = (&mut report.waits, &mut report.left_out);
@@ -310,6 +337,7 @@ impl<'o, S: Sink> Settler<'o, S> {
         report.left_out.outside_window += outcome.outside_window;
         report.left_out.unmeasured += outcome.unmeasured;
         report.left_out.partial += outcome.partial;
+        report.left_out.other_messages += outcome.other_messages;
         let room = COMMENTS.saturating_sub(report.comments.len());
         let comments = outcome.comments.into_iter().take(room);
         report.comments.extend(comments.map(|text| Comment { file: file.name.clone(), text }));
@@ -319,15 +347,19 @@ impl<'o, S: Sink> Settler<'o, S> {
         report.lines += task.lines_before + outcome.lines;
         file.bad += flaws.counts.values().sum::<u64>();
         add_flaws(&mut self.counts, &mut report.bad.examples, flaws, &file.name, first);
+        Ok(())
     }
 
     fn finish(self) -> Result<(S, Report), IntakeError> {
         let Settler { options, mut sink, mut streams, pairs, series, counts, mut report } = self;
         if let Some((oldest, newest)) = streams.span() {
-            report.oldest = Some(oldest);
-            report.newest = Some(newest);
+            report.oldest = Some(report.oldest.map_or(oldest, |time| time.min(oldest)));
+            report.newest = Some(report.newest.map_or(newest, |time| time.max(newest)));
         }
         report.pairs.joined = pairs.joined;
+        (report.pairs.dropped, report.pairs.let_go) = (pairs.dropped, pairs.let_go);
+        report.pairs.ends_alone += pairs.dropped;
+        report.pairs.open_unseen += pairs.unseen;
         for series in series.into_values() {
             let Series::Once(running) = series else { continue };
             let place = streams.place(&running.stream);
@@ -357,6 +389,7 @@ impl<'o, S: Sink> Settler<'o, S> {
         );
         report.pairs.seen = (report.pairs.open > 0).then_some(seen);
         report.suspicions = streams.suspicions();
+        report.closed_loops = streams.closed_loops();
         report.bad.count = counts.values().sum();
         report.bad.by_reason =
             counts.into_iter().map(|((field, reason), lines)| BadCount { field, reason, lines }).collect();

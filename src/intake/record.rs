@@ -1,5 +1,8 @@
 //! A record, whatever its format: named fields with values, and the wait (or half of one) that they make.
 
+use std::borrow::Cow;
+
+use super::decimal;
 use super::flaw::Flaw;
 use crate::say;
 use crate::wait::{Ending, Wait, WaitError};
@@ -90,7 +93,13 @@ impl Field {
         })
     }
 
-    fn is_duration(self) -> bool {
+    /// How many of a unit make a second, for a field that may carry one.
+    pub(super) fn per_second(self, unit: &str) -> Option<f64> {
+        let unit = UNITS.into_iter().find(|(ending, _)| ending.strip_prefix('_') == Some(unit));
+        unit.filter(|_| self.is_duration() || self.is_time()).map(|(_, per_second)| per_second)
+    }
+
+    pub(super) fn is_duration(self) -> bool {
         matches!(self, Field::Elapsed | Field::Entered | Field::Over | Field::Upto)
     }
 
@@ -180,6 +189,36 @@ impl<'a> Fields<'a> {
             Ok(number) if number.is_finite() => self.set_number(field, number / per_second),
             _ => self.set_text(field, text),
         }
+    }
+
+    /// Sets a field from a text that is a number if it looks like one and the field takes numbers.
+    pub(super) fn set_figures(&mut self, field: Field, text: &'a str) {
+        match field.is_number().then(|| decimal::json_number(text.as_bytes())) {
+            Some(Some((number, length))) if length == text.len() => self.set_number(field, number),
+            _ => self.set_text(field, text),
+        }
+    }
+
+    /// The value of a field as text, in figures if it is a number.
+    pub(super) fn plain(&self, field: Field) -> Option<Cow<'a, str>> {
+        match self.get(field)? {
+            Value::Text(text) => Some(Cow::Borrowed(text)),
+            Value::Number(number) => Some(Cow::Owned(number.to_string())),
+        }
+    }
+
+    /// The text of a field that is one.
+    pub(super) fn as_text(&self, field: Field) -> Option<&'a str> {
+        match self.get(field)? {
+            Value::Text(text) => Some(text),
+            Value::Number(_) => None,
+        }
+    }
+
+    /// Puts a number in the place of a text.
+    pub(super) fn turn_into_number(&mut self, field: Field, number: f64) {
+        self.texts_seen &= !field.bit();
+        self.set_number(field, number);
     }
 
     #[inline]

@@ -4,6 +4,7 @@ use std::fmt;
 
 use serde::Serialize;
 
+use super::pace::ClosedLoop;
 use crate::say;
 
 /// How many bad lines are spelled out, and how many ids of ends without a start.
@@ -39,6 +40,8 @@ pub struct Report {
     pub comments: Vec<Comment>,
     /// Streams whose ages look like milliseconds given as seconds.
     pub suspicions: Vec<Suspicion>,
+    /// Streams that look like those of a sampler that waits for each answer before it asks again.
+    pub closed_loops: Vec<ClosedLoop>,
 }
 
 /// One input.
@@ -117,6 +120,8 @@ pub struct LeftOut {
     pub unmeasured: u64,
     /// Records of a part of a job that another record has as a whole (SWF status 2, 3, 4).
     pub partial: u64,
+    /// Messages of a journal that are no records.
+    pub other_messages: u64,
     /// Spans and data points that are no waits: of another unit than time, without buckets, or left out by a rule.
     #[serde(skip_serializing_if = "is_zero")]
     pub not_waits: u64,
@@ -145,6 +150,12 @@ pub struct PairsReport {
     pub ends_alone: u64,
     /// Ids of the first of these, at most [`EXAMPLES`].
     pub ends_alone_ids: Vec<String>,
+    /// Ends without a start that were dropped because too many halves were open at once
+    /// ([`super::Options::most_open`]); they are among `ends_alone`.
+    pub dropped: u64,
+    /// Starts that became waits still open before the input's end, for the same reason, seen last at the newest time
+    /// of any start or end until then; they are not among `open`.
+    pub let_go: u64,
 }
 
 /// A comment of a file's header.

@@ -9,6 +9,7 @@ use std::sync::Arc;
 use std::sync::atomic::{AtomicU64, Ordering};
 
 use super::error::IntakeError;
+use super::sql::Database;
 
 /// One input.
 pub struct Source {
@@ -20,6 +21,7 @@ enum Origin {
     Path(PathBuf),
     StandardInput,
     Reader(Box<dyn Read + Send>),
+    Query(Database, String),
 }
 
 impl Source {
@@ -44,9 +46,30 @@ impl Source {
         Source { name: name.into(), origin: Origin::Reader(Box::new(reader)) }
     }
 
+    /// What a database answers to a query, a row a record.
+    pub fn query(database: Database, query: impl Into<String>) -> Source {
+        Source { name: database.to_string(), origin: Origin::Query(database, query.into()) }
+    }
+
+    /// The database and the query, if it is one.
+    pub(super) fn as_query(&self) -> Option<(&Database, &str)> {
+        match &self.origin {
+            Origin::Query(database, query) => Some((database, query)),
+            _ => None,
+        }
+    }
+
     /// Its name in messages.
     pub fn name(&self) -> &str {
         &self.name
+    }
+
+    /// The file that it is, if it can be opened again.
+    pub(super) fn as_path(&self) -> Option<PathBuf> {
+        match &self.origin {
+            Origin::Path(path) if path.is_file() => Some(path.clone()),
+            _ => None,
+        }
     }
 
     /// Size in bytes as it lies there, packed or not; `None` where that cannot be known.
@@ -61,6 +84,8 @@ impl Source {
         let mut reader: Box<dyn Read + Send> = match self.origin {
             Origin::Reader(reader) => reader,
             Origin::StandardInput => Box::new(io::stdin()),
+            // Asked by whoever opens it.
+            Origin::Query(..) => Box::new(io::empty()),
             Origin::Path(path) => match File::open(&path) {
                 Ok(opened) if opened.metadata().is_ok_and(|metadata| metadata.is_dir()) => {
                     return Err(IntakeError::Directory { file });

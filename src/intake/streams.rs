@@ -5,6 +5,7 @@ use std::collections::HashMap;
 
 use foldhash::fast::RandomState;
 
+use super::pace::{ClosedLoop, Pace};
 use super::report::{Because, Suspicion};
 use crate::glob::Glob;
 use crate::wait::{Age, Ending, StreamError, Wait, check_stream};
@@ -15,6 +16,8 @@ pub(super) struct Streams {
     /// Looked up for every line, hence the fast hash; it is seeded, so no writer of names can aim at it.
     places: HashMap<Box<str>, usize, RandomState>,
     streams: Vec<Stream>,
+    /// The number of the present block, from 1.
+    block: u64,
 }
 
 #[derive(Clone, Copy, Debug)]
@@ -29,6 +32,7 @@ pub(super) struct Stream {
     broken_times: u64,
     oldest: f64,
     newest: f64,
+    pub(super) pace: Pace,
 }
 
 /// Ages on a scale of powers of two: enough to tell thousandfold differences, and exact to add up.
@@ -62,6 +66,24 @@ impl Streams {
             }
         };
         Ok((place, &mut self.streams[place]))
+    }
+
+    /// Begins another block: its first record is no neighbour of the last.
+    pub(super) fn begin_block(&mut self) {
+        self.block += 1;
+    }
+
+    /// The number of the present block.
+    pub(super) fn block(&self) -> u64 {
+        self.block
+    }
+
+    /// Streams that look like closed loops, by name.
+    pub(super) fn closed_loops(&self) -> Vec<ClosedLoop> {
+        let paces = self.places.iter().filter_map(|(name, &place)| self.streams[place].pace.finding(name));
+        let mut found: Vec<_> = paces.collect();
+        found.sort_by(|a, b| a.stream.cmp(&b.stream));
+        found
     }
 
     /// The number of a stream that is checked and wanted.
@@ -117,6 +139,7 @@ impl Stream {
             broken_times: 0,
             oldest: f64::INFINITY,
             newest: f64::NEG_INFINITY,
+            pace: Pace::default(),
         }
     }
 
@@ -146,6 +169,7 @@ impl Stream {
         self.broken_times += other.broken_times;
         self.oldest = self.oldest.min(other.oldest);
         self.newest = self.newest.max(other.newest);
+        self.pace.absorb(&other.pace);
     }
 
     /// Milliseconds given as seconds are whole numbers, mostly from 10 to a minute's worth. Whole seconds of that

@@ -3,7 +3,7 @@
 use std::collections::{BTreeMap, HashMap};
 use std::fmt;
 
-use super::{Hour, MAX_RECORD_BYTES, MAX_SUBJECT_BYTES, Record, RecordError};
+use super::{Hour, MAX_RECORD_BYTES, MAX_SUBJECT_BYTES, Position, Record, RecordError};
 use crate::running::Running;
 use crate::tally::{self, Periods, Tally};
 use crate::wait::{Ending, StreamError, Wait, check_stream};
@@ -25,6 +25,7 @@ pub struct Batch {
     pub(super) events: Vec<Event>,
     pub(super) running: Vec<Running>,
     pub(super) bad_lines: BTreeMap<Box<str>, u64>,
+    pub(super) positions: BTreeMap<Box<str>, Position>,
     pub(super) records: Vec<Record>,
 }
 
@@ -83,6 +84,12 @@ impl Batch {
             self.bad_lines(&reason, lines);
         }
         self.records.extend(other.records);
+        self.positions.extend(other.positions);
+    }
+
+    /// Files how far a followed file was read, if and only if the rest of the batch is filed.
+    pub fn reached(&mut self, name: &str, position: Position) {
+        self.positions.insert(name.into(), position);
     }
 
     #[inline]
@@ -203,6 +210,7 @@ impl Batch {
             && self.bad_lines.is_empty()
             && self.records.is_empty()
             && self.running.is_empty()
+            && self.positions.is_empty()
     }
 }
 

@@ -11,7 +11,7 @@ use super::grow::{self, Known};
 use super::open::{self, Filed, State};
 use super::{
     Batch, BatchError, Damage, Digest, Entry, Extent, Hour, Ledger, LedgerError, OpenWait, Options, Period,
-    Reader, Receipt, Record, Records, Shelf, Upkeep,
+    Position, Reader, Receipt, Record, Records, Shelf, Upkeep,
 };
 use crate::running::{Mark, SeriesKey};
 use crate::tally::{self, Tally};
@@ -37,6 +37,7 @@ struct Held {
     singles: usize,
     joined: usize,
     bad_lines: BTreeMap<Hour, BTreeMap<Box<str>, u64>>,
+    positions: BTreeMap<Box<str>, Position>,
     records: BTreeMap<(Shelf, Box<str>, i64), Box<str>>,
 }
 
@@ -153,6 +154,7 @@ impl Held {
             let sum = self.bad_lines.entry(Hour::of(now)).or_default().entry(reason.clone()).or_default();
             *sum = sum.saturating_add(*lines);
         }
+        self.positions.extend(batch.positions.iter().map(|(name, position)| (name.clone(), *position)));
         for Record { shelf, subject, number, text } in &batch.records {
             self.records.insert((*shelf, subject.clone(), *number), text.clone());
         }
@@ -304,6 +306,10 @@ impl Reader for MemoryLedger {
             *sum = sum.saturating_add(*lines);
         }
         Ok(sums)
+    }
+
+    fn position(&self, name: &str) -> Result<Option<Position>, LedgerError> {
+        Ok(self.read().positions.get(name).copied())
     }
 
     fn records(&self, shelf: Shelf, subject: Option<&str>) -> Result<Records, LedgerError> {

@@ -54,6 +54,7 @@ mod memory;
 mod open;
 mod options;
 mod period;
+mod position;
 mod record;
 pub mod sqlite;
 
@@ -66,6 +67,7 @@ pub use export::{ExportError, Exported, export};
 pub use memory::MemoryLedger;
 pub use options::Options;
 pub use period::{Hour, Period};
+pub use position::Position;
 pub use record::{MAX_RECORD_BYTES, MAX_SUBJECT_BYTES, Record, RecordError, Records, Shelf};
 pub use sqlite::{LAYOUT_VERSION, SqliteLedger, SqliteReader};
 
@@ -127,6 +129,12 @@ pub trait Reader: Send {
     /// # Errors
     /// [`LedgerError`] of the store.
     fn bad_lines(&self, hours: Range<Hour>) -> Result<BTreeMap<String, u64>, LedgerError>;
+
+    /// How far the file followed under a name was read; `None` if nothing of it was counted yet.
+    ///
+    /// # Errors
+    /// [`LedgerError`] of the store.
+    fn position(&self, name: &str) -> Result<Option<Position>, LedgerError>;
 
     /// The records on a shelf, of one subject or of all.
     ///

@@ -91,6 +91,9 @@ pub struct Settings {
     pub hysteresis: f64,
     /// Rest after a change, s.
     pub cool_down_s: f64,
+    /// How often a sampler that waits for each answer means to ask, s.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    pub sampled_every_s: Option<f64>,
     /// Streams that this one waits for.
     pub calls: Vec<String>,
 }
@@ -230,6 +233,7 @@ impl Settings {
             slack,
             hysteresis,
             cool_down_s: cool_down,
+            sampled_every_s: entry.sampled_every,
             calls: entry.calls.clone(),
         }
     }
@@ -248,6 +252,13 @@ fn sentences(entry: &Entry) -> Vec<String> {
     });
     retry(entry, &mut says);
     guard(entry, &mut says);
+    if let Some(every) = entry.sampled_every {
+        says.push(format!(
+            "Its waits come from a sampler that asks every {} and waits for each answer: what it did not ask during \
+             slow answers is put back into the curves; the evidence stays what was asked.",
+            say::duration(every)
+        ));
+    }
     if !entry.calls.is_empty() {
         says.push(format!("Waits in its turn for `{}`.", entry.calls.join("`, `")));
     }

@@ -90,6 +90,8 @@ pub struct Entry {
     pub retry: Retry,
     /// What the advice must keep to.
     pub guard: Guard,
+    /// How often a sampler that waits for each answer means to ask, s; `None`: the waits are as they come.
+    pub sampled_every: Option<f64>,
     /// Streams that this one waits for in its turn; checked names.
     pub calls: Vec<String>,
 }
@@ -107,6 +109,7 @@ impl Entry {
             now: None,
             retry: Retry::default(),
             guard: Guard::default(),
+            sampled_every: None,
             calls: Vec::new(),
         }
     }

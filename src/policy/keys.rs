@@ -226,6 +226,8 @@ keys! {
         "A proposal that stands is replaced only by one that gains at least this share of the rate.";
     COOL_DOWN: Guard "cool_down", "a duration with its unit, 0 or more", "7d", "7d",
         "Rest after a change before the next is proposed.";
+    SAMPLED_EVERY: Entry "sampled_every", "a duration with its unit, above 0", "100ms", "none, the waits are as they come",
+        "How often a sampler that waits for each answer means to ask; what it did not ask during slow answers is put back.";
     CALLS: Entry "calls", "a list of stream names, at most 100", "[index.search]", "none",
         "The streams that this one waits for in its turn.";
 

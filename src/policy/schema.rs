@@ -109,9 +109,10 @@ impl Reader {
         let worth = self.worth(&fields, &retry);
         let now = self.value(&fields, &keys::NOW, scalar::give_up);
         let guard = self.guard(&fields, now);
+        let sampled_every = self.value(&fields, &keys::SAMPLED_EVERY, span);
         let calls = self.calls(&fields);
-        let entry =
-            Entry { matches: matches?, number, line: node.at.line, kind, worth, now, retry, guard, calls };
+        let (matches, line) = (matches?, node.at.line);
+        let entry = Entry { matches, number, line, kind, worth, now, retry, guard, sampled_every, calls };
         if let Some(worth) = entry.worth.filter(|_| entry.restart_is_free()) {
             let what = Concern::FreeRestart { aim: aim_name(worth.aim) };
             self.concern(fields.place(&keys::AIM), &keys::AIM, what);

@@ -113,14 +113,47 @@ pub(super) fn count_with(body: Bytes, reading: Reading<'_>, options: Options) ->
         Some(key) => Batch::keyed(key, Digest::of(&body))?,
         None => Batch::default(),
     };
-    let sink = Counting { batch, now: reading.now, any_open: reading.any_open, events: 0, refused: 0 };
     let source = Source::reader("body", std::io::Cursor::new(body));
-    let (sink, report) = read(vec![source], &options, sink, &mut |_| ())?;
+    Ok(count_into(batch, source, &options, reading.now, reading.any_open)?)
+}
+
+/// Counts a part of a followed file. That there is no wait in it is no error.
+pub(super) fn count_part(
+    part: Vec<u8>,
+    name: &str,
+    options: &Options,
+    now: f64,
+    any_open: bool,
+) -> Result<Counted, IntakeError> {
+    let source = Source::reader(name, std::io::Cursor::new(part));
+    match count_into(Batch::default(), source, options, now, any_open) {
+        Err(IntakeError::NoWaits { report }) => {
+            let mut batch = Batch::default();
+            note_bad(&mut batch, &report);
+            Ok(Counted { batch, report: *report, events: 0, refused: 0 })
+        }
+        counted => counted,
+    }
+}
+
+fn count_into(
+    batch: Batch,
+    source: Source,
+    options: &Options,
+    now: f64,
+    any_open: bool,
+) -> Result<Counted, IntakeError> {
+    let sink = Counting { batch, now, any_open, events: 0, refused: 0 };
+    let (sink, report) = read(vec![source], options, sink, &mut |_| ())?;
     let Counting { mut batch, events, refused, .. } = sink;
+    note_bad(&mut batch, &report);
+    Ok(Counted { batch, report, events, refused })
+}
+
+fn note_bad(batch: &mut Batch, report: &Report) {
     for bad in &report.bad.by_reason {
         batch.bad_lines(&format!("{}: {}", bad.field, bad.reason), bad.lines);
     }
-    Ok(Counted { batch, report, events, refused })
 }
 
 /// Why nothing of a body was counted.

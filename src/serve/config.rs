@@ -8,6 +8,7 @@ use std::time::{Duration, SystemTime};
 
 use subtle::ConstantTimeEq;
 
+use super::follow::Followed;
 use super::reload::PolicyFile;
 use super::weekly::Runs;
 use crate::ledger;
@@ -40,6 +41,8 @@ pub struct Config {
     pub metric_streams: usize,
     /// Where the weekly runs go.
     pub weekly: Runs,
+    /// The files that are followed.
+    pub follow: Vec<Followed>,
     /// Seed of everything drawn.
     pub seed: u64,
     /// What time it is.
@@ -61,6 +64,7 @@ impl Config {
             refresh: 10.0,
             metric_streams: 1_000,
             weekly: Runs::default(),
+            follow: Vec::new(),
             seed: 1,
             clock: Arc::new(system_time),
         }

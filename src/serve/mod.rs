@@ -14,6 +14,7 @@ mod config;
 mod connections;
 mod demo;
 mod diary;
+mod follow;
 mod http;
 mod keeper;
 mod loss;
@@ -38,6 +39,7 @@ use std::sync::Arc;
 use tokio::net::TcpListener;
 
 pub use config::{Clock, Config, Limits, SecretError, Signing, Token, read_token};
+pub use follow::Followed;
 pub use http::OPENAPI;
 pub use reload::{PolicyFile, ReloadError};
 pub use tls::{TlsError, read_certificates, read_tls};
@@ -102,6 +104,10 @@ impl Daemon {
         threads.push(clerk::start(Arc::clone(&shared)).map_err(refused("a thread"))?);
         threads.push(scrape::start(Arc::clone(&shared)).map_err(refused("a thread"))?);
         threads.push(weekly::start(Arc::clone(&shared)).map_err(refused("a thread"))?);
+        for followed in &shared.config.follow {
+            let follower = follow::start(followed.clone(), Arc::clone(&shared));
+            threads.push(follower.map_err(refused("a thread"))?);
+        }
         shared.desk.at_once(shared.streams());
         Ok(Daemon { shared, threads, keeper })
     }

@@ -161,7 +161,7 @@ impl Shared {
         Some(f64::from_bits(self.filed.load(Ordering::Relaxed))).filter(|at| *at > 0.0)
     }
 
-    /// Counts what was read, whatever became of it.
+    /// Counts what was read, whatever becomes of it.
     pub(super) fn note(&self, report: &Report) {
         self.metrics.left_out_of_telemetry.inc_by(report.left_out.not_waits);
         self.metrics.lines.inc_by(report.lines);

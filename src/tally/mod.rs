@@ -8,6 +8,7 @@ mod buckets;
 mod carry;
 mod cells;
 mod encode;
+mod omission;
 mod waits;
 
 pub use ages::{Ages, Bin, EXACT_AGES};

@@ -21,7 +21,7 @@ fn batch(number: u64) -> (String, u64) {
     (line.repeat(waits as usize), waits)
 }
 
-fn age(number: u64) -> f64 {
+pub(crate) fn age(number: u64) -> f64 {
     (number + 1) as f64 * 1e-3
 }
 
@@ -36,7 +36,7 @@ fn send(to: SocketAddr, number: u64) -> Option<u64> {
 }
 
 /// How often each age was counted, by the program's own export.
-fn counted(folder: &Path) -> HashMap<u64, u64> {
+pub(crate) fn counted(folder: &Path) -> HashMap<u64, u64> {
     let output = Command::new(env!("CARGO_BIN_EXE_outwait"))
         .args(["ledger", "export", "--data"])
         .arg(folder)

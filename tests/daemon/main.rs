@@ -5,6 +5,7 @@
 mod api;
 mod client;
 mod faults;
+mod follow;
 mod house;
 mod kills;
 mod metrics;

@@ -15,9 +15,15 @@ pub(crate) struct Process {
 
 impl Process {
     pub(crate) fn start(folder: &Path) -> Process {
+        Process::with(folder, &[])
+    }
+
+    /// With more arguments.
+    pub(crate) fn with(folder: &Path, arguments: &[&str]) -> Process {
         let mut child = Command::new(env!("CARGO_BIN_EXE_outwait"))
             .args(["serve", "--listen", "127.0.0.1:0", "--log", "json", "--data"])
             .arg(folder)
+            .args(arguments)
             .env_remove("OUTWAIT_POLICY")
             .stderr(Stdio::piped())
             .stdout(Stdio::null())

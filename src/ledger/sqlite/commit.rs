@@ -8,11 +8,11 @@ use rusqlite::{Connection, OptionalExtension, Result, Row, Transaction, Transact
 use super::live::{Live, Place};
 use super::read::key_count;
 use super::seal::{checksum, record_seal};
-use super::{Queued, SqliteLedger, entry, read_lock, write_lock};
+use super::{Queued, SqliteLedger, entry, positions, read_lock, write_lock};
 use crate::ledger::batch::{EventKey, Hours};
 use crate::ledger::grow::{self, Known};
 use crate::ledger::open::{self, Filed, State};
-use crate::ledger::{Batch, BatchError, Digest, Entry, Hour, Options, Receipt, Record, Shelf};
+use crate::ledger::{Batch, BatchError, Digest, Entry, Hour, Options, Position, Receipt, Record, Shelf};
 use crate::running::{Mark, SeriesKey};
 use crate::tally::{self, Tally};
 use crate::wait::Ending;
@@ -28,6 +28,7 @@ struct Plan<'b> {
     singles: usize,
     joined: usize,
     bad_lines: BTreeMap<&'b str, u64>,
+    positions: BTreeMap<&'b str, Position>,
     marks: HashMap<SeriesKey, Mark>,
     /// Of these, those of series that had none.
     new_marks: usize,
@@ -70,6 +71,7 @@ impl SqliteLedger {
         plan.write_keys(&tx, time, self.options.most_keys)?;
         plan.write_events(&tx, &read_lock(&self.live), self.options.most_open)?;
         plan.write_bad_lines(&tx, Hour::of(now))?;
+        positions::write(&tx, &plan.positions)?;
         plan.write_records(&tx)?;
         plan.write_marks(&tx, time)?;
         let (mut due, mut credit, mut appended) = (0, self.credit, None);
@@ -211,6 +213,7 @@ impl<'b> Plan<'b> {
             let sum = self.bad_lines.entry(reason).or_default();
             *sum = sum.saturating_add(*lines);
         }
+        self.positions.extend(batch.positions.iter().map(|(name, position)| (&**name, *position)));
         if let Some((key, digest)) = &batch.key {
             self.keys.insert(key, *digest);
             self.key_order.push(key);

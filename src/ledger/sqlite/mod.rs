@@ -6,6 +6,7 @@ mod entry;
 mod fold;
 mod live;
 mod lock;
+mod positions;
 mod read;
 mod schema;
 mod seal;
@@ -26,8 +27,8 @@ pub use self::read::SqliteReader;
 pub use self::schema::LAYOUT_VERSION;
 use super::clock::Clock;
 use super::{
-    Batch, Damage, Extent, Hour, Ledger, LedgerError, OpenWait, Options, Period, Reader, Receipt, Records,
-    Shelf, Upkeep,
+    Batch, Damage, Extent, Hour, Ledger, LedgerError, OpenWait, Options, Period, Position, Reader, Receipt,
+    Records, Shelf, Upkeep,
 };
 use crate::tally::Tally;
 
@@ -164,6 +165,10 @@ impl Reader for SqliteLedger {
 
     fn bad_lines(&self, hours: Range<Hour>) -> Result<BTreeMap<String, u64>, LedgerError> {
         self.reader.bad_lines(hours)
+    }
+
+    fn position(&self, name: &str) -> Result<Option<Position>, LedgerError> {
+        self.reader.position(name)
     }
 
     fn records(&self, shelf: Shelf, subject: Option<&str>) -> Result<Records, LedgerError> {

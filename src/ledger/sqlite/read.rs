@@ -11,7 +11,9 @@ use rusqlite::{Connection, OptionalExtension, Result, Row, Transaction, Transact
 use super::live::{Live, Slot};
 use super::seal::{checksum, record_seal, unseal};
 use super::{Queued, entry, fault, file_in, is_damage, read_lock, schema};
-use crate::ledger::{Damage, Extent, Hour, LedgerError, OpenWait, Period, Reader, Record, Records, Shelf};
+use crate::ledger::{
+    Damage, Extent, Hour, LedgerError, OpenWait, Period, Position, Reader, Record, Records, Shelf,
+};
 use crate::tally::Tally;
 
 /// Reads a ledger on disk: beside its writer, or without one.
@@ -173,6 +175,10 @@ impl Reader for SqliteReader {
             Ok(sums)
         };
         read().map_err(|error| self.fault(error))
+    }
+
+    fn position(&self, name: &str) -> Result<Option<Position>, LedgerError> {
+        super::positions::read(&self.db, name).map_err(|error| self.fault(error))
     }
 
     fn records(&self, shelf: Shelf, subject: Option<&str>) -> Result<Records, LedgerError> {

@@ -54,6 +54,10 @@ CREATE TABLE records (
 );
 CREATE TABLE marks (key BLOB PRIMARY KEY, since REAL NOT NULL, seal INTEGER NOT NULL, mark BLOB NOT NULL) WITHOUT ROWID;
 CREATE INDEX marks_by_age ON marks (since);
+CREATE TABLE positions (
+  name TEXT PRIMARY KEY, device INTEGER NOT NULL, file INTEGER NOT NULL,
+  offset INTEGER NOT NULL, lines INTEGER NOT NULL, before BLOB NOT NULL
+) WITHOUT ROWID;
 ";
 
 /// Opens the file for writing, makes it if there is none, and brings it to the present layout.
