@@ -600,7 +600,7 @@ fn records_are_kept_word_for_word_and_decisions_for_good() {
                 read(Shelf::Decisions, None).records,
                 [first.clone(), other.clone(), elsewhere.clone()]
             );
-            assert_eq!(read(Shelf::Days, None).records, [later.clone()]);
+            assert_eq!(read(Shelf::Days, None).records, std::slice::from_ref(&later));
             assert_eq!(read(Shelf::Weeks, Some("")).records.len(), 1);
             assert_eq!(read(Shelf::Days, Some("none")), Default::default());
             house.reopen();
