@@ -452,7 +452,7 @@ fn lines_of_documents() {
     }
 }
 
-/// The histogram of the text format's own documentation (prometheus.io/docs/instrumenting/exposition_formats), with what
+/// The histogram of the text format's own documentation (prometheus.io/docs/instrumenting/exposition_formats; from memory), with what
 /// stands around it there.
 const TEXT: &str = r#"# HELP http_requests_total The total number of HTTP requests.
 # TYPE http_requests_total counter
@@ -513,7 +513,7 @@ fn the_text_formats_own_histogram() {
     }
 }
 
-/// The histogram of the OpenMetrics specification ("Histogram" and "Exemplars"): times in seconds, a start, exemplars.
+/// The histogram of the OpenMetrics specification ("Histogram" and "Exemplars", from memory): times in seconds, a start, exemplars.
 #[test]
 fn the_histogram_of_open_metrics() {
     let text = "# TYPE foo_seconds histogram\n# UNIT foo_seconds seconds\n\
