@@ -164,3 +164,23 @@ fn a_table_that_is_cut_off_is_damaged() {
         }
     }
 }
+
+/// Written by arrow-rs, which fills the magic word up to 64 bytes where pyarrow fills it up to 8.
+#[test]
+fn a_file_of_another_writer() {
+    use arrow_array::{ArrayRef, Float64Array, RecordBatch, StringArray};
+    let folder = tempfile::tempdir().unwrap();
+    let path = folder.path().join("waits.arrow");
+    let streams: ArrayRef = Arc::new(StringArray::from(vec!["courier.slot", "scan.job"]));
+    let elapsed: ArrayRef = Arc::new(Float64Array::from(vec![1.5, 90.0]));
+    let batch = RecordBatch::try_from_iter([("stream", streams), ("elapsed", elapsed)]).unwrap();
+    let file = std::fs::File::create(&path).unwrap();
+    let mut writer = arrow_ipc::writer::FileWriter::try_new(file, &batch.schema()).unwrap();
+    writer.write(&batch).unwrap();
+    writer.finish().unwrap();
+    let (kept, report) = read(vec![Source::path(path)], &threads(1), Kept::default(), &mut |_| ()).unwrap();
+    assert_eq!((report.waits, report.bad.count), (2, 0));
+    let ages: Vec<(&str, Age)> =
+        kept.0.iter().map(|(stream, _, wait)| (stream.as_str(), wait.age())).collect();
+    assert_eq!(ages, [("courier.slot", Age::Exact(1.5)), ("scan.job", Age::Exact(90.0))]);
+}

@@ -21,6 +21,9 @@ const CONTINUATION: [u8; 4] = [0xff; 4];
 
 const MAGIC: &[u8] = b"ARROW1";
 
+/// How often eight zero bytes may follow a file's magic word: some writers fill up to 64 bytes.
+const MOST_FILLING: u8 = 7;
+
 /// The batches that are left.
 pub(in crate::intake) struct Batches(StreamReader<Messages>);
 
@@ -35,7 +38,8 @@ impl Batches {
             // The magic word, and what fills it up to eight bytes.
             io::copy(&mut reader.by_ref().take(8), &mut io::sink()).map_err(damaged)?;
         }
-        let mut messages = Messages { reader, ready: Cursor::default(), is_file, ended: false };
+        let filling = if is_file { MOST_FILLING } else { 0 };
+        let mut messages = Messages { reader, ready: Cursor::default(), is_file, filling, ended: false };
         messages.advance().map_err(damaged)?;
         let schema = guarded(|| {
             let message = root_as_message(messages.ready.get_ref().get(8..).unwrap_or_default());
@@ -65,6 +69,8 @@ struct Messages {
     /// The message that is handed on.
     ready: Cursor<Vec<u8>>,
     is_file: bool,
+    /// How much filling may still come.
+    filling: u8,
     ended: bool,
 }
 
@@ -76,6 +82,12 @@ impl Messages {
         self.ready.set_position(0);
         let bytes = self.ready.get_mut();
         self.ended = self.reader.by_ref().take(8).read_to_end(bytes)? < 8;
+        while self.filling > 0 && *bytes == [0; 8] {
+            self.filling -= 1;
+            bytes.clear();
+            self.ended = self.reader.by_ref().take(8).read_to_end(bytes)? < 8;
+        }
+        self.filling = 0;
         let length = |bytes: &[u8]| {
             let length = bytes.strip_prefix(&CONTINUATION)?.first_chunk::<4>()?;
             u64::try_from(i32::from_le_bytes(*length)).ok()
