@@ -49,6 +49,17 @@ const UNITS: [(&str, f64, f64); 6] = [
     ("µs", 1e-6, 0.0),
 ];
 
+/// An error and what lies behind it, in one line.
+pub(crate) fn chain(error: &dyn std::error::Error) -> String {
+    let mut text = error.to_string();
+    let mut next = error.source();
+    while let Some(error) = next {
+        text += &format!(": {error}");
+        next = error.source();
+    }
+    text
+}
+
 /// Words with their first letter capital.
 pub fn capital(words: &str) -> String {
     let mut letters = words.chars();

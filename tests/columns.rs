@@ -3,28 +3,16 @@
 #![cfg(feature = "columnar")]
 #![allow(clippy::unwrap_used, clippy::panic)] // a test may fail
 
+#[path = "support/kept.rs"]
+mod kept;
+
 use std::num::NonZeroUsize;
 use std::path::{Path, PathBuf};
 use std::sync::Arc;
 
-use outwait::intake::{Allowed, Format, IntakeError, Mapping, Options, Record, Report, Sink, Source, read};
+use kept::Kept;
+use outwait::intake::{Allowed, Format, IntakeError, Mapping, Options, Report, Source, read};
 use outwait::wait::{Age, Wait};
-
-/// Keeps every record.
-#[derive(Default)]
-struct Kept(Vec<(String, Option<String>, Wait)>);
-
-impl Sink for Kept {
-    fn take(&mut self, record: &Record<'_>) {
-        self.0.push((record.stream.into(), record.id.map(String::from), record.wait));
-    }
-    fn fork(&self) -> Self {
-        Kept::default()
-    }
-    fn absorb(&mut self, other: Self) {
-        self.0.extend(other.0);
-    }
-}
 
 fn table(name: &str) -> PathBuf {
     Path::new(env!("CARGO_MANIFEST_DIR")).join("tests/reference/columns").join(name)

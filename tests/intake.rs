@@ -2,12 +2,16 @@
 
 #![allow(clippy::unwrap_used, clippy::expect_used, clippy::panic, missing_docs)]
 
+#[path = "support/kept.rs"]
+mod kept;
+
 use std::io::{self, Cursor, Read, Write};
 use std::num::NonZeroUsize;
 use std::path::PathBuf;
 use std::sync::Arc;
 use std::sync::atomic::{AtomicU64, Ordering};
 
+use kept::Kept;
 use outwait::intake::{
     Allowed, Because, Format, HeaderError, IntakeError, Measure, Options, Record, Report, Sink, Source, read,
 };
@@ -15,24 +19,6 @@ use outwait::wait::{Age, Ending, Wait};
 use proptest::prelude::*;
 
 type Owned = (String, Option<String>, Wait);
-
-/// Keeps every record.
-#[derive(Debug, Default)]
-struct Kept(Vec<Owned>);
-
-impl Sink for Kept {
-    fn take(&mut self, record: &Record<'_>) {
-        self.0.push((record.stream.into(), record.id.map(String::from), record.wait));
-    }
-
-    fn fork(&self) -> Self {
-        Kept::default()
-    }
-
-    fn absorb(&mut self, other: Self) {
-        self.0.extend(other.0);
-    }
-}
 
 impl Kept {
     fn waits(&self) -> Vec<Wait> {

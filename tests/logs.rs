@@ -2,30 +2,18 @@
 //! other endings, other times; and starts and ends that come late, in any order, or in too great a number.
 #![allow(clippy::unwrap_used, clippy::panic)] // a test may fail
 
+#[path = "support/kept.rs"]
+mod kept;
+
 use std::io::Cursor;
 use std::num::NonZeroUsize;
 use std::sync::Arc;
 
+use kept::Kept;
 use outwait::intake::{
-    Allowed, Format, IntakeError, Mapping, Options, Pattern, PatternError, Record, Report, Sink, Source, read,
+    Allowed, Format, IntakeError, Mapping, Options, Pattern, PatternError, Report, Source, read,
 };
-use outwait::wait::{Age, Ending, Wait};
-
-/// Keeps every record.
-#[derive(Default)]
-struct Kept(Vec<(String, Option<String>, Wait)>);
-
-impl Sink for Kept {
-    fn take(&mut self, record: &Record<'_>) {
-        self.0.push((record.stream.into(), record.id.map(String::from), record.wait));
-    }
-    fn fork(&self) -> Self {
-        Kept::default()
-    }
-    fn absorb(&mut self, other: Self) {
-        self.0.extend(other.0);
-    }
-}
+use outwait::wait::{Age, Ending};
 
 impl Kept {
     fn told(&self) -> Vec<(&str, f64, Ending, Option<f64>)> {

@@ -10,6 +10,7 @@ use postgres::{Client, Config, Error, NoTls, Row};
 
 use super::tls::Tls;
 use super::{Access, QueryError, Rows, Table, Told, hand_over};
+use crate::say;
 
 /// Rows asked for at once.
 const ROWS: i32 = 4096;
@@ -30,7 +31,7 @@ pub(super) struct Server {
 impl Server {
     pub(super) fn at(address: &str, access: Access) -> Result<Server, QueryError> {
         let refuse = |reason: String| QueryError::Address { reason };
-        let mut config: Config = address.parse().map_err(|error| refuse(chain(&error)))?;
+        let mut config: Config = address.parse().map_err(|error| refuse(say::chain(&error)))?;
         if config.get_connect_timeout().is_none() {
             config.connect_timeout(PATIENCE);
         }
@@ -62,14 +63,14 @@ impl Server {
             Some(tls) => self.config.connect(tls.clone()),
             None => self.config.connect(NoTls),
         };
-        let mut client = client.map_err(|error| QueryError::Reach { reason: chain(&error) })?;
+        let mut client = client.map_err(|error| QueryError::Reach { reason: say::chain(&error) })?;
         answer(&mut client, query, rows)
     }
 }
 
 fn answer(client: &mut Client, query: &str, rows: &Rows) -> Result<(), QueryError> {
-    let refused = |error: Error| QueryError::Refused { reason: chain(&error) };
-    let broke_off = |error: Error| QueryError::BrokeOff { reason: chain(&error) };
+    let refused = |error: Error| QueryError::Refused { reason: say::chain(&error) };
+    let broke_off = |error: Error| QueryError::BrokeOff { reason: say::chain(&error) };
     let mut transaction = client.build_transaction().read_only(true).start().map_err(refused)?;
     let statement = transaction.prepare(query).map_err(refused)?;
     let types: Vec<Type> = statement.columns().iter().map(|column| column.type_().clone()).collect();
@@ -234,16 +235,6 @@ fn numeric(bytes: &[u8]) -> Option<Result<f64, &'static str>> {
     }
     text += &format!("e{}", 4 * (i32::from(weight) + 1 - i32::from(digits)));
     text.parse().ok().map(Ok)
-}
-
-fn chain(error: &dyn std::error::Error) -> String {
-    let mut text = error.to_string();
-    let mut next = error.source();
-    while let Some(error) = next {
-        text += &format!(": {error}");
-        next = error.source();
-    }
-    text
 }
 
 #[cfg(test)]

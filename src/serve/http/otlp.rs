@@ -11,7 +11,7 @@ use axum::extract::State;
 use axum::http::{HeaderMap, HeaderValue, StatusCode, Uri, header};
 use axum::response::{IntoResponse, Response};
 
-use super::waits::{encoding, gather, key, refusal, uncounted};
+use super::waits::{counted, encoding, gather, key, refusal, uncounted};
 use super::{App, away, parameters};
 use crate::intake::{Answer, Encoding, Format, Report};
 use crate::serve::body::{Reading, count_whole};
@@ -47,14 +47,7 @@ async fn take(
     body: Body,
     format: Format,
 ) -> Result<Response, Problem> {
-    let outcome = try_take(shared, uri, headers, body, format).await;
-    let label = match &outcome {
-        Ok((_, true)) => "repeated",
-        Ok((_, false)) => "counted",
-        Err(_) => "refused",
-    };
-    shared.metrics.batches.with_label_values(&[label]).inc();
-    outcome.map(|(response, _)| response)
+    counted(shared, try_take(shared, uri, headers, body, format).await)
 }
 
 async fn try_take(

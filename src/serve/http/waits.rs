@@ -14,6 +14,7 @@ use tokio::time::timeout;
 use super::{App, away, excerpt, json, parameters};
 use crate::intake::{BadCount, BadLine, Format, IntakeError};
 use crate::ledger::{Entry, LedgerError, MAX_KEY_BYTES};
+use crate::say;
 use crate::serve::body::{CountError, Reading, count};
 use crate::serve::keeper::Refusal;
 use crate::serve::problem::Problem;
@@ -47,7 +48,14 @@ pub(super) async fn take(
     headers: HeaderMap,
     body: Body,
 ) -> Result<Response, Problem> {
-    let outcome = try_take(&shared, &uri, &headers, body).await;
+    counted(&shared, try_take(&shared, &uri, &headers, body).await)
+}
+
+/// Counts a batch by what became of it; whether it is one that was counted before comes with it.
+pub(super) fn counted(
+    shared: &Shared,
+    outcome: Result<(Response, bool), Problem>,
+) -> Result<Response, Problem> {
     let label = match &outcome {
         Ok((_, true)) => "repeated",
         Ok((_, false)) => "counted",
@@ -273,19 +281,9 @@ pub(super) fn uncounted(shared: &Shared, error: CountError) -> Problem {
             "body",
             "The body cannot be read",
             "send NDJSON or CSV, plain or packed by gzip or zstd",
-            chain(&error),
+            say::chain(&error),
         ),
     }
-}
-
-fn chain(error: &dyn std::error::Error) -> String {
-    let mut text = error.to_string();
-    let mut next = error.source();
-    while let Some(error) = next {
-        text += &format!(": {error}");
-        next = error.source();
-    }
-    text
 }
 
 pub(in crate::serve) fn refusal(refusal: Refusal) -> Problem {
