@@ -1,34 +1,12 @@
 //! Bodies of waits in every format, packed or not.
 #![no_main]
 
-use std::num::NonZeroUsize;
-
 use libfuzzer_sys::fuzz_target;
-use outwait::intake::{Allowed, Options, Record, Sink, Source, read};
-use outwait::tally::Book;
+use outwait::intake::Options;
 
-struct Counting(Book);
-
-impl Sink for Counting {
-    fn take(&mut self, record: &Record<'_>) {
-        self.0.add(record.stream, &record.wait).expect("the reader checks names");
-    }
-    fn fork(&self) -> Self {
-        Counting(Book::default())
-    }
-    fn absorb(&mut self, other: Self) {
-        self.0.merge(other.0);
-    }
-}
+#[path = "../counting.rs"]
+mod counting;
 
 fuzz_target!(|body: &[u8]| {
-    let options = Options {
-        bad_lines: Allowed::All,
-        threads: NonZeroUsize::new(1),
-        line_bytes: 4_096,
-        total_bytes: 1 << 20,
-        ..Options::default()
-    };
-    let source = Source::reader("body", std::io::Cursor::new(body.to_vec()));
-    let _ = read(vec![source], &options, Counting(Book::default()), &mut |_| ());
+    counting::count(body, Options { line_bytes: 4_096, total_bytes: 1 << 20, ..Options::default() });
 });
