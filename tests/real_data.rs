@@ -68,7 +68,8 @@ enum Pin {
 }
 use Pin::{After, Few, Out};
 
-/// One stream: name, pin, class, trend.
+/// One stream: name, pin, class, trend. All by seed 1: of PE, slice200, the strikes and miR-137 another seed may put the
+/// time to the other of two places that are about as good, or leave the trend undecided (12 seeds were looked at).
 type Row = (&'static str, Pin, TailClass, RemainingWait);
 
 /// Give-up times are pinned to this factor: a new family or a better fit may move them, a change of meaning would more.
@@ -132,7 +133,7 @@ fn bank_calls() {
         ("IN", After(545.0), Undecided, Flat),
         ("NE", Out, Light, Flat),
         ("NW", Out, Undecided, Open),
-        ("PE", After(112.0), Undecided, Open),
+        ("PE", After(179.0), Undecided, Open),
         ("PS", Out, Heavy, Growing),
         ("TT", After(205.0), Undecided, Flat),
     ];
@@ -178,7 +179,7 @@ fn hpc2n_queue() {
 /// would act on it before the policy says what they are worth.
 #[test]
 fn hpc2n_runs() {
-    let rows = [("partition-1", After(73.0), Heavy, Open)];
+    let rows = [("partition-1", After(73.0), Heavy, Growing)];
     check("hpc2n_2002_first_jobs.swf", None, Measure::Run, (3_145, 0), &rows);
 }
 
@@ -243,7 +244,7 @@ fn nist_weibull_type1() {
 fn seattle_rtt() {
     let rows = [
         ("slice1", After(1.05), Heavy, Mixed),
-        ("slice200", After(0.6), Heavy, Growing),
+        ("slice200", After(0.6), Heavy, Open),
         ("slice400", After(0.63), Heavy, Growing),
         ("slice600", After(0.63), Heavy, Growing),
     ];
@@ -258,7 +259,7 @@ fn strike_durations() {
         Some("strikes"),
         Measure::Wait,
         (62, 0),
-        &[("strikes", After(61.0), Undecided, Flat)],
+        &[("strikes", After(61.0), Undecided, Open)],
     );
 }
 
@@ -269,9 +270,9 @@ fn unemployment_spells() {
     check("unemployment_spells.csv", None, Measure::Wait, (3_343, 0), &rows);
 }
 
-/// Lives of flies: a hazard that rises. Nobody would wish them over; the verdict is what counts. 112 days lie past the longest life.
+/// Lives of flies: a hazard that rises. Nobody would wish them over; the verdict is what counts.
 #[test]
 fn waltons_flies() {
-    let rows = [("control", Out, Light, Shrinking), ("miR-137", After(112.0), Undecided, Open)];
+    let rows = [("control", Out, Light, Shrinking), ("miR-137", Out, Undecided, Open)];
     check("waltons_flies.csv", None, Measure::Wait, (163, 0), &rows);
 }

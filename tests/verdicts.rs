@@ -2,7 +2,7 @@
 // A bad reference file or a failed fit should stop the test.
 #![allow(clippy::unwrap_used, clippy::panic)]
 
-use outwait::outlook::{Grid, Sampled};
+use outwait::outlook::{Failures, Grid, Sampled};
 use outwait::tail::families::{
     Exponential, Gamma, Hyperexponential, LogLogistic, Lognormal, Lomax, TwoLognormals, Weibull,
 };
@@ -148,7 +148,7 @@ fn what_fits_no_family_is_left_to_the_curve() {
     assert!(ensemble.empirical > 0.99, "{}", ensemble.empirical);
     let below = |t: f64| sample.events.iter().filter(|e| e.upto <= t).count() as f64 / 3000.0;
     let empirical: Vec<f64> = grid.ages().iter().map(|&t| 1.0 - below(t)).collect();
-    let replicates = vec![Sampled::join(&grid, empirical, &[]); 40];
+    let replicates = vec![Sampled::join(&grid, empirical, &Failures::default()); 40];
     let v = verdict(&sample, &[], &ensemble, &grid, &replicates);
     assert!(v.unread > 0.99 && v.from_replicates, "{v:?}");
     assert_eq!(v.remaining_wait, RemainingWait::Mixed);

@@ -258,7 +258,7 @@ impl Line {
 
 impl Laws<'_> {
     fn of(judgement: &Judgement) -> Laws<'_> {
-        let Judgement { ensemble, replicates, failure, grid, .. } = judgement;
+        let Judgement { ensemble, replicates, failures, grid, .. } = judgement;
         let ages = grid.ages();
         let mut lines = Vec::new();
         let mut add = |weight: f64, curve: Sampled| {
@@ -268,7 +268,7 @@ impl Laws<'_> {
         };
         for member in ensemble.members.iter().filter(|m| m.weight > LEAST_WEIGHT) {
             for draw in &member.draws {
-                add(member.weight * draw.weight, Sampled::join(grid, draw.survival.clone(), failure));
+                add(member.weight * draw.weight, Sampled::join(grid, draw.survival.clone(), failures));
             }
         }
         let share = ensemble.empirical / replicates.len().max(1) as f64;

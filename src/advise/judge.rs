@@ -10,7 +10,7 @@ use super::bounds::Bounds;
 use super::{Case, History};
 use crate::advice::{Action, Change, Decision, Look, Outcome, Proposal, Rival, SecondCopy, Stickiness};
 use crate::curve::{Empirical, KaplanMeier, LifeTable, PiecewiseHazard};
-use crate::outlook::{Average, Averaging, Grid, Sampled};
+use crate::outlook::{Average, Averaging, Failures, Grid, Sampled};
 use crate::policy::{Entry, GiveUp, Jitter, Sticky};
 use crate::say;
 use crate::stopping::{
@@ -53,7 +53,7 @@ pub(crate) struct Judgement {
     /// The ages on which curves are sampled.
     pub(crate) grid: Grid,
     /// Cumulative hazard of failures at those ages; empty where nothing fails.
-    pub(crate) failure: Vec<f64>,
+    pub(crate) failures: Failures,
     /// Replicates of the empirical curve.
     pub(crate) replicates: Vec<Sampled>,
     /// The choice, or why there is none although the evidence suffices.
@@ -136,11 +136,10 @@ impl Judgement {
         let grid = Grid::new(bounds.first, bounds.floor, bounds.ceiling);
         let ensemble = tail::ensemble(&sample, &grid, seed).ok()?;
         let failing = PiecewiseHazard::fit(&coarse.sample(Cause::Failed));
-        let failure: Vec<f64> = failing
-            .as_ref()
-            .map(|hazard| grid.ages().iter().map(|&t| hazard.cumulative(t)).collect())
-            .unwrap_or_default();
-        let replicates = replicates(&table, &ensemble, &failure, &grid, seed);
+        let failures = failing.as_ref().map_or_else(Failures::default, |hazard| {
+            Failures::new(grid.ages().iter().map(|&t| hazard.cumulative(t)).collect())
+        });
+        let replicates = replicates(&table, &ensemble, &failures, &grid, seed);
         let verdict = verdict(&sample, open, &ensemble, &grid, &replicates);
         let sight = table.sight();
         let mut judgement = Judgement {
@@ -150,7 +149,7 @@ impl Judgement {
             outcome: Err(String::new()),
             ensemble,
             grid,
-            failure,
+            failures,
             replicates,
         };
         let Some((mut worth, retry)) = prices(entry) else { return Some(judgement) };
@@ -193,7 +192,7 @@ fn cut_off_share(sample: &Sample, sight: f64) -> f64 {
 fn replicates(
     table: &LifeTable,
     ensemble: &Ensemble,
-    failure: &[f64],
+    failures: &Failures,
     grid: &Grid,
     seed: u64,
 ) -> Vec<Sampled> {
@@ -214,7 +213,7 @@ fn replicates(
                 left <= 0.0
             });
             let tail = picked.or(tails.last()).map_or_else(Sampled::default, |(_, draw)| {
-                Sampled::join(grid, draw.survival.clone(), failure)
+                Sampled::join(grid, draw.survival.clone(), failures)
             });
             bootstrap.draw(grid, &tail, &mut random)
         })
@@ -292,7 +291,7 @@ impl Scene<'_> {
         failing: Option<&PiecewiseHazard>,
         sticky: Option<Stickiness>,
     ) -> Result<Settled, String> {
-        let Judgement { ensemble, failure, replicates, .. } = judgement;
+        let Judgement { ensemble, failures, replicates, .. } = judgement;
         let rules = self.rules();
         let now = self.entry.now;
         let mut settings: Vec<f64> = rules.iter().map(|(_, t)| *t).collect();
@@ -315,7 +314,7 @@ impl Scene<'_> {
         let upto = self.grid.decide().end;
         for (number, member) in ensemble.members.iter().enumerate().filter(|(_, m)| m.weight > LEAST_WEIGHT) {
             for draw in &member.draws {
-                let curve = Sampled::join(self.grid, draw.survival[..upto].to_vec(), failure);
+                let curve = Sampled::join(self.grid, draw.survival[..upto].to_vec(), failures);
                 count(number, &curve, member.weight * draw.weight);
             }
         }

@@ -139,13 +139,19 @@ impl Outlook for Average {
 
 #[cfg(test)]
 mod tests {
+    use super::super::Failures;
     use super::*;
 
     #[test]
     fn averages_two_exponentials() {
         let grid = Grid::new(1e-3, 0.01, 20.0);
-        let curve =
-            |rate: f64| Sampled::join(&grid, grid.ages().iter().map(|t| (-rate * t).exp()).collect(), &[]);
+        let curve = |rate: f64| {
+            Sampled::join(
+                &grid,
+                grid.ages().iter().map(|t| (-rate * t).exp()).collect(),
+                &Failures::default(),
+            )
+        };
         let (slow, fast) = (curve(0.5), curve(2.0));
         let mut sum = Averaging::new(&grid);
         sum.add(1.0, &slow);

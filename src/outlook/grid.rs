@@ -61,16 +61,32 @@ pub struct Sampled {
     pub failed: Vec<f64>,
 }
 
+/// Failures on a [`Grid`], as [`Sampled::join`] needs them: reckoned once for the many curves they are joined with.
+#[derive(Clone, Debug, Default, PartialEq)]
+pub struct Failures {
+    /// Cumulative hazard.
+    hazard: Vec<f64>,
+    /// What it leaves, `e^-H`.
+    spared: Vec<f64>,
+}
+
+impl Failures {
+    /// From the cumulative hazard at the ages of the grid.
+    pub fn new(hazard: Vec<f64>) -> Failures {
+        Failures { spared: hazard.iter().map(|h| (-h).exp()).collect(), hazard }
+    }
+}
+
 impl Sampled {
     /// Joins the latent survival of `done` with the cumulative hazard of `failed`, both at the first
     /// `latent.len()` ages of the grid (METHODS.md section 3: `dF = h S dt`). Integrals by the trapezoid rule.
     ///
-    /// `failure`: cumulative hazard of failures; empty where there are none, else at least as long as `latent`.
-    pub fn join(grid: &Grid, latent: Vec<f64>, failure: &[f64]) -> Sampled {
+    /// `failures`: of no age where there are none, else of at least as many as `latent`.
+    pub fn join(grid: &Grid, latent: Vec<f64>, failures: &Failures) -> Sampled {
         let n = latent.len();
         let mut survival = latent;
-        for (s, h) in survival.iter_mut().zip(failure) {
-            *s *= (-h).exp();
+        for (s, spared) in survival.iter_mut().zip(&failures.spared) {
+            *s *= spared;
         }
         let (mut area, mut done, mut failed) =
             (Vec::with_capacity(n), Vec::with_capacity(n), Vec::with_capacity(n));
@@ -78,7 +94,7 @@ impl Sampled {
         for (i, &s_next) in survival.iter().enumerate() {
             let middle = 0.5 * (s + s_next);
             a += middle * (grid.ages[i] - age);
-            if let Some(&h_next) = failure.get(i) {
+            if let Some(&h_next) = failures.hazard.get(i) {
                 f += middle * (h_next - h);
                 h = h_next;
             }
@@ -105,8 +121,8 @@ mod tests {
     fn exponential_with_failures() {
         let grid = Grid::new(1e-3, 0.01, 20.0);
         let latent: Vec<f64> = grid.ages().iter().map(|t| (-t).exp()).collect();
-        let failure: Vec<f64> = grid.ages().iter().map(|t| 0.5 * t).collect();
-        let joined = Sampled::join(&grid, latent, &failure);
+        let failures = Failures::new(grid.ages().iter().map(|t| 0.5 * t).collect());
+        let joined = Sampled::join(&grid, latent, &failures);
         for i in grid.decide() {
             let t = grid.ages()[i];
             let area = -(-1.5 * t).exp_m1() / 1.5;

@@ -7,7 +7,7 @@ mod average;
 mod grid;
 
 pub use average::{Average, Averaging};
-pub use grid::{Grid, Sampled};
+pub use grid::{Failures, Grid, Sampled};
 
 /// The two curves of one wait with their integral.
 pub trait Outlook: Send + Sync {

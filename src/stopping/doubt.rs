@@ -243,7 +243,7 @@ fn band(ages: &[f64], regrets: &[f64], at: usize, slack: f64) -> [f64; 2] {
 #[cfg(test)]
 mod tests {
     use super::*;
-    use crate::outlook::Grid;
+    use crate::outlook::{Failures, Grid};
     use crate::stopping::{Aim, Fade, Pause, Retry, Worth};
 
     fn grid() -> Grid {
@@ -252,7 +252,7 @@ mod tests {
 
     fn exponential_mixture(grid: &Grid, p: f64, fast: f64, slow: f64) -> Sampled {
         let law = |t: &f64| p * (-fast * t).exp() + (1.0 - p) * (-slow * t).exp();
-        Sampled::join(grid, grid.ages().iter().map(law).collect(), &[])
+        Sampled::join(grid, grid.ages().iter().map(law).collect(), &Failures::default())
     }
 
     fn worth() -> Worth {
@@ -283,7 +283,7 @@ mod tests {
     #[test]
     fn what_earns_nothing_weighs_nothing() {
         let grid = grid();
-        let never = Sampled::join(&grid, vec![1.0; grid.ages().len()], &[]);
+        let never = Sampled::join(&grid, vec![1.0; grid.ages().len()], &Failures::default());
         let mut doubt = Doubt::new(GridObjective::new(&grid, &worth(), &Retry::default(), &[]).unwrap());
         assert!(!doubt.add(0, &never, 1.0));
         let mut short = exponential_mixture(&grid, 0.9, 10.0, 0.1);

@@ -1,6 +1,7 @@
 //! Replicates of the empirical curve, by which it takes part in the doubt. RECIPE section 4.
 
-use rand::{Rng, RngExt};
+use rand::Rng;
+use rand_distr::{Distribution, Gamma};
 
 use crate::curve::{LifeTable, Row};
 use crate::outlook::{Grid, Sampled};
@@ -12,10 +13,32 @@ use crate::outlook::{Grid, Sampled};
 /// Beta of the numbers that end and that go on, independent of all others (ratios of independent Gamma sums). So drawn
 /// it costs by the interval, not by the wait, and late entries need no weights of their own. Failures compete: what
 /// ends is shared between the endings by another Beta.
+///
+/// A Gamma sum is independent of the ratios of its parts (Lukacs 1955), so the sum at risk in one interval serves as
+/// a part of the sum that went on from the one before.
 #[derive(Clone, Debug)]
 pub struct Bootstrap {
     rows: Vec<Row>,
+    /// How the number that goes on from a row is made up.
+    onwards: Vec<Onwards>,
     sight: f64,
+}
+
+/// Those who go on from a row.
+#[derive(Clone, Copy, Debug)]
+enum Onwards {
+    /// Those at risk in the next row, and so many who left between.
+    Next(f64),
+    /// So many, fewer than are at risk in the next row: some entered.
+    Fresh(f64),
+}
+
+/// The weights drawn for a row.
+#[derive(Clone, Copy)]
+struct Weights {
+    done: f64,
+    failed: f64,
+    onwards: f64,
 }
 
 /// Where a curve stands at the end of an interval.
@@ -34,7 +57,28 @@ impl Bootstrap {
         let sight = table.sight();
         let rows: Vec<Row> = table.rows().iter().copied().filter(|r| r.upto <= sight).collect();
         let last = rows.last()?.upto;
-        Some(Bootstrap { rows, sight: sight.min(table.last()).max(last) })
+        let next = rows[1..].iter().map(|row| row.at_risk).chain([0.0]);
+        let onwards = rows.iter().zip(next).map(|(row, next)| Onwards::of(row, next)).collect();
+        Some(Bootstrap { onwards, sight: sight.min(table.last()).max(last), rows })
+    }
+
+    /// The weights of all rows, the last row's first.
+    fn weights(&self, random: &mut impl Rng) -> Vec<Weights> {
+        let mut at_risk = 0.0;
+        let rows = self.rows.iter().zip(&self.onwards).rev();
+        rows.map(|(row, onwards)| {
+            let weights = Weights {
+                done: gamma(row.done, random),
+                failed: gamma(row.failed, random),
+                onwards: match *onwards {
+                    Onwards::Next(left) => at_risk + gamma(left, random),
+                    Onwards::Fresh(number) => gamma(number, random),
+                },
+            };
+            at_risk = weights.done + weights.failed + weights.onwards;
+            weights
+        })
+        .collect()
     }
 
     /// The age `L` beyond which a replicate follows the tail it is given, s.
@@ -61,11 +105,11 @@ impl Bootstrap {
             curve.done.push(s.done);
             curve.failed.push(s.failed);
         };
-        let mut gamma = Gamma { spare: None, random };
+        let weights = self.weights(random);
         let mut stand = Stand { age: 0.0, survival: 1.0, done: 0.0, failed: 0.0, area: 0.0 };
         let mut rest = ages[..seen].iter().peekable();
-        for row in &self.rows {
-            let next = stand.after(row, &mut gamma);
+        for (row, weights) in self.rows.iter().zip(weights.iter().rev()) {
+            let next = stand.after(row, weights);
             while let Some(&age) = rest.next_if(|&&a| a < row.upto) {
                 put(stand.within(row, &next, age));
             }
@@ -90,15 +134,16 @@ impl Bootstrap {
 
 impl Stand {
     /// After the endings of a row.
-    fn after(&self, row: &Row, gamma: &mut Gamma<'_, impl Rng>) -> Stand {
-        let ended = self.survival * gamma.beta(row.ended(), row.at_risk - row.ended());
-        let done = ended * gamma.beta(row.done, row.failed);
-        let survival = self.survival - ended;
+    fn after(&self, row: &Row, weights: &Weights) -> Stand {
+        let at_risk = weights.done + weights.failed + weights.onwards;
+        let part = |weight: f64| if at_risk > 0.0 { self.survival * (weight / at_risk) } else { 0.0 };
+        let (done, failed) = (part(weights.done), part(weights.failed));
+        let survival = (self.survival - (done + failed)).max(0.0);
         Stand {
             age: row.upto,
             survival,
             done: self.done + done,
-            failed: self.failed + (ended - done),
+            failed: self.failed + failed,
             area: self.flat(row.over).area + 0.5 * (self.survival + survival) * (row.upto - row.over),
         }
     }
@@ -158,100 +203,40 @@ impl Stand {
     }
 }
 
-/// Gamma and Beta draws.
-struct Gamma<'a, R> {
-    spare: Option<f64>,
-    random: &'a mut R,
+impl Onwards {
+    /// `next`: the number at risk in the row after.
+    fn of(row: &Row, next: f64) -> Onwards {
+        let number = (row.at_risk - row.ended()).max(0.0);
+        let left = number - next;
+        // Numbers at risk are sums of counts, equal up to their rounding where nobody left.
+        if left.abs() <= 1e-9 * number {
+            Onwards::Next(0.0)
+        } else if left > 0.0 {
+            Onwards::Next(left)
+        } else {
+            Onwards::Fresh(number)
+        }
+    }
 }
 
-/// From this shape on one draw in ten thousand would be rejected; all are taken.
-const LARGE: f64 = 1000.0;
-
-impl<R: Rng> Gamma<'_, R> {
-    /// Beta(a, b), `a + b > 0`; 0 or 1 where one of them is 0.
-    fn beta(&mut self, a: f64, b: f64) -> f64 {
-        if a <= 0.0 {
-            return 0.0;
-        }
-        if b <= 0.0 {
-            return 1.0;
-        }
-        let (x, y) = (self.gamma(a), self.gamma(b));
-        if x + y > 0.0 { x / (x + y) } else { a / (a + b) }
-    }
-
-    /// Gamma of this shape and scale 1, by squeeze of a cubed normal (Marsaglia & Tsang 2000, ACM TOMS 26:363).
-    fn gamma(&mut self, shape: f64) -> f64 {
-        if shape < 1.0 {
-            let smaller: f64 = 1.0 - self.random.random::<f64>();
-            return self.gamma(shape + 1.0) * smaller.powf(1.0 / shape);
-        }
-        if shape == 1.0 {
-            return -(1.0 - self.random.random::<f64>()).ln();
-        }
-        let d = shape - 1.0 / 3.0;
-        let c = 1.0 / (9.0 * d).sqrt();
-        loop {
-            let x = self.normal();
-            let v = (1.0 + c * x).powi(3);
-            if v <= 0.0 {
-                continue;
-            }
-            if shape >= LARGE {
-                return d * v;
-            }
-            let u: f64 = 1.0 - self.random.random::<f64>();
-            if u < 1.0 - 0.0331 * x.powi(4) || u.ln() < 0.5 * x * x + d * (1.0 - v + v.ln()) {
-                return d * v;
-            }
-        }
-    }
-
-    /// Standard normal by Marsaglia's polar method.
-    fn normal(&mut self) -> f64 {
-        if let Some(spare) = self.spare.take() {
-            return spare;
-        }
-        loop {
-            let (x, y) = (2.0 * self.random.random::<f64>() - 1.0, 2.0 * self.random.random::<f64>() - 1.0);
-            let square = x * x + y * y;
-            if square > 0.0 && square < 1.0 {
-                let factor = (-2.0 * square.ln() / square).sqrt();
-                self.spare = Some(y * factor);
-                return x * factor;
-            }
-        }
-    }
+/// A sum of so many Exp(1) weights.
+fn gamma(number: f64, random: &mut impl Rng) -> f64 {
+    Gamma::new(number, 1.0).map_or(0.0, |gamma| gamma.sample(random))
 }
 
 #[cfg(test)]
 mod tests {
     use super::*;
+    use crate::outlook::Failures;
     use crate::tally::Cells;
     use crate::wait::{Ending, Wait};
-    use rand::SeedableRng;
+    use rand::{RngExt, SeedableRng};
     use rand_xoshiro::Xoshiro256PlusPlus;
 
     fn mean_and_variance(values: &[f64]) -> (f64, f64) {
         let n = values.len() as f64;
         let mean = values.iter().sum::<f64>() / n;
         (mean, values.iter().map(|v| (v - mean).powi(2)).sum::<f64>() / (n - 1.0))
-    }
-
-    #[test]
-    fn gammas_have_their_moments() {
-        let mut random = Xoshiro256PlusPlus::seed_from_u64(1);
-        let mut gamma = Gamma { spare: None, random: &mut random };
-        for shape in [0.3, 1.0, 2.5, 40.0, 5000.0] {
-            let draws: Vec<f64> = (0..40_000).map(|_| gamma.gamma(shape)).collect();
-            let (mean, variance) = mean_and_variance(&draws);
-            assert!((mean - shape).abs() < 5.0 * (shape / 40_000.0).sqrt(), "{shape}: {mean}");
-            // Variance of a sample variance: (6/shape + 2) shape² / n.
-            assert!(
-                (variance / shape - 1.0).abs() < 5.0 * ((6.0 / shape + 2.0) / 40_000.0).sqrt(),
-                "{shape}"
-            );
-        }
     }
 
     /// Replicates by their definition: an Exp(1) weight for every wait, then Kaplan-Meier and Aalen-Johansen.
@@ -292,7 +277,7 @@ mod tests {
         let table = LifeTable::of(&Cells::from_waits(&all)).unwrap();
         let bootstrap = Bootstrap::of(&table).unwrap();
         let grid = Grid::new(0.1, 0.2, 2.0);
-        let flat = Sampled::join(&grid, vec![1.0; grid.ages().len()], &[]);
+        let flat = Sampled::join(&grid, vec![1.0; grid.ages().len()], &Failures::default());
         let mut random = Xoshiro256PlusPlus::seed_from_u64(7);
         let rounds = 6000;
         let i = grid.decide().end - 60;
@@ -330,8 +315,8 @@ mod tests {
         assert_eq!(bootstrap.sight(), 30.0);
         let grid = Grid::new(0.5, 0.7, 300.0);
         let latent: Vec<f64> = grid.ages().iter().map(|t| (-0.02 * t).exp()).collect();
-        let failure: Vec<f64> = grid.ages().iter().map(|t| 0.01 * t).collect();
-        let tail = Sampled::join(&grid, latent, &failure);
+        let failures = Failures::new(grid.ages().iter().map(|t| 0.01 * t).collect());
+        let tail = Sampled::join(&grid, latent, &failures);
         let curve = bootstrap.draw(&grid, &tail, &mut Xoshiro256PlusPlus::seed_from_u64(3));
         let at = |age: f64| grid.ages().partition_point(|&a| a < age);
         let (edge, far) = (at(30.0) - 1, at(200.0));

@@ -2,6 +2,7 @@
 //! to 4; METHODS.md sections 3 and 7.
 
 use rand::{RngExt, SeedableRng};
+use rand_distr::StandardNormal;
 use rand_xoshiro::Xoshiro256PlusPlus;
 
 use super::choice::criterion_weights;
@@ -309,7 +310,8 @@ fn draws(
     let spread = peak.information.eigen();
     let mut draws: Vec<Draw> = Vec::with_capacity(DRAWS);
     for b in 0..DRAWS {
-        let z: Vec<f64> = peak.at.iter().map(|_| if b == 0 { 0.0 } else { normal(&mut random) }).collect();
+        let z: Vec<f64> =
+            peak.at.iter().map(|_| if b == 0 { 0.0 } else { random.sample(StandardNormal) }).collect();
         let step = spread.apply(|v| 1.0 / curvature(v).sqrt(), &z);
         let at: Vec<f64> = peak.at.iter().zip(&step).map(|(x, s)| x + s).collect();
         let Some(law) = family.law(&peak.frame.free(&at)) else { continue };
@@ -324,10 +326,4 @@ fn draws(
 /// An eigenvalue of the curvature as it is drawn from.
 fn curvature(eigenvalue: f64) -> f64 {
     if eigenvalue > LEAST_CURVATURE { eigenvalue } else { LEAST_CURVATURE }
-}
-
-/// A standard normal deviate (Box & Muller 1958).
-fn normal(random: &mut Xoshiro256PlusPlus) -> f64 {
-    let (radius, angle): (f64, f64) = (1.0 - random.random::<f64>(), random.random());
-    (-2.0 * radius.ln()).sqrt() * (std::f64::consts::TAU * angle).cos()
 }

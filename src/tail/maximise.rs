@@ -356,9 +356,10 @@ impl<'a> Search<'a> {
         0.5 * dot(&gradient, &step)
     }
 
-    /// Minus the second derivatives, by central differences of the gradient.
+    /// Minus the second derivatives, by differences of the gradient: central ones, or one-sided where the climb is a
+    /// coarse one, whose curvature need not be known to more than [`DIFFERENCE`], relative.
     fn information(&mut self, inverse: &Symmetric) -> Symmetric {
-        let n = self.n;
+        let (n, coarse) = (self.n, self.terrain.gain > CONVERGED);
         let rows: Vec<Point> = (0..n)
             .map(|i| {
                 let width = (inverse.get(i, i).max(0.0) * self.terrain.curvature[i]).sqrt();
@@ -368,15 +369,17 @@ impl<'a> Search<'a> {
                 down[i] -= step;
                 // Beyond a wall the function is not what it is inside.
                 let (low, high) = self.terrain.walls[i];
-                let inside = |x: &Point| low <= x[i] && x[i] <= high;
-                let (above, below) = (self.evaluate(&up), self.evaluate(&down));
-                let (right, left) =
-                    (above.0.is_finite() && inside(&up), below.0.is_finite() && inside(&down));
-                std::array::from_fn(|j| match (right, left) {
-                    (true, true) => (below.1[j] - above.1[j]) / (2.0 * step),
-                    (true, false) => (self.gradient[j] - above.1[j]) / step,
-                    (false, true) => (below.1[j] - self.gradient[j]) / step,
-                    (false, false) => f64::NAN,
+                let mut beside = |x: &Point| {
+                    let (value, gradient) = self.evaluate(x);
+                    (value.is_finite() && low <= x[i] && x[i] <= high).then_some(gradient)
+                };
+                let above = beside(&up);
+                let below = if coarse && above.is_some() { None } else { beside(&down) };
+                std::array::from_fn(|j| match (above, below) {
+                    (Some(above), Some(below)) => (below[j] - above[j]) / (2.0 * step),
+                    (Some(above), None) => (self.gradient[j] - above[j]) / step,
+                    (None, Some(below)) => (below[j] - self.gradient[j]) / step,
+                    (None, None) => f64::NAN,
                 })
             })
             .collect();
