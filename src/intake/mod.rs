@@ -56,6 +56,7 @@ mod read;
 mod record;
 mod report;
 mod rules;
+mod short;
 mod source;
 mod sql;
 mod streams;

@@ -17,6 +17,7 @@ use super::flaw::Flaw;
 use super::lines::Lines;
 use super::mapping::Mapping;
 use super::record::{Field, Fields};
+use super::short::same;
 
 /// Reads a block of whole lines.
 pub(super) fn harvest<S: Sink>(block: &[u8], collector: &mut Collector<'_, S>) {
@@ -197,14 +198,6 @@ fn expect(bytes: &[u8], at: usize, byte: u8) -> Option<usize> {
 fn expect_all(bytes: &[u8], at: usize, wanted: &[u8]) -> Option<usize> {
     let upto = at + wanted.len();
     same(bytes.get(at..upto)?, wanted).then_some(upto)
-}
-
-/// Whether two byte strings of one length are equal. They are short, and a call of `memcmp` takes longer than the work.
-#[inline]
-fn same(one: &[u8], other: &[u8]) -> bool {
-    let ((words, rest), (others, other_rest)) = (one.as_chunks(), other.as_chunks());
-    let equal = |(a, b): (&[u8; 8], &[u8; 8])| u64::from_ne_bytes(*a) == u64::from_ne_bytes(*b);
-    words.iter().zip(others).all(equal) && rest.iter().zip(other_rest).all(|(a, b)| a == b)
 }
 
 /// The first place from `at` on whose byte a JSON text cannot hold as it is: a quotation mark, a backslash, a

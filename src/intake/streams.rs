@@ -1,20 +1,25 @@
 //! What is remembered of each stream while reading: that its name is sound, whether it is wanted, and the facts
 //! that tell milliseconds from seconds.
 
-use std::collections::HashMap;
+use std::hash::{BuildHasher, Hasher};
 
 use foldhash::fast::RandomState;
+use hashbrown::HashTable;
 
 use super::pace::{ClosedLoop, Pace};
 use super::report::{Because, Suspicion};
+use super::short::same;
 use crate::glob::Glob;
 use crate::wait::{Age, Ending, StreamError, Wait, check_stream};
 
 /// Streams seen by one worker. Merging is exact and commutative.
 #[derive(Debug, Default)]
 pub(super) struct Streams {
-    /// Looked up for every line, hence the fast hash; it is seeded, so no writer of names can aim at it.
-    places: HashMap<Box<str>, usize, RandomState>,
+    /// Where in `streams` a name is. Looked up for every line, hence the fast hash; it is seeded, so no writer of names
+    /// can aim at it.
+    places: HashTable<usize>,
+    hash: RandomState,
+    names: Vec<Box<str>>,
     streams: Vec<Stream>,
     /// The number of the present block, from 1.
     block: u64,
@@ -58,14 +63,20 @@ impl Streams {
         name: &str,
         selector: Option<&Glob>,
     ) -> Result<(usize, &mut Stream), StreamError> {
-        let place = match self.places.get(name) {
-            Some(&place) => place,
+        let place = match self.find(name) {
+            Some(place) => place,
             None => {
                 check_stream(name)?;
                 self.add(name.into(), Stream::new(selector.is_none_or(|selector| selector.matches(name))))
             }
         };
         Ok((place, &mut self.streams[place]))
+    }
+
+    #[inline]
+    fn find(&self, name: &str) -> Option<usize> {
+        let named = |&place: &usize| same(self.names[place].as_bytes(), name.as_bytes());
+        self.places.find(hash(&self.hash, name), named).copied()
     }
 
     /// Begins another block: its first record is no neighbour of the last.
@@ -80,7 +91,7 @@ impl Streams {
 
     /// Streams that look like closed loops, by name.
     pub(super) fn closed_loops(&self) -> Vec<ClosedLoop> {
-        let paces = self.places.iter().filter_map(|(name, &place)| self.streams[place].pace.finding(name));
+        let paces = self.named().filter_map(|(name, stream)| stream.pace.finding(name));
         let mut found: Vec<_> = paces.collect();
         found.sort_by(|a, b| a.stream.cmp(&b.stream));
         found
@@ -88,24 +99,30 @@ impl Streams {
 
     /// The number of a stream that is checked and wanted.
     pub(super) fn place(&mut self, name: &str) -> usize {
-        match self.places.get(name) {
-            Some(&place) => place,
+        match self.find(name) {
+            Some(place) => place,
             None => self.add(name.into(), Stream::new(true)),
         }
     }
 
+    fn named(&self) -> impl Iterator<Item = (&str, &Stream)> {
+        self.names.iter().map(|name| &**name).zip(&self.streams)
+    }
+
     #[cold]
     fn add(&mut self, name: Box<str>, stream: Stream) -> usize {
-        self.places.insert(name, self.streams.len());
+        let place = self.streams.len();
+        let again = |&place: &usize| hash(&self.hash, &self.names[place]);
+        self.places.insert_unique(hash(&self.hash, &name), place, again);
+        self.names.push(name);
         self.streams.push(stream);
-        self.streams.len() - 1
+        place
     }
 
     pub(super) fn absorb(&mut self, other: Streams) {
-        for (name, place) in other.places {
-            let theirs = other.streams[place];
-            match self.places.get(&name) {
-                Some(&place) => self.streams[place].absorb(&theirs),
+        for (name, theirs) in other.names.into_iter().zip(other.streams) {
+            match self.find(&name) {
+                Some(place) => self.streams[place].absorb(&theirs),
                 None => {
                     self.add(name, theirs);
                 }
@@ -122,11 +139,17 @@ impl Streams {
 
     /// Streams whose ages look like milliseconds, by name.
     pub(super) fn suspicions(&self) -> Vec<Suspicion> {
-        let streams = self.places.iter().map(|(name, &place)| (name, &self.streams[place]));
-        let mut found: Vec<_> = streams.filter_map(|(name, stream)| stream.suspicion(name)).collect();
+        let mut found: Vec<_> = self.named().filter_map(|(name, stream)| stream.suspicion(name)).collect();
         found.sort_by(|a, b| a.stream.cmp(&b.stream));
         found
     }
+}
+
+#[inline]
+fn hash(state: &RandomState, name: &str) -> u64 {
+    let mut hasher = state.build_hasher();
+    hasher.write(name.as_bytes());
+    hasher.finish()
 }
 
 impl Stream {
