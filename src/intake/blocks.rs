@@ -5,7 +5,7 @@
 use std::io::{self, Read};
 
 /// Bytes of a block: large enough to make the hand-over cheap, small enough to stay in a core's own cache.
-const BLOCK: usize = 256 * 1024;
+const BLOCK: usize = 512 * 1024;
 
 /// How records end.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
