@@ -343,8 +343,8 @@ impl<'a> Panel<'a> {
             let x = x.clamp(self.left + radius, self.right - radius);
             let offsets =
                 (0..60).map(|k: i32| f64::from((k + 1) / 2 * if k % 2 == 0 { -1 } else { 1 }) * step);
-            let clear =
-                |c: f64| self.taken.iter().all(|t| (t.0 - x).abs() >= step || (t.1 - c).abs() >= step);
+            let far = |a: f64, b: f64| (a - b).abs() >= step - SLACK;
+            let clear = |c: f64| self.taken.iter().all(|t| far(t.0, x) || far(t.1, c));
             let start = y.clamp(highest, lowest);
             let found = offsets.map(|o| start + o).find(|c| *c >= highest && *c <= lowest && clear(*c));
             let Some(centre) = found else { continue };
@@ -391,6 +391,10 @@ impl<'a> Panel<'a> {
         self.sheet.finish(summary, table)
     }
 }
+
+/// By how much rings may stand closer than a step, px: places are whole tenths, and rings at almost the same place
+/// are a step apart.
+const SLACK: f64 = 0.5;
 
 /// Marks of the path with the right end that leaves room for the last label and the arrow.
 fn age_ticks(scale: Scale, left: f64, edge: f64, font: f64) -> (Vec<Tick>, f64) {
