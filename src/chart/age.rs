@@ -1,7 +1,7 @@
 //! The ages a stream's pictures share: where the path starts, where it ends, how far one sees.
 
 use super::Marks;
-use super::scale::Scale;
+use super::scale::{Measure, Scale};
 use super::trace::Trace;
 use super::words;
 use crate::outlook::Outlook;
@@ -63,7 +63,7 @@ impl Ages {
         let Some(road) = Road::of(self, marks, None) else {
             return Vec::new();
         };
-        let Scale { from, to, log } = road.scale;
+        let Scale { from, to, log, .. } = road.scale;
         let steps = count.max(2) - 1;
         let at = |i: usize| match i as f64 / steps as f64 {
             part if log => from * (to / from).powf(part),
@@ -98,7 +98,7 @@ impl Road {
         let marked = [marks.advised, marks.in_force].into_iter().flatten().filter_map(sound);
         let start = marked.map(|m| m / AIR).fold(start.min(middle), f64::min).max(end * 1e-14);
         let log = Ages { start, middle, end, sight: 0.0 }.is_log();
-        let scale = Scale { from: if log { start } else { 0.0 }, to: end, log };
+        let scale = Scale { from: if log { start } else { 0.0 }, to: end, log, measure: Measure::Time };
         let sight = if ages.sight < end { ages.sight.max(0.0) } else { f64::INFINITY };
         Some(Road { scale, sight })
     }

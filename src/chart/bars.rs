@@ -1,8 +1,10 @@
 //! Bars with intervals: rules side by side, or streams by what they lose.
 
+use plotters_backend::text_anchor::HPos;
+
+use super::area::at;
 use super::ink;
-use super::pen::Anchor;
-use super::scale::Scale;
+use super::scale::{Measure, Scale};
 use super::sheet::{MARGIN, Sample, Sheet, advised_shape, in_force_shape, nothing, span};
 use super::text::{self, named};
 use super::words::{Quantity, Spoken, brackets_hold, in_brackets, percent, range, roughly, sentences};
@@ -218,8 +220,7 @@ fn draw(mut sheet: Sheet<'_>, rows: Rows<'_>) -> Svg {
     let lengths = rows.bars.iter().map(|b| b.value);
     let longest = lengths.clone().filter(|v| v.is_finite()).fold(0.0, |m: f64, v| m.max(v.abs()));
     let far = if longest > 0.0 { 3.0 * longest } else { f64::INFINITY };
-    let scale = Scale::with_zero(lengths.chain(ends.map(|e| e.clamp(-far, far))));
-    let x = |value: f64| left + scale.part(value) * (right - left);
+    let scale = Scale::with_zero(Measure::Number, lengths.chain(ends.map(|e| e.clamp(-far, far))));
     let thick = 1.1 * font;
     for bar in &rows.bars {
         let written = rows.written(bar);
@@ -230,25 +231,29 @@ fn draw(mut sheet: Sheet<'_>, rows: Rows<'_>) -> Svg {
             if beside { (sheet.y + 1.3 * font, 2.0 * font) } else { (sheet.y + 1.2 * font, 3.2 * font) };
         let middle = if beside { sheet.y + font } else { sheet.y + 2.2 * font };
         let mark = (MARGIN + 0.5 * font, words - 0.35 * font);
+        let paper = &sheet.paper;
         let ink = match bar.role {
             Role::Ours => {
-                advised_shape(&mut sheet.pen, mark, 0.5 * font);
-                &ink::GOOD_BAR
+                paper.put(at(mark) + advised_shape(0.5 * font));
+                ink::GOOD_BAR
             }
             Role::InForce => {
-                in_force_shape(&mut sheet.pen, mark, 0.4 * font);
-                &ink::IN_FORCE_BAR
+                paper.put(at(mark) + in_force_shape(0.4 * font));
+                ink::IN_FORCE_BAR
             }
-            Role::Other => &ink::RIVAL_BAR,
+            Role::Other => ink::RIVAL_BAR,
         };
-        sheet.pen.text(&ink::TEXT, (MARGIN + shape, words), Anchor::Start, font, &name);
-        sheet.pen.text(&ink::TEXT, (sheet.right(), words), Anchor::End, font, &written);
+        paper.put(ink::TEXT.words((MARGIN + shape, words), HPos::Left, font, name));
+        paper.put(ink::TEXT.words((sheet.right(), words), HPos::Right, font, written));
+        // A row counts in bars' thicknesses from its middle.
+        let (upper_left, lower_right) = ((left, middle - 0.8 * thick), (right, middle + 0.8 * thick));
+        let row = paper.plot(upper_left, lower_right, scale, Scale::linear(-0.8, 0.8));
         if !bar.value.is_nan() {
-            sheet.pen.rect(ink, (x(0.0), middle - thick / 2.0), (x(bar.value), middle + thick / 2.0));
+            row.put(ink.rect([(0.0, -0.5), (bar.value, 0.5)]));
         }
-        sheet.pen.line(&ink::TICK, (x(0.0), middle - 0.8 * thick), (x(0.0), middle + 0.8 * thick));
+        row.put(ink::TICK.path([(0.0, 0.8), (0.0, -0.8)]));
         if let Some([low, high]) = bar.interval {
-            span(&mut sheet.pen, (x(low), middle), (x(high), middle), 0.25 * thick);
+            span(&row, [(low, 0.0), (high, 0.0)], 0.25 * thick);
         }
         sheet.y += height;
     }

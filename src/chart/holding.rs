@@ -54,8 +54,7 @@ pub fn holding(input: &Holding<'_>, frame: &Frame<'_>) -> Svg {
     }
     let unit = Quantity::Number(input.unit).spoken([]);
     let level = Level {
-        scale: Scale::with_zero(shown.points().iter().map(|p| p.value)),
-        measure: Measure::Number,
+        scale: Scale::with_zero(Measure::Number, shown.points().iter().map(|p| p.value)),
         caption: unit.caption("worth of holding on"),
     };
     let mut panel = Panel::open(Sheet::open(frame, input.stream, &title), road, level, marked);

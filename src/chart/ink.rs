@@ -4,14 +4,27 @@
 
 use std::fmt::Write;
 
+use super::pen::id;
+
 /// One colour on light paper and its twin on dark.
 pub(super) struct Colour {
     light: &'static str,
     dark: &'static str,
 }
 
+/// What an element is drawn with.
+#[derive(Clone, Copy)]
+pub(super) enum Ink {
+    /// By its class, with colours for light and dark.
+    Look(&'static Look),
+    /// The hatch laid out under this name ([`Hatching`](super::element::Hatching)).
+    Hatch(&'static str),
+    /// The colours of the text round the picture; with these attributes, each after a space.
+    Plain(&'static str),
+}
+
 /// How one kind of element looks.
-pub(super) struct Ink {
+pub(super) struct Look {
     class: &'static str,
     fill: Option<&'static Colour>,
     stroke: Option<&'static Colour>,
@@ -20,16 +33,19 @@ pub(super) struct Ink {
 }
 
 impl Ink {
-    /// Class, colours on light paper, and the rest, as attributes with a leading space.
-    pub(super) fn attributes(&self) -> String {
+    /// Writes class, colours on light paper, and the rest, as attributes with a leading space. `prefix`: of ids.
+    pub(super) fn write(self, prefix: &str, out: &mut String) {
         let light = |colour: Option<&Colour>| colour.map_or("none", |c| c.light);
-        format!(
-            " class=\"{}\" fill=\"{}\" stroke=\"{}\"{}",
-            self.class,
-            light(self.fill),
-            light(self.stroke),
-            self.more
-        )
+        let _ = match self {
+            Ink::Look(Look { class, fill, stroke, more }) => write!(
+                out,
+                " class=\"{class}\" fill=\"{}\" stroke=\"{}\"{more}",
+                light(*fill),
+                light(*stroke)
+            ),
+            Ink::Hatch(name) => write!(out, " fill=\"url(#{})\" stroke=\"none\"", id(prefix, name)),
+            Ink::Plain(attributes) => write!(out, "{attributes}"),
+        };
     }
 }
 
@@ -42,9 +58,9 @@ pub fn style() -> String {
          @media print,(min-width:40rem){.ow-wide{display:block}.ow-narrow{display:none}}\
          @media screen and (prefers-color-scheme:dark){",
     );
-    for ink in ALL {
-        let _ = write!(sheet, ".{}{{", ink.class);
-        for (property, colour) in [("fill", ink.fill), ("stroke", ink.stroke)] {
+    for look in ALL {
+        let _ = write!(sheet, ".{}{{", look.class);
+        for (property, colour) in [("fill", look.fill), ("stroke", look.stroke)] {
             if let Some(colour) = colour {
                 let _ = write!(sheet, "{property}:{};", colour.dark);
             }
@@ -71,8 +87,8 @@ const RIVAL_: Colour = Colour { light: "#5f4380", dark: "#c7aae6" };
 macro_rules! inks {
     ($($(#[$doc:meta])* $name:ident = $class:literal, $fill:expr, $stroke:expr, $more:literal;)*) => {
         $($(#[$doc])* pub(super) const $name: Ink =
-            Ink { class: $class, fill: $fill, stroke: $stroke, more: $more };)*
-        const ALL: &[Ink] = &[$($name),*];
+            Ink::Look(&Look { class: $class, fill: $fill, stroke: $stroke, more: $more });)*
+        const ALL: &[Look] = &[$(Look { class: $class, fill: $fill, stroke: $stroke, more: $more }),*];
     };
 }
 

@@ -1,10 +1,15 @@
 //! A stream as a lane on a road of time: as wide as the share still waiting, narrowing as they leave. Lanes of several
 //! streams lie on one axis, so that their posts can be compared by eye.
 
+use plotters_backend::text_anchor::HPos;
+
 use super::Marks;
+use super::area::{Paper, at};
+use super::element::around;
 use super::ink;
-use super::pen::{Anchor, Pen, escaped, id, px};
+use super::pen::{escaped, id, px};
 use super::scale::{Measure, Scale, Tick};
+use super::sheet::{advised_shape, arrow, in_force_shape};
 use super::trace::{Point, Trace};
 use super::words::{percent, still, time};
 
@@ -44,7 +49,7 @@ pub fn road(ages: impl IntoIterator<Item = f64>) -> [f64; 2] {
 }
 
 fn scale([from, to]: [f64; 2]) -> Scale {
-    Scale { from, to: to.max(from * 1.01), log: true }
+    Scale { from, to: to.max(from * 1.01), log: true, measure: Measure::Time }
 }
 
 /// Draws a lane. `<title>` says it in words.
@@ -52,62 +57,60 @@ pub fn lane(input: &Lane<'_>) -> String {
     let marks = input.marks.sound();
     let (width, height) = (f64::from(input.size.0.max(80)), f64::from(input.size.1.max(24)));
     let scale = scale(input.road);
-    let x = |age: f64| PAD + scale.part(age) * (width - 2.0 * PAD);
-    let (left, right, middle) = (PAD, width - PAD, height / 2.0);
-    let half = |share: f64| share * (middle - VERGE);
+    let middle = height / 2.0;
+    let paper = Paper::new(input.prefix, (width, height));
+    // A share counts up and down from the middle.
+    let shares = Scale::linear(-1.0, 1.0);
+    let lane = paper.plot((PAD, VERGE), (width - PAD, height - VERGE), scale, shares);
+    let x = |age: f64| lane.at(age, 0.0).0;
+    let onward = |age: f64| [(age, 0.0), (scale.to, 0.0)];
     let origin = Point::new(0.0, 1.0);
     let points: Vec<Point> = std::iter::once(origin)
         .chain(input.curve.iter().map(|p| Point::new(p[0], p[1].clamp(0.0, 1.0))))
         .collect();
     let trace = Trace::of(&points, false);
-    let mut pen = Pen::default();
-    pen.line(&ink::GRID, (left, middle), (right, middle));
+    lane.put(ink::GRID.path(onward(scale.from)));
     let last = trace.points().last().copied().filter(|_| !input.curve.is_empty());
     if let Some(last) = last {
         let seen = last.age.min(scale.to);
-        let inner = trace.cut(scale.from, seen).thinned(|age| (x(age) / 2.0) as i64);
-        let upper: Vec<_> = inner.points().iter().map(|p| (x(p.age), middle - half(p.value))).collect();
-        let lower: Vec<_> = inner.points().iter().map(|p| (x(p.age), middle + half(p.value))).collect();
-        let outline: Vec<_> = upper.iter().chain(lower.iter().rev()).copied().collect();
-        pen.polygon(&ink::LANE, &outline);
+        let inner = trace.cut(scale.from, seen);
+        let inner = inner.thinned(|age| (scale.part(age) * (width - 2.0 * PAD) / 2.0) as i64);
+        let (upper, lower) = (inner.line(|p| p.value), inner.line(|p| -p.value));
+        lane.put(ink::LANE.polygon([upper, lower.into_iter().rev().collect()].concat()));
         if last.value > 0.0 && last.age < scale.to {
             // Past the edge of sight: how many are left is known, when they leave is not.
-            pen.line(
-                &ink::SIGHT,
-                (x(last.age), middle - half(last.value)),
-                (x(last.age), middle + half(last.value)),
-            );
-            pen.line(&ink::PATH_OPEN, (x(last.age), middle), (right, middle));
+            lane.put(ink::SIGHT.path([(last.age, last.value), (last.age, -last.value)]));
+            lane.put(ink::PATH_OPEN.path(onward(last.age)));
         }
     } else {
-        pen.line(&ink::PATH_OPEN, (left, middle), (right, middle));
+        lane.put(ink::PATH_OPEN.path(onward(scale.from)));
     }
-    pen.circle(&ink::WAITER, (left, middle), 4.0);
+    lane.put(ink::WAITER.circle((scale.from, 0.0), 4.0));
     if let Some(age) = marks.in_force {
-        let at = x(age);
-        pen.line(&ink::IN_FORCE, (at, middle), (at, height - 4.0));
-        pen.rect(&ink::IN_FORCE_SHAPE, (at - 4.0, height - 9.0), (at + 4.0, height - 1.0));
+        let foot = (x(age), height - 5.0);
+        paper.put(ink::IN_FORCE.path([(foot.0, middle), (foot.0, height - 4.0)]));
+        paper.put(at(foot) + in_force_shape(4.0));
     }
     if let Some(age) = marks.advised {
-        let at = x(age);
-        pen.line(&ink::ADVISED, (at, middle), (at, 6.0));
-        pen.polygon(&ink::ADVISED_SHAPE, &[(at, 0.0), (at + 6.0, 6.0), (at, 12.0), (at - 6.0, 6.0)]);
+        let head = (x(age), 6.0);
+        paper.put(ink::ADVISED.path([(head.0, middle), head]));
+        paper.put(at(head) + advised_shape(6.0));
     }
-    let mut body = pen.into_body();
+    let mut group = String::new();
     if let Some(asked) = input.ring {
-        let mut pen = Pen::default();
+        let ring = Paper::new(input.prefix, (width, height));
         let shown = if asked.is_some() { "" } else { " visibility=\"hidden\"" };
-        pen.line(&ink::RIVAL_LEAD, (0.0, 2.0), (0.0, height - 2.0));
-        pen.circle(&ink::RIVAL, (0.0, middle), 6.0);
-        body += &format!(
+        ring.put(ink::RIVAL_LEAD.path([(0.0, 2.0), (0.0, height - 2.0)]));
+        ring.put(ink::RIVAL.circle((0.0, middle), 6.0));
+        group = format!(
             "<g class=\"asked\" data-from=\"{}\" data-to=\"{}\" data-left=\"{}\" data-right=\"{}\" \
              transform=\"translate({},0)\"{shown}>{}</g>",
             scale.from,
             scale.to,
-            px(left),
-            px(right),
+            px(PAD),
+            px(width - PAD),
             px(x(asked.unwrap_or(scale.from))),
-            pen.into_body()
+            ring.into_body()
         );
     }
     let share_at = |age: f64| trace.at(age).map(|p| format!(" with {} still waiting", percent(p.value)));
@@ -127,9 +130,10 @@ pub fn lane(input: &Lane<'_>) -> String {
     let (id, title) = (id(input.prefix, "lane"), escaped(&format!("{}: {words}", input.stream)));
     format!(
         "<svg xmlns=\"http://www.w3.org/2000/svg\" class=\"lane\" role=\"img\" aria-labelledby=\"{id}\" \
-         viewBox=\"0 0 {} {}\"><title id=\"{id}\">{title}</title>{body}</svg>",
+         viewBox=\"0 0 {} {}\"><title id=\"{id}\">{title}</title>{}{group}</svg>",
         px(width),
-        px(height)
+        px(height),
+        paper.into_body()
     )
 }
 
@@ -148,28 +152,28 @@ pub fn milestones(road: [f64; 2], width: u32, font: f64) -> String {
         })
     };
     let height = 2.0 * font;
-    let mut pen = Pen::default();
-    for tick in scale.ticks(Measure::Time, 24, clear) {
-        let at = x(tick.part);
+    let paper = Paper::new("", (width, height + 5.0));
+    let path = paper.plot((PAD, 0.0), (width - PAD, height), scale, Scale::linear(0.0, 1.0));
+    for tick in scale.ticks(24, clear) {
+        let mut long = 3.0;
         if let Some(label) = tick.label {
+            long = 6.0;
             let half = 0.3 * font * label.chars().count() as f64;
-            let within = at.clamp(half.min(width / 2.0), (width - half).max(width / 2.0));
-            pen.text(&ink::SOFT, (within, font), Anchor::Middle, font, &label);
-            pen.line(&ink::TICK, (at, height - 6.0), (at, height));
-        } else {
-            pen.line(&ink::TICK, (at, height - 3.0), (at, height));
+            let centre = path.at(tick.value, 0.0).0;
+            let within = centre.clamp(half.min(width / 2.0), (width - half).max(width / 2.0));
+            paper.put(ink::SOFT.words((within, font), HPos::Center, font, label));
         }
+        path.put(at((tick.value, 0.0)) + ink::TICK.path(around([(0.0, -long), (0.0, 0.0)])));
     }
     let base = height - 0.5;
-    pen.line(&ink::PATH, (PAD, base), (width - PAD, base));
-    let tip = width - 1.0;
-    pen.polygon(&ink::WAITER, &[(tip, base), (tip - 9.0, base - 4.5), (tip - 9.0, base + 4.5)]);
-    pen.circle(&ink::WAITER, (PAD, base), 4.5);
+    paper.put(ink::PATH.path([(PAD, base), (width - PAD, base)]));
+    paper.put(at((width - 1.0, base)) + arrow());
+    paper.put(ink::WAITER.circle((PAD, base), 4.5));
     format!(
         "<svg xmlns=\"http://www.w3.org/2000/svg\" aria-hidden=\"true\" viewBox=\"0 0 {} {}\" \
          font-family=\"system-ui, sans-serif\">{}</svg>",
         px(width),
         px(height + 5.0),
-        pen.into_body()
+        paper.into_body()
     )
 }

@@ -18,12 +18,16 @@
 //! grey printer. Light colours are plain attributes, dark ones a style sheet under `prefers-color-scheme`, so that
 //! a program which drops style sheets still shows the light picture. The palette is in `ink.rs`.
 //!
-//! **Why the markup is written here.** The SVG writer of plotters 0.3 puts whole-pixel coordinates and one fixed
-//! colour into each element and knows neither classes, dashes, patterns nor text alternatives; its tick finder
-//! counts in tens, not in minutes and hours. What is left to take over is a linear map, so nothing is.
+//! **How it is drawn.** With plotters. A `Scale` is one of its ranges, two of them are the coordinates of a drawing
+//! area (`area.rs`), and its elements are put there by ages and values (`element.rs`). The SVG is written by a backend
+//! of ours (`pen.rs`): that of plotters knows whole pixels and one fixed colour an element, and neither classes,
+//! dashes, hatches nor text alternatives. An element dipped in an `Ink` reaches these. Marks beside an axis are ours
+//! too (`scale.rs`): they count in minutes and hours, not in tens.
 
 mod age;
+mod area;
 mod bars;
+mod element;
 mod holding;
 mod ink;
 mod lane;

@@ -1,9 +1,12 @@
 //! A picture over ages: the path with its marks, the values beside it, curves firm and open, posts with labels.
 
+use plotters_backend::text_anchor::HPos;
+
 use super::age::Road;
+use super::area::{At, Plot, at};
+use super::element::{Hatching, around};
 use super::ink::{self, Ink};
-use super::pen::{Anchor, At};
-use super::scale::{Measure, Scale, Tick};
+use super::scale::{Scale, Tick};
 use super::sheet::{MARGIN, Sample, Sheet, advised_shape, arrow, in_force_shape};
 use super::text;
 use super::trace::{Point, Trace};
@@ -40,12 +43,12 @@ impl Kind {
         matches!(self, Kind::Advised | Kind::InForce)
     }
 
-    fn inks(self) -> (&'static Ink, &'static Ink) {
+    fn inks(self) -> (Ink, Ink) {
         match self {
-            Kind::Advised => (&ink::ADVISED, &ink::ADVISED_TEXT),
-            Kind::InForce => (&ink::IN_FORCE, &ink::IN_FORCE_TEXT),
-            Kind::Sight => (&ink::SIGHT, &ink::SOFT),
-            Kind::PaysUntil => (&ink::TICK, &ink::TEXT),
+            Kind::Advised => (ink::ADVISED, ink::ADVISED_TEXT),
+            Kind::InForce => (ink::IN_FORCE, ink::IN_FORCE_TEXT),
+            Kind::Sight => (ink::SIGHT, ink::SOFT),
+            Kind::PaysUntil => (ink::TICK, ink::TEXT),
         }
     }
 }
@@ -65,14 +68,15 @@ pub(super) fn posts(marks: &Marks, road: &Road) -> Vec<Post> {
 /// The values beside the path.
 pub(super) struct Level {
     pub(super) scale: Scale,
-    pub(super) measure: Measure,
     /// What they are.
     pub(super) caption: String,
 }
 
 /// The picture in the making.
 pub(super) struct Panel<'a> {
-    pub(super) sheet: Sheet<'a>,
+    sheet: Sheet<'a>,
+    /// Ages across, values up.
+    plot: Plot,
     road: Road,
     level: Level,
     left: f64,
@@ -93,7 +97,7 @@ impl<'a> Panel<'a> {
         let font = sheet.font;
         let height = (0.4 * sheet.width).clamp(150.0, 440.0);
         let apart = |ticks: &[Tick]| ticks.windows(2).all(|w| (w[1].part - w[0].part) * height >= 2.0 * font);
-        let values = level.scale.ticks(level.measure, 7, apart);
+        let values = level.scale.ticks(7, apart);
         let widest = |ticks: &[Tick]| {
             let labels = ticks.iter().filter_map(|t| t.label.as_deref());
             labels.map(|l| text::width(l, font)).fold(0.0, f64::max)
@@ -108,10 +112,12 @@ impl<'a> Panel<'a> {
         posts.sort_by(|a, b| a.age.total_cmp(&b.age));
         let strip = sheet.y;
         sheet.y += if posts.is_empty() { 0.0 } else { 3.6 * font };
-        let (top, bottom) = (sheet.y, sheet.y + height);
-        sheet.y = bottom;
+        let plot = sheet.paper.plot((left, sheet.y), (right, sheet.y + height), road.scale, level.scale);
+        let ((left, top), (right, bottom)) = plot.corners();
+        sheet.y += height;
         let mut panel = Panel {
             sheet,
+            plot,
             road,
             level,
             left,
@@ -130,9 +136,18 @@ impl<'a> Panel<'a> {
     }
 
     /// Where an age and a value lie.
-    pub(super) fn at(&self, age: f64, value: f64) -> At {
-        let (x, y) = (self.road.scale.part(age), self.level.scale.part(value));
-        (self.left + x * (self.right - self.left), self.bottom - y * (self.bottom - self.top))
+    fn at(&self, age: f64, value: f64) -> At {
+        self.plot.at(age, value)
+    }
+
+    /// Two corners of the ground over a stretch of ages, from the top to the path.
+    fn over(&self, from: f64, to: f64) -> [(f64, f64); 2] {
+        [(from, self.level.scale.to), (to, self.level.scale.from)]
+    }
+
+    /// The ends of a line along which a value is read.
+    fn along(&self, value: f64) -> [(f64, f64); 2] {
+        [(self.road.scale.from, value), (self.road.scale.to, value)]
     }
 
     fn x(&self, age: f64) -> f64 {
@@ -163,23 +178,20 @@ impl<'a> Panel<'a> {
         remarks.join(", ")
     }
 
-    fn haze(&mut self) {
+    fn haze(&self) {
         if self.road.sight.is_finite() {
-            let id = self.sheet.id("haze");
-            self.sheet.pen.pattern(&id, &ink::HAZE, 7.0, true);
-            let from = (self.x(self.road.sight), self.top);
-            self.sheet.pen.hatched(&id, from, (self.right, self.bottom));
+            self.plot.put(Hatching { name: "haze", ink: ink::HAZE, step: 7.0, rising: true });
+            self.plot.put(Ink::Hatch("haze").rect(self.over(self.road.sight, self.road.scale.to)));
         }
     }
 
-    fn values(&mut self, ticks: &[Tick]) {
+    fn values(&self, ticks: &[Tick]) {
         let font = self.sheet.font;
         for tick in ticks {
-            let y = self.bottom - tick.part * (self.bottom - self.top);
-            self.sheet.pen.line(&ink::GRID, (self.left, y), (self.right, y));
+            self.plot.put(ink::GRID.path(self.along(tick.value)));
             if let Some(label) = &tick.label {
-                let at = (self.left - 8.0, y + 0.35 * font);
-                self.sheet.pen.text(&ink::SOFT, at, Anchor::End, font, label);
+                let place = (self.left - 8.0, self.at(0.0, tick.value).1 + 0.35 * font);
+                self.sheet.paper.put(ink::SOFT.words(place, HPos::Right, font, label.as_str()));
             }
         }
     }
@@ -188,16 +200,17 @@ impl<'a> Panel<'a> {
         let font = self.sheet.font;
         self.sheet.y += 1.7 * font;
         for tick in std::mem::take(&mut self.ticks) {
-            let x = self.left + tick.part * (self.right - self.left);
             let long = if tick.label.is_some() { 6.0 } else { 3.5 };
-            self.sheet.pen.line(&ink::TICK, (x, self.bottom), (x, self.bottom + long));
+            let down = around([(0.0, 0.0), (0.0, long)]);
+            self.plot.put(at((tick.value, self.level.scale.from)) + ink::TICK.path(down));
             if let Some(label) = &tick.label {
-                self.sheet.pen.text(&ink::SOFT, (x, self.sheet.y), Anchor::Middle, font, label);
+                let place = (self.x(tick.value), self.sheet.y);
+                self.sheet.paper.put(ink::SOFT.words(place, HPos::Center, font, label.as_str()));
             }
             self.ticks.push(tick);
         }
         let log = if self.road.scale.log { ", logarithmic" } else { "" };
-        self.sheet.remark(Anchor::End, &format!("time waited so far{log}"));
+        self.sheet.remark(HPos::Right, &format!("time waited so far{log}"));
     }
 
     /// Names of the posts in a row, each led to its post; a post past the end of the path has an arrow instead.
@@ -227,33 +240,33 @@ impl<'a> Panel<'a> {
             let left = centres[i] - width / 2.0;
             self.shape(post.kind, (left + 0.45 * font, name_y - 0.35 * font));
             let name_at = (left + indent(post.kind), name_y);
-            self.sheet.pen.text(words, name_at, Anchor::Start, font, post.kind.name());
-            self.sheet.pen.text(words, (left, value_y), Anchor::Start, font, &values[i]);
+            let paper = &self.sheet.paper;
+            paper.put(words.words(name_at, HPos::Left, font, post.kind.name()));
+            paper.put(words.words((left, value_y), HPos::Left, font, values[i].as_str()));
             if self.reaches(post.age) {
                 let foot = x.clamp(left + 0.2 * font, left + width - 0.2 * font);
-                self.sheet.pen.polyline(line, &[(foot, foot_y), (x, self.top), (x, self.bottom)]);
+                paper.put(line.path([(foot, foot_y), (x, self.top), (x, self.bottom)]));
             }
         }
     }
 
-    fn shape(&mut self, kind: Kind, at: At) {
-        let font = self.sheet.font;
+    fn shape(&self, kind: Kind, place: At) {
+        let Sheet { ref paper, font, .. } = self.sheet;
         match kind {
-            Kind::Advised => advised_shape(&mut self.sheet.pen, at, 0.5 * font),
-            Kind::InForce => in_force_shape(&mut self.sheet.pen, at, 0.38 * font),
+            Kind::Advised => paper.put(at(place) + advised_shape(0.5 * font)),
+            Kind::InForce => paper.put(at(place) + in_force_shape(0.38 * font)),
             Kind::Sight | Kind::PaysUntil => {}
         }
     }
 
     /// A ground over a stretch of ages, from the path to the top, with its edges.
-    pub(super) fn good(&mut self, from: f64, to: f64) {
-        let id = self.sheet.id("good");
-        self.sheet.pen.pattern(&id, &ink::GOOD_HATCH, 5.0, false);
-        let (a, b) = ((self.x(from), self.top), (self.x(to), self.bottom));
-        self.sheet.pen.rect(&ink::GOOD, a, b);
-        self.sheet.pen.hatched(&id, a, b);
-        for x in [a.0, b.0] {
-            self.sheet.pen.line(&ink::GOOD_EDGE, (x, self.top), (x, self.bottom));
+    pub(super) fn good(&self, from: f64, to: f64) {
+        self.plot.put(Hatching { name: "good", ink: ink::GOOD_HATCH, step: 5.0, rising: false });
+        self.plot.put(ink::GOOD.rect(self.over(from, to)));
+        self.plot.put(Ink::Hatch("good").rect(self.over(from, to)));
+        for age in [from, to] {
+            let [top, bottom] = self.over(age, age);
+            self.plot.put(ink::GOOD_EDGE.path([top, bottom]));
         }
     }
 
@@ -263,48 +276,47 @@ impl<'a> Panel<'a> {
     }
 
     /// The band of a curve: its ground where it is seen, its edges everywhere. Drawn before the posts.
-    pub(super) fn band(&mut self, trace: &Trace) {
+    pub(super) fn band(&self, trace: &Trace) {
         let Scale { from, to, .. } = self.road.scale;
         let sight = self.road.sight.min(to);
-        for (from, to, edge) in [(from, sight, &ink::EDGE), (sight.max(from), to, &ink::EDGE_OPEN)] {
+        for (from, to, edge) in [(from, sight, ink::EDGE), (sight.max(from), to, ink::EDGE_OPEN)] {
             let part = trace.cut(from, to).thinned(self.columns());
             for run in part.banded() {
-                let place = |age, value| self.at(age, value);
-                let low = run.line(|p| p.band.map_or(p.value, |b| b[0]), place);
-                let high = run.line(|p| p.band.map_or(p.value, |b| b[1]), place);
+                let low = run.line(|p| p.band.map_or(p.value, |b| b[0]));
+                let high = run.line(|p| p.band.map_or(p.value, |b| b[1]));
                 if from < sight {
-                    let outline: Vec<At> = low.iter().chain(high.iter().rev()).copied().collect();
-                    self.sheet.pen.polygon(&ink::BAND, &outline);
+                    let outline: Vec<_> = low.iter().chain(high.iter().rev()).copied().collect();
+                    self.plot.put(ink::BAND.polygon(outline));
                 }
-                self.sheet.pen.polyline(edge, &low);
-                self.sheet.pen.polyline(edge, &high);
+                self.plot.put(edge.path(low));
+                self.plot.put(edge.path(high));
             }
         }
     }
 
     /// The ground between a curve and 0.
-    pub(super) fn ground(&mut self, trace: &Trace) {
+    pub(super) fn ground(&self, trace: &Trace) {
         let part = trace.cut(self.road.scale.from, self.road.scale.to).thinned(self.columns());
-        let mut outline = part.line(|p| p.value, |age, value| self.at(age, value));
-        if let (Some(&first), Some(&last)) = (outline.first(), outline.last()) {
-            let y = self.at(0.0, 0.0).1;
-            outline.extend([(last.0, y), (first.0, y)]);
-            self.sheet.pen.polygon(&ink::BAND, &outline);
+        let mut outline = part.line(|p| p.value);
+        if let (Some(&(first, _)), Some(&(last, _))) = (outline.first(), outline.last()) {
+            outline.extend([(last, 0.0), (first, 0.0)]);
+            self.plot.put(ink::BAND.polygon(outline));
         }
     }
 
     /// A curve: firm as far as it is seen, dashed beyond. On a logarithmic axis it ends where it leaves the axis.
-    pub(super) fn curve(&mut self, trace: &Trace) {
+    pub(super) fn curve(&self, trace: &Trace) {
         let Scale { from, to, .. } = self.road.scale;
         let sight = self.road.sight.min(to);
-        for (from, to, ink) in [(from, sight, &ink::LINE), (sight.max(from), to, &ink::LINE_OPEN)] {
+        for (from, to, ink) in [(from, sight, ink::LINE), (sight.max(from), to, ink::LINE_OPEN)] {
             let part = trace.cut(from, to).thinned(self.columns());
-            let mut line = part.line(|p| p.value, |age, value| self.at(age, value));
+            let mut line = part.line(|p| p.value);
             if self.level.scale.log {
-                let end = line.iter().position(|p| p.1 >= self.bottom).map_or(line.len(), |i| i + 1);
+                let lowest = self.level.scale.from;
+                let end = line.iter().position(|&(_, v)| v <= lowest).map_or(line.len(), |i| i + 1);
                 line.truncate(end);
             }
-            self.sheet.pen.polyline(ink, &line);
+            self.plot.put(ink.path(line));
         }
     }
 
@@ -331,14 +343,14 @@ impl<'a> Panel<'a> {
             let x = x.clamp(self.left + radius, self.right - radius);
             let offsets =
                 (0..60).map(|k: i32| f64::from((k + 1) / 2 * if k % 2 == 0 { -1 } else { 1 }) * step);
-            let clear =
-                |c: f64| self.taken.iter().all(|t| (t.0 - x).abs() >= step || (t.1 - c).abs() >= step);
+            let far = |a: f64, b: f64| (a - b).abs() >= step - SLACK;
+            let clear = |c: f64| self.taken.iter().all(|t| far(t.0, x) || far(t.1, c));
             let start = y.clamp(highest, lowest);
             let found = offsets.map(|o| start + o).find(|c| *c >= highest && *c <= lowest && clear(*c));
             let Some(centre) = found else { continue };
             if (centre - y).abs() > radius {
-                self.sheet.pen.line(&ink::RIVAL_LEAD, (x, centre), (x, y));
-                self.sheet.pen.circle(&ink::RIVAL_TEXT, (x, y), 2.2);
+                self.sheet.paper.put(ink::RIVAL_LEAD.path([(x, centre), (x, y)]));
+                self.sheet.paper.put(ink::RIVAL_TEXT.circle((x, y), 2.2));
             }
             self.taken.push((x, centre));
             rings.push((i + 1, (x, centre)));
@@ -349,9 +361,8 @@ impl<'a> Panel<'a> {
     }
 
     /// A line where the value is 0.
-    pub(super) fn zero(&mut self) {
-        let y = self.at(0.0, 0.0).1;
-        self.sheet.pen.line(&ink::TICK, (self.left, y), (self.right, y));
+    pub(super) fn zero(&self) {
+        self.plot.put(ink::TICK.path(self.along(0.0)));
     }
 
     fn shaped(&self) -> Vec<Post> {
@@ -363,11 +374,11 @@ impl<'a> Panel<'a> {
     pub(super) fn close(mut self, mut key: Vec<(Sample, String)>, summary: &str, table: Table) -> Svg {
         let y = self.bottom;
         let sight = if self.road.sight.is_finite() { self.x(self.road.sight) } else { self.right };
-        let pen = &mut self.sheet.pen;
-        pen.line(&ink::PATH, (self.left, y), (sight, y));
-        pen.line(&ink::PATH_OPEN, (sight, y), (self.right + 6.0, y));
-        arrow(pen, (self.right + 12.0, y));
-        pen.circle(&ink::WAITER, (self.left, y), 4.5);
+        let paper = &self.sheet.paper;
+        paper.put(ink::PATH.path([(self.left, y), (sight, y)]));
+        paper.put(ink::PATH_OPEN.path([(sight, y), (self.right + 6.0, y)]));
+        paper.put(at((self.right + 12.0, y)) + arrow());
+        paper.put(ink::WAITER.circle((self.left, y), 4.5));
         for post in self.shaped() {
             if self.reaches(post.age) {
                 self.shape(post.kind, (self.x(post.age), y));
@@ -381,6 +392,10 @@ impl<'a> Panel<'a> {
     }
 }
 
+/// By how much rings may stand closer than a step, px: places are whole tenths, and rings at almost the same place
+/// are a step apart.
+const SLACK: f64 = 0.5;
+
 /// Marks of the path with the right end that leaves room for the last label and the arrow.
 fn age_ticks(scale: Scale, left: f64, edge: f64, font: f64) -> (Vec<Tick>, f64) {
     // Room for half of the widest label an axis of ages can have.
@@ -390,7 +405,7 @@ fn age_ticks(scale: Scale, left: f64, edge: f64, font: f64) -> (Vec<Tick>, f64) 
         let label = |t: &Tick| text::width(t.label.as_deref().unwrap_or(""), font);
         text::fits(ticks.iter().map(|t| (t.part * width, label(t))), font)
     };
-    let mut ticks = scale.ticks(Measure::Time, 14, clear);
+    let mut ticks = scale.ticks(14, clear);
     let mut last = f64::NEG_INFINITY;
     let mut small: Vec<f64> = ticks.iter().filter(|t| t.label.is_none()).map(|t| t.part * width).collect();
     small.retain(|x| {

@@ -78,7 +78,7 @@ pub fn rate(input: &Rate<'_>, frame: &Frame<'_>) -> Svg {
     let panel = Panel::open(
         Sheet::open(frame, input.stream, &facts.title()),
         road,
-        Level { scale: facts.scale(), measure: Measure::Number, caption: facts.unit.caption("earned") },
+        Level { scale: facts.scale(), caption: facts.unit.caption("earned") },
         posts(&input.marks, &road),
     );
     facts.draw(panel)
@@ -113,7 +113,7 @@ impl Facts<'_> {
         let lines = points.clone().map(|p| p.value).chain(self.rivals.iter().map(|r| r.rate));
         let top = 2.0 * lines.clone().filter(|v| v.is_finite()).fold(0.0, |m: f64, v| m.max(v.abs()));
         let bands = points.filter_map(|p| p.band).flatten().map(|b| b.clamp(-top, top));
-        Scale::with_zero(lines.chain(bands))
+        Scale::with_zero(Measure::Number, lines.chain(bands))
     }
 
     fn title(&self) -> String {

@@ -48,7 +48,7 @@ pub fn remaining(input: &Remaining<'_>, frame: &Frame<'_>) -> Svg {
         return nothing(input.stream, "no end of the wait is to be expected at any age", frame);
     }
     let title = title(input, &trace, &road);
-    let level = Level { scale: scale(&shown), measure: Measure::Time, caption: caption(input.upto) };
+    let level = Level { scale: scale(&shown), caption: caption(input.upto) };
     let mut panel =
         Panel::open(Sheet::open(frame, input.stream, &title), road, level, posts(&input.marks, &road));
     panel.band(&trace);
@@ -87,9 +87,9 @@ fn scale(shown: &Trace) -> Scale {
     if most / least > LOG_FROM {
         let lows = shown.points().iter().filter_map(|p| p.band).map(|b| b[0]).filter(|b| *b > 0.0);
         let bottom = lows.fold(least, f64::min).max(least / BAND).max(LEAST.1 * top);
-        return Scale { from: bottom / 1.2, to: top * 1.2, log: true };
+        return Scale { from: bottom / 1.2, to: top * 1.2, log: true, measure: Measure::Time };
     }
-    Scale::with_zero([top])
+    Scale::with_zero(Measure::Time, [top])
 }
 
 /// Ages worth a sentence: the start, and a later one: the time in force where it is seen, else the last one seen.

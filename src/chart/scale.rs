@@ -1,4 +1,8 @@
-//! From values to the length of an axis, and the marks beside it where people count.
+//! From values to the length of an axis, for plotters to lay them out by, and the marks beside it where people count.
+
+use std::ops::Range;
+
+use plotters::coord::ranged1d::{KeyPointHint, NoDefaultFormatting, Ranged};
 
 use super::words;
 
@@ -8,6 +12,7 @@ pub(super) struct Scale {
     pub(super) from: f64,
     pub(super) to: f64,
     pub(super) log: bool,
+    pub(super) measure: Measure,
 }
 
 /// What the marks of an axis count in.
@@ -29,7 +34,34 @@ pub(super) struct Tick {
     pub(super) label: Option<String>,
 }
 
+impl Ranged for Scale {
+    type FormatOption = NoDefaultFormatting;
+    type ValueType = f64;
+
+    /// Never outside the ends, whatever the value.
+    fn map(&self, value: &f64, (start, end): (i32, i32)) -> i32 {
+        let (start, end) = (f64::from(start), f64::from(end));
+        (start + self.part(*value) * (end - start)).round() as i32
+    }
+
+    /// The marks of [`Scale::ticks`], whose labels are the bold points.
+    fn key_points<H: KeyPointHint>(&self, hint: H) -> Vec<f64> {
+        let ticks = self.ticks(hint.bold_points(), |_| true);
+        let small = hint.weight().allow_light_points() && ticks.len() <= hint.max_num_points();
+        ticks.into_iter().filter(|t| small || t.label.is_some()).map(|t| t.value).collect()
+    }
+
+    fn range(&self) -> Range<f64> {
+        self.from..self.to
+    }
+}
+
 impl Scale {
+    /// A linear axis of plain numbers.
+    pub(super) fn linear(from: f64, to: f64) -> Scale {
+        Scale { from, to, log: false, measure: Measure::Number }
+    }
+
     /// Where a value lies, 0 to 1; what lies outside, and what is no number, is at an end.
     pub(super) fn part(self, value: f64) -> f64 {
         let part = match self.log {
@@ -42,15 +74,13 @@ impl Scale {
     }
 
     /// A linear axis over values and 0, with a little air.
-    pub(super) fn with_zero(values: impl IntoIterator<Item = f64>) -> Scale {
+    pub(super) fn with_zero(measure: Measure, values: impl IntoIterator<Item = f64>) -> Scale {
         let finite = values.into_iter().filter(|v| v.is_finite()).map(|v| v.clamp(-HUGE, HUGE));
         let (low, high) = finite.fold((0.0f64, 0.0f64), |(low, high), v| (low.min(v), high.max(v)));
         let air = 0.06 * (high - low);
         let (from, to) = (if low < 0.0 { low - air } else { 0.0 }, if high > 0.0 { high + air } else { 0.0 });
-        if to - from < f64::MIN_POSITIVE * 1e3 {
-            return Scale { from, to: from + 1.0, log: false };
-        }
-        Scale { from, to, log: false }
+        let to = if to - from < f64::MIN_POSITIVE * 1e3 { from + 1.0 } else { to };
+        Scale { from, to, log: false, measure }
     }
 
     fn holds(self, value: f64) -> bool {
@@ -64,9 +94,8 @@ impl Scale {
 
     /// The densest labels of which `clear` says that they fit, at most `most` of them, and small marks between.
     /// Only ages, waits and shares have logarithmic axes.
-    pub(super) fn ticks(self, measure: Measure, most: usize, clear: impl Fn(&[Tick]) -> bool) -> Vec<Tick> {
-        let candidates =
-            if self.log { self.log_candidates(measure) } else { self.linear_candidates(measure) };
+    pub(super) fn ticks(self, most: usize, clear: impl Fn(&[Tick]) -> bool) -> Vec<Tick> {
+        let candidates = if self.log { self.log_candidates() } else { self.linear_candidates() };
         let mut best: Vec<Tick> = Vec::new();
         for ticks in candidates.into_iter().filter(|ticks| ticks.len() <= most && clear(ticks)) {
             if ticks.len() > best.len() {
@@ -76,7 +105,7 @@ impl Scale {
                 break;
             }
         }
-        if self.log && measure == Measure::Time {
+        if self.log && self.measure == Measure::Time {
             let labelled: Vec<f64> = best.iter().map(|t| t.value).collect();
             let small = ladder().filter(|(age, _)| self.holds(*age) && !labelled.contains(age));
             best.extend(small.map(|(age, _)| self.tick(age, None)));
@@ -84,9 +113,9 @@ impl Scale {
         best
     }
 
-    fn linear_candidates(self, measure: Measure) -> Vec<Vec<Tick>> {
+    fn linear_candidates(self) -> Vec<Vec<Tick>> {
         let range = self.to - self.from;
-        let steps: Vec<f64> = match measure {
+        let steps: Vec<f64> = match self.measure {
             Measure::Time => time_steps().filter(|s| *s <= range && *s >= range / 20.0).collect(),
             Measure::Share => vec![0.1, 0.25, 0.5, 1.0],
             Measure::Number => {
@@ -95,7 +124,7 @@ impl Scale {
             }
         };
         let largest = self.to.abs().max(self.from.abs());
-        let label = |value: f64, step: f64| match measure {
+        let label = |value: f64, step: f64| match self.measure {
             Measure::Time if value == 0.0 => "0".into(),
             // The unit of the last age, unless the step is an odd part of it (20 s of a minute).
             Measure::Time => in_unit(value, unit(largest.min(4.0 * step), 2.0)),
@@ -113,8 +142,8 @@ impl Scale {
         steps.into_iter().filter(|step| *step > 0.0 && step.is_finite()).map(at_steps).collect()
     }
 
-    fn log_candidates(self, measure: Measure) -> Vec<Vec<Tick>> {
-        let rungs: Vec<(f64, u8, String)> = match measure {
+    fn log_candidates(self) -> Vec<Vec<Tick>> {
+        let rungs: Vec<(f64, u8, String)> = match self.measure {
             Measure::Time => {
                 ladder().map(|(age, level)| (age, level, in_unit(age, unit(age, 1.0)))).collect()
             }
@@ -201,15 +230,18 @@ fn ladder() -> impl Iterator<Item = (f64, u8)> {
 
 #[cfg(test)]
 mod tests {
+    use plotters::coord::ranged1d::{BoldPoints, LightPoints};
+
     use super::*;
 
-    fn labels(scale: Scale, measure: Measure, most: usize) -> Vec<String> {
-        scale.ticks(measure, most, |_| true).into_iter().filter_map(|t| t.label).collect()
+    fn labels((from, to): (f64, f64), log: bool, measure: Measure, most: usize) -> Vec<String> {
+        let scale = Scale { from, to, log, measure };
+        scale.ticks(most, |_| true).into_iter().filter_map(|t| t.label).collect()
     }
 
     #[test]
     fn counts_as_people_do() {
-        let linear = |to: f64| labels(Scale { from: 0.0, to, log: false }, Measure::Time, 7);
+        let linear = |to: f64| labels((0.0, to), false, Measure::Time, 7);
         assert_eq!(linear(0.055), ["0", "10 ms", "20 ms", "30 ms", "40 ms", "50 ms"]);
         assert_eq!(linear(2.4), ["0", "0.5 s", "1 s", "1.5 s", "2 s"]);
         assert_eq!(linear(3_700.0), ["0", "10 min", "20 min", "30 min", "40 min", "50 min", "60 min"]);
@@ -217,7 +249,7 @@ mod tests {
         assert_eq!(linear(40.0 * DAY), ["0", "7 d", "14 d", "21 d", "28 d", "35 d"]);
         assert_eq!(linear(130.0), ["0", "20 s", "40 s", "60 s", "80 s", "100 s", "120 s"]);
         assert_eq!(linear(330.0), ["0", "1 min", "2 min", "3 min", "4 min", "5 min"]);
-        let log = |from: f64, to: f64, most| labels(Scale { from, to, log: true }, Measure::Time, most);
+        let log = |from: f64, to: f64, most| labels((from, to), true, Measure::Time, most);
         assert_eq!(log(8e-4, 20.0, 7), ["1 ms", "10 ms", "100 ms", "1 s", "10 s"]);
         assert_eq!(
             log(30.0, 40.0 * DAY, 12),
@@ -228,20 +260,11 @@ mod tests {
 
     #[test]
     fn numbers_and_shares() {
+        assert_eq!(labels((0.0, 11.0), false, Measure::Number, 6), ["0", "2", "4", "6", "8", "10"]);
+        assert_eq!(labels((-0.5, 1.1), false, Measure::Number, 6), ["-0.5", "0", "0.5", "1"]);
+        assert_eq!(labels((0.0, 1.0), false, Measure::Share, 6), ["0%", "25%", "50%", "75%", "100%"]);
         assert_eq!(
-            labels(Scale { from: 0.0, to: 11.0, log: false }, Measure::Number, 6),
-            ["0", "2", "4", "6", "8", "10"]
-        );
-        assert_eq!(
-            labels(Scale { from: -0.5, to: 1.1, log: false }, Measure::Number, 6),
-            ["-0.5", "0", "0.5", "1"]
-        );
-        assert_eq!(
-            labels(Scale { from: 0.0, to: 1.0, log: false }, Measure::Share, 6),
-            ["0%", "25%", "50%", "75%", "100%"]
-        );
-        assert_eq!(
-            labels(Scale { from: 1e-4, to: 1.0, log: true }, Measure::Share, 6),
+            labels((1e-4, 1.0), true, Measure::Share, 6),
             ["1 in 10,000", "1 in 1,000", "1 in 100", "1 in 10", "all"]
         );
     }
@@ -249,13 +272,24 @@ mod tests {
     #[test]
     fn places_everything_inside() {
         for log in [false, true] {
-            let scale = Scale { from: 1e-3, to: 10.0, log };
+            let scale = Scale { from: 1e-3, to: 10.0, log, measure: Measure::Time };
             for value in [f64::NAN, f64::INFINITY, f64::NEG_INFINITY, -1.0, 0.0, 5.0, 1e300] {
                 assert!((0.0..=1.0).contains(&scale.part(value)));
+                assert!((-7..=90).contains(&scale.map(&value, (90, -7))));
             }
         }
-        assert_eq!(Scale::with_zero([]), Scale { from: 0.0, to: 1.0, log: false });
-        assert_eq!(Scale::with_zero([0.0, f64::NAN, f64::INFINITY]).to, 1.0);
-        assert!(Scale::with_zero([-2.0, -1.0]).to == 0.0);
+        let with_zero = |values: &[f64]| Scale::with_zero(Measure::Number, values.iter().copied());
+        assert_eq!(with_zero(&[]), Scale::linear(0.0, 1.0));
+        assert_eq!(with_zero(&[0.0, f64::NAN, f64::INFINITY]).to, 1.0);
+        assert!(with_zero(&[-2.0, -1.0]).to == 0.0);
+    }
+
+    #[test]
+    fn tells_plotters_its_marks() {
+        let ages = Scale { from: 8e-3, to: 20.0, log: true, measure: Measure::Time };
+        assert_eq!(ages.key_points(BoldPoints(4)), [0.01, 0.1, 1.0, 10.0]);
+        assert_eq!(ages.key_points(LightPoints::new(4, 10)).len(), 10);
+        assert_eq!(ages.key_points(LightPoints::new(4, 9)).len(), 4);
+        assert_eq!((ages.map(&0.4, (0, 1000)), ages.range()), (500, 8e-3..20.0));
     }
 }

@@ -1,6 +1,5 @@
 //! A curve as points: made sound, cut to an axis, thinned to what a screen can show, read at an age.
 
-use super::pen::At;
 use super::scale::HUGE;
 
 /// A curve at one age.
@@ -122,17 +121,16 @@ impl Trace {
         Trace { points, steps: self.steps }
     }
 
-    /// The line through a reading of the points, on paper.
-    pub(super) fn line(&self, read: impl Fn(&Point) -> f64, place: impl Fn(f64, f64) -> At) -> Vec<At> {
-        let mut line: Vec<At> = Vec::with_capacity(self.points.len());
+    /// The line through a reading of the points: ages and values.
+    pub(super) fn line(&self, read: impl Fn(&Point) -> f64) -> Vec<(f64, f64)> {
+        let mut line: Vec<(f64, f64)> = Vec::with_capacity(self.points.len());
         for p in &self.points {
-            let next = place(p.age, read(p));
-            if let Some(&last) = line.last().filter(|_| self.steps) {
-                line.push((next.0, last.1));
+            let value = read(p);
+            if let Some(&(_, last)) = line.last().filter(|_| self.steps) {
+                line.push((p.age, last));
             }
-            line.push(next);
+            line.push((p.age, value));
         }
-        line.dedup();
         line
     }
 

@@ -43,7 +43,7 @@ pub fn waiting(input: &Waiting<'_>, frame: &Frame<'_>) -> Svg {
     let panel = Panel::open(
         Sheet::open(frame, input.stream, &facts.title()),
         road,
-        Level { scale: facts.scale(), measure: Measure::Share, caption: "share still waiting".into() },
+        Level { scale: facts.scale(), caption: "share still waiting".into() },
         posts(&input.marks, &road),
     );
     facts.draw(panel)
@@ -90,9 +90,9 @@ impl Facts<'_> {
         let least = at_marks.map(|p| p.value).filter(|s| *s > 0.0).fold(1.0, f64::min);
         if least < LOG_BELOW {
             let floor = 10f64.powf((0.5 * least).log10().floor()).max(LEAST);
-            return Scale { from: floor, to: 1.0, log: true };
+            return Scale { from: floor, to: 1.0, log: true, measure: Measure::Share };
         }
-        Scale { from: 0.0, to: 1.0, log: false }
+        Scale { from: 0.0, to: 1.0, log: false, measure: Measure::Share }
     }
 
     fn title(&self) -> String {

@@ -1,8 +1,12 @@
 //! A quantity by the hour of the week. The size of a square says how much; the worst hour has a ring and a word.
 
+use plotters_backend::text_anchor::HPos;
+
+use super::area::at;
+use super::element::around;
 use super::ink;
-use super::pen::Anchor;
-use super::sheet::{MARGIN, Sample, Sheet, nothing, worst};
+use super::scale::Scale;
+use super::sheet::{MARGIN, Sample, Sheet, nothing, square, worst};
 use super::text::{self, named};
 use super::words::{Quantity, Spoken, sentences};
 use super::{Frame, Svg, Table};
@@ -39,7 +43,7 @@ pub fn week(input: &Week<'_>, frame: &Frame<'_>) -> Svg {
     };
     let mut sheet = Sheet::open(frame, input.stream, &facts.title());
     let font = sheet.font;
-    sheet.remark(Anchor::Start, &format!("hour of day, {}", named(input.zone)));
+    sheet.remark(HPos::Left, &format!("hour of day, {}", named(input.zone)));
     let says = |value: f64| facts.unit.short(value);
     let sums: Vec<f64> = (0..7).map(|d| facts.day(d)).collect();
     let room = match sheet.width >= SUMS_FROM {
@@ -50,41 +54,44 @@ pub fn week(input: &Week<'_>, frame: &Frame<'_>) -> Svg {
     let cell = (sheet.right() - room - left) / 24.0;
     let height = cell.clamp(1.5 * font, 40.0);
     sheet.y += 1.4 * font;
-    let every = [3, 6, 12].into_iter().find(|n| cell * f64::from(*n) >= text::width("18", font) + font);
-    for hour in (0..24).step_by(every.unwrap_or(12) as usize) {
-        let x = left + cell * (f64::from(hour) + 0.5);
-        sheet.pen.text(&ink::SOFT, (x, sheet.y), Anchor::Middle, font, &hour.to_string());
-    }
+    let hours_y = sheet.y;
     sheet.y += 0.6 * font;
+    let upper_left = (left, sheet.y);
+    sheet.y += 7.0 * height;
+    // Sunday is at the bottom.
+    let (across, up) = (Scale::linear(0.0, 24.0), Scale::linear(0.0, 7.0));
+    let grid = sheet.paper.plot(upper_left, (left + 24.0 * cell, sheet.y), across, up);
+    let middle = |d: usize, hour: usize| (hour as f64 + 0.5, 6.5 - d as f64);
+    let every = [3, 6, 12].into_iter().find(|n| cell * *n as f64 >= text::width("18", font) + font);
+    for hour in (0..24).step_by(every.unwrap_or(12)) {
+        let (x, _) = grid.at(hour as f64 + 0.5, 0.0);
+        sheet.paper.put(ink::SOFT.words((x, hours_y), HPos::Center, font, hour.to_string()));
+    }
     let side_of = |value: f64| {
         let full = cell.min(height) - 4.0;
         let share = if most > 0.0 { (value / most).min(1.0) } else { 0.0 };
         if value > 0.0 { (full * share.sqrt()).max(1.5) } else { 0.0 }
     };
     for (d, name) in DAYS.iter().enumerate() {
-        let middle = sheet.y + height / 2.0;
-        sheet.pen.line(&ink::GRID, (left, middle), (left + 24.0 * cell, middle));
-        sheet.pen.text(&ink::SOFT, (left - 8.0, middle + 0.35 * font), Anchor::End, font, name);
+        let (_, row) = middle(d, 0);
+        grid.put(ink::GRID.path([(0.0, row), (24.0, row)]));
+        let base = grid.at(0.0, row).1 + 0.35 * font;
+        sheet.paper.put(ink::SOFT.words((left - 8.0, base), HPos::Right, font, *name));
         for hour in 0..24 {
-            let value = facts.value(d, hour);
-            let x = left + cell * (hour as f64 + 0.5);
-            match value {
-                None => sheet.pen.line(&ink::TICK, (x - 2.0, middle + 2.0), (x + 2.0, middle - 2.0)),
-                Some(value) if facts.is_most(d, hour) && value > 0.0 => {
-                    worst(&mut sheet.pen, (x, middle), side_of(value));
-                }
+            let place = middle(d, hour);
+            match facts.value(d, hour) {
+                None => grid.put(at(place) + ink::TICK.path(around([(-2.0, 2.0), (2.0, -2.0)]))),
+                Some(value) if facts.is_most(d, hour) && value > 0.0 => worst(&grid, place, side_of(value)),
                 Some(value) if value > 0.0 => {
-                    let half = side_of(value) / 2.0;
-                    sheet.pen.rect(&ink::CELL, (x - half, middle - half), (x + half, middle + half));
+                    grid.put(at(place) + square(ink::CELL, side_of(value) / 2.0));
                 }
                 Some(_) => {}
             }
         }
         if room > 0.0 {
-            let at = (sheet.right(), middle + 0.35 * font);
-            sheet.pen.text(&ink::SOFT, at, Anchor::End, font, &says(sums[d]));
+            let place = (sheet.right(), base);
+            sheet.paper.put(ink::SOFT.words(place, HPos::Right, font, says(sums[d])));
         }
-        sheet.y += height;
     }
     let mut key = Vec::new();
     if most > 0.0 {
