@@ -16,7 +16,7 @@ use arrow_schema::{DataType, TimeUnit};
 use foldhash::fast::RandomState;
 
 use super::ColumnsError;
-use super::names::{self, Names};
+use super::names;
 use crate::intake::record::{Field, Fields};
 
 /// Whether values of a type can be those of a field.
@@ -127,21 +127,21 @@ impl<'a> Column<'a> {
         }
     }
 
-    /// The texts of all rows, those of missing ones too, as places in a shorter list.
-    pub(super) fn names(&'a self) -> Option<Names<'a>> {
+    /// What the text of each row stands for, those of missing ones too.
+    pub(super) fn names<T: Copy>(&'a self, find: impl FnMut(&'a str) -> T) -> Option<Vec<T>> {
         Some(match &self.values {
             Values::Nothing | Values::Numbers(_) | Values::Seconds(_) => return None,
-            Values::Text(texts) => names::met(texts.len(), |row| texts.value(row)),
-            Values::LargeText(texts) => names::met(texts.len(), |row| texts.value(row)),
-            Values::TextView(texts) => names::met(texts.len(), |row| texts.value(row)),
+            Values::Text(texts) => names::of_each(texts.len(), |row| texts.value(row), find),
+            Values::LargeText(texts) => names::of_each(texts.len(), |row| texts.value(row), find),
+            Values::TextView(texts) => names::of_each(texts.len(), |row| texts.value(row), find),
             Values::Coded(places, texts) => {
-                names::met_coded(places, |place| texts.text(place).unwrap_or_default())
+                names::of_each_place(places, |place| texts.text(place).unwrap_or_default(), find)
             }
             texts @ Values::Figures(figures) => {
-                names::met(figures.len(), |row| texts.text(row).unwrap_or_default())
+                names::of_each(figures.len(), |row| texts.text(row).unwrap_or_default(), find)
             }
             texts @ Values::Flags(flags) => {
-                names::met(flags.len(), |row| texts.text(row).unwrap_or_default())
+                names::of_each(flags.len(), |row| texts.text(row).unwrap_or_default(), find)
             }
         })
     }

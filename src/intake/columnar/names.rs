@@ -1,28 +1,5 @@
 //! The few names that the rows of a column have, each looked up once and not once a row.
 
-/// Names by their places in a list, which holds each at least once and no other.
-pub(super) struct Names<'a> {
-    places: Vec<usize>,
-    list: Vec<&'a str>,
-}
-
-impl<'a> Names<'a> {
-    /// The place of a row's name; beyond the list if there is no such row.
-    #[inline(always)]
-    pub(super) fn place(&self, row: usize) -> usize {
-        self.places.get(row).copied().unwrap_or(usize::MAX)
-    }
-
-    /// The name at a place of the list.
-    pub(super) fn name(&self, place: usize) -> Option<&'a str> {
-        self.list.get(place).copied()
-    }
-
-    pub(super) fn list(&self) -> &[&'a str] {
-        &self.list
-    }
-}
-
 /// Slots for names that may come again, a power of two.
 const SLOTS: usize = 128;
 
@@ -59,41 +36,41 @@ impl Outline {
     }
 }
 
-/// Lists the names of rows as they are met. One that is driven out of its slot by another is listed again.
+/// What the name of each row stands for. It is found out again for a name that another drove out of its slot.
 #[inline(always)]
-pub(super) fn met<'a>(rows: usize, name: impl Fn(usize) -> &'a str) -> Names<'a> {
-    let mut slots = [(Outline::default(), usize::MAX); SLOTS];
-    let mut list: Vec<&str> = Vec::new();
-    let places = (0..rows).map(|row| {
+pub(super) fn of_each<'a, T: Copy>(
+    rows: usize,
+    name: impl Fn(usize) -> &'a str,
+    mut find: impl FnMut(&'a str) -> T,
+) -> Vec<T> {
+    let mut slots = [(Outline::default(), "", find("")); SLOTS];
+    let found = (0..rows).map(|row| {
         let name = name(row);
         let outline = Outline::of(name);
-        let (known, place) = &mut slots[outline.slot()];
-        let same = *known == outline
-            && list.get(*place).is_some_and(|listed| outline.length <= 16 || *listed == name);
-        if !same {
-            (*known, *place) = (outline, list.len());
-            list.push(name);
+        let slot = &mut slots[outline.slot()];
+        if slot.0 != outline || (outline.length > 16 && slot.1 != name) {
+            *slot = (outline, name, find(name));
         }
-        *place
+        slot.2
     });
-    let places = places.collect();
-    Names { places, list }
+    found.collect()
 }
 
-/// The same of names that come as places in a longer list, of which only those met are looked at.
-pub(super) fn met_coded<'a>(codes: &[usize], name: impl Fn(usize) -> &'a str) -> Names<'a> {
-    let mut slots = [(usize::MAX, usize::MAX); SLOTS];
-    let mut list: Vec<&str> = Vec::new();
-    let places = codes.iter().map(|&code| {
-        let (known, place) = &mut slots[code % SLOTS];
-        if *known != code {
-            (*known, *place) = (code, list.len());
-            list.push(name(code));
+/// The same of names that come as places in a list, of which only those met are looked at.
+pub(super) fn of_each_place<'a, T: Copy>(
+    places: &[usize],
+    name: impl Fn(usize) -> &'a str,
+    mut find: impl FnMut(&'a str) -> T,
+) -> Vec<T> {
+    let mut slots = [(usize::MAX, find("")); SLOTS];
+    let found = places.iter().map(|&place| {
+        let slot = &mut slots[place % SLOTS];
+        if slot.0 != place {
+            *slot = (place, find(name(place)));
         }
-        *place
+        slot.1
     });
-    let places = places.collect();
-    Names { places, list }
+    found.collect()
 }
 
 #[cfg(test)]
@@ -103,23 +80,18 @@ mod tests {
     #[test]
     fn every_row_has_its_own_name() {
         // Alike at both ends, one in the other, empty, and more than there are slots.
-        let mut rows: Vec<String> = (0..400).map(|i| format!("branch.of.the.river-{i:03}.lookup")).collect();
-        rows.extend(
+        let mut names: Vec<String> = (0..400).map(|i| format!("branch.of.the.river-{i:03}.lookup")).collect();
+        names.extend(
             ["", "a", "ab", "ba", "abc", "abcd", "abcde", "aaaa", "aaaaa", "a\0", "\0a"].map(Into::into),
         );
-        rows.extend((0..40).map(|length| "x".repeat(length)));
-        let order: Vec<&str> = (0..5_000).map(|i| rows[i * i % rows.len()].as_str()).collect();
-        let names = met(order.len(), |row| order[row]);
-        for (row, name) in order.iter().enumerate() {
-            assert_eq!(names.name(names.place(row)), Some(*name));
-        }
-        let few = met(1_000, |row| ["done", "gave_up"][row % 2]);
-        assert_eq!(few.list(), ["done", "gave_up"]);
-        assert_eq!(few.name(few.place(1_000)), None);
-        // By places in a longer list, more of them than there are slots.
-        let codes: Vec<usize> = (0..5_000).map(|i| i * i % 401).collect();
-        let coded = met_coded(&codes, |code| rows[code].as_str());
-        assert!((0..5_000).all(|row| coded.name(coded.place(row)) == Some(rows[codes[row]].as_str())));
-        assert_eq!(met_coded(&[7, 7, 9], |code| rows[code].as_str()).list(), [&rows[7], &rows[9]]);
+        names.extend((0..40).map(|length| "x".repeat(length)));
+        let places: Vec<usize> = (0..5_000).map(|i| i * i % names.len()).collect();
+        let order: Vec<&str> = places.iter().map(|&place| names[place].as_str()).collect();
+        assert_eq!(of_each(order.len(), |row| order[row], |name| name), order);
+        assert_eq!(of_each_place(&places, |place| &names[place], |name| name), order);
+        // Each of a few is looked up once.
+        let mut looked_up = Vec::new();
+        of_each(1_000, |row| ["done", "gave_up"][row % 2], |name| looked_up.push(name));
+        assert_eq!(looked_up, ["", "done", "gave_up"]);
     }
 }

@@ -2,7 +2,6 @@
 //! row, and how it is told, is found out in one place.
 
 use super::cells::Column;
-use super::names::Names;
 use crate::intake::Sink;
 use crate::intake::collect::Collector;
 use crate::intake::mapping::Mapping;
@@ -11,11 +10,13 @@ use crate::wait::{Ending, Wait};
 
 /// The columns of a part, if all are of fields and types that plain rows have.
 pub(super) struct Plain<'a> {
-    /// `None`: all rows are of one stream.
-    streams: Option<(&'a Column<'a>, Names<'a>)>,
+    /// The column and the place of each row's name in `names`; `None`: all rows are of one stream.
+    streams: Option<(&'a Column<'a>, Vec<u32>)>,
+    names: Vec<&'a str>,
     /// The streams that were entered: name and number, by the place of the name.
     entered: Vec<Option<(&'a str, usize)>>,
-    endings: Option<(&'a Column<'a>, Names<'a>, Vec<Option<Ending>>)>,
+    /// The column and what each row's text means.
+    endings: Option<(&'a Column<'a>, Vec<Option<Ending>>)>,
     elapsed: (&'a Column<'a>, &'a [f64]),
     /// Whether `elapsed` has no stated unit.
     bare: bool,
@@ -31,17 +32,22 @@ impl<'a> Plain<'a> {
     ) -> Option<Plain<'a>> {
         let (mut streams, mut endings, mut elapsed, mut at, mut attempts, mut ids) =
             (None, None, None, None, None, None);
+        let mut names = Vec::new();
         for column in columns {
             let place = match column.field {
                 Field::Stream if collector.one_stream().is_some() => continue,
                 Field::Stream => {
-                    streams = Some((column, column.names()?));
+                    let list = |name| {
+                        names.push(name);
+                        // A part has far fewer rows.
+                        u32::try_from(names.len() - 1).unwrap_or(u32::MAX)
+                    };
+                    streams = Some((column, column.names(list)?));
                     continue;
                 }
                 Field::Ending => {
-                    let names = column.names()?;
-                    let known = names.list().iter().map(|text| ending(text, collector.mapping())).collect();
-                    endings = Some((column, names, known));
+                    let mapping = collector.mapping();
+                    endings = Some((column, column.names(|text| ending(text, mapping))?));
                     continue;
                 }
                 Field::Id => {
@@ -57,7 +63,7 @@ impl<'a> Plain<'a> {
         }
         let number = |(column, (numbers, _))| (column, numbers);
         let entered = match &streams {
-            Some((_, names)) => vec![None; names.list().len()],
+            Some(_) => vec![None; names.len()],
             None => {
                 let name = collector.nameless()?;
                 vec![Some((name, collector.enter(name).ok()?))]
@@ -66,6 +72,7 @@ impl<'a> Plain<'a> {
         let (column, (ages, known_unit)) = elapsed?;
         Some(Plain {
             streams,
+            names,
             entered,
             endings,
             elapsed: (column, ages),
@@ -95,9 +102,7 @@ impl<'a> Plain<'a> {
         collector: &mut Collector<'_, S>,
     ) -> Option<(&'a str, usize, Wait)> {
         let ending = match &self.endings {
-            Some((column, names, known)) if !column.is_missing(row) => {
-                known.get(names.place(row)).copied().flatten()?
-            }
+            Some((column, known)) if !column.is_missing(row) => known.get(row).copied().flatten()?,
             _ => Ending::Done,
         };
         let value = |(column, numbers): (&Column<'_>, &[f64])| {
@@ -118,7 +123,7 @@ impl<'a> Plain<'a> {
         let place = match &self.streams {
             None => 0,
             Some((column, _)) if column.is_missing(row) => return None,
-            Some((_, names)) => names.place(row),
+            Some((_, places)) => *places.get(row)? as usize,
         };
         let (name, number) = match self.entered.get(place)? {
             Some(entered) => *entered,
@@ -129,8 +134,7 @@ impl<'a> Plain<'a> {
 
     #[cold]
     fn enter<S: Sink>(&mut self, place: usize, collector: &mut Collector<'_, S>) -> Option<(&'a str, usize)> {
-        let (_, names) = self.streams.as_ref()?;
-        let name = names.name(place).filter(|name| !name.is_empty())?;
+        let name = self.names.get(place).copied().filter(|name| !name.is_empty())?;
         let entered = (name, collector.enter(name).ok()?);
         *self.entered.get_mut(place)? = Some(entered);
         Some(entered)
