@@ -21,6 +21,10 @@ use parquet::arrow::arrow_reader::ParquetRecordBatchReaderBuilder;
 use parquet::basic::Compression;
 use parquet::file::properties::WriterProperties;
 
+#[cfg(feature = "postgres")]
+#[path = "../tests/support/postgres.rs"]
+mod server;
+
 const ROWS: usize = 200_000;
 
 /// Adds up, as the bare decodes do.
@@ -244,11 +248,77 @@ fn sqlite(criterion: &mut Criterion, folder: &Path) {
     group.finish();
 }
 
+/// A server with the rows in a table.
+#[cfg(feature = "postgres")]
+fn table() -> Option<server::Server> {
+    let Some(server) = server::Server::start() else {
+        println!("postgres: skipped, it is not installed (Debian's package postgresql)");
+        return None;
+    };
+    let mut client = server.client().unwrap();
+    client
+        .batch_execute("CREATE TABLE waits (stream text, elapsed float8, ending text, at timestamptz)")
+        .unwrap();
+    let mut into = client.copy_in("COPY waits FROM STDIN").unwrap();
+    for (stream, elapsed, ending, at) in (0..ROWS).map(row) {
+        let at = jiff::Timestamp::from_microsecond(at).unwrap();
+        let line = format!("{stream}\t{elapsed}\t{ending}\t{at}\n");
+        std::io::Write::write_all(&mut into, line.as_bytes()).unwrap();
+    }
+    into.finish().unwrap();
+    client.batch_execute("VACUUM ANALYZE waits").unwrap();
+    Some(server)
+}
+
+/// A server on loopback, which computes nothing. Each reading connects anew; bytes are those of the values.
+#[cfg(feature = "postgres")]
+fn postgres(criterion: &mut Criterion) {
+    use std::time::{SystemTime, UNIX_EPOCH};
+
+    use ::postgres::fallible_iterator::FallibleIterator;
+
+    // Started by the first that is asked to measure.
+    let server = std::cell::LazyCell::new(table);
+    let query = "SELECT stream, elapsed, ending, at FROM waits";
+    let mut group = criterion.benchmark_group("postgres");
+    let bytes: usize =
+        (0..ROWS).map(row).map(|(stream, _, ending, _)| stream.len() + ending.len() + 16).sum();
+    group.throughput(Throughput::Bytes(bytes as u64));
+    group.bench_function("postgres crate, bare", |b| {
+        let Some(server) = &*server else { return b.iter(|| ()) };
+        b.iter(|| {
+            let mut client = server.client().unwrap();
+            let rows = client.query_raw(query, [""; 0]).unwrap();
+            let add = |sum: f64, row: ::postgres::Row| {
+                let text = |i| row.get::<_, &str>(i).len() as f64;
+                let at = row.get::<_, SystemTime>(3).duration_since(UNIX_EPOCH).unwrap().as_secs_f64();
+                Ok(sum + text(0) + row.get::<_, f64>(1) + text(2) + at)
+            };
+            rows.fold(0.0, add).unwrap()
+        });
+    });
+    group.bench_function("1 thread, one more that asks", |b| {
+        let Some(server) = &*server else { return b.iter(|| ()) };
+        let address = format!("{}?sslmode=disable", server.address());
+        b.iter(|| {
+            let access = Access { password: Some(server::PASSWORD.into()), ..Access::default() };
+            ours(Source::query(Database::at(&address, access).unwrap(), query), &Options::default())
+        });
+    });
+    group.finish();
+}
+
+#[cfg(not(feature = "postgres"))]
+fn postgres(_: &mut Criterion) {
+    println!("postgres: skipped, it is not built in");
+}
+
 fn benches(criterion: &mut Criterion) {
     let folder = tempfile::tempdir().unwrap();
     lines(criterion);
     columns(criterion, folder.path());
     sqlite(criterion, folder.path());
+    postgres(criterion);
 }
 
 criterion_group! {

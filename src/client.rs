@@ -7,7 +7,7 @@ use std::str::FromStr;
 use std::sync::Arc;
 use std::time::Duration;
 
-use tokio_rustls::rustls::crypto;
+use tokio_rustls::rustls::{self, crypto};
 use ureq::Agent;
 use ureq::http::Uri;
 use ureq::http::header::{ACCEPT, AUTHORIZATION};
@@ -43,6 +43,21 @@ pub enum CallError {
         /// The status.
         status: u16,
     },
+}
+
+impl CallError {
+    /// Whether what answered shows a certificate that is not trusted.
+    pub fn is_distrust(&self) -> bool {
+        let CallError::Call(error) = self else { return false };
+        let refused = |error: &rustls::Error| matches!(error, rustls::Error::InvalidCertificate(_));
+        match &**error {
+            ureq::Error::Rustls(error) => refused(error),
+            ureq::Error::Io(error) => {
+                error.get_ref().and_then(|error| error.downcast_ref()).is_some_and(refused)
+            }
+            _ => false,
+        }
+    }
 }
 
 impl From<ureq::Error> for CallError {

@@ -172,3 +172,112 @@ fn a_file_of_another_writer() {
         kept.0.iter().map(|(stream, _, wait)| (stream.as_str(), wait.age())).collect();
     assert_eq!(ages, [("courier.slot", Age::Exact(1.5)), ("scan.job", Age::Exact(90.0))]);
 }
+
+/// Plain rows are taken by the column, all others by the field. Beside a column of a field that no plain row has, itself without
+/// a value, all are taken by the field: the same waits in the same order, the same rows refused for the same reasons.
+#[test]
+fn rows_taken_by_the_column_and_by_the_field_say_the_same() {
+    use arrow_array::types::Int32Type;
+    use arrow_array::{
+        ArrayRef, DictionaryArray, Float64Array, Int16Array, Int64Array, RecordBatch, StringArray,
+        TimestampMicrosecondArray,
+    };
+    // A row in 40 is odd in one of many ways, some in two.
+    let mut state = 7u64;
+    let mut draw = |below: usize| {
+        state = state.wrapping_mul(6_364_136_223_846_793_005).wrapping_add(1_442_695_040_888_963_407);
+        (state >> 33) as usize % below
+    };
+    let rows = 20_000;
+    let names: Vec<String> = (0..300).map(|i| format!("branch-of-the-library-{i:03}.lookup")).collect();
+    let odd_names = [None, Some(""), Some("two words"), Some("\u{e4}"), Some("x")];
+    let ages = [None, Some(0.0), Some(-1.0), Some(f64::NAN), Some(f64::INFINITY), Some(1e14), Some(1e-9)];
+    let endings = [Some("done"), Some("failed"), Some("gave_up"), Some("waiting"), None];
+    let odd_endings = [Some(""), Some("lost"), Some("DONE"), Some("done ")];
+    let times = [None, Some(-1), Some(i64::MAX), Some(i64::MIN), Some(0)];
+    let attempts = [None, Some(0), Some(-1), Some(1 << 40), Some(7)];
+    let (mut stream, mut elapsed, mut ending, mut at, mut attempt, mut id, mut status) =
+        (Vec::new(), Vec::new(), Vec::new(), Vec::new(), Vec::new(), Vec::new(), Vec::new());
+    for row in 0..rows {
+        let mut odd = || draw(80) == 0;
+        let (a, b, c, d, e) = (odd(), odd(), odd(), odd(), odd());
+        stream.push(if a { odd_names[draw(5)] } else { Some(names[draw(300)].as_str()) });
+        elapsed.push(if b { ages[draw(7)] } else { Some(0.5 + draw(10_000) as f64) });
+        ending.push(if c { odd_endings[draw(4)] } else { endings[draw(5)] });
+        at.push(if d { times[draw(5)] } else { Some(1_796_040_000_000_000 + 1_000 * row as i64) });
+        attempt.push(if e { attempts[draw(5)] } else { Some(1 + draw(2) as i64) });
+        id.push([None, Some("".to_owned()), Some(format!("r-{row}"))][draw(3)].clone());
+        status.push([Some(200i16), Some(499), Some(503), Some(-1), None][draw(5)]);
+    }
+    let folder = tempfile::tempdir().unwrap();
+    let told = |columns: &[(&str, ArrayRef)], name: &str, options: &Options| {
+        let batch = RecordBatch::try_from_iter(columns.iter().cloned()).unwrap();
+        let (arrow, parquet) = (folder.path().join(name), folder.path().join(format!("{name}.parquet")));
+        let file = std::fs::File::create(&arrow).unwrap();
+        let mut writer = arrow_ipc::writer::FileWriter::try_new(file, &batch.schema()).unwrap();
+        writer.write(&batch.slice(0, 15_000)).unwrap();
+        writer.write(&batch.slice(15_000, rows - 15_000)).unwrap();
+        writer.finish().unwrap();
+        let file = std::fs::File::create(&parquet).unwrap();
+        let mut writer = parquet::arrow::ArrowWriter::try_new(file, batch.schema(), None).unwrap();
+        writer.write(&batch).unwrap();
+        writer.close().unwrap();
+        [arrow, parquet].map(|path| {
+            let source = vec![Source::path(path)];
+            let (kept, report) = read(source, options, Kept::default(), &mut |_| ()).unwrap();
+            let bad: Vec<_> = report.bad.examples.iter().map(|bad| (bad.line, bad.to_string())).collect();
+            let bad: Vec<_> =
+                bad.iter().map(|(line, text)| (*line, text.split_once(": ").unwrap().1.to_owned())).collect();
+            (
+                kept.0,
+                bad,
+                report.bad.by_reason,
+                report.left_out,
+                report.suspicions,
+                report.oldest,
+                report.newest,
+            )
+        })
+    };
+    let endings: ArrayRef = Arc::new(StringArray::from(ending.clone()));
+    let coded: ArrayRef = Arc::new(ending.iter().copied().collect::<DictionaryArray<Int32Type>>());
+    let statuses: ArrayRef = Arc::new(Int16Array::from(status));
+    let streams: ArrayRef = Arc::new(StringArray::from(stream.clone()));
+    let coded_streams: ArrayRef = Arc::new(stream.iter().copied().collect::<DictionaryArray<Int32Type>>());
+    let mapping = Mapping::default().with_endings("499=gave_up,5??=failed,lost=failed,2??=done").unwrap();
+    let lenient = Options { bad_lines: Allowed::All, ..threads(1) };
+    let mapped = Options { mapping: Some(Arc::new(mapping)), ..lenient.clone() };
+    let window = Options { since: Some(1_796_040_003.0), until: Some(1_796_040_015.0), ..lenient.clone() };
+    let one = Options { one_stream: Some("all".into()), ..lenient.clone() };
+    let some =
+        Options { streams: Some(outwait::policy::Glob::new("branch*1?.lookup").unwrap()), ..lenient.clone() };
+    for (number, (stream, ending, options)) in [
+        (&streams, &endings, &lenient),
+        (&coded_streams, &coded, &lenient),
+        (&streams, &statuses, &mapped),
+        (&coded_streams, &endings, &mapped),
+        (&streams, &coded, &window),
+        (&streams, &endings, &one),
+        (&coded_streams, &coded, &some),
+    ]
+    .into_iter()
+    .enumerate()
+    {
+        let mut columns: Vec<(&str, ArrayRef)> = vec![
+            ("stream", Arc::clone(stream)),
+            ("elapsed_ms", Arc::new(Float64Array::from(elapsed.clone()))),
+            ("ending", Arc::clone(ending)),
+            ("at", Arc::new(TimestampMicrosecondArray::from(at.clone()))),
+            ("attempt", Arc::new(Int64Array::from(attempt.clone()))),
+            ("id", Arc::new(StringArray::from(id.clone()))),
+        ];
+        let by_column = told(&columns, &format!("{number}-a"), options);
+        columns.push(("entered", Arc::new(Float64Array::from(vec![None; rows]))));
+        let by_field = told(&columns, &format!("{number}-b"), options);
+        assert!(by_column[0].0.len() > 500 && by_column[0].1.len() > 5, "{number}");
+        for (one, other) in by_column.iter().zip(&by_field).chain([(&by_column[0], &by_column[1])]) {
+            assert_eq!(one.0.len(), other.0.len(), "{number}");
+            assert!(one == other, "{number}: {:?} {:?}", one.1, other.1);
+        }
+    }
+}

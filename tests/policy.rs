@@ -399,6 +399,46 @@ fn shipped_policies_are_faultless() {
     assert_snapshot!(said);
 }
 
+/// Logs to follow: what is read of an entry, and what is said of one that cannot be meant.
+#[test]
+fn logs_to_follow() {
+    let with = |follow: &str| {
+        format!("version: 1\nstreams: [{{match: a, aim: finish, pause: {{gave_up: 1s}}}}]\nfollow:\n{follow}")
+    };
+    let policy = parse(
+        &with(
+            "  - {file: waits.ndjson, as: desk.north}\n  - {file: access.log, pattern: '(?<elapsed_ms>\\d+) (?<ending>\\d+)', ending_of: '*=done'}\n",
+        ),
+        "p",
+    )
+    .unwrap();
+    let [one, two] = &policy.followed[..] else { panic!("{policy:?}") };
+    assert_eq!(
+        (one.path.to_str(), one.options.one_stream.as_deref()),
+        (Some("waits.ndjson"), Some("desk.north"))
+    );
+    assert!(one.options.pattern.is_none() && two.options.pattern.is_some() && two.options.mapping.is_some());
+    let said = describe(&policy, &[]).to_string();
+    assert!(
+        said.contains("The log waits.ndjson is followed. All of its waits are of the stream `desk.north`."),
+        "{said}"
+    );
+    for (follow, told) in [
+        ("  - {file: a, patern: x}", "p:4:15: follow: `patern` is not a key here\n  did you mean `pattern`?"),
+        ("  - {pattern: x}", "`file` is missing"),
+        ("  - {file: a}\n  - {file: a}", "p:5:5: follow.file: `a` stands there already"),
+        ("  - {file: a, pattern: '(x'}", "p:4:"),
+        ("  - {file: a, pattern: '(?<stream>x)'}", "no capture tells how long the wait was"),
+        ("  - {file: a, columns: 'took=x'}", "\"took\" is not a field"),
+        ("  - {file: a, as: 'two words'}", "the stream name holds ' '"),
+        ("  - {file: a, input: parquet}", "wanted: ndjson, csv, journal or pattern"),
+        ("  a", "a list of entries"),
+    ] {
+        let error = parse(&with(follow), "p").unwrap_err().to_string();
+        assert!(error.contains(told), "{follow}:\n{error}");
+    }
+}
+
 /// The reference names every key, and above one occurrence of it says what the table of keys says.
 #[test]
 fn the_reference_names_every_key() {
@@ -438,6 +478,10 @@ fn every_key_is_read() {
                 let url = if key.name == "url" { "" } else { "url: 'http://a/', " };
                 format!("version: 1\nstreams: [{{match: a}}]\nscrape: [{{{url}{}: '%'}}]\n", key.name)
             }
+            Section::Follow => {
+                let file = if key.name == "file" { "" } else { "file: a, " };
+                format!("version: 1\nstreams: [{{match: a}}]\nfollow: [{{{file}{}: '%'}}]\n", key.name)
+            }
             section @ (Section::Weekly | Section::Telemetry) => {
                 let path = section.path();
                 format!("version: 1\nstreams: [{{match: a}}]\n{path}: {{{}: '%'}}\n", key.name)
@@ -464,6 +508,13 @@ fn every_example_is_fit() {
             Section::Scrape => {
                 let url = if name == "url" { "" } else { "url: 'http://a/', " };
                 read(&format!("version: 1\nstreams: [{{match: a}}]\nscrape: [{{{url}{name}: {example}}}]\n"));
+                continue;
+            }
+            Section::Follow => {
+                let file = if name == "file" { "" } else { "file: a, " };
+                read(&format!(
+                    "version: 1\nstreams: [{{match: a}}]\nfollow: [{{{file}{name}: {example}}}]\n"
+                ));
                 continue;
             }
             section @ (Section::Weekly | Section::Telemetry) => {

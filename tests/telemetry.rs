@@ -4,6 +4,8 @@
 //! wrote, the standard's data model for exponential buckets. The SDK of another language sends in `tests/daemon`.
 #![allow(clippy::unwrap_used, clippy::panic)] // a test may fail
 
+#[path = "support/clients.rs"]
+mod clients;
 #[path = "support/otlp.rs"]
 mod otlp;
 
@@ -483,6 +485,19 @@ fn scraped(texts: &[&str]) -> (Vec<(String, Wait)>, Report) {
     took(bodies, &options(Some(Format::MetricsText)))
 }
 
+/// The parsers of `prometheus_client` read the same counts of a page, if it is there.
+fn by_library(page: &str, expected: &[(f64, f64, u64)]) {
+    let Some(read) = clients::buckets_by_library(page) else { return };
+    let (mut counts, mut last) = (Vec::new(), (0.0, 0.0));
+    for (bound, count) in read {
+        if count > last.1 {
+            counts.push((last.0, bound, (count - last.1) as u64));
+        }
+        last = (bound, count);
+    }
+    assert_eq!(counts, expected);
+}
+
 #[test]
 fn the_text_formats_own_histogram() {
     let (waits, report) = took(vec![TEXT.into()], &options(None));
@@ -506,6 +521,7 @@ fn the_text_formats_own_histogram() {
         prometheus_parse::Value::Histogram(counts) => Some(counts),
         _ => None,
     });
+    by_library(TEXT, &expected);
     let mut sum = 0;
     for (count, (_, upto, more)) in histogram.unwrap().iter().zip(expected) {
         sum += more;
@@ -527,6 +543,7 @@ fn the_histogram_of_open_metrics() {
     let (waits, report) = took(vec![text.into()], &options(None));
     assert_eq!(report.bad.count, 0, "{:?}", report.bad);
     assert_eq!(buckets(&waits), [(0.01, 0.1, 8), (0.1, 1.0, 3), (1.0, 10.0, 6)]);
+    by_library(text, &buckets(&waits));
     assert!(waits.iter().all(|(_, wait)| wait.at() == Some(1_520_879_607.5)));
 }
 

@@ -93,7 +93,7 @@ pub struct Subject {
     /// First attempts in the window, where they are a queue's, with the first and last time of all waits.
     queue: Option<Cells>,
     seen: Option<(f64, f64)>,
-    /// Everything that its days show.
+    /// Everything that its days, and whoever read its waits, show.
     cautions: Vec<Caution>,
     /// Days with waits, and how many.
     counts: Vec<(i32, u64)>,
@@ -114,7 +114,7 @@ impl Subject {
         let tally = days.since(opening);
         let cells = tally.first_attempts();
         let rule = Rule::of(entry.now, &cells.gave_up);
-        let yardstick = Yardstick::new(believed, &advice.advice, &entry, &cells);
+        let yardstick = Yardstick::new(believed, &advice.advice, &entry, &entry.whole(&cells));
         let timer = rule.is_some_and(|r| r.is_timer());
         Subject {
             yardstick,
@@ -127,6 +127,11 @@ impl Subject {
             entry,
             rule,
         }
+    }
+
+    /// Adds to what is to be minded of its waits.
+    pub fn warn(&mut self, caution: Caution) {
+        self.cautions.push(caution);
     }
 
     /// What is advised.
@@ -346,6 +351,18 @@ fn cautions(subject: &Subject, open: &OpenCounts, endless: u64) -> Vec<Caution> 
             "letting go of a wait does not stop the work behind it, and trying again does it twice; the policy does not say \
              that it may be repeated",
             "let go only of what is idempotent or was cancelled for certain; then say `repeatable: true`",
+        ));
+    }
+    // A wait that was put back is nobody's: it can shape the yardstick, and not be held against it.
+    if let Some(every) = subject.entry.sampled_every {
+        found.push(caution(
+            "sampled",
+            format!(
+                "the advice counts what a sampler that asks every {} did not ask while it waited; the sums here hold the \
+                 waits that were made and no others, so slow stretches are in them too rarely",
+                say::duration(every)
+            ),
+            "read the sums as those of the sampler; whoever asks without waiting meets each slow stretch more often",
         ));
     }
     if endless > 0 {

@@ -14,7 +14,7 @@ use super::pictures::{Album, Pictures};
 use super::{reading, text};
 use crate::chart::{self, Bar, Role, Section, quantity};
 use crate::intake::{Record, Sink};
-use crate::replay::{ADVICE, IN_FORCE, Log, ReplaySet, Roll, RuleReplay, StreamReplay};
+use crate::replay::{ADVICE, IN_FORCE, Log, Note, ReplaySet, Roll, RuleReplay, StreamReplay};
 use crate::say;
 use crate::tally::Day;
 
@@ -78,7 +78,15 @@ impl Replay {
         });
         let roll = Roll { policy: policy.as_ref(), newest, seed: self.common.seed };
         let names = log.names();
-        let streams = names.par_iter().map(|stream| roll.stream(&log, stream)).collect();
+        let replayed = |stream: &&str| {
+            let mut replay = roll.stream(&log, stream);
+            let found = report.closed_loops.iter().find(|found| found.stream == **stream);
+            let caution =
+                found.and_then(|found| roll.terms(None).closed_loop(stream, found.every, found.longest));
+            replay.notes.extend(caution.map(Note::of));
+            replay
+        };
+        let streams = names.par_iter().map(replayed).collect();
         let set = roll.set(&log, streams);
         if let Some(album) = self.pictures.open(set.streams.len())? {
             draw(&album, &set)?;

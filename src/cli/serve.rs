@@ -112,7 +112,7 @@ pub(super) struct Serve {
     /// File that holds the secret by which they are signed (HMAC-SHA256)
     #[arg(long, value_name = "FILE", requires = "webhook")]
     webhook_secret: Option<PathBuf>,
-    /// A log to follow over rotations and restarts; may be given more than once
+    /// A log to follow over rotations and restarts; may be given more than once; `follow:` in the policy names more
     #[arg(long, value_name = "FILE")]
     follow: Vec<PathBuf>,
     #[command(flatten)]

@@ -112,7 +112,7 @@ fn advise(
             let section = album.as_ref().map(draw).transpose()?;
             let mut advice = study.into_advice();
             if let Some(found) = report.closed_loops.iter().find(|found| found.stream == **stream) {
-                terms.warn_of_closed_loop(&mut advice, found.every, found.longest);
+                advice.cautions.extend(terms.closed_loop(stream, found.every, found.longest));
             }
             Ok((advice, section))
         })

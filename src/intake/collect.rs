@@ -14,6 +14,7 @@ use super::streams::Streams;
 use super::{Options, Sink};
 use crate::glob::Glob;
 use crate::running::Running;
+use crate::wait::StreamError;
 
 /// What a block leaves behind once its waits are in the sink.
 #[derive(Debug)]
@@ -165,7 +166,8 @@ impl<'w, S: Sink> Collector<'w, S> {
 
     /// A reading of a histogram that only grows.
     pub(super) fn running(&mut self, line: u64, running: Running) -> Result<(), Flaw> {
-        let (_, stream) = self.streams.enter(&running.stream, self.options.streams.as_ref())?;
+        let place = self.enter(&running.stream)?;
+        let stream = self.streams.at(place);
         if let Some(at) = running.at {
             stream.note_time(at);
         }
@@ -198,7 +200,8 @@ impl<'w, S: Sink> Collector<'w, S> {
         match make(fields, self.nameless(), self.one_stream().is_some())? {
             Made::Whole(record) => self.whole(record, fields.is_bare()),
             Made::Half(half) => {
-                let (_, stream) = self.streams.enter(half.stream, self.options.streams.as_ref())?;
+                let place = self.enter(half.stream)?;
+                let stream = self.streams.at(place);
                 stream.note_time(half.time);
                 if !stream.wanted {
                     self.outcome.other_streams += 1;
@@ -215,8 +218,21 @@ impl<'w, S: Sink> Collector<'w, S> {
     /// Takes a wait. `bare`: its age came as a number without a unit.
     #[inline(always)]
     pub(super) fn whole(&mut self, record: Record<'_>, bare: bool) -> Result<(), Flaw> {
+        let place = self.enter(record.stream)?;
+        self.entered(Record { place, ..record }, bare)
+    }
+
+    /// The number of a stream, whose name is checked when first met.
+    #[inline]
+    pub(super) fn enter(&mut self, stream: &str) -> Result<usize, StreamError> {
+        self.streams.enter(stream, self.options.streams.as_ref())
+    }
+
+    /// Takes a wait of a stream that was entered.
+    #[inline(always)]
+    pub(super) fn entered(&mut self, record: Record<'_>, bare: bool) -> Result<(), Flaw> {
         let block = self.streams.block();
-        let (place, stream) = self.streams.enter(record.stream, self.options.streams.as_ref())?;
+        let stream = self.streams.at(record.place);
         if let Some(at) = record.wait.at() {
             stream.note_time(at);
         }
@@ -232,7 +248,7 @@ impl<'w, S: Sink> Collector<'w, S> {
         if bare {
             stream.note_age(&record.wait);
         }
-        self.sink.take(&Record { place, ..record });
+        self.sink.take(&record);
         self.outcome.waits += 1;
         Ok(())
     }

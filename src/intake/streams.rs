@@ -56,21 +56,23 @@ impl Ages {
 }
 
 impl Streams {
-    /// The stream of that name, checked when first met, and its number.
+    /// The number of the stream of that name, which is checked when first met.
     #[inline]
-    pub(super) fn enter(
-        &mut self,
-        name: &str,
-        selector: Option<&Glob>,
-    ) -> Result<(usize, &mut Stream), StreamError> {
-        let place = match self.find(name) {
-            Some(place) => place,
+    pub(super) fn enter(&mut self, name: &str, selector: Option<&Glob>) -> Result<usize, StreamError> {
+        match self.find(name) {
+            Some(place) => Ok(place),
             None => {
                 check_stream(name)?;
-                self.add(name.into(), Stream::new(selector.is_none_or(|selector| selector.matches(name))))
+                let wanted = selector.is_none_or(|selector| selector.matches(name));
+                Ok(self.add(name.into(), Stream::new(wanted)))
             }
-        };
-        Ok((place, &mut self.streams[place]))
+        }
+    }
+
+    /// A stream that was entered.
+    #[inline]
+    pub(super) fn at(&mut self, place: usize) -> &mut Stream {
+        &mut self.streams[place]
     }
 
     #[inline]
@@ -245,7 +247,8 @@ mod tests {
     fn suspicion(waits: impl Iterator<Item = (f64, f64)>) -> Option<Because> {
         let mut streams = Streams::default();
         for (age, at) in waits {
-            let (_, stream) = streams.enter("s", None).unwrap();
+            let place = streams.enter("s", None).unwrap();
+            let stream = streams.at(place);
             stream.note_time(at);
             stream.note_age(&Wait::new(age, Ending::Done).unwrap());
         }

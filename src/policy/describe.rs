@@ -4,7 +4,7 @@ use super::entry::{
     Entry, GiveUp, Guard, Jitter, Kind, NO_COST_OF_TIME, Policy, Retry, Sticky, Weekly, aim_name,
 };
 use super::finding::Warning;
-use super::{scrape, telemetry};
+use super::{follow, scrape, telemetry};
 use crate::intake::Rules;
 use crate::say;
 use crate::stopping::{Aim, Fade, Worth};
@@ -129,6 +129,7 @@ fn notes(policy: &Policy, streams: &[&str], subjects: &[Subject]) -> Vec<String>
     let mut notes: Vec<String> = policy.weekly.iter().map(Weekly::words).collect();
     notes.extend(telemetry::sentences(&policy.telemetry, &Rules::default(), "spans and histograms"));
     notes.extend(policy.scrapes.iter().map(scrape::sentence));
+    notes.extend(policy.followed.iter().map(follow::sentence));
     if !streams.is_empty() {
         let used: HashSet<usize> = subjects.iter().filter_map(|s| s.entry).collect();
         for entry in policy.entries.iter().filter(|e| !used.contains(&e.number)) {

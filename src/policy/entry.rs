@@ -5,7 +5,7 @@ use super::keys::{
     DEFAULT_LARGEST_STEP, DEFAULT_SLACK, DEFAULT_WINDOW,
 };
 use super::{Glob, Warning};
-use crate::intake::Rules;
+use crate::intake::{Options, Rules};
 use crate::stopping::{Aim, Worth};
 use serde::de::Error as _;
 use serde::{Deserialize, Deserializer, Serialize, Serializer};
@@ -28,6 +28,8 @@ pub struct Policy {
     pub telemetry: Rules,
     /// Pages of metrics that the daemon reads.
     pub scrapes: Vec<Scrape>,
+    /// Logs that the daemon follows.
+    pub followed: Vec<Followed>,
     /// What its writer may not have meant, in the order of the lines.
     pub warnings: Vec<Warning>,
 }
@@ -38,6 +40,15 @@ impl Policy {
     pub fn entry_for(&self, stream: &str) -> Option<(&Entry, usize)> {
         self.entries.iter().enumerate().find(|(_, e)| e.matches.matches(stream)).map(|(i, e)| (e, i))
     }
+}
+
+/// A log that the daemon follows, and how its lines become records.
+#[derive(Clone, Debug, PartialEq)]
+pub struct Followed {
+    /// The file's name, under which it is looked for again after each rotation.
+    pub path: PathBuf,
+    /// Format, pattern, mapping and stream; what else stands here is not looked at.
+    pub options: Options,
 }
 
 /// A page of metrics that the daemon reads on a schedule.

@@ -341,6 +341,9 @@ pub enum Flaw {
         /// The value, cut to 60 characters.
         value: String,
     },
+    /// What the reader of logs says against it.
+    #[error("{0}")]
+    Log(String),
     /// A rule that cannot be read.
     #[error("`{value}` {error}")]
     Rule {

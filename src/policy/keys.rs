@@ -15,6 +15,8 @@ pub const MAX_ENTRIES: usize = 20_000;
 pub const MAX_CALLS: usize = 100;
 /// Most pages that the daemon may be told to read.
 pub const MAX_SCRAPES: usize = 1_000;
+/// Most logs that the daemon may be told to follow; each takes a thread.
+pub const MAX_FOLLOWED: usize = 100;
 /// How often a page is read unless said; s, 1 to a day.
 pub const DEFAULT_EVERY: f64 = 60.0;
 /// How long each step of a reading may take unless said; s, above 0 to 300.
@@ -70,6 +72,8 @@ pub enum Section {
     Telemetry,
     /// One entry under `scrape`.
     Scrape,
+    /// One entry under `follow`.
+    Follow,
 }
 
 impl Section {
@@ -86,6 +90,7 @@ impl Section {
             Section::Weekly => "weekly",
             Section::Telemetry => "telemetry",
             Section::Scrape => "scrape",
+            Section::Follow => "follow",
         }
     }
 
@@ -270,6 +275,23 @@ keys! {
         "When it has failed.";
     SCRAPE_DONE: Scrape "done", "a list of label=pattern, with * for any run of characters and ? for one", "[\"code=404\"]", "none; all else is taken so",
         "When it is done, although it looks otherwise.";
+
+    FOLLOW: File "follow", "a list of entries, at most 100", "[{file: /var/log/waits.ndjson}]", "none",
+        "Logs that the daemon follows over rotations and restarts, as those named with --follow.";
+    FOLLOW_FILE: Follow "file", "a name of a file", "/var/log/waits.ndjson", "none, it must be given",
+        "The log.";
+    FOLLOW_INPUT: Follow "input", "ndjson, csv, journal or pattern", "ndjson", "found out by its first lines",
+        "Its format.";
+    FOLLOW_AS: Follow "as", "a stream name", "catalogue.lookup", "none, each record names its stream",
+        "One stream for all of its waits, whatever the records call theirs.";
+    FOLLOW_PATTERN: Follow "pattern", "a regular expression with captures named after fields", "'^(?<stream>\\S+) (?<elapsed_ms>\\d+)$'", "none, its lines are records",
+        "How a line becomes a record.";
+    FOLLOW_COLUMNS: Follow "columns", "a text of FIELD=COLUMN or FIELD=COLUMN:UNIT, with commas between", "\"elapsed=duration_ms:ms,at=ts\"", "none, names are those of fields",
+        "Which column or key holds which field.";
+    FOLLOW_ENDING_OF: Follow "ending_of", "a text of GLOB=ENDING, with commas between", "\"499=gave_up,5??=failed,*=done\"", "none, endings are called done, failed, gave_up and waiting",
+        "Which ending a status stands for; the first that matches counts.";
+    FOLLOW_TIME_FORMAT: Follow "time_format", "a day and a time of day in the letters of strftime", "\"%d/%b/%Y:%H:%M:%S %z\"", "RFC 3339 or Unix seconds",
+        "How times in words are written.";
 }
 
 /// Stands for the file where its keys should be and are not.
@@ -290,6 +312,16 @@ pub(super) static PAGE: Key = Key {
     example: "[{url: \"http://127.0.0.1:9100/metrics\"}]",
     default: "none",
     about: "A page of metrics.",
+};
+
+/// Stands for a log where its keys should be and are not.
+pub(super) static LOG: Key = Key {
+    section: Section::File,
+    name: "follow",
+    takes: "a map of keys, `file` among them",
+    example: "[{file: /var/log/waits.ndjson}]",
+    default: "none",
+    about: "A log.",
 };
 
 /// Stands for an entry where its keys should be and are not.

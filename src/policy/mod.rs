@@ -17,6 +17,7 @@ mod check;
 mod describe;
 mod entry;
 mod finding;
+mod follow;
 mod keys;
 mod read;
 pub(crate) mod scalar;
@@ -28,14 +29,15 @@ pub(crate) mod tree;
 pub use crate::glob::{Glob, GlobError};
 pub use describe::{Description, Endings, Settings, Subject, describe};
 pub use entry::{
-    Backoff, Entry, GiveUp, Guard, Jitter, Kind, NO_COST_OF_TIME, Policy, Retry, Scrape, Sticky, Weekly,
+    Backoff, Entry, Followed, GiveUp, Guard, Jitter, Kind, NO_COST_OF_TIME, Policy, Retry, Scrape, Sticky,
+    Weekly,
 };
 pub(crate) use finding::shown;
 pub use finding::{Concern, Fault, Finding, Flaw, Place, PolicyError, Problem, Remedy, Slip, Warning};
 pub use keys::{
     DEFAULT_BACKOFF_FACTOR, DEFAULT_COOL_DOWN, DEFAULT_DEADLINE_ATTEMPTS, DEFAULT_EVERY, DEFAULT_EVIDENCE,
     DEFAULT_HYSTERESIS, DEFAULT_KIND, DEFAULT_LARGEST_STEP, DEFAULT_SLACK, DEFAULT_TIMEOUT, DEFAULT_WINDOW,
-    KEYS, Key, MAX_ATTEMPTS, MAX_BYTES, MAX_CALLS, MAX_DEPTH, MAX_ENTRIES, MAX_PROBLEMS, MAX_SCRAPES,
-    MAX_VALUES, MAX_WORTH, Section,
+    KEYS, Key, MAX_ATTEMPTS, MAX_BYTES, MAX_CALLS, MAX_DEPTH, MAX_ENTRIES, MAX_FOLLOWED, MAX_PROBLEMS,
+    MAX_SCRAPES, MAX_VALUES, MAX_WORTH, Section,
 };
 pub use schema::{parse, parse_bytes};

@@ -98,10 +98,10 @@ impl Reader {
         let what = Fault::UnknownKey {
             key: shown(&pair.key),
             section,
-            // Keys of a page of metrics have common names; who writes one elsewhere does not mean a page.
+            // Keys of a page or a log have common names; who writes one elsewhere does not mean these.
             home: KEYS
                 .iter()
-                .find(|key| key.name == pair.key && key.section != Section::Scrape)
+                .find(|key| key.name == pair.key && !matches!(key.section, Section::Scrape | Section::Follow))
                 .map(|key| key.section),
             nearest: searched.then(|| nearest(&pair.key, section.keys().map(|key| key.name))).flatten(),
         };

@@ -4,6 +4,7 @@ use super::finding::{Flaw, shown};
 use super::{GiveUp, Sticky};
 use crate::say;
 use crate::wait::MAX_AGE;
+use std::path::PathBuf;
 
 /// A duration with its unit, s; 0 needs none. Its range is the caller's to judge with [`within`].
 pub(super) fn duration(text: &str) -> Result<f64, Flaw> {
@@ -35,6 +36,14 @@ pub(super) fn time_zone(text: &str) -> Result<String, Flaw> {
     let name = text.trim();
     let known = name == "UTC" || jiff::tz::TimeZoneDatabase::bundled().get(name).is_ok();
     if known { Ok(name.to_owned()) } else { Err(unreadable(text)) }
+}
+
+/// A name of a file.
+pub(super) fn file_name(text: &str) -> Result<PathBuf, Flaw> {
+    // A name that cannot be one of a file that somebody made for this.
+    let name = text.trim();
+    let fits = !name.is_empty() && name.len() <= 4_096 && !name.contains(['\0', '\n', '%']);
+    if fits { Ok(name.into()) } else { Err(unreadable(text)) }
 }
 
 /// A number between two bounds, both included.

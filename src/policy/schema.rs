@@ -57,8 +57,9 @@ impl Reader {
         let weekly = self.weekly(&file);
         let telemetry = self.telemetry(&file);
         let scrapes = self.scrapes(&file);
+        let followed = self.followed(&file);
         let (version, entries) = (version?, entries?);
-        Some(Policy { version, entries, weekly, telemetry, scrapes, warnings: Vec::new() })
+        Some(Policy { version, entries, weekly, telemetry, scrapes, followed, warnings: Vec::new() })
     }
 
     fn weekly(&mut self, file: &Fields<'_>) -> Option<Weekly> {

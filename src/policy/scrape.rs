@@ -4,7 +4,7 @@ use super::entry::Scrape;
 use super::finding::{Fault, Flaw, shown};
 use super::keys::{self, DEFAULT_EVERY, DEFAULT_TIMEOUT, MAX_SCRAPES, Section};
 use super::read::{Fields, Reader};
-use super::scalar::{choice, span, within};
+use super::scalar::{choice, file_name, span, within};
 use super::schema::set;
 use super::telemetry::{self, template};
 use super::tree::Node;
@@ -67,13 +67,6 @@ fn url(text: &str) -> Result<String, Flaw> {
             && uri.authority().is_some_and(|authority| !authority.as_str().contains('@'))
     });
     if fits { Ok(text.trim().to_owned()) } else { Err(Flaw::Unreadable { value: shown(text) }) }
-}
-
-fn file_name(text: &str) -> Result<std::path::PathBuf, Flaw> {
-    // A name that cannot be one of a file that somebody made for this.
-    let name = text.trim();
-    let fits = !name.is_empty() && name.len() <= 4_096 && !name.contains(['\0', '\n', '%']);
-    if fits { Ok(name.into()) } else { Err(Flaw::Unreadable { value: shown(text) }) }
 }
 
 /// What is read there, in a sentence or more.

@@ -3,6 +3,8 @@
 
 use serde::{Deserialize, Serialize};
 
+use crate::advice::Caution;
+
 /// Version of the JSON form.
 pub const SCHEMA: &str = "outwait/replay/1";
 
@@ -88,6 +90,13 @@ pub struct Note {
     pub code: String,
     /// What is the matter.
     pub text: String,
+}
+
+impl Note {
+    /// A caution as a note.
+    pub(crate) fn of(caution: Caution) -> Note {
+        Note { code: caution.code, text: format!("{}; {}", caution.text, caution.remedy) }
+    }
 }
 
 /// Name of our rule.

@@ -52,7 +52,8 @@ enum Contender {
 impl Contender {
     /// Ours, the time in force, and the rules in common use.
     fn all(entry: &Entry, aim: Aim) -> Vec<Contender> {
-        let timer = !matches!(aim, Aim::Deadline { .. });
+        // It moves with every wait, so what a sampler did not ask cannot be put back into what it did.
+        let timer = !matches!(aim, Aim::Deadline { .. }) && entry.sampled_every.is_none();
         let rules = [Rule::Percentile(0.95), Rule::Percentile(0.99), Rule::TimesMean(3.0)];
         std::iter::once(Contender::Advice)
             .chain(entry.now.map(Contender::InForce))
@@ -153,6 +154,14 @@ impl Roll<'_> {
             .filter_map(|&period| self.fold(stream, &entry, &contenders, days, timed, calendar, period))
             .collect();
         replay.notes = notes(course, &periods, &folds, aim, calendar);
+        if entry.sampled_every.is_some() && !matches!(aim, Aim::Deadline { .. }) {
+            replay.notes.push(Note {
+                code: "sampler".to_owned(),
+                text: "what the sampler did not ask is put back into every week; RFC 6298 is left out, since it moves with \
+                       every wait and nobody knows how with those that were never made"
+                    .to_owned(),
+            });
+        }
         if folds.is_empty() {
             replay.finding = words::nothing(periods.len(), calendar.dated);
             return replay;
@@ -163,7 +172,8 @@ impl Roll<'_> {
         replay
     }
 
-    fn terms(&self, newest: Option<i32>) -> Terms<'_> {
+    /// What the replay of a stream is held to.
+    pub(crate) fn terms(&self, newest: Option<i32>) -> Terms<'_> {
         Terms { policy: self.policy, newest, seed: self.seed, past: None }
     }
 
@@ -186,7 +196,8 @@ impl Roll<'_> {
         };
         let learning = days.where_day(|day| matches!(day, Day::Number(n) if opening <= n && n < first));
         let within = |day: Day| calendar.period(day) == Some(period);
-        let whole = days.where_day(within).first_attempts().before_gap(ENOUGH);
+        let taken = days.where_day(within).first_attempts();
+        let whole = entry.whole(&taken).into_owned().before_gap(ENOUGH);
         let steps = Steps::of(&whole).ok().filter(|steps| !steps.steps.is_empty() && over(&whole) > 0.0)?;
         let lesson = Lesson::of(stream, entry, &learning, self.seed)?;
         let ceiling = lesson.ceiling;
@@ -227,6 +238,7 @@ impl Roll<'_> {
             })
             .collect();
         let each: Vec<Cells> = each.into_iter().map(|(_, cells)| cells).collect();
+        let (days_over, over) = (each.iter().map(over).collect(), over(&taken.clone().before_gap(ENOUGH)));
         let waits = whole.total();
         Some(Fold {
             period: Period {
@@ -236,13 +248,13 @@ impl Roll<'_> {
                 learnt_from: learning.first_attempts().total() as u64,
                 advised: lesson.advice.is_some(),
             },
-            over: over(&whole),
+            over,
             prices,
             ceiling,
             times,
             did,
-            days: each.iter().map(over).collect(),
-            sheet: Sheet::of(&each, &whole, steps.last, false),
+            days: days_over,
+            sheet: Sheet::of(&entry.whole_parts(&taken, each), &whole, steps.last, false),
             timed: timed_steps.map(|steps| Sheet::of(&timed_each, &timed_whole, steps.last, true)),
         })
     }
@@ -396,7 +408,7 @@ struct Lesson {
 
 impl Lesson {
     fn of(stream: &str, entry: &Entry, learning: &crate::tally::Tally, seed: u64) -> Option<Lesson> {
-        let cells = learning.first_attempts().before_gap(ENOUGH);
+        let cells = entry.whole(&learning.first_attempts()).into_owned().before_gap(ENOUGH);
         let table = LifeTable::of(&cells).ok().filter(|table| !table.rows().is_empty())?;
         let advice = advise::advise(&Case::new(stream, learning), entry, seed ^ name_hash(stream)).advice;
         let ceiling = advice.ceiling_s.unwrap_or(CEILING * table.last());

@@ -8,10 +8,10 @@ use std::time::{Duration, SystemTime};
 
 use subtle::ConstantTimeEq;
 
-use super::follow::Followed;
 use super::reload::PolicyFile;
 use super::weekly::Runs;
 use crate::ledger;
+use crate::policy::Followed;
 
 /// Unix seconds of now.
 pub type Clock = Arc<dyn Fn() -> f64 + Send + Sync>;

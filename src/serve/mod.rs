@@ -38,8 +38,8 @@ use std::sync::Arc;
 
 use tokio::net::TcpListener;
 
+pub use crate::policy::Followed;
 pub use config::{Clock, Config, Limits, SecretError, Signing, Token, read_token};
-pub use follow::Followed;
 pub use http::OPENAPI;
 pub use reload::{PolicyFile, ReloadError};
 pub use tls::{TlsError, read_certificates, read_tls};
@@ -105,9 +105,10 @@ impl Daemon {
         threads.push(scrape::start(Arc::clone(&shared)).map_err(refused("a thread"))?);
         threads.push(weekly::start(Arc::clone(&shared)).map_err(refused("a thread"))?);
         for followed in &shared.config.follow {
-            let follower = follow::start(followed.clone(), Arc::clone(&shared));
+            let follower = follow::start(followed.clone(), Arc::clone(&shared), Arc::default());
             threads.push(follower.map_err(refused("a thread"))?);
         }
+        threads.push(follow::follow_policy(Arc::clone(&shared)).map_err(refused("a thread"))?);
         shared.desk.at_once(shared.streams());
         Ok(Daemon { shared, threads, keeper })
     }

@@ -43,11 +43,19 @@ enum ScrapeError {
     )]
     Header { path: String },
     #[error(transparent)]
-    Call(#[from] CallError),
+    Call(CallError),
+    #[error("{0}; name the file of the certificates to trust in the page's `trust`")]
+    Distrust(CallError),
     #[error(transparent)]
     Count(#[from] CountError),
     #[error("the ledger does not take it: {0}")]
     Refused(String),
+}
+
+impl From<CallError> for ScrapeError {
+    fn from(error: CallError) -> ScrapeError {
+        if error.is_distrust() { ScrapeError::Distrust(error) } else { ScrapeError::Call(error) }
+    }
 }
 
 /// Starts the thread.

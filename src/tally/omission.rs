@@ -22,6 +22,25 @@ impl Cells {
     /// that together they weigh what the samples taken weigh: those put back are no evidence of their own, since one
     /// stall made them all.
     pub(crate) fn with_omitted(&self, every: f64) -> Cells {
+        let mut whole = self.put_back(every);
+        whole.scale(self.total() / whole.total());
+        whole
+    }
+
+    /// Parts of these samples likewise, all brought down alike, so that together they are about what
+    /// [`Cells::with_omitted`] makes of the whole: a part with a stall weighs more than it did, the others less.
+    pub(crate) fn parts_with_omitted(&self, parts: &[Cells], every: f64) -> Vec<Cells> {
+        let share = self.total() / self.put_back(every).total();
+        let part = |part: &Cells| {
+            let mut whole = part.put_back(every);
+            whole.scale(share);
+            whole
+        };
+        parts.iter().map(part).collect()
+    }
+
+    /// With the samples left out, each with the weight of that which left it out.
+    fn put_back(&self, every: f64) -> Cells {
         // How many questions were left out during a wait of so long.
         // A timeout is often a whole number of intervals, and neither is a double to the last bit.
         let left_out = |age: f64| match (age / every + 1e-3).floor() {
@@ -64,16 +83,22 @@ impl Cells {
                 whole.waiting.push(Mass { age: mass.age - last * every, weight });
             }
         }
-        let share = self.total() / whole.total();
-        for event in &mut whole.events {
+        whole.tidy();
+        whole
+    }
+
+    fn scale(&mut self, share: f64) {
+        // Nothing was put back, or there is nothing at all.
+        if share == 1.0 || share.is_nan() {
+            return;
+        }
+        for event in &mut self.events {
             event.done *= share;
             event.failed *= share;
         }
-        for mass in [&mut whole.gave_up, &mut whole.waiting, &mut whole.entries].into_iter().flatten() {
+        for mass in [&mut self.gave_up, &mut self.waiting, &mut self.entries].into_iter().flatten() {
             mass.weight *= share;
         }
-        whole.tidy();
-        whole
     }
 }
 
@@ -132,6 +157,30 @@ mod tests {
         );
         let ages: Vec<f64> = corrected.waiting.iter().map(|m| (m.age * 1e9).round() / 1e9).collect();
         assert_eq!(ages, [0.1, 0.15, 0.2, 0.25, 0.3, 0.35, 0.4, 0.5, 0.6, 0.7, 0.8, 0.9]);
+    }
+
+    /// A day with a stall and one without: together they weigh what was taken, and more of it lies on the first.
+    #[test]
+    fn parts_make_up_the_whole() {
+        let days = [
+            cells(&[(0.05, Ending::Done), (2.0, Ending::Done), (1.0, Ending::GaveUp)]),
+            cells(&[(0.04, Ending::Done), (0.06, Ending::Failed)]),
+        ];
+        let taken = cells(&[
+            (0.05, Ending::Done),
+            (2.0, Ending::Done),
+            (1.0, Ending::GaveUp),
+            (0.04, Ending::Done),
+            (0.06, Ending::Failed),
+        ]);
+        let (whole, parts) = (taken.with_omitted(0.1), taken.parts_with_omitted(&days, 0.1));
+        for (ending, whole) in whole.totals().into_iter().enumerate() {
+            let parts: f64 = parts.iter().map(|part| part.totals()[ending]).sum();
+            assert!((parts - whole).abs() < 1e-9, "{ending}: {parts} {whole}");
+        }
+        assert!(parts[0].total() > 3.0 && parts[1].total() < 2.0);
+        let quick = [days[1].clone()];
+        assert_eq!(days[1].parts_with_omitted(&quick, 0.1), quick);
     }
 
     #[test]

@@ -146,6 +146,48 @@ fn a_log_is_counted_as_it_grows_and_a_part_of_a_line_waits_for_its_end() {
     once(data.path(), 600);
 }
 
+/// The policy names logs: they are followed as long as it does, and go on where they were left when it does again.
+#[test]
+fn a_policy_names_logs() {
+    let (folder, data) = (tempfile::tempdir().unwrap(), tempfile::tempdir().unwrap());
+    let file = folder.path().join("policy.yaml");
+    let mut log = Log::new(folder.path());
+    let other = folder.path().join("access.log");
+    let base = "version: 1\nstreams: [{match: '*', aim: rate, pause: {gave_up: 1s}}]\n";
+    let name = |entries: &[String]| {
+        let text = format!("{base}follow: [{}]\n", entries.join(", "));
+        // Whole at once: the daemon may look at any moment.
+        fs::write(file.with_extension("new"), text).unwrap();
+        fs::rename(file.with_extension("new"), &file).unwrap();
+    };
+    let waits = format!("{{file: '{}'}}", log.path.display());
+    let access = format!(
+        "{{file: '{}', pattern: '^(?<stream>\\S+) (?<ending>\\d+) (?<elapsed_ms>\\d+)$', ending_of: '5??=failed,*=done'}}",
+        other.display()
+    );
+    name(std::slice::from_ref(&waits));
+    let policy = outwait::serve::PolicyFile::at(&file);
+    let house = House::on(data.path(), |config| config.policy = policy).unwrap();
+    log.write(100);
+    taken(&house, 100);
+    // Another in its place, with a form of its own.
+    name(std::slice::from_ref(&access));
+    fs::write(&other, "desk.north 200 9000000\ndesk.north 503 8000000\n").unwrap();
+    taken(&house, 102);
+    until("the first to be left", || {
+        log.write(1);
+        let before = metric(&house, "outwait_waits_total");
+        std::thread::sleep(Duration::from_millis(600));
+        (metric(&house, "outwait_waits_total") == before).then_some(())
+    });
+    // Both: the first goes on from its place.
+    name(&[waits, access]);
+    taken(&house, 2 + log.next);
+    drop(house);
+    let counted = counted(data.path());
+    assert!((0..log.next).all(|number| counted.get(&number) == Some(&1)), "{counted:?}");
+}
+
 #[test]
 fn rotations_of_every_kind_lose_nothing() {
     let (folder, data) = (tempfile::tempdir().unwrap(), tempfile::tempdir().unwrap());

@@ -3,12 +3,16 @@
 //! The status codes, media types and messages are those of the standard (opentelemetry.io/docs/specs/otlp). The SDK for
 //! Python and its exporter, where they are installed under `target/clients`, send what the last test reads.
 
+#[path = "../support/clients.rs"]
+pub(crate) mod clients;
 #[path = "../support/otlp.rs"]
 mod messages;
 
 use std::io::Write;
 use std::path::Path;
 use std::process::Command;
+
+use clients::python;
 
 use prost::Message;
 use serde_json::Value;
@@ -215,16 +219,6 @@ fn the_policys_rules() {
     let house = House::with(|config| config.policy = outwait::serve::PolicyFile::at(&file));
     send_spans(&house, vec![span("loan", 5_000_000, vec![attribute("outcome", "left")], 0)]);
     counted(&house, "spans/loan", [0, 0, 1]);
-}
-
-/// A Python with the clients in it, made by the checks that run everything.
-pub(crate) fn python() -> Option<std::path::PathBuf> {
-    let python = Path::new(env!("CARGO_MANIFEST_DIR")).join("target/clients/bin/python");
-    if !python.exists() {
-        println!("skipped: target/clients has no Python with the clients");
-        return None;
-    }
-    Some(python)
 }
 
 /// The OpenTelemetry SDK for Python with its OTLP exporter over HTTP: spans of every ending and histograms of both kinds

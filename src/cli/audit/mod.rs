@@ -138,7 +138,12 @@ impl Command {
         let subjects: Vec<Subject> = streams
             .par_iter()
             .map(|(stream, days)| {
-                Subject::new(&terms, stream, days, suspicions.get(stream).map(String::as_str), &lenders)
+                let suspicion = suspicions.get(stream).map(String::as_str);
+                let mut subject = Subject::new(&terms, stream, days, suspicion, &lenders);
+                let found = report.closed_loops.iter().find(|found| found.stream == **stream);
+                let caution = found.and_then(|found| terms.closed_loop(stream, found.every, found.longest));
+                caution.into_iter().for_each(|caution| subject.warn(caution));
+                subject
             })
             .collect();
         let question = Question {

@@ -1,13 +1,12 @@
 //! Record batches of the Arrow IPC format. A file is a stream between a magic word and a footer, and is read as one.
 
-use std::io::{self, Cursor, Read};
+use std::io::{self, Read};
 use std::sync::Arc;
 
-use arrow_array::RecordBatch;
+use arrow_buffer::Buffer;
 use arrow_ipc::convert::try_fb_to_schema;
-use arrow_ipc::reader::StreamReader;
-use arrow_ipc::{Message, RecordBatch as Batch, root_as_message};
-use arrow_schema::ArrowError;
+use arrow_ipc::reader::FileDecoder;
+use arrow_ipc::{Block, Message, MessageHeader, MetadataVersion, RecordBatch as Batch, root_as_message};
 
 use super::{ColumnsError, Next, Options, Part, Plan, Table, find, guarded};
 
@@ -15,6 +14,9 @@ use super::{ColumnsError, Next, Options, Part, Plan, Table, find, guarded};
 /// at it, so what it says is looked at first.
 const MOST_ROWS: i64 = 1 << 24;
 const MOST_BYTES: i64 = 1 << 30;
+
+/// Most bytes of a message that room is made for before they are there.
+const ROOM: u64 = 1 << 24;
 
 /// What begins each message.
 const CONTINUATION: [u8; 4] = [0xff; 4];
@@ -24,8 +26,11 @@ const MAGIC: &[u8] = b"ARROW1";
 /// How often eight zero bytes may follow a file's magic word: some writers fill up to 64 bytes.
 const MOST_FILLING: u8 = 7;
 
-/// The batches that are left.
-pub(in crate::intake) struct Batches(StreamReader<Messages>);
+/// The batches that are left. The columns of a batch are parts of its message, which is not copied.
+pub(in crate::intake) struct Batches {
+    messages: Messages,
+    decoder: FileDecoder,
+}
 
 impl Batches {
     pub(super) fn open(
@@ -33,41 +38,69 @@ impl Batches {
         is_file: bool,
         options: &Options,
     ) -> Result<(Table, Arc<Plan>), ColumnsError> {
-        let damaged = |error: io::Error| ColumnsError::Damaged { reason: error.to_string() };
         if is_file {
             // The magic word, and what fills it up to eight bytes.
             io::copy(&mut reader.by_ref().take(8), &mut io::sink()).map_err(damaged)?;
         }
         let filling = if is_file { MOST_FILLING } else { 0 };
-        let mut messages = Messages { reader, ready: Cursor::default(), is_file, filling, ended: false };
-        messages.advance().map_err(damaged)?;
+        let mut messages = Messages { reader, is_file, filling, ended: false };
+        let first = messages.next().map_err(damaged)?;
         let schema = guarded(|| {
-            let message = root_as_message(messages.ready.get_ref().get(8..).unwrap_or_default());
-            let schema = message.ok().and_then(|message| message.header_as_schema());
+            let message = first.as_ref().and_then(|message| root_as_message(message.head()).ok());
+            let schema = message.and_then(|message| message.header_as_schema());
             let first = || ColumnsError::Damaged { reason: "it does not begin with a schema".into() };
             try_fb_to_schema(schema.ok_or_else(first)?).map_err(ColumnsError::arrow)
         })?;
         let used = find(&schema, options)?;
         // Other columns are not even decoded.
         let wanted = used.iter().map(|&(index, ..)| index).collect();
-        let reader = guarded(|| StreamReader::try_new(messages, Some(wanted)).map_err(ColumnsError::arrow))?;
-        Ok((Table::Arrow(Batches(reader)), Arc::new(Plan::new(used))))
+        // By this version the messages are not held to have one and the same: those of a stream need not.
+        let decoder = FileDecoder::new(Arc::new(schema), MetadataVersion::V1).with_projection(wanted);
+        Ok((Table::Arrow(Batches { messages, decoder }), Arc::new(Plan::new(used))))
     }
 
     pub(super) fn next(&mut self) -> Result<Option<Next>, ColumnsError> {
-        let batch: Option<Result<RecordBatch, ArrowError>> = guarded(|| Ok(self.0.next()))?;
-        let Some(batch) = batch else { return Ok(None) };
-        let batch = batch.map_err(ColumnsError::arrow)?;
-        let bytes = batch.get_array_memory_size() as u64;
-        Ok(Some(Next { part: Part::Batch(batch), passed: 0, bytes }))
+        while let Some(message) = self.messages.next().map_err(damaged)? {
+            let Whole { bytes, block, unpacked, .. } = &message;
+            let kind = root_as_message(message.head()).ok().map(|message| message.header_type());
+            if kind == Some(MessageHeader::DictionaryBatch) {
+                guarded(|| self.decoder.read_dictionary(block, bytes).map_err(ColumnsError::arrow))?;
+                continue;
+            }
+            let batch =
+                guarded(|| self.decoder.read_record_batch(block, bytes).map_err(ColumnsError::arrow))?;
+            let nothing = || ColumnsError::Damaged { reason: "a message holds nothing".into() };
+            let bytes = bytes.len() as u64 + unpacked;
+            return Ok(Some(Next { part: Part::Batch(batch.ok_or_else(nothing)?), passed: 0, bytes }));
+        }
+        Ok(None)
     }
 }
 
-/// The messages of a stream, each handed on once what it says of itself can be true.
+fn damaged(error: io::Error) -> ColumnsError {
+    ColumnsError::Damaged { reason: error.to_string() }
+}
+
+/// A message of which what it says of itself can be true.
+struct Whole {
+    bytes: Buffer,
+    /// How much of it is its head.
+    head: usize,
+    block: Block,
+    /// Bytes that its packed buffers say they make.
+    unpacked: u64,
+}
+
+impl Whole {
+    /// What it says of itself, behind its length.
+    fn head(&self) -> &[u8] {
+        self.bytes.get(8..self.head).unwrap_or_default()
+    }
+}
+
+/// The messages of a stream.
 struct Messages {
     reader: Box<dyn Read + Send>,
-    /// The message that is handed on.
-    ready: Cursor<Vec<u8>>,
     is_file: bool,
     /// How much filling may still come.
     filling: u8,
@@ -75,50 +108,64 @@ struct Messages {
 }
 
 impl Messages {
-    /// Reads the next message whole. What is cut off is handed on as it is; the decoder says so.
-    fn advance(&mut self) -> io::Result<()> {
-        let bytes = self.ready.get_mut();
-        bytes.clear();
-        self.ready.set_position(0);
-        let bytes = self.ready.get_mut();
-        self.ended = self.reader.by_ref().take(8).read_to_end(bytes)? < 8;
+    /// The next message; `None` after the last.
+    fn next(&mut self) -> io::Result<Option<Whole>> {
+        if self.ended {
+            return Ok(None);
+        }
+        let cut_off = || invalid("it ends within a message".into());
+        let mut bytes = Vec::new();
+        self.read(8, &mut bytes)?;
         while self.filling > 0 && *bytes == [0; 8] {
             self.filling -= 1;
             bytes.clear();
-            self.ended = self.reader.by_ref().take(8).read_to_end(bytes)? < 8;
+            self.read(8, &mut bytes)?;
         }
         self.filling = 0;
-        let length = |bytes: &[u8]| {
-            let length = bytes.strip_prefix(&CONTINUATION)?.first_chunk::<4>()?;
-            u64::try_from(i32::from_le_bytes(*length)).ok()
-        };
-        let length = match length(bytes) {
-            Some(0) => {
+        let length = match (bytes.first_chunk::<4>(), bytes.last_chunk::<4>()) {
+            // Some writers just end, old ones with a length of nothing.
+            (None | Some([0, 0, 0, 0]), _) => {
                 self.ended = true;
-                return self.end();
+                return Ok(None);
             }
-            Some(length) => length,
-            None => {
+            (Some(&CONTINUATION), Some(length)) if bytes.len() == 8 => i32::from_le_bytes(*length),
+            (Some(&CONTINUATION), _) => return Err(cut_off()),
+            _ => return Err(invalid("a message does not begin like one".into())),
+        };
+        let length = match u64::try_from(length) {
+            Ok(0) => {
                 self.ended = true;
-                return Ok(());
+                return self.end().map(|()| None);
             }
+            Ok(length) => length,
+            Err(_) => return Err(invalid(format!("a message is {length} bytes long"))),
         };
-        self.ended |= (self.reader.by_ref().take(length).read_to_end(bytes)? as u64) < length;
-        let Some(body) = root_as_message(bytes.get(8..).unwrap_or_default())
-            .ok()
-            .and_then(|message| u64::try_from(message.bodyLength()).ok())
-        else {
-            self.ended = true;
-            return Ok(());
-        };
-        let from = bytes.len();
-        self.ended |= (self.reader.by_ref().take(body).read_to_end(bytes)? as u64) < body;
-        let (head, body) = bytes.split_at(from);
-        match root_as_message(head.get(8..).unwrap_or_default()) {
-            Ok(message) if !self.ended => check(&message, body),
-            _ => Ok(()),
+        if self.read(length, &mut bytes)? < length {
+            return Err(cut_off());
         }
-        .map_err(|why| io::Error::new(io::ErrorKind::InvalidData, why))
+        let head = bytes.len();
+        let message = root_as_message(bytes.get(8..).unwrap_or_default());
+        let message = message.map_err(|error| invalid(format!("a message cannot be read: {error}")))?;
+        let body = message.bodyLength();
+        let body = u64::try_from(body).map_err(|_| invalid(format!("a body is {body} bytes long")))?;
+        if self.read(body, &mut bytes)? < body {
+            return Err(cut_off());
+        }
+        let (front, behind) = bytes.split_at(head);
+        let unpacked = match root_as_message(front.get(8..).unwrap_or_default()) {
+            Ok(message) => check(&message, behind).map_err(invalid)?,
+            Err(_) => 0,
+        };
+        let lengths = i32::try_from(head).ok().zip(i64::try_from(behind.len()).ok());
+        let (front, behind) = lengths.ok_or_else(cut_off)?;
+        let block = Block::new(0, front, behind);
+        Ok(Some(Whole { bytes: Buffer::from_vec(bytes), head, block, unpacked }))
+    }
+
+    /// Reads so many bytes, or all that are left.
+    fn read(&mut self, length: u64, bytes: &mut Vec<u8>) -> io::Result<u64> {
+        bytes.reserve_exact(length.min(ROOM) as usize);
+        self.reader.by_ref().take(length).read_to_end(bytes).map(|read| read as u64)
     }
 
     /// After the last message of a file stands its footer, and the magic word again.
@@ -134,30 +181,22 @@ impl Messages {
         }
         match last == MAGIC {
             true => Ok(()),
-            false => Err(io::Error::new(io::ErrorKind::InvalidData, "its footer is not whole")),
+            false => Err(invalid("its footer is not whole".into())),
         }
     }
 }
 
-impl Read for Messages {
-    fn read(&mut self, buffer: &mut [u8]) -> io::Result<usize> {
-        loop {
-            let read = self.ready.read(buffer)?;
-            if read > 0 || buffer.is_empty() || self.ended {
-                return Ok(read);
-            }
-            self.advance()?;
-        }
-    }
+fn invalid(why: String) -> io::Error {
+    io::Error::new(io::ErrorKind::InvalidData, why)
 }
 
-/// Whether what a message says of its rows and buffers can be true of its body.
-fn check(message: &Message<'_>, body: &[u8]) -> Result<(), String> {
+/// Whether what a message says of its rows and buffers can be true of its body, and how many bytes packed ones make.
+fn check(message: &Message<'_>, body: &[u8]) -> Result<u64, String> {
     let batch: Option<Batch<'_>> = match message.header_as_dictionary_batch() {
         Some(dictionary) => dictionary.data(),
         None => message.header_as_record_batch(),
     };
-    let Some(batch) = batch else { return Ok(()) };
+    let Some(batch) = batch else { return Ok(0) };
     let lengths = batch.nodes().into_iter().flatten().map(|node| node.length());
     if let Some(rows) = lengths.chain([batch.length()]).find(|rows| !(0..=MOST_ROWS).contains(rows)) {
         return Err(format!("a batch of {rows} rows; at most {MOST_ROWS} are read, write smaller ones"));
@@ -192,5 +231,5 @@ fn check(message: &Message<'_>, body: &[u8]) -> Result<(), String> {
             }
         }
     }
-    Ok(())
+    Ok(unpacked.unsigned_abs())
 }

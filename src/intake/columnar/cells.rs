@@ -1,5 +1,8 @@
 //! The values of a column, whatever its type, as the fields of records.
 
+use std::borrow::Cow;
+use std::collections::HashMap;
+
 use arrow_array::cast::AsArray;
 use arrow_array::types::{
     Date32Type, Date64Type, Decimal128Type, DurationMicrosecondType, DurationMillisecondType,
@@ -8,9 +11,12 @@ use arrow_array::types::{
     TimestampSecondType, UInt8Type, UInt16Type, UInt32Type, UInt64Type,
 };
 use arrow_array::{Array, ArrayRef, ArrowPrimitiveType, LargeStringArray, StringArray, StringViewArray};
+use arrow_buffer::NullBuffer;
 use arrow_schema::{DataType, TimeUnit};
+use foldhash::fast::RandomState;
 
 use super::ColumnsError;
+use super::names;
 use crate::intake::record::{Field, Fields};
 
 /// Whether values of a type can be those of a field.
@@ -30,28 +36,34 @@ pub(super) fn can_hold(kind: &DataType, field: Field) -> bool {
 
 /// Seconds of a time or duration in whole numbers of a unit. Later is never less, so bounds become bounds.
 pub(super) fn seconds(value: i64, unit: TimeUnit) -> f64 {
-    let per_second = match unit {
-        TimeUnit::Second => return value as f64,
-        TimeUnit::Millisecond => 1_000,
-        TimeUnit::Microsecond => 1_000_000,
-        TimeUnit::Nanosecond => 1_000_000_000,
-    };
-    value.div_euclid(per_second) as f64 + value.rem_euclid(per_second) as f64 / per_second as f64
+    match unit {
+        TimeUnit::Second => value as f64,
+        TimeUnit::Millisecond => parts::<1_000>(value),
+        TimeUnit::Microsecond => parts::<1_000_000>(value),
+        TimeUnit::Nanosecond => parts::<1_000_000_000>(value),
+    }
+}
+
+/// Seconds of so many parts of one. The compiler knows the divisor, and need not divide.
+#[inline(always)]
+fn parts<const PER_SECOND: i64>(value: i64) -> f64 {
+    value.div_euclid(PER_SECOND) as f64 + value.rem_euclid(PER_SECOND) as f64 / PER_SECOND as f64
 }
 
 /// A column of one part.
 pub(super) struct Column<'a> {
-    field: Field,
-    /// How many of its units make a second if its name says.
+    pub(super) field: Field,
+    /// How many of its units make a second if its name says and its values are texts.
     unit: Option<f64>,
-    array: &'a ArrayRef,
+    /// Which rows have a value, if not all have.
+    present: Option<&'a NullBuffer>,
     values: Values<'a>,
 }
 
 enum Values<'a> {
     Nothing,
-    Numbers(Vec<f64>),
-    /// Seconds, by the column's own type.
+    Numbers(Cow<'a, [f64]>),
+    /// Seconds, by the column's own type or name.
     Seconds(Vec<f64>),
     Text(&'a StringArray),
     LargeText(&'a LargeStringArray),
@@ -70,21 +82,31 @@ impl<'a> Column<'a> {
         unit: Option<f64>,
     ) -> Result<Column<'a>, ColumnsError> {
         let values = Values::of(array.as_ref(), field).ok_or(ColumnsError::Panic)?;
-        Ok(Column { field, unit, array, values })
+        let values = match (values, unit) {
+            (Values::Numbers(numbers), Some(per_second)) => {
+                Values::Seconds(numbers.iter().map(|number| number / per_second).collect())
+            }
+            (values, _) => values,
+        };
+        let present = array.nulls().filter(|nulls| nulls.null_count() > 0);
+        Ok(Column { field, unit, present, values })
+    }
+
+    /// Whether a row has no value here.
+    #[inline(always)]
+    pub(super) fn is_missing(&self, row: usize) -> bool {
+        self.present.is_some_and(|present| present.is_null(row))
     }
 
     /// Puts a row's value into the fields; nothing where there is none.
     #[inline]
     pub(super) fn set(&'a self, row: usize, fields: &mut Fields<'a>) {
-        if self.array.is_null(row) {
+        if self.is_missing(row) {
             return;
         }
         match &self.values {
             Values::Nothing => {}
-            Values::Numbers(numbers) => match self.unit {
-                None => fields.set_number(self.field, numbers[row]),
-                Some(per_second) => fields.set_number_in_unit(self.field, numbers[row], per_second),
-            },
+            Values::Numbers(numbers) => fields.set_number(self.field, numbers[row]),
             Values::Seconds(seconds) => fields.set_number_in_unit(self.field, seconds[row], 1.0),
             texts => match texts.text(row) {
                 Some(text) if !text.is_empty() => match self.unit {
@@ -94,6 +116,40 @@ impl<'a> Column<'a> {
                 _ => {}
             },
         }
+    }
+
+    /// The numbers of all rows, those of missing ones too, and whether their unit is known.
+    pub(super) fn numbers(&self) -> Option<(&[f64], bool)> {
+        match &self.values {
+            Values::Numbers(numbers) => Some((numbers, false)),
+            Values::Seconds(seconds) => Some((seconds, true)),
+            _ => None,
+        }
+    }
+
+    /// What the text of each row stands for, those of missing ones too.
+    pub(super) fn names<T: Copy>(&'a self, find: impl FnMut(&'a str) -> T) -> Option<Vec<T>> {
+        Some(match &self.values {
+            Values::Nothing | Values::Numbers(_) | Values::Seconds(_) => return None,
+            Values::Text(texts) => names::of_each(texts.len(), |row| texts.value(row), find),
+            Values::LargeText(texts) => names::of_each(texts.len(), |row| texts.value(row), find),
+            Values::TextView(texts) => names::of_each(texts.len(), |row| texts.value(row), find),
+            Values::Coded(places, texts) => {
+                names::of_each_place(places, |place| texts.text(place).unwrap_or_default(), find)
+            }
+            texts @ Values::Figures(figures) => {
+                names::of_each(figures.len(), |row| texts.text(row).unwrap_or_default(), find)
+            }
+            texts @ Values::Flags(flags) => {
+                names::of_each(flags.len(), |row| texts.text(row).unwrap_or_default(), find)
+            }
+        })
+    }
+
+    /// The text of a row.
+    #[inline]
+    pub(super) fn text(&self, row: usize) -> Option<&str> {
+        self.values.text(row)
     }
 }
 
@@ -120,11 +176,13 @@ impl<'a> Values<'a> {
             DataType::UInt16 => whole::<UInt16Type>(array, field)?,
             DataType::UInt32 => whole::<UInt32Type>(array, field)?,
             DataType::UInt64 => whole::<UInt64Type>(array, field)?,
-            DataType::Float32 => Values::Numbers(each::<Float32Type>(array, f64::from)?),
-            DataType::Float64 => Values::Numbers(each::<Float64Type>(array, |number| number)?),
+            DataType::Float32 => Values::Numbers(each::<Float32Type>(array, f64::from)?.into()),
+            DataType::Float64 => {
+                Values::Numbers(Cow::Borrowed(array.as_primitive_opt::<Float64Type>()?.values()))
+            }
             DataType::Decimal128(_, scale) => {
                 let scale = 10f64.powi(i32::from(*scale));
-                Values::Numbers(each::<Decimal128Type>(array, |number| number as f64 / scale)?)
+                Values::Numbers(each::<Decimal128Type>(array, |number| number as f64 / scale)?.into())
             }
             DataType::Timestamp(Second, _) => in_unit::<TimestampSecondType>(array, Second)?,
             DataType::Timestamp(Millisecond, _) => in_unit::<TimestampMillisecondType>(array, Millisecond)?,
@@ -144,6 +202,7 @@ impl<'a> Values<'a> {
         })
     }
 
+    #[inline]
     fn text(&self, row: usize) -> Option<&str> {
         match self {
             Values::Text(texts) => Some(texts.value(row)),
@@ -163,18 +222,38 @@ fn each<T: ArrowPrimitiveType>(array: &dyn Array, make: impl Fn(T::Native) -> f6
 }
 
 fn in_unit<'a, T: ArrowPrimitiveType<Native = i64>>(array: &dyn Array, unit: TimeUnit) -> Option<Values<'a>> {
-    Some(Values::Seconds(each::<T>(array, |value| seconds(value, unit))?))
+    // A loop of its own for each unit.
+    Some(Values::Seconds(match unit {
+        TimeUnit::Second => each::<T>(array, |value| seconds(value, TimeUnit::Second))?,
+        TimeUnit::Millisecond => each::<T>(array, |value| seconds(value, TimeUnit::Millisecond))?,
+        TimeUnit::Microsecond => each::<T>(array, |value| seconds(value, TimeUnit::Microsecond))?,
+        TimeUnit::Nanosecond => each::<T>(array, |value| seconds(value, TimeUnit::Nanosecond))?,
+    }))
 }
 
 /// Whole numbers: of a field that takes numbers, or in figures.
 fn whole<'a, T: ArrowPrimitiveType>(array: &dyn Array, field: Field) -> Option<Values<'a>>
 where
-    T::Native: std::fmt::Display + num_as::ToF64,
+    T::Native: std::fmt::Display + std::hash::Hash + Eq + num_as::ToF64,
 {
     let values = array.as_primitive_opt::<T>()?.values();
-    Some(match field.is_number() {
-        true => Values::Numbers(values.iter().map(|&value| num_as::ToF64::to_f64(value)).collect()),
-        false => Values::Figures(values.iter().map(ToString::to_string).collect()),
+    Some(match field {
+        _ if field.is_number() => {
+            Values::Numbers(values.iter().map(|&value| num_as::ToF64::to_f64(value)).collect())
+        }
+        Field::Id => Values::Figures(values.iter().map(ToString::to_string).collect()),
+        // A status, or the number of a queue: few, and each is written once.
+        _ => {
+            let (mut known, mut figures) = (HashMap::with_hasher(RandomState::default()), Vec::new());
+            let place = |&value: &T::Native| {
+                *known.entry(value).or_insert_with(|| {
+                    figures.push(value.to_string());
+                    figures.len() - 1
+                })
+            };
+            let places = values.iter().map(place).collect();
+            Values::Coded(places, Box::new(Values::Figures(figures)))
+        }
     })
 }
 

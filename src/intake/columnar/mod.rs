@@ -6,7 +6,9 @@
 
 mod arrow;
 mod cells;
+mod names;
 mod parquet;
+mod plain;
 
 use std::fs::File;
 use std::io::{Read, Seek, Write};
@@ -18,12 +20,16 @@ use arrow_schema::Schema;
 use tempfile::NamedTempFile;
 
 use self::cells::Column;
+use self::plain::Plain;
 use super::collect::Collector;
 use super::error::{ColumnsError, HeaderError};
 use super::header::{self, Used};
 use super::record::Fields;
 use super::{Format, Options, Sink};
 use crate::glob::Glob;
+
+/// Rows looked at at once: few enough to stay near the processor, enough to know their names again.
+const ROWS: usize = 8192;
 
 /// An input whose parts are handed out one by one.
 pub(super) enum Table {
@@ -114,7 +120,13 @@ pub(super) fn harvest<S: Sink>(
     collector: &mut Collector<'_, S>,
 ) -> Result<(), ColumnsError> {
     match part {
-        Part::Batch(batch) => take(batch, &plan.used, 0, collector).map(|_| ()),
+        Part::Batch(batch) => {
+            for from in (0..batch.num_rows()).step_by(ROWS) {
+                let some = batch.slice(from, ROWS.min(batch.num_rows() - from));
+                take(&some, &plan.used, from as u64, collector)?;
+            }
+            Ok(())
+        }
         Part::Group(group) => {
             let mut rows = 0;
             let mut batches = guarded(|| parquet::batches(plan, *group))?;
@@ -140,11 +152,15 @@ fn take<S: Sink>(
             .collect::<Result<Vec<_>, _>>()
     })?;
     let rows = batch.num_rows();
+    let mut plain = Plain::of(&columns, collector);
     let mut fields = Fields::new();
     for row in 0..rows {
+        let line = first + row as u64;
+        if plain.as_mut().is_some_and(|plain| plain.take(row, line, collector)) {
+            continue;
+        }
         fields.clear();
         columns.iter().for_each(|column| column.set(row, &mut fields));
-        let line = first + row as u64;
         if let Err(flaw) = collector.record(line, &fields) {
             collector.refuse(line, flaw);
         }

@@ -3,21 +3,19 @@
 use std::path::PathBuf;
 use std::sync::Arc;
 
-use arrow_schema::{DataType, TimeUnit};
+use arrow_schema::{DataType, Schema, TimeUnit};
 use parquet::arrow::ProjectionMask;
 use parquet::arrow::arrow_reader::{
     ArrowReaderMetadata, ArrowReaderOptions, ParquetRecordBatchReader, ParquetRecordBatchReaderBuilder,
 };
+use parquet::basic::Encoding;
 use parquet::file::metadata::RowGroupMetaData;
 use parquet::file::statistics::Statistics;
 use tempfile::NamedTempFile;
 
 use super::cells::seconds;
-use super::{ColumnsError, Next, Options, Part, Plan, Table, find, guarded, reopen};
+use super::{ColumnsError, Next, Options, Part, Plan, ROWS, Table, find, guarded, reopen};
 use crate::intake::record::Field;
-
-/// Rows decoded at once.
-const ROWS: usize = 8192;
 
 /// The groups that are read, and what is passed over between them.
 pub(in crate::intake) struct Groups {
@@ -63,6 +61,7 @@ impl Groups {
             })
             .collect();
         let groups = Groups { groups: groups.into_iter(), passed: 0, span: None };
+        let metadata = guarded(|| Ok(coded(&metadata, &used)))?.unwrap_or(metadata);
         let plan = Plan { path: Some(path), _spool: spool, metadata: Some(metadata), used };
         Ok((Table::Parquet(groups), Arc::new(plan)))
     }
@@ -82,6 +81,44 @@ impl Groups {
     pub(super) fn passed(&mut self) -> (u64, Option<(f64, f64)>) {
         (std::mem::take(&mut self.passed), self.span.take())
     }
+}
+
+/// The same, with names and endings that lie there as places in a list left as such; `None` if there are none, or
+/// they cannot be had so.
+fn coded(metadata: &ArrowReaderMetadata, used: &[super::Used]) -> Option<ArrowReaderMetadata> {
+    let schema = metadata.schema();
+    let mut fields = Vec::from_iter(schema.fields().iter().cloned());
+    let mut any = false;
+    for &(index, field, _) in used {
+        let column = schema.fields().get(index)?;
+        let is_text = matches!(column.data_type(), DataType::Utf8 | DataType::LargeUtf8 | DataType::Utf8View);
+        if is_text && matches!(field, Field::Stream | Field::Ending) && is_listed(metadata, column.name()) {
+            let kind = DataType::Dictionary(Box::new(DataType::Int32), Box::new(DataType::Utf8));
+            any = true;
+            *fields.get_mut(index)? = Arc::new(column.as_ref().clone().with_data_type(kind));
+        }
+    }
+    let schema = Arc::new(Schema::new_with_metadata(fields, schema.metadata().clone()));
+    let options = ArrowReaderOptions::new().with_schema(schema);
+    any.then(|| ArrowReaderMetadata::try_new(Arc::clone(metadata.metadata()), options).ok())?
+}
+
+/// Whether all values of a column lie there as places in a list. Where that is not sure, a list would have to be made.
+fn is_listed(metadata: &ArrowReaderMetadata, name: &str) -> bool {
+    let Some(leaf) = leaf(metadata, name) else { return false };
+    let mut groups = metadata.metadata().row_groups().iter();
+    groups.all(|group| {
+        group.columns().get(leaf).is_some_and(|column| {
+            let plain = column.page_encoding_stats_mask().is_some_and(|pages| pages.is_set(Encoding::PLAIN));
+            column.dictionary_page_offset().is_some() && !plain
+        })
+    })
+}
+
+/// The place of a column among those that hold values.
+fn leaf(metadata: &ArrowReaderMetadata, name: &str) -> Option<usize> {
+    let leaves = metadata.parquet_schema().columns();
+    leaves.iter().position(|leaf| matches!(leaf.path().parts(), [only] if only == name))
 }
 
 /// Decodes the used columns of a group.
@@ -108,10 +145,7 @@ impl Times {
         let &(index, ..) = column(Field::At)?;
         let arrow = metadata.schema().field(index);
         let DataType::Timestamp(unit, _) = arrow.data_type() else { return None };
-        let leaves = metadata.parquet_schema().columns();
-        let leaf =
-            leaves.iter().position(|leaf| matches!(leaf.path().parts(), [name] if name == arrow.name()))?;
-        Some(Times { leaf, unit: *unit })
+        Some(Times { leaf: leaf(metadata, arrow.name())?, unit: *unit })
     }
 
     /// The oldest and the newest time of a group, Unix seconds; `None` where some rows have none, or it is not said.

@@ -6,12 +6,15 @@
 //! then those that came after it, then the present one.
 
 mod opened;
+mod policy;
 mod trail;
+
+pub(super) use policy::start as follow_policy;
 
 use std::io;
 use std::path::PathBuf;
 use std::sync::Arc;
-use std::sync::atomic::Ordering;
+use std::sync::atomic::{AtomicBool, Ordering};
 use std::thread::{Builder, JoinHandle};
 use std::time::{Duration, Instant};
 
@@ -21,6 +24,7 @@ use super::keeper::Refusal;
 use super::shared::Shared;
 use crate::intake::{Allowed, Format, IntakeError, Options, Outline};
 use crate::ledger::{Batch, LedgerError, Position, Reader};
+use crate::policy::Followed;
 
 /// How often a file is looked at that has nothing new.
 const NAP: Duration = Duration::from_millis(200);
@@ -32,15 +36,6 @@ const QUIET: Duration = Duration::from_secs(1);
 const PART: usize = 1 << 20;
 /// How often a vanished rest is looked for: a rotation takes more than one step.
 const LOOKS: u32 = 5;
-
-/// A file that is followed, and how its lines become records.
-#[derive(Clone, Debug, PartialEq)]
-pub struct Followed {
-    /// The file's name, under which it is looked for again after each rotation.
-    pub path: PathBuf,
-    /// Format, pattern, mapping and stream; what else stands here is not looked at.
-    pub options: Options,
-}
 
 /// What keeps a file from being read on. Nothing is lost; it is tried again.
 #[derive(Debug, thiserror::Error)]
@@ -57,8 +52,12 @@ enum Trouble {
     Refused(Refusal),
 }
 
-/// Starts the thread that follows a file. It ends when the daemon is stopping.
-pub(super) fn start(followed: Followed, shared: Arc<Shared>) -> io::Result<JoinHandle<()>> {
+/// Starts the thread that follows a file. It ends when the daemon is stopping, or when `left` is set.
+pub(super) fn start(
+    followed: Followed,
+    shared: Arc<Shared>,
+    left: Arc<AtomicBool>,
+) -> io::Result<JoinHandle<()>> {
     // The same file under the same name, wherever the daemon is started from.
     let path = std::path::absolute(&followed.path)?;
     let name = path.display().to_string();
@@ -70,7 +69,7 @@ pub(super) fn start(followed: Followed, shared: Arc<Shared>) -> io::Result<JoinH
         until: None,
         ..followed.options
     };
-    let follower = Follower { path, name, options, shared, open: None, at: None, looks: 0, told: None };
+    let follower = Follower { path, name, options, shared, left, open: None, at: None, looks: 0, told: None };
     Builder::new().name("follower".into()).spawn(move || follower.run())
 }
 
@@ -79,6 +78,8 @@ struct Follower {
     name: String,
     options: Options,
     shared: Arc<Shared>,
+    /// Set once nobody wants this file followed any more.
+    left: Arc<AtomicBool>,
     open: Option<Open>,
     /// Where to go on, while no file is open.
     at: Option<Position>,
@@ -109,7 +110,7 @@ impl Open {
 impl Follower {
     fn run(mut self) {
         let mut known = false;
-        while !self.shared.is_stopping() {
+        while !self.is_over() {
             if !known {
                 match self.shared.ask(|reader| reader.position(&self.name)) {
                     Ok(position) => {
@@ -129,10 +130,14 @@ impl Follower {
         }
     }
 
+    fn is_over(&self) -> bool {
+        self.shared.is_stopping() || self.left.load(Ordering::Relaxed)
+    }
+
     fn rest(&mut self, trouble: &Trouble) {
         self.say(trouble.to_string());
         let until = Instant::now() + REST;
-        while !self.shared.is_stopping() && Instant::now() < until {
+        while !self.is_over() && Instant::now() < until {
             std::thread::sleep(NAP);
         }
     }
@@ -331,7 +336,7 @@ impl Follower {
                 Err(Refusal::Stopping) => return None,
                 Err(refusal) => self.rest(&Trouble::Refused(refusal)),
             }
-            if self.shared.is_stopping() {
+            if self.is_over() {
                 return None;
             }
         }
