@@ -10,7 +10,7 @@ use std::sync::Arc;
 
 use criterion::{BenchmarkId, Criterion, Throughput, criterion_group, criterion_main};
 use outwait::curve::{Empirical, LifeTable};
-use outwait::outlook::{Grid, Sampled};
+use outwait::outlook::{Failures, Grid, Sampled};
 use outwait::stopping::{
     Aim, Bootstrap, Competing, Doubt, Fade, Failure, GridObjective, Holding, Limits, Objective, Pause,
     RequestTime, Retry, Worth, band, best,
@@ -93,11 +93,11 @@ fn law_by_law(c: &mut Criterion) {
 
 fn doubt(c: &mut Criterion) {
     let grid = Grid::new(0.005, 0.01, 10.0);
-    let failure: Vec<f64> = grid.ages().iter().map(|t| 0.02 * t).collect();
+    let failures = Failures::new(grid.ages().iter().map(|t| 0.02 * t).collect());
     let curves: Vec<Sampled> = (0..16 * 40)
         .map(|i| {
             let law = lognormal(-2.0 + 0.01 * (i % 40) as f64, 0.8 + 0.05 * (i / 40) as f64);
-            Sampled::join(&grid, grid.ages().iter().map(|&t| law.survival(t)).collect(), &failure)
+            Sampled::join(&grid, grid.ages().iter().map(|&t| law.survival(t)).collect(), &failures)
         })
         .collect();
     let deadline = Aim::Deadline { by: 5.0, attempts: 3 };
@@ -136,7 +136,8 @@ fn deadlines(c: &mut Criterion) {
 fn replicates(c: &mut Criterion) {
     let grid = Grid::new(0.005, 0.01, 10.0);
     let law = lognormal(-3.0, 1.0);
-    let tail = Sampled::join(&grid, grid.ages().iter().map(|&t| law.survival(t)).collect(), &[]);
+    let tail =
+        Sampled::join(&grid, grid.ages().iter().map(|&t| law.survival(t)).collect(), &Failures::default());
     let table = LifeTable::of(&bins(1_000)).expect("endings");
     c.bench_function("40 replicates of 1,000 bins", |b| {
         b.iter(|| {

@@ -30,7 +30,7 @@ mod tests {
         let text: Vec<u8> = (0..40).collect();
         for length in 0..=text.len() {
             let one = &text[..length];
-            assert!(same(one, &one.to_vec()));
+            assert!(same(one, one.to_owned().as_slice()));
             assert!(!same(one, &text[..length.saturating_sub(1)]) || length == 0);
             for place in 0..length {
                 let mut other = one.to_vec();
