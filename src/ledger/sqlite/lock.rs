@@ -9,7 +9,7 @@ use crate::ledger::LedgerError;
 /// Held as long as it lives.
 #[derive(Debug)]
 pub(super) struct FolderLock {
-    _file: File,
+    file: File,
 }
 
 impl FolderLock {
@@ -36,6 +36,14 @@ impl FolderLock {
         let _ = file.rewind();
         let _ = file.set_len(0);
         let _ = writeln!(file, "{}", std::process::id());
-        Ok(FolderLock { _file: file })
+        Ok(FolderLock { file })
+    }
+}
+
+impl Drop for FolderLock {
+    /// Closing the file would not do while a process that was just forked from this one, and has not yet begun its own
+    /// program, has it too.
+    fn drop(&mut self) {
+        let _ = self.file.unlock();
     }
 }
