@@ -19,7 +19,7 @@ use outwait::wait::{Age, Ending, Wait};
 use rand::{RngExt, SeedableRng};
 use rand_xoshiro::Xoshiro256PlusPlus;
 
-const LINES: usize = 200_000;
+const LINES: usize = 1_000_000;
 const STREAMS: [&str; 8] = [
     "catalogue.lookup",
     "catalogue.search",
