@@ -161,6 +161,7 @@ struct Rows<'a> {
 }
 
 impl Rows<'_> {
+    /// What stands beside a bar.
     fn written(&self, bar: &Bar<'_>) -> String {
         let say = |v: f64| self.unit.short(v);
         match bar.interval {
@@ -168,6 +169,11 @@ impl Rows<'_> {
             None if bar.value.is_nan() => "not known".into(),
             interval => say(bar.value) + &in_brackets(interval, say),
         }
+    }
+
+    /// The same without an interval, which the bar shows.
+    fn briefly(&self, bar: &Bar<'_>) -> String {
+        self.written(&Bar { interval: bar.interval.filter(|_| bar.value.is_nan()), ..*bar })
     }
 
     fn summary(&self) -> String {
@@ -216,6 +222,11 @@ fn draw(mut sheet: Sheet<'_>, rows: Rows<'_>) -> Svg {
         }
         false => (MARGIN + 2.0, sheet.right() - 2.0),
     };
+    let across = sheet.right() - MARGIN - shape - font;
+    let room = |written: &str| if beside { names } else { across - text::width(written, font) };
+    // Streams are told apart by the ends of their names.
+    let cut = |bar: &Bar<'_>| text::width(&text::plain(bar.name), font) > room(&rows.written(bar));
+    let brief = !beside && rows.bars.iter().any(cut);
     let ends = rows.bars.iter().flat_map(|b| b.interval.into_iter().flatten());
     let lengths = rows.bars.iter().map(|b| b.value);
     let longest = lengths.clone().filter(|v| v.is_finite()).fold(0.0, |m: f64, v| m.max(v.abs()));
@@ -223,10 +234,8 @@ fn draw(mut sheet: Sheet<'_>, rows: Rows<'_>) -> Svg {
     let scale = Scale::with_zero(Measure::Number, lengths.chain(ends.map(|e| e.clamp(-far, far))));
     let thick = 1.1 * font;
     for bar in &rows.bars {
-        let written = rows.written(bar);
-        let room =
-            if beside { names } else { sheet.right() - MARGIN - shape - text::width(&written, font) - font };
-        let name = text::shorten(&text::plain(bar.name), font, room);
+        let written = if brief { rows.briefly(bar) } else { rows.written(bar) };
+        let name = text::shorten(&text::plain(bar.name), font, room(&written));
         let (words, height) =
             if beside { (sheet.y + 1.3 * font, 2.0 * font) } else { (sheet.y + 1.2 * font, 3.2 * font) };
         let middle = if beside { sheet.y + font } else { sheet.y + 2.2 * font };
