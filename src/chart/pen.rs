@@ -92,6 +92,20 @@ impl Pen {
         };
     }
 
+    /// An element that a few lengths make, full or as a line.
+    fn shape<const N: usize>(
+        &mut self,
+        element: &str,
+        style: &impl BackendStyle,
+        fill: bool,
+        lengths: [(&str, i32); N],
+    ) -> Drawn {
+        self.open(element, style.color(), (!fill).then(|| style.stroke_width()));
+        self.lengths(lengths);
+        self.body.push_str("/>");
+        Ok(())
+    }
+
     fn lengths<const N: usize>(&mut self, lengths: [(&str, i32); N]) {
         for (name, length) in lengths {
             let _ = write!(self.body, " {name}=\"{}\"", Tenths(length));
@@ -147,11 +161,8 @@ impl DrawingBackend for Pen {
         style: &S,
         fill: bool,
     ) -> Drawn {
-        self.open("rect", style.color(), (!fill).then(|| style.stroke_width()));
         let (width, height) = (right.saturating_sub(x), bottom.saturating_sub(y));
-        self.lengths([("x", x), ("y", y), ("width", width), ("height", height)]);
-        self.body.push_str("/>");
-        Ok(())
+        self.shape("rect", style, fill, [("x", x), ("y", y), ("width", width), ("height", height)])
     }
 
     /// A place twice in a row counts once.
@@ -184,10 +195,7 @@ impl DrawingBackend for Pen {
         style: &S,
         fill: bool,
     ) -> Drawn {
-        self.open("circle", style.color(), (!fill).then(|| style.stroke_width()));
-        self.lengths([("cx", x), ("cy", y), ("r", whole(radius))]);
-        self.body.push_str("/>");
-        Ok(())
+        self.shape("circle", style, fill, [("cx", x), ("cy", y), ("r", whole(radius))])
     }
 
     fn fill_polygon<S: BackendStyle, I: IntoIterator<Item = BackendCoord>>(

@@ -12,6 +12,8 @@ use rayon::prelude::*;
 use super::exit::{Exit, Failure};
 use super::options::{Common, Reading};
 use super::text;
+use crate::advice::Caution;
+use crate::advise::Terms;
 use crate::intake::{self, IntakeError, Record, Report, Sink, Source};
 use crate::say;
 use crate::tally::{Book, Days};
@@ -161,6 +163,12 @@ fn failure(error: IntakeError) -> Failure {
         }
         _ => Failure::new(Exit::BadInput, error),
     }
+}
+
+/// A word about a stream whose log looks like that of a sampler.
+pub(super) fn closed_loop(report: &Report, terms: &Terms<'_>, stream: &str) -> Option<Caution> {
+    let found = report.closed_loops.iter().find(|found| found.stream == stream)?;
+    terms.closed_loop(stream, found.every, found.longest)
 }
 
 /// Hidden unless standard error is a terminal and the reading lasts.

@@ -80,10 +80,7 @@ impl Replay {
         let names = log.names();
         let replayed = |stream: &&str| {
             let mut replay = roll.stream(&log, stream);
-            let found = report.closed_loops.iter().find(|found| found.stream == **stream);
-            let caution =
-                found.and_then(|found| roll.terms(None).closed_loop(stream, found.every, found.longest));
-            replay.notes.extend(caution.map(Note::of));
+            replay.notes.extend(reading::closed_loop(&report, &roll.terms(None), stream).map(Note::of));
             replay
         };
         let streams = names.par_iter().map(replayed).collect();

@@ -111,9 +111,7 @@ fn advise(
             let draw = |album: &Album| album.stream(&study.curves(), number, text::headline(study.advice()));
             let section = album.as_ref().map(draw).transpose()?;
             let mut advice = study.into_advice();
-            if let Some(found) = report.closed_loops.iter().find(|found| found.stream == **stream) {
-                advice.cautions.extend(terms.closed_loop(stream, found.every, found.longest));
-            }
+            advice.cautions.extend(reading::closed_loop(report, &terms, stream));
             Ok((advice, section))
         })
         .collect::<Result<_, Failure>>()?;

@@ -1,9 +1,10 @@
 //! Logs that the daemon is to follow, from the policy and in sentences.
 
+use std::path::PathBuf;
 use std::sync::Arc;
 
 use super::entry::Followed;
-use super::finding::{Fault, Flaw, shown};
+use super::finding::{Fault, Flaw};
 use super::keys::{self, MAX_FOLLOWED, Section};
 use super::read::{Fields, Reader};
 use super::scalar::{choice, file_name};
@@ -16,25 +17,10 @@ const FORMATS: [Format; 4] = [Format::Ndjson, Format::Csv, Format::Journal, Form
 
 impl Reader {
     pub(super) fn followed(&mut self, file: &Fields<'_>) -> Vec<Followed> {
-        let items = self.items(file, &keys::FOLLOW).unwrap_or_default();
-        if items.len() > MAX_FOLLOWED {
-            let flaw = Flaw::Range { value: format!("{} entries", items.len()) };
-            self.unfit(file.place(&keys::FOLLOW), &keys::FOLLOW, flaw);
-            return Vec::new();
-        }
-        let mut all: Vec<Followed> = Vec::with_capacity(items.len());
-        for node in items {
-            let Some(followed) = self.one_followed(node) else { continue };
-            match all.iter().any(|other| other.path == followed.path) {
-                // Two that read one log would count its waits twice.
-                true => {
-                    let value = shown(&followed.path.display().to_string());
-                    self.unfit(node.at, &keys::FOLLOW_FILE, Flaw::Again { value });
-                }
-                false => all.push(followed),
-            }
-        }
-        all
+        // `./` and `//` make no other file.
+        let name =
+            |followed: &Followed| followed.path.components().collect::<PathBuf>().display().to_string();
+        self.sources(file, (&keys::FOLLOW, MAX_FOLLOWED), Reader::one_followed, (&keys::FOLLOW_FILE, name))
     }
 
     fn one_followed(&mut self, node: &Node) -> Option<Followed> {

@@ -6,6 +6,7 @@ use super::finding::{Concern, Fault, Finding, Flaw, Place, Problem, Warning, sho
 use super::keys::{KEYS, Key, MAX_PROBLEMS, Section};
 use super::scalar::nearest;
 use super::tree::{Node, Pair, Value};
+use std::collections::BTreeSet;
 use std::rc::Rc;
 
 /// Faults kept before the rest is only counted; some come out of order, and all are sorted in the end.
@@ -137,6 +138,33 @@ impl Reader {
                 None
             }
         }
+    }
+
+    /// The sources under a key, at most `most`; of two by one name (by `key` of theirs) the first, since both would count
+    /// the same waits.
+    pub(super) fn sources<T>(
+        &mut self,
+        fields: &Fields<'_>,
+        (list, most): (&'static Key, usize),
+        one: impl Fn(&mut Reader, &Node) -> Option<T>,
+        (key, name): (&'static Key, impl Fn(&T) -> String),
+    ) -> Vec<T> {
+        let items = self.items(fields, list).unwrap_or_default();
+        if items.len() > most {
+            let flaw = Flaw::Range { value: format!("{} entries", items.len()) };
+            self.unfit(fields.place(list), list, flaw);
+            return Vec::new();
+        }
+        let (mut all, mut names) = (Vec::with_capacity(items.len()), BTreeSet::new());
+        for node in items {
+            let Some(source) = one(self, node) else { continue };
+            let name = name(&source);
+            match names.insert(name.clone()) {
+                true => all.push(source),
+                false => self.unfit(node.at, key, Flaw::Again { value: shown(&name) }),
+            }
+        }
+        all
     }
 
     /// The single value under a key, if it is there and fit.

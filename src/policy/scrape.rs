@@ -16,22 +16,8 @@ const UNITS: [(&str, f64); 4] = [("s", 1.0), ("ms", 1e-3), ("us", 1e-6), ("ns", 
 
 impl Reader {
     pub(super) fn scrapes(&mut self, file: &Fields<'_>) -> Vec<Scrape> {
-        let items = self.items(file, &keys::SCRAPE).unwrap_or_default();
-        if items.len() > MAX_SCRAPES {
-            let flaw = Flaw::Range { value: format!("{} entries", items.len()) };
-            self.unfit(file.place(&keys::SCRAPE), &keys::SCRAPE, flaw);
-            return Vec::new();
-        }
-        let mut scrapes: Vec<Scrape> = Vec::with_capacity(items.len());
-        for node in items {
-            let Some(scrape) = self.scrape(node) else { continue };
-            match scrapes.iter().any(|other| other.url == scrape.url) {
-                // Two readings of one page would count its waits twice.
-                true => self.unfit(node.at, &keys::SCRAPE_URL, Flaw::Again { value: shown(&scrape.url) }),
-                false => scrapes.push(scrape),
-            }
-        }
-        scrapes
+        let name = |scrape: &Scrape| scrape.url.clone();
+        self.sources(file, (&keys::SCRAPE, MAX_SCRAPES), Reader::scrape, (&keys::SCRAPE_URL, name))
     }
 
     fn scrape(&mut self, node: &Node) -> Option<Scrape> {

@@ -140,9 +140,9 @@ impl Command {
             .map(|(stream, days)| {
                 let suspicion = suspicions.get(stream).map(String::as_str);
                 let mut subject = Subject::new(&terms, stream, days, suspicion, &lenders);
-                let found = report.closed_loops.iter().find(|found| found.stream == **stream);
-                let caution = found.and_then(|found| terms.closed_loop(stream, found.every, found.longest));
-                caution.into_iter().for_each(|caution| subject.warn(caution));
+                reading::closed_loop(report, &terms, stream)
+                    .into_iter()
+                    .for_each(|caution| subject.warn(caution));
                 subject
             })
             .collect();
