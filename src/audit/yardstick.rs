@@ -348,7 +348,7 @@ impl Advised {
     /// passes. `None` under a deadline.
     fn step(&self, age: f64, step: f64, reach: f64) -> Option<f64> {
         let price = self.price?;
-        let known = (reach - age).clamp(0.0, step);
+        let known = (reach - age).min(step).max(0.0);
         let passes = -price * (1.0 + self.doomed) * (step - known);
         if known == 0.0 {
             return Some(passes);

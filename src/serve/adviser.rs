@@ -64,7 +64,7 @@ impl Desk {
             waiting: Mutex::default(),
             woken: Condvar::new(),
             at_work: AtomicUsize::new(0),
-            refresh: Duration::from_secs_f64(refresh.clamp(0.0, 86_400.0)),
+            refresh: Duration::try_from_secs_f64(refresh.clamp(0.0, 86_400.0)).unwrap_or_default(),
         }
     }
 
@@ -167,10 +167,12 @@ impl Desk {
     }
 
     fn wait(&self, at_most: f64, is_due: impl Fn(&Waiting) -> bool) {
-        let end = Instant::now() + Duration::from_secs_f64(at_most);
+        let end = Duration::try_from_secs_f64(at_most).ok().and_then(|rest| Instant::now().checked_add(rest));
         loop {
             let waiting = self.lock();
-            if !(is_due(&waiting) || self.at_work.load(Ordering::SeqCst) > 0) || Instant::now() >= end {
+            if !(is_due(&waiting) || self.at_work.load(Ordering::SeqCst) > 0)
+                || end.is_some_and(|end| Instant::now() >= end)
+            {
                 return;
             }
             let _ = self.woken.wait_timeout(waiting, NAP);

@@ -265,8 +265,11 @@ pub(super) fn settle(shared: &Shared, word: &Word<'_>) -> Result<Settlement, Uns
     }
     let unix = shared.now();
     let clock = Timestamp::from_millisecond((unix * 1e3) as i64).unwrap_or_default();
-    // The clock may have been put back: the newest decision is still the newest.
-    let after = history.last().map(|last| last.at + SignedDuration::from_millis(1));
+    // The clock may have been put back: the newest decision is still the newest. At the end of all time two may be at once.
+    let after = history.last().map(|last| {
+        let next = last.at.checked_add(SignedDuration::from_millis(1));
+        next.unwrap_or(last.at)
+    });
     let at = after.map_or(clock, |after| clock.max(after));
     let policy = shared.policy();
     let past = settled.past(unix);

@@ -539,7 +539,7 @@ pub(crate) fn cubic(table: &[f64], x: f64) -> (f64, f64) {
     let near = x as usize;
     // Rounding may leave neighbours in the wrong order.
     let (low, high) = (table[near].min(table[near + 1]), table[near].max(table[near + 1]));
-    (value.clamp(low, high), slope)
+    (value.max(low).min(high), slope)
 }
 
 #[cfg(test)]

@@ -324,6 +324,20 @@ fn ledger_and_file_are_kept_in_step() {
     assert_eq!(read.standing("courier.slot").give_up_after(), Some(outwait::policy::GiveUp::After(55.0)));
 }
 
+/// The last moment that can be written: nothing can come after it, and it is still decided upon.
+#[test]
+fn a_decision_from_the_end_of_time_is_no_dead_end() {
+    let (house, folder) = house(&["courier.slot"]);
+    let by_hand = "schema: outwait/settled/1\nstreams:\n  courier.slot:\n    - {state: pinned, at: 9999-12-30T22:00:00.999999999Z, give_up_after: 55s, by: Bob, why: a slip}\n";
+    fs::write(folder.path().join("data/settled.yaml"), by_hand).unwrap();
+    until("what was written by hand", || (states(&house, "courier.slot") == ["pinned"]).then_some(()));
+    let signed = send(&house, "/stream/courier.slot", "decision=pin&pin=50s&by=Ada&why=x&seen=1");
+    assert_eq!(signed.status, 303, "{}", signed.text());
+    assert_eq!(states(&house, "courier.slot"), ["pinned", "pinned"]);
+    let page = look(&house, "/stream/courier.slot");
+    assert!(page.text().contains("In force: 50.0 s"), "{}", page.text());
+}
+
 /// What the ledger holds of past weeks becomes their history; what is written down is read again after a restart.
 #[test]
 fn the_history_goes_back_as_far_as_the_ledger() {
