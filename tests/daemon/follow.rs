@@ -180,9 +180,14 @@ fn a_policy_names_logs() {
         std::thread::sleep(Duration::from_millis(600));
         (metric(&house, "outwait_waits_total") == before).then_some(())
     });
-    // Both: the first goes on from its place.
-    name(&[waits, access]);
+    // Both: the first goes on from its place, and by another name it is not followed twice.
+    let alias = folder.path().join("alias.log");
+    std::os::unix::fs::symlink(&log.path, &alias).unwrap();
+    name(&[waits, format!("{{file: '{}'}}", alias.display()), access]);
     taken(&house, 2 + log.next);
+    log.write(50);
+    taken(&house, 2 + log.next);
+    std::thread::sleep(Duration::from_millis(600));
     drop(house);
     let counted = counted(data.path());
     assert!((0..log.next).all(|number| counted.get(&number) == Some(&1)), "{counted:?}");

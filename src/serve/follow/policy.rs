@@ -44,11 +44,12 @@ fn take_over(policy: Option<&Policy>, named: &mut Vec<Named>, shared: &Arc<Share
             continue;
         }
         let file = followed.path.display().to_string();
-        let by_option = &shared.config.follow;
-        if by_option.iter().any(|other| same(&other.path, &followed.path)) {
+        // Under another name too: two that follow one log would count its waits twice.
+        let mut others = shared.config.follow.iter().chain(named.iter().map(|one| &one.followed));
+        if others.any(|other| same(&other.path, &followed.path)) {
             tracing::warn!(
                 file,
-                "it is followed as an option says; what the policy says of it is not looked at"
+                "it is followed already, as an option or another entry says; what this entry says of it is not looked at"
             );
             continue;
         }
@@ -72,6 +73,8 @@ fn leave(named: Vec<Named>) {
     }
 }
 
+/// Whether two names are of one file, as far as can be told now.
 fn same(one: &Path, other: &Path) -> bool {
-    matches!((std::path::absolute(one), std::path::absolute(other)), (Ok(one), Ok(other)) if one == other)
+    let whole = |path: &Path| path.canonicalize().or_else(|_| std::path::absolute(path));
+    matches!((whole(one), whole(other)), (Ok(one), Ok(other)) if one == other)
 }
