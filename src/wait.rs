@@ -88,10 +88,19 @@ impl Wait {
     /// [`WaitError::Age`] unless the age is > 0 and at most [`MAX_AGE`].
     #[inline(always)]
     pub fn new(elapsed: f64, ending: Ending) -> Result<Wait, WaitError> {
-        if !(elapsed > 0.0 && elapsed <= MAX_AGE) {
+        if !is_age(elapsed) {
             return Err(WaitError::Age { field: "elapsed", value: elapsed });
         }
         Ok(Wait { age: Age::Exact(elapsed), ending, entered: 0.0, attempt: 1, count: 1, at: None })
+    }
+
+    /// A wait watched from its start of which each value was looked at already, a column at a time: [`is_age`],
+    /// [`is_time`], and an attempt from 1.
+    #[cfg(feature = "columnar")]
+    #[inline(always)]
+    pub(crate) fn of_sound(elapsed: f64, ending: Ending, at: Option<f64>, attempt: u32) -> Wait {
+        debug_assert!(is_age(elapsed) && at.is_none_or(is_time) && attempt > 0);
+        Wait { age: Age::Exact(elapsed), ending, entered: 0.0, attempt, count: 1, at }
     }
 
     /// A first attempt of which only `over < T <= upto` is known (s; `upto` may be infinite).
@@ -161,7 +170,7 @@ impl Wait {
     /// [`WaitError::At`] out of that range.
     #[inline(always)]
     pub fn with_at(mut self, at: f64) -> Result<Wait, WaitError> {
-        if !(0.0..=253_402_300_799.0).contains(&at) {
+        if !is_time(at) {
             return Err(WaitError::At { at });
         }
         self.at = Some(at);
@@ -203,6 +212,19 @@ impl Wait {
     pub fn at(&self) -> Option<f64> {
         self.at
     }
+}
+
+/// Whether a number can be the age of a wait, s.
+#[inline(always)]
+pub(crate) fn is_age(seconds: f64) -> bool {
+    // Both are looked at, not one after the other: a column of them goes four at a time.
+    (seconds > 0.0) & (seconds <= MAX_AGE)
+}
+
+/// Whether a number can be the time of a wait, Unix seconds: from 1970 to 9999.
+#[inline(always)]
+pub(crate) fn is_time(at: f64) -> bool {
+    (0.0..=253_402_300_799.0).contains(&at)
 }
 
 /// Why a wait was refused. [`WaitError::field`] and [`WaitError::remedy`] say where and what to do.

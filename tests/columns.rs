@@ -173,6 +173,46 @@ fn a_file_of_another_writer() {
     assert_eq!(ages, [("courier.slot", Age::Exact(1.5)), ("scan.job", Age::Exact(90.0))]);
 }
 
+/// Some writers give texts as bytes. A row whose bytes are no text is refused, and the others are read.
+#[test]
+fn texts_given_as_bytes() {
+    use arrow_array::{Array, BinaryArray, BinaryViewArray, Float64Array, LargeBinaryArray, RecordBatch};
+    let names: [&[u8]; 5] = [b"scan.job", b"scan.job", b"\xff\xfe", b"courier.slot", b"scan.job"];
+    let ids: [&[u8]; 5] = [b"a", b"b", b"c", b"d", b"\xc3("];
+    let folder = tempfile::tempdir().unwrap();
+    let streams: [Arc<dyn Array>; 3] = [
+        Arc::new(BinaryArray::from_iter_values(names)),
+        Arc::new(LargeBinaryArray::from_iter_values(names)),
+        Arc::new(BinaryViewArray::from_iter_values(names)),
+    ];
+    for (number, stream) in streams.into_iter().enumerate() {
+        let elapsed = Arc::new(Float64Array::from(vec![1.0, 2.0, 3.0, 4.0, 5.0]));
+        let id = Arc::new(BinaryArray::from_iter_values(ids));
+        let columns: [(&str, Arc<dyn Array>); 3] = [("stream", stream), ("elapsed", elapsed), ("id", id)];
+        let batch = RecordBatch::try_from_iter(columns).unwrap();
+        let (arrow, parquet) = (folder.path().join("waits.arrow"), folder.path().join("waits.parquet"));
+        let file = std::fs::File::create(&arrow).unwrap();
+        let mut writer = arrow_ipc::writer::FileWriter::try_new(file, &batch.schema()).unwrap();
+        writer.write(&batch).unwrap();
+        writer.finish().unwrap();
+        let file = std::fs::File::create(&parquet).unwrap();
+        let mut writer = parquet::arrow::ArrowWriter::try_new(file, batch.schema(), None).unwrap();
+        writer.write(&batch).unwrap();
+        writer.close().unwrap();
+        for path in [arrow, parquet] {
+            let lenient = Options { bad_lines: Allowed::All, ..threads(1) };
+            let (kept, report) =
+                read(vec![Source::path(path)], &lenient, Kept::default(), &mut |_| ()).unwrap();
+            let read: Vec<_> =
+                kept.0.iter().map(|(stream, id, _)| (stream.as_str(), id.as_deref())).collect();
+            let expected = [("scan.job", Some("a")), ("scan.job", Some("b")), ("courier.slot", Some("d"))];
+            assert_eq!(read, expected, "{number}");
+            let bad: Vec<_> = report.bad.examples.iter().map(|bad| (bad.line, bad.kind)).collect();
+            assert_eq!(bad, [(3, "not UTF-8 text"), (5, "not UTF-8 text")], "{number}");
+        }
+    }
+}
+
 /// Plain rows are taken by the column, all others by the field. Beside a column of a field that no plain row has, itself without
 /// a value, all are taken by the field: the same waits in the same order, the same rows refused for the same reasons.
 #[test]

@@ -14,7 +14,7 @@ use super::streams::Streams;
 use super::{Options, Sink};
 use crate::glob::Glob;
 use crate::running::Running;
-use crate::wait::StreamError;
+use crate::wait::{StreamError, Wait};
 
 /// What a block leaves behind once its waits are in the sink.
 #[derive(Debug)]
@@ -219,7 +219,7 @@ impl<'w, S: Sink> Collector<'w, S> {
     #[inline(always)]
     pub(super) fn whole(&mut self, record: Record<'_>, bare: bool) -> Result<(), Flaw> {
         let place = self.enter(record.stream)?;
-        self.entered(Record { place, ..record }, bare)
+        self.entered(place, record.id, record.wait, bare)
     }
 
     /// The number of a stream, whose name is checked when first met.
@@ -230,35 +230,84 @@ impl<'w, S: Sink> Collector<'w, S> {
 
     /// Takes a wait of a stream that was entered.
     #[inline(always)]
-    pub(super) fn entered(&mut self, record: Record<'_>, bare: bool) -> Result<(), Flaw> {
+    fn entered(&mut self, place: usize, id: Option<&str>, wait: Wait, bare: bool) -> Result<(), Flaw> {
         let block = self.streams.block();
-        let stream = self.streams.at(record.place);
-        if let Some(at) = record.wait.at() {
+        let stream = self.streams.at(place);
+        if let Some(at) = wait.at() {
             stream.note_time(at);
         }
         if !stream.wanted {
             self.outcome.other_streams += 1;
             return Ok(());
         }
-        if !self.options.is_in_window(record.wait.at())? {
+        if !self.options.is_in_window(wait.at())? {
             self.outcome.outside_window += 1;
             return Ok(());
         }
-        stream.pace.note(&record.wait, block);
-        if bare {
-            stream.note_age(&record.wait);
-        }
-        self.sink.take(&record);
+        stream.note(&wait, block, bare);
+        self.sink.take(&Record { stream: &stream.name, place, id, wait });
         self.outcome.waits += 1;
         Ok(())
     }
+
+    /// Takes rows of a table up to one that has to be read field by field, and says how many it took.
+    #[cfg(feature = "columnar")]
+    #[inline(always)]
+    pub(super) fn rows<'r>(&mut self, rows: &mut impl Iterator<Item = Option<Row<'r>>>) -> usize {
+        let block = self.streams.block();
+        let Collector { options, sink, streams, outcome } = self;
+        let windowed = options.is_windowed();
+        // Counted here, and not where every row would have to look for them.
+        let (mut taken, mut other_streams, mut outside_window) = (0, 0, 0);
+        for row in rows.map_while(|row| row) {
+            let stream = streams.at(row.stream);
+            if let Some(at) = row.wait.at() {
+                stream.note_time(at);
+            }
+            taken += 1;
+            if !stream.wanted {
+                other_streams += 1;
+            } else if windowed && options.is_in_window(row.wait.at()) != Ok(true) {
+                outside_window += 1;
+            } else {
+                stream.note(&row.wait, block, row.bare);
+                sink.take(&Record { stream: &stream.name, place: row.stream, id: row.id, wait: row.wait });
+            }
+        }
+        outcome.other_streams += other_streams;
+        outcome.outside_window += outside_window;
+        outcome.waits += taken - other_streams - outside_window;
+        taken as usize
+    }
+
+    /// Whether each wait needs a time.
+    #[cfg(feature = "columnar")]
+    pub(super) fn is_windowed(&self) -> bool {
+        self.options.is_windowed()
+    }
+}
+
+/// A wait of a row of a table.
+#[cfg(feature = "columnar")]
+pub(super) struct Row<'a> {
+    /// Its stream's number.
+    pub(super) stream: usize,
+    pub(super) id: Option<&'a str>,
+    /// It has a time if there is a window.
+    pub(super) wait: Wait,
+    /// Whether its age has no stated unit.
+    pub(super) bare: bool,
 }
 
 impl Options {
+    fn is_windowed(&self) -> bool {
+        self.since.is_some() || self.until.is_some()
+    }
+
     /// Whether a wait that ended or was last seen then is wanted.
     #[inline]
     pub(super) fn is_in_window(&self, at: Option<f64>) -> Result<bool, Flaw> {
-        if self.since.is_none() && self.until.is_none() {
+        if !self.is_windowed() {
             return Ok(true);
         }
         let at = at.ok_or(Flaw::Undated)?;

@@ -19,39 +19,39 @@ pub(super) struct Streams {
     /// can aim at it.
     places: HashTable<usize>,
     hash: RandomState,
-    names: Vec<Box<str>>,
     streams: Vec<Stream>,
     /// The number of the present block, from 1.
     block: u64,
 }
 
-#[derive(Clone, Copy, Debug)]
+#[derive(Debug)]
 pub(super) struct Stream {
+    pub(super) name: Box<str>,
     pub(super) wanted: bool,
     /// Ages of completions in whole seconds, from 1 s.
     whole: Ages,
     /// Ages of completions with a fraction of a second.
     broken: Ages,
-    /// Times, and how many of them have a fraction of a second.
-    times: u64,
-    broken_times: u64,
+    /// How many times have a fraction of a second, less those that have none.
+    broken_times: i64,
     oldest: f64,
     newest: f64,
-    pub(super) pace: Pace,
+    pace: Pace,
 }
 
 /// Ages on a scale of powers of two: enough to tell thousandfold differences, and exact to add up.
 #[derive(Clone, Copy, Debug, Default)]
 struct Ages {
     number: u64,
-    exponents: i64,
+    /// As they stand in a double, 1023 too large.
+    exponents: u64,
 }
 
 impl Ages {
     /// The geometric mean, s, to about a tenth.
     fn typical(&self) -> f64 {
         // An exponent rounds the logarithm down by about half on average.
-        (self.exponents as f64 / self.number as f64 + 0.5).exp2()
+        (self.exponents as f64 / self.number as f64 - 1022.5).exp2()
     }
 }
 
@@ -64,7 +64,7 @@ impl Streams {
             None => {
                 check_stream(name)?;
                 let wanted = selector.is_none_or(|selector| selector.matches(name));
-                Ok(self.add(name.into(), Stream::new(wanted)))
+                Ok(self.add(Stream::new(name, wanted)))
             }
         }
     }
@@ -77,7 +77,7 @@ impl Streams {
 
     #[inline]
     fn find(&self, name: &str) -> Option<usize> {
-        let named = |&place: &usize| same(self.names[place].as_bytes(), name.as_bytes());
+        let named = |&place: &usize| same(self.streams[place].name.as_bytes(), name.as_bytes());
         self.places.find(hash(&self.hash, name), named).copied()
     }
 
@@ -93,7 +93,7 @@ impl Streams {
 
     /// Streams that look like closed loops, by name.
     pub(super) fn closed_loops(&self) -> Vec<ClosedLoop> {
-        let paces = self.named().filter_map(|(name, stream)| stream.pace.finding(name));
+        let paces = self.streams.iter().filter_map(|stream| stream.pace.finding(&stream.name));
         let mut found: Vec<_> = paces.collect();
         found.sort_by(|a, b| a.stream.cmp(&b.stream));
         found
@@ -103,30 +103,25 @@ impl Streams {
     pub(super) fn place(&mut self, name: &str) -> usize {
         match self.find(name) {
             Some(place) => place,
-            None => self.add(name.into(), Stream::new(true)),
+            None => self.add(Stream::new(name, true)),
         }
     }
 
-    fn named(&self) -> impl Iterator<Item = (&str, &Stream)> {
-        self.names.iter().map(|name| &**name).zip(&self.streams)
-    }
-
     #[cold]
-    fn add(&mut self, name: Box<str>, stream: Stream) -> usize {
+    fn add(&mut self, stream: Stream) -> usize {
         let place = self.streams.len();
-        let again = |&place: &usize| hash(&self.hash, &self.names[place]);
-        self.places.insert_unique(hash(&self.hash, &name), place, again);
-        self.names.push(name);
+        let again = |&place: &usize| hash(&self.hash, &self.streams[place].name);
+        self.places.insert_unique(hash(&self.hash, &stream.name), place, again);
         self.streams.push(stream);
         place
     }
 
     pub(super) fn absorb(&mut self, other: Streams) {
-        for (name, theirs) in other.names.into_iter().zip(other.streams) {
-            match self.find(&name) {
+        for theirs in other.streams {
+            match self.find(&theirs.name) {
                 Some(place) => self.streams[place].absorb(&theirs),
                 None => {
-                    self.add(name, theirs);
+                    self.add(theirs);
                 }
             }
         }
@@ -141,7 +136,7 @@ impl Streams {
 
     /// Streams whose ages look like milliseconds, by name.
     pub(super) fn suspicions(&self) -> Vec<Suspicion> {
-        let mut found: Vec<_> = self.named().filter_map(|(name, stream)| stream.suspicion(name)).collect();
+        let mut found: Vec<_> = self.streams.iter().filter_map(Stream::suspicion).collect();
         found.sort_by(|a, b| a.stream.cmp(&b.stream));
         found
     }
@@ -155,12 +150,12 @@ fn hash(state: &RandomState, name: &str) -> u64 {
 }
 
 impl Stream {
-    fn new(wanted: bool) -> Stream {
+    fn new(name: &str, wanted: bool) -> Stream {
         Stream {
+            name: name.into(),
             wanted,
             whole: Ages::default(),
             broken: Ages::default(),
-            times: 0,
             broken_times: 0,
             oldest: f64::INFINITY,
             newest: f64::NEG_INFINITY,
@@ -170,19 +165,32 @@ impl Stream {
 
     #[inline]
     pub(super) fn note_time(&mut self, at: f64) {
-        self.times += 1;
-        self.broken_times += u64::from(!is_whole(at));
-        self.oldest = self.oldest.min(at);
-        self.newest = self.newest.max(at);
+        self.broken_times += if is_whole(at) { -1 } else { 1 };
+        // It is a number, of which nothing need be asked but which is less.
+        if at < self.oldest {
+            self.oldest = at;
+        }
+        if at > self.newest {
+            self.newest = at;
+        }
+    }
+
+    /// Notes a wait that is taken. `bare`: its age came as a number without a unit.
+    #[inline(always)]
+    pub(super) fn note(&mut self, wait: &Wait, block: u64, bare: bool) {
+        self.pace.note(wait, block);
+        if bare {
+            self.note_age(wait);
+        }
     }
 
     /// Notes an age given as a number without a unit. Only completions count: a time-out is often a whole number.
     #[inline]
-    pub(super) fn note_age(&mut self, wait: &Wait) {
+    fn note_age(&mut self, wait: &Wait) {
         let (Age::Exact(age), Ending::Done) = (wait.age(), wait.ending()) else { return };
         let ages = if is_whole(age) { &mut self.whole } else { &mut self.broken };
         ages.number += 1;
-        ages.exponents += (age.to_bits() >> 52) as i64 - 1023;
+        ages.exponents += age.to_bits() >> 52;
     }
 
     fn absorb(&mut self, other: &Stream) {
@@ -190,7 +198,6 @@ impl Stream {
             mine.number += theirs.number;
             mine.exponents += theirs.exponents;
         }
-        self.times += other.times;
         self.broken_times += other.broken_times;
         self.oldest = self.oldest.min(other.oldest);
         self.newest = self.newest.max(other.newest);
@@ -201,7 +208,7 @@ impl Stream {
     /// size are common too (queues, jobs), so one more sign is asked for:
     /// times that are finer than the ages; or more waits open at once than any of the whole-second sources would
     /// have (number x age / span, Little's law); or other ages, with fractions, about a thousand times shorter.
-    fn suspicion(&self, name: &str) -> Option<Suspicion> {
+    fn suspicion(&self) -> Option<Suspicion> {
         let ages = self.whole.number + self.broken.number;
         let typical = self.whole.typical();
         if self.whole.number < LEAST_AGES || !(10.0..60_000.0).contains(&typical) {
@@ -210,7 +217,7 @@ impl Stream {
         let share = self.whole.number as f64 / ages as f64;
         let open = self.whole.number as f64 * typical / (self.newest - self.oldest);
         let because = if share >= 0.99 {
-            if self.broken_times * 2 > self.times {
+            if self.broken_times > 0 {
                 Because::TimesAreFiner
             } else if open >= CROWD && open.is_finite() {
                 Because::Crowded { open }
@@ -225,7 +232,7 @@ impl Stream {
         } else {
             return None;
         };
-        Some(Suspicion { stream: name.into(), ages, whole: self.whole.number, typical, because })
+        Some(Suspicion { stream: self.name.to_string(), ages, whole: self.whole.number, typical, because })
     }
 }
 
@@ -235,9 +242,11 @@ const LEAST_AGES: u64 = 50;
 /// Waits of one stream open at once that call for a second look.
 const CROWD: f64 = 1000.0;
 
+/// Whether a number from 0 to 2^52, which no age and no time exceeds, is whole: between there and 2^53 only whole ones are.
 #[inline]
 fn is_whole(number: f64) -> bool {
-    number as i64 as f64 == number
+    const ONLY_WHOLE: f64 = 4_503_599_627_370_496.0;
+    number + ONLY_WHOLE - ONLY_WHOLE == number
 }
 
 #[cfg(test)]

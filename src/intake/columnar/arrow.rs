@@ -7,7 +7,9 @@ use arrow_buffer::Buffer;
 use arrow_ipc::convert::try_fb_to_schema;
 use arrow_ipc::reader::FileDecoder;
 use arrow_ipc::{Block, Message, MessageHeader, MetadataVersion, RecordBatch as Batch, root_as_message};
+use arrow_schema::Schema;
 
+use super::cells::unlettered;
 use super::{ColumnsError, Next, Options, Part, Plan, Table, find, guarded};
 
 /// Most rows of one batch, and most bytes of one unpacked. The decoder makes room for what a message says before it looks
@@ -52,6 +54,10 @@ impl Batches {
             try_fb_to_schema(schema.ok_or_else(first)?).map_err(ColumnsError::arrow)
         })?;
         let used = find(&schema, options)?;
+        // Whether texts are such is asked of each that is met, not of each row.
+        let fields = schema.fields().iter();
+        let fields = fields.map(|field| field.as_ref().clone().with_data_type(unlettered(field.data_type())));
+        let schema = Schema::new(fields.collect::<Vec<_>>());
         // Other columns are not even decoded.
         let wanted = used.iter().map(|&(index, ..)| index).collect();
         // By this version the messages are not held to have one and the same: those of a stream need not.

@@ -10,21 +10,26 @@ use arrow_array::types::{
     Int64Type, TimestampMicrosecondType, TimestampMillisecondType, TimestampNanosecondType,
     TimestampSecondType, UInt8Type, UInt16Type, UInt32Type, UInt64Type,
 };
-use arrow_array::{Array, ArrayRef, ArrowPrimitiveType, LargeStringArray, StringArray, StringViewArray};
+use arrow_array::{
+    Array, ArrayRef, ArrowPrimitiveType, BinaryArray, BinaryViewArray, GenericBinaryArray, LargeBinaryArray,
+    OffsetSizeTrait,
+};
 use arrow_buffer::NullBuffer;
 use arrow_schema::{DataType, TimeUnit};
 use foldhash::fast::RandomState;
 
 use super::ColumnsError;
 use super::names;
+use crate::intake::flaw::Flaw;
 use crate::intake::record::{Field, Fields};
 
 /// Whether values of a type can be those of a field.
 pub(super) fn can_hold(kind: &DataType, field: Field) -> bool {
     use DataType::*;
     match kind {
-        Null | Utf8 | LargeUtf8 | Utf8View => true,
-        Dictionary(_, values) => matches!(**values, Utf8 | LargeUtf8 | Utf8View),
+        Null => true,
+        Dictionary(_, values) => is_text(values),
+        kind if is_text(kind) => true,
         Int8 | Int16 | Int32 | Int64 | UInt8 | UInt16 | UInt32 | UInt64 => true,
         Float32 | Float64 | Decimal128(..) => field.is_number(),
         Timestamp(..) | Date32 | Date64 => field.is_time(),
@@ -34,20 +39,37 @@ pub(super) fn can_hold(kind: &DataType, field: Field) -> bool {
     }
 }
 
-/// Seconds of a time or duration in whole numbers of a unit. Later is never less, so bounds become bounds.
-pub(super) fn seconds(value: i64, unit: TimeUnit) -> f64 {
-    match unit {
-        TimeUnit::Second => value as f64,
-        TimeUnit::Millisecond => parts::<1_000>(value),
-        TimeUnit::Microsecond => parts::<1_000_000>(value),
-        TimeUnit::Nanosecond => parts::<1_000_000_000>(value),
+/// Texts, and bytes, which some writers give them as.
+fn is_text(kind: &DataType) -> bool {
+    use DataType::*;
+    matches!(kind, Utf8 | LargeUtf8 | Utf8View | Binary | LargeBinary | BinaryView)
+}
+
+/// A type with bytes in the place of texts. They lie there alike, and only those that are met need be looked at.
+pub(super) fn unlettered(kind: &DataType) -> DataType {
+    match kind {
+        DataType::Utf8 => DataType::Binary,
+        DataType::LargeUtf8 => DataType::LargeBinary,
+        DataType::Utf8View => DataType::BinaryView,
+        DataType::Dictionary(places, values) => {
+            DataType::Dictionary(places.clone(), Box::new(unlettered(values)))
+        }
+        other => other.clone(),
     }
 }
 
-/// Seconds of so many parts of one. The compiler knows the divisor, and need not divide.
+/// Seconds of a time or duration in whole numbers of a unit. Later is never less, so bounds become bounds.
 #[inline(always)]
-fn parts<const PER_SECOND: i64>(value: i64) -> f64 {
-    value.div_euclid(PER_SECOND) as f64 + value.rem_euclid(PER_SECOND) as f64 / PER_SECOND as f64
+pub(super) fn seconds(value: i64, unit: TimeUnit) -> f64 {
+    const BILLION: i64 = 1_000_000_000;
+    match unit {
+        TimeUnit::Second => value as f64,
+        // Up to the year 2255 the nearest number that there is.
+        TimeUnit::Millisecond => value as f64 / 1e3,
+        TimeUnit::Microsecond => value as f64 / 1e6,
+        // Today's are too many for a double. The compiler knows the divisor, and need not divide.
+        TimeUnit::Nanosecond => value.div_euclid(BILLION) as f64 + value.rem_euclid(BILLION) as f64 / 1e9,
+    }
 }
 
 /// A column of one part.
@@ -65,9 +87,10 @@ enum Values<'a> {
     Numbers(Cow<'a, [f64]>),
     /// Seconds, by the column's own type or name.
     Seconds(Vec<f64>),
-    Text(&'a StringArray),
-    LargeText(&'a LargeStringArray),
-    TextView(&'a StringViewArray),
+    /// Texts as bytes, which may be none.
+    Text(BinaryArray),
+    LargeText(LargeBinaryArray),
+    TextView(BinaryViewArray),
     /// Texts by their places in a list of each once.
     Coded(Vec<usize>, Box<Values<'a>>),
     /// Whole numbers where a field is a name: in figures.
@@ -98,59 +121,92 @@ impl<'a> Column<'a> {
         self.present.is_some_and(|present| present.is_null(row))
     }
 
+    /// Whether every row has a value.
+    pub(super) fn is_full(&self) -> bool {
+        self.present.is_none()
+    }
+
+    /// Puts something in the place of what the rows without a value have.
+    pub(super) fn fill_missing<T: Copy>(&self, of_rows: &mut [T], filling: T) {
+        if let Some(present) = self.present {
+            let rows = of_rows.iter_mut().zip(present);
+            rows.filter(|(_, is_there)| !is_there).for_each(|(row, _)| *row = filling);
+        }
+    }
+
     /// Puts a row's value into the fields; nothing where there is none.
+    ///
+    /// # Errors
+    /// [`Flaw::NotText`] for bytes that are no text.
     #[inline]
-    pub(super) fn set(&'a self, row: usize, fields: &mut Fields<'a>) {
+    pub(super) fn set(&'a self, row: usize, fields: &mut Fields<'a>) -> Result<(), Flaw> {
         if self.is_missing(row) {
-            return;
+            return Ok(());
         }
         match &self.values {
             Values::Nothing => {}
             Values::Numbers(numbers) => fields.set_number(self.field, numbers[row]),
             Values::Seconds(seconds) => fields.set_number_in_unit(self.field, seconds[row], 1.0),
-            texts => match texts.text(row) {
-                Some(text) if !text.is_empty() => match self.unit {
-                    None => fields.set_figures(self.field, text),
-                    Some(per_second) => fields.set_text_in_unit(self.field, text, per_second),
-                },
-                _ => {}
+            texts => match (str::from_utf8(texts.bytes(row)).map_err(|_| Flaw::NotText)?, self.unit) {
+                ("", _) => {}
+                (text, None) => fields.set_figures(self.field, text),
+                (text, Some(per_second)) => fields.set_text_in_unit(self.field, text, per_second),
             },
         }
+        Ok(())
     }
 
-    /// The numbers of all rows, those of missing ones too, and whether their unit is known.
-    pub(super) fn numbers(&self) -> Option<(&[f64], bool)> {
-        match &self.values {
-            Values::Numbers(numbers) => Some((numbers, false)),
-            Values::Seconds(seconds) => Some((seconds, true)),
-            _ => None,
+    /// Whether its numbers are of a stated unit, and have become seconds.
+    pub(super) fn is_in_seconds(&self) -> bool {
+        matches!(self.values, Values::Seconds(_))
+    }
+
+    /// The number of each row, and a filling where it has none; `None` if they are no numbers.
+    pub(super) fn filled(&self, filling: f64) -> Option<Cow<'_, [f64]>> {
+        let numbers = match &self.values {
+            Values::Numbers(numbers) => numbers,
+            Values::Seconds(seconds) => seconds.as_slice(),
+            _ => return None,
+        };
+        let mut numbers = Cow::Borrowed(numbers);
+        if !self.is_full() {
+            self.fill_missing(numbers.to_mut(), filling);
         }
+        Some(numbers)
     }
 
     /// What the text of each row stands for, those of missing ones too.
-    pub(super) fn names<T: Copy>(&'a self, find: impl FnMut(&'a str) -> T) -> Option<Vec<T>> {
+    pub(super) fn names<T: Copy>(&self, find: impl FnMut(&[u8]) -> T) -> Option<Vec<T>> {
         Some(match &self.values {
             Values::Nothing | Values::Numbers(_) | Values::Seconds(_) => return None,
-            Values::Text(texts) => names::of_each(texts.len(), |row| texts.value(row), find),
-            Values::LargeText(texts) => names::of_each(texts.len(), |row| texts.value(row), find),
-            Values::TextView(texts) => names::of_each(texts.len(), |row| texts.value(row), find),
-            Values::Coded(places, texts) => {
-                names::of_each_place(places, |place| texts.text(place).unwrap_or_default(), find)
-            }
-            texts @ Values::Figures(figures) => {
-                names::of_each(figures.len(), |row| texts.text(row).unwrap_or_default(), find)
-            }
-            texts @ Values::Flags(flags) => {
-                names::of_each(flags.len(), |row| texts.text(row).unwrap_or_default(), find)
-            }
+            Values::Text(texts) => names::of_each(each_of(texts), find),
+            Values::LargeText(texts) => names::of_each(each_of(texts), find),
+            Values::TextView(texts) => names::of_each((0..texts.len()).map(|row| texts.value(row)), find),
+            Values::Coded(places, texts) => names::of_each_place(places, |place| texts.bytes(place), find),
+            Values::Figures(figures) => names::of_each(figures.iter().map(String::as_bytes), find),
+            Values::Flags(flags) => names::of_each(flags.iter().map(|&flag| word(flag)), find),
         })
     }
 
-    /// The text of a row.
+    /// The text of a row, as bytes; empty where there is none.
     #[inline]
-    pub(super) fn text(&self, row: usize) -> Option<&str> {
-        self.values.text(row)
+    pub(super) fn bytes(&self, row: usize) -> &[u8] {
+        if self.is_missing(row) { b"" } else { self.values.bytes(row) }
     }
+}
+
+/// The texts of a column. Its offsets were looked at by the decoder.
+#[inline(always)]
+fn each_of<O: OffsetSizeTrait>(texts: &GenericBinaryArray<O>) -> impl Iterator<Item = &[u8]> {
+    let bytes = texts.value_data();
+    texts.value_offsets().windows(2).map(|ends| match *ends {
+        [from, upto] => bytes.get(from.as_usize()..upto.as_usize()).unwrap_or_default(),
+        _ => b"",
+    })
+}
+
+fn word(flag: bool) -> &'static [u8] {
+    if flag { b"true" } else { b"false" }
 }
 
 impl<'a> Values<'a> {
@@ -159,9 +215,12 @@ impl<'a> Values<'a> {
         use TimeUnit::*;
         Some(match array.data_type() {
             DataType::Null => Values::Nothing,
-            DataType::Utf8 => Values::Text(array.as_string_opt()?),
-            DataType::LargeUtf8 => Values::LargeText(array.as_string_opt()?),
-            DataType::Utf8View => Values::TextView(array.as_string_view_opt()?),
+            DataType::Binary => Values::Text(array.as_binary_opt()?.clone()),
+            DataType::LargeBinary => Values::LargeText(array.as_binary_opt()?.clone()),
+            DataType::BinaryView => Values::TextView(array.as_binary_view_opt()?.clone()),
+            DataType::Utf8 => Values::Text(array.as_string_opt::<i32>()?.clone().into()),
+            DataType::LargeUtf8 => Values::LargeText(array.as_string_opt::<i64>()?.clone().into()),
+            DataType::Utf8View => Values::TextView(array.as_string_view_opt()?.clone().to_binary_view()),
             DataType::Dictionary(..) => {
                 let coded = array.as_any_dictionary_opt()?;
                 let texts = Values::of(coded.values().as_ref(), field)?;
@@ -203,15 +262,15 @@ impl<'a> Values<'a> {
     }
 
     #[inline]
-    fn text(&self, row: usize) -> Option<&str> {
+    fn bytes(&self, row: usize) -> &[u8] {
         match self {
-            Values::Text(texts) => Some(texts.value(row)),
-            Values::LargeText(texts) => Some(texts.value(row)),
-            Values::TextView(texts) => Some(texts.value(row)),
-            Values::Coded(places, texts) => texts.text(*places.get(row)?),
-            Values::Figures(figures) => figures.get(row).map(String::as_str),
-            Values::Flags(flags) => flags.get(row).map(|flag| if *flag { "true" } else { "false" }),
-            Values::Nothing | Values::Numbers(_) | Values::Seconds(_) => None,
+            Values::Text(texts) => texts.value(row),
+            Values::LargeText(texts) => texts.value(row),
+            Values::TextView(texts) => texts.value(row),
+            Values::Coded(places, texts) => places.get(row).map_or(b"", |&place| texts.bytes(place)),
+            Values::Figures(figures) => figures.get(row).map_or(b"", String::as_bytes),
+            Values::Flags(flags) => flags.get(row).map_or(b"", |&flag| word(flag)),
+            Values::Nothing | Values::Numbers(_) | Values::Seconds(_) => b"",
         }
     }
 }

@@ -29,7 +29,7 @@ use super::{Format, Options, Sink};
 use crate::glob::Glob;
 
 /// Rows looked at at once: few enough to stay near the processor, enough to know their names again.
-const ROWS: usize = 8192;
+const ROWS: usize = 2048;
 
 /// An input whose parts are handed out one by one.
 pub(super) enum Table {
@@ -152,21 +152,41 @@ fn take<S: Sink>(
             .collect::<Result<Vec<_>, _>>()
     })?;
     let rows = batch.num_rows();
-    let mut plain = Plain::of(&columns, collector);
-    let mut fields = Fields::new();
-    for row in 0..rows {
-        let line = first + row as u64;
-        if plain.as_mut().is_some_and(|plain| plain.take(row, line, collector)) {
-            continue;
-        }
-        fields.clear();
-        columns.iter().for_each(|column| column.set(row, &mut fields));
-        if let Err(flaw) = collector.record(line, &fields) {
-            collector.refuse(line, flaw);
+    let mut by_field = ByField { columns: &columns, fields: Fields::new() };
+    match Plain::of(&columns, rows, collector) {
+        None => (first..).zip(0..rows).for_each(|(line, row)| by_field.take(row, line, collector)),
+        Some(plain) => {
+            let (mut plain, mut row) = (plain.rows(), 0);
+            loop {
+                row += collector.rows(&mut plain);
+                if row >= rows {
+                    break;
+                }
+                by_field.take(row, first + row as u64, collector);
+                row += 1;
+            }
         }
     }
     collector.count_lines(rows as u64);
     Ok(first + rows as u64)
+}
+
+/// Rows read field by field.
+struct ByField<'a> {
+    columns: &'a [Column<'a>],
+    fields: Fields<'a>,
+}
+
+impl ByField<'_> {
+    #[inline(never)]
+    fn take<S: Sink>(&mut self, row: usize, line: u64, collector: &mut Collector<'_, S>) {
+        let ByField { columns, fields } = self;
+        fields.clear();
+        let set = columns.iter().try_for_each(|column| column.set(row, fields));
+        if let Err(flaw) = set.and_then(|()| collector.record(line, fields)) {
+            collector.refuse(line, flaw);
+        }
+    }
 }
 
 /// The columns that hold fields, in the order of the table, if all that is needed is there in types that can hold it.

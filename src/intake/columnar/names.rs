@@ -13,25 +13,23 @@ struct Outline {
 
 impl Outline {
     #[inline(always)]
-    fn of(name: &str) -> Outline {
-        let (bytes, length) = (name.as_bytes(), name.len());
-        let (front, back) = match (bytes.first_chunk::<8>(), bytes.last_chunk::<8>()) {
+    fn of(name: &[u8]) -> Outline {
+        let (front, back) = match (name.first_chunk::<8>(), name.last_chunk::<8>()) {
             (Some(front), Some(back)) => (u64::from_le_bytes(*front), u64::from_le_bytes(*back)),
-            _ => match (bytes.first_chunk::<4>(), bytes.last_chunk::<4>()) {
+            _ => match (name.first_chunk::<4>(), name.last_chunk::<4>()) {
                 (Some(front), Some(back)) => {
                     (u32::from_le_bytes(*front).into(), u32::from_le_bytes(*back).into())
                 }
-                _ => (bytes.iter().fold(0, |sum, &byte| sum << 8 | u64::from(byte)), 0),
+                _ => (name.iter().fold(0, |sum, &byte| sum << 8 | u64::from(byte)), 0),
             },
         };
-        Outline { front, back, length }
+        Outline { front, back, length: name.len() }
     }
 
     #[inline(always)]
     fn slot(self) -> usize {
         // Fibonacci hashing (D. E. Knuth, The Art of Computer Programming 3, section 6.4).
-        let mixed =
-            (self.front ^ self.back.rotate_left(29) ^ self.length as u64).wrapping_mul(0x9e37_79b9_7f4a_7c15);
+        let mixed = (self.front ^ self.back.rotate_left(29)).wrapping_mul(0x9e37_79b9_7f4a_7c15);
         (mixed >> 57) as usize % SLOTS
     }
 }
@@ -39,30 +37,52 @@ impl Outline {
 /// What the name of each row stands for. It is found out again for a name that another drove out of its slot.
 #[inline(always)]
 pub(super) fn of_each<'a, T: Copy>(
-    rows: usize,
-    name: impl Fn(usize) -> &'a str,
-    mut find: impl FnMut(&'a str) -> T,
+    names: impl Iterator<Item = &'a [u8]>,
+    mut find: impl FnMut(&'a [u8]) -> T,
 ) -> Vec<T> {
-    let mut slots = [(Outline::default(), "", find("")); SLOTS];
-    let found = (0..rows).map(|row| {
-        let name = name(row);
+    let mut known = Known { slots: [(Outline::default(), find(b"")); SLOTS], names: [b""; SLOTS] };
+    let mut last = known.slots[0];
+    let found = names.map(|name| {
         let outline = Outline::of(name);
-        let slot = &mut slots[outline.slot()];
-        if slot.0 != outline || (outline.length > 16 && slot.1 != name) {
-            *slot = (outline, name, find(name));
+        // Endings come in runs.
+        if last.0 == outline && outline.length <= 16 {
+            return last.1;
         }
-        slot.2
+        let slot = outline.slot();
+        last = known.slots[slot];
+        if last.0 != outline || (outline.length > 16 && known.names[slot] != name) {
+            last = known.again(name, &mut find);
+        }
+        last.1
     });
     found.collect()
+}
+
+/// Names, and what they stand for. Most are known by their outlines alone, so these lie close together.
+struct Known<'a, T> {
+    slots: [(Outline, T); SLOTS],
+    names: [&'a [u8]; SLOTS],
+}
+
+impl<'a, T: Copy> Known<'a, T> {
+    #[cold]
+    #[inline(never)]
+    fn again(&mut self, name: &'a [u8], find: &mut impl FnMut(&'a [u8]) -> T) -> (Outline, T) {
+        let outline = Outline::of(name);
+        let slot = (outline, find(name));
+        self.slots[outline.slot()] = slot;
+        self.names[outline.slot()] = name;
+        slot
+    }
 }
 
 /// The same of names that come as places in a list, of which only those met are looked at.
 pub(super) fn of_each_place<'a, T: Copy>(
     places: &[usize],
-    name: impl Fn(usize) -> &'a str,
-    mut find: impl FnMut(&'a str) -> T,
+    name: impl Fn(usize) -> &'a [u8],
+    mut find: impl FnMut(&'a [u8]) -> T,
 ) -> Vec<T> {
-    let mut slots = [(usize::MAX, find("")); SLOTS];
+    let mut slots = [(usize::MAX, find(b"")); SLOTS];
     let found = places.iter().map(|&place| {
         let slot = &mut slots[place % SLOTS];
         if slot.0 != place {
@@ -86,12 +106,12 @@ mod tests {
         );
         names.extend((0..40).map(|length| "x".repeat(length)));
         let places: Vec<usize> = (0..5_000).map(|i| i * i % names.len()).collect();
-        let order: Vec<&str> = places.iter().map(|&place| names[place].as_str()).collect();
-        assert_eq!(of_each(order.len(), |row| order[row], |name| name), order);
-        assert_eq!(of_each_place(&places, |place| &names[place], |name| name), order);
+        let order: Vec<&[u8]> = places.iter().map(|&place| names[place].as_bytes()).collect();
+        assert_eq!(of_each(order.iter().copied(), |name| name), order);
+        assert_eq!(of_each_place(&places, |place| names[place].as_bytes(), |name| name), order);
         // Each of a few is looked up once.
         let mut looked_up = Vec::new();
-        of_each(1_000, |row| ["done", "gave_up"][row % 2], |name| looked_up.push(name));
-        assert_eq!(looked_up, ["", "done", "gave_up"]);
+        of_each((0..1_000).map(|row| [b"done".as_slice(), b"gave_up"][row % 2]), |name| looked_up.push(name));
+        assert_eq!(looked_up, [b"".as_slice(), b"done", b"gave_up"]);
     }
 }

@@ -1,152 +1,149 @@
-//! Rows that are plainly sound, taken column by column. Any other is left to be read field by field: what is wrong with a
-//! row, and how it is told, is found out in one place.
+//! Rows that are plainly sound, found out column by column. Any other is left to be read field by field: what is wrong with
+//! a row, and how it is told, is found out in one place.
+
+use std::borrow::Cow;
 
 use super::cells::Column;
 use crate::intake::Sink;
-use crate::intake::collect::Collector;
+use crate::intake::collect::{Collector, Row};
 use crate::intake::mapping::Mapping;
-use crate::intake::record::{Field, Fields, Record};
-use crate::wait::{Ending, Wait};
+use crate::intake::record::{Field, Fields};
+use crate::wait::{Ending, Wait, is_age, is_time};
 
-/// The columns of a part, if all are of fields and types that plain rows have.
+/// The number of no stream.
+const NONE: u32 = u32::MAX;
+
+/// What the columns of a part say of each row, if all are of fields and types that plain rows have.
 pub(super) struct Plain<'a> {
-    /// The column and the place of each row's name in `names`; `None`: all rows are of one stream.
-    streams: Option<(&'a Column<'a>, Vec<u32>)>,
-    names: Vec<&'a str>,
-    /// The streams that were entered: name and number, by the place of the name.
-    entered: Vec<Option<(&'a str, usize)>>,
-    /// The column and what each row's text means.
-    endings: Option<(&'a Column<'a>, Vec<Option<Ending>>)>,
-    elapsed: (&'a Column<'a>, &'a [f64]),
-    /// Whether `elapsed` has no stated unit.
+    /// The number of its stream; [`NONE`] for a row that is not plain.
+    streams: Vec<u32>,
+    endings: Vec<Option<Ending>>,
+    ages: Cow<'a, [f64]>,
+    /// Whether the ages have no stated unit.
     bare: bool,
-    at: Option<(&'a Column<'a>, &'a [f64])>,
-    attempts: Option<(&'a Column<'a>, &'a [f64])>,
+    /// Not a number where there is none.
+    times: Cow<'a, [f64]>,
+    attempts: Vec<u32>,
     ids: Option<&'a Column<'a>>,
 }
 
 impl<'a> Plain<'a> {
-    pub(super) fn of<'o: 'a, S: Sink>(
+    pub(super) fn of<S: Sink>(
         columns: &'a [Column<'a>],
-        collector: &mut Collector<'o, S>,
+        rows: usize,
+        collector: &mut Collector<'_, S>,
     ) -> Option<Plain<'a>> {
-        let (mut streams, mut endings, mut elapsed, mut at, mut attempts, mut ids) =
-            (None, None, None, None, None, None);
-        let mut names = Vec::new();
-        for column in columns {
-            let place = match column.field {
-                Field::Stream if collector.one_stream().is_some() => continue,
-                Field::Stream => {
-                    let list = |name| {
-                        names.push(name);
-                        // A part has far fewer rows.
-                        u32::try_from(names.len() - 1).unwrap_or(u32::MAX)
-                    };
-                    streams = Some((column, column.names(list)?));
-                    continue;
-                }
-                Field::Ending => {
-                    let mapping = collector.mapping();
-                    endings = Some((column, column.names(|text| ending(text, mapping))?));
-                    continue;
-                }
-                Field::Id => {
-                    ids = Some(column);
-                    continue;
-                }
-                Field::Elapsed => &mut elapsed,
-                Field::At => &mut at,
-                Field::Attempt => &mut attempts,
-                _ => return None,
-            };
-            *place = Some((column, column.numbers()?));
+        if !columns.iter().all(|column| is_plain(column.field)) {
+            return None;
         }
-        let number = |(column, (numbers, _))| (column, numbers);
-        let entered = match &streams {
-            Some(_) => vec![None; names.len()],
-            None => {
-                let name = collector.nameless()?;
-                vec![Some((name, collector.enter(name).ok()?))]
+        let column = |field| columns.iter().find(|column| column.field == field);
+        let named = column(Field::Stream).filter(|_| collector.one_stream().is_none());
+        let mut streams = match named {
+            Some(column) => {
+                let mut streams = column.names(|name| number(name, collector))?;
+                column.fill_missing(&mut streams, NONE);
+                streams
             }
+            None => vec![number(collector.nameless()?.as_bytes(), collector); rows],
         };
-        let (column, (ages, known_unit)) = elapsed?;
+        let endings = match column(Field::Ending) {
+            Some(column) => {
+                let mapping = collector.mapping();
+                let mut endings = column.names(|text| ending(text, mapping))?;
+                column.fill_missing(&mut endings, Some(Ending::Done));
+                endings
+            }
+            None => vec![Some(Ending::Done); rows],
+        };
+        let elapsed = column(Field::Elapsed)?;
+        // Where there is none it is not sound either.
+        let ages = elapsed.filled(0.0)?;
+        keep(&mut streams, &ages, is_age);
+        let times = match column(Field::At) {
+            Some(column) => {
+                let mut times = column.filled(0.0)?;
+                keep(&mut streams, &times, is_time);
+                if !column.is_full() {
+                    column.fill_missing(times.to_mut(), f64::NAN);
+                }
+                if collector.is_windowed() {
+                    column.fill_missing(&mut streams, NONE);
+                }
+                times
+            }
+            None if collector.is_windowed() => return None,
+            None => vec![f64::NAN; rows].into(),
+        };
+        let attempts = match column(Field::Attempt) {
+            Some(column) => {
+                let attempts = column.filled(1.0)?;
+                // Whole, and in range: else it comes out as another number.
+                keep(&mut streams, &attempts, |number| number >= 1.0 && f64::from(number as u32) == number);
+                attempts.iter().map(|&number| number as u32).collect()
+            }
+            None => vec![1; rows],
+        };
         Some(Plain {
             streams,
-            names,
-            entered,
             endings,
-            elapsed: (column, ages),
-            bare: !known_unit,
-            at: at.map(number),
-            attempts: attempts.map(number),
-            ids,
+            ages,
+            bare: !elapsed.is_in_seconds(),
+            times,
+            attempts,
+            ids: column(Field::Id),
         })
     }
 
-    /// Takes a row if it is sound.
+    /// Each row, if it is plain.
     #[inline(always)]
-    pub(super) fn take<S: Sink>(&mut self, row: usize, line: u64, collector: &mut Collector<'_, S>) -> bool {
-        let Some((stream, place, wait)) = self.row(row, collector) else { return false };
-        let id = self.ids.filter(|ids| !ids.is_missing(row)).and_then(|ids| ids.text(row));
-        let id = id.filter(|id| !id.is_empty());
-        if let Err(flaw) = collector.entered(Record { stream, place, id, wait }, self.bare) {
-            collector.refuse(line, flaw);
-        }
-        true
-    }
-
-    #[inline(always)]
-    fn row<S: Sink>(
-        &mut self,
-        row: usize,
-        collector: &mut Collector<'_, S>,
-    ) -> Option<(&'a str, usize, Wait)> {
-        let ending = match &self.endings {
-            Some((column, known)) if !column.is_missing(row) => known.get(row).copied().flatten()?,
-            _ => Ending::Done,
-        };
-        let value = |(column, numbers): (&Column<'_>, &[f64])| {
-            if column.is_missing(row) { None } else { numbers.get(row).copied() }
-        };
-        let mut wait = Wait::new(value(self.elapsed)?, ending).ok()?;
-        if let Some(at) = self.at.and_then(value) {
-            wait = wait.with_at(at).ok()?;
-        }
-        if let Some(attempt) = self.attempts.and_then(value) {
-            // Whole, and in range: else it comes out as another number.
-            let whole = attempt as u32;
-            if f64::from(whole) != attempt {
+    pub(super) fn rows(&self) -> impl Iterator<Item = Option<Row<'_>>> {
+        let columns =
+            self.streams.iter().zip(&self.endings).zip(&*self.ages).zip(&*self.times).zip(&self.attempts);
+        columns.enumerate().map(|(row, ((((&stream, &ending), &age), &at), &attempt))| {
+            if stream == NONE {
                 return None;
             }
-            wait = wait.with_attempt(whole).ok()?;
-        }
-        let place = match &self.streams {
-            None => 0,
-            Some((column, _)) if column.is_missing(row) => return None,
-            Some((_, places)) => *places.get(row)? as usize,
-        };
-        let (name, number) = match self.entered.get(place)? {
-            Some(entered) => *entered,
-            None => self.enter(place, collector)?,
-        };
-        Some((name, number, wait))
-    }
-
-    #[cold]
-    fn enter<S: Sink>(&mut self, place: usize, collector: &mut Collector<'_, S>) -> Option<(&'a str, usize)> {
-        let name = self.names.get(place).copied().filter(|name| !name.is_empty())?;
-        let entered = (name, collector.enter(name).ok()?);
-        *self.entered.get_mut(place)? = Some(entered);
-        Some(entered)
+            let id = match self.ids.map_or(b"".as_slice(), |ids| ids.bytes(row)) {
+                b"" => None,
+                id => Some(str::from_utf8(id).ok()?),
+            };
+            let at = if at.is_nan() { None } else { Some(at) };
+            let wait = Wait::of_sound(age, ending?, at, attempt);
+            Some(Row { stream: stream as usize, id, wait, bare: self.bare })
+        })
     }
 }
 
-/// What a text in the place of an ending means; `None` if nothing.
-fn ending(text: &str, mapping: Option<&Mapping>) -> Option<Ending> {
-    let mut fields = Fields::new();
-    if text.is_empty() {
-        return None;
+/// Whether a field's columns can be looked at by themselves.
+fn is_plain(field: Field) -> bool {
+    use Field::*;
+    matches!(field, Stream | Ending | Elapsed | At | Attempt | Id)
+}
+
+/// Strikes out the rows whose number is not sound.
+#[inline(always)]
+fn keep(streams: &mut [u32], numbers: &[f64], is_sound: impl Fn(f64) -> bool) {
+    // Mostly all are, which is found out without a look at the streams.
+    if numbers.iter().fold(true, |all, &number| all & is_sound(number)) {
+        return;
     }
+    for (stream, &number) in streams.iter_mut().zip(numbers) {
+        if !is_sound(number) {
+            *stream = NONE;
+        }
+    }
+}
+
+/// The number of the stream of that name, if it is one.
+fn number<S: Sink>(name: &[u8], collector: &mut Collector<'_, S>) -> u32 {
+    let place = str::from_utf8(name).ok().and_then(|name| collector.enter(name).ok());
+    place.and_then(|place| u32::try_from(place).ok()).unwrap_or(NONE)
+}
+
+/// What a text in the place of an ending means; `None` if nothing.
+fn ending(text: &[u8], mapping: Option<&Mapping>) -> Option<Ending> {
+    let text = str::from_utf8(text).ok().filter(|text| !text.is_empty())?;
+    let mut fields = Fields::new();
     fields.set_text(Field::Ending, text);
     if let Some(mapping) = mapping {
         mapping.settle(&mut fields).ok()?;
