@@ -218,8 +218,13 @@ impl<'w, S: Sink> Collector<'w, S> {
     /// Takes a wait. `bare`: its age came as a number without a unit.
     #[inline(always)]
     pub(super) fn whole(&mut self, record: Record<'_>, bare: bool) -> Result<(), Flaw> {
-        let place = self.enter(record.stream)?;
-        self.entered(place, record.id, record.wait, bare)
+        let stream = self.enter(record.stream)?;
+        let Record { id, wait, .. } = record;
+        if wait.at().is_none() && self.options.is_windowed() && self.streams.at(stream).wanted {
+            return Err(Flaw::Undated);
+        }
+        self.rows(&mut std::iter::once(Some(Row { stream, id, wait, bare })));
+        Ok(())
     }
 
     /// The number of a stream, whose name is checked when first met.
@@ -228,30 +233,7 @@ impl<'w, S: Sink> Collector<'w, S> {
         self.streams.enter(stream, self.options.streams.as_ref())
     }
 
-    /// Takes a wait of a stream that was entered.
-    #[inline(always)]
-    fn entered(&mut self, place: usize, id: Option<&str>, wait: Wait, bare: bool) -> Result<(), Flaw> {
-        let block = self.streams.block();
-        let stream = self.streams.at(place);
-        if let Some(at) = wait.at() {
-            stream.note_time(at);
-        }
-        if !stream.wanted {
-            self.outcome.other_streams += 1;
-            return Ok(());
-        }
-        if !self.options.is_in_window(wait.at())? {
-            self.outcome.outside_window += 1;
-            return Ok(());
-        }
-        stream.note(&wait, block, bare);
-        self.sink.take(&Record { stream: &stream.name, place, id, wait });
-        self.outcome.waits += 1;
-        Ok(())
-    }
-
-    /// Takes rows of a table up to one that has to be read field by field, and says how many it took.
-    #[cfg(feature = "columnar")]
+    /// Takes waits of streams that were entered, up to one that is none, and says how many it took.
     #[inline(always)]
     pub(super) fn rows<'r>(&mut self, rows: &mut impl Iterator<Item = Option<Row<'r>>>) -> usize {
         let block = self.streams.block();
@@ -287,8 +269,7 @@ impl<'w, S: Sink> Collector<'w, S> {
     }
 }
 
-/// A wait of a row of a table.
-#[cfg(feature = "columnar")]
+/// A wait of a stream that was entered.
 pub(super) struct Row<'a> {
     /// Its stream's number.
     pub(super) stream: usize,
