@@ -425,6 +425,10 @@ fn logs_to_follow() {
     );
     for (follow, told) in [
         ("  - {file: a, patern: x}", "p:4:15: follow: `patern` is not a key here\n  did you mean `pattern`?"),
+        (
+            "  - {file: a, stream: x}",
+            "p:4:15: follow: `stream` is not a key here\n  write `as: NAME`, the stream of all its waits",
+        ),
         ("  - {pattern: x}", "`file` is missing"),
         ("  - {file: a}\n  - {file: a}", "p:5:5: follow.file: `a` stands there already"),
         ("  - {file: a, pattern: '(x'}", "p:4:"),

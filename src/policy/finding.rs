@@ -1,6 +1,6 @@
 //! What can be wrong with a policy, where, and what to do about it.
 
-use super::keys::{Key, MAX_BYTES, MAX_DEPTH, MAX_ENTRIES, MAX_VALUES, Section};
+use super::keys::{self, Key, MAX_BYTES, MAX_DEPTH, MAX_ENTRIES, MAX_VALUES, Section};
 use super::{GlobError, Kind};
 use crate::intake::RuleError;
 use crate::say;
@@ -254,6 +254,9 @@ impl Remedy for Fault {
                 "keys are not merged; give a whole value an anchor (`guard: &usual {...}`) and refer to it \
                  (`guard: *usual`)"
                     .into()
+            }
+            Fault::UnknownKey { section: Section::Follow, key, .. } if key == "stream" => {
+                format!("write `{}: NAME`, the stream of all its waits", keys::FOLLOW_AS.name)
             }
             Fault::UnknownKey { home: Some(home), key, .. } => match home {
                 Section::File => format!("write `{key}` at the top, outside every entry"),
