@@ -310,7 +310,7 @@ pub struct BucketCost {
     pub cost: Option<f64>,
     /// Between which ages the best give-up time of these waits lies, wherever in their buckets they ended, s.
     pub best_between_s: Option<[f64; 2]>,
-    /// Between which rates the best one lies, per second.
+    /// Between which rates the best one lies, per second; absent where nothing may complete at all and waiting has its price.
     pub rate_between_per_s: Option<[f64; 2]>,
     /// Bounds to add to the layout, those that help most, s; with `blind` a whole layout.
     pub add_bounds_s: Vec<f64>,

@@ -5,6 +5,9 @@ use serde::{Deserialize, Serialize};
 /// Largest age accepted, in seconds (about 317 years). Beyond it a value is a time stamp or another unit.
 pub const MAX_AGE: f64 = 1e10;
 
+/// Shortest age that is told from none, in seconds: a picosecond, below any clock's step. A shorter one counts as this.
+pub const LEAST_AGE: f64 = 1e-12;
+
 /// Largest number of equal waits that one record may stand for.
 pub const MAX_COUNT: u64 = 1_000_000_000_000_000;
 
@@ -59,9 +62,9 @@ impl Ending {
 /// What is known of the age at the end, in seconds.
 #[derive(Clone, Copy, Debug, PartialEq)]
 pub enum Age {
-    /// The age itself; > 0, at most [`MAX_AGE`].
+    /// The age itself; from [`LEAST_AGE`] to [`MAX_AGE`].
     Exact(f64),
-    /// Only that `over < T <= upto`; `over` >= 0, `upto` > `over` and possibly infinite.
+    /// Only that `over < T <= upto`; `over` is 0 or from [`LEAST_AGE`], `upto` > `over` and possibly infinite.
     Between {
         /// Exclusive lower bound, s.
         over: f64,
@@ -91,7 +94,8 @@ impl Wait {
         if !is_age(elapsed) {
             return Err(WaitError::Age { field: "elapsed", value: elapsed });
         }
-        Ok(Wait { age: Age::Exact(elapsed), ending, entered: 0.0, attempt: 1, count: 1, at: None })
+        let age = Age::Exact(elapsed.max(LEAST_AGE));
+        Ok(Wait { age, ending, entered: 0.0, attempt: 1, count: 1, at: None })
     }
 
     /// A wait watched from its start of which each value was looked at already, a column at a time: [`is_age`],
@@ -100,7 +104,7 @@ impl Wait {
     #[inline(always)]
     pub(crate) fn of_sound(elapsed: f64, ending: Ending, at: Option<f64>, attempt: u32) -> Wait {
         debug_assert!(is_age(elapsed) && at.is_none_or(is_time) && attempt > 0);
-        Wait { age: Age::Exact(elapsed), ending, entered: 0.0, attempt, count: 1, at }
+        Wait { age: Age::Exact(elapsed.max(LEAST_AGE)), ending, entered: 0.0, attempt, count: 1, at }
     }
 
     /// A first attempt of which only `over < T <= upto` is known (s; `upto` may be infinite).
@@ -117,7 +121,8 @@ impl Wait {
         if over >= upto {
             return Err(WaitError::EmptyBucket { over, upto });
         }
-        Ok(Wait { age: Age::Between { over, upto }, ending, entered: 0.0, attempt: 1, count: 1, at: None })
+        let age = Age::Between { over: or_none(over), upto: upto.max(LEAST_AGE) };
+        Ok(Wait { age, ending, entered: 0.0, attempt: 1, count: 1, at: None })
     }
 
     /// Sets the age at which watching began (left truncation), s, from 0 to below the age at the end.
@@ -134,7 +139,7 @@ impl Wait {
         if entered != 0.0 && !(entered > 0.0 && entered < ceiling) {
             return Err(WaitError::Entered { entered, age: ceiling });
         }
-        self.entered = entered;
+        self.entered = or_none(entered);
         Ok(self)
     }
 
@@ -212,6 +217,12 @@ impl Wait {
     pub fn at(&self) -> Option<f64> {
         self.at
     }
+}
+
+/// An age that something lies above: none if it is too short to be told from none.
+#[inline]
+fn or_none(age: f64) -> f64 {
+    if age < LEAST_AGE { 0.0 } else { age }
 }
 
 /// Whether a number can be the age of a wait, s.

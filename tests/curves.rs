@@ -11,7 +11,7 @@ use outwait::curve::{
 };
 use outwait::outlook::Outlook;
 use outwait::tally::{Cause, Cells, Sample};
-use outwait::wait::{Ending, Wait};
+use outwait::wait::{Ending, LEAST_AGE, Wait};
 use proptest::prelude::*;
 use serde_json::Value;
 use support::{SETS, Set, Zeros, expected, set};
@@ -72,7 +72,7 @@ fn check_curves(name: &str, data: &Sample, answer: &Value) -> usize {
         assert!((ours / theirs - 1.0).abs() < 1e-9 || ours == theirs, "{name} A({t}): {ours} for {theirs}");
     }
     for (p, q) in answer["quantiles_of_T"].as_object().unwrap() {
-        let ours = curve.quantile(p.parse().unwrap()).map(|t| if t == f64::MIN_POSITIVE { 0.0 } else { t });
+        let ours = curve.quantile(p.parse().unwrap()).map(|t| if t == LEAST_AGE { 0.0 } else { t });
         // Where the curve passes through 1 - p exactly, rounding decides theirs: 15/20 as 0.7500000000000001, say.
         let tie = ours.is_some_and(|t| (curve.survival(t) - (1.0 - p.parse::<f64>().unwrap())).abs() < 1e-12);
         assert!(ours == q.as_f64() || tie, "{name} {p}-quantile: {ours:?} for {q}");

@@ -61,7 +61,8 @@ pub(super) fn read(
             let between = Between::of(cells, entry, &worth, &retry)?;
             cost.cost = advised.and_then(|t| between.loss(t));
             cost.best_between_s = Some(between.times);
-            cost.rate_between_per_s = Some(between.rates);
+            // Under a carrying cost a reading in which nothing completes is endlessly bad.
+            cost.rate_between_per_s = Some(between.rates).filter(|rates| rates.iter().all(|r| r.is_finite()));
             cost.add_bounds_s = added(cells, entry, &worth, &retry, &between);
         }
     }

@@ -27,6 +27,8 @@ pub const MAX_PROBLEMS: usize = 50;
 pub const MAX_ATTEMPTS: u32 = 100;
 /// Largest worth or cost, either sign, in the unit of worth.
 pub const MAX_WORTH: f64 = 1e12;
+/// Least worth of a completion, and least carrying cost in worth per second.
+pub const LEAST_WORTH: f64 = 1e-12;
 
 /// What is waited for, unless `kind` says so.
 pub const DEFAULT_KIND: super::Kind = super::Kind::Request;
@@ -167,7 +169,7 @@ keys! {
         "What is sought: most worth per second; least time until done; most worth less the cost of waiting; best chance by a deadline.";
     WORTH: Entry "worth", "a map of done, failed and gave_up", "{done: 1.0, gave_up: 0.2}", "its keys' defaults",
         "What each ending is worth, in any one unit.";
-    WORTH_DONE: Worth "done", "a number above 0 and at most 1e12", "1.0", "1",
+    WORTH_DONE: Worth "done", "a number from 1e-12 to 1e12", "1.0", "1",
         "Worth of a completion.";
     WORTH_FAILED: Worth "failed", "a number from -1e12 to 1e12", "0.0", "0",
         "Worth of a failure.";
@@ -191,7 +193,7 @@ keys! {
         "Pause after a failure.";
     PAUSE_GAVE_UP: Pause "gave_up", "a duration with its unit, 0 or more", "10ms", "0s",
         "Pause after giving up.";
-    CARRYING_COST: Entry "carrying_cost", "a number above 0 per s, min, h or d", "0.02/s", "none; `aim: carrying_cost` needs it",
+    CARRYING_COST: Entry "carrying_cost", "a number per s, min, h or d, at least 1e-12/s", "0.02/s", "none; `aim: carrying_cost` needs it",
         "What waiting costs, in the unit of worth per unit of time.";
     DEADLINE: Entry "deadline", "a duration with its unit, above 0", "2s", "none; `aim: deadline` needs it",
         "When it must be done, counted from the first start.";

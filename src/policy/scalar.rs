@@ -3,7 +3,7 @@
 use super::finding::{Flaw, shown};
 use super::{GiveUp, Sticky};
 use crate::say;
-use crate::wait::MAX_AGE;
+use crate::wait::{LEAST_AGE, MAX_AGE};
 use std::path::PathBuf;
 
 /// A duration with its unit, s; 0 needs none. Its range is the caller's to judge with [`within`].
@@ -16,9 +16,9 @@ pub(super) fn duration(text: &str) -> Result<f64, Flaw> {
     }
 }
 
-/// A duration above 0, s.
+/// A duration above 0, s. As with waits, one below [`LEAST_AGE`] is as long as that.
 pub(crate) fn span(text: &str) -> Result<f64, Flaw> {
-    duration(text).and_then(|s| within(s, s > 0.0 && s <= MAX_AGE, text))
+    duration(text).and_then(|s| within(s.max(LEAST_AGE), s > 0.0 && s <= MAX_AGE, text))
 }
 
 /// A duration of 0 or more, s.
@@ -79,7 +79,7 @@ pub(super) fn step(text: &str) -> Result<f64, Flaw> {
     share(text).and_then(|s| within(s, s > 0.0 && s <= 10.0, text))
 }
 
-/// Worth per time (`0.02/s`, also `/min`, `/h`, `/d`), in worth per second, above 0.
+/// Worth per time (`0.02/s`, also `/min`, `/h`, `/d`), in worth per second, from [`super::LEAST_WORTH`].
 pub(super) fn cost_of_time(text: &str) -> Result<f64, Flaw> {
     let Some((amount, unit)) = text.split_once('/') else {
         return Err(unreadable(text));
@@ -93,7 +93,7 @@ pub(super) fn cost_of_time(text: &str) -> Result<f64, Flaw> {
     };
     let amount = finite(amount.trim(), text)?;
     let value = amount / seconds;
-    within(value, value > 0.0 && amount <= super::MAX_WORTH, text)
+    within(value, value >= super::LEAST_WORTH && amount <= super::MAX_WORTH, text)
 }
 
 /// `true` or `false`.

@@ -2,7 +2,7 @@
 
 use super::entry::{Backoff, Entry, GiveUp, Guard, Jitter, Kind, Policy, Retry, Sticky, Weekly, aim_name};
 use super::finding::{Concern, Fault, Flaw, Place, shown};
-use super::keys::{self, MAX_WORTH, Section};
+use super::keys::{self, LEAST_WORTH, MAX_WORTH, Section};
 use super::read::{Fields, Reader};
 use super::scalar::{self, choice, number, part, pause, span, whole};
 use super::tree::{self, Node};
@@ -134,10 +134,7 @@ impl Reader {
         let mut worth = Worth::default();
         if let Some(map) = self.map(entry, &keys::WORTH, Section::Worth) {
             let any = |t: &str| number(t, -MAX_WORTH, MAX_WORTH);
-            set(
-                &mut worth.done,
-                self.value(&map, &keys::WORTH_DONE, |t| number(t, f64::MIN_POSITIVE, MAX_WORTH)),
-            );
+            set(&mut worth.done, self.value(&map, &keys::WORTH_DONE, |t| number(t, LEAST_WORTH, MAX_WORTH)));
             set(&mut worth.failed, self.value(&map, &keys::WORTH_FAILED, any));
             set(&mut worth.gave_up, self.value(&map, &keys::WORTH_GAVE_UP, any));
         }

@@ -172,11 +172,15 @@ impl Stand {
     /// Onwards as the tail goes from `from` to `to`.
     fn follow(&self, from: &Stand, to: &Stand) -> Stand {
         let factor = self.survival / from.survival;
+        let survival = factor * to.survival;
+        // Where hardly any of the tail is left the factor is huge, and so would be the rounding of what is near 1.
+        let ended = (self.survival - survival).max(0.0);
+        let failed = (factor * (to.failed - from.failed)).max(0.0).min(ended);
         Stand {
             age: to.age,
-            survival: factor * to.survival,
-            done: self.done + factor * (to.done - from.done),
-            failed: self.failed + factor * (to.failed - from.failed),
+            survival,
+            done: self.done + (ended - failed),
+            failed: self.failed + failed,
             area: self.area + factor * (to.area - from.area),
         }
     }

@@ -6,7 +6,7 @@
 use std::path::{Path, PathBuf};
 
 use outwait::tally::Cells;
-use outwait::wait::{Ending, Wait};
+use outwait::wait::{Ending, LEAST_AGE, Wait};
 
 /// Path of `tests/reference/{kind}/{name}`, or of the same file in a `shared/reference` folder beside the
 /// repository or one level higher. Where there is none, says so and gives `None`: the caller skips its check.
@@ -72,7 +72,7 @@ impl Set {
             .filter(|r| stream.is_none_or(|s| s == r.stream))
             .filter(|r| r.elapsed > 0.0 || zeros == Zeros::AsLeast)
             .map(|r| {
-                let wait = Wait::new(r.elapsed.max(f64::MIN_POSITIVE), r.ending).unwrap();
+                let wait = Wait::new(r.elapsed.max(LEAST_AGE), r.ending).unwrap();
                 r.at.map_or(wait, |at| wait.with_at(at).unwrap())
             })
             .collect()
