@@ -236,30 +236,24 @@ impl<'w, S: Sink> Collector<'w, S> {
     /// Takes waits of streams that were entered, up to one that is none, and says how many it took.
     #[inline(always)]
     pub(super) fn rows<'r>(&mut self, rows: &mut impl Iterator<Item = Option<Row<'r>>>) -> usize {
-        let block = self.streams.block();
-        let Collector { options, sink, streams, outcome } = self;
-        let windowed = options.is_windowed();
-        // Counted here, and not where every row would have to look for them.
-        let (mut taken, mut other_streams, mut outside_window) = (0, 0, 0);
-        for row in rows.map_while(|row| row) {
-            let stream = streams.at(row.stream);
-            if let Some(at) = row.wait.at() {
-                stream.note_time(at);
-            }
-            taken += 1;
-            if !stream.wanted {
-                other_streams += 1;
-            } else if windowed && options.is_in_window(row.wait.at()) != Ok(true) {
-                outside_window += 1;
-            } else {
-                stream.note(&row.wait, block, row.bare);
-                sink.take(&Record { stream: &stream.name, place: row.stream, id: row.id, wait: row.wait });
-            }
-        }
+        let tally = take_rows(self.options, self.sink, self.streams, rows);
+        self.count(tally);
+        tally.taken as usize
+    }
+
+    /// Takes many waits of streams that were entered.
+    #[cfg(feature = "columnar")]
+    pub(super) fn many_rows<'r>(&mut self, rows: impl Iterator<Item = Row<'r>>) {
+        let tally = take_many_rows(self.options, self.sink, self.streams, rows);
+        self.count(tally);
+    }
+
+    #[inline(always)]
+    fn count(&mut self, Tally { taken, other_streams, outside_window }: Tally) {
+        let outcome = &mut self.outcome;
         outcome.other_streams += other_streams;
         outcome.outside_window += outside_window;
         outcome.waits += taken - other_streams - outside_window;
-        taken as usize
     }
 
     /// Whether each wait needs a time.
@@ -267,6 +261,55 @@ impl<'w, S: Sink> Collector<'w, S> {
     pub(super) fn is_windowed(&self) -> bool {
         self.options.is_windowed()
     }
+}
+
+/// Rows as they went.
+#[derive(Clone, Copy, Default)]
+struct Tally {
+    taken: u64,
+    other_streams: u64,
+    outside_window: u64,
+}
+
+/// Not inlined: of an argument of its own the compiler knows that nothing else lies in it, and may keep a small sink in
+/// registers.
+#[cfg(feature = "columnar")]
+#[inline(never)]
+fn take_many_rows<'r, S: Sink>(
+    options: &Options,
+    sink: &mut S,
+    streams: &mut Streams,
+    rows: impl Iterator<Item = Row<'r>>,
+) -> Tally {
+    take_rows(options, sink, streams, &mut rows.map(Some))
+}
+
+/// Takes rows up to one that is none.
+#[inline(always)]
+fn take_rows<'r, S: Sink>(
+    options: &Options,
+    sink: &mut S,
+    streams: &mut Streams,
+    rows: &mut impl Iterator<Item = Option<Row<'r>>>,
+) -> Tally {
+    let (block, windowed) = (streams.block(), options.is_windowed());
+    let mut tally = Tally::default();
+    for row in rows.map_while(|row| row) {
+        let stream = streams.at(row.stream);
+        if let Some(at) = row.wait.at() {
+            stream.note_time(at);
+        }
+        tally.taken += 1;
+        if !stream.wanted {
+            tally.other_streams += 1;
+        } else if windowed && options.is_in_window(row.wait.at()) != Ok(true) {
+            tally.outside_window += 1;
+        } else {
+            stream.note(&row.wait, block, row.bare);
+            sink.take(&Record { stream: &stream.name, place: row.stream, id: row.id, wait: row.wait });
+        }
+    }
+    tally
 }
 
 /// A wait of a stream that was entered.

@@ -10,10 +10,7 @@ use arrow_array::types::{
     Int64Type, TimestampMicrosecondType, TimestampMillisecondType, TimestampNanosecondType,
     TimestampSecondType, UInt8Type, UInt16Type, UInt32Type, UInt64Type,
 };
-use arrow_array::{
-    Array, ArrayRef, ArrowPrimitiveType, BinaryArray, BinaryViewArray, GenericBinaryArray, LargeBinaryArray,
-    OffsetSizeTrait,
-};
+use arrow_array::{Array, ArrayRef, ArrowPrimitiveType, BinaryArray, BinaryViewArray, LargeBinaryArray};
 use arrow_buffer::NullBuffer;
 use arrow_schema::{DataType, TimeUnit};
 use foldhash::fast::RandomState;
@@ -179,8 +176,10 @@ impl<'a> Column<'a> {
     pub(super) fn names<T: Copy>(&self, find: impl FnMut(&[u8]) -> T) -> Option<Vec<T>> {
         Some(match &self.values {
             Values::Nothing | Values::Numbers(_) | Values::Seconds(_) => return None,
-            Values::Text(texts) => names::of_each(each_of(texts), find),
-            Values::LargeText(texts) => names::of_each(each_of(texts), find),
+            Values::Text(texts) => names::of_each_packed(texts.value_offsets(), texts.value_data(), find),
+            Values::LargeText(texts) => {
+                names::of_each_packed(texts.value_offsets(), texts.value_data(), find)
+            }
             Values::TextView(texts) => names::of_each((0..texts.len()).map(|row| texts.value(row)), find),
             Values::Coded(places, texts) => names::of_each_place(places, |place| texts.bytes(place), find),
             Values::Figures(figures) => names::of_each(figures.iter().map(String::as_bytes), find),
@@ -193,16 +192,6 @@ impl<'a> Column<'a> {
     pub(super) fn bytes(&self, row: usize) -> &[u8] {
         if self.is_missing(row) { b"" } else { self.values.bytes(row) }
     }
-}
-
-/// The texts of a column. Its offsets were looked at by the decoder.
-#[inline(always)]
-fn each_of<O: OffsetSizeTrait>(texts: &GenericBinaryArray<O>) -> impl Iterator<Item = &[u8]> {
-    let bytes = texts.value_data();
-    texts.value_offsets().windows(2).map(|ends| match *ends {
-        [from, upto] => bytes.get(from.as_usize()..upto.as_usize()).unwrap_or_default(),
-        _ => b"",
-    })
 }
 
 fn word(flag: bool) -> &'static [u8] {

@@ -155,17 +155,20 @@ fn take<S: Sink>(
     let mut by_field = ByField { columns: &columns, fields: Fields::new() };
     match Plain::of(&columns, rows, collector) {
         None => (first..).zip(0..rows).for_each(|(line, row)| by_field.take(row, line, collector)),
-        Some(plain) => {
-            let (mut plain, mut row) = (plain.rows(), 0);
-            loop {
-                row += collector.rows(&mut plain);
-                if row >= rows {
-                    break;
+        Some(plain) => match plain.even_rows() {
+            Some(even) => collector.many_rows(even),
+            None => {
+                let (mut plain, mut row) = (plain.rows(), 0);
+                loop {
+                    row += collector.rows(&mut plain);
+                    if row >= rows {
+                        break;
+                    }
+                    by_field.take(row, first + row as u64, collector);
+                    row += 1;
                 }
-                by_field.take(row, first + row as u64, collector);
-                row += 1;
             }
-        }
+        },
     }
     collector.count_lines(rows as u64);
     Ok(first + rows as u64)

@@ -1,5 +1,7 @@
 //! The few names that the rows of a column have, each looked up once and not once a row.
 
+use arrow_array::OffsetSizeTrait;
+
 /// Slots for names that may come again, a power of two.
 const SLOTS: usize = 128;
 
@@ -40,22 +42,93 @@ pub(super) fn of_each<'a, T: Copy>(
     names: impl Iterator<Item = &'a [u8]>,
     mut find: impl FnMut(&'a [u8]) -> T,
 ) -> Vec<T> {
-    let mut known = Known { slots: [(Outline::default(), find(b"")); SLOTS], names: [b""; SLOTS] };
-    let mut last = known.slots[0];
-    let found = names.map(|name| {
-        let outline = Outline::of(name);
+    let mut known = Known::new(find(b""));
+    names.map(|name| known.get(name, &mut find)).collect()
+}
+
+/// The same of names that lie one behind the other: where the first begins, and where each ends.
+#[inline(always)]
+pub(super) fn of_each_packed<'a, O: OffsetSizeTrait, T: Copy>(
+    offsets: &[O],
+    bytes: &'a [u8],
+    mut find: impl FnMut(&'a [u8]) -> T,
+) -> Vec<T> {
+    let Some((&from, ends)) = offsets.split_first() else { return Vec::new() };
+    let mut last = Last { from, length: O::zero(), meaning: find(b"") };
+    let mut known = Known::new(last.meaning);
+    let mut found = vec![last.meaning; ends.len()];
+    let ((groups, rest), (of_groups, of_rest)) = (ends.as_chunks::<GROUP>(), found.as_chunks_mut::<GROUP>());
+    for (ends, meanings) in groups.iter().zip(of_groups) {
         // Endings come in runs.
-        if last.0 == outline && outline.length <= 16 {
-            return last.1;
+        if last.again(ends, bytes) {
+            *meanings = [last.meaning; GROUP];
+        } else {
+            for (meaning, &end) in meanings.iter_mut().zip(ends) {
+                *meaning = last.next(end, bytes, &mut known, &mut find);
+            }
         }
-        let slot = outline.slot();
-        last = known.slots[slot];
-        if last.0 != outline || (outline.length > 16 && known.names[slot] != name) {
-            last = known.again(name, &mut find);
+    }
+    for (meaning, &end) in of_rest.iter_mut().zip(rest) {
+        *meaning = last.next(end, bytes, &mut known, &mut find);
+    }
+    found
+}
+
+/// The text of a place that is none, which the decoder lets nobody have. A call, so that the place of each text does not
+/// hang on whether the last was one.
+#[cold]
+#[inline(never)]
+fn nowhere() -> &'static [u8] {
+    b""
+}
+
+/// Names looked at together.
+const GROUP: usize = 8;
+
+/// The name before.
+struct Last<O, T> {
+    /// Where the next begins.
+    from: O,
+    length: O,
+    meaning: T,
+}
+
+impl<O: OffsetSizeTrait, T: Copy> Last<O, T> {
+    /// Goes on to the next, which ends there.
+    #[inline(always)]
+    fn next<'a>(
+        &mut self,
+        end: O,
+        bytes: &'a [u8],
+        known: &mut Known<'a, T>,
+        find: &mut impl FnMut(&'a [u8]) -> T,
+    ) -> T {
+        let name = bytes.get(self.from.as_usize()..end.as_usize()).unwrap_or_else(|| nowhere());
+        *self = Last { from: end, length: end - self.from, meaning: known.get(name, find) };
+        self.meaning
+    }
+
+    /// Whether it comes again and again, and then passes over that. Each is then as long, and their bytes are those that lie
+    /// one length before.
+    #[inline(always)]
+    fn again(&mut self, ends: &[O; GROUP], bytes: &[u8]) -> bool {
+        let &Last { from, length, .. } = &*self;
+        let upto = ends[GROUP - 1];
+        if (upto - from).as_usize() != length.as_usize() * GROUP {
+            return false;
         }
-        last.1
-    });
-    found.collect()
+        let mut end = from;
+        let even = ends.iter().fold(true, |even, &this| {
+            end += length;
+            even & (this == end)
+        });
+        let bytes = |from: O, upto: O| bytes.get(from.as_usize()..upto.as_usize());
+        let again = even && bytes(from - length, upto - length) == bytes(from, upto);
+        if again {
+            self.from = upto;
+        }
+        again
+    }
 }
 
 /// Names, and what they stand for. Most are known by their outlines alone, so these lie close together.
@@ -65,14 +138,30 @@ struct Known<'a, T> {
 }
 
 impl<'a, T: Copy> Known<'a, T> {
+    /// With what an empty name stands for.
+    fn new(nothing: T) -> Known<'a, T> {
+        Known { slots: [(Outline::default(), nothing); SLOTS], names: [b""; SLOTS] }
+    }
+
+    #[inline(always)]
+    fn get(&mut self, name: &'a [u8], find: &mut impl FnMut(&'a [u8]) -> T) -> T {
+        let outline = Outline::of(name);
+        let slot = outline.slot();
+        let (known, meaning) = self.slots[slot];
+        if known != outline || (outline.length > 16 && self.names[slot] != name) {
+            return self.again(name, find);
+        }
+        meaning
+    }
+
     #[cold]
     #[inline(never)]
-    fn again(&mut self, name: &'a [u8], find: &mut impl FnMut(&'a [u8]) -> T) -> (Outline, T) {
+    fn again(&mut self, name: &'a [u8], find: &mut impl FnMut(&'a [u8]) -> T) -> T {
         let outline = Outline::of(name);
-        let slot = (outline, find(name));
-        self.slots[outline.slot()] = slot;
+        let meaning = find(name);
+        self.slots[outline.slot()] = (outline, meaning);
         self.names[outline.slot()] = name;
-        slot
+        meaning
     }
 }
 
@@ -95,6 +184,10 @@ pub(super) fn of_each_place<'a, T: Copy>(
 
 #[cfg(test)]
 mod tests {
+    use proptest::collection::vec;
+    use proptest::prelude::*;
+    use proptest::sample::select;
+
     use super::*;
 
     #[test]
@@ -108,10 +201,36 @@ mod tests {
         let places: Vec<usize> = (0..5_000).map(|i| i * i % names.len()).collect();
         let order: Vec<&[u8]> = places.iter().map(|&place| names[place].as_bytes()).collect();
         assert_eq!(of_each(order.iter().copied(), |name| name), order);
+        assert_eq!(packed(&order, |name| name), order);
         assert_eq!(of_each_place(&places, |place| names[place].as_bytes(), |name| name), order);
         // Each of a few is looked up once.
-        let mut looked_up = Vec::new();
-        of_each((0..1_000).map(|row| [b"done".as_slice(), b"gave_up"][row % 2]), |name| looked_up.push(name));
+        let (mut looked_up, mut packed_up) = (Vec::new(), Vec::new());
+        let few: Vec<_> = (0..1_000).map(|row| [b"done".as_slice(), b"gave_up"][row % 2]).collect();
+        of_each(few.iter().copied(), |name| looked_up.push(name));
+        packed(&few, |name| packed_up.push(name.to_vec()));
         assert_eq!(looked_up, [b"".as_slice(), b"done", b"gave_up"]);
+        assert_eq!(packed_up, looked_up);
+    }
+
+    /// With something before and behind, as in a part of a column.
+    fn packed<T: Copy>(names: &[&[u8]], find: impl FnMut(&'static [u8]) -> T) -> Vec<T> {
+        let bytes = [b"before", names.concat().as_slice(), b"behind"].concat();
+        let mut end = 6;
+        let ends = names.iter().map(|name| {
+            end += name.len() as i32;
+            end
+        });
+        let offsets: Vec<i32> = std::iter::once(6).chain(ends).collect();
+        of_each_packed(&offsets, bytes.leak(), find)
+    }
+
+    proptest! {
+        /// Runs, names that go on as the last ended, and empty ones.
+        #[test]
+        fn runs_are_what_they_stand_for(runs in vec((select(vec!["", "a", "aa", "aaa", "ab", "aba", "done", "gave_up"]), 1..30usize), 0..30)) {
+            let names: Vec<&[u8]> =
+                runs.iter().flat_map(|&(name, times)| vec![name.as_bytes(); times]).collect();
+            prop_assert_eq!(packed(&names, |name| name), names);
+        }
     }
 }

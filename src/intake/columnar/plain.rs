@@ -23,6 +23,8 @@ pub(super) struct Plain<'a> {
     bare: bool,
     /// Not a number where there is none.
     times: Cow<'a, [f64]>,
+    /// Whether each has one.
+    dated: bool,
     attempts: Vec<u32>,
     ids: Option<&'a Column<'a>>,
 }
@@ -89,17 +91,29 @@ impl<'a> Plain<'a> {
             ages,
             bare: !elapsed.is_in_seconds(),
             times,
+            dated: column(Field::At).is_some_and(Column::is_full),
             attempts,
             ids: column(Field::Id),
         })
     }
 
-    /// Each row, if it is plain.
+    /// The rows, if each is plain and has a time, and none has an identifier.
     #[inline(always)]
+    pub(super) fn even_rows(&self) -> Option<impl Iterator<Item = Row<'_>>> {
+        // No way out within: many are looked at at once.
+        let plain = self.streams.iter().fold(true, |all, &stream| all & (stream != NONE))
+            & self.endings.iter().fold(true, |all, ending| all & ending.is_some());
+        (plain && self.dated && self.ids.is_none()).then(|| {
+            self.values().map(|(stream, ending, age, at, attempt)| {
+                let wait = Wait::of_sound(age, ending.unwrap_or(Ending::Done), Some(at), attempt);
+                Row { stream: stream as usize, id: None, wait, bare: self.bare }
+            })
+        })
+    }
+
+    /// Each row, if it is plain.
     pub(super) fn rows(&self) -> impl Iterator<Item = Option<Row<'_>>> {
-        let columns =
-            self.streams.iter().zip(&self.endings).zip(&*self.ages).zip(&*self.times).zip(&self.attempts);
-        columns.enumerate().map(|(row, ((((&stream, &ending), &age), &at), &attempt))| {
+        self.values().enumerate().map(|(row, (stream, ending, age, at, attempt))| {
             if stream == NONE {
                 return None;
             }
@@ -111,6 +125,13 @@ impl<'a> Plain<'a> {
             let wait = Wait::of_sound(age, ending?, at, attempt);
             Some(Row { stream: stream as usize, id, wait, bare: self.bare })
         })
+    }
+
+    #[inline(always)]
+    fn values(&self) -> impl Iterator<Item = (u32, Option<Ending>, f64, f64, u32)> {
+        let columns =
+            self.streams.iter().zip(&self.endings).zip(&*self.ages).zip(&*self.times).zip(&self.attempts);
+        columns.map(|((((&stream, &ending), &age), &at), &attempt)| (stream, ending, age, at, attempt))
     }
 }
 
