@@ -16,7 +16,10 @@ use std::num::NonZeroUsize;
 use std::time::Duration;
 
 use criterion::{Criterion, Throughput, criterion_group, criterion_main};
-use otlp::{attribute, histogram, metrics, point, span, traces};
+use otlp::{
+    Buckets, Data, Exponential, ExponentialPoint, Metric, NOON_NANO, attribute, histogram, metrics, point,
+    span, traces,
+};
 use outwait::intake::{Format, Options, Record, Sink, Source, read};
 use prost::Message;
 
@@ -66,6 +69,30 @@ fn points() -> otlp::ExportMetricsServiceRequest {
     metrics("catalogue", (0..2_048).map(one).collect())
 }
 
+/// The most buckets that the SDKs keep, from 13 ms to 13 s.
+fn exponential() -> otlp::ExportMetricsServiceRequest {
+    let one = |i: u64| {
+        let bucket_counts: Vec<u64> = (0..160).map(|bucket| (i * 31 + bucket * 17) % 97).collect();
+        let point = ExponentialPoint {
+            attributes: vec![attribute("http.route", format!("/items/{i}").as_str())],
+            start_time_unix_nano: NOON_NANO - 60_000_000_000,
+            time_unix_nano: NOON_NANO,
+            count: bucket_counts.iter().sum(),
+            scale: 4,
+            positive: Some(Buckets { offset: -100, bucket_counts }),
+            ..ExponentialPoint::default()
+        };
+        let data = Exponential { data_points: vec![point], aggregation_temporality: 1 };
+        Metric {
+            name: "loan".into(),
+            unit: "s".into(),
+            data: Some(Data::Exponential(data)),
+            ..Metric::default()
+        }
+    };
+    metrics("catalogue", (0..256).map(one).collect())
+}
+
 fn page() -> String {
     let mut text = String::from("# HELP http_seconds Waits.\n# TYPE http_seconds histogram\n");
     for route in 0..512 {
@@ -92,15 +119,45 @@ fn ours(bytes: &[u8], format: Format) -> u64 {
     read(vec![source], &options, Sum::default(), &mut |_| ()).unwrap().0.0
 }
 
-/// The spans in JSON, with numbers of 64 bits as texts.
-fn json(request: &otlp::ExportTraceServiceRequest) -> String {
-    let text = |pair: &otlp::KeyValue| match pair.value.clone().and_then(|value| value.value) {
+/// Attributes in JSON.
+fn json_of(attributes: &[otlp::KeyValue]) -> Vec<serde_json::Value> {
+    let one = |pair: &otlp::KeyValue| match pair.value.clone().and_then(|value| value.value) {
         Some(otlp::Value::Text(text)) => serde_json::json!({"key": pair.key, "value": {"stringValue": text}}),
         Some(otlp::Value::Int(number)) => {
             serde_json::json!({"key": pair.key, "value": {"intValue": number.to_string()}})
         }
         _ => serde_json::json!({"key": pair.key}),
     };
+    attributes.iter().map(one).collect()
+}
+
+/// The histograms in JSON, likewise.
+fn json_points(request: &otlp::ExportMetricsServiceRequest) -> String {
+    let one = |metric: &Metric| {
+        let Some(Data::Histogram(data)) = &metric.data else { return serde_json::json!({}) };
+        let points = data.data_points.iter().map(|point| {
+            let counts: Vec<String> = point.bucket_counts.iter().map(u64::to_string).collect();
+            serde_json::json!({
+                "startTimeUnixNano": point.start_time_unix_nano.to_string(), "timeUnixNano": point.time_unix_nano.to_string(),
+                "count": point.count.to_string(), "sum": point.sum, "bucketCounts": counts,
+                "explicitBounds": point.explicit_bounds, "attributes": json_of(&point.attributes),
+            })
+        });
+        let points: Vec<_> = points.collect();
+        serde_json::json!({"name": metric.name, "unit": metric.unit, "histogram": {
+            "aggregationTemporality": data.aggregation_temporality, "dataPoints": points,
+        }})
+    };
+    let metrics: Vec<_> = request.resource_metrics[0].scope_metrics[0].metrics.iter().map(one).collect();
+    serde_json::json!({"resourceMetrics": [{
+        "resource": {"attributes": [{"key": "service.name", "value": {"stringValue": "catalogue"}}]},
+        "scopeMetrics": [{"metrics": metrics}],
+    }]})
+    .to_string()
+}
+
+/// The spans in JSON, with numbers of 64 bits as texts.
+fn json(request: &otlp::ExportTraceServiceRequest) -> String {
     let spans: Vec<serde_json::Value> = request.resource_spans[0].scope_spans[0]
         .spans
         .iter()
@@ -109,7 +166,7 @@ fn json(request: &otlp::ExportTraceServiceRequest) -> String {
                 "traceId": "5b8efff798038103d269b633813fc60c", "spanId": "eee19b7ec3c1b174", "name": span.name,
                 "kind": span.kind, "startTimeUnixNano": span.start_time_unix_nano.to_string(),
                 "endTimeUnixNano": span.end_time_unix_nano.to_string(),
-                "attributes": span.attributes.iter().map(text).collect::<Vec<_>>(), "status": {},
+                "attributes": json_of(&span.attributes), "status": {},
             })
         })
         .collect();
@@ -123,6 +180,7 @@ fn json(request: &otlp::ExportTraceServiceRequest) -> String {
 fn telemetry(c: &mut Criterion) {
     let (spans, points, page) = (spans(), points(), page());
     let (trace, metric, json) = (spans.encode_to_vec(), points.encode_to_vec(), json(&spans));
+    let (exponential, json_points) = (exponential().encode_to_vec(), json_points(&points));
     let mut group = c.benchmark_group("telemetry");
     group.sample_size(20).measurement_time(Duration::from_secs(3)).warm_up_time(Duration::from_secs(1));
     group.throughput(Throughput::Bytes(trace.len() as u64));
@@ -142,6 +200,20 @@ fn telemetry(c: &mut Criterion) {
         b.iter(|| otlp::ExportMetricsServiceRequest::decode(black_box(&metric[..])).unwrap());
     });
     group.bench_function("histograms to waits", |b| b.iter(|| ours(black_box(&metric), Format::OtlpMetrics)));
+    group.throughput(Throughput::Bytes(json_points.len() as u64));
+    group.bench_function("histograms in JSON by serde_json", |b| {
+        b.iter(|| serde_json::from_str::<serde_json::Value>(black_box(&json_points)).unwrap());
+    });
+    group.bench_function("histograms in JSON to waits", |b| {
+        b.iter(|| ours(black_box(json_points.as_bytes()), Format::OtlpMetrics));
+    });
+    group.throughput(Throughput::Bytes(exponential.len() as u64));
+    group.bench_function("exponential histograms by prost", |b| {
+        b.iter(|| otlp::ExportMetricsServiceRequest::decode(black_box(&exponential[..])).unwrap());
+    });
+    group.bench_function("exponential histograms to waits", |b| {
+        b.iter(|| ours(black_box(&exponential), Format::OtlpMetrics));
+    });
     group.throughput(Throughput::Bytes(page.len() as u64));
     group.bench_function("text by prometheus-parse", |b| {
         b.iter(|| {

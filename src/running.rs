@@ -64,16 +64,16 @@ impl Histogram {
     /// # Errors
     /// [`HistogramError`].
     pub fn from_buckets(
-        bounds: &[f64],
+        bounds: Vec<f64>,
         counts: impl IntoIterator<Item = u64>,
     ) -> Result<Histogram, HistogramError> {
         let mut upto = 0u64;
-        let mut sums = Vec::with_capacity(bounds.len());
+        let mut sums = Vec::with_capacity(bounds.len() + 1);
         for count in counts {
             upto = upto.checked_add(count).ok_or(HistogramError::Count)?;
             sums.push(upto);
         }
-        Histogram::from_sums(bounds, &sums, upto)
+        Histogram::from_sums(bounds, sums, upto)
     }
 
     /// From how many waits were no longer than each bound (s), and how many there were. Fewer sums than bounds: the rest
@@ -81,34 +81,39 @@ impl Histogram {
     ///
     /// # Errors
     /// [`HistogramError`].
-    pub fn from_sums(bounds: &[f64], sums: &[u64], total: u64) -> Result<Histogram, HistogramError> {
+    pub fn from_sums(
+        mut bounds: Vec<f64>,
+        mut sums: Vec<u64>,
+        total: u64,
+    ) -> Result<Histogram, HistogramError> {
         if bounds.len() > MAX_BOUNDS {
             return Err(HistogramError::Bounds { bounds: bounds.len() });
         }
         if total > MAX_COUNT {
             return Err(HistogramError::Count);
         }
-        let mut made = Histogram { bounds: Vec::with_capacity(bounds.len()), upto: Vec::new(), total };
+        sums.resize(bounds.len(), total);
         let (mut last, mut before) = (f64::NEG_INFINITY, 0);
-        let sums = sums.iter().copied().chain(std::iter::repeat(total));
-        for (&bound, sum) in bounds.iter().zip(sums) {
+        for (&bound, &sum) in bounds.iter().zip(&sums) {
             if bound.is_nan() || bound <= last {
                 return Err(HistogramError::Order { bound });
             }
             if sum < before || sum > total {
                 return Err(HistogramError::Sinks { bound });
             }
-            (last, before) = (bound, sum);
-            if bound < 0.0 {
-                if sum > 0 {
-                    return Err(HistogramError::Negative { count: sum });
-                }
-            } else if bound <= MAX_AGE {
-                made.bounds.push(bound);
-                made.upto.push(sum);
+            if bound < 0.0 && sum > 0 {
+                return Err(HistogramError::Negative { count: sum });
             }
+            (last, before) = (bound, sum);
         }
-        Ok(made)
+        // They increase, so that those which are ages stand together.
+        let ages = bounds.partition_point(|bound| *bound <= MAX_AGE);
+        let negative = bounds.partition_point(|bound| *bound < 0.0);
+        bounds.truncate(ages);
+        sums.truncate(ages);
+        bounds.drain(..negative);
+        sums.drain(..negative);
+        Ok(Histogram { bounds, upto: sums, total })
     }
 
     /// How many waits there are.
@@ -118,24 +123,21 @@ impl Histogram {
 
     /// The buckets that hold waits: above, up to (s; the last may be infinite), how many.
     pub fn buckets(&self) -> impl Iterator<Item = (f64, f64, u64)> + '_ {
-        let ends = self.bounds.iter().copied().chain([f64::INFINITY]);
-        let sums = self.upto.iter().copied().chain([self.total]);
         let mut from = (0.0, 0);
-        ends.zip(sums).filter_map(move |(upto, sum)| {
+        (0..=self.bounds.len()).filter_map(move |place| {
+            let upto = self.bounds.get(place).copied().unwrap_or(f64::INFINITY);
+            let sum = self.upto.get(place).copied().unwrap_or(self.total);
             let (over, before) = std::mem::replace(&mut from, (upto, sum));
             (sum > before).then_some((over, upto, sum - before))
         })
     }
 
-    /// The waits, a bucket each. A wait of exactly 0 lasted at most [`CLOCK_STEP`].
-    ///
-    /// # Errors
-    /// None for a histogram that was made here; the type is that of [`Wait::between`].
-    pub fn waits(&self, ending: Ending) -> impl Iterator<Item = Result<Wait, WaitError>> + '_ {
+    /// The waits, a bucket each, in all else like the one given. A wait of exactly 0 lasted at most [`CLOCK_STEP`].
+    pub fn waits(&self, like: Wait) -> impl Iterator<Item = Wait> + '_ {
         let least = self.bounds.iter().copied().find(|bound| *bound > 0.0).unwrap_or(CLOCK_STEP);
         self.buckets().map(move |(over, upto, count)| {
             let upto = if upto > 0.0 { upto } else { CLOCK_STEP.min(least) };
-            Wait::between(over, upto, ending)?.with_count(count)
+            like.in_bucket(over, upto, count)
         })
     }
 
@@ -187,7 +189,7 @@ impl Histogram {
             bounds.push(f64::from_bits(u64::from_le_bytes(*bound)));
             sums.push(u64::from_le_bytes(*sum.first_chunk()?));
         }
-        Histogram::from_sums(&bounds, &sums, u64::from_le_bytes(*total)).ok()
+        Histogram::from_sums(bounds, sums, u64::from_le_bytes(*total)).ok()
     }
 }
 
@@ -264,12 +266,10 @@ impl Running {
     pub fn waits<'h>(
         &self,
         counts: &'h Histogram,
-    ) -> impl Iterator<Item = Result<Wait, WaitError>> + use<'h> {
-        let (at, attempt) = (self.at, self.attempt);
-        counts.waits(self.ending).map(move |wait| {
-            let wait = wait?.with_attempt(attempt)?;
-            at.map_or(Ok(wait), |at| wait.with_at(at))
-        })
+    ) -> Result<impl Iterator<Item = Wait> + use<'h>, WaitError> {
+        let like = Wait::between(0.0, f64::INFINITY, self.ending)?.with_attempt(self.attempt)?;
+        let like = self.at.map_or(Ok(like), |at| like.with_at(at))?;
+        Ok(counts.waits(like))
     }
 }
 
@@ -302,7 +302,7 @@ mod tests {
     use proptest::prelude::*;
 
     fn made(bounds: &[f64], counts: &[u64]) -> Histogram {
-        Histogram::from_buckets(bounds, counts.iter().copied()).unwrap()
+        Histogram::from_buckets(bounds.to_vec(), counts.iter().copied()).unwrap()
     }
 
     fn running(at: f64, histogram: Histogram) -> Running {
@@ -358,18 +358,22 @@ mod tests {
     #[test]
     fn what_is_no_histogram() {
         let no = |bounds: &[f64], counts: &[u64]| {
-            Histogram::from_buckets(bounds, counts.iter().copied()).unwrap_err()
+            Histogram::from_buckets(bounds.to_vec(), counts.iter().copied()).unwrap_err()
         };
         assert!(matches!(no(&[2.0, 2.0], &[1, 1, 1]), HistogramError::Order { .. }));
         assert!(matches!(no(&[f64::NAN], &[1, 1]), HistogramError::Order { .. }));
         assert!(matches!(no(&[-1.0, 1.0], &[1, 1, 0]), HistogramError::Negative { count: 1 }));
         assert_eq!(no(&[1.0], &[u64::MAX, 1]), HistogramError::Count);
         assert_eq!(no(&[1.0], &[1 << 63, 0]), HistogramError::Count);
-        assert!(matches!(Histogram::from_sums(&[1.0, 2.0], &[3, 2], 5), Err(HistogramError::Sinks { .. })));
-        assert!(matches!(Histogram::from_sums(&[1.0], &[6], 5), Err(HistogramError::Sinks { .. })));
+        assert!(matches!(
+            Histogram::from_sums(vec![1.0, 2.0], vec![3, 2], 5),
+            Err(HistogramError::Sinks { .. })
+        ));
+        assert!(matches!(Histogram::from_sums(vec![1.0], vec![6], 5), Err(HistogramError::Sinks { .. })));
         // The usual layout of one open SDK begins at 0: what lies there was exactly 0.
         let zero = made(&[0.0, 5.0], &[2, 1, 0]);
-        let waits: Vec<Wait> = zero.waits(Ending::Done).map(Result::unwrap).collect();
+        let like = Wait::new(1.0, Ending::Done).unwrap();
+        let waits: Vec<Wait> = zero.waits(like).collect();
         assert_eq!(waits[0], Wait::between(0.0, CLOCK_STEP, Ending::Done).unwrap().with_count(2).unwrap());
         // Beyond the largest age a bound says nothing.
         assert_eq!(made(&[1.0, 1e300], &[0, 0, 1]).buckets().last(), Some((1.0, f64::INFINITY, 1)));
@@ -389,7 +393,7 @@ mod tests {
                 }
                 let bounds: Vec<f64> = bounds.iter().map(|b| f64::from(*b)).collect();
                 let sums: Vec<u64> = bounds.iter().map(|b| fine[..*b as usize].iter().sum()).collect();
-                let whole = Histogram::from_sums(&bounds, &sums, fine.iter().sum()).unwrap();
+                let whole = Histogram::from_sums(bounds, sums, fine.iter().sum()).unwrap();
                 let read = Running { counts_at_first: true, ..running(1.0 + i as f64, whole) };
                 let growth = read.growth(last.as_ref());
                 prop_assert!(!growth.reset);

@@ -125,6 +125,16 @@ impl Wait {
         Ok(Wait { age, ending, entered: 0.0, attempt: 1, count: 1, at: None })
     }
 
+    /// As many waits like this one, of each of which only `over < T <= upto` is known: bounds that [`Wait::between`] would take,
+    /// and a number that [`Wait::with_count`] would.
+    #[inline]
+    pub(crate) fn in_bucket(self, over: f64, upto: f64, count: u64) -> Wait {
+        debug_assert!(
+            Wait::between(over, upto, self.ending).is_ok_and(|wait| wait.with_count(count).is_ok())
+        );
+        Wait { age: Age::Between { over: or_none(over), upto: upto.max(LEAST_AGE) }, count, ..self }
+    }
+
     /// Sets the age at which watching began (left truncation), s, from 0 to below the age at the end.
     ///
     /// # Errors

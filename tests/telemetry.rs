@@ -1,7 +1,7 @@
 //! Spans and histograms of telemetry become waits: OTLP as protocol buffers and as JSON, whole or in lines.
 //!
-//! Outside checks: the examples of the standard's own repository (opentelemetry-proto, `examples/`), requests that prost
-//! wrote, the standard's data model for exponential buckets. The SDK of another language sends in `tests/daemon`.
+//! Outside checks: the examples that the standards print (opentelemetry-proto, the text format's documentation, OpenMetrics 1.0),
+//! requests that prost wrote, the standard's data model for exponential buckets. The SDK of another language sends in `tests/daemon`.
 #![allow(clippy::unwrap_used, clippy::panic)] // a test may fail
 
 #[path = "support/clients.rs"]
@@ -17,7 +17,8 @@ use otlp::{
     attribute, histogram, metrics, point, span, traces,
 };
 use outwait::intake::{
-    Allowed, Condition, Format, IntakeError, Options, Record, Report, Rules, Sink, Source, Template, read,
+    Allowed, Condition, Exposition, Format, IntakeError, Options, Record, Report, Rules, Sink, Source,
+    Template, read,
 };
 use outwait::wait::{Age, Ending, Wait};
 use proptest::prelude::*;
@@ -74,21 +75,18 @@ fn reasons(report: &Report) -> Vec<(&'static str, &'static str)> {
     report.bad.by_reason.iter().map(|bad| (bad.field, bad.reason)).collect()
 }
 
-/// opentelemetry-proto, examples/trace.json as it stands there (Apache-2.0), with its numbers as numbers.
-const TRACE_JSON: &str = r#"{"resourceSpans": [{"resource": {"attributes": [{"key": "service.name", "value": {"stringValue": "my.service"}}]},
- "scopeSpans": [{"scope": {"name": "my.library", "version": "1.0.0", "attributes": [{"key": "my.scope.attribute", "value": {"stringValue": "some scope attribute"}}]},
- "spans": [{"traceId": "5B8EFFF798038103D269B633813FC60C", "spanId": "EEE19B7EC3C1B174", "parentSpanId": "EEE19B7EC3C1B173",
- "name": "I'm a server span", "startTimeUnixNano": 1544712660000000000, "endTimeUnixNano": 1544712661000000000, "kind": 2,
- "attributes": [{"key": "my.span.attr", "value": {"stringValue": "some value"}}]}]}]}]}"#;
+/// The examples that the standards print, as they stand there (`tests/reference/SOURCES.md`).
+macro_rules! standard {
+    ($name:literal) => {
+        include_str!(concat!("reference/standards/", $name))
+    };
+}
 
-/// The same repository's examples/metrics.json: a sum, a gauge, and a histogram whose unit is not one of time.
-const METRICS_JSON: &str = r#"{"resourceMetrics": [{"resource": {"attributes": [{"key": "service.name", "value": {"stringValue": "my.service"}}]},
- "scopeMetrics": [{"scope": {"name": "my.library", "version": "1.0.0"}, "metrics": [
- {"name": "my.counter", "unit": "1", "sum": {"aggregationTemporality": 1, "isMonotonic": true, "dataPoints": [{"asDouble": 5, "startTimeUnixNano": 1544712660300000000, "timeUnixNano": 1544712660300000000}]}},
- {"name": "my.gauge", "unit": "1", "gauge": {"dataPoints": [{"asDouble": 10, "timeUnixNano": 1544712660300000000}]}},
- {"name": "my.histogram", "unit": "1", "description": "I`m a Histogram", "histogram": {"aggregationTemporality": 1, "dataPoints": [
- {"startTimeUnixNano": 1544712660300000000, "timeUnixNano": 1544712660300000000, "count": 3, "sum": 3, "bucketCounts": [1,1,1], "explicitBounds": [1], "min": 1, "max": 1,
-  "attributes": [{"key": "my.histogram.attr", "value": {"stringValue": "some value"}}]}]}}]}]}]}"#;
+/// A span, with its numbers as numbers.
+const TRACE_JSON: &str = standard!("trace.json");
+
+/// A sum, a gauge and two histograms whose unit is not one of time.
+const METRICS_JSON: &str = standard!("metrics.json");
 
 #[test]
 fn the_standards_own_trace() {
@@ -107,14 +105,26 @@ fn the_standards_own_trace() {
 fn the_standards_own_metrics() {
     let (waits, report) = took(vec![METRICS_JSON.into()], &options(None));
     assert_eq!(report.files[0].format, Some(Format::OtlpMetrics));
-    assert_eq!((waits.len(), report.left_out.not_waits, report.bad.count), (0, 3, 0));
-    // Its histogram as it stands has three counts for two buckets; with a unit of time that is refused, and mended it is read.
-    let timed = METRICS_JSON.replace(r#""my.histogram", "unit": "1""#, r#""my.histogram", "unit": "ms""#);
+    assert_eq!((waits.len(), report.left_out.not_waits, report.bad.count), (0, 4, 0));
+    // With a unit of time both histograms are read. What the exponential one has at zero is above nothing.
+    let timed = METRICS_JSON.replace(r#""unit": "1""#, r#""unit": "s""#);
     let (waits, report) = took(vec![timed.clone().into()], &options(None));
-    assert_eq!((waits.len(), reasons(&report)), (0, vec![("count", "not as many buckets as bounds")]));
-    let mended = timed.replace(r#""explicitBounds": [1]"#, r#""explicitBounds": [1, 2]"#);
+    assert_eq!((report.left_out.not_waits, report.bad.count), (2, 0), "{:?}", report.bad);
+    let of = |waits: &[(String, Wait)], name: &str| {
+        let stream = format!("my.service.{name}");
+        buckets(&waits.iter().filter(|(of, _)| *of == stream).cloned().collect::<Vec<_>>())
+    };
+    assert_eq!(of(&waits, "my.histogram"), [(0.0, 1.0, 1), (1.0, f64::INFINITY, 1)]);
+    assert_eq!(of(&waits, "my.exponential.histogram"), [(0.0, 1e-9, 1), (4.0, 8.0, 2)]);
+    // The first edition of the file had three counts for two buckets. That is refused, and mended it is read.
+    let first = timed
+        .replace("\"bucketCounts\": [1,1]", "\"bucketCounts\": [1,1,1]")
+        .replace("\"count\": 2", "\"count\": 3");
+    let (waits, report) = took(vec![first.clone().into()], &options(None));
+    assert_eq!((waits.len(), reasons(&report)), (2, vec![("count", "not as many buckets as bounds")]));
+    let mended = first.replace(r#""explicitBounds": [1]"#, r#""explicitBounds": [1, 2]"#);
     let (waits, _) = took(vec![mended.into()], &options(None));
-    assert_eq!(buckets(&waits), [(0.0, 0.001, 1), (0.001, 0.002, 1), (0.002, f64::INFINITY, 1)]);
+    assert_eq!(of(&waits, "my.histogram"), [(0.0, 1.0, 1), (1.0, 2.0, 1), (2.0, f64::INFINITY, 1)]);
 }
 
 /// Endings by the published conventions for `error.type`, gRPC status and span kinds.
@@ -454,31 +464,8 @@ fn lines_of_documents() {
     }
 }
 
-/// The histogram of the text format's own documentation (prometheus.io/docs/instrumenting/exposition_formats; from memory), with what
-/// stands around it there.
-const TEXT: &str = r#"# HELP http_requests_total The total number of HTTP requests.
-# TYPE http_requests_total counter
-http_requests_total{method="post",code="200"} 1027 1395066363000
-# Minimalistic line:
-metric_without_timestamp_and_labels 12.47
-
-# A histogram, which has a pretty complex representation in the text format:
-# HELP http_request_duration_seconds A histogram of the request duration.
-# TYPE http_request_duration_seconds histogram
-http_request_duration_seconds_bucket{le="0.05"} 24054
-http_request_duration_seconds_bucket{le="0.1"} 33444
-http_request_duration_seconds_bucket{le="0.2"} 100392
-http_request_duration_seconds_bucket{le="0.5"} 129389
-http_request_duration_seconds_bucket{le="1"} 133988
-http_request_duration_seconds_bucket{le="+Inf"} 144320
-http_request_duration_seconds_sum 53423
-http_request_duration_seconds_count 144320
-
-# TYPE rpc_duration_seconds summary
-rpc_duration_seconds{quantile="0.01"} 3102
-rpc_duration_seconds_sum 1.7560473e+07
-rpc_duration_seconds_count 2693
-"#;
+/// A whole page in the text format.
+const TEXT: &str = standard!("text_format.txt");
 
 fn scraped(texts: &[&str]) -> (Vec<(String, Wait)>, Report) {
     let bodies = texts.iter().map(|text| text.as_bytes().to_vec()).collect();
@@ -501,7 +488,7 @@ fn by_library(page: &str, expected: &[(f64, f64, u64)]) {
 #[test]
 fn the_text_formats_own_histogram() {
     let (waits, report) = took(vec![TEXT.into()], &options(None));
-    assert_eq!((report.files[0].format, report.bad.count, report.lines), (Some(Format::MetricsText), 0, 22));
+    assert_eq!((report.files[0].format, report.bad.count, report.lines), (Some(Format::MetricsText), 0, 36));
     let inf = f64::INFINITY;
     let expected = [
         (0.0, 0.05, 24_054),
@@ -529,21 +516,49 @@ fn the_text_formats_own_histogram() {
     }
 }
 
-/// The histogram of the OpenMetrics specification ("Histogram" and "Exemplars", from memory): times in seconds, a start, exemplars.
+/// Examples of the OpenMetrics specification. Their histograms have no unit, which whoever reads them has to say.
 #[test]
-fn the_histogram_of_open_metrics() {
-    let text = "# TYPE foo_seconds histogram\n# UNIT foo_seconds seconds\n\
-        foo_seconds_bucket{le=\"0.0\"} 0 1520879607.5\nfoo_seconds_bucket{le=\"1e-05\"} 0 1520879607.5\n\
-        foo_seconds_bucket{le=\"0.01\"} 0 1520879607.5\n\
-        foo_seconds_bucket{le=\"0.1\"} 8 1520879607.5 # {} 0.054\n\
-        foo_seconds_bucket{le=\"1.0\"} 11 1520879607.5 # {trace_id=\"KOO5S4vxi0o\"} 0.67\n\
-        foo_seconds_bucket{le=\"10.0\"} 17 1520879607.5 # {trace_id=\"oHg5SJYRHA0\"} 9.8 1520879607.789\n\
-        foo_seconds_bucket{le=\"+Inf\"} 17 1520879607.5\nfoo_seconds_count 17 1520879607.5\n\
-        foo_seconds_sum 324789.3 1520879607.5\nfoo_seconds_created 1520430000.123 1520879607.5\n# EOF\n";
-    let (waits, report) = took(vec![text.into()], &options(None));
+fn the_histograms_of_open_metrics() {
+    let inf = f64::INFINITY;
+    let seconds = Exposition { unit: Some(1.0), ..Exposition::default() };
+    let seconds = Options { exposition: seconds, ..options(Some(Format::MetricsText)) };
+    let read = |text: &str| {
+        let (waits, report) = took(vec![text.into()], &seconds);
+        assert_eq!(report.bad.count, 0, "{:?}", report.bad);
+        (buckets(&waits), report.left_out.not_waits)
+    };
+    // A wide variety of bounds; of two that are beyond all ages there is nothing to tell.
+    let histogram = standard!("open_metrics_histogram.txt");
+    let expected =
+        [(1e-5, 1e-4, 5), (1e-4, 0.1, 3), (0.1, 1.0, 2), (1.0, 10.0, 1), (1e5, 1e6, 4), (1e6, inf, 2)];
+    assert_eq!(read(histogram), (expected.into(), 0));
+    assert_eq!(took(vec![histogram.into()], &options(None)).0, [], "without a unit");
+    let exemplars = standard!("open_metrics_exemplars.txt");
+    assert_eq!(read(exemplars).0, [(0.01, 0.1, 8), (0.1, 1.0, 3), (1.0, 10.0, 6)]);
+    by_library(exemplars, &read(exemplars).0);
+    // Values that are there, not waits that have ended; summaries; counters.
+    assert_eq!(read(standard!("open_metrics_gauge_histogram.txt")), (vec![], 7));
+    assert_eq!(read(standard!("open_metrics_complete.txt")), (vec![], 8));
+}
+
+/// The same with what the standard allows beside: a unit, and times, which are seconds.
+#[test]
+fn times_of_open_metrics() {
+    let timed = |line: &str| match line {
+        "# TYPE foo histogram" => "# TYPE foo_seconds histogram\n# UNIT foo_seconds seconds\n".to_owned(),
+        line => {
+            let (sample, exemplar) = line.split_once(" #").unwrap_or((line, ""));
+            let sample = sample.replacen("foo", "foo_seconds", 1);
+            let exemplar = if exemplar.is_empty() { String::new() } else { format!(" #{exemplar}") };
+            format!("{sample} 1520879607.5{exemplar}\n")
+        }
+    };
+    let text: String = standard!("open_metrics_exemplars.txt").lines().map(timed).collect();
+    let text = format!("{text}# EOF\n");
+    let (waits, report) = took(vec![text.clone().into()], &options(None));
     assert_eq!(report.bad.count, 0, "{:?}", report.bad);
     assert_eq!(buckets(&waits), [(0.01, 0.1, 8), (0.1, 1.0, 3), (1.0, 10.0, 6)]);
-    by_library(text, &buckets(&waits));
+    by_library(&text, &buckets(&waits));
     assert!(waits.iter().all(|(_, wait)| wait.at() == Some(1_520_879_607.5)));
 }
 

@@ -230,7 +230,7 @@ impl Open {
         };
         let bounds: Vec<f64> = buckets.iter().map(|(bound, _)| super::otlp::scaled(*bound, unit)).collect();
         let sums: Vec<u64> = buckets.iter().map(|(_, sum)| *sum).collect();
-        Ok((Histogram::from_sums(&bounds, &sums, total)?, self.created))
+        Ok((Histogram::from_sums(bounds, sums, total)?, self.created))
     }
 }
 

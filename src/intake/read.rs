@@ -426,8 +426,8 @@ fn grown<S: Sink>(
         left_out.outside_window += counts.total();
         return Ok(());
     }
-    for wait in running.waits(counts) {
-        sink.take(&Record { stream: &running.stream, place, id: None, wait: wait? });
+    for wait in running.waits(counts)? {
+        sink.take(&Record { stream: &running.stream, place, id: None, wait });
         *waits += 1;
     }
     Ok(())

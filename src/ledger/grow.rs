@@ -58,7 +58,7 @@ pub(super) fn settle<E>(
         grown.waits = grown.waits.saturating_add(counts.total());
         let hours = grown.streams.entry(&running.stream).or_default();
         // A histogram's buckets are waits, and its time was checked with it.
-        for wait in running.waits(&counts).flatten() {
+        for wait in running.waits(&counts).into_iter().flatten() {
             tally::file(&wait, wait.at().unwrap_or(now), hours);
         }
     }

@@ -651,7 +651,7 @@ fn reading(key: u8, at: f64, counts: [u64; 2]) -> Running {
         at: Some(at),
         started: None,
         counts_at_first: true,
-        histogram: Histogram::from_buckets(&[1.0], counts).unwrap(),
+        histogram: Histogram::from_buckets(vec![1.0], counts).unwrap(),
     }
 }
 

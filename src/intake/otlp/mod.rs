@@ -5,6 +5,7 @@
 //! added where it counts since a start. A line here is a span or a data point.
 
 mod answer;
+mod buckets;
 mod json;
 mod message;
 mod wire;
@@ -13,16 +14,18 @@ use std::borrow::Cow;
 
 use serde::Deserialize;
 
-use self::message::{Attribute, Buckets, Metric, Origin, Point, Shape, Span, Take, Value};
+use self::buckets::histogram;
+use self::message::{Attribute, Metric, Origin, Point, Span, Take, Value};
 use super::Sink;
-use super::collect::Collector;
+use super::collect::{Collector, Row};
 use super::flaw::Flaw;
 use super::record::Record;
 use super::rules::{Facts, Rules};
 use super::telemetry::TelemetryFlaw;
-use crate::running::{CLOCK_STEP, Histogram, LONGEST_FIRST, Running, SeriesKey};
-use crate::wait::{Ending, MAX_AGE, Wait};
+use crate::running::{CLOCK_STEP, LONGEST_FIRST, Running, SeriesKey};
+use crate::wait::{Ending, Wait};
 
+pub(super) use self::buckets::scaled;
 pub use answer::{Answer, Encoding};
 
 /// What a body holds.
@@ -176,10 +179,10 @@ impl<S: Sink> Harvest<'_, '_, S> {
         };
         match metric.temporality {
             1 => {
-                for wait in histogram.waits(ending) {
-                    let wait = wait?.with_attempt(attempt)?.with_at(at)?;
-                    self.collector.whole(Record { stream, place: 0, id: None, wait }, false)?;
-                }
+                let stream = self.collector.enter(stream)?;
+                let like = Wait::between(0.0, f64::INFINITY, ending)?.with_attempt(attempt)?.with_at(at)?;
+                let rows = histogram.waits(like).map(|wait| Row { stream, id: None, wait, bare: false });
+                self.collector.rows(&mut rows.map(Some));
                 Ok(())
             }
             2 => {
@@ -247,86 +250,6 @@ fn unit(name: &str) -> Option<f64> {
         "d" | "days" => 86_400.0,
         _ => return None,
     })
-}
-
-fn histogram(point: &Point<'_>, unit: f64) -> Result<Histogram, TelemetryFlaw> {
-    let made = match &point.shape {
-        Shape::Explicit { bounds, counts } => {
-            let fits = counts.len() == bounds.len() + 1 || (counts.is_empty() && point.count == 0);
-            if !fits {
-                return Err(TelemetryFlaw::Buckets { counts: counts.len(), bounds: bounds.len() });
-            }
-            let bounds: Vec<f64> = bounds.iter().map(|bound| scaled(*bound, unit)).collect();
-            Histogram::from_buckets(&bounds, counts.iter().copied())?
-        }
-        Shape::Exponential { scale, zeros, zero_upto, positive, negative } => {
-            let below: u128 = negative.counts.iter().map(|&count| u128::from(count)).sum();
-            if below > 0 {
-                let count = u64::try_from(below).unwrap_or(u64::MAX);
-                return Err(crate::running::HistogramError::Negative { count }.into());
-            }
-            exponential(*scale, *zeros, *zero_upto, positive, unit)?
-        }
-    };
-    if made.total() != point.count {
-        return Err(TelemetryFlaw::Sum { buckets: made.total(), count: point.count });
-    }
-    Ok(made)
-}
-
-/// A bound in seconds. Units are whole powers of ten of each other, and a quotient is rounded once: 5 ms is 0.005 s.
-pub(super) fn scaled(bound: f64, unit: f64) -> f64 {
-    if unit < 1.0 { bound / (1.0 / unit).round() } else { bound * unit }
-}
-
-/// Bucket `i` holds what is above `base^i` and up to `base^(i+1)`, with `base = 2^(2^-scale)` (the standard's data model,
-/// "ExponentialHistogram").
-fn exponential(
-    scale: i32,
-    zeros: u64,
-    zero_upto: f64,
-    positive: &Buckets,
-    unit: f64,
-) -> Result<Histogram, TelemetryFlaw> {
-    // Beyond these a bucket is finer than a double can tell, or wider than all that it can.
-    if !(-11..=52).contains(&scale) {
-        return Err(TelemetryFlaw::Scale { scale });
-    }
-    if !(0.0..=MAX_AGE).contains(&zero_upto) {
-        return Err(TelemetryFlaw::ZeroThreshold { zero_upto });
-    }
-    // The same bound has the same number on every scale, so that a series may change its scale.
-    let bound = |index: i64| {
-        let (mut index, mut scale) = (index, scale);
-        while index != 0 && index % 2 == 0 && scale > -11 {
-            (index, scale) = (index / 2, scale - 1);
-        }
-        (index as f64 * f64::from(-scale).exp2()).exp2()
-    };
-    let (mut bounds, mut counts) = (vec![scaled(zero_upto, unit)], vec![zeros]);
-    let first = i64::from(positive.offset);
-    let mut pending = 0u64;
-    for (index, &count) in (first..).zip(&positive.counts) {
-        let (over, upto) = (scaled(bound(index), unit), scaled(bound(index + 1), unit));
-        if upto <= *bounds.last().unwrap_or(&0.0) {
-            // Inside the zero region, or too fine to be told from the one before.
-            let last = counts.last_mut().ok_or(TelemetryFlaw::Scale { scale })?;
-            *last = last.checked_add(count).ok_or(crate::running::HistogramError::Count)?;
-            continue;
-        }
-        if index == first && over > *bounds.last().unwrap_or(&0.0) && over <= MAX_AGE {
-            bounds.push(over);
-            counts.push(0);
-        }
-        if upto > MAX_AGE {
-            pending = pending.checked_add(count).ok_or(crate::running::HistogramError::Count)?;
-        } else {
-            bounds.push(upto);
-            counts.push(count);
-        }
-    }
-    counts.push(pending);
-    Ok(Histogram::from_buckets(&bounds, counts)?)
 }
 
 /// What tells a series from all others. Attributes count in any order.

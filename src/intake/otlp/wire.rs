@@ -151,8 +151,18 @@ impl<'a> Wire<'a> {
         match self {
             Wire::Varint(value) => push(take, value, most),
             Wire::Bytes(mut bytes) => {
+                take.reserve(bytes.len().min(most));
                 while !bytes.is_empty() {
-                    push(take, varint(&mut bytes)?, most)?;
+                    // Most are below 128, a byte each.
+                    if let Some((eight, rest)) = bytes.split_first_chunk::<8>()
+                        && u64::from_le_bytes(*eight) & 0x8080_8080_8080_8080 == 0
+                        && take.len() + 8 <= most
+                    {
+                        take.extend(eight.map(u64::from));
+                        bytes = rest;
+                    } else {
+                        push(take, varint(&mut bytes)?, most)?;
+                    }
                 }
                 Ok(())
             }
