@@ -163,6 +163,15 @@ pub fn count(value: f64) -> String {
     out
 }
 
+/// As [`number`], with the thousands set apart: `"2,360"`.
+pub fn amount(value: f64) -> String {
+    let rounded = rounded(value, 3);
+    match rounded.abs() {
+        much @ 1e3..1e15 => format!("{}{}", if rounded < 0.0 { "-" } else { "" }, count(much)),
+        _ => number(value),
+    }
+}
+
 fn rounded(value: f64, digits: i32) -> f64 {
     if value == 0.0 {
         return 0.0;
@@ -215,6 +224,10 @@ mod tests {
         assert_eq!(number(0.012345), "0.0123");
         assert_eq!(number(9.999), "10.0");
         assert_eq!(number(1.0e9), "1.00e9");
+        assert_eq!(
+            [amount(999.6), amount(-2_361.2), amount(7_130_400.0)],
+            ["1,000", "-2,360", "7,130,000"].map(str::to_owned)
+        );
         assert_eq!(count(1_204_311.0), "1,204,311");
         assert_eq!(time(1_764_547_200.25).as_deref(), Some("2025-12-01T00:00:00Z"));
         assert_eq!(time(1e300), None);

@@ -84,7 +84,7 @@ fn time(time: Option<GiveUp>) -> String {
 }
 
 fn worth(row: &Row) -> String {
-    row.worth_per_day.map_or("-".into(), |worth| format!("{}{} a day", plus(worth), say::number(worth)))
+    row.worth_per_day.map_or("-".into(), |worth| format!("{}{} a day", plus(worth), say::amount(worth)))
 }
 
 fn hours(row: &Row) -> String {

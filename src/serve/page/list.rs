@@ -299,8 +299,7 @@ pub(super) fn marks(advice: &Advice) -> Marks {
 fn words(loss: Loss) -> String {
     match loss.per_day {
         0.0 => "nothing".into(),
-        much if much >= 1_000.0 => format!("{} {} a day", say::count(much), loss.unit),
-        some => format!("{} {} a day", say::number(some), loss.unit),
+        some => format!("{} {} a day", say::amount(some), loss.unit),
     }
 }
 

@@ -107,7 +107,7 @@ fn content(shared: &Shared, week: Weekly, left: Left) -> Content {
             old: it.old_s.map_or_else(String::new, time),
             new: it.new_s.map_or_else(String::new, time),
             because: it.because.clone(),
-            worth: it.worth_per_day.map_or_else(String::new, |worth| format!("{} a day", say::number(worth))),
+            worth: it.worth_per_day.map_or_else(String::new, |worth| format!("{} a day", say::amount(worth))),
             hours: it.hours_per_day.filter(|hours| *hours > 0.0).map_or_else(String::new, |hours| {
                 format!("{} of waiting a day", say::duration(3_600.0 * hours))
             }),
