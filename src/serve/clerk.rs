@@ -12,8 +12,8 @@ use super::shared::Shared;
 /// How often it looks.
 const NAP: Duration = Duration::from_millis(250);
 
-/// Starts the thread.
-pub(super) fn start(shared: Arc<Shared>) -> io::Result<JoinHandle<()>> {
+/// Starts the thread. It leaves its diary to whoever stops it: the advisers may have said something since.
+pub(super) fn start(shared: Arc<Shared>) -> io::Result<JoinHandle<Diary>> {
     Builder::new().name("clerk".into()).spawn(move || {
         let mut diary = Diary::default();
         while !shared.is_stopping() {
@@ -21,5 +21,6 @@ pub(super) fn start(shared: Arc<Shared>) -> io::Result<JoinHandle<()>> {
             diary.write(&shared);
             std::thread::sleep(NAP);
         }
+        diary
     })
 }

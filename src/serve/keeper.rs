@@ -76,7 +76,7 @@ impl Counter {
     }
 }
 
-/// Starts the thread. It ends when it has been told to stop and nothing is left to be filed.
+/// Starts the thread. It ends when nobody is left who could hand in a batch and nothing is left to be filed.
 pub(super) fn start(ledger: SqliteLedger, queue: Queue, shared: Arc<Shared>) -> io::Result<JoinHandle<()>> {
     Builder::new()
         .name("keeper".into())
@@ -100,7 +100,7 @@ impl Keeper {
                     group.extend(queue.try_iter().take(GROUP - 1));
                     self.commit(group);
                 }
-                Err(RecvTimeoutError::Timeout) if self.shared.is_stopping() => break,
+                Err(RecvTimeoutError::Timeout) if self.shared.is_all_handed_in() => break,
                 Err(RecvTimeoutError::Timeout) => {}
                 Err(RecvTimeoutError::Disconnected) => break,
             }

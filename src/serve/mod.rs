@@ -35,6 +35,7 @@ mod weekly;
 use std::future::Future;
 use std::net::SocketAddr;
 use std::sync::Arc;
+use std::thread::JoinHandle;
 
 use tokio::net::TcpListener;
 
@@ -46,6 +47,7 @@ pub use tls::{TlsError, read_certificates, read_tls};
 pub use weekly::{Runs, Webhook};
 
 use crate::ledger::{Ledger, LedgerError, SqliteLedger};
+use diary::Diary;
 use settling::Settling;
 use shared::Shared;
 
@@ -75,8 +77,9 @@ pub enum ServeError {
 /// A daemon that stands ready: the ledger is open, what it holds is known.
 pub struct Daemon {
     shared: Arc<Shared>,
-    threads: Vec<std::thread::JoinHandle<()>>,
-    keeper: std::thread::JoinHandle<()>,
+    threads: Vec<JoinHandle<()>>,
+    clerk: JoinHandle<Diary>,
+    keeper: JoinHandle<()>,
 }
 
 impl Daemon {
@@ -101,7 +104,7 @@ impl Daemon {
             threads.push(adviser.map_err(refused("a thread"))?);
         }
         threads.push(reload::watch(Arc::clone(&shared)).map_err(refused("a thread"))?);
-        threads.push(clerk::start(Arc::clone(&shared)).map_err(refused("a thread"))?);
+        let clerk = clerk::start(Arc::clone(&shared)).map_err(refused("a thread"))?;
         threads.push(scrape::start(Arc::clone(&shared)).map_err(refused("a thread"))?);
         threads.push(weekly::start(Arc::clone(&shared)).map_err(refused("a thread"))?);
         for followed in &shared.config.follow {
@@ -110,7 +113,7 @@ impl Daemon {
         }
         threads.push(follow::follow_policy(Arc::clone(&shared)).map_err(refused("a thread"))?);
         shared.desk.at_once(shared.streams());
-        Ok(Daemon { shared, threads, keeper })
+        Ok(Daemon { shared, threads, clerk, keeper })
     }
 
     /// Reads the policy file again now, as a hang-up signal asks for.
@@ -147,12 +150,18 @@ impl Daemon {
         listener: TcpListener,
         shutdown: impl Future<Output = ()> + Send,
     ) -> Result<(), ServeError> {
-        let Daemon { shared, threads, keeper } = self;
+        let Daemon { shared, threads, clerk, keeper } = self;
         let router = http::router(&shared);
         let outcome = connections::accept(listener, router, &shared, shutdown).await;
         shared.stop();
         let ended = tokio::task::spawn_blocking(move || {
-            let lost = threads.into_iter().chain([keeper]).filter_map(|thread| thread.join().err()).count();
+            let mut lost = threads.into_iter().filter_map(|thread| thread.join().err()).count();
+            match clerk.join() {
+                Ok(mut diary) => diary.write(&shared),
+                Err(_) => lost += 1,
+            }
+            shared.all_handed_in();
+            lost += usize::from(keeper.join().is_err());
             if lost > 0 {
                 tracing::error!(lost, "threads ended by a panic");
             }

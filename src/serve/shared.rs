@@ -51,6 +51,8 @@ pub(super) struct Shared {
     /// When something was filed last, Unix seconds as bits.
     filed: AtomicU64,
     stopping: AtomicBool,
+    /// Whether the last batch has been handed in.
+    all_handed_in: AtomicBool,
 }
 
 // No code panics while it holds one of these locks; were it so, what is there is still the best there is.
@@ -84,6 +86,7 @@ impl Shared {
             examples: Mutex::default(),
             filed: AtomicU64::new(0),
             stopping: AtomicBool::new(false),
+            all_handed_in: AtomicBool::new(false),
             config,
         };
         Ok((Arc::new(shared), queue))
@@ -112,6 +115,16 @@ impl Shared {
     pub(super) fn stop(&self) {
         self.stopping.store(true, Ordering::SeqCst);
         self.desk.stop();
+    }
+
+    /// Whether the keeper may end when it has filed what it has.
+    pub(super) fn is_all_handed_in(&self) -> bool {
+        self.all_handed_in.load(Ordering::SeqCst)
+    }
+
+    /// Nobody but the keeper is left.
+    pub(super) fn all_handed_in(&self) {
+        self.all_handed_in.store(true, Ordering::SeqCst);
     }
 
     /// The policy in force and how it stands.

@@ -360,8 +360,10 @@ fn the_history_goes_back_as_far_as_the_ledger() {
     assert!(days[1]["afterwards"] == true && days[0]["afterwards"] == false);
     let page = look(&first, "/stream/courier.slot").text().to_owned();
     assert!(page.contains("On 2026-11-09") && page.matches("worked out later").count() >= 3, "{page}");
-    // A day is written down within a moment of its first advice.
-    std::thread::sleep(std::time::Duration::from_millis(1_200));
+    // A day whose last advice has just been made is written down before the daemon ends.
+    let more = format!("{{\"stream\":\"lender.reply\",\"elapsed\":3,\"at\":{}}}\n", NOON - 60.0);
+    assert_eq!(post(first.address, more.as_bytes()).status, 200);
+    advised(&first, "lender.reply");
     first.stop();
     drop(first);
     let second = House::on(&folder.path().join("data"), signing(folder.path())).unwrap();
@@ -372,4 +374,6 @@ fn the_history_goes_back_as_far_as_the_ledger() {
         (again["days"][0]["day"] == "2026-12-01").then_some(again)
     });
     assert_eq!(again["days"].as_array().unwrap()[1..], days[..]);
+    let other = history(&second, "lender.reply");
+    assert!(other["days"].as_array().unwrap().iter().any(|day| day["day"] == "2026-11-30"), "{other}");
 }
