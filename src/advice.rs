@@ -305,8 +305,8 @@ pub struct Decision {
 pub struct BucketCost {
     /// Share of endings that are known by a bucket only.
     pub share: f64,
-    /// Share of the best rate that the advised time loses under the reading that is worse for it; absent without an advised
-    /// time.
+    /// Share of the best rate that the advised time (or waiting it out) loses under the reading that is worse for it; absent
+    /// without either.
     pub cost: Option<f64>,
     /// Between which ages the best give-up time of these waits lies, wherever in their buckets they ended, s.
     pub best_between_s: Option<[f64; 2]>,

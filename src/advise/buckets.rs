@@ -32,13 +32,16 @@ const MOST_CELLS: usize = 400;
 /// The least age that an ending at the lower end of a first bucket has, as a share of its upper end.
 const LEAST: f64 = 1e-6;
 
-/// What the buckets among these endings leave open; `None` where hardly any ending is known by one. `advised`: s.
+/// What the buckets among these endings leave open; `None` where hardly any ending is known by one. `advised`: the time to
+/// give up after, or to hold on until, s.
 pub(super) fn read(
     cells: &Cells,
     entry: &Entry,
+    bounds: Option<&Bounds>,
     prices: Option<(Worth, Retry)>,
     advised: Option<f64>,
 ) -> Option<BucketCost> {
+    let entry = &with_floor(entry, bounds);
     let weight = |e: &EventCell| e.done + e.failed;
     let all: f64 = cells.events.iter().map(weight).sum();
     let wide: f64 = cells.events.iter().filter(|e| is_wide(e)).map(weight).sum();
@@ -67,6 +70,16 @@ pub(super) fn read(
         }
     }
     Some(cost)
+}
+
+/// The same entry, with the floor that was assumed for want of any cost of a restart. That floor is no question to the data:
+/// without it, a first bucket whose endings may all lie at 0 would make the earliest give-up endlessly good.
+fn with_floor(entry: &Entry, bounds: Option<&Bounds>) -> Entry {
+    let mut entry = entry.clone();
+    if let Some(bounds) = bounds.filter(|bounds| bounds.free_restart) {
+        entry.guard.floor = Some(bounds.floor);
+    }
+    entry
 }
 
 /// A bucket that holds all, and of which one end is open.
@@ -345,7 +358,7 @@ mod tests {
     fn cost(waits: &[Wait], advised: Option<f64>) -> BucketCost {
         let entry = entry();
         let prices = super::super::judge::prices(&entry);
-        read(&Cells::from_waits(waits), &entry, prices, advised).unwrap()
+        read(&Cells::from_waits(waits), &entry, None, prices, advised).unwrap()
     }
 
     /// The best give-up time of the exact ages and its rate, by trying all of them.
@@ -429,13 +442,41 @@ mod tests {
         }
     }
 
+    /// Without a policy a restart is free, and the advice may be to hold on. Of both the width is told, and bounds that help.
+    #[test]
+    fn free_restarts_and_holding_on_have_their_width_told() {
+        for (counts, action) in
+            [([1_000, 1_000, 1_000, 0], Action::WaitItOut), ([1_100, 1_080, 1_040, 10], Action::GiveUpAfter)]
+        {
+            let buckets = [(0.0, 0.05), (0.05, 0.1), (0.1, 0.5), (0.5, f64::INFINITY)];
+            let mut tally = Tally::default();
+            for ((over, upto), count) in buckets.into_iter().zip(counts) {
+                (0..count).for_each(|_| tally.add(&Wait::between(over, upto, Ending::Done).unwrap()));
+            }
+            let advice = advise(&Case::new("desk", &tally), &Entry::without_policy(), 1);
+            assert_eq!(advice.advice.action, action);
+            let floor = advice.advice.floor_s.unwrap();
+            let found = advice.advice.buckets.unwrap();
+            let [from, _] = found.best_between_s.unwrap();
+            // Nobody asks for times below the floor, so what the buckets hide there costs nothing.
+            assert!(from >= floor, "{from} is below {floor}");
+            assert!(found.cost.is_some_and(|cost| cost > 0.0 && cost < 0.9), "{found:?}");
+            assert!(!found.add_bounds_s.is_empty(), "{found:?}");
+            assert!(advice.cautions.iter().any(|c| c.code == "wide_buckets"), "{:?}", advice.cautions);
+        }
+    }
+
     #[test]
     fn exact_ages_cost_nothing() {
         let waits: Vec<Wait> = ages(500).iter().map(|&t| Wait::new(t, Ending::Done).unwrap()).collect();
         let prices = super::super::judge::prices(&entry());
-        assert_eq!(read(&Cells::from_waits(&waits), &entry(), prices, Some(1.0)), None);
+        assert_eq!(read(&Cells::from_waits(&waits), &entry(), None, prices, Some(1.0)), None);
         let mut tally = Tally::default();
         ages(20_000).iter().for_each(|&t| tally.add(&Wait::new(t, Ending::Done).unwrap()));
-        assert_eq!(read(&tally.first_attempts(), &entry(), prices, Some(1.0)), None, "a tally's own bins");
+        assert_eq!(
+            read(&tally.first_attempts(), &entry(), None, prices, Some(1.0)),
+            None,
+            "a tally's own bins"
+        );
     }
 }

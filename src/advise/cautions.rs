@@ -270,15 +270,21 @@ fn law_shifted(shift: &Shift) -> Caution {
 fn few_waits(entry: &Entry, advice: &Advice, settled: &Settled) -> Option<Caution> {
     let done = advice.evidence.done as f64;
     let thin = done < THIN * f64::from(entry.guard.evidence);
+    let bucketed = !thin && advice.advice.buckets.as_ref().is_some_and(|buckets| buckets.share > 0.5);
+    let (little, more) = if bucketed {
+        ("known by their buckets leave much open", "with more waits or narrower buckets")
+    } else {
+        ("are few", "with more waits")
+    };
     (thin || settled.regret.percentile_95 > 0.1).then(|| {
         caution(
             "few_waits",
             format!(
-                "{} completions are few: what the advised time loses may come to {} of what could be earned",
+                "{} completions {little}: what the advised time loses may come to {} of what could be earned",
                 say::count(done),
                 say::percent(settled.regret.percentile_95)
             ),
-            "move in the advised direction by part of the way, and weigh again with more waits",
+            format!("move in the advised direction by part of the way, and weigh again {more}"),
         )
     })
 }

@@ -150,7 +150,11 @@ pub fn study(case: &Case<'_>, entry: &Entry, seed: u64) -> Study {
         Some(settled) => Some((settled.worth, settled.retry)),
         None => judge::prices(entry),
     };
-    advice.advice.buckets = buckets::read(&cells, entry, prices, advice.advice.give_up_after_s);
+    let held = match advice.advice.action {
+        Action::WaitItOut => advice.advice.ceiling_s,
+        _ => advice.advice.give_up_after_s,
+    };
+    advice.advice.buckets = buckets::read(&cells, entry, bounds.as_ref(), prices, held);
     let shift = case.periods.and_then(|(earlier, latest)| {
         let bounds = bounds.as_ref()?;
         // Most windows have one period only.
