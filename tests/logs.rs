@@ -144,7 +144,7 @@ fn columns_and_keys_by_other_names() {
     let Err(IntakeError::Header { source, .. }) = missing else { panic!("no error") };
     assert_eq!(
         source.to_string(),
-        "there is no column \"duration_ms\"; the nearest is \"duration\", and a field was to be read from it"
+        "there is no column \"duration_ms\"; the nearest is \"duration\", and a field was to be read from it; map one that is there"
     );
 }
 

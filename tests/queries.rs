@@ -86,7 +86,10 @@ fn a_sqlite_file_is_asked_and_not_changed() {
         assert!(code == 3 && error.contains(told), "{sql}: {code} {error}");
     }
     let (code, _, error) = outwait(&arguments("sqlite:/nowhere/waits", "SELECT 1"));
-    assert!(code == 3 && error.contains("cannot be reached"), "{code} {error}");
+    assert!(
+        code == 3 && error.contains("cannot be reached") && error.contains("\n  see whether"),
+        "{code} {error}"
+    );
     // Rows are refused as lines are.
     let (code, _, error) =
         outwait(&arguments(&address, "SELECT service, -took AS took, status, at FROM calls LIMIT 3"));

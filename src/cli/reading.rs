@@ -161,6 +161,10 @@ fn failure(error: IntakeError) -> Failure {
         IntakeError::Read { .. } => {
             Failure::new(Exit::System, error).with_remedy("see to the disk or the pipe, and start again")
         }
+        IntakeError::Query { ref source, .. } => match source.remedy() {
+            Some(remedy) => Failure::new(Exit::BadInput, error).with_remedy(remedy),
+            None => Failure::new(Exit::BadInput, error),
+        },
         _ => Failure::new(Exit::BadInput, error),
     }
 }

@@ -42,8 +42,8 @@ pub enum IntakeError {
     },
     /// Neither content nor name tells the format.
     #[error(
-        "{file} is {looks}; waits are read from NDJSON (one object a line), CSV, SWF or journal text, plain or \
-         packed by gzip or zstd, and from the lines of a log by a pattern"
+        "{file} is {looks}; waits are read from NDJSON (one object a line), CSV, SWF, journal text, OTLP in JSON or metrics \
+         text, plain or packed by gzip or zstd, from Parquet and Arrow IPC, and from the lines of a log by `--pattern`"
     )]
     Unrecognised {
         /// The input.
@@ -52,7 +52,7 @@ pub enum IntakeError {
         looks: String,
     },
     /// Lines are to be read by a pattern, and there is none.
-    #[error("{file} is to be read by a pattern, and none is given")]
+    #[error("{file} is to be read by a pattern, and none is given; give a `pattern`")]
     NoPattern {
         /// The input.
         file: String,
@@ -161,7 +161,7 @@ pub enum HeaderError {
         nearest: Option<String>,
     },
     /// A column that a mapping names is not there.
-    #[error("there is no column {column:?}{}, and a field was to be read from it", but(.nearest))]
+    #[error("there is no column {column:?}{}, and a field was to be read from it; map one that is there", but(.nearest))]
     Unmapped {
         /// The column.
         column: String,
@@ -175,7 +175,9 @@ pub enum HeaderError {
         field: &'static str,
     },
     /// A column of a type that its field cannot have.
-    #[error("the column {column:?} is {found}, which is no `{field}`")]
+    #[error(
+        "the column {column:?} is {found}, which is no `{field}`; map another one to it by `columns`, or cast it"
+    )]
     Type {
         /// The column.
         column: String,
@@ -185,10 +187,10 @@ pub enum HeaderError {
         found: String,
     },
     /// The header is not UTF-8 text.
-    #[error("it is not UTF-8 text")]
+    #[error("it is not UTF-8 text; save the file as UTF-8")]
     NotText,
     /// The header's line is too long.
-    #[error("it is longer than {limit} bytes")]
+    #[error("it is longer than {limit} bytes; see whether this is a table of waits")]
     Long {
         /// The limit, bytes.
         limit: usize,

@@ -7,8 +7,8 @@ use axum::body::Bytes;
 
 use super::config::Limits;
 use crate::intake::{
-    Allowed, BadLine, Format, Half, IntakeError, Options, Packing, Record, Report, Rules, Side, Sink, Source,
-    UNDECODABLE, read,
+    Allowed, BadLine, Encoding, Format, Half, IntakeError, Options, Packing, Record, Report, Rules, Side,
+    Sink, Source, UNDECODABLE, read,
 };
 use crate::ledger::{Batch, Digest, KeyError, Tie};
 use crate::running::Running;
@@ -39,12 +39,17 @@ pub(super) struct Reading<'a> {
 /// are its key unless the client gives one.
 pub(super) fn count_whole(
     body: Bytes,
+    form: Encoding,
     format: Format,
     rules: Rules,
     reading: Reading<'_>,
     limits: &Limits,
 ) -> Result<Counted, CountError> {
     let body = unpack(body, limits.unpacked_bytes)?;
+    // What is no JSON would be taken for protocol buffers, and told of in their words.
+    if form == Encoding::Json && body.trim_ascii_start().first() != Some(&b'{') {
+        return Err(CountError::Undecodable { reason: "it cannot be decoded: it is no JSON object".into() });
+    }
     let Digest(digest) = Digest::of(&body);
     let own: String = digest.iter().map(|byte| format!("{byte:02x}")).collect();
     let own = format!("content:{own}");

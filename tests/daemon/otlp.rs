@@ -120,6 +120,9 @@ fn failures_in_the_protocols_own_form() {
     assert_eq!(status.details[0].type_url, "type.googleapis.com/google.rpc.BadRequest");
     let answer = send(&house, "/v1/metrics", "application/json", b"{\"resourceMetrics\":7}");
     assert_eq!((answer.status, &answer.json()["code"]), (400, &Value::from(3)));
+    let answer = send(&house, "/v1/metrics", "application/json", b"resourceMetrics");
+    assert_eq!((answer.status, &answer.json()["code"]), (400, &Value::from(3)));
+    assert!(answer.text().contains("no JSON object"), "{}", answer.text());
     // Too long as sent, and unpacked.
     let answer = send(&house, "/v1/traces", "application/x-protobuf", &[0; 10_001]);
     assert_eq!((answer.status, RpcStatus::decode(&answer.body[..]).unwrap().code), (413, 8));

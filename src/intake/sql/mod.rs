@@ -174,6 +174,22 @@ pub enum QueryError {
 }
 
 impl QueryError {
+    /// What to do about it, where the reason does not say it.
+    pub fn remedy(&self) -> Option<&'static str> {
+        Some(match self {
+            QueryError::Address { .. } => return None,
+            QueryError::Reach { .. } => {
+                "see whether the server runs and lets this user in from here, or whether the file exists and may be read"
+            }
+            QueryError::Refused { .. } => {
+                "ask one SELECT that changes nothing; try it in the database's own shell"
+            }
+            QueryError::BrokeOff { .. } => "nothing was reckoned; see to the database, and start again",
+            QueryError::Thread(_) => "allow this user more threads or memory, and start again",
+            QueryError::Lost => "this is a fault of the program; report it with the query",
+        })
+    }
+
     /// With the name of the database.
     pub(super) fn of(self, file: &str) -> IntakeError {
         IntakeError::Query { file: file.into(), source: self }

@@ -76,7 +76,8 @@ async fn try_take(
         let rules = app.policy().map(|policy| policy.telemetry.clone()).unwrap_or_default();
         let any_open = app.any_open.load(Ordering::Relaxed);
         let reading = Reading { key: key.as_deref(), now: app.now(), any_open };
-        count_whole(bytes, format, rules, reading, &app.config.limits).map_err(|error| uncounted(&app, error))
+        count_whole(bytes, form, format, rules, reading, &app.config.limits)
+            .map_err(|error| uncounted(&app, error))
     })
     .await?;
     shared.note(&counted.report);
