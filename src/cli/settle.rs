@@ -85,10 +85,14 @@ pub(super) struct Settle {
 impl Settle {
     pub(super) fn run(&self) -> Result<Exit, Failure> {
         let file = self.basis.settled_file().ok_or_else(|| {
-            Failure::new(Exit::Usage, anyhow!("--settled FILE or --data DIR is needed")).with_remedy(
+            let at_it = match &self.basis.from {
+                Some(daemon) => format!("; at the daemon itself one decides on {daemon}/ or by POST /v1/settle/STREAM"),
+                None => String::new(),
+            };
+            Failure::new(Exit::Usage, anyhow!("--settled FILE or --data DIR is needed")).with_remedy(format!(
                 "name the file that keeps decisions, for instance settled.yaml (it is made if need be), or the folder of \
-                 a daemon",
-            )
+                 a daemon{at_it}",
+            ))
         })?;
         let file = file.as_path();
         if self.history {

@@ -109,6 +109,12 @@ impl Format {
         if let Some((_, what)) = FOREIGN.into_iter().find(|(magic, _)| head.starts_with(magic)) {
             return Err(what.into());
         }
+        // Not a log whose lines begin with a time in brackets.
+        if let [b'[', within @ ..] = head
+            && matches!(within.trim_ascii_start().first(), None | Some(b'{' | b'[' | b']'))
+        {
+            return Err("a JSON array".into());
+        }
         if let Ok(first) = std::str::from_utf8(first) {
             let cells = || first.split(DELIMITERS.map(char::from)).map(|cell| cell.trim().trim_matches('"'));
             if cells().any(|cell| Field::with_unit(&cell.to_ascii_lowercase()).is_some()) {
@@ -145,14 +151,13 @@ impl Format {
 pub(super) const DELIMITERS: [u8; 3] = [b',', b';', b'\t'];
 
 /// Things that are often at hand in place of a file of waits.
-const FOREIGN: [(&[u8], &str); 7] = [
-    (b"[", "a JSON array"),
+const FOREIGN: [(&[u8], &str); 6] = [
     (b"\xff\xfe", "UTF-16 text"),
     (b"\xfe\xff", "UTF-16 text"),
     (b"PK\x03\x04", "a zip archive"),
     (b"BZh", "bzip2"),
     (b"\xfd7zXZ\0", "xz"),
-    (b"SQLite format 3\0", "a SQLite database"),
+    (b"SQLite format 3\0", "a SQLite database, which is asked by `--from` and `--sql`"),
 ];
 
 #[cfg(test)]
@@ -171,6 +176,7 @@ mod tests {
         assert_eq!(detect("what\n", "waits.csv.gz"), Ok(Format::Csv));
         assert_eq!(detect("who,what\n", "-"), Ok(Format::Csv));
         assert_eq!(detect("[{\"elapsed\":1}]", "waits.ndjson"), Err("a JSON array".into()));
+        assert_eq!(detect("[12:00] hello", "-"), Err("a text that begins \"[12:00] hello\"".into()));
         assert_eq!(detect("\u{1}\0\u{2}", "waits.ndjson"), Err("binary data".into()));
         assert_eq!(detect("\u{1}\0\n{\u{2}", "waits"), Err("binary data".into()));
         assert_eq!(detect("{\"__REALTIME_TIMESTAMP\":\"1\"}\n", "-"), Ok(Format::Journal));
