@@ -153,6 +153,25 @@ fn a_table_that_is_cut_off_is_damaged() {
     }
 }
 
+/// Six bytes for two thousand million elements that take no room: its decoder would be at it for hours.
+#[test]
+fn a_footer_that_says_more_than_it_holds_is_damaged() {
+    let mut footer = [0x09, 0xfe, 0x01, 0xf1, 0xff, 0xff, 0xff, 0xff, 0x07].repeat(2_000);
+    footer.push(0);
+    let length = u32::try_from(footer.len()).unwrap().to_le_bytes();
+    let bytes = [&b"PAR1"[..], &footer, &length, b"PAR1"].concat();
+    let error = taken(Source::reader("hours", std::io::Cursor::new(bytes)), &threads(1)).unwrap_err();
+    assert!(error.to_string().contains("its footer does not hold what it says"), "{error}");
+}
+
+#[test]
+fn tables_are_refused_where_none_is_taken() {
+    for name in ["waits-gzip.parquet", "waits.arrow", "waits.arrows"] {
+        let error = file(name, &Options { tables: false, ..threads(1) }).unwrap_err();
+        assert!(matches!(error, IntakeError::Table { .. }), "{name}: {error}");
+    }
+}
+
 /// Written by arrow-rs, which fills the magic word up to 64 bytes where pyarrow fills it up to 8.
 #[test]
 fn a_file_of_another_writer() {

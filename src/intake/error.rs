@@ -65,6 +65,14 @@ pub enum IntakeError {
         /// Why.
         source: super::QueryError,
     },
+    /// A table in columns, where none is taken.
+    #[error(
+        "{file} is a table in columns, and none is taken here; weigh it with `outwait weigh`, or send its rows"
+    )]
+    Table {
+        /// The input.
+        file: String,
+    },
     /// A table in columns cannot be read.
     #[error("{file}: {source}")]
     Columns {

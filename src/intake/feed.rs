@@ -318,6 +318,9 @@ fn open(
     };
     let format = find_format(head, &file, options)?;
     if format.is_columnar() {
+        if !options.tables {
+            return Err(IntakeError::Table { file });
+        }
         let path = path.filter(|_| packing.is_none());
         return open_table(number, file, path, blocks, format, options, allowance).map(Some);
     }

@@ -148,6 +148,8 @@ pub struct Options {
     pub until: Option<f64>,
     /// Threads that parse; one more reads and unpacks if there are several. `None`: as many as there are cores.
     pub threads: Option<NonZeroUsize>,
+    /// Whether tables in columns are read, which only their decoders can bound. Default: they are.
+    pub tables: bool,
     /// Longest line, bytes. Default 1 MiB.
     pub line_bytes: usize,
     /// Most bytes of all inputs together, unpacked. Default: no limit.
@@ -172,6 +174,7 @@ impl Default for Options {
             since: None,
             until: None,
             threads: None,
+            tables: true,
             line_bytes: 1 << 20,
             total_bytes: u64::MAX,
             most_open: 1_000_000,

@@ -106,6 +106,8 @@ fn options(format: Option<Format>, limits: &Limits) -> Options {
         format,
         bad_lines: Allowed::All,
         threads: NonZeroUsize::new(1),
+        // What anyone may send must not be able to keep a thread for hours.
+        tables: false,
         line_bytes: limits.line_bytes,
         total_bytes: limits.unpacked_bytes,
         ..Options::default()

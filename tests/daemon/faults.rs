@@ -233,6 +233,18 @@ fn half_open_and_broken_connections_leave_nothing_behind() {
 }
 
 /// A hundred thousand names in a minute: the limit holds, and those within it are served.
+/// What it takes to decode a table is up to whoever wrote it.
+#[test]
+fn a_table_in_columns_is_not_taken_over_http() {
+    let house = House::new();
+    let folder = Path::new(env!("CARGO_MANIFEST_DIR")).join("tests/reference/columns");
+    for name in ["waits-gzip.parquet", "waits.arrow", "waits.arrows"] {
+        let answer = post(house.address, &std::fs::read(folder.join(name)).unwrap());
+        assert_eq!(answer.status, 400, "{name}");
+        assert!(answer.text().contains("outwait weigh"), "{name}: {}", answer.text());
+    }
+}
+
 #[test]
 fn names_without_end() {
     let house = House::with(|config| {

@@ -6,6 +6,7 @@
 
 mod arrow;
 mod cells;
+mod footer;
 mod names;
 mod parquet;
 mod plain;

@@ -14,7 +14,7 @@ use parquet::file::statistics::Statistics;
 use tempfile::NamedTempFile;
 
 use super::cells::seconds;
-use super::{ColumnsError, Next, Options, Part, Plan, ROWS, Table, find, guarded, reopen};
+use super::{ColumnsError, Next, Options, Part, Plan, ROWS, Table, find, footer, guarded, reopen};
 use crate::intake::record::Field;
 
 /// The groups that are read, and what is passed over between them.
@@ -39,6 +39,9 @@ impl Groups {
         options: &Options,
     ) -> Result<(Table, Arc<Plan>), ColumnsError> {
         let file = reopen(&path)?;
+        if !footer::is_sound(&file).map_err(ColumnsError::Read)? {
+            return Err(ColumnsError::Damaged { reason: "its footer does not hold what it says".into() });
+        }
         let metadata = guarded(|| {
             ArrowReaderMetadata::load(&file, ArrowReaderOptions::new()).map_err(ColumnsError::parquet)
         })?;
