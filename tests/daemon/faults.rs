@@ -239,7 +239,10 @@ fn a_table_in_columns_is_not_taken_over_http() {
     let house = House::new();
     let folder = Path::new(env!("CARGO_MANIFEST_DIR")).join("tests/reference/columns");
     for name in ["waits-gzip.parquet", "waits.arrow", "waits.arrows"] {
-        let answer = post(house.address, &std::fs::read(folder.join(name)).unwrap());
+        let table = std::fs::read(folder.join(name)).unwrap();
+        // Of a kind that is to be found out by content.
+        let kind = [("Content-Type", "application/octet-stream")];
+        let answer = ask(house.address, "POST", "/v1/waits", &kind, &table);
         assert_eq!(answer.status, 400, "{name}");
         assert!(answer.text().contains("outwait weigh"), "{name}: {}", answer.text());
     }
