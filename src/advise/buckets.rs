@@ -41,13 +41,13 @@ pub(super) fn read(
     prices: Option<(Worth, Retry)>,
     advised: Option<f64>,
 ) -> Option<BucketCost> {
-    let entry = &with_floor(entry, bounds);
     let weight = |e: &EventCell| e.done + e.failed;
     let all: f64 = cells.events.iter().map(weight).sum();
     let wide: f64 = cells.events.iter().filter(|e| is_wide(e)).map(weight).sum();
     if all <= 0.0 || wide < SPOKEN * all {
         return None;
     }
+    let entry = &with_floor(entry, bounds);
     let mut cost = BucketCost {
         share: wide / all,
         cost: None,

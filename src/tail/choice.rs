@@ -5,11 +5,11 @@
 //! judges a fit by how far it is off.
 
 use statrs::function::erf::erfc;
-use statrs::function::gamma::gamma_ur;
 
 use super::fit::Fit;
 use super::law::Law;
 use super::likelihood::terms;
+use crate::numeric::special::chi_squared_tail;
 use crate::tally::Sample;
 
 /// Weights that sum to 1 and fall by a factor e for each `softness` by which a criterion exceeds the least:
@@ -92,7 +92,7 @@ pub fn likelihood_ratio(smaller: &Fit, larger: &Fit) -> Option<LikelihoodRatio> 
         _ => return None,
     };
     let statistic = (2.0 * (larger.log_likelihood - smaller.log_likelihood)).max(0.0);
-    let tail = if statistic > 0.0 { gamma_ur(0.5 * f64::from(degrees), 0.5 * statistic) } else { 1.0 };
+    let tail = chi_squared_tail(statistic, f64::from(degrees));
     let p_value = if at_limit && statistic > 0.0 { 0.5 * tail } else { tail };
     Some(LikelihoodRatio { statistic, degrees, at_limit, p_value })
 }

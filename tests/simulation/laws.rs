@@ -30,7 +30,7 @@ fn normal_tail(z: f64) -> f64 {
 }
 
 fn gamma_tail(a: f64, x: f64) -> f64 {
-    if x <= 0.0 { 1.0 } else { statrs::function::gamma::gamma_ur(a, x) }
+    if x <= 0.0 { 1.0 } else { statrs::function::gamma::checked_gamma_ur(a, x).unwrap() }
 }
 
 fn lognormal(t: f64, median: f64, sigma: f64) -> f64 {

@@ -1,6 +1,6 @@
 //! Burr XII and, as its member `k = 1`, the log-logistic: power laws of a power. Hazard falls or humps.
 
-use statrs::function::beta::beta_reg;
+use statrs::function::beta::checked_beta_reg;
 use statrs::function::gamma::ln_gamma;
 
 use super::prelude::*;
@@ -148,7 +148,7 @@ impl Law for BurrLaw {
             return self.mean() - self.survival(t) * self.residual(t, excess, logistic(-w));
         }
         if excess > 0.01 * power && self.k.max(power) < 1e3 {
-            return self.mean() * beta_reg(power, excess, v);
+            return checked_beta_reg(power, excess, v).map_or(f64::NAN, |share| self.mean() * share);
         }
         // Up to here by the series, then by quadrature in the logarithm of age.
         let edge = f64::min(0.5, 2.0 / self.k) * (1.0 - 1e-9);
