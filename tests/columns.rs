@@ -10,9 +10,13 @@ use std::num::NonZeroUsize;
 use std::path::{Path, PathBuf};
 use std::sync::Arc;
 
+use arrow_array::{ArrayRef, Float64Array, RecordBatch, StringArray};
 use kept::Kept;
 use outwait::intake::{Allowed, Format, IntakeError, Mapping, Options, Report, Source, read};
 use outwait::wait::{Age, Wait};
+use parquet::arrow::ArrowWriter;
+use parquet::file::properties::WriterProperties;
+use parquet::file::reader::{FileReader, SerializedFileReader};
 
 fn table(name: &str) -> PathBuf {
     Path::new(env!("CARGO_MANIFEST_DIR")).join("tests/reference/columns").join(name)
@@ -162,6 +166,41 @@ fn a_footer_that_says_more_than_it_holds_is_damaged() {
     let bytes = [&b"PAR1"[..], &footer, &length, b"PAR1"].concat();
     let error = taken(Source::reader("hours", std::io::Cursor::new(bytes)), &threads(1)).unwrap_err();
     assert!(error.to_string().contains("its footer does not hold what it says"), "{error}");
+}
+
+/// The same where a page begins.
+#[test]
+fn a_page_that_says_more_than_it_holds_is_damaged() {
+    let mut bytes = std::fs::read(table("waits-none.parquet")).unwrap();
+    let metadata = SerializedFileReader::new(bytes::Bytes::from(bytes.clone())).unwrap();
+    let head = [0x09, 0xfe, 0x01, 0xf1, 0xff, 0xff, 0xff, 0xff, 0x07].repeat(4);
+    for column in metadata.metadata().row_groups().iter().flat_map(|group| group.columns()) {
+        let start = usize::try_from(column.byte_range().0).unwrap();
+        bytes[start..start + head.len()].copy_from_slice(&head);
+    }
+    let error = taken(Source::reader("hours", std::io::Cursor::new(bytes)), &threads(1)).unwrap_err();
+    assert!(error.to_string().contains("a page head is false"), "{error}");
+}
+
+/// Texts so long that the head of their page, which holds the least and the greatest, is longer than what is read at first.
+#[test]
+fn a_page_with_a_long_head_is_read() {
+    let columns: [(&str, ArrayRef); 3] = [
+        ("stream", Arc::new(StringArray::from(vec!["catalogue.lookup"; 3]))),
+        ("elapsed", Arc::new(Float64Array::from(vec![1.0, 2.0, 3.0]))),
+        ("id", Arc::new(StringArray::from(vec!["r".repeat(10_000); 3]))),
+    ];
+    let batch = RecordBatch::try_from_iter(columns).unwrap();
+    let properties = WriterProperties::builder()
+        .set_dictionary_enabled(false)
+        .set_statistics_truncate_length(None)
+        .set_write_page_header_statistics(true);
+    let mut bytes = Vec::new();
+    let mut writer = ArrowWriter::try_new(&mut bytes, batch.schema(), Some(properties.build())).unwrap();
+    writer.write(&batch).unwrap();
+    writer.close().unwrap();
+    let (kept, report) = taken(Source::reader("long", std::io::Cursor::new(bytes)), &threads(1)).unwrap();
+    assert_eq!((kept.0.len(), report.bad.count), (3, 0));
 }
 
 #[test]

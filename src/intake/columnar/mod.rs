@@ -6,10 +6,10 @@
 
 mod arrow;
 mod cells;
-mod footer;
 mod names;
 mod parquet;
 mod plain;
+mod thrift;
 
 use std::fs::File;
 use std::io::{Read, Seek, Write};

@@ -14,7 +14,7 @@ use parquet::file::statistics::Statistics;
 use tempfile::NamedTempFile;
 
 use super::cells::seconds;
-use super::{ColumnsError, Next, Options, Part, Plan, ROWS, Table, find, footer, guarded, reopen};
+use super::{ColumnsError, Next, Options, Part, Plan, ROWS, Table, find, guarded, reopen, thrift};
 use crate::intake::record::Field;
 
 /// The groups that are read, and what is passed over between them.
@@ -39,7 +39,7 @@ impl Groups {
         options: &Options,
     ) -> Result<(Table, Arc<Plan>), ColumnsError> {
         let file = reopen(&path)?;
-        if !footer::is_sound(&file).map_err(ColumnsError::Read)? {
+        if !thrift::is_sound(&file).map_err(ColumnsError::Read)? {
             return Err(ColumnsError::Damaged { reason: "its footer does not hold what it says".into() });
         }
         let metadata = guarded(|| {
@@ -130,7 +130,8 @@ pub(super) fn batches(plan: &Plan, group: usize) -> Result<ParquetRecordBatchRea
     let wanted = plan.used.iter().map(|&(index, ..)| index);
     let mask = ProjectionMask::roots(metadata.parquet_schema(), wanted);
     // A file of its own for each group: a copy of an open one would share its place.
-    let builder = ParquetRecordBatchReaderBuilder::new_with_metadata(reopen(path)?, metadata.clone());
+    let builder =
+        ParquetRecordBatchReaderBuilder::new_with_metadata(thrift::Checked(reopen(path)?), metadata.clone());
     let builder = builder.with_projection(mask).with_row_groups(vec![group]).with_batch_size(ROWS);
     builder.build().map_err(ColumnsError::parquet)
 }

@@ -1,17 +1,24 @@
-//! Whether the footer of a Parquet file is decoded in a time that its length bounds. It is written in Thrift's compact
-//! protocol (github.com/apache/thrift, doc/specs/thrift-compact-protocol.md).
+//! Whether what a Parquet file writes in Thrift's compact protocol (github.com/apache/thrift,
+//! doc/specs/thrift-compact-protocol.md), its footer and the heads of its pages, is decoded in a time that its length bounds.
 //!
 //! The decoder passes over what it does not know, and for it truth values in a list take no room: six bytes that speak of two
 //! thousand million of them cost it seconds, a few kilobytes hours. Metadata of Parquet have no such list.
 
 use std::fs::File;
-use std::io::{self, Read, Seek, SeekFrom};
+use std::io::{self, BufRead, BufReader, Read, Seek, SeekFrom};
+
+use bytes::Bytes;
+use parquet::errors::ParquetError;
+use parquet::file::reader::{ChunkReader, Length};
 
 /// How deep values may lie within each other; the decoder goes no deeper.
 const DEEPEST: u32 = 64;
 
 /// The footer's length and the magic word behind it.
 const TAIL: u64 = 8;
+
+/// Longest head of a page. It may hold the least and the greatest of its values.
+const LONGEST_HEAD: u64 = 16 << 20;
 
 /// Whether the footer is sound. One that is not where it should be is left to the decoder, which says so at once.
 pub(super) fn is_sound(mut file: &File) -> io::Result<bool> {
@@ -23,10 +30,49 @@ pub(super) fn is_sound(mut file: &File) -> io::Result<bool> {
     let [a, b, c, d, ..] = tail;
     let length = u64::from(u32::from_le_bytes([a, b, c, d]));
     let Some(start) = start.checked_sub(length) else { return Ok(true) };
+    Ok(is_message(&piece(file, start, length)?))
+}
+
+/// A file of which a page's head is looked at before it is decoded.
+pub(super) struct Checked(pub(super) File);
+
+impl Length for Checked {
+    fn len(&self) -> u64 {
+        self.0.len()
+    }
+}
+
+impl ChunkReader for Checked {
+    type T = BufReader<File>;
+
+    fn get_read(&self, start: u64) -> Result<Self::T, ParquetError> {
+        let mut reader = self.0.get_read(start)?;
+        // Nearly all heads lie in what is read at first.
+        if is_message(reader.fill_buf()?) {
+            return Ok(reader);
+        }
+        // A copy of an open file shares its place: the first reader is of no use after this.
+        if is_message(&piece(&self.0, start, LONGEST_HEAD)?) {
+            return self.0.get_read(start);
+        }
+        Err(ParquetError::General("a page head is false".into()))
+    }
+
+    fn get_bytes(&self, start: u64, length: usize) -> Result<Bytes, ParquetError> {
+        self.0.get_bytes(start, length)
+    }
+}
+
+fn piece(mut file: &File, start: u64, length: u64) -> io::Result<Vec<u8>> {
+    let mut piece = Vec::new();
     file.seek(SeekFrom::Start(start))?;
-    let mut footer = Vec::new();
-    file.take(length).read_to_end(&mut footer)?;
-    Ok(Walk(&footer).fields(DEEPEST).is_some())
+    file.take(length).read_to_end(&mut piece)?;
+    Ok(piece)
+}
+
+/// Whether it begins with a whole message that can be what it says.
+fn is_message(bytes: &[u8]) -> bool {
+    Walk(bytes).fields(DEEPEST).is_some()
 }
 
 /// What is left of a message. `None`: it is not what it says.
@@ -121,10 +167,6 @@ impl Walk<'_> {
 mod tests {
     use super::*;
 
-    fn is_sound(footer: &[u8]) -> bool {
-        Walk(footer).fields(DEEPEST).is_some()
-    }
-
     #[test]
     fn what_is_sound_and_what_is_not() {
         // A number, a text, a list of two numbers, an empty one, a map, a struct in a struct, a truth value.
@@ -132,8 +174,8 @@ mod tests {
             &[0x15, 0x02, 0x18, 0x02, b'h', b'i', 0x19, 0x25, 0x02, 0x04, 0x19, 0x00][..],
             &[0x1b, 0x01, 0x55, 0x02, 0x04, 0x1c, 0x1c, 0x00, 0x00, 0x11, 0x00],
         ];
-        assert!(sound.iter().all(|part| is_sound(&[part, &[0][..]].concat())));
-        assert!(is_sound(&sound.concat()));
+        assert!(sound.iter().all(|part| is_message(&[part, &[0][..]].concat())));
+        assert!(is_message(&sound.concat()));
         let unsound: [&[u8]; 8] = [
             b"",
             &[0x15],
@@ -146,7 +188,7 @@ mod tests {
             &[0x18, 0x7f, 0x00],
             &[0x1f, 0x00],
         ];
-        assert!(unsound.iter().all(|footer| !is_sound(footer)));
-        assert!(!is_sound(&[0x1c; 100_000]), "as deep as it is long");
+        assert!(unsound.iter().all(|message| !is_message(message)));
+        assert!(!is_message(&[0x1c; 100_000]), "as deep as it is long");
     }
 }
