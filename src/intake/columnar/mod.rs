@@ -6,6 +6,7 @@
 
 mod arrow;
 mod cells;
+mod checked;
 mod names;
 mod parquet;
 mod plain;

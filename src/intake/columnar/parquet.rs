@@ -14,7 +14,7 @@ use parquet::file::statistics::Statistics;
 use tempfile::NamedTempFile;
 
 use super::cells::seconds;
-use super::{ColumnsError, Next, Options, Part, Plan, ROWS, Table, find, guarded, reopen, thrift};
+use super::{ColumnsError, Next, Options, Part, Plan, ROWS, Table, checked, find, guarded, reopen};
 use crate::intake::record::Field;
 
 /// The groups that are read, and what is passed over between them.
@@ -39,7 +39,7 @@ impl Groups {
         options: &Options,
     ) -> Result<(Table, Arc<Plan>), ColumnsError> {
         let file = reopen(&path)?;
-        if !thrift::is_sound(&file).map_err(ColumnsError::Read)? {
+        if !checked::has_sound_footer(&file).map_err(ColumnsError::Read)? {
             return Err(ColumnsError::Damaged { reason: "its footer does not hold what it says".into() });
         }
         let metadata = guarded(|| {
@@ -131,7 +131,7 @@ pub(super) fn batches(plan: &Plan, group: usize) -> Result<ParquetRecordBatchRea
     let mask = ProjectionMask::roots(metadata.parquet_schema(), wanted);
     // A file of its own for each group: a copy of an open one would share its place.
     let builder =
-        ParquetRecordBatchReaderBuilder::new_with_metadata(thrift::Checked(reopen(path)?), metadata.clone());
+        ParquetRecordBatchReaderBuilder::new_with_metadata(checked::Checked(reopen(path)?), metadata.clone());
     let builder = builder.with_projection(mask).with_row_groups(vec![group]).with_batch_size(ROWS);
     builder.build().map_err(ColumnsError::parquet)
 }
